@@ -1,0 +1,1 @@
+"""morph: from an optimiser's flat density image to a checked, printable mould insert."""

@@ -1,0 +1,1 @@
+"""The body stage: blank, faces, holes, room for bores, leads; gives the channel plan."""

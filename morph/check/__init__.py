@@ -1,0 +1,1 @@
+"""The checks: every way an insert fails in the shop, as verdicts."""

@@ -1,0 +1,1 @@
+"""What every layer uses: errors, verdicts, checked arrays, units, files, progress."""

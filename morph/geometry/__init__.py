@@ -1,0 +1,1 @@
+"""Records of shape (meshes, curves, triangle trees) and the front of the kernels."""

@@ -1,0 +1,1 @@
+"""The layout stage: density image to channel graph."""

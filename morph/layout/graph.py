@@ -1,0 +1,177 @@
+"""The channel graph: nodes and branches on the sheet, the record the layout stage hands on.
+
+Coordinates are sheet mm as the drawing reads (x right, y up, origin lower left); the carrier knows
+from which side that is. Every branch
+is a cubic B-spline with its bore along it; its ends coincide with its nodes.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from enum import StrEnum
+
+import numpy as np
+
+from morph.core.arrays import Floats, frozen_floats
+from morph.core.tolerance import COINCIDE_MM
+from morph.core.verdict import Notice
+from morph.geometry.curve import Curve
+
+
+class NodeKind(StrEnum):
+    """What a node of the graph is; ``exit`` nodes appear only once leads exist."""
+
+    JUNCTION = "junction"
+    PORT = "port"
+    EXIT = "exit"
+    DEAD_END = "dead-end"
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Node:
+    """A node on the sheet: id ("N1" ...), kind, name of its port or None, place (2,) in mm."""
+
+    id: str
+    kind: NodeKind
+    port: str | None
+    sheet_mm: Floats
+
+    def __post_init__(self) -> None:
+        object.__setattr__(self, "sheet_mm", frozen_floats("sheet_mm", self.sheet_mm, (2,)))
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Branch:
+    """A channel between two nodes.
+
+    Args:
+        id: "B1" ..., numbered by (y, x) of the branch's midpoint.
+        start: id of the node at the first sample. end: id of the node at the last sample.
+        curve: the fitted centreline, d = 2.
+        parameter: (k,) increasing curve parameters of the samples, ends included; neighbouring
+            samples are at most min(bore / 4, 1 mm) apart.
+        sheet_mm: (k, 2) the curve at `parameter`.
+        bore_mm: (k,) local channel width of the layout, before any scale, clamp or cap.
+        length_mm: arc length by quadrature.
+        deviation_mm: largest distance of the fitted curve from the measured centreline,
+            taken away from the junction discs.
+    """
+
+    id: str
+    start: str
+    end: str
+    curve: Curve
+    parameter: Floats
+    sheet_mm: Floats
+    bore_mm: Floats
+    length_mm: float
+    deviation_mm: float
+
+    def __post_init__(self) -> None:
+        points = frozen_floats("sheet_mm", self.sheet_mm, (None, 2))
+        object.__setattr__(self, "sheet_mm", points)
+        object.__setattr__(self, "parameter", frozen_floats("parameter", self.parameter, (len(points),)))
+        object.__setattr__(self, "bore_mm", frozen_floats("bore_mm", self.bore_mm, (len(points),)))
+        if len(points) < 2 or self.bore_mm.min() <= 0.0:
+            raise ValueError(f"branch {self.id}: expected two or more samples with positive bores")
+
+
+class DropReason(StrEnum):
+    """Why a piece of the image is not in the graph."""
+
+    ISLAND = "island"
+    PINHOLE = "pinhole"
+    SPUR = "spur"
+    NO_PORT = "piece without a port"
+
+
+@dataclass(frozen=True, slots=True)
+class Dropped:
+    """A piece of the image that was dropped: why, where (sheet mm) and how large (mm^2; a spur: its length x width)."""
+
+    reason: DropReason
+    sheet_mm: tuple[float, float]
+    area_mm2: float
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Bridge:
+    """A suggested way on from a dead end through grey density; never built by itself.
+
+    Args:
+        id: "G1" ..., numbered by (y, x) of its middle.
+        node: the dead end it starts from. onto: branch or node id it would meet.
+        path_mm: (k, 2) way on the sheet. gap_mm: its length.
+        lowest_density: the lowest density on the way. likely: it looks like a blocked channel.
+    """
+
+    id: str
+    node: str
+    onto: str
+    path_mm: Floats
+    gap_mm: float
+    lowest_density: float
+    likely: bool
+
+    def __post_init__(self) -> None:
+        object.__setattr__(self, "path_mm", frozen_floats("path_mm", self.path_mm, (None, 2)))
+
+
+@dataclass(frozen=True, slots=True)
+class LevelCount:
+    """Pieces (8-connected coolant) and holes of the image at one level."""
+
+    level: float
+    pieces: int
+    holes: int
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class ChannelGraph:
+    """What the layout stage found.
+
+    Args:
+        size_mm: width and height of the sheet (doubled when mirrored).
+        level: the density level used. area_ratio: coolant area over sheet area at that level.
+        nodes, branches: sorted by id number.
+        dropped: pieces that were removed and why. bridges: suggestions.
+        levels: pieces and holes at level - 0.1, level, level + 0.1.
+        notices: degraded or surprising paths.
+    """
+
+    size_mm: tuple[float, float]
+    level: float
+    area_ratio: float
+    nodes: tuple[Node, ...]
+    branches: tuple[Branch, ...]
+    dropped: tuple[Dropped, ...] = ()
+    bridges: tuple[Bridge, ...] = ()
+    levels: tuple[LevelCount, ...] = ()
+    notices: tuple[Notice, ...] = ()
+
+    def __post_init__(self) -> None:
+        place = {node.id: node.sheet_mm for node in self.nodes}
+        for branch in self.branches:
+            for node_id, point in ((branch.start, branch.sheet_mm[0]), (branch.end, branch.sheet_mm[-1])):
+                if np.abs(place[node_id] - point).max() > COINCIDE_MM:
+                    raise ValueError(f"branch {branch.id} does not end on node {node_id}")
+
+
+def count_loops(n_nodes: int, ends: list[tuple[int, int]]) -> tuple[int, int]:
+    """Returns pieces and loops (first Betti number) of a graph of `n_nodes` nodes with branches `ends`.
+
+    >>> count_loops(2, [(0, 1), (0, 1)])
+    (1, 1)
+    """
+    parent = list(range(n_nodes))
+
+    def root(i: int) -> int:
+        while parent[i] != i:
+            parent[i] = parent[parent[i]]
+            i = parent[i]
+        return i
+
+    for a, b in ends:
+        parent[root(a)] = root(b)
+    pieces = len({root(i) for i in range(n_nodes)})
+    return pieces, len(ends) - n_nodes + pieces

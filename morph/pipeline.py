@@ -1,0 +1,1 @@
+"""The recipe: calls the stages in order and owns no geometry."""

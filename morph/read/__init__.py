@@ -1,0 +1,1 @@
+"""Reading files: hostile bytes end here."""

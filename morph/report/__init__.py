@@ -1,0 +1,1 @@
+"""Summary and report: one JSON record and one offline HTML file."""

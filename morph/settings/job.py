@@ -1,0 +1,223 @@
+"""The Job: every setting a build reads, as frozen records; each stage gets its own slice of it.
+
+Lengths in mm, angles in degrees (the edge of the program). Reading and validating the TOML lives
+in ``settings/parse.py``; here stands only what a valid job is.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+from enum import StrEnum
+from pathlib import Path
+
+from morph.settings.profile import Profile
+
+
+class Rows(StrEnum):
+    """Where the first row of the array lies on the sheet."""
+
+    TOP_DOWN = "top-down"
+    BOTTOM_UP = "bottom-up"
+
+
+class Samples(StrEnum):
+    """Whether a value stands for a cell or for a grid node."""
+
+    CELLS = "cells"
+    NODES = "nodes"
+
+
+class SeenFrom(StrEnum):
+    """From which side the flat drawing reads."""
+
+    PART = "part"
+    METAL = "metal"
+
+
+class CoolantEnd(StrEnum):
+    """Which end of the density scale is coolant."""
+
+    HIGH = "high"
+    LOW = "low"
+
+
+class LevelRule(StrEnum):
+    """How the level is found when it is not a number."""
+
+    HALF = "half"
+    KEEP_AREA = "keep-area"
+
+
+class Seam(StrEnum):
+    """Whether the left and right edge of the sheet are one line."""
+
+    OPEN = "open"
+    JOINED = "joined"
+
+
+class MirrorAt(StrEnum):
+    """The edge of the image at which a symmetric layout is mirrored."""
+
+    NONE = "none"
+    LEFT = "left"
+    RIGHT = "right"
+    BOTTOM = "bottom"
+    TOP = "top"
+
+
+@dataclass(frozen=True, slots=True)
+class LayoutSettings:
+    """The [layout] table; `level` is a LevelRule or a number in (0, 1), `image` an absolute path."""
+
+    image: Path
+    size_mm: tuple[float, float]
+    rows: Rows = Rows.TOP_DOWN
+    samples: Samples = Samples.CELLS
+    seen_from: SeenFrom = SeenFrom.PART
+    channel: CoolantEnd = CoolantEnd.HIGH
+    level: LevelRule | float = LevelRule.HALF
+    area_ratio: float | None = None
+    seam: Seam = Seam.OPEN
+    mirror_at: MirrorAt = MirrorAt.NONE
+
+
+class Role(StrEnum):
+    """What a port is for."""
+
+    IN = "in"
+    OUT = "out"
+    ACCESS = "access"
+
+
+@dataclass(frozen=True, slots=True)
+class PortSettings:
+    """One [[port]]: `exit_mm` and `leave` are None when morph chooses the exit."""
+
+    name: str
+    role: Role
+    at_mm: tuple[float, float]
+    exit_mm: tuple[float, float, float] | None = None
+    leave: tuple[float, float, float] | None = None
+
+
+class Metal(StrEnum):
+    """On which side of the carrier the metal lies."""
+
+    TOWARD_AXIS = "toward-axis"
+    AWAY_FROM_AXIS = "away-from-axis"
+
+
+class TrueAt(StrEnum):
+    """Where the sheet's lengths are kept."""
+
+    DEPTH = "depth"
+    FACE = "face"
+
+
+@dataclass(frozen=True, slots=True)
+class CarrierSettings:
+    """The [carrier] table of a cylinder: exactly one of depth_mm and wall_to_face_mm is given."""
+
+    radius_mm: float
+    metal: Metal
+    depth_mm: float | None = None
+    wall_to_face_mm: float | None = None
+    true_at: TrueAt = TrueAt.DEPTH
+
+
+@dataclass(frozen=True, slots=True)
+class SectionSettings:
+    """The [section] table; `bore_range_mm` None means from service and process."""
+
+    bore_scale: float = 1.0
+    bore_range_mm: tuple[float, float] | None = None
+    blend_mm: float = 0.6
+
+
+@dataclass(frozen=True, slots=True)
+class PrintSettings:
+    """The [print] table: the process profile and the build direction (part frame, any length)."""
+
+    profile: Profile
+    build_direction: tuple[float, float, float] = (0.0, 0.0, 1.0)
+
+
+@dataclass(frozen=True, slots=True)
+class ServiceSettings:
+    """The [service] table: what must survive, not only print."""
+
+    wall_face_mm: float = 3.0
+    wall_face_bores: float = 1.0
+    wall_between_mm: float = 3.0
+    wall_outer_mm: float = 3.0
+    wall_hole_mm: float = 3.0
+    smallest_bore_mm: float = 3.0
+
+
+@dataclass(frozen=True, slots=True)
+class CarrierBlankSettings:
+    """A blank bounded by the carrier: `margin_mm` below and above the sheet, `thickness_mm` for a shell."""
+
+    margin_mm: tuple[float, float] = (10.0, 10.0)
+    thickness_mm: float | None = None
+
+
+@dataclass(frozen=True, slots=True)
+class CylinderBlankSettings:
+    """A cylinder about the carrier's axis from z_mm[0] to z_mm[1]."""
+
+    radius_mm: float
+    z_mm: tuple[float, float]
+
+
+@dataclass(frozen=True, slots=True)
+class BoxBlankSettings:
+    """An axis-parallel box in the part frame."""
+
+    min_mm: tuple[float, float, float]
+    max_mm: tuple[float, float, float]
+
+
+@dataclass(frozen=True, slots=True)
+class BlankSettings:
+    """The [blank] table: its shape, which faces touch the part, where ports may come out, stock per face."""
+
+    shape: CarrierBlankSettings | CylinderBlankSettings | BoxBlankSettings = field(default_factory=CarrierBlankSettings)
+    part_faces: tuple[str, ...] = ("carrier",)
+    port_faces: tuple[str, ...] = ("foot",)
+    stock_mm: tuple[tuple[str, float], ...] = ()
+
+
+@dataclass(frozen=True, slots=True)
+class HoleSettings:
+    """One [[hole]]: starts at `at_mm`, runs along `axis`, `depth_mm` None means through; `wall_mm` None: service."""
+
+    at_mm: tuple[float, float, float]
+    axis: tuple[float, float, float]
+    diameter_mm: float
+    wall_mm: float | None = None
+    depth_mm: float | None = None
+
+
+@dataclass(frozen=True, slots=True)
+class QualitySettings:
+    """The [quality] table: `h_mm` None means clamp(smallest bore / 16, 0.15, 0.30)."""
+
+    h_mm: float | None = None
+
+
+@dataclass(frozen=True, slots=True)
+class Job:
+    """A whole valid job; `file` is the job's path (its base name alone ever reaches an output)."""
+
+    name: str
+    file: Path
+    layout: LayoutSettings
+    ports: tuple[PortSettings, ...]
+    carrier: CarrierSettings
+    printing: PrintSettings
+    section: SectionSettings = field(default_factory=SectionSettings)
+    service: ServiceSettings = field(default_factory=ServiceSettings)
+    blank: BlankSettings = field(default_factory=BlankSettings)
+    holes: tuple[HoleSettings, ...] = ()
+    quality: QualitySettings = field(default_factory=QualitySettings)

@@ -1,0 +1,1 @@
+"""The surface stage: the channel graph laid on a carrier at depth."""
