@@ -1,1 +1,234 @@
-"""The recipe: calls the stages in order and owns no geometry."""
+"""The recipe: calls the stages in order and owns no geometry.
+
+Every stage is a function of records and settings; this file only hands records on, times the
+stages and gathers what they say. Nothing is written until every stage has succeeded.
+"""
+
+from __future__ import annotations
+
+import sys
+import time
+from collections.abc import Iterator
+from contextlib import contextmanager
+from dataclasses import dataclass, field
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+from morph.core.progress import SILENT, Progress
+from morph.core.verdict import HEADLINE_ORDER, Notice, Outcome, Verdict
+from morph.settings.job import Job
+
+if TYPE_CHECKING:
+    from morph.report.records import BuildRecords
+
+STAGES = ("layout", "surface", "body", "solid", "insert", "check", "export", "report")
+
+
+@dataclass(frozen=True, slots=True)
+class Timing:
+    """Wall-clock seconds of a stage and the peak memory of the process when it ended."""
+
+    stage: str
+    seconds: float
+    peak_mib: float
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Result:
+    """Everything a build found, and the files it would leave.
+
+    Args:
+        job: the settings it ran with.
+        records: the record of every stage.
+        summary: what summary.json holds.
+        verdicts: sorted fail, not checked, watch, pass. notices: degraded or surprising paths.
+        files: file name to content; all but timings.json are the same for the same input.
+        timings: one row per stage.
+    """
+
+    job: Job
+    records: BuildRecords
+    summary: dict[str, Any]
+    verdicts: tuple[Verdict, ...]
+    notices: tuple[Notice, ...]
+    files: dict[str, bytes]
+    timings: tuple[Timing, ...]
+
+    @property
+    def headline(self) -> Outcome:
+        """The worst outcome over all verdicts, not-checked rows aside."""
+        checked = [v.outcome for v in self.verdicts if v.outcome is not Outcome.NOT_CHECKED]
+        return min(checked, key=HEADLINE_ORDER.__getitem__, default=Outcome.PASS)
+
+
+def _peak_mib() -> float:
+    try:
+        import resource
+    except ImportError:  # not on this platform: the figure is informative only
+        return 0.0
+    peak = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss
+    return float(peak) / (2**20 if sys.platform == "darwin" else 2**10)
+
+
+@dataclass(slots=True)
+class _Clock:
+    """Times the stages and tells the progress where the build is."""
+
+    progress: Progress
+    rows: list[Timing] = field(default_factory=list)
+
+    @contextmanager
+    def stage(self, name: str) -> Iterator[None]:
+        self.progress.step(name, 0, 1)
+        begin = time.perf_counter()
+        yield
+        self.rows.append(Timing(name, time.perf_counter() - begin, _peak_mib()))
+        self.progress.step(name, 1, 1)
+
+
+def _not_checked() -> tuple[Verdict, ...]:
+    """Returns the rows for what this version does not look at, so that nobody takes silence for a pass."""
+    return (
+        Verdict(
+            "flow",
+            Outcome.NOT_CHECKED,
+            "Flow, velocity and pressure drop were not calculated.",
+            hint="Measure flow against pressure on the printed insert before use.",
+        ),
+        Verdict(
+            "temperature",
+            Outcome.NOT_CHECKED,
+            "Face temperature and cooling time were not calculated.",
+            hint="Check the face temperature at the press before series production.",
+        ),
+    )
+
+
+def make_records(job: Job, clock: _Clock) -> BuildRecords:
+    """Returns the records of every stage from the density to the verdicts.
+
+    Raises:
+        MorphError: an input or a request that cannot be met, with its code.
+    """
+    from morph.body.blank import make_blank
+    from morph.body.make import make_plan
+    from morph.layout.density import make_density
+    from morph.layout.extract import make_graph
+    from morph.report.records import BuildRecords
+    from morph.surface.cylinder import make_cylinder
+    from morph.surface.wrap import choose_depth_mm, wrap_graph
+
+    progress, profile = clock.progress, job.printing.profile
+    with clock.stage("layout"):
+        density = make_density(job.layout)
+        graph = make_graph(density, job.layout, job.ports, progress)
+    with clock.stage("surface"):
+        depth_mm = choose_depth_mm(job.carrier, graph, job.section, job.service, profile)
+        carrier = make_cylinder(job.carrier, graph.size_mm, job.layout.seen_from, depth_mm)
+        wrapped = wrap_graph(graph, carrier, depth_mm)
+    with clock.stage("body"):
+        blank = make_blank(job.blank, job.holes, carrier, graph.size_mm, job.service)
+        plan = make_plan(wrapped, blank, job.ports, job.section, job.service, profile, progress)
+
+    from morph.check import CheckSubject, check_insert, measure_fields
+    from morph.solid.channel import make_channel_solid
+    from morph.solid.cut import make_insert
+    from morph.solid.field import choose_h_mm
+
+    with clock.stage("solid"):
+        h_mm = choose_h_mm(plan, job.quality)
+        solid = make_channel_solid(plan, blank, h_mm, progress)
+    with clock.stage("insert"):
+        insert = make_insert(solid, blank, plan, progress)
+    with clock.stage("check"):
+        subject = CheckSubject(
+            insert=insert,
+            solid=solid,
+            blank=blank,
+            plan=plan,
+            profile=profile,
+            service=job.service,
+            build_direction=job.printing.build_direction,
+        )
+        verdicts = sort_verdicts(check_insert(subject) + _not_checked())
+        fields = measure_fields(subject)
+    return BuildRecords(
+        job=job,
+        density=density,
+        graph=graph,
+        wrapped=wrapped,
+        blank=blank,
+        plan=plan,
+        solid=solid,
+        insert=insert,
+        verdicts=verdicts,
+        notices=graph.notices + plan.notices,
+        fields=fields,
+    )
+
+
+def sort_verdicts(verdicts: tuple[Verdict, ...]) -> tuple[Verdict, ...]:
+    """Returns the verdicts in headline order: fail, not checked, watch, pass; else as the checks gave them."""
+    return tuple(sorted(verdicts, key=lambda verdict: HEADLINE_ORDER[verdict.outcome]))
+
+
+def make_files(records: BuildRecords, clock: _Clock) -> tuple[dict[str, Any], dict[str, bytes]]:
+    """Returns the summary and the content of every file but timings.json, by file name."""
+    from morph.export.step import step_bytes
+    from morph.export.stl import stl_bytes
+    from morph.export.tables import graph_json, json_bytes, ports_csv, verdicts_csv
+    from morph.export.threemf import threemf_bytes
+    from morph.report.page import make_report
+    from morph.report.summary import make_summary
+
+    files: dict[str, bytes] = {}
+    with clock.stage("export"):
+        direction = records.job.printing.build_direction
+        files["channels.stl"] = stl_bytes(records.solid.trimmed)
+        files["insert.stl"] = stl_bytes(records.insert.mesh)
+        objects = (("insert as printed", records.insert.mesh), ("channels", records.solid.trimmed))
+        files["insert.3mf"] = threemf_bytes(objects, direction)
+        files["centrelines.step"] = step_bytes(records.plan, records.job.name)
+        files["graph.json"] = graph_json(records.plan)
+        files["ports.csv"] = ports_csv(records.plan, records.blank)
+        files["verdicts.csv"] = verdicts_csv(records.verdicts, records.notices)
+    with clock.stage("report"):
+        summary = make_summary(records)
+        files["summary.json"] = json_bytes(summary)
+        files["report.html"] = make_report(records, summary).encode("utf-8")
+    return summary, files
+
+
+def build(job: Job | Path | str, progress: Progress = SILENT) -> Result:
+    """Runs every stage on a job and returns what it found; writes nothing.
+
+    Args:
+        job: a Job, or the path of a job file.
+        progress: told of every stage; may raise Cancelled.
+
+    Raises:
+        MorphError: an input or a request that cannot be met, with its code.
+    """
+    from morph.core.threads import single_thread
+    from morph.export.tables import json_bytes
+    from morph.settings.read_job import read_job
+
+    clock = _Clock(progress)
+    with single_thread():
+        ready = job if isinstance(job, Job) else read_job(Path(job))
+        records = make_records(ready, clock)
+        summary, files = make_files(records, clock)
+    rows = [{"stage": t.stage, "seconds": t.seconds, "peak_mib": t.peak_mib} for t in clock.rows]
+    files["timings.json"] = json_bytes({"stages": rows})
+    return Result(ready, records, summary, records.verdicts, records.notices, files, tuple(clock.rows))
+
+
+def write(result: Result, out: Path, *, force: bool = False) -> list[Path]:
+    """Writes the files of `result` into the folder `out`, all or none, and returns their paths.
+
+    Raises:
+        ExportError: the folder exists and is not empty (without `force`), or cannot be written.
+    """
+    from morph.core.files import write_folder
+
+    return write_folder(out, result.files, force=force)
