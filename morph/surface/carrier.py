@@ -14,8 +14,8 @@ from morph.core.arrays import Floats
 class Carrier(Protocol):
     """What every guide surface offers."""
 
-    def point_mm(self, sheet_mm: Floats, depth_mm: float) -> Floats:
-        """Returns the points (k, 3) that lie `depth_mm` into the metal below the sheet points (k, 2)."""
+    def point_mm(self, sheet_mm: Floats, depth_mm: float | Floats) -> Floats:
+        """Returns the points (k, 3) that lie `depth_mm` (one or (k,)) into the metal below the sheet points (k, 2)."""
 
     def into_metal(self, sheet_mm: Floats) -> Floats:
         """Returns the unit vectors (k, 3) from the surface into the metal."""
@@ -32,3 +32,6 @@ class Carrier(Protocol):
 
     def distance_mm(self, xyz_mm: Floats) -> Floats:
         """Returns the signed distance (k,) of points (k, 3) from the surface, positive in the metal."""
+
+    def develop(self, xyz_mm: Floats) -> Floats:
+        """Returns sheet x, sheet y and depth (k, 3) of points (k, 3): the inverse of `point_mm`."""

@@ -8,8 +8,14 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
-from morph.core.arrays import Floats, frozen_floats
-from morph.layout.graph import ChannelGraph
+import numpy as np
+
+from morph.core.arrays import Floats, frozen_floats, unit_rows
+from morph.core.errors import SettingError
+from morph.geometry.curve import curve_at, gauss_on_spans
+from morph.layout.graph import Branch, ChannelGraph
+from morph.settings.job import CarrierSettings, SectionSettings, ServiceSettings
+from morph.settings.profile import Profile
 from morph.surface.carrier import Carrier
 
 
@@ -64,3 +70,124 @@ class WrappedGraph:
 
     def __post_init__(self) -> None:
         object.__setattr__(self, "nodes_mm", frozen_floats("nodes_mm", self.nodes_mm, (len(self.graph.nodes), 3)))
+
+
+def bore_range_mm(section: SectionSettings, service: ServiceSettings, profile: Profile) -> tuple[float, float]:
+    """Returns the least and greatest bore allowed: the job's own, or what service and process leave.
+
+    Raises:
+        SettingError: `bore-range-empty` when the least is not a positive number or exceeds the greatest.
+    """
+    if section.bore_range_mm is not None:
+        low, high, where = *section.bore_range_mm, "[section] bore_range_mm"
+    else:
+        low = max(service.smallest_bore_mm, profile.smallest_bore_mm.value)
+        high = profile.largest_bore_mm.value
+        where = f"[service] smallest_bore_mm and the process profile {profile.name}"
+    if not 0.0 < low <= high < np.inf:
+        raise SettingError(
+            "bore-range-empty",
+            expected="a least bore above 0 mm and not above the greatest",
+            found=f"{low:.3f} mm to {high:.3f} mm",
+            where=where,
+            do="Give [section] bore_range_mm with two increasing bores, or lower smallest_bore_mm.",
+        )
+    return low, high
+
+
+def wanted_bore_mm(layout_mm: Floats, scale: float, allowed_mm: tuple[float, float]) -> Floats:
+    """Returns the bores (k,) wanted: the layout's own times `scale`, clamped to `allowed_mm`."""
+    return np.clip(layout_mm * scale, *allowed_mm)
+
+
+def choose_depth_mm(
+    carrier: CarrierSettings, graph: ChannelGraph, section: SectionSettings, service: ServiceSettings, profile: Profile
+) -> float:
+    """Returns the depth of the centrelines below the face, in mm.
+
+    That is `depth_mm`, or `wall_to_face_mm` plus half the widest bore after scale and range.
+
+    Raises:
+        SettingError: `depth-not-one-way` unless exactly one of the two is given; `bore-range-empty`.
+    """
+    depth, wall = carrier.depth_mm, carrier.wall_to_face_mm
+    if depth is not None and wall is None:
+        return depth
+    if wall is None or depth is not None:
+        raise SettingError(
+            "depth-not-one-way",
+            expected="exactly one of depth_mm and wall_to_face_mm",
+            found="neither" if depth is None else "both",
+            where="[carrier]",
+            do="Keep depth_mm (to the centreline) or wall_to_face_mm (to the channel wall), not both.",
+        )
+    allowed = bore_range_mm(section, service, profile)
+    widest = max(
+        (float(wanted_bore_mm(branch.bore_mm, section.bore_scale, allowed).max()) for branch in graph.branches),
+        default=allowed[0],
+    )
+    return wall + 0.5 * widest
+
+
+def wrap_graph(graph: ChannelGraph, carrier: Carrier, depth_mm: float) -> WrappedGraph:
+    """Returns `graph` laid on `carrier` at `depth_mm`, sample by sample, with its distortion."""
+    sheet = np.array([node.sheet_mm for node in graph.nodes]).reshape(-1, 2)
+    branches = tuple(_wrap_branch(branch, carrier, depth_mm) for branch in graph.branches)
+    return WrappedGraph(
+        graph=graph,
+        carrier=carrier,
+        depth_mm=depth_mm,
+        nodes_mm=carrier.point_mm(sheet, depth_mm),
+        branches=branches,
+        distortion=measure_distortion(graph, carrier, depth_mm),
+    )
+
+
+def _wrap_branch(branch: Branch, carrier: Carrier, depth_mm: float) -> WrappedBranch:
+    along = curve_at(branch.curve, branch.parameter, 1)
+    return WrappedBranch(
+        id=branch.id,
+        xyz_mm=carrier.point_mm(branch.sheet_mm, depth_mm),
+        tangent=unit_rows(push_forward(carrier, branch.sheet_mm, along, depth_mm)),
+        into_metal=carrier.into_metal(branch.sheet_mm),
+        length_mm=measure_length_mm(branch, carrier, depth_mm),
+    )
+
+
+def push_forward(carrier: Carrier, sheet_mm: Floats, vectors: Floats, depth_mm: float) -> Floats:
+    """Returns the sheet vectors (k, 2) at sheet points (k, 2) as vectors (k, 3) in the part frame at depth."""
+    return np.asarray(np.einsum("kij,kj->ki", carrier.jacobian(sheet_mm, depth_mm), vectors), dtype=np.float64)
+
+
+def measure_length_mm(branch: Branch, carrier: Carrier, depth_mm: float) -> float:
+    """Returns the length of `branch` at `depth_mm`: the integral of |J t| by Gauss quadrature on each knot span."""
+    parameter, weight = gauss_on_spans(branch.curve)
+    sheet = curve_at(branch.curve, parameter)
+    speed = push_forward(carrier, sheet, curve_at(branch.curve, parameter, 1), depth_mm)
+    return float(weight @ np.linalg.norm(speed, axis=1))
+
+
+def measure_distortion(graph: ChannelGraph, carrier: Carrier, depth_mm: float) -> Distortion:
+    """Returns how far the map departs from the sheet along the channels, weighted by their length on the sheet.
+
+    Stretches are the singular values of J at depth: s1 >= s2. Length error s - 1, area error s1 s2 - 1,
+    angle error 2 asin((s1 - s2) / (s1 + s2)) (Tissot 1859, the greatest change of an angle).
+    """
+    if not graph.branches:
+        return Distortion(0.0, 0.0, 0.0, 0.0, 1.0)
+    spans = [(branch.curve, *gauss_on_spans(branch.curve)) for branch in graph.branches]
+    sheet = np.concatenate([curve_at(curve, parameter) for curve, parameter, _ in spans])
+    weight = np.concatenate(
+        [w * np.linalg.norm(curve_at(curve, parameter, 1), axis=1) for curve, parameter, w in spans]
+    )
+    stretch = np.linalg.svd(carrier.jacobian(sheet, depth_mm), compute_uv=False)
+    error = stretch - 1.0
+    angle = 2.0 * np.arcsin(np.clip((stretch[:, 0] - stretch[:, 1]) / stretch.sum(axis=1), 0.0, 1.0))
+    across = np.linalg.norm(carrier.jacobian(sheet, 0.0)[:, :, 0], axis=1)
+    return Distortion(
+        length_error_max=float(np.abs(error).max()),
+        length_error_rms=float(np.sqrt(weight @ (error**2).mean(axis=1) / weight.sum())),
+        area_error_max=float(np.abs(stretch.prod(axis=1) - 1.0).max()),
+        angle_error_max_deg=float(np.degrees(angle.max())),
+        face_scale=float(weight @ across / weight.sum()),
+    )
