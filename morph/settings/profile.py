@@ -6,7 +6,15 @@ convention is from the horizontal build plate (0 = flat ceiling, 90 = vertical).
 
 from __future__ import annotations
 
+import dataclasses
 from dataclasses import dataclass
+from importlib import resources
+from pathlib import Path
+from typing import Any
+
+from morph.core.errors import SettingError
+from morph.settings.table import Table, nearest, show
+from morph.settings.toml_file import parse_toml, read_bounded
 
 
 @dataclass(frozen=True, slots=True)
@@ -52,3 +60,104 @@ class Profile:
     bend_radius_bores: Sourced
     machine_mm: tuple[Sourced, Sourced, Sourced]
     density_kg_m3: Sourced
+
+
+@dataclass(frozen=True, slots=True)
+class _Limits:
+    """The unit a profile must state for a number, and the range that makes sense for it."""
+
+    unit: str
+    above: float | None
+    most: float
+
+
+_LIMITS = {
+    "layer_um": _Limits("um", 0.0, 500.0),
+    "roof_angle_deg": _Limits("deg", 0.0, 89.0),
+    "free_span_mm": _Limits("mm", 0.0, 100.0),
+    "wall_mm": _Limits("mm", 0.0, 50.0),
+    "smallest_bore_mm": _Limits("mm", 0.0, 50.0),
+    "largest_bore_mm": _Limits("mm", 0.0, 100.0),
+    "powder_ball_mm": _Limits("mm", 0.0, 50.0),
+    "position_band_mm": _Limits("mm", None, 5.0),
+    "bore_band_mm": _Limits("mm", None, 5.0),
+    "bend_radius_bores": _Limits("bores", None, 20.0),
+    "machine_mm": _Limits("mm", 0.0, 5000.0),
+    "density_kg_m3": _Limits("kg/m3", 500.0, 25000.0),
+}
+
+
+def profile_names() -> tuple[str, ...]:
+    """Returns the names of the profiles shipped with morph, sorted."""
+    folder = resources.files("morph.settings") / "profiles"
+    return tuple(sorted(entry.name[:-5] for entry in folder.iterdir() if entry.name.endswith(".toml")))
+
+
+def read_profile(name_or_path: str, relative_to: Path) -> Profile:
+    """Returns the process profile of a shipped name, or of a file when the text ends in ``.toml``.
+
+    Args:
+        name_or_path: a name out of `profile_names()`, or a path.
+        relative_to: folder that a relative path starts from.
+
+    Raises:
+        SettingError: no profile of that name; or the profile lacks a number, has an unknown one, or one
+            without unit and source or out of range.
+        InputError: the file cannot be read.
+    """
+    if name_or_path.endswith(".toml"):
+        path = relative_to / name_or_path
+        return _make_profile(read_bounded(path, "a process profile (TOML)", "profile"), path.name)
+    if name_or_path not in profile_names():
+        raise SettingError(
+            "profile-unknown",
+            expected="the name of a shipped process profile, or the path of a .toml file",
+            found=show(name_or_path),
+            where="process profile",
+            do=nearest(name_or_path, profile_names()),
+        )
+    file = f"{name_or_path}.toml"
+    return _make_profile((resources.files("morph.settings") / "profiles" / file).read_bytes(), file)
+
+
+def _make_profile(content: bytes, file: str) -> Profile:
+    table = Table(parse_toml(content, file), file, "", [item.name for item in dataclasses.fields(Profile)])
+    numbers = {
+        key: _sourced(table.require(key), file, f"[{key}]", limits)
+        for key, limits in _LIMITS.items()
+        if key != "machine_mm"
+    }
+    axes = table.tables("machine_mm", 3)
+    if len(axes) != 3:
+        table.refuse(
+            "setting-type",
+            "machine_mm",
+            expected="three tables: x, y and z of the build volume",
+            found=f"{len(axes)} of them",
+            do="Write [[machine_mm]] three times.",
+        )
+    sides = [
+        _sourced(axis, file, f"[[machine_mm]] {index}", _LIMITS["machine_mm"]) for index, axis in enumerate(axes, 1)
+    ]
+    profile = Profile(
+        name=table.text("name"),
+        material=table.text("material"),
+        machine_mm=(sides[0], sides[1], sides[2]),
+        **numbers,
+    )
+    if profile.smallest_bore_mm.value > profile.largest_bore_mm.value:
+        table.refuse(
+            "setting-order",
+            "smallest_bore_mm",
+            expected=f"at most largest_bore_mm = {profile.largest_bore_mm.value:g} mm",
+            found=f"{profile.smallest_bore_mm.value:g} mm",
+            do="Exchange them or correct one.",
+        )
+    return profile
+
+
+def _sourced(values: Any, file: str, label: str, limits: _Limits) -> Sourced:
+    table = Table(values, file, label, ("value", "unit", "source"))
+    least = 0.0 if limits.above is None else None
+    value = table.number("value", above=limits.above, least=least, most=limits.most, unit=limits.unit)
+    return Sourced(value, table.word("unit", [limits.unit]), table.text("source"))

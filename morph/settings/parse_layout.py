@@ -1,0 +1,213 @@
+"""The [layout] table and the [[port]] tables of a job: the flat drawing and where coolant enters and leaves."""
+
+from __future__ import annotations
+
+import re
+from pathlib import Path
+from typing import Any
+
+from morph.core.errors import SettingError
+from morph.core.tolerance import COINCIDE_MM
+from morph.settings.job import (
+    CoolantEnd,
+    LayoutSettings,
+    LevelRule,
+    MirrorAt,
+    PortSettings,
+    Role,
+    Rows,
+    Samples,
+    Seam,
+    SeenFrom,
+)
+from morph.settings.table import Choice, Table, show
+
+LARGEST_SHEET_MM = 2000.0
+FARTHEST_MM = 10_000.0
+MOST_PORTS = 200
+
+_PORT_NAME = re.compile(r"[A-Za-z0-9][A-Za-z0-9._-]{0,39}")
+_LAYOUT_KEYS = (
+    "image",
+    "size_mm",
+    "rows",
+    "samples",
+    "seen_from",
+    "channel",
+    "level",
+    "area_ratio",
+    "seam",
+    "mirror_at",
+)
+_PORT_KEYS = ("name", "role", "at_mm", "exit_mm", "leave", "end")
+_PORT_LATER = {"thread": "End preparation other than plain (threads, face seals)"}
+_END_LATER = {"thread": "Threaded ends", "face-seal": "Face-seal ends"}
+
+
+def parse_layout(values: Any, file: str, folder: Path) -> LayoutSettings:
+    """Returns the [layout] settings.
+
+    Args:
+        values: the parsed table.
+        file: base name of the job file, for messages.
+        folder: the job file's folder; the image path is relative to it.
+
+    Raises:
+        SettingError: a setting is missing, unknown, wrong, or not available yet.
+    """
+    table = Table(values, file, "[layout]", _LAYOUT_KEYS)
+    width_mm, height_mm = table.numbers("size_mm", 2, above=0.0, most=LARGEST_SHEET_MM)
+    level = _level(table)
+    return LayoutSettings(
+        image=folder / table.text("image"),
+        size_mm=(width_mm, height_mm),
+        rows=table.choice("rows", Rows, Rows.TOP_DOWN),
+        samples=table.choice("samples", Samples, Samples.CELLS),
+        seen_from=table.choice("seen_from", SeenFrom, SeenFrom.PART),
+        channel=table.choice("channel", CoolantEnd, CoolantEnd.HIGH),
+        level=level,
+        area_ratio=_area_ratio(table, level),
+        seam=_only(table, "seam", Seam, Seam.OPEN, "The joined seam (a full wrap)"),
+        mirror_at=_only(table, "mirror_at", MirrorAt, MirrorAt.NONE, "Mirroring half of a symmetric layout"),
+    )
+
+
+def _only(table: Table, key: str, kind: type[Choice], sole: Choice, part: str) -> Choice:
+    """Returns `sole`, the one choice of `kind` that exists in this version; the others are not available."""
+    if table.choice(key, kind, sole) is not sole:
+        table.not_available(key, part)
+    return sole
+
+
+def _level(table: Table) -> LevelRule | float:
+    value = table.raw("level")
+    if not table.has("level"):
+        return LevelRule.HALF
+    if isinstance(value, str):
+        return table.choice("level", LevelRule)
+    if isinstance(value, bool) or not isinstance(value, int | float):
+        table.refuse(
+            "setting-type",
+            "level",
+            expected='"half", "keep-area" or a number between 0 and 1',
+            do='Write level = "half" unless the optimiser used another level.',
+        )
+    level = table.number("level", unit="")
+    if not 0.0 < level < 1.0:
+        table.refuse(
+            "setting-range", "level", expected="a number between 0 and 1, both excluded", do='Use "half" when unsure.'
+        )
+    return level
+
+
+def _area_ratio(table: Table, level: LevelRule | float) -> float | None:
+    if level != LevelRule.KEEP_AREA:
+        table.not_used(["area_ratio"], 'unless level is "keep-area"')
+        return None
+    ratio = table.optional_number("area_ratio", above=0.0, unit="")
+    if ratio is not None and not ratio < 1.0:
+        table.refuse("setting-range", "area_ratio", expected="less than 1", do="Coolant area by whole sheet area.")
+    return ratio
+
+
+def parse_ports(values: list[Any], file: str, size_mm: tuple[float, float]) -> tuple[PortSettings, ...]:
+    """Returns the ports in the order of the file: at least one in and one out, names unique, all on the sheet.
+
+    Args:
+        values: the parsed [[port]] tables.
+        file: base name of the job file, for messages.
+        size_mm: width and height of the sheet.
+
+    Raises:
+        SettingError: a port is wrong, two share a name or a place, or no port lets coolant in or out.
+    """
+    ports: list[PortSettings] = []
+    for index, item in enumerate(values, 1):
+        port = _port(item, file, index, size_mm)
+        for other in ports:
+            _require_distinct(port, other, f"{file}: [[port]] {index}")
+        ports.append(port)
+    for role in (Role.IN, Role.OUT):
+        if not any(port.role is role for port in ports):
+            raise SettingError(
+                f"port-none-{role.value}",
+                expected=f'at least one [[port]] with role = "{role.value}"',
+                found="none",
+                where=f"{file}: [[port]]",
+                do=f"Declare where coolant {'enters' if role is Role.IN else 'leaves'}.",
+            )
+    return tuple(ports)
+
+
+def _require_distinct(port: PortSettings, other: PortSettings, where: str) -> None:
+    if port.name.lower() == other.name.lower():
+        raise SettingError(
+            "port-name-twice",
+            expected="a name of its own for every port",
+            found=f"{show(port.name)} a second time",
+            where=f"{where} name",
+            do="Rename one of them.",
+        )
+    if all(abs(a - b) <= COINCIDE_MM for a, b in zip(port.at_mm, other.at_mm, strict=True)):
+        raise SettingError(
+            "port-place-twice",
+            expected="a place of its own for every port",
+            found=f"[{port.at_mm[0]:g}, {port.at_mm[1]:g}] mm, where port {other.name} already is",
+            where=f"{where} at_mm",
+            do="Move or remove one of them.",
+        )
+
+
+def _port(values: Any, file: str, index: int, size_mm: tuple[float, float]) -> PortSettings:
+    table = Table(values, file, f"[[port]] {index}", _PORT_KEYS, _PORT_LATER)
+    name = table.text("name")
+    if not _PORT_NAME.fullmatch(name):
+        table.refuse(
+            "port-name",
+            "name",
+            expected="at most 40 letters, digits, points, hyphens and underscores, a letter or digit first",
+            do="The name becomes part of ids in the result files; choose a plain one.",
+        )
+    if table.has("end"):
+        table.word("end", ["plain"], _END_LATER)
+    return PortSettings(
+        name=name,
+        role=table.choice("role", Role),
+        at_mm=_place(table, size_mm),
+        exit_mm=_triple(table, "exit_mm") if table.has("exit_mm") else None,
+        leave=direction(table, "leave") if table.has("leave") else None,
+    )
+
+
+def _place(table: Table, size_mm: tuple[float, float]) -> tuple[float, float]:
+    x_mm, y_mm = table.numbers("at_mm", 2)
+    inside = all(-COINCIDE_MM <= at <= size + COINCIDE_MM for at, size in zip((x_mm, y_mm), size_mm, strict=True))
+    if not inside:
+        table.refuse(
+            "port-outside",
+            "at_mm",
+            expected=f"a place on the sheet, x 0 to {size_mm[0]:g} mm and y 0 to {size_mm[1]:g} mm",
+            found=f"[{x_mm:g}, {y_mm:g}] mm",
+            do="The sheet's origin is its lower left corner, x to the right, y up.",
+        )
+    return min(max(x_mm, 0.0), size_mm[0]), min(max(y_mm, 0.0), size_mm[1])
+
+
+def _triple(table: Table, key: str) -> tuple[float, float, float]:
+    x, y, z = table.numbers(key, 3, least=-FARTHEST_MM, most=FARTHEST_MM)
+    return x, y, z
+
+
+def direction(table: Table, key: str) -> tuple[float, float, float]:
+    """Returns a required direction of three numbers, not all zero, scaled so that the largest is at most 1.
+
+    Raises:
+        SettingError: missing, wrong, or without length.
+    """
+    x, y, z = table.numbers(key, 3, unit="")
+    largest = max(abs(x), abs(y), abs(z))
+    if largest < 1e-9:
+        table.refuse(
+            "setting-zero-direction", key, expected="a direction with some length", do="Write it like [0, 0, 1]."
+        )
+    return (x, y, z) if largest <= 1.0 else (x / largest, y / largest, z / largest)

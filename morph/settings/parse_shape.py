@@ -1,0 +1,207 @@
+"""The [carrier], [section], [blank] and [[hole]] tables of a job: the shapes the channels live in."""
+
+from __future__ import annotations
+
+from typing import Any
+
+from morph.settings.job import (
+    BlankSettings,
+    BoxBlankSettings,
+    CarrierBlankSettings,
+    CarrierSettings,
+    CylinderBlankSettings,
+    HoleSettings,
+    Metal,
+    SectionSettings,
+    TrueAt,
+)
+from morph.settings.parse_layout import FARTHEST_MM, direction
+from morph.settings.table import Table
+
+LARGEST_RADIUS_MM = 5000.0
+LARGEST_BORE_MM = 100.0
+LARGEST_WALL_MM = 500.0
+MOST_HOLES = 500
+FACES = ("carrier", "foot", "top", "back", "side", "-x", "+x", "-y", "+y", "-z", "+z")
+
+_CARRIER_KEYS = ("kind", "radius_mm", "metal", "depth_mm", "wall_to_face_mm", "true_at")
+_CARRIER_LATER = {
+    "half_angle_deg": "The cone carrier",
+    "map": "The cone carrier",
+    "profile_mm": "The revolved carrier",
+    "file": "The free-form carrier",
+    "anchor_mm": "The free-form carrier",
+    "up": "The free-form carrier",
+    "metal_at_mm": "The free-form carrier",
+}
+_CARRIER_KINDS_LATER = {
+    "cone": "The cone carrier",
+    "revolved": "The revolved carrier",
+    "freeform": "The free-form carrier",
+}
+_SECTION_KEYS = ("shape", "bore_scale", "bore_range_mm", "blend_mm")
+_SECTION_LATER = {
+    "roofed": "The roofed section",
+    "arched": "The arched section",
+    "auto": "Choosing the section by itself",
+}
+_BLANK_OF_KIND = {
+    "carrier": ("margin_mm", "thickness_mm"),
+    "cylinder": ("radius_mm", "z_mm"),
+    "box": ("min_mm", "max_mm"),
+}
+_BLANK_LATER = {"flange": "A flange on the blank", "file": "A blank from a file"}
+
+
+def parse_carrier(values: Any, file: str) -> CarrierSettings:
+    """Returns the [carrier] settings of a cylinder.
+
+    Raises:
+        SettingError: a setting is missing, unknown, wrong, or not available yet.
+    """
+    kind = values.get("kind") if isinstance(values, dict) else None
+    if isinstance(kind, str) and kind in _CARRIER_KINDS_LATER:
+        Table({"kind": kind}, file, "[carrier]", ["kind"]).not_available("kind", _CARRIER_KINDS_LATER[kind])
+    table = Table(values, file, "[carrier]", _CARRIER_KEYS, _CARRIER_LATER)
+    table.word("kind", ["cylinder"])
+    if table.has("depth_mm") == table.has("wall_to_face_mm"):
+        both = table.has("depth_mm")
+        table.refuse(
+            "depth-choice",
+            "depth_mm",
+            expected="exactly one of depth_mm and wall_to_face_mm",
+            found="both" if both else "neither",
+            do="Remove one of the two." if both else "Give the depth of the centreline or the wall to the face.",
+        )
+    return CarrierSettings(
+        radius_mm=table.number("radius_mm", above=0.0, most=LARGEST_RADIUS_MM),
+        metal=table.choice("metal", Metal),
+        depth_mm=table.optional_number("depth_mm", above=0.0, most=LARGEST_RADIUS_MM),
+        wall_to_face_mm=table.optional_number("wall_to_face_mm", above=0.0, most=LARGEST_RADIUS_MM),
+        true_at=table.choice("true_at", TrueAt, TrueAt.DEPTH),
+    )
+
+
+def parse_section(values: Any, file: str) -> SectionSettings:
+    """Returns the [section] settings of a round section.
+
+    Raises:
+        SettingError: a setting is unknown, wrong, or not available yet.
+    """
+    table = Table(values, file, "[section]", _SECTION_KEYS)
+    if table.has("shape"):
+        table.word("shape", ["round"], _SECTION_LATER)
+    bore_range_mm = None
+    if table.has("bore_range_mm"):
+        bore_range_mm = ordered_pair(table, "bore_range_mm", above=0.0, most=LARGEST_BORE_MM, equal=True)
+    return SectionSettings(
+        bore_scale=table.number("bore_scale", 1.0, above=0.0, most=10.0, unit=""),
+        bore_range_mm=bore_range_mm,
+        blend_mm=table.number("blend_mm", 0.6, least=0.0, most=10.0),
+    )
+
+
+def parse_blank(values: Any, file: str) -> BlankSettings:
+    """Returns the [blank] settings.
+
+    Raises:
+        SettingError: a setting is unknown, wrong, belongs to another kind of blank, or is not available yet.
+    """
+    own = [key for keys in _BLANK_OF_KIND.values() for key in keys]
+    table = Table(values, file, "[blank]", ["kind", "part_faces", "port_faces", "stock_mm", *own], _BLANK_LATER)
+    kind = "carrier"
+    if table.has("kind"):
+        kind = table.word("kind", list(_BLANK_OF_KIND), {"mesh": "A blank from a mesh file"})
+    table.not_used(set(own) - set(_BLANK_OF_KIND[kind]), f'when kind is "{kind}"')
+    part_faces = table.names("part_faces", FACES) if table.has("part_faces") else ("carrier",)
+    port_faces = table.names("port_faces", FACES) if table.has("port_faces") else ("foot",)
+    if "carrier" not in part_faces:
+        table.refuse(
+            "part-faces-carrier",
+            "part_faces",
+            expected='"carrier" among them',
+            do="The carrier always shapes the part.",
+        )
+    shared = sorted(set(part_faces) & set(port_faces))
+    if shared:
+        table.refuse(
+            "face-part-and-port",
+            "port_faces",
+            expected="no face that shapes the part",
+            found=", ".join(shared),
+            do="A port in a part face would leak into the part; remove the face from one of the two lists.",
+        )
+    return BlankSettings(_blank_shape(table, kind), part_faces, port_faces, _stock(table, file))
+
+
+def _blank_shape(table: Table, kind: str) -> CarrierBlankSettings | CylinderBlankSettings | BoxBlankSettings:
+    if kind == "cylinder":
+        radius_mm = table.number("radius_mm", above=0.0, most=LARGEST_RADIUS_MM)
+        return CylinderBlankSettings(radius_mm, ordered_pair(table, "z_mm", least=-FARTHEST_MM, most=FARTHEST_MM))
+    if kind == "box":
+        low = table.numbers("min_mm", 3, least=-FARTHEST_MM, most=FARTHEST_MM)
+        high = table.numbers("max_mm", 3, least=-FARTHEST_MM, most=FARTHEST_MM)
+        for axis, (lower, upper) in zip("xyz", zip(low, high, strict=True), strict=True):
+            if not lower < upper:
+                table.refuse(
+                    "setting-order",
+                    "max_mm",
+                    expected=f"{axis} above min_mm's {lower:g} mm",
+                    found=f"{axis} = {upper:g} mm",
+                    do="min_mm is the lowest corner of the box, max_mm the highest.",
+                )
+        return BoxBlankSettings((low[0], low[1], low[2]), (high[0], high[1], high[2]))
+    margin = table.numbers("margin_mm", 2, least=0.0, most=FARTHEST_MM) if table.has("margin_mm") else (10.0, 10.0)
+    thickness_mm = table.optional_number("thickness_mm", above=0.0, most=LARGEST_RADIUS_MM)
+    return CarrierBlankSettings((margin[0], margin[1]), thickness_mm)
+
+
+def _stock(table: Table, file: str) -> tuple[tuple[str, float], ...]:
+    if not table.has("stock_mm"):
+        return ()
+    stock = Table(table.raw("stock_mm"), file, "[blank] stock_mm", FACES)
+    return tuple(
+        (face, stock.number(face, least=0.0, most=LARGEST_WALL_MM)) for face in sorted(FACES) if stock.has(face)
+    )
+
+
+def parse_holes(values: list[Any], file: str) -> tuple[HoleSettings, ...]:
+    """Returns the [[hole]] settings in the order of the file.
+
+    Raises:
+        SettingError: a setting is missing, unknown or wrong.
+    """
+    holes = []
+    for index, item in enumerate(values, 1):
+        table = Table(item, file, f"[[hole]] {index}", ("at_mm", "axis", "diameter_mm", "wall_mm", "depth_mm"))
+        at = table.numbers("at_mm", 3, least=-FARTHEST_MM, most=FARTHEST_MM)
+        holes.append(
+            HoleSettings(
+                at_mm=(at[0], at[1], at[2]),
+                axis=direction(table, "axis"),
+                diameter_mm=table.number("diameter_mm", above=0.0, most=LARGEST_RADIUS_MM),
+                wall_mm=table.optional_number("wall_mm", least=0.0, most=LARGEST_WALL_MM),
+                depth_mm=table.optional_number("depth_mm", above=0.0, most=FARTHEST_MM),
+            )
+        )
+    return tuple(holes)
+
+
+def ordered_pair(
+    table: Table,
+    key: str,
+    *,
+    above: float | None = None,
+    least: float | None = None,
+    most: float | None = None,
+    equal: bool = False,
+) -> tuple[float, float]:
+    """Returns a required list of two lengths in mm, the lower first; `equal` allows two of the same.
+
+    Raises:
+        SettingError: missing, wrong, or in the wrong order.
+    """
+    low, high = table.numbers(key, 2, above=above, least=least, most=most)
+    if low > high or (low == high and not equal):
+        table.refuse("setting-order", key, expected="the lower number first", do="Exchange the two numbers.")
+    return low, high
