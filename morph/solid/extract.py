@@ -1,0 +1,69 @@
+"""The channel wall as triangles: closed, 2-manifold, facing outwards (out of the coolant)."""
+
+from __future__ import annotations
+
+from functools import cache
+
+import numpy as np
+
+from morph.core.arrays import Floats, Ints
+from morph.core.progress import Progress
+from morph.solid.field import BLOCKS_PER_SLAB, SampledField
+from morph.solid.slabs import run_slabs
+
+CHORD_BIAS = 0.07
+"""Vertices on a round wall of radius r are placed at the level 0.07 h^2 / r, which makes up for the chords (measured)."""
+
+NEWTON_STEPS = 2
+
+
+@cache
+def _tables() -> tuple[Ints, Ints, Ints]:
+    from morph.kernels.dual_surface import make_loop_tables
+
+    return make_loop_tables()
+
+
+def extract_surface(field: SampledField, progress: Progress, steps: int = NEWTON_STEPS) -> tuple[Floats, Ints]:
+    """Returns vertices (n, 3) in mm and triangles (m, 3) of the surface of `field`.
+
+    Args:
+        field: the sampled field.
+        progress: told after each slab of blocks.
+        steps: Newton steps of each vertex towards the field's zero; 0 leaves it at the mean of its edge
+            crossings, a coarser place that never folds.
+    """
+    from morph.kernels.dual_surface import count_cells, join_quads, place_vertices
+
+    loop_of, n_loops, double_face = _tables()
+    n = len(field.corner)
+    cases = np.empty(field.codes.shape, np.uint16)
+    n_vertices, n_quads = np.zeros(n, np.int64), np.zeros(n, np.int64)
+    run_slabs(
+        "solid: cells",
+        n,
+        4 * BLOCKS_PER_SLAB,
+        lambda a, b: count_cells(
+            a, b, field.codes, field.neighbours, n_loops, double_face, cases, n_vertices, n_quads
+        ),
+        progress,
+    )
+    first_vertex = np.empty(field.codes.shape, np.int32)
+    vertices = np.empty((int(n_vertices.sum()), 3))
+    vertex_offset = np.cumsum(n_vertices) - n_vertices
+    arguments = field.kernel_arguments()
+    tables = (field.values, cases, loop_of, n_loops, vertex_offset, CHORD_BIAS, steps)
+    run_slabs(
+        "solid: vertices",
+        n,
+        BLOCKS_PER_SLAB,
+        lambda a, b: place_vertices(a, b, *arguments, *tables, first_vertex, vertices),
+        progress,
+    )
+    triangles = np.empty((2 * int(n_quads.sum()), 3), np.int32)
+    quad_offset = np.cumsum(n_quads) - n_quads
+    joined = (field.codes, cases, field.neighbours, loop_of, first_vertex, vertices, quad_offset, triangles)
+    run_slabs("solid: triangles", n, 2 * BLOCKS_PER_SLAB, lambda a, b: join_quads(a, b, *joined), progress)
+    if triangles.size and triangles.min() < 0:
+        raise RuntimeError("the sampled field is not closed: a cell beside a crossed edge was skipped")
+    return vertices, triangles.astype(np.int64)
