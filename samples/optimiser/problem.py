@@ -113,7 +113,7 @@ class DesignProblem:
         mean, by_temperature = _power_mean(heat.temperature, self.weight, scenario.power)
         adjoint = heat.adjoint(by_temperature)
         by_conductivity, by_velocity = self.heat.gradients(heat.temperature, adjoint, flow.velocity)
-        by_drag = self.flow.drag_gradient(flow.velocity, flow.adjoint(by_velocity, self.flow.free))
+        by_drag = self.flow.drag_gradient(flow.velocity, flow.adjoint(by_velocity))
         slope = by_drag * drag_slope - by_conductivity * 3.0 * gap * (1.0 - density) ** 2
         limits, limit_slopes = self._limits(density)
         return Evaluation(mean, slope, limits, limit_slopes, heat.temperature, flow.velocity)
