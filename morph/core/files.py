@@ -33,7 +33,7 @@ def write_folder(target: Path, files: Mapping[str, bytes], *, force: bool = Fals
         ExportError: the folder is not empty (without `force`), is a file, cannot be written, or the disk is full.
     """
     for name in files:
-        if Path(name).name != name or name.startswith("."):
+        if not name or Path(name).name != name or name.startswith("."):
             raise ValueError(f"not a plain file name: {name!r}")
     require_target(target, force=force)
     folder = target.resolve()

@@ -25,6 +25,7 @@ from morph.settings.table import Choice, Table, show
 LARGEST_SHEET_MM = 2000.0
 FARTHEST_MM = 10_000.0
 MOST_PORTS = 200
+LONGEST_NAME_BYTES = 255
 
 _PORT_NAME = re.compile(r"[A-Za-z0-9][A-Za-z0-9._-]{0,39}")
 _LAYOUT_KEYS = (
@@ -59,7 +60,7 @@ def parse_layout(values: Any, file: str, folder: Path) -> LayoutSettings:
     width_mm, height_mm = table.numbers("size_mm", 2, above=0.0, most=LARGEST_SHEET_MM)
     level = _level(table)
     return LayoutSettings(
-        image=folder / table.text("image"),
+        image=folder / _image(table),
         size_mm=(width_mm, height_mm),
         rows=table.choice("rows", Rows, Rows.TOP_DOWN),
         samples=table.choice("samples", Samples, Samples.CELLS),
@@ -70,6 +71,18 @@ def parse_layout(values: Any, file: str, folder: Path) -> LayoutSettings:
         seam=_only(table, "seam", Seam, Seam.OPEN, "The joined seam (a full wrap)"),
         mirror_at=_only(table, "mirror_at", MirrorAt, MirrorAt.NONE, "Mirroring half of a symmetric layout"),
     )
+
+
+def _image(table: Table) -> str:
+    image = table.text("image")
+    if any(len(part.encode("utf-8", "replace")) > LONGEST_NAME_BYTES for part in Path(image).parts):
+        table.refuse(
+            "setting-text",
+            "image",
+            expected=f"file and folder names of at most {LONGEST_NAME_BYTES} bytes",
+            do="Give the image a shorter name.",
+        )
+    return image
 
 
 def _only(table: Table, key: str, kind: type[Choice], sole: Choice, part: str) -> Choice:

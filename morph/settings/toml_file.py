@@ -32,15 +32,19 @@ def read_bounded(path: Path, kind: str, code_prefix: str) -> bytes:
         InputError: there is no such file, it is a folder or cannot be read, or it is larger than 1 MB.
     """
     where = path.name or str(path)
-    if "\0" in str(path) or not path.exists():
+    try:
+        exists, is_file = path.exists(), path.is_file()
+    except (OSError, ValueError):  # a name the system cannot hold, such as one of 300 characters
+        exists = is_file = False
+    if not exists:
         raise InputError(
             f"{code_prefix}-missing",
             expected=kind,
             found="no such file",
-            where=where,
+            where=where[:80],
             do="Check the path and the spelling of the file name.",
         )
-    if not path.is_file():
+    if not is_file:
         raise InputError(
             f"{code_prefix}-unreadable",
             expected=kind,
