@@ -137,6 +137,8 @@ class ChannelGraph:
         dropped: pieces that were removed and why. bridges: suggestions.
         levels: pieces and holes at level - 0.1, level, level + 0.1.
         notices: degraded or surprising paths.
+        loose_nodes, loose_branches: pieces without a port (each also in `dropped`); not built, kept
+            because a suggested bridge may join them.
     """
 
     size_mm: tuple[float, float]
@@ -148,10 +150,12 @@ class ChannelGraph:
     bridges: tuple[Bridge, ...] = ()
     levels: tuple[LevelCount, ...] = ()
     notices: tuple[Notice, ...] = ()
+    loose_nodes: tuple[Node, ...] = ()
+    loose_branches: tuple[Branch, ...] = ()
 
     def __post_init__(self) -> None:
-        place = {node.id: node.sheet_mm for node in self.nodes}
-        for branch in self.branches:
+        place = {node.id: node.sheet_mm for node in self.nodes + self.loose_nodes}
+        for branch in self.branches + self.loose_branches:
             for node_id, point in ((branch.start, branch.sheet_mm[0]), (branch.end, branch.sheet_mm[-1])):
                 if np.abs(place[node_id] - point).max() > COINCIDE_MM:
                     raise ValueError(f"branch {branch.id} does not end on node {node_id}")

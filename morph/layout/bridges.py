@@ -1,0 +1,203 @@
+"""Suggested ways on from dead ends through grey density; offered, never built by themselves.
+
+From each dead end the cheapest way through the density (cost 1 / (density above background)) is
+sought to another part of the web within four channel widths, ahead of the tip. It is **likely** a
+blocked channel when the way is direct, its density stands clear of both flanks and of the background.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Callable
+from dataclasses import dataclass
+
+import numpy as np
+
+from morph.core.arrays import Bools, Floats, Ints
+from morph.layout.density import Density
+from morph.layout.level import Grid, Picture
+from morph.layout.web import Run, Web, arc_mm, measure_length_mm
+
+REACH_WIDTHS = 4.0
+AHEAD_COSINE = 0.5
+LOWEST_DENSITY = 0.22
+ABOVE_BACKGROUND = 0.10
+ABOVE_FLANKS = 0.12
+DETOUR = 1.35
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Suggestion:
+    """A way on from joint `tip` onto a joint or a run of the web, in sheet mm."""
+
+    tip: int
+    onto_joint: int | None
+    onto_run: int
+    path_mm: Floats
+    gap_mm: float
+    lowest_density: float
+    likely: bool
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class _Field:
+    """Smoothed density on the image's own grid, its background, and the mean channel width."""
+
+    value: Floats
+    grid: Grid
+    background: float
+    width_mm: float
+
+    def at(self, sheet_mm: Floats) -> Floats:
+        """Returns the density (k,) at places (k, 2), linear between samples."""
+        from scipy.ndimage import map_coordinates
+
+        return np.asarray(
+            map_coordinates(self.value, self.grid.row_column(sheet_mm).T, order=1, mode="nearest"), dtype=np.float64
+        )
+
+
+def suggest_bridges(web: Web, field: Floats, density: Density, picture: Picture) -> list[Suggestion]:
+    """Returns at most one way on from each dead end of `web` without a port; a pair that meets is told once.
+
+    Args:
+        web: cleaned and centred, ports attached.
+        field: smoothed density on the image's own grid.
+        density: for the grid's places.
+        picture: for the mean channel width.
+    """
+    from scipy.spatial import cKDTree
+
+    tips = [
+        key
+        for key, joint in sorted(web.joints.items())
+        if web.degree(key) == 1 and joint.port is None and joint.mouth < 0
+    ]
+    if not tips:
+        return []
+    grid = Grid(density.first_mm, density.pitch_mm)
+    ground = _Field(field, grid, float(np.quantile(field, 0.2)), picture.width_mm)
+    keys = sorted(web.runs)
+    owner = np.repeat(keys, [len(web.runs[key].place_mm) for key in keys])
+    sample = np.concatenate([np.arange(len(web.runs[key].place_mm)) for key in keys])
+    place = np.concatenate([web.runs[key].place_mm for key in keys])
+    tree = cKDTree(place)
+    found: dict[int, Suggestion] = {}
+    for tip in tips:
+        near = np.sort(np.array(tree.query_ball_point(web.joints[tip].place_mm, REACH_WIDTHS * ground.width_mm)))
+        near = near.astype(np.int64)
+        suggestion = _way_on(web, tip, ground, place[near], owner[near], sample[near])
+        if suggestion is None:
+            continue
+        back = found.get(suggestion.onto_joint) if suggestion.onto_joint is not None else None
+        if back is None or back.onto_joint != tip:
+            found[tip] = suggestion
+        elif suggestion.likely and not back.likely:
+            del found[back.tip]
+            found[tip] = suggestion
+    return list(found.values())
+
+
+def _way_on(web: Web, tip: int, ground: _Field, place: Floats, owner: Ints, sample: Ints) -> Suggestion | None:
+    run_key = web.at[tip][0]
+    run = web.runs[run_key] if web.runs[run_key].start == tip else web.runs[run_key].reversed()
+    start, heading = _heading(run, ground.width_mm)
+    away = place - start
+    distance = np.hypot(*away.T)
+    with np.errstate(invalid="ignore", divide="ignore"):
+        ahead = (away @ heading) / distance >= AHEAD_COSINE
+    allowed = ahead & (distance > 1e-6) & ~_too_near_on_own_run(run, run_key, web, owner, sample, distance, ground)
+    if not allowed.any():
+        return None
+    cost_of, path_to = _cheapest_ways(ground, start)
+    candidate = np.flatnonzero(allowed)
+    cost = cost_of(place[candidate])
+    best = int(candidate[int(np.argmin(cost))])
+    if not np.isfinite(cost.min()):
+        return None
+    path = path_to(place[best])
+    path[0], path[-1] = start, place[best]
+    if len(path) == 2:
+        path = np.vstack([path[0], path.mean(axis=0), path[-1]])
+    density_along = ground.at(path)
+    lowest = float(density_along.min())
+    direct = measure_length_mm(path) <= DETOUR * float(distance[best]) + 2.0 * ground.grid.pixel_mm
+    likely = (
+        direct
+        and lowest > LOWEST_DENSITY
+        and lowest - ground.background > ABOVE_BACKGROUND
+        and _flank_contrast(ground, path) > ABOVE_FLANKS
+    )
+    onto_run = int(owner[best])
+    onto_joint = _end_near(web, onto_run, int(sample[best]), tip)
+    return Suggestion(tip, onto_joint, onto_run, path, measure_length_mm(path), lowest, likely)
+
+
+def _heading(run: Run, width_mm: float) -> tuple[Floats, Floats]:
+    arc = arc_mm(run.place_mm)
+    inner = run.place_mm[min(len(arc) - 1, max(3, int(np.searchsorted(arc, 1.5 * width_mm))))]
+    outward = run.place_mm[0] - inner
+    return run.place_mm[0], outward / max(float(np.hypot(*outward)), 1e-12)
+
+
+def _too_near_on_own_run(
+    run: Run, run_key: int, web: Web, owner: Ints, sample: Ints, distance: Floats, ground: _Field
+) -> Bools:
+    """Returns which samples lie on the tip's own run without a real way round between them and the tip."""
+    arc = arc_mm(run.place_mm)
+    index = sample
+    if web.runs[run_key].start != run.start:
+        index = len(arc) - 1 - sample
+    own = owner == run_key
+    along = arc[np.where(own, index, 0)]
+    return np.asarray(own & (along < 3.0 * distance + 2.0 * ground.width_mm), dtype=np.bool_)
+
+
+def _cheapest_ways(ground: _Field, start: Floats) -> tuple[Callable[[Floats], Floats], Callable[[Floats], Floats]]:
+    """Returns two functions: the cost of the cheapest way to places (k, 2), and the way itself to one place."""
+    from skimage.graph import MCP_Geometric
+
+    row, column = ground.grid.row_column(start[None])[0]
+    reach = math.ceil(REACH_WIDTHS * ground.width_mm / ground.grid.pixel_mm) + 1
+    top, left = max(0, round(row) - reach), max(0, round(column) - reach)
+    window = ground.value[top : round(row) + reach + 1, left : round(column) + reach + 1]
+    search = MCP_Geometric(1.0 / (np.clip(window - ground.background, 0.0, 1.0) + 0.03))
+
+    def pixel(sheet_mm: Floats) -> Ints:
+        index = np.rint(ground.grid.row_column(sheet_mm)).astype(np.int64) - np.array([top, left])
+        return np.asarray(np.clip(index, 0, np.array(window.shape) - 1), dtype=np.int64)
+
+    total, _ = search.find_costs([tuple(pixel(start[None])[0])])
+
+    def cost_of(sheet_mm: Floats) -> Floats:
+        index = pixel(sheet_mm)
+        return np.asarray(total[index[:, 0], index[:, 1]])
+
+    def path_to(sheet_mm: Floats) -> Floats:
+        steps = np.array(search.traceback(tuple(pixel(sheet_mm[None])[0])), dtype=np.float64).reshape(-1, 2)
+        if len(steps) < 2:
+            steps = np.vstack([steps, steps])
+        return ground.grid.sheet_mm(steps + np.array([top, left]))
+
+    return cost_of, path_to
+
+
+def _flank_contrast(ground: _Field, path_mm: Floats) -> float:
+    """Returns how far the mean density of the way's middle half stands above the poorer-contrast flank."""
+    n = len(path_mm)
+    middle = slice(n // 4, max(n // 4 + 1, 3 * n // 4))
+    tangent = np.gradient(path_mm, axis=0)
+    tangent /= np.maximum(np.hypot(*tangent.T), 1e-12)[:, None]
+    normal = np.column_stack([-tangent[:, 1], tangent[:, 0]])[middle] * 1.1 * ground.width_mm
+    here = float(ground.at(path_mm[middle]).mean())
+    return min(here - float(ground.at(path_mm[middle] + sign * normal).mean()) for sign in (1.0, -1.0))
+
+
+def _end_near(web: Web, run_key: int, sample: int, tip: int) -> int | None:
+    """Returns the end joint of the run that lies within 1.2 half-widths of the sample, if any but the tip."""
+    run = web.runs[run_key]
+    arc = arc_mm(run.place_mm)
+    for joint, away in ((run.start, float(arc[sample])), (run.end, float(arc[-1] - arc[sample]))):
+        if joint != tip and away < 1.2 * web.joints[joint].radius_mm:
+            return joint
+    return None

@@ -1,0 +1,368 @@
+"""Smooth centrelines: one penalised cubic B-spline per chain of runs, cut into one curve per branch.
+
+Minimised over the control points is sum w |C(s_i) - p_i|^2 + lambda times the integral of the squared
+third derivative (penalised B-splines: Eilers and Marx, 1996, Statistical Science 11:2). A ripple of wavelength W
+is damped by 1 / (1 + (W_c / W)^6) where lambda = (W_c / 2 pi)^6 / ds, so the firmness is stated as the
+wavelength W_c. It starts at two channel widths and is raised only while a bend is tighter than one
+width, never beyond a deviation of 0.10 of the local width; where even that is exceeded it is lowered and
+knots are added. A chain runs straight on through junctions, so the straighter pair shares its tangent.
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+
+from morph.core.arrays import Bools, Floats
+from morph.geometry.curve import DEGREE, Curve, curve_at
+from morph.layout.centre import move_joint, smoothed_along
+from morph.layout.web import Run, Web, arc_mm
+
+DEVIATION_SHARE = 0.10
+GENTLE_WIDTHS = 2.0
+FIRMEST_WIDTHS = 40.0
+TIGHTEST_BEND = 1.0
+"""Curvature times width above which a chain is smoothed more firmly."""
+STRAIGHT_COSINE = -0.7
+ZONE_WEIGHT = 1e-3
+END_WEIGHT = 50.0
+SEAM_WEIGHT = 2.0
+SETTLED_WEIGHT = 50.0
+MOVED_POINTS = 4
+"""A joint moved off its curve takes this many control points along, the last ones less and less."""
+HALVINGS = 7
+
+
+@dataclass(frozen=True, slots=True)
+class Link:
+    """A run within a chain, and whether the chain walks it from its start."""
+
+    run: int
+    forward: bool
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Samples:
+    """What a chain is fitted to: parameter, place, half-width, free flag per sample, and where runs meet."""
+
+    at: Floats
+    place_mm: Floats
+    half_mm: Floats
+    free: Bools
+    seams: tuple[int, ...]
+
+
+def pair_straightest(web: Web) -> dict[tuple[int, int], int]:
+    """Returns, per (joint, run), the run that continues it: the straightest pairs first, bent by less than 45 degrees.
+
+    Where just two runs meet (a port within a channel) they always continue each other.
+    """
+    following: dict[tuple[int, int], int] = {}
+    for joint in sorted(web.joints):
+        if web.degree(joint) < 2:
+            continue
+        reach = 2.0 * web.joints[joint].radius_mm
+        leaving = [(key, _direction(run, reach)) for key, run in web.leaving(joint) if run.start != run.end]
+        ranked = sorted(
+            (float(leaving[i][1] @ leaving[j][1]), i, j)
+            for i in range(len(leaving))
+            for j in range(i + 1, len(leaving))
+        )
+        taken: set[int] = set()
+        for cosine, i, j in ranked:
+            if i in taken or j in taken or (cosine > STRAIGHT_COSINE and web.degree(joint) > 2):
+                continue
+            taken |= {i, j}
+            following[joint, leaving[i][0]] = leaving[j][0]
+            following[joint, leaving[j][0]] = leaving[i][0]
+    return following
+
+
+def _direction(run: Run, reach_mm: float) -> Floats:
+    arc = arc_mm(run.place_mm)
+    there = run.place_mm[min(int(np.searchsorted(arc, reach_mm)), len(arc) - 1)]
+    away = there - run.place_mm[0]
+    return np.asarray(away / max(float(np.hypot(*away)), 1e-12), dtype=np.float64)
+
+
+def make_chains(web: Web, following: dict[tuple[int, int], int]) -> list[list[Link]]:
+    """Returns every run once, in chains that run on through junctions as `following` says."""
+    waiting = dict.fromkeys(sorted(web.runs))
+    chains = []
+    while waiting:
+        first = next(iter(waiting))
+        del waiting[first]
+        chain = [Link(first, True)]
+        for ahead in (True, False):
+            while True:
+                link = chain[-1] if ahead else chain[0]
+                run = web.runs[link.run]
+                joint = run.end if link.forward == ahead else run.start
+                key = following.get((joint, link.run))
+                if key is None or key not in waiting:
+                    break
+                del waiting[key]
+                leaves_from_start = web.runs[key].start == joint
+                if ahead:
+                    chain.append(Link(key, leaves_from_start))
+                else:
+                    chain.insert(0, Link(key, not leaves_from_start))
+        chains.append(chain)
+    return chains
+
+
+def _gather(web: Web, chain: list[Link]) -> Samples:
+    places, halves, frees, seams, n = [], [], [], [0], 0
+    for index, link in enumerate(chain):
+        run = web.runs[link.run] if link.forward else web.runs[link.run].reversed()
+        assert run.free is not None
+        skip = 1 if index else 0
+        places.append(run.place_mm[skip:])
+        halves.append(run.half_mm[skip:])
+        frees.append(run.free[skip:])
+        n += len(run.place_mm) - skip
+        seams.append(n - 1)
+    place = np.concatenate(places)
+    calm = smoothed_along(place, min(2.0, len(place) / 8.0))
+    step = np.maximum(np.hypot(*np.diff(calm, axis=0).T), 1e-9)
+    at = np.concatenate([[0.0], np.cumsum(step)])
+    return Samples(at, place, np.concatenate(halves), np.concatenate(frees), tuple(seams))
+
+
+class _Fit:
+    """One chain's least-squares problem, solved for any firmness."""
+
+    def __init__(self, samples: Samples, knot_step_mm: float, seam_weight: float) -> None:
+        from scipy.interpolate import BSpline
+
+        self.samples = samples
+        length = float(samples.at[-1])
+        n_spans = int(min(max(2, math.ceil(length / knot_step_mm)), max(2, len(samples.at) - 2)))
+        self.knots = np.concatenate([[0.0] * DEGREE, np.linspace(0.0, length, n_spans + 1), [length] * DEGREE])
+        self.design = BSpline.design_matrix(np.minimum(samples.at, length), self.knots, DEGREE).tocsr()
+        weight = np.where(samples.free, 1.0, ZONE_WEIGHT)
+        weight[list(samples.seams)] = seam_weight
+        weight[[0, -1]] = END_WEIGHT
+        self.normal = self._bands(self.design.T @ self.design.multiply(weight[:, None]))
+        self.right: Floats = np.asarray(self.design.T @ (weight[:, None] * samples.place_mm), dtype=np.float64)
+        self.penalty = self._bands(_roughness(self.knots, length / n_spans))
+
+    @staticmethod
+    def _bands(matrix: Any) -> Floats:
+        from scipy.sparse import csr_matrix
+
+        sparse = csr_matrix(matrix)
+        n = sparse.shape[0]
+        bands = np.zeros((DEGREE + 1, n))
+        for offset in range(min(DEGREE + 1, n)):
+            bands[DEGREE - offset, offset:] = sparse.diagonal(offset)
+        return bands
+
+    def solve(self, wavelength_mm: float) -> Curve:
+        """Returns the curve that damps ripples shorter than `wavelength_mm`."""
+        from scipy.linalg import solveh_banded
+
+        spacing = float(self.samples.at[-1]) / (len(self.samples.at) - 1)
+        firmness = (wavelength_mm / (2.0 * math.pi)) ** 6 / spacing
+        bands = self.normal + firmness * self.penalty
+        bands[DEGREE] += 1e-12 * bands[DEGREE].max()
+        control = solveh_banded(bands, self.right, check_finite=False)
+        return Curve(self.knots, control)
+
+    def excess(self, curve: Curve) -> float:
+        """Returns the largest deviation of free samples as a share of what is allowed (1 = at the bound)."""
+        away = deviations_mm(curve, self.samples.at, self.samples.place_mm)
+        share = away / (DEVIATION_SHARE * 2.0 * self.samples.half_mm)
+        return float(share[self.samples.free].max(initial=0.0))
+
+    def bend(self, curve: Curve) -> float:
+        """Returns the largest curvature times local width."""
+        return float((curvature_per_mm(curve, self.samples.at) * 2.0 * self.samples.half_mm).max())
+
+
+def _roughness(knots: Floats, span_mm: float) -> Any:
+    """Returns the sparse matrix of the integrated squared third derivative, spans of equal length `span_mm`.
+
+    The third derivative of a cubic is constant on a span, so its third difference inside the span is exact.
+    """
+    from scipy.interpolate import BSpline
+    from scipy.sparse import csr_matrix
+
+    spans = knots[DEGREE:-DEGREE]
+    middle = 0.5 * (spans[:-1] + spans[1:])
+    spread = 2.0 * span_mm / 9.0
+    a, b, c, d = (csr_matrix(BSpline.design_matrix(middle + k * spread, knots, DEGREE)) for k in (-1.5, -0.5, 0.5, 1.5))
+    third = (d - a + (b - c).multiply(3.0)).multiply(spread**-3)
+    return (third.T @ third).multiply(span_mm)
+
+
+def deviations_mm(curve: Curve, at: Floats, place_mm: Floats) -> Floats:
+    """Returns (k,) distances across the curve from its points at parameters `at` to `place_mm (k, 2)`."""
+    away = place_mm - curve_at(curve, at)
+    tangent = curve_at(curve, at, 1)
+    tangent /= np.maximum(np.hypot(*tangent.T), 1e-12)[:, None]
+    return np.asarray(np.abs(away[:, 0] * tangent[:, 1] - away[:, 1] * tangent[:, 0]), dtype=np.float64)
+
+
+def curvature_per_mm(curve: Curve, at: Floats) -> Floats:
+    """Returns (k,) curvature |x'y'' - y'x''| / |C'|^3 of a plane curve at parameters `at`."""
+    first, second = curve_at(curve, at, 1), curve_at(curve, at, 2)
+    cross = first[:, 0] * second[:, 1] - first[:, 1] * second[:, 0]
+    return np.asarray(np.abs(cross) / np.maximum(np.hypot(*first.T), 1e-9) ** 3, dtype=np.float64)
+
+
+def fit_chain(samples: Samples, seam_weight: float = SEAM_WEIGHT) -> Curve:
+    """Returns the smoothest curve through `samples` that keeps the deviation bound and needs no tight bend."""
+    half = float(np.median(samples.half_mm))
+    gentle = GENTLE_WIDTHS * 2.0 * half
+    fit, curve = None, None
+    for knot_step in (half, 0.5 * half, 0.25 * half):
+        fit = _Fit(samples, knot_step, seam_weight)
+        curve = fit.solve(gentle)
+        if fit.excess(curve) > 1.0:
+            curve = _search(fit, 0.05 * gentle, gentle, bends_matter=False)
+        if fit.excess(curve) <= 1.0:
+            break
+    assert fit is not None and curve is not None
+    if fit.excess(curve) <= 1.0 and fit.bend(curve) > TIGHTEST_BEND:
+        curve = _search(fit, gentle, FIRMEST_WIDTHS * 2.0 * half, bends_matter=True)
+    return curve
+
+
+def _search(fit: _Fit, low: float, high: float, bends_matter: bool) -> Curve:
+    """Returns the firmest curve within the bound by halving log wavelength; stops early once bends are wide enough."""
+    best = fit.solve(low)
+    for _ in range(HALVINGS):
+        middle = math.sqrt(low * high)
+        curve = fit.solve(middle)
+        inside = fit.excess(curve) <= 1.0
+        if inside:
+            best = curve
+        if inside and not (bends_matter and fit.bend(curve) <= TIGHTEST_BEND):
+            low = middle
+        else:
+            high = middle
+    return best
+
+
+def cut_curve(curve: Curve, at: tuple[float, ...]) -> list[Curve]:
+    """Returns `curve` cut at the increasing inner parameters `at`, exactly, by inserting knots (Boehm 1980)."""
+    from scipy.interpolate import BSpline
+
+    pieces = []
+    spline = BSpline(curve.knots, curve.control_mm, DEGREE)
+    for parameter in at:
+        missing = DEGREE - int(np.count_nonzero(spline.t == parameter))
+        if missing > 0:
+            spline = spline.insert_knot(parameter, missing)
+        first = int(np.searchsorted(spline.t, parameter))
+        pieces.append(Curve(np.append(spline.t[: first + DEGREE], parameter), spline.c[:first]))
+        spline = BSpline(np.concatenate([[parameter], spline.t[first:]]), spline.c[first - 1 :], DEGREE)
+    pieces.append(Curve(spline.t, spline.c[: len(spline.t) - DEGREE - 1]))
+    return pieces
+
+
+def moved_ends(curve: Curve, start_mm: Floats, end_mm: Floats) -> Curve:
+    """Returns `curve` with its ends moved to `start_mm` and `end_mm`; tangents at the ends stay as they were.
+
+    The first and last two control points move along with their end, the next ones less and less.
+    """
+    control = np.array(curve.control_mm)
+    n = len(control)
+    share = np.clip(1.0 - (np.arange(n) - 1.0) / min(MOVED_POINTS, n - 2.0), 0.0, 1.0)
+    share[:2], share[-2:] = 1.0, 0.0
+    back = share[::-1].copy()
+    control += share[:, None] * (start_mm - control[0]) + back[:, None] * (end_mm - control[-1])
+    control[0], control[-1] = start_mm, end_mm
+    return Curve(curve.knots, control)
+
+
+def turned_end(curve: Curve, direction: Floats) -> Curve:
+    """Returns `curve` leaving its start along the unit vector `direction`, its first handle as long as before."""
+    control = np.array(curve.control_mm)
+    control[1] = control[0] + float(np.hypot(*(control[1] - control[0]))) * direction
+    return Curve(curve.knots, control)
+
+
+def reversed_curve(curve: Curve) -> Curve:
+    """Returns the same curve walked from its end, parameters from 0."""
+    return Curve(curve.knots[-1] - curve.knots[::-1], curve.control_mm[::-1])
+
+
+def fit_web(web: Web) -> tuple[dict[int, Curve], dict[int, Floats]]:
+    """Returns per run its curve, walked as the run, and the parameter of each of its samples.
+
+    Joints that a chain passes are moved onto it, then all chains that meet such a joint are fitted
+    again towards its new place. Runs that continue each other leave their joint along one line.
+    """
+    following = pair_straightest(web)
+    chains = make_chains(web, following)
+    fitted = [_fit_links(web, chain) for chain in chains]
+    moved = _move_passed_joints(web, chains, fitted)
+    for index, chain in enumerate(chains):
+        if any({web.runs[link.run].start, web.runs[link.run].end} & moved for link in chain):
+            fitted[index] = _fit_links(web, chain, SETTLED_WEIGHT)
+    curves: dict[int, Curve] = {}
+    parameters: dict[int, Floats] = {}
+    for pieces in fitted:
+        for key, curve, at in pieces:
+            run = web.runs[key]
+            curves[key] = moved_ends(curve, web.joints[run.start].place_mm, web.joints[run.end].place_mm)
+            parameters[key] = at
+    _align(web, curves, following)
+    return curves, parameters
+
+
+def _fit_links(web: Web, chain: list[Link], seam_weight: float = SEAM_WEIGHT) -> list[tuple[int, Curve, Floats]]:
+    """Returns for each run of the chain its key, its curve and its samples' parameters, walked as the run."""
+    samples = _gather(web, chain)
+    inner = tuple(float(samples.at[seam]) for seam in samples.seams[1:-1])
+    pieces = cut_curve(fit_chain(samples, seam_weight), inner)
+    fitted = []
+    for index, (link, piece) in enumerate(zip(chain, pieces, strict=True)):
+        at = samples.at[samples.seams[index] : samples.seams[index + 1] + 1]
+        curve = Curve(piece.knots - piece.knots[0], piece.control_mm)
+        if link.forward:
+            fitted.append((link.run, curve, at - at[0]))
+        else:
+            fitted.append((link.run, reversed_curve(curve), at[-1] - at[::-1]))
+    return fitted
+
+
+def _move_passed_joints(web: Web, chains: list[list[Link]], fitted: list[list[tuple[int, Curve, Floats]]]) -> set[int]:
+    """Moves each joint that a chain passes to the mean of where chains pass it; returns the joints moved."""
+    passing: dict[int, list[Floats]] = {}
+    for chain, pieces in zip(chains, fitted, strict=True):
+        for link, (_, curve, _) in zip(chain[1:], pieces[1:], strict=True):
+            run = web.runs[link.run]
+            joint, place = (run.start, curve.control_mm[0]) if link.forward else (run.end, curve.control_mm[-1])
+            passing.setdefault(joint, []).append(place)
+    for joint, places in sorted(passing.items()):
+        move_joint(web, joint, np.mean(places, axis=0))
+    return set(passing)
+
+
+def _align(web: Web, curves: dict[int, Curve], following: dict[tuple[int, int], int]) -> None:
+    """Turns the ends of runs that continue each other onto their common tangent, where they are not on it yet."""
+    for (joint, key), other in sorted(following.items()):
+        if key > other or web.runs[key].start == web.runs[key].end:
+            continue
+        ends = [(k, web.runs[k].start == joint) for k in (key, other)]
+        away = []
+        for k, at_start in ends:
+            control = curves[k].control_mm if at_start else curves[k].control_mm[::-1]
+            handle = control[1] - control[0]
+            away.append(handle / max(float(np.hypot(*handle)), 1e-12))
+        line = away[0] - away[1]
+        size = float(np.hypot(*line))
+        if size < 1e-6:
+            continue
+        line /= size
+        for (k, at_start), direction in zip(ends, (line, -line), strict=True):
+            if at_start:
+                curves[k] = turned_end(curves[k], direction)
+            else:
+                curves[k] = reversed_curve(turned_end(reversed_curve(curves[k]), direction))
