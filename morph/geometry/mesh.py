@@ -81,15 +81,16 @@ def measure_condition(mesh: Mesh) -> MeshCondition:
     key = directed[:, 0] * n_vertices + directed[:, 1]
     back = directed[:, 1] * n_vertices + directed[:, 0]
     unique, count = np.unique(key, return_counts=True)
-    has_twin = np.isin(unique, back)
+    back.sort()
+    has_twin = back[np.minimum(np.searchsorted(back, unique), len(back) - 1)] == unique
     open_edges = int(np.count_nonzero((count == 1) & ~has_twin))
     odd_edges = int(np.count_nonzero(count > 1))
     graph = coo_array(
         (np.ones(len(directed), np.int8), (directed[:, 0], directed[:, 1])), shape=(n_vertices, n_vertices)
     )
-    used = np.unique(triangles)
+    used = np.flatnonzero(np.bincount(triangles.ravel(), minlength=n_vertices))
     _, label = connected_components(graph, directed=False)
-    bodies = len(np.unique(label[used]))
+    bodies = int(np.count_nonzero(np.bincount(label[used])))
     closed = open_edges == 0 and odd_edges == 0
     euler = len(used) - len(unique) // 2 + len(triangles)
     genus = (2 * bodies - euler) // 2 if closed else 0

@@ -240,7 +240,9 @@ def prune_blocks(first, last, keys, start, near, length, pieces, owner, blend_mm
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
-def sample_blocks(first, last, corner, start, length, near, pieces, owner, nodes, blend_mm, origin, h_mm, values, codes):
+def sample_blocks(
+    first, last, corner, start, length, near, pieces, owner, nodes, blend_mm, origin, h_mm, values, codes
+):
     """Samples the blocks first..last - 1 where a surface may pass and writes each cell's case.
 
     Descends from the block to cubes of 4 and 2 cells with ever shorter lists; cubes that hold no surface are skipped.
@@ -282,7 +284,9 @@ def sample_blocks(first, last, corner, start, length, near, pieces, owner, nodes
             y += 2 * ((small >> 1) & 1)
             z += 2 * (small >> 2)
             c = h_mm * np.array([corner[b, 0] + x + 1.0, corner[b, 1] + y + 1.0, corner[b, 2] + z + 1.0]) + origin
-            n = keep_near(c[0], c[1], c[2], 1.0001 * SQRT3 * h_mm, pieces, owner, blend_mm, lists[0], n_big, lists[1], distance)
+            n = keep_near(
+                c[0], c[1], c[2], 1.0001 * SQRT3 * h_mm, pieces, owner, blend_mm, lists[0], n_big, lists[1], distance
+            )
             if n == 0:
                 continue
             for s in range(27):

@@ -123,7 +123,11 @@ def count_cells(first, last, codes, neighbours, n_loops, double_face, cases, n_v
                 step = 2 * (face & 1) - 1
                 axis = face >> 1
                 c, i, j, k = neighbour_cell(
-                    b, x + (step if axis == 0 else 0), y + (step if axis == 1 else 0), z + (step if axis == 2 else 0), neighbours
+                    b,
+                    x + (step if axis == 0 else 0),
+                    y + (step if axis == 1 else 0),
+                    z + (step if axis == 2 else 0),
+                    neighbours,
                 )
                 if c >= 0 and double_face[codes[c, i, j, k]] == (face ^ 1):
                     cases[b, x, y, z] = code + 256

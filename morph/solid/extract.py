@@ -43,9 +43,7 @@ def extract_surface(field: SampledField, progress: Progress, steps: int = NEWTON
         "solid: cells",
         n,
         4 * BLOCKS_PER_SLAB,
-        lambda a, b: count_cells(
-            a, b, field.codes, field.neighbours, n_loops, double_face, cases, n_vertices, n_quads
-        ),
+        lambda a, b: count_cells(a, b, field.codes, field.neighbours, n_loops, double_face, cases, n_vertices, n_quads),
         progress,
     )
     first_vertex = np.empty(field.codes.shape, np.int32)

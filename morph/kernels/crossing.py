@@ -1,0 +1,129 @@
+"""Which triangles of a mesh cross each other: an implicit box tree over triangles in space-filling order.
+
+Two triangles cross when an edge of one passes strictly through the inside of the other. Pairs that
+share an edge are skipped (they can only fold onto each other); touching in a point or along an edge,
+and overlaps within one plane, are not strict crossings. Signs are those of tetrahedron volumes;
+a volume within rounding of zero counts as touching.
+
+The tree is a heap: node k has children 2 k and 2 k + 1, leaf i is node n_leaves + i and holds the
+triangles LEAF i .. LEAF i + LEAF - 1 of the order. Boxes are rows (low x y z, high x y z).
+"""
+
+from __future__ import annotations
+
+import numpy as np
+from numba import njit
+
+LEAF = 4
+"""Triangles per leaf."""
+
+ROUNDING = 1e-14
+"""Relative to the cube of the largest extent: volumes below this are rounding (six products of float64 differences)."""
+
+
+@njit(cache=True, nogil=True)
+def signed_volume(v, a, b, c, d):
+    """Returns six times the volume of the tetrahedron of vertices a, b, c, d; 0 when it is within rounding."""
+    x1, y1, z1 = v[b, 0] - v[a, 0], v[b, 1] - v[a, 1], v[b, 2] - v[a, 2]
+    x2, y2, z2 = v[c, 0] - v[a, 0], v[c, 1] - v[a, 1], v[c, 2] - v[a, 2]
+    x3, y3, z3 = v[d, 0] - v[a, 0], v[d, 1] - v[a, 1], v[d, 2] - v[a, 2]
+    volume = (y1 * z2 - z1 * y2) * x3 + (z1 * x2 - x1 * z2) * y3 + (x1 * y2 - y1 * x2) * z3
+    size = max(max(abs(x1), abs(y1), abs(z1)), max(abs(x2), abs(y2), abs(z2)), max(abs(x3), abs(y3), abs(z3)))
+    return volume if abs(volume) > ROUNDING * size * size * size else 0.0
+
+
+@njit(cache=True, nogil=True)
+def edge_crosses(v, p, q, a, b, c):
+    """Returns whether the edge p q, its ends strictly on both sides of triangle a b c, passes through its inside."""
+    one = signed_volume(v, p, q, a, b)
+    two = signed_volume(v, p, q, b, c)
+    if one * two <= 0.0:
+        return False
+    return one * signed_volume(v, p, q, c, a) > 0.0
+
+
+@njit(cache=True, nogil=True)
+def triangles_cross(v, one, two):
+    """Returns whether two triangles (vertex indices (3,) each) cross strictly."""
+    shared = 0
+    for i in range(3):
+        for j in range(3):
+            shared += one[i] == two[j]
+    if shared >= 2:
+        return False
+    for turn in range(2):
+        cutter, cut = (one, two) if turn == 0 else (two, one)
+        s0 = signed_volume(v, cut[0], cut[1], cut[2], cutter[0])
+        s1 = signed_volume(v, cut[0], cut[1], cut[2], cutter[1])
+        s2 = signed_volume(v, cut[0], cut[1], cut[2], cutter[2])
+        if min(s0, s1, s2) >= 0.0 or max(s0, s1, s2) <= 0.0:
+            return False
+        if s0 * s1 < 0.0 and edge_crosses(v, cutter[0], cutter[1], cut[0], cut[1], cut[2]):
+            return True
+        if s1 * s2 < 0.0 and edge_crosses(v, cutter[1], cutter[2], cut[0], cut[1], cut[2]):
+            return True
+        if s2 * s0 < 0.0 and edge_crosses(v, cutter[2], cutter[0], cut[0], cut[1], cut[2]):
+            return True
+    return False
+
+
+@njit(cache=True, nogil=True)
+def triangles_apart(v, one, two):
+    """Returns whether the boxes of two triangles do not even touch."""
+    for axis in range(3):
+        a, b, c = v[one[0], axis], v[one[1], axis], v[one[2], axis]
+        d, e, f = v[two[0], axis], v[two[1], axis], v[two[2], axis]
+        if min(a, b, c) > max(d, e, f) or max(a, b, c) < min(d, e, f):
+            return True
+    return False
+
+
+@njit(cache=True, nogil=True)
+def boxes_meet(boxes, a, b):
+    """Returns whether the boxes of rows a and b overlap or touch."""
+    for axis in range(3):
+        if boxes[a, axis] > boxes[b, 3 + axis] or boxes[b, axis] > boxes[a, 3 + axis]:
+            return False
+    return True
+
+
+@njit(cache=True, nogil=True)
+def find_crossings(first, last, vertices, triangles, boxes, n_leaves, pairs, crossed):
+    """Counts the crossing pairs whose lower triangle lies in the leaves first..last - 1.
+
+    Args:
+        first, last: range of leaves.
+        vertices: (n, 3) in mm. triangles: (m, 3) in the order of the tree.
+        boxes: (2 n_leaves, 6) heap of boxes; empty leaves have low above high.
+        n_leaves: a power of two.
+        pairs: (n_leaves,) receives the number of crossing pairs.
+        crossed: (m,) uint8, set to 1 for every triangle in a crossing pair.
+    """
+    stack = np.empty(128, np.int64)
+    n_triangles = len(triangles)
+    for leaf in range(first, last):
+        pairs[leaf] = 0
+        own = n_leaves + leaf
+        depth = 1
+        stack[0] = 1
+        while depth > 0:
+            depth -= 1
+            node = stack[depth]
+            if not boxes_meet(boxes, own, node):
+                continue
+            if node < n_leaves:
+                stack[depth] = 2 * node + 1
+                stack[depth + 1] = 2 * node
+                depth += 2
+                continue
+            other = node - n_leaves
+            if other < leaf:
+                continue
+            for i in range(LEAF * leaf, min(LEAF * leaf + LEAF, n_triangles)):
+                for j in range(max(LEAF * other, i + 1), min(LEAF * other + LEAF, n_triangles)):
+                    if triangles_apart(vertices, triangles[i], triangles[j]):
+                        continue
+                    if triangles_cross(vertices, triangles[i], triangles[j]):
+                        pairs[leaf] += 1
+                        crossed[i] = 1
+                        crossed[j] = 1

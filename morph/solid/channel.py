@@ -1,0 +1,118 @@
+"""The channels as one closed solid: swept, extracted, simplified, tested for crossings, trimmed.
+
+The extracted surface is simplified once by edge collapses that move it by at most SIMPLIFY_MM. If
+that, or the extraction itself, makes triangles pass through each other, it is taken back there: vertices
+of crossing triangles return to the middle of their cells, and the tolerance is lowered.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+
+from morph.body.blank import Blank
+from morph.body.plan import ChannelPlan
+from morph.core.arrays import Bools, Floats, Ints
+from morph.core.errors import GeometryError
+from morph.core.progress import SILENT, Progress
+from morph.core.tolerance import SIMPLIFY_MM
+from morph.geometry.mesh import Mesh
+from morph.solid.blank import blank_body
+from morph.solid.body import arrays_of, body_from, body_of, require_valid
+from morph.solid.crossings import Crossings, measure_crossings
+from morph.solid.extract import extract_surface
+from morph.solid.field import SampledField, sample_field
+from morph.solid.result import ChannelSolid
+from morph.solid.sweep import make_sweep
+from morph.solid.tidy import make_file_mesh, round_to_file
+
+MOST_TAKE_BACKS = 4
+
+
+def make_channel_solid(plan: ChannelPlan, blank: Blank, h_mm: float, progress: Progress = SILENT) -> ChannelSolid:
+    """Returns the channels of `plan` swept past their exits, and trimmed at the finished faces of `blank`.
+
+    Args:
+        plan: all branches and leads with their bores.
+        blank: the finished body; its stock plays no part here.
+        h_mm: field resolution, from `choose_h_mm`.
+        progress: told between slabs of work; may raise Cancelled.
+
+    Raises:
+        GeometryError: ``solid-not-closed``, ``solid-self-crosses`` or ``solid-empty``.
+    """
+    field = sample_field(make_sweep(plan), h_mm, progress)
+    vertices, triangles = extract_surface(field, progress)
+    vertices = round_to_file(vertices)
+    swept, found = _simplified(vertices, triangles, SIMPLIFY_MM, progress)
+    if found.pairs:
+        vertices = _untangled(field, vertices, triangles, progress)
+        for tolerance in (SIMPLIFY_MM, 0.25 * SIMPLIFY_MM, 0.0):
+            swept, found = _simplified(vertices, triangles, tolerance, progress)
+            if not found.pairs:
+                break
+    require_uncrossed(swept, found)
+    return ChannelSolid(
+        swept=swept,
+        trimmed=_trimmed(swept, blank, progress),
+        h_mm=h_mm,
+        crossings=found.pairs,
+        triangles_before=len(triangles),
+    )
+
+
+def require_uncrossed(mesh: Mesh, found: Crossings) -> None:
+    """Raises ``solid-self-crosses`` with the place of the first crossing when any was found."""
+    if not found.pairs:
+        return
+    x, y, z = mesh.vertices_mm[mesh.triangles[found.crossed]][0].mean(axis=0)
+    raise GeometryError(
+        "solid-self-crosses",
+        expected="a channel wall that nowhere passes through itself",
+        found=f"{found.pairs} crossing pairs of triangles",
+        where=f"the channel solid, first at ({x:.2f}, {y:.2f}, {z:.2f}) mm",
+        do="Set another [quality] h_mm (some hundredths of a mm away); if it stays, report the job.",
+    )
+
+
+def _simplified(vertices: Floats, triangles: Ints, tolerance_mm: float, progress: Progress) -> tuple[Mesh, Crossings]:
+    """Returns the surface moved by at most `tolerance_mm` with fewer triangles, and its crossings."""
+    what = "the channel solid"
+    if tolerance_mm > 0.0:
+        progress.step("solid: simplify", 0, 1)
+        body, _ = body_from(vertices, triangles, what)
+        progress.step("solid: simplify", 0, 1)
+        vertices, triangles, _ = arrays_of(body.simplify(tolerance_mm))
+        progress.step("solid: simplify", 1, 1)
+    mesh, _ = make_file_mesh(vertices, triangles, np.zeros(len(triangles), np.int64), what)
+    return mesh, measure_crossings(mesh, progress)
+
+
+def _untangled(field: SampledField, vertices: Floats, triangles: Ints, progress: Progress) -> Floats:
+    """Returns the vertices (n, 3) with those of crossing triangles moved back to the middle of their cells.
+
+    Each round also takes the next ring of triangles, at most MOST_TAKE_BACKS rounds.
+    """
+    middle: Floats | None = None
+    for _ in range(MOST_TAKE_BACKS):
+        crossed: Bools = measure_crossings(Mesh(vertices, triangles), progress).crossed
+        if not crossed.any():
+            break
+        if middle is None:
+            middle = round_to_file(extract_surface(field, progress, steps=0)[0])
+        bad = np.zeros(len(vertices), np.bool_)
+        bad[triangles[crossed]] = True
+        bad[triangles[bad[triangles].any(axis=1)]] = True
+        vertices = np.where(bad[:, None], middle, vertices)
+    return vertices
+
+
+def _trimmed(swept: Mesh, blank: Blank, progress: Progress) -> Mesh:
+    """Returns the part of the swept channels inside the finished blank."""
+    progress.step("solid: trim", 0, 1)
+    what = "the channels inside the blank"
+    body = body_of(swept, what)[0] ^ blank_body(blank, printed=False)
+    require_valid(body, what)
+    vertices, triangles, _ = arrays_of(body)
+    mesh, _ = make_file_mesh(vertices, triangles, np.zeros(len(triangles), np.int64), what)
+    progress.step("solid: trim", 1, 1)
+    return mesh

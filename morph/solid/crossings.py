@@ -1,0 +1,96 @@
+"""Self-crossing test of a mesh: how many pairs of triangles pass through each other, and which."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from morph.core.arrays import Bools, Floats, Ints
+from morph.core.progress import SILENT, Progress
+from morph.geometry.mesh import Mesh
+from morph.solid.slabs import run_slabs
+
+LEAVES_PER_SLAB = 4096
+GRID_BITS = 20
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Crossings:
+    """Pairs of triangles that cross strictly: their number, and `crossed (m,)` true for every triangle in one."""
+
+    pairs: int
+    crossed: Bools
+
+
+def measure_crossings(mesh: Mesh, progress: Progress = SILENT) -> Crossings:
+    """Returns the strict self-crossings of `mesh`.
+
+    Touching, triangles that share an edge, and overlaps within one plane do not count. Two shells that mirror each
+    other edge on edge are therefore not seen.
+    """
+    from morph.kernels.crossing import find_crossings
+
+    if len(mesh.triangles) == 0:
+        return Crossings(0, np.zeros(0, np.bool_))
+    order = _space_filling_order(mesh.vertices_mm, mesh.triangles)
+    triangles = np.ascontiguousarray(mesh.triangles[order])
+    boxes, n_leaves = _box_tree(mesh.vertices_mm, triangles)
+    pairs, crossed = np.zeros(n_leaves, np.int64), np.zeros(len(triangles), np.uint8)
+    vertices = mesh.vertices_mm
+    run_slabs(
+        "solid: crossings",
+        n_leaves,
+        LEAVES_PER_SLAB,
+        lambda a, b: find_crossings(a, b, vertices, triangles, boxes, n_leaves, pairs, crossed),
+        progress,
+    )
+    back = np.zeros(len(triangles), np.bool_)
+    back[order] = crossed > 0
+    return Crossings(int(pairs.sum()), back)
+
+
+def _space_filling_order(vertices_mm: Floats, triangles: Ints) -> Ints:
+    """Returns the order of the triangles' centres along a Z-order curve (bits of x, y, z interleaved)."""
+    centre = vertices_mm[triangles].sum(axis=1)
+    low, high = centre.min(axis=0), centre.max(axis=0)
+    scale = (2**GRID_BITS - 1) / max(float((high - low).max()), 1e-300)
+    code = np.zeros(len(triangles), np.uint64)
+    for axis in range(3):
+        bits = ((centre[:, axis] - low[axis]) * scale).astype(np.uint64)
+        # spread the bits two apart, halves first
+        for shift, mask in (
+            (32, 0x1F00000000FFFF),
+            (16, 0x1F0000FF0000FF),
+            (8, 0x100F00F00F00F00F),
+            (4, 0x10C30C30C30C30C3),
+            (2, 0x1249249249249249),
+        ):
+            bits = (bits | (bits << np.uint64(shift))) & np.uint64(mask)
+        code |= bits << np.uint64(axis)
+    return np.argsort(code, kind="stable")
+
+
+def _box_tree(vertices_mm: Floats, triangles: Ints) -> tuple[Floats, int]:
+    """Returns the heap of boxes (2 n_leaves, 6) over triangles in tree order, and n_leaves."""
+    from morph.kernels.crossing import LEAF
+
+    corner = vertices_mm[triangles]
+    n_leaves = 1
+    while n_leaves * LEAF < len(triangles):
+        n_leaves *= 2
+    filled = np.full((n_leaves * LEAF, 6), np.inf)
+    filled[:, 3:] = -np.inf
+    filled[: len(triangles), :3] = corner.min(axis=1)
+    filled[: len(triangles), 3:] = corner.max(axis=1)
+    boxes = np.empty((2 * n_leaves, 6))
+    boxes[0] = np.inf
+    level = filled.reshape(n_leaves, LEAF, 6)
+    n = n_leaves
+    while True:
+        boxes[n : 2 * n, :3] = level[:, :, :3].min(axis=1)
+        boxes[n : 2 * n, 3:] = level[:, :, 3:].max(axis=1)
+        if n == 1:
+            return boxes, n_leaves
+        level = boxes[n : 2 * n].reshape(n // 2, 2, 6)
+        n //= 2
