@@ -75,18 +75,60 @@ def require_target(target: Path, *, force: bool) -> None:
         raise _unwritable(target, "a path the system does not accept") from error
 
 
+def require_file(target: Path, *, force: bool) -> None:
+    """Raises unless the file `target` can be written: new (or replaced, with `force`), in an existing folder.
+
+    Raises:
+        ExportError: the file exists (without `force`), is a folder, or its folder is missing or cannot be written.
+    """
+    try:
+        if target.is_dir():
+            raise ExportError(
+                "output-is-a-folder",
+                expected="the name of a file",
+                found="a folder of that name",
+                where=str(target),
+                do="Choose another file name with --out.",
+            )
+        if target.exists() and not force:
+            raise ExportError(
+                "output-exists",
+                expected="a new file",
+                found="an existing one",
+                where=str(target),
+                do="Give --force to replace it, or choose another name with --out.",
+            )
+        if not target.parent.is_dir():
+            raise _no_parent(target, target.parent.name)
+        _require_writable(target.parent, target)
+    except OSError as error:
+        _refuse(error, target)
+    except ValueError as error:
+        raise _unwritable(target, "a path the system does not accept") from error
+
+
+def write_file(target: Path, content: bytes, *, force: bool = False) -> None:
+    """Writes one file, whole or not at all.
+
+    Raises:
+        ExportError: as for `require_file`, or the disk is full.
+    """
+    require_file(target, force=force)
+    with _staging(target) as stage:
+        try:
+            part = stage / "whole"
+            part.write_bytes(content)
+            part.replace(target)
+        except OSError as error:
+            _refuse(error, target)
+
+
 def _require_parent(folder: Path, target: Path) -> None:
     parent = folder.parent
     if parent.is_dir():
         _require_writable(parent, target)
     elif parent.exists() or not parent.parent.is_dir():
-        raise ExportError(
-            "output-parent-missing",
-            expected="a folder to write into, of which at most the last two parts are new",
-            found=f"no folder {parent.name if parent.exists() else parent.parent.name}",
-            where=str(target),
-            do="Create it first, or choose another folder with --out.",
-        )
+        raise _no_parent(target, parent.name if parent.exists() else parent.parent.name)
     else:
         _require_writable(parent.parent, target)
 
@@ -108,6 +150,16 @@ def _not_empty(target: Path) -> ExportError:
         found="a folder with files in it",
         where=str(target),
         do="Give --force to replace the results in it, or choose another folder with --out.",
+    )
+
+
+def _no_parent(target: Path, missing: str) -> ExportError:
+    return ExportError(
+        "output-parent-missing",
+        expected="an existing folder to write into",
+        found=f"no folder {missing}",
+        where=str(target),
+        do="Create it first, or choose another place with --out.",
     )
 
 
