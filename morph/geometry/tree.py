@@ -102,19 +102,26 @@ def closest_points(tree: TriangleTree, xyz_mm: Floats, limit_mm: float = np.inf)
     points = _rows("xyz_mm", xyz_mm)
     distance, hit, nearest = np.empty(len(points)), np.empty(len(points), np.int64), points.copy()
     closest_many(
-        tree.node_box, tree.node_child, tree.node_count, tree.corners_mm, points, float(limit_mm), distance, hit, nearest
+        tree.node_box,
+        tree.node_child,
+        tree.node_count,
+        tree.corners_mm,
+        points,
+        float(limit_mm),
+        distance,
+        hit,
+        nearest,
     )
     return distance, _mesh_triangle(tree, hit), nearest
 
 
-def cast_rays(
-    tree: TriangleTree, origin_mm: Floats, direction: Floats, least_mm: float = 1e-7
-) -> tuple[Floats, Ints]:
+def cast_rays(tree: TriangleTree, origin_mm: Floats, direction: Floats, least_mm: float = 1e-7) -> tuple[Floats, Ints]:
     """Returns for each ray the distance to the first triangle it meets beyond `least_mm`, and that triangle.
 
     Args:
         tree: the surface.
-        origin_mm: (k, 3) starting points. direction: (k, 3) unit directions.
+        origin_mm: (k, 3) starting points.
+        direction: (k, 3) unit directions.
         least_mm: nearer hits are passed over (a ray that starts on the surface).
 
     Returns:
@@ -150,7 +157,8 @@ def inscribed_balls(
 
     Args:
         tree: the surface.
-        xyz_mm: (k, 3) points on the surface. inward: (k, 3) unit directions from there into the medium.
+        xyz_mm: (k, 3) points on the surface.
+        inward: (k, 3) unit directions from there into the medium.
         medium: the side the balls lie in.
         largest_mm: largest diameter looked for (returned where nothing stops the ball).
         turn_deg: only triangles whose normal turns by at least this from the point's own stop a ball.

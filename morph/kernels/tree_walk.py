@@ -115,9 +115,11 @@ def build(boxes, order, node_box, node_child, node_count):
     """Builds the tree and returns its number of nodes.
 
     Args:
-        boxes: (n, 6) box of each triangle. order: (n,) 0..n-1, reordered to leaf order.
-        node_box: (2n, 6), node_child: (2n,), node_count: (2n,) filled: a leaf (count > 0) holds
-            triangles child .. child + count of the leaf order, else its children are child, child + 1.
+        boxes: (n, 6) box of each triangle.
+        order: (n,) 0..n-1, reordered to leaf order.
+        node_box: (2n, 6) filled.
+        node_child: (2n,) filled: first child (the second follows it), or first triangle of a leaf.
+        node_count: (2n,) filled: triangles of a leaf (consecutive in leaf order), 0 for an inner node.
     """
     todo = np.empty((STACK, 4), np.int64)
     bins, n_in_bin = np.empty((N_BINS, 6)), np.empty(N_BINS, np.int64)
@@ -336,10 +338,17 @@ def ball_many(node_box, node_child, node_count, corners, normals, points, inward
     """Fills the largest ball that touches each surface point and no counted triangle enters.
 
     Args:
-        points, inward: (k, 3) surface points and unit directions into the medium.
+        node_box: (n_nodes, 6) tree.
+        node_child: (n_nodes,) tree.
+        node_count: (n_nodes,) tree.
+        corners: (n, 9) triangle corners in leaf order.
+        points: (k, 3) surface points.
+        inward: (k, 3) unit directions into the medium.
         largest: radius to start from (returned when nothing is in the way, with hit -1).
         normals: (n, 3) triangle normals out of the medium the balls lie in, so that the point's own is -inward.
         most_cosine: a triangle counts when the cosine between its normal and -inward is at most this.
+        radius: (k,) filled.
+        hit: (k,) filled with the triangle (leaf order) that stops the ball.
     """
     stack = np.empty(STACK, np.int64)
     for i in range(len(points)):

@@ -1,0 +1,91 @@
+"""Openings found on the written insert against the exits that were declared."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from morph.body.blank import Blank
+from morph.body.face import FaceRole
+from morph.body.plan import ChannelPlan, Exit
+from morph.check.centreline import Centrelines
+from morph.check.channel_wall import nearest_samples
+from morph.check.rows import name_list, place
+from morph.core.tolerance import EXIT_RIM_MM
+from morph.core.verdict import Outcome, Verdict
+from morph.solid.result import Insert, Opening
+
+
+def axis_distance_mm(opening: Opening, exit_: Exit) -> float:
+    """Returns how far the centre of `opening` lies from the axis of `exit_`, in mm (stock moves it along the axis)."""
+    offset = opening.centre_mm - exit_.xyz_mm
+    along = float(offset @ exit_.leave)
+    off_axis = float(np.linalg.norm(offset - along * exit_.leave))
+    # Along the axis it may move by the stock only; the overshoot is stock plus one bore.
+    return max(off_axis, abs(along) - exit_.overshoot_mm)
+
+
+def match_openings(openings: tuple[Opening, ...], exits: tuple[Exit, ...]) -> tuple[dict[str, int], list[int]]:
+    """Returns the opening (index) of each exit by port, and the openings that belong to none."""
+    pairs = sorted(
+        (axis_distance_mm(opening, exit_), exit_.port, index)
+        for index, opening in enumerate(openings)
+        for exit_ in exits
+    )
+    found: dict[str, int] = {}
+    used: set[int] = set()
+    for distance, port, index in pairs:
+        if distance <= EXIT_RIM_MM and port not in found and index not in used:
+            found[port] = index
+            used.add(index)
+    return found, [index for index in range(len(openings)) if index not in used]
+
+
+def check_openings(insert: Insert, plan: ChannelPlan, blank: Blank, lines: Centrelines) -> list[Verdict]:
+    """Returns the `openings` row, and a `breaks-into-part` row per opening on a part face."""
+    found, stray = match_openings(insert.openings, plan.exits)
+    missing = [exit_.port for exit_ in plan.exits if exit_.port not in found]
+    right = not stray and not missing
+    text = f"{len(insert.openings)} openings found on the insert, {len(plan.exits)} declared"
+    if missing:
+        text += f"; none at {name_list(missing)}"
+    if stray:
+        places = [f"({x:.1f}, {y:.1f}, {z:.1f}) mm" for x, y, z in (place(insert.openings[i].centre_mm) for i in stray)]
+        text += f"; not declared: {name_list(places)}"
+    first = insert.openings[stray[0]].centre_mm if stray else None
+    rows = [
+        Verdict(
+            "openings",
+            Outcome.PASS if right else Outcome.FAIL,
+            f"{text}.",
+            value=float(len(insert.openings)),
+            unit="count",
+            limit=float(len(plan.exits)),
+            limit_is="equal",
+            source=f"the declared exits; centre within {EXIT_RIM_MM} mm of the axis",
+            xyz_mm=None if first is None else place(first),
+            hint="" if right else "A channel comes out where no port is declared, or a port is closed.",
+        )
+    ]
+    part = {face.name for face in blank.faces if face.role is FaceRole.PART}
+    rows += [_break_row(opening, lines) for opening in insert.openings if opening.face in part]
+    return rows
+
+
+def _break_row(opening: Opening, lines: Centrelines) -> Verdict:
+    sample = int(nearest_samples(lines, opening.centre_mm[None, :])[0])
+    branch = lines.branch_of(sample).id
+    return Verdict(
+        "breaks-into-part",
+        Outcome.FAIL,
+        f"{branch} breaks through part face {opening.face}: a hole of {opening.diameter_mm:.2f} mm where the moulded "
+        "part lies.",
+        value=opening.diameter_mm,
+        unit="mm",
+        limit=0.0,
+        limit_is="most",
+        source="a part face is never opened",
+        branch_ids=(branch,),
+        sheet_mm=lines.sheet_of(sample),
+        xyz_mm=place(opening.centre_mm),
+        hint="Lay the channels deeper, or lower the bore there.",
+    )
