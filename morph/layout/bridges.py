@@ -41,12 +41,13 @@ class Suggestion:
 
 @dataclass(frozen=True, slots=True, eq=False)
 class _Field:
-    """Smoothed density on the image's own grid, its background, and the mean channel width."""
+    """Smoothed density on the image's own grid, its background, the mean channel width, and the level."""
 
     value: Floats
     grid: Grid
     background: float
     width_mm: float
+    level: float
 
     def at(self, sheet_mm: Floats) -> Floats:
         """Returns the density (k,) at places (k, 2), linear between samples."""
@@ -76,7 +77,7 @@ def suggest_bridges(web: Web, field: Floats, density: Density, picture: Picture)
     if not tips:
         return []
     grid = Grid(density.first_mm, density.pitch_mm)
-    ground = _Field(field, grid, float(np.quantile(field, 0.2)), picture.width_mm)
+    ground = _Field(field, grid, float(np.quantile(field, 0.2)), picture.width_mm, picture.level)
     keys = sorted(web.runs)
     owner = np.repeat(keys, [len(web.runs[key].place_mm) for key in keys])
     sample = np.concatenate([np.arange(len(web.runs[key].place_mm)) for key in keys])
@@ -116,7 +117,13 @@ def _way_on(web: Web, tip: int, ground: _Field, place: Floats, owner: Ints, samp
     if not np.isfinite(cost.min()):
         return None
     path = path_to(place[best])
-    path[0], path[-1] = start, place[best]
+    meets = _first_meeting(ground, path)
+    if meets is None:
+        return None
+    best = int(candidate[int(np.argmin(np.hypot(*(place[candidate] - path[meets]).T)))])
+    if distance[best] < 1e-6 or np.hypot(*(place[best] - path[meets])) > 1.5 * ground.width_mm:
+        return None
+    path = np.vstack([start, path[1:meets], place[best]])
     if len(path) == 2:
         path = np.vstack([path[0], path.mean(axis=0), path[-1]])
     density_along = ground.at(path)
@@ -180,6 +187,16 @@ def _cheapest_ways(ground: _Field, start: Floats) -> tuple[Callable[[Floats], Fl
         return ground.grid.sheet_mm(steps + np.array([top, left]))
 
     return cost_of, path_to
+
+
+def _first_meeting(ground: _Field, path_mm: Floats) -> int | None:
+    """Returns the first point of the way that is in coolant again after the way has left it, or None."""
+    inside = ground.at(path_mm) > ground.level
+    left = np.flatnonzero(~inside)
+    if not len(left):
+        return None
+    again = np.flatnonzero(inside[left[0] :])
+    return int(left[0] + again[0]) if len(again) else len(path_mm) - 1
 
 
 def _flank_contrast(ground: _Field, path_mm: Floats) -> float:

@@ -24,6 +24,7 @@ ABREAST_SHARE = 0.5
 """A wall further ahead or behind than this many half-widths is not the sample's own."""
 FREE_STRETCH = 0.4
 """Free samples must last this many half-widths before the junction is taken to be left behind."""
+AIM_SPREAD = 0.2
 LONGEST_ZONE = 3.0
 """A junction's zone ends at the latest this many half-widths from it, or at 45 % of the run."""
 
@@ -132,7 +133,7 @@ def _close_zones(web: Web, run: Run) -> None:
             continue
         radius = web.joints[joint].radius_mm
         limit = min(LONGEST_ZONE * radius, 0.45 * arc[-1])
-        far = _zone_end(away, free, FREE_STRETCH * radius, limit)
+        far = _zone_end(away, free & (away >= min(radius, limit)), FREE_STRETCH * radius, limit)
         zone |= away < far
     if zone.all():
         run.half_mm = np.full(len(arc), float(run.half_mm.min()))
@@ -169,13 +170,14 @@ def place_junctions(web: Web) -> None:
     """Moves each junction to the point nearest, in the least-squares sense, to the lines its free runs make near it.
 
     A line is fitted to the free samples within one and a half half-widths of the zone's end. The
-    junction stays where it is when the lines are near parallel or meet further off than its radius.
+    junction stays where it is when the lines are near parallel, miss each other by more than a fifth
+    of its radius, or meet further off than its radius.
     """
     for key in sorted(web.joints):
         if web.degree(key) < 3:
             continue
         joint = web.joints[key]
-        matrix, vector = np.zeros((2, 2)), np.zeros(2)
+        matrix, vector, square, n_lines = np.zeros((2, 2)), np.zeros(2), 0.0, 0
         for _, run in web.leaving(key):
             line = _line_near(run, joint.radius_mm)
             if line is not None:
@@ -183,13 +185,17 @@ def place_junctions(web: Web) -> None:
                 across = np.eye(2) - np.outer(direction, direction)
                 matrix += across
                 vector += across @ middle
+                square += float(middle @ across @ middle)
+                n_lines += 1
         (a, b), (_, d) = matrix
         smallest = 0.5 * (a + d) - float(np.hypot(0.5 * (a - d), b))
         if smallest < 0.15:
             continue
         determinant = a * d - b * b
         place = np.array([d * vector[0] - b * vector[1], a * vector[1] - b * vector[0]]) / determinant
-        if np.hypot(*(place - joint.place_mm)) < joint.radius_mm:
+        spread = np.sqrt(max(0.0, square - 2.0 * float(vector @ place) + float(place @ matrix @ place)) / n_lines)
+        moves_mm = float(np.hypot(*(place - joint.place_mm)))
+        if moves_mm < joint.radius_mm and spread < AIM_SPREAD * joint.radius_mm:
             move_joint(web, key, place)
 
 

@@ -21,6 +21,8 @@ from morph.layout.level import Grid, Picture
 
 CUT_RATIO = 3.2
 """A run up to this many half-widths long is a channel cut by the frame (2 straight, 2.83 at 45 degrees)."""
+WIDENING = 1.8
+"""Behind a channel cut by the frame the coolant is at most this many times as wide; a body touching it opens wider."""
 
 
 class Side(StrEnum):
@@ -106,7 +108,21 @@ def _kind_of(view: Bools, first: int, last: int) -> RunKind:
     behind = np.pad(view[:depth, left:right], ((depth, 0), (0, 0)), mode="edge")
     distance = ndimage.distance_transform_edt(np.pad(behind, ((0, 1), (1, 1))))[:-1, 1:-1]
     half_width = float(distance[depth, first - left : last - left].max())
-    return RunKind.CUT if n <= CUT_RATIO * half_width else RunKind.CONTACT
+    straight = n <= CUT_RATIO * half_width and _width_behind(view, first, last) <= WIDENING * n + 2
+    return RunKind.CUT if straight else RunKind.CONTACT
+
+
+def _width_behind(view: Bools, first: int, last: int) -> int:
+    """Returns how wide the coolant behind the middle of a run is, half the run's length in from the frame."""
+    row, column = min((last - first) // 2, view.shape[0] - 1), (first + last - 1) // 2
+    line = view[row]
+    if not line[column]:
+        return 0
+    metal = np.flatnonzero(~line)
+    after = int(np.searchsorted(metal, column))
+    left = int(metal[after - 1]) if after > 0 else -1
+    right = int(metal[after]) if after < len(metal) else len(line)
+    return right - left - 1
 
 
 def side_of(sheet_mm: tuple[float, float], size_mm: tuple[float, float]) -> tuple[Side, float]:

@@ -1,8 +1,8 @@
 """Smooth centrelines: one penalised cubic B-spline per chain of runs, cut into one curve per branch.
 
 Minimised over the control points is sum w |C(s_i) - p_i|^2 + lambda times the integral of the squared
-third derivative (penalised B-splines: Eilers and Marx, 1996, Statistical Science 11:2). A ripple of wavelength W
-is damped by 1 / (1 + (W_c / W)^6) where lambda = (W_c / 2 pi)^6 / ds, so the firmness is stated as the
+second derivative (penalised B-splines: Eilers and Marx, 1996, Statistical Science 11:2). A ripple of wavelength W
+is damped by 1 / (1 + (W_c / W)^4) where lambda = (W_c / 2 pi)^4 / ds, so the firmness is stated as the
 wavelength W_c. It starts at two channel widths and is raised only while a bend is tighter than one
 width, never beyond a deviation of 0.10 of the local width; where even that is exceeded it is lowered and
 knots are added. A chain runs straight on through junctions, so the straighter pair shares its tangent.
@@ -166,7 +166,7 @@ class _Fit:
         from scipy.linalg import solveh_banded
 
         spacing = float(self.samples.at[-1]) / (len(self.samples.at) - 1)
-        firmness = (wavelength_mm / (2.0 * math.pi)) ** 6 / spacing
+        firmness = (wavelength_mm / (2.0 * math.pi)) ** 4 / spacing
         bands = self.normal + firmness * self.penalty
         bands[DEGREE] += 1e-12 * bands[DEGREE].max()
         control = solveh_banded(bands, self.right, check_finite=False)
@@ -184,19 +184,26 @@ class _Fit:
 
 
 def _roughness(knots: Floats, span_mm: float) -> Any:
-    """Returns the sparse matrix of the integrated squared third derivative, spans of equal length `span_mm`.
+    """Returns the sparse matrix of the integrated squared second derivative, spans of equal length `span_mm`.
 
-    The third derivative of a cubic is constant on a span, so its third difference inside the span is exact.
+    The second derivative of a cubic is linear on a span, so two Gauss points per span are exact.
     """
     from scipy.interpolate import BSpline
     from scipy.sparse import csr_matrix
 
     spans = knots[DEGREE:-DEGREE]
     middle = 0.5 * (spans[:-1] + spans[1:])
-    spread = 2.0 * span_mm / 9.0
-    a, b, c, d = (csr_matrix(BSpline.design_matrix(middle + k * spread, knots, DEGREE)) for k in (-1.5, -0.5, 0.5, 1.5))
-    third = (d - a + (b - c).multiply(3.0)).multiply(spread**-3)
-    return (third.T @ third).multiply(span_mm)
+    n = len(knots) - DEGREE - 1
+    total = csr_matrix((n, n))
+    spread = span_mm / 8.0
+    for gauss in (-1.0, 1.0):
+        at = middle + gauss * 0.5 * span_mm / math.sqrt(3.0)
+        before, here, after = (
+            csr_matrix(BSpline.design_matrix(at + shift * spread, knots, DEGREE)) for shift in (-1.0, 0.0, 1.0)
+        )
+        second = (before + after - here.multiply(2.0)).multiply(spread**-2)
+        total = total + (second.T @ second).multiply(0.5 * span_mm)
+    return total
 
 
 def deviations_mm(curve: Curve, at: Floats, place_mm: Floats) -> Floats:
