@@ -19,7 +19,7 @@ from morph.core.errors import GeometryError, SettingError
 from morph.settings.job import CarrierSettings, Metal, SeenFrom, TrueAt
 
 LEAST_RADIUS_MM = 2.0
-"""Least centreline radius: below it opposite sides of the sheet share one channel's width (common practice, no source)."""
+"""Least centreline radius: below it opposite sides of the sheet meet at the axis (common practice, no source)."""
 
 TURN_SLACK = 1e-6
 """Relative slack on a sheet that is exactly one turn wide."""
@@ -35,6 +35,7 @@ class CylinderCarrier:
         true_radius_mm: radius at which the sheet keeps its lengths.
         size_mm: width and height of the sheet.
         turn: +1 when sheet x grows with the angle about z, -1 when it falls.
+        depth_mm: depth of the centrelines the sheet is laid for.
     """
 
     radius_mm: float
@@ -42,6 +43,7 @@ class CylinderCarrier:
     true_radius_mm: float
     size_mm: tuple[float, float]
     turn: float
+    depth_mm: float
 
     @property
     def side(self) -> float:
@@ -138,7 +140,9 @@ def make_cylinder(
             do="Narrow the sheet, raise radius_mm, or keep lengths true at the larger of face and depth (true_at).",
         )
     from_outside = toward == (seen_from is SeenFrom.PART)
-    return CylinderCarrier(settings.radius_mm, settings.metal, true_mm, size_mm, 1.0 if from_outside else -1.0)
+    return CylinderCarrier(
+        settings.radius_mm, settings.metal, true_mm, size_mm, 1.0 if from_outside else -1.0, depth_mm
+    )
 
 
 def _require_positive(radius_mm: float, size_mm: tuple[float, float], depth_mm: float) -> None:

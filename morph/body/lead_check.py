@@ -1,0 +1,151 @@
+"""Whether a lead's path keeps its walls: coarsely for many paths at once, finely for one."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+
+from morph.body.blank import Blank
+from morph.body.cap import TAPER, lower_to_taper
+from morph.body.face import Face
+from morph.body.neighbour import WALL_WAY, Network, distance_to_strand_mm, polyline_arc_mm, way_from_node_mm
+from morph.body.room import Limits, Room, measure_room, straight_run, with_neighbours
+from morph.core.arrays import Bools, Floats, Ints
+
+NECK = 0.95
+"""A lead may be narrower than its bore by this factor where its room is just short."""
+
+COARSE_SLACK_MM = 0.4
+"""Room forgiven on the coarse sampling, which judges single samples and not the pieces between them."""
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Surroundings:
+    """What a lead must keep clear of, and the node of the network it starts from.
+
+    Args:
+        blank: faces and holes. limits: walls and bands. network: channels and leads already laid.
+        finder: scipy's cKDTree over the network's samples. node: index of the port's node.
+    """
+
+    blank: Blank
+    limits: Limits
+    network: Network
+    finder: Any
+    node: int
+
+    @property
+    def wall_mm(self) -> float:
+        """Returns the wall between channels, bands included."""
+        return self.limits.between_mm + self.limits.band_mm
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Judged:
+    """One path, finely sampled.
+
+    Args:
+        xyz_mm: (k, 3). wanted_mm: (k,) bore wanted. bore_mm: (k,) bore that fits. room: what limits it.
+        share: least room over bore wanted; legal from NECK on. worst: the sample of the least share.
+    """
+
+    xyz_mm: Floats
+    wanted_mm: Floats
+    bore_mm: Floats
+    room: Room
+    share: float
+    worst: int
+
+
+def coarse_faces(around: Surroundings, points_mm: Floats, face: Face, straight_mm: float, bore_mm: float) -> Bools:
+    """Returns which paths (n,) keep clear of faces and holes on a coarse sampling.
+
+    Args:
+        around: what surrounds the lead.
+        points_mm: (n, k, 3) samples of each path.
+        face: the face they come out of.
+        straight_mm: within this way of the exit that face does not count.
+        bore_mm: bore of the lead.
+    """
+    n, count, _ = points_mm.shape
+    step = np.linalg.norm(np.diff(points_mm, axis=1), axis=2)
+    left = np.concatenate([np.cumsum(step[:, ::-1], axis=1)[:, ::-1], np.zeros((n, 1))], axis=1)
+    opening = (left <= straight_mm + step.max(axis=1, initial=0.0)[:, None]).ravel()
+    room = measure_room(around.blank, around.limits, points_mm.reshape(-1, 3), face.name, opening).room_mm
+    return np.asarray((room.reshape(n, count) >= NECK * bore_mm - COARSE_SLACK_MM).all(axis=1), dtype=np.bool_)
+
+
+def coarse_channels(around: Surroundings, points_mm: Floats, bore_mm: float) -> Bools:
+    """Returns which paths (n,) keep clear of the channel sample nearest to each of their samples (n, k, 3)."""
+    n, count, _ = points_mm.shape
+    network, wall = around.network, around.wall_mm
+    flat = points_mm.reshape(-1, 3)
+    reach = 0.5 * (bore_mm + float(network.bore_mm.max())) + wall
+    distance, at = around.finder.query(flat, distance_upper_bound=reach)
+    near = np.flatnonzero(np.isfinite(distance))
+    step = np.linalg.norm(np.diff(points_mm, axis=1), axis=2)
+    arc = np.concatenate([np.zeros((n, 1)), np.cumsum(step, axis=1)], axis=1).ravel()
+    other = at[near]
+    needed = 0.5 * (NECK * bore_mm + network.bore_mm[other]) + wall
+    way = arc[near] + way_from_node_mm(network, around.node, other)
+    exact = distance_to_strand_mm(network, flat[near], other)
+    bad = (way > WALL_WAY * needed) & (exact < needed - 0.5 * COARSE_SLACK_MM)
+    blocked = np.zeros(n, dtype=np.bool_)
+    blocked[near[bad] // count] = True
+    return ~blocked
+
+
+def room_between(around: Surroundings, xyz_mm: Floats, arc_mm: Floats, bore_mm: Floats) -> tuple[Floats, Ints]:
+    """Returns the largest bore (k,) the laid channels leave along a path, inf when free, and which strand (k,) limits.
+
+    Args:
+        around: what surrounds the lead.
+        xyz_mm: (k, 3) path from the port on.
+        arc_mm: (k,) way from the port.
+        bore_mm: (k,) bore wanted.
+    """
+    network = around.network
+    reach = 0.5 * float(bore_mm.max() + network.bore_mm.max()) + around.wall_mm + 1.0
+    lists = around.finder.query_ball_point(xyz_mm, reach, return_sorted=True)
+    mine = np.repeat(np.arange(len(xyz_mm)), [len(found) for found in lists])
+    room = np.full(len(xyz_mm), np.inf)
+    by = np.zeros(len(xyz_mm), dtype=np.int64)
+    if not len(mine):
+        return room, by
+    at = np.concatenate([np.asarray(found, dtype=np.int64) for found in lists])
+    distance = distance_to_strand_mm(network, xyz_mm[mine], at)
+    needed = 0.5 * (bore_mm[mine] + network.bore_mm[at]) + around.wall_mm
+    counts = arc_mm[mine] + way_from_node_mm(network, around.node, at) > WALL_WAY * needed
+    mine, at, distance = mine[counts], at[counts], distance[counts]
+    left = 2.0 * (distance - around.wall_mm) - network.bore_mm[at]
+    order = np.lexsort((at, left, mine))
+    first = order[np.unique(mine[order], return_index=True)[1]]
+    room[mine[first]], by[mine[first]] = left[first], network.owner[at[first]]
+    return room, by
+
+
+def judge_path(
+    around: Surroundings, xyz_mm: Floats, leave: Floats, face: Face, port_bore_mm: float, bore_mm: float
+) -> Judged:
+    """Returns the bore that fits along a finely sampled path and how short it falls of the one wanted.
+
+    Args:
+        around: what surrounds the lead.
+        xyz_mm: (k, 3) from the port to the exit.
+        leave: (3,) unit direction out of the metal.
+        face: the face it comes out of.
+        port_bore_mm: bore of the channel at the port.
+        bore_mm: bore wanted; from the port's bore it is reached at the taper.
+    """
+    arc = polyline_arc_mm(xyz_mm)
+    wanted = np.maximum(port_bore_mm - TAPER * arc, min(bore_mm, port_bore_mm))
+    opening = straight_run(xyz_mm, leave)
+    room = measure_room(around.blank, around.limits, xyz_mm, face.name, opening)
+    beside, by = room_between(around, xyz_mm, arc, wanted)
+    room = with_neighbours(room, beside, by, [strand.id for strand in around.network.strands])
+    share = room.room_mm / wanted
+    worst = int(share.argmin())
+    bore = np.minimum(wanted, np.maximum(room.room_mm, around.limits.least_bore_mm))
+    return Judged(xyz_mm, wanted, lower_to_taper(bore, arc), room, float(share[worst]), worst)

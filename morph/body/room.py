@@ -1,0 +1,151 @@
+"""How large a bore may be at a place: the one answer for caps, sizing bounds, leads and wall checks.
+
+A wall is what is left between a channel and a neighbour after the bands have been spent: position
+plus half the bore band. Every limit is the worse of service and process. For a bore b at distance d
+from a face the wall is d - b/2, so the room follows in closed form:
+
+    part face   b <= min(2 (d - band - wall), (d - band) / (1/2 + wall in bores))
+    outer face  b <= 2 (d - band - wall)
+    hole        the same with the distance to the hole's wall
+    channel     b <= 2 (d - band - wall) - b' of the neighbour (neighbour.py)
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+
+from morph.body.blank import Blank
+from morph.body.face import Face, FaceRole
+from morph.body.hole import distance_to_hole_mm
+from morph.core.arrays import Bools, Floats, Ints
+from morph.settings.job import SectionSettings, ServiceSettings
+from morph.settings.profile import Profile
+from morph.surface.wrap import bore_range_mm
+
+
+@dataclass(frozen=True, slots=True)
+class Limits:
+    """The walls every bore must leave, the bands to spend first, and the bores allowed, all in mm.
+
+    Args:
+        face_mm: least wall to a part face. face_bores: and at least this many bores.
+        outer_mm: least wall to any other face. between_mm: least wall between channels.
+        process_mm: thinnest wall the process prints; every wall is at least this.
+        band_mm: position band plus half the bore band.
+        least_bore_mm: no bore is lowered below it. greatest_bore_mm: none is raised above it.
+    """
+
+    face_mm: float
+    face_bores: float
+    outer_mm: float
+    between_mm: float
+    process_mm: float
+    band_mm: float
+    least_bore_mm: float
+    greatest_bore_mm: float
+
+
+def wall_band_mm(profile: Profile) -> float:
+    """Returns what a wall loses before it is judged: the position band plus half the bore band."""
+    return profile.position_band_mm.value + 0.5 * profile.bore_band_mm.value
+
+
+def make_limits(section: SectionSettings, service: ServiceSettings, profile: Profile) -> Limits:
+    """Returns the limits of a job, each the worse of service and process.
+
+    Raises:
+        SettingError: `bore-range-empty`.
+    """
+    process = profile.wall_mm.value
+    least, greatest = bore_range_mm(section, service, profile)
+    return Limits(
+        face_mm=max(service.wall_face_mm, process),
+        face_bores=service.wall_face_bores,
+        outer_mm=max(service.wall_outer_mm, process),
+        between_mm=max(service.wall_between_mm, process),
+        process_mm=process,
+        band_mm=wall_band_mm(profile),
+        least_bore_mm=least,
+        greatest_bore_mm=greatest,
+    )
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Room:
+    """The largest bore (k,) that fits at each place and what limits it, as an index (k,) into `names`."""
+
+    room_mm: Floats
+    by: Ints
+    names: tuple[str, ...]
+
+    def by_names(self) -> tuple[str, ...]:
+        """Returns the name of what limits the bore at each place."""
+        return tuple(self.names[i] for i in self.by)
+
+
+def face_wall_mm(face: Face, bore_mm: Floats, limits: Limits) -> Floats:
+    """Returns the wall (k,) that bores (k,) must leave to `face`, before bands."""
+    if face.role is not FaceRole.PART:
+        return np.full(len(bore_mm), limits.outer_mm)
+    return np.maximum(limits.face_mm, limits.face_bores * bore_mm)
+
+
+def room_to_face_mm(face: Face, xyz_mm: Floats, limits: Limits) -> Floats:
+    """Returns the largest bores (k,) at points (k, 3) that leave the wall to `face`."""
+    after = face.distance_mm(xyz_mm) - limits.band_mm
+    if face.role is not FaceRole.PART:
+        return 2.0 * (after - limits.outer_mm)
+    return np.minimum(2.0 * (after - limits.face_mm), after / (0.5 + limits.face_bores))
+
+
+def measure_room(
+    blank: Blank, limits: Limits, xyz_mm: Floats, open_face: str = "", opening: Bools | None = None
+) -> Room:
+    """Returns the room at points (k, 3) that faces and holes of the blank leave.
+
+    Args:
+        blank: faces and holes.
+        limits: walls and bands.
+        xyz_mm: (k, 3) places on a centreline.
+        open_face: face through which the channel comes out, if any.
+        opening: (k,) where the channel runs straight to its opening; there `open_face` does not count.
+    """
+    rows: list[Floats] = []
+    names: list[str] = []
+    for face in blank.faces:
+        room = room_to_face_mm(face, xyz_mm, limits)
+        if opening is not None and face.name == open_face:
+            room = np.where(opening, np.inf, room)
+        rows.append(room)
+        names.append(f"face:{face.name}")
+    for hole in blank.holes:
+        wall = max(hole.wall_mm, limits.process_mm)
+        rows.append(2.0 * (distance_to_hole_mm(hole, xyz_mm) - limits.band_mm - wall))
+        names.append(f"hole:{hole.id}")
+    table = np.array(rows)
+    by = table.argmin(axis=0)
+    return Room(table[by, np.arange(len(xyz_mm))], by, tuple(names))
+
+
+def with_neighbours(room: Room, other_mm: Floats, other: Ints, ids: Sequence[str]) -> Room:
+    """Returns `room` lowered to the room (k,) that neighbours leave; `other (k,)` is an index into branch `ids`."""
+    closer = other_mm < room.room_mm
+    names = (*room.names, *(f"branch:{name}" for name in ids))
+    return Room(np.where(closer, other_mm, room.room_mm), np.where(closer, other + len(room.names), room.by), names)
+
+
+def straight_run(xyz_mm: Floats, leave: Floats, slack_mm: float = 1e-6) -> Bools:
+    """Returns which samples (k,) at the end of a path lie on the straight line on which it leaves the metal.
+
+    Args:
+        xyz_mm: (k, 3) path, ending on the face.
+        leave: (3,) unit direction out of the metal there.
+        slack_mm: how far from the line a sample still counts as on it.
+    """
+    offset = xyz_mm - xyz_mm[-1]
+    off_line = np.linalg.norm(offset - (offset @ leave)[:, None] * leave, axis=1) > slack_mm
+    last = int(np.flatnonzero(off_line)[-1]) if off_line.any() else -1
+    return np.arange(len(xyz_mm)) > last
