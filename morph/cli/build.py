@@ -54,6 +54,6 @@ def run(arguments: argparse.Namespace) -> int:
     if arguments.json:
         print(json.dumps(result.summary, indent=1, sort_keys=True, allow_nan=False))
     else:
-        for line in result_lines(job.name, result.headline, result.verdicts, result.notices, paths):
+        for line in result_lines(result, paths):
             print(line)
     return EXIT_FAILED_CHECK if any(row.outcome is Outcome.FAIL for row in result.verdicts) else 0

@@ -22,7 +22,8 @@ LARGEST_RADIUS_MM = 5000.0
 LARGEST_BORE_MM = 100.0
 LARGEST_WALL_MM = 500.0
 MOST_HOLES = 500
-FACES = ("carrier", "foot", "top", "back", "side", "-x", "+x", "-y", "+y", "-z", "+z")
+FACES = ("carrier", "foot", "top", "back", "outer", "inner", "-x", "+x", "-y", "+y", "-z", "+z")
+"""Every name a face of some blank can have; which of them this job's blank has is settled when it is made."""
 
 _CARRIER_KEYS = ("kind", "radius_mm", "metal", "depth_mm", "wall_to_face_mm", "true_at")
 _CARRIER_LATER = {

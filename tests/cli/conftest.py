@@ -37,7 +37,13 @@ def answer(monkeypatch):
             progress.step("layout", 3, 6)
             progress.step("surface", 0, 1)
             return SimpleNamespace(
-                job=job, summary=summary, verdicts=verdicts, notices=notices, files=files, headline=headline
+                records=SimpleNamespace(plan=SimpleNamespace(branches=())),
+                job=job,
+                summary=summary,
+                verdicts=verdicts,
+                notices=notices,
+                files=files,
+                headline=headline,
             )
 
         monkeypatch.setattr(morph.pipeline, "build", build)

@@ -41,4 +41,8 @@ def tree(folder):
 
 
 def wall(outcome, value):
-    return Verdict("wall-face", outcome, f"Wall to the part face on B1 is {value} mm.", value, "mm", 3.0, band=0.15)
+    """A wall of the given figure on branch B1."""
+    text = f"Wall to the part face on B1 is {value} mm."
+    return Verdict(
+        "wall-face", outcome, text, value, "mm", 3.0, band=0.15, branch_ids=("B1",), xyz_mm=(29.0, 1.25, -3.0)
+    )

@@ -32,7 +32,8 @@ def test_a_pass_leaves_the_files_and_a_table(job_folder, answer, capsys):
     said = capsys.readouterr()
     assert sorted(p.name for p in (job_folder / "out" / "lamp").iterdir()) == ["report.html", "summary.json"]
     assert said.out.splitlines()[0] == "lamp: pass   (0 fail, 1 not checked, 0 watch, 1 pass)"
-    assert "thinnest wall" in said.out and "4.2 - 0.15 mm, at least 3 mm" in said.out
+    assert "pass         Thinnest wall after its band      4.05 mm      at least 3.00 mm  B1 at [29.0, 1.2, -3.0] mm" in said.out
+    assert "not checked  Openings found / declared" in said.out
     assert "[flow] Flow was not calculated." in said.out and "[dead-end] Branch B2 ends blind." in said.out
     assert "wrote 2 files" in said.out
     lines = said.err.splitlines()
@@ -45,7 +46,8 @@ def test_a_failed_check_still_leaves_the_files_and_exits_3(job_folder, answer, c
     assert main(["build", "job.toml", "--quiet", "--out", "here"]) == 3
     said = capsys.readouterr()
     assert said.err == "" and said.out.startswith("lamp: fail")
-    assert "2.5 - 0.15 mm" in said.out and (job_folder / "here" / "report.html").exists()
+    assert "2.35 mm" in said.out and "[wall-face] Wall to the part face on B1 is 2.5 mm." in said.out
+    assert (job_folder / "here" / "report.html").exists()
 
 
 def test_json_is_the_summary_and_nothing_else(job_folder, answer, capsys):
