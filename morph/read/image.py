@@ -9,6 +9,8 @@ from __future__ import annotations
 
 import io
 import struct
+import tokenize
+import zlib
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
@@ -186,7 +188,7 @@ def _decode_npy(content: bytes, name: str) -> NDArray[Any]:
             shape, by_column, dtype = np.lib.format.read_array_header_1_0(stream)
         else:
             shape, by_column, dtype = np.lib.format.read_array_header_2_0(stream)
-    except (ValueError, EOFError, SyntaxError, TypeError, MemoryError, RecursionError) as error:
+    except (ValueError, EOFError, SyntaxError, TypeError, MemoryError, RecursionError, tokenize.TokenError) as error:
         raise _damaged("a readable .npy header", "a header that makes no sense", name) from error
     if dtype.hasobject:
         raise InputError(
@@ -250,8 +252,39 @@ def _require_png_header(content: bytes, name: str) -> None:
         raise _png_refused("8 bits per value in an image with colour or alpha", "16 bits", name)
 
 
+def _png_scanline_bytes(content: bytes) -> int:
+    """Returns how many bytes of filtered scanlines a PNG of this header holds, interlaced or not."""
+    columns, rows, bits, colour = struct.unpack(">IIBB", content[16:26])
+    pixel_bits = bits * {0: 1, 2: 3, 4: 2, 6: 4}[colour]
+    passes = [(0, 0, 1, 1)]
+    if content[28] == 1:  # Adam7: first column, first row, column step, row step of each pass
+        passes = [(0, 0, 8, 8), (4, 0, 8, 8), (0, 4, 4, 8), (2, 0, 4, 4), (0, 2, 2, 4), (1, 0, 2, 2), (0, 1, 1, 2)]
+    total = 0
+    for first_column, first_row, column_step, row_step in passes:
+        width, height = len(range(first_column, columns, column_step)), len(range(first_row, rows, row_step))
+        total += height * (1 + (width * pixel_bits + 7) // 8) if width else 0
+    return total
+
+
+def _require_png_data(content: bytes, name: str) -> None:
+    """Raises unless the image data unpack to all scanlines the header promises; a decoder fills up silently."""
+    wanted, have, at = _png_scanline_bytes(content), 0, len(PNG_MAGIC)
+    unpacker = zlib.decompressobj()
+    try:
+        while at + 8 <= len(content) and have < wanted:
+            length, kind = struct.unpack(">I4s", content[at : at + 8])
+            if kind == b"IDAT":
+                have += len(unpacker.decompress(content[at + 8 : at + 8 + length], wanted + 1 - have))
+            at += 12 + length
+    except zlib.error as error:
+        raise _damaged("a complete PNG file", "broken image data", name) from error
+    if have < wanted:
+        raise _damaged(f"{wanted} bytes of image data, as its header says", f"{have} bytes", name)
+
+
 def _decode_png(content: bytes, name: str) -> NDArray[Any]:
     _require_png_header(content, name)
+    _require_png_data(content, name)
     from PIL import Image
 
     try:
