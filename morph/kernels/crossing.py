@@ -13,6 +13,9 @@ from __future__ import annotations
 
 import numpy as np
 from numba import njit
+from numpy.typing import NDArray
+
+from morph.core.arrays import Floats, Ints
 
 LEAF = 4
 """Triangles per leaf."""
@@ -22,18 +25,18 @@ ROUNDING = 1e-14
 
 
 @njit(cache=True, nogil=True)
-def signed_volume(v, a, b, c, d):
+def signed_volume(v: Floats, a: int, b: int, c: int, d: int) -> float:
     """Returns six times the volume of the tetrahedron of vertices a, b, c, d; 0 when it is within rounding."""
     x1, y1, z1 = v[b, 0] - v[a, 0], v[b, 1] - v[a, 1], v[b, 2] - v[a, 2]
     x2, y2, z2 = v[c, 0] - v[a, 0], v[c, 1] - v[a, 1], v[c, 2] - v[a, 2]
     x3, y3, z3 = v[d, 0] - v[a, 0], v[d, 1] - v[a, 1], v[d, 2] - v[a, 2]
     volume = (y1 * z2 - z1 * y2) * x3 + (z1 * x2 - x1 * z2) * y3 + (x1 * y2 - y1 * x2) * z3
-    size = max(max(abs(x1), abs(y1), abs(z1)), max(abs(x2), abs(y2), abs(z2)), max(abs(x3), abs(y3), abs(z3)))
+    size = max(abs(x1), abs(y1), abs(z1), abs(x2), abs(y2), abs(z2), abs(x3), abs(y3), abs(z3))
     return volume if abs(volume) > ROUNDING * size * size * size else 0.0
 
 
 @njit(cache=True, nogil=True)
-def edge_crosses(v, p, q, a, b, c):
+def edge_crosses(v: Floats, p: int, q: int, a: int, b: int, c: int) -> bool:
     """Returns whether the edge p q, its ends strictly on both sides of triangle a b c, passes through its inside."""
     one = signed_volume(v, p, q, a, b)
     two = signed_volume(v, p, q, b, c)
@@ -43,7 +46,7 @@ def edge_crosses(v, p, q, a, b, c):
 
 
 @njit(cache=True, nogil=True)
-def triangles_cross(v, one, two):
+def triangles_cross(v: Floats, one: Ints, two: Ints) -> bool:
     """Returns whether two triangles (vertex indices (3,) each) cross strictly."""
     shared = 0
     for i in range(3):
@@ -68,7 +71,7 @@ def triangles_cross(v, one, two):
 
 
 @njit(cache=True, nogil=True)
-def triangles_apart(v, one, two):
+def triangles_apart(v: Floats, one: Ints, two: Ints) -> bool:
     """Returns whether the boxes of two triangles do not even touch."""
     for axis in range(3):
         a, b, c = v[one[0], axis], v[one[1], axis], v[one[2], axis]
@@ -79,7 +82,7 @@ def triangles_apart(v, one, two):
 
 
 @njit(cache=True, nogil=True)
-def boxes_meet(boxes, a, b):
+def boxes_meet(boxes: Floats, a: int, b: int) -> bool:
     """Returns whether the boxes of rows a and b overlap or touch."""
     for axis in range(3):
         if boxes[a, axis] > boxes[b, 3 + axis] or boxes[b, axis] > boxes[a, 3 + axis]:
@@ -88,16 +91,21 @@ def boxes_meet(boxes, a, b):
 
 
 @njit(cache=True, nogil=True)
-def find_crossings(first, last, vertices, triangles, boxes, n_leaves, pairs, crossed):
+def find_crossings(
+    first: int,
+    last: int,
+    vertices: Floats,
+    triangles: Ints,
+    boxes: Floats,
+    n_leaves: int,
+    pairs: Ints,
+    crossed: NDArray[np.uint8],
+) -> None:
     """Counts the crossing pairs whose lower triangle lies in the leaves first..last - 1.
 
-    Args:
-        first, last: range of leaves.
-        vertices: (n, 3) in mm. triangles: (m, 3) in the order of the tree.
-        boxes: (2 n_leaves, 6) heap of boxes; empty leaves have low above high.
-        n_leaves: a power of two.
-        pairs: (n_leaves,) receives the number of crossing pairs.
-        crossed: (m,) uint8, set to 1 for every triangle in a crossing pair.
+    `triangles (m, 3)` stand in the order of the tree, `boxes (2 n_leaves, 6)` is the heap (empty leaves have low above
+    high), `n_leaves` a power of two. `pairs (n_leaves,)` receives the number of crossing pairs of each leaf;
+    `crossed (m,)` is set to 1 for every triangle in one.
     """
     stack = np.empty(128, np.int64)
     n_triangles = len(triangles)

@@ -20,8 +20,9 @@ from __future__ import annotations
 
 import numpy as np
 from numba import njit
+from numpy.typing import NDArray
 
-from morph.core.arrays import Floats
+from morph.core.arrays import Floats, Ints
 
 BLOCK = 8
 """Cells per block edge."""
@@ -94,18 +95,28 @@ def blend_weight(px: float, py: float, pz: float, pieces: Floats, nodes: Floats,
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
-def field_at(px, py, pz, pieces, owner, nodes, blend_mm, near, n_near, run_distance, run_piece, gradient):
+def field_at(
+    px: float,
+    py: float,
+    pz: float,
+    pieces: Floats,
+    owner: Ints,
+    nodes: Floats,
+    blend_mm: float,
+    near: Ints,
+    n_near: int,
+    run_distance: Floats,
+    run_piece: Ints,
+    gradient: Floats,
+) -> tuple[float, float]:
     """Returns the field in mm at a point, negative in the coolant, and how much of it is blend (mm).
 
     Two distances a, b of runs on one node are joined by the quadratic smooth minimum
     min - k w / 4 (1 - |a - b| / k)^2, k = blend_mm, w from `blend_weight`; of several pairs the largest blend counts.
 
-    Args:
-        px, py, pz: the point.
-        pieces, owner, nodes: see the module; `near[:n_near]` are the pieces that matter here, in order.
-        blend_mm: width k of the blend, 0 for none.
-        run_distance, run_piece: work space, one entry per run in the list.
-        gradient: (3,) receives the gradient when its length is 3 (blend weights held constant); empty: not wanted.
+    The pieces that matter here are `near[:n_near]`, in order; `blend_mm` 0 means no blend. `run_distance` and `run_piece`
+    are work space, one entry per run in the list. `gradient (3,)` receives the gradient with blend weights held
+    constant; with length 0 it is not wanted.
     """
     n_runs = 0
     last = -1
@@ -155,7 +166,19 @@ def field_at(px, py, pz, pieces, owner, nodes, blend_mm, near, n_near, run_dista
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
-def keep_near(cx, cy, cz, reach_mm, pieces, owner, blend_mm, near, n_near, kept, distance):
+def keep_near(
+    cx: float,
+    cy: float,
+    cz: float,
+    reach_mm: float,
+    pieces: Floats,
+    owner: Ints,
+    blend_mm: float,
+    near: Ints,
+    n_near: int,
+    kept: Ints,
+    distance: Floats,
+) -> int:
     """Returns how many of the pieces `near[:n_near]` matter within `reach_mm` of a centre, written to `kept` in order.
 
     0 when the field provably has no zero there: all balls are too far, or one covers the whole neighbourhood.
@@ -186,8 +209,18 @@ def keep_near(cx, cy, cz, reach_mm, pieces, owner, blend_mm, near, n_near, kept,
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
-def blocks_of_piece(i, pieces, origin, block_mm, shape, pad_mm, keys, piece_of, at):
-    """Returns how many blocks lie within `pad_mm` of piece i; writes key and piece from position `at` on unless it is negative."""
+def blocks_of_piece(
+    i: int,
+    pieces: Floats,
+    origin: Floats,
+    block_mm: float,
+    shape: Ints,
+    pad_mm: float,
+    keys: Ints,
+    piece_of: Ints,
+    at: int,
+) -> int:
+    """Returns how many blocks lie within `pad_mm` of piece i; from position `at` on (if not negative) writes them."""
     half = 0.5 * SQRT3 * block_mm * 1.0001
     radius = max(pieces[i, 7], pieces[i, 7] + pieces[i, 8] * pieces[i, 6]) + pad_mm
     low = np.empty(3, np.int64)
@@ -213,7 +246,19 @@ def blocks_of_piece(i, pieces, origin, block_mm, shape, pad_mm, keys, piece_of, 
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
-def list_blocks(first, last, pieces, origin, block_mm, shape, pad_mm, offset, keys, piece_of, fill):
+def list_blocks(
+    first: int,
+    last: int,
+    pieces: Floats,
+    origin: Floats,
+    block_mm: float,
+    shape: Ints,
+    pad_mm: float,
+    offset: Ints,
+    keys: Ints,
+    piece_of: Ints,
+    fill: bool,
+) -> None:
     """Counts (fill False: `offset[i]` receives the number) or lists the blocks near the pieces first..last - 1."""
     for i in range(first, last):
         if fill:
@@ -223,8 +268,21 @@ def list_blocks(first, last, pieces, origin, block_mm, shape, pad_mm, offset, ke
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
-def prune_blocks(first, last, keys, start, near, length, pieces, owner, blend_mm, origin, block_mm, shape):
-    """Shortens the list `near[start[b]:start[b + 1]]` of each block to what matters; `length[b]` = 0: no surface there."""
+def prune_blocks(
+    first: int,
+    last: int,
+    keys: Ints,
+    start: Ints,
+    near: Ints,
+    length: Ints,
+    pieces: Floats,
+    owner: Ints,
+    blend_mm: float,
+    origin: Floats,
+    block_mm: float,
+    shape: Ints,
+) -> None:
+    """Shortens each block's list `near[start[b]:start[b + 1]]` to what matters; `length[b]` 0 means no surface there."""
     for b in range(first, last):
         n = start[b + 1] - start[b]
         kept = np.empty(n, np.int64)
@@ -241,19 +299,28 @@ def prune_blocks(first, last, keys, start, near, length, pieces, owner, blend_mm
 
 @njit(cache=True, nogil=True, error_model="numpy")
 def sample_blocks(
-    first, last, corner, start, length, near, pieces, owner, nodes, blend_mm, origin, h_mm, values, codes
-):
+    first: int,
+    last: int,
+    corner: Ints,
+    start: Ints,
+    length: Ints,
+    near: Ints,
+    pieces: Floats,
+    owner: Ints,
+    nodes: Floats,
+    blend_mm: float,
+    origin: Floats,
+    h_mm: float,
+    values: NDArray[np.float32],
+    codes: NDArray[np.uint8],
+) -> None:
     """Samples the blocks first..last - 1 where a surface may pass and writes each cell's case.
 
     Descends from the block to cubes of 4 and 2 cells with ever shorter lists; cubes that hold no surface are skipped.
 
-    Args:
-        first, last: range of blocks.
-        corner: (n, 3) lowest cell of each block.
-        start, length, near: the block's list is near[start : start + length].
-        pieces, owner, nodes, blend_mm: the field. origin, h_mm: place of sample (0, 0, 0) and cell size.
-        values: (n, 9, 9, 9) float32 samples, NO_VALUE where skipped.
-        codes: (n, 8, 8, 8) uint8, bit c set when corner c = x + 2 y + 4 z of the cell is inside.
+    `corner (n, 3)` is the lowest cell of each block, `near[start : start + length]` its list; sample (0, 0, 0) lies at
+    `origin`. `values (n, 9, 9, 9)` receives the samples in mm, NO_VALUE where skipped; `codes (n, 8, 8, 8)` the cases:
+    bit c is set when corner c = x + 2 y + 4 z of the cell is inside.
     """
     longest = 1
     for b in range(first, last):
@@ -305,7 +372,7 @@ def sample_blocks(
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
-def code_cells(value, code):
+def code_cells(value: NDArray[np.float32], code: NDArray[np.uint8]) -> None:
     """Writes the case of each of 8 x 8 x 8 cells from 9 x 9 x 9 samples; 0 where a corner was skipped."""
     for x in range(BLOCK):
         for y in range(BLOCK):

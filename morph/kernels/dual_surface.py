@@ -15,8 +15,9 @@ from __future__ import annotations
 
 import numpy as np
 from numba import njit
+from numpy.typing import NDArray
 
-from morph.core.arrays import Ints
+from morph.core.arrays import Floats, Ints
 from morph.kernels.distance_field import BLOCK, SQRT3, field_at, keep_near
 
 N_CASES = 256
@@ -98,14 +99,21 @@ def neighbour_cell(b: int, x: int, y: int, z: int, neighbours: Ints) -> tuple[in
 
 
 @njit(cache=True, nogil=True)
-def count_cells(first, last, codes, neighbours, n_loops, double_face, cases, n_vertices, n_quads):
+def count_cells(
+    first: int,
+    last: int,
+    codes: NDArray[np.uint8],
+    neighbours: Ints,
+    n_loops: Ints,
+    double_face: Ints,
+    cases: NDArray[np.uint16],
+    n_vertices: Ints,
+    n_quads: Ints,
+) -> None:
     """Finds the case of each cell (flipped where needed) and counts vertices and quads of the blocks first..last - 1.
 
-    Args:
-        first, last: range of blocks.
-        codes: (n, 8, 8, 8) inside bits. neighbours: (n, 27) block numbers, -1 for none.
-        n_loops, double_face: tables.
-        cases: (n, 8, 8, 8) receives the row of the loop table. n_vertices, n_quads: (n,) receive counts.
+    `codes (n, 8, 8, 8)` holds the inside bits, `neighbours (n, 27)` block numbers or -1; `cases (n, 8, 8, 8)` receives
+    each cell's row of the loop table, `n_vertices (n,)` and `n_quads (n,)` the counts.
     """
     for b in range(first, last):
         vertices = 0
@@ -140,22 +148,36 @@ def count_cells(first, last, codes, neighbours, n_loops, double_face, cases, n_v
 
 @njit(cache=True, nogil=True, error_model="numpy")
 def place_vertices(
-    first, last, corner, start, length, near, pieces, owner, nodes, blend_mm, origin, h_mm,
-    values, cases, loop_of, n_loops, offset, bias, steps, first_vertex, vertices,
-):  # fmt: skip
+    first: int,
+    last: int,
+    corner: Ints,
+    start: Ints,
+    length: Ints,
+    near: Ints,
+    pieces: Floats,
+    owner: Ints,
+    nodes: Floats,
+    blend_mm: float,
+    origin: Floats,
+    h_mm: float,
+    values: NDArray[np.float32],
+    cases: NDArray[np.uint16],
+    loop_of: Ints,
+    n_loops: Ints,
+    offset: Ints,
+    bias: float,
+    steps: int,
+    first_vertex: NDArray[np.int32],
+    vertices: Floats,
+) -> None:
     """Places the vertices of the blocks first..last - 1.
 
     A vertex starts at the mean of its loop's edge crossings and is moved `steps` times along the gradient to the
     level bias h^2 / r (r the local radius, none where blended), which makes up for the chords; it never leaves its cell.
 
-    Args:
-        first, last: range of blocks.
-        corner, start, length, near, pieces, owner, nodes, blend_mm, origin, h_mm: as in `sample_blocks`.
-        values, cases: samples and cases of the cells. loop_of, n_loops: tables.
-        offset: (n,) first vertex of each block.
-        bias: factor of h^2 / r. steps: Newton steps, 0 leaves the means.
-        first_vertex: (n, 8, 8, 8) receives the number of each cell's first vertex.
-        vertices: (nv, 3) receives places in mm.
+    The blocks and the field are given as to `sample_blocks`, which filled `values`; `cases` comes from `count_cells`;
+    `offset (n,)` is the first vertex of each block. `first_vertex (n, 8, 8, 8)` receives the number of each cell's
+    first vertex, `vertices (nv, 3)` the places in mm.
     """
     longest = 1
     for b in range(first, last):
@@ -206,7 +228,9 @@ def place_vertices(
 
 
 @njit(cache=True, nogil=True)
-def nearest_radius(pieces, run_piece, run_distance, n_near, owner, near):
+def nearest_radius(
+    pieces: Floats, run_piece: Ints, run_distance: Floats, n_near: int, owner: Ints, near: Ints
+) -> float:
     """Returns the start radius in mm of the nearest piece, read from the work space `field_at` left."""
     best = 0
     n_runs = 0
@@ -221,7 +245,9 @@ def nearest_radius(pieces, run_piece, run_distance, n_near, owner, near):
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
-def mean_crossing(value, x, y, z, case, loop, loop_of, point):
+def mean_crossing(
+    value: NDArray[np.float32], x: int, y: int, z: int, case: int, loop: int, loop_of: Ints, point: Floats
+) -> None:
     """Writes to `point` the mean of the edge crossings of one loop of cell (x, y, z), in cell units from its low corner."""
     point[:] = 0.0
     count = 0
@@ -245,14 +271,22 @@ def mean_crossing(value, x, y, z, case, loop, loop_of, point):
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
-def join_quads(first, last, codes, cases, neighbours, loop_of, first_vertex, vertices, offset, triangles):
+def join_quads(
+    first: int,
+    last: int,
+    codes: NDArray[np.uint8],
+    cases: NDArray[np.uint16],
+    neighbours: Ints,
+    loop_of: Ints,
+    first_vertex: NDArray[np.int32],
+    vertices: Floats,
+    offset: Ints,
+    triangles: NDArray[np.int32],
+) -> None:
     """Writes two triangles per crossed edge of the blocks first..last - 1, split along the shorter diagonal.
 
-    Args:
-        first, last: range of blocks.
-        codes, cases, neighbours, loop_of, first_vertex, vertices: as filled by the steps before.
-        offset: (n,) first quad of each block; its triangles are 2 q and 2 q + 1.
-        triangles: (2 nq, 3) int32, counter-clockwise from outside; -1 where a cell is missing (never on a closed field).
+    `offset (n,)` is the first quad of each block; quad q makes the triangles 2 q and 2 q + 1 of `triangles (2 nq, 3)`,
+    counter-clockwise from outside; -1 where a cell is missing (never on a closed field).
     """
     ring = np.empty(4, np.int64)
     for b in range(first, last):

@@ -19,7 +19,8 @@ def body_from(vertices_mm: Floats, triangles: Ints, what: str) -> tuple[Any, int
     """Returns the manifold3d body of a closed mesh, and the id its triangles keep through cuts (see `arrays_of`).
 
     Args:
-        vertices_mm: (n, 3). triangles: (m, 3).
+        vertices_mm: (n, 3).
+        triangles: (m, 3).
         what: names the mesh in messages.
 
     Raises:
@@ -46,7 +47,7 @@ def body_of(mesh: Mesh, what: str) -> tuple[Any, int]:
 
 
 def require_valid(body: Any, what: str) -> None:
-    """Raises ``solid-not-closed`` when the library reports an error on `body`, ``solid-empty`` when nothing is in it."""
+    """Raises ``solid-not-closed`` when the library reports an error on `body`, ``solid-empty`` when it is empty."""
     status = body.status().name
     if status != "NoError":
         raise GeometryError(
@@ -67,7 +68,7 @@ def require_valid(body: Any, what: str) -> None:
 
 
 def arrays_of(body: Any) -> tuple[Floats, Ints, Ints]:
-    """Returns vertices (n, 3) in mm, triangles (m, 3), and the id of the original body each triangle comes from (m,)."""
+    """Returns vertices (n, 3) in mm, triangles (m, 3), and the id (m,) of the body each triangle comes from."""
     mesh = body.to_mesh64()
     vertices = np.ascontiguousarray(mesh.vert_properties[:, :3], dtype=np.float64)
     triangles = np.asarray(mesh.tri_verts, dtype=np.int64)

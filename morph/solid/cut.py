@@ -10,7 +10,7 @@ from morph.body.blank import Blank
 from morph.body.plan import ChannelPlan
 from morph.core.progress import SILENT, Progress
 from morph.geometry.mesh import measure_condition, mesh_volume_mm3
-from morph.solid.blank import blank_body, blank_mesh
+from morph.solid.blank import blank_mesh
 from morph.solid.body import arrays_of, body_of, require_valid
 from morph.solid.openings import find_openings
 from morph.solid.result import ChannelSolid, Insert
@@ -23,7 +23,8 @@ def make_insert(solid: ChannelSolid, blank: Blank, plan: ChannelPlan, progress: 
     """Returns the insert as printed: `blank` with its stock, minus the swept channels.
 
     Args:
-        solid: the channels. blank: body and stock.
+        solid: the channels.
+        blank: the body with its faces and their stock.
         plan: names the branches in messages.
         progress: told between steps; may raise Cancelled.
 

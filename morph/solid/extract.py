@@ -12,7 +12,7 @@ from morph.solid.field import BLOCKS_PER_SLAB, SampledField
 from morph.solid.slabs import run_slabs
 
 CHORD_BIAS = 0.07
-"""Vertices on a round wall of radius r are placed at the level 0.07 h^2 / r, which makes up for the chords (measured)."""
+"""Vertices on a round wall of radius r are placed at the level 0.07 h^2 / r: makes up for the chords (measured)."""
 
 NEWTON_STEPS = 2
 

@@ -196,7 +196,7 @@ def _list_pairs(
 
 
 def _neighbours(keys: Ints, shape: Ints) -> Ints:
-    """Returns the block numbers (n, 27) around each block, -1 for none; the box has an empty rim, so keys do not wrap."""
+    """Returns the block numbers (n, 27) around each block, -1 for none; the box has an empty rim: keys do not wrap."""
     out = np.full((len(keys), 27), -1, np.int64)
     for number, (dx, dy, dz) in enumerate(np.ndindex(3, 3, 3)):
         wanted = keys + ((dx - 1) * shape[1] + (dy - 1)) * shape[2] + (dz - 1)

@@ -16,7 +16,8 @@ def find_openings(mesh: Mesh, channel_triangle: Ints, blank: Blank) -> tuple[Ope
     """Returns one Opening per closed rim between channel and skin triangles, sorted by place (x, y, z).
 
     Args:
-        mesh: the insert, closed. channel_triangle: (m,) 1 for channel wall, 0 for skin.
+        mesh: the insert, closed.
+        channel_triangle: (m,) 1 for channel wall, 0 for skin.
         blank: its faces name the place; the rim lies on them with their stock.
     """
     openings = [_opening(mesh.vertices_mm[loop], blank) for loop in rim_loops(mesh, channel_triangle)]
@@ -26,8 +27,8 @@ def find_openings(mesh: Mesh, channel_triangle: Ints, blank: Blank) -> tuple[Ope
 def rim_loops(mesh: Mesh, channel_triangle: Ints) -> list[list[int]]:
     """Returns the vertex loops of all rims, each starting at its lowest vertex, channel wall on its left.
 
-    At a vertex where several rims touch, a rim goes on along the fan of channel triangles it came from, so that touching
-    rims stay apart.
+    At a vertex where several rims touch, a rim goes on along the fan of channel triangles it came from, so that
+    touching rims stay apart.
     """
     channel = channel_triangle == 1
     n = len(mesh.vertices_mm)

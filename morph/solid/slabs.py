@@ -18,7 +18,8 @@ def run_slabs(stage: str, n_items: int, slab: int, work: Callable[[int, int], ob
 
     Args:
         stage: name told to `progress` after each slab; what it raises stops the loop after the slabs that run.
-        n_items: number of items. slab: items per call.
+        n_items: number of items.
+        slab: items per call.
         work: writes the results of items first..last - 1; must release the interpreter lock to run side by side.
         progress: receives (stage, items done, n_items).
     """

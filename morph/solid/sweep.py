@@ -18,7 +18,7 @@ from morph.core.arrays import Floats, Ints, frozen_floats, frozen_ints
 from morph.core.tolerance import COINCIDE_MM
 
 STEEPEST_TAPER = 0.95
-"""Change of radius per length above which a tapered piece is replaced by its two end balls (one almost holds the other)."""
+"""Change of radius per length above which a tapered piece is replaced by its two end balls: one nearly holds both."""
 
 BLEND_REACH_BORES = 4.0
 """Blending has faded out at this many bores from the node; full up to half of it."""
@@ -71,7 +71,8 @@ def make_sweep(plan: ChannelPlan) -> Sweep:
     pieces: list[Floats] = []
     owner: list[tuple[int, int, int]] = []
     for branch in plan.branches:
-        for half, (node_id, xyz, bore) in enumerate(_halves(branch)):
+        for half, (node_id, points, bores) in enumerate(_halves(branch)):
+            xyz, bore = points, bores
             number = node_number[node_id]
             widest[number] = max(widest[number], bore.max())
             if node_id in beyond:

@@ -10,7 +10,7 @@ from __future__ import annotations
 
 import numpy as np
 
-from morph.core.arrays import Bools, Floats, Ints
+from morph.core.arrays import Floats, Ints
 from morph.core.errors import GeometryError
 from morph.core.tolerance import WELD_MM
 from morph.geometry.mesh import Mesh, measure_condition
@@ -30,7 +30,9 @@ def make_file_mesh(vertices_mm: Floats, triangles: Ints, label: Ints, what: str)
     """Returns the mesh as a file holds it, and the labels (m,) of its triangles.
 
     Args:
-        vertices_mm: (n, 3). triangles: (k, 3). label: (k,) a number per triangle that follows it.
+        vertices_mm: (n, 3).
+        triangles: (k, 3).
+        label: (k,) a number per triangle that follows it.
         what: what the mesh is, for the message.
 
     Raises:
@@ -106,7 +108,8 @@ def _short_edges(vertices: Floats, triangles: Ints) -> Ints:
     """Returns the edges (k, 2), lower vertex first, shorter than the welding distance."""
     edges = np.concatenate([triangles[:, [0, 1]], triangles[:, [1, 2]], triangles[:, [2, 0]]])
     edges = edges[edges[:, 0] < edges[:, 1]]
-    return edges[((vertices[edges[:, 1]] - vertices[edges[:, 0]]) ** 2).sum(axis=1) < WELD_MM**2]
+    short = ((vertices[edges[:, 1]] - vertices[edges[:, 0]]) ** 2).sum(axis=1) < WELD_MM**2
+    return np.asarray(edges[short], dtype=np.int64)
 
 
 def _merged(triangles: Ints, edges: Ints, n_vertices: int) -> Ints:
@@ -122,7 +125,7 @@ def _merged(triangles: Ints, edges: Ints, n_vertices: int) -> Ints:
     while True:
         deeper = into[into]
         if (deeper == into).all():
-            return into[triangles]
+            return np.asarray(into[triangles], dtype=np.int64)
         into = deeper
 
 
