@@ -1,0 +1,97 @@
+"""The density as it was read, with the channel graph over it: nodes N, branches B, dead ends, dropped pieces."""
+
+from __future__ import annotations
+
+import math
+
+import numpy as np
+from numpy.typing import NDArray
+
+from morph.core.arrays import Floats
+from morph.layout.density import Density
+from morph.layout.graph import ChannelGraph, NodeKind
+from morph.report.along import middle_index
+from morph.report.drawing import FAINT, INK, PAPER, Drawing, number
+from morph.report.legend import PORT_COLOUR
+from morph.report.png import png_address
+from morph.settings.job import Samples
+
+WIDTH_PX, HEIGHT_PX = 820.0, 720.0
+LARGEST_PX = 1024
+LINE, DEAD, DROPPED = "#d1480f", "#a4161a", "#6b4c9a"
+DARKEST = 190
+"""Coolant is drawn in this much grey of 255, so that lines and names read on top of it."""
+
+
+def density_picture(density: Density) -> NDArray[np.uint8]:
+    """Returns the density as grey levels (rows, columns), top row first, coolant dark; large ones as block means."""
+    value = density.value
+    block = math.ceil(max(value.shape) / LARGEST_PX)
+    if block > 1:
+        rows, columns = (n // block * block for n in value.shape)
+        value = value[:rows, :columns].reshape(rows // block, block, columns // block, block).mean(axis=(1, 3))
+    return np.rint(255.0 - DARKEST * np.clip(value[::-1], 0.0, 1.0)).astype(np.uint8)
+
+
+def _size(drawing: Drawing, width_mm: float, height_mm: float) -> str:
+    return f'width="{number(width_mm * drawing.px_per_mm)}" height="{number(height_mm * drawing.px_per_mm)}"'
+
+
+def _picture(drawing: Drawing, density: Density) -> None:
+    """Places the picture on the sheet; a value at a grid node reaches half a cell beyond the sheet and is clipped."""
+    (width, height), (rows, columns) = density.size_mm, density.value.shape
+    over = (0.0, 0.0)
+    if density.samples is Samples.NODES:
+        over = (0.5 * width / (columns - 1), 0.5 * height / (rows - 1))
+    x, y = drawing.xy((-over[0], height + over[1]))
+    size = _size(drawing, width + 2.0 * over[0], height + 2.0 * over[1])
+    left, top = drawing.xy((0.0, height))
+    inside = _size(drawing, width, height)
+    drawing.define(f'<clipPath id="{drawing.ident}-sheet"><rect x="{left}" y="{top}" {inside}/></clipPath>')
+    drawing.raw(
+        f'<image x="{x}" y="{y}" {size} preserveAspectRatio="none" clip-path="url(#{drawing.ident}-sheet)" '
+        f'href="{png_address(density_picture(density))}"/>'
+    )
+    drawing.raw(f'<rect x="{left}" y="{top}" {inside} fill="none" stroke="{FAINT}"/>')
+
+
+def _node(drawing: Drawing, at: Floats, kind: NodeKind, name: str) -> None:
+    x, y = drawing.xy((float(at[0]), float(at[1])))
+    colour = {NodeKind.PORT: PORT_COLOUR, NodeKind.DEAD_END: DEAD}.get(kind, INK)
+    if kind is NodeKind.DEAD_END:
+        drawing.raw(f'<path d="M{x} {y}m-5 -5l10 10m0 -10l-10 10" stroke="{colour}" stroke-width="2.4"/>')
+    else:
+        drawing.raw(f'<circle cx="{x}" cy="{y}" r="4.5" fill="{colour}" stroke="{PAPER}" stroke-width="1.4"/>')
+    above = (float(at[0]) + drawing.mm(8.0), float(at[1]) + drawing.mm(9.0))
+    drawing.label(above, name, size_px=11.0, colour=colour, anchor="start", bold=True)
+
+
+def draw_density(density: Density, graph: ChannelGraph) -> str:
+    """Returns the density with nodes, branches and dropped pieces as SVG, the way the drawing reads."""
+    width, height = graph.size_mm
+    margin = 0.05 * max(width, height)
+    low, high = (-margin, -margin), (width + margin, height + margin)
+    wide = min(WIDTH_PX, HEIGHT_PX * (high[0] - low[0]) / (high[1] - low[1]))
+    drawing = Drawing(low, high, wide, "density", "The density as read, with the channel graph over it")
+    _picture(drawing, density)
+    for branch in graph.branches:
+        data = drawing.path_data(branch.sheet_mm)
+        drawing.shape(data, fill="none", stroke=PAPER, stroke_width="4.5", stroke_linecap="round")
+        drawing.shape(data, fill="none", stroke=LINE, stroke_width="2.2", stroke_linecap="round")
+    for item in graph.dropped:
+        x, y = drawing.xy(item.sheet_mm)
+        drawing.raw(
+            f'<circle cx="{x}" cy="{y}" r="7" fill="none" stroke="{DROPPED}" stroke-width="2" stroke-dasharray="3 2"/>'
+        )
+    for bridge in graph.bridges:
+        data = drawing.path_data(bridge.path_mm)
+        drawing.shape(data, fill="none", stroke=DROPPED, stroke_width="2.4", stroke_dasharray="2 4")
+        x, y = bridge.path_mm[middle_index(bridge.path_mm)].tolist()
+        drawing.label((x, y + drawing.mm(9.0)), bridge.id, size_px=11.0, colour=DROPPED, bold=True)
+    for node in graph.nodes:
+        _node(drawing, node.sheet_mm, node.kind, node.id)
+    for branch in graph.branches:
+        x, y = branch.sheet_mm[middle_index(branch.sheet_mm)].tolist()
+        drawing.label((x, y), branch.id, size_px=11.0, colour=LINE, bold=True)
+    drawing.scale_bar((0.0, -0.7 * margin), 0.2)
+    return drawing.svg()

@@ -1,0 +1,79 @@
+"""The signs of the sheet pictures and their legend: colour scale in mm, hatching, one shape per port role."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from morph.report.colour import COLOUR_STEPS, map_hex
+from morph.report.drawing import INK, PAPER, Drawing, Point, number
+from morph.settings.job import Role
+
+PORT_COLOUR = "#7a1fa2"
+TICKS = 5
+
+
+def port_mark(x: float, y: float, role: Role) -> str:
+    """Returns a port's sign at pixel (x, y): in a filled disc with a dot, out an open ring, access a crossed square."""
+    line = f'stroke="{PORT_COLOUR}" stroke-width="2.4"'
+    if role is Role.IN:
+        return (
+            f'<circle cx="{x:g}" cy="{y:g}" r="7.5" fill="{PORT_COLOUR}" stroke="{PAPER}" stroke-width="1.5"/>'
+            f'<circle cx="{x:g}" cy="{y:g}" r="2.2" fill="{PAPER}"/>'
+        )
+    if role is Role.OUT:
+        return f'<circle cx="{x:g}" cy="{y:g}" r="7" fill="{PAPER}" {line}/>'
+    return (
+        f'<rect x="{x - 6.5:g}" y="{y - 6.5:g}" width="13" height="13" fill="{PAPER}" {line}/>'
+        f'<path d="M{x - 6.5:g} {y - 6.5:g}l13 13m0 -13l-13 13" {line}/>'
+    )
+
+
+def _words(x: float, y: float, words: str, anchor: str = "start") -> str:
+    return f'<text x="{x:g}" y="{y:g}" dy="0.35em" font-size="12" fill="{INK}" text-anchor="{anchor}">{words}</text>'
+
+
+def _colour_bar(drawing: Drawing, ends_mm: tuple[float, float], top: float) -> None:
+    """Draws the colour scale with its ticks in mm."""
+    left, wide, high = 12.0, 196.0, 12.0
+    drawing.raw(_words(left, top, "wall to the finished part face, mm"))
+    step = wide / COLOUR_STEPS
+    for index, colour in enumerate(map_hex(np.arange(COLOUR_STEPS) / (COLOUR_STEPS - 1))):
+        x = number(left + index * step)
+        drawing.raw(f'<rect x="{x}" y="{top + 12:g}" width="{number(step + 0.5)}" height="{high:g}" fill="{colour}"/>')
+    for place in np.linspace(0.0, 1.0, TICKS).tolist():
+        x = left + place * wide
+        drawing.raw(f'<path d="M{number(x)} {top + 24:g}v5" stroke="{INK}"/>')
+        value = ends_mm[0] + place * (ends_mm[1] - ends_mm[0])
+        drawing.raw(_words(float(number(x)), top + 37.0, f"{value:.2f}".rstrip("0").rstrip("."), "middle"))
+
+
+def draw_sheet_legend(drawing: Drawing, ends_mm: tuple[float, float], hatch: str, high_px: float) -> None:
+    """Draws the legend in the lowest `high_px` of the drawing.
+
+    Args:
+        drawing: the sheet.
+        ends_mm: ends of the colour scale.
+        hatch: paint of branches without through-flow.
+        high_px: height kept free for it.
+    """
+    top = drawing.height_px - high_px
+    drawing.scale_bar((drawing.low_mm[0] + drawing.mm(12.0), drawing.low_mm[1] + drawing.mm(8.0)), 0.2)
+    _colour_bar(drawing, ends_mm, top + 14.0)
+    x, y = 244.0, top + 14.0
+    for role, words in ((Role.IN, "in"), (Role.OUT, "out"), (Role.ACCESS, "access")):
+        drawing.raw(port_mark(x, y, role) + _words(x + 13.0, y, words))
+        x += 38.0 + 4.5 * len(words)
+    x = 236.0
+    fills = f'fill="#b9b58c" stroke="{INK}"'
+    drawing.raw(f'<rect x="{x:g}" y="{top + 33:g}" width="26" height="12" {fills}/>')
+    edge = f'stroke="{PAPER}" stroke-width="1.6" stroke-dasharray="4 3"'
+    drawing.raw(f'<rect x="{x:g}" y="{top + 33:g}" width="26" height="12" fill="{hatch}" {edge}/>')
+    drawing.raw(_words(x + 32.0, top + 39.0, "no through-flow"))
+    drawing.raw(f'<circle cx="{x + 13:g}" cy="{top + 64:g}" r="9" fill="none" stroke="{INK}" stroke-width="2.4"/>')
+    drawing.raw(_words(x + 32.0, top + 64.0, "worst wall"))
+
+
+def draw_port(drawing: Drawing, at: Point, role: Role) -> None:
+    """Draws a port's sign at a place in mm."""
+    x, y = drawing.xy(at)
+    drawing.raw(port_mark(float(x), float(y), role))

@@ -1,0 +1,39 @@
+"""Everything a finished build hands to the report, in one record."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+from morph.body.blank import Blank
+from morph.body.plan import ChannelPlan
+from morph.check.fields import ChannelFields
+from morph.core.verdict import Notice, Verdict
+from morph.layout.density import Density
+from morph.layout.graph import ChannelGraph
+from morph.settings.job import Job
+from morph.solid.result import ChannelSolid, Insert
+from morph.surface.wrap import WrappedGraph
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class BuildRecords:
+    """The records of one build, stage by stage.
+
+    Args:
+        job: the settings it ran with.
+        density, graph, wrapped, blank, plan, solid, insert: what each stage made.
+        verdicts: what the checks say. notices: degraded or surprising paths of any stage.
+        fields: figures along the channels and over their wall, for pictures; None when not measured.
+    """
+
+    job: Job
+    density: Density
+    graph: ChannelGraph
+    wrapped: WrappedGraph
+    blank: Blank
+    plan: ChannelPlan
+    solid: ChannelSolid
+    insert: Insert
+    verdicts: tuple[Verdict, ...]
+    notices: tuple[Notice, ...] = ()
+    fields: ChannelFields | None = None

@@ -1,0 +1,183 @@
+"""The drawing of the worst wall: metal hatched, channel empty, the wall dimensioned, and where it lies."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from morph.body.blank import Blank
+from morph.core.arrays import Floats
+from morph.core.verdict import Verdict
+from morph.report.colour import OUTCOME_COLOUR, OUTCOME_SIGN, OUTCOME_WORD
+from morph.report.cut import Loop
+from morph.report.drawing import INK, PAPER, Drawing
+from morph.report.section import CHANNEL, WallSection
+
+WINDOW_PX, STRIP_PX = 400.0, 92.0
+METAL = "#c9d0d8"
+HATCH = "#9aa5b1"
+CHANNEL_LINE = "#0b5394"
+STOCK_LINE = "#6b4c9a"
+LEAST_HALF_WINDOW_MM = 5.0
+FINISHED_NEAR = 0.02
+
+
+def _metal(drawing: Drawing, loops: tuple[Loop, ...], hatch: str) -> None:
+    """Fills the metal: between the outlines, by the even-odd rule, so holes and channels stay empty."""
+    data = "".join(drawing.path_data(loop.points_mm, closed=True) for loop in loops)
+    drawing.shape(data, fill=METAL, fill_rule="evenodd")
+    drawing.shape(data, fill=hatch, fill_rule="evenodd")
+
+
+def _runs(loop: Loop, label: int) -> list[Floats]:
+    """Returns the stretches (k, 2) of `loop` whose pieces carry `label`, in order along the loop."""
+    mark = loop.label == label
+    n = len(mark)
+    if mark.all():
+        return [np.vstack([loop.points_mm, loop.points_mm[:1]])]
+    starts = np.flatnonzero(mark & ~np.roll(mark, 1))
+    runs = []
+    for start in starts.tolist():
+        length = 1
+        while mark[(start + length) % n]:
+            length += 1
+        runs.append(loop.points_mm[(start + np.arange(length + 1)) % n])
+    return runs
+
+
+def _outlines(drawing: Drawing, loops: tuple[Loop, ...], width_px: float) -> None:
+    for label, colour, width in ((0, INK, width_px), (CHANNEL, CHANNEL_LINE, 1.6 * width_px)):
+        data = "".join(drawing.path_data(run) for loop in loops for run in _runs(loop, label))
+        if data:
+            drawing.shape(data, fill="none", stroke=colour, stroke_width=f"{width:g}", stroke_linejoin="round")
+
+
+def _finished_skin(section: WallSection, blank: Blank) -> list[Floats]:
+    """Returns the finished faces under machining stock as polylines (k, 2): the printed skin moved in by the stock."""
+    out = []
+    for face in blank.faces:
+        if face.stock_mm <= 0.0:
+            continue
+        for loop in section.loops:
+            for run in _runs(loop, 0):
+                space = section.plane.space_mm(run)
+                depth = face.distance_mm(space)
+                on = np.abs(depth + face.stock_mm) < FINISHED_NEAR
+                moved = space + depth[:, None] * face.outward(space)
+                if int(on.sum()) >= 2:
+                    out.append(section.plane.flat_mm(moved[on]))
+    return out
+
+
+def _arrow(drawing: Drawing, tip: Floats, away: Floats, colour: str) -> None:
+    """A slim arrow head with its tip at `tip` that comes from the direction `away`."""
+    side = np.array([-away[1], away[0]])
+    long, wide = drawing.mm(9.0), drawing.mm(3.2)
+    head = np.array([tip, tip + long * away + wide * side, tip + long * away - wide * side])
+    drawing.shape(drawing.path_data(head, closed=True), fill=colour)
+
+
+def _dimension(drawing: Drawing, section: WallSection) -> None:
+    """Draws the wall between two arrows from outside, and its value with sign and limit beside it."""
+    colour = OUTCOME_COLOUR[section.verdict.outcome]
+    a, b = section.channel_side_mm, section.far_side_mm
+    length = section.drawn_mm
+    along = (b - a) / length if length > 0.0 else np.array([1.0, 0.0])
+    drawing.line(tuple(a), tuple(b), colour, 2.6)
+    for tip, away in ((a, -along), (b, along)):
+        _arrow(drawing, tip, away, colour)
+        drawing.line(tuple(tip), tuple(tip + drawing.mm(24.0) * away), colour, 1.3)
+    _dimension_words(drawing, section.verdict, colour, along)
+
+
+def _dimension_words(drawing: Drawing, verdict: Verdict, colour: str, along: Floats) -> None:
+    """Writes value and limit on a plate beside the middle of the dimension line."""
+    value = f"{verdict.value:.2f} mm {OUTCOME_SIGN[verdict.outcome]}"
+    limit = "" if verdict.limit is None else f"at least {verdict.limit:.2f} + {verdict.band:.2f} band"
+    wide, high = max(10.0 * len(value), 6.4 * len(limit)) + 14.0, 42.0
+    square = np.array([-along[1], along[0]]) * (1.0 if along[0] >= 0.0 else -1.0)
+    reach = 0.5 * (abs(square[0]) * wide + abs(square[1]) * high) + 14.0
+    middle = drawing.mm(reach) * square
+    x, y = drawing.xy(tuple(middle))
+    left, top = float(x) - 0.5 * wide, float(y) - 0.5 * high
+    drawing.raw(
+        f'<rect x="{left:.1f}" y="{top:.1f}" width="{wide:.1f}" height="{high:g}" rx="4" fill="{PAPER}" '
+        f'stroke="{colour}" stroke-width="1.2"/>'
+    )
+    drawing.label((middle[0], middle[1] + drawing.mm(8.0)), value, size_px=18.0, colour=colour, bold=True)
+    drawing.label((middle[0], middle[1] - drawing.mm(11.0)), limit, size_px=11.5)
+
+
+def _bounds(loops: tuple[Loop, ...]) -> tuple[Floats, Floats]:
+    points = np.concatenate([loop.points_mm for loop in loops])
+    return points.min(axis=0), points.max(axis=0)
+
+
+def _map_of_cut(section: WallSection, half_mm: float) -> str:
+    """Returns a small drawing of the whole cut with the window marked."""
+    low, high = _bounds(section.loops)
+    middle, half = 0.5 * (low + high), 0.56 * float((high - low).max())
+    title = "The whole cut, with the window above marked"
+    small = Drawing(tuple(middle - half), tuple(middle + half), STRIP_PX, "section-map", title)
+    data = "".join(small.path_data(loop.points_mm, closed=True) for loop in section.loops)
+    small.shape(data, fill=METAL, fill_rule="evenodd", stroke=INK, stroke_width="0.6")
+    frame = np.array([[-1, -1], [1, -1], [1, 1], [-1, 1]]) * half_mm
+    colour = OUTCOME_COLOUR[section.verdict.outcome]
+    small.shape(small.path_data(frame, closed=True), fill="none", stroke=colour, stroke_width="2")
+    return small.svg()
+
+
+def _legend(drawing: Drawing, section: WallSection, hatch: str, has_stock: bool) -> None:
+    """Writes below the window what its lines and fills mean, beside the map of the whole cut."""
+    view = "Build direction points up." if section.build_is_up else "Seen against the build direction."
+    rows = [("metal", "metal, as written to insert.stl"), ("channel", "channel wall; the channel is empty")]
+    rows += [("stock", "finished face, under machining stock")] if has_stock else []
+    x, y = STRIP_PX + 20.0, WINDOW_PX + 18.0
+    for kind, words in rows:
+        if kind == "metal":
+            for fill in (METAL, hatch):
+                drawing.raw(f'<rect x="{x:g}" y="{y - 7:g}" width="26" height="14" fill="{fill}" stroke="{INK}"/>')
+        else:
+            colour, dash = (CHANNEL_LINE, "") if kind == "channel" else (STOCK_LINE, ' stroke-dasharray="7 4"')
+            drawing.raw(f'<path d="M{x:g} {y:g}h26" stroke="{colour}" stroke-width="2.4" fill="none"{dash}/>')
+        drawing.raw(f'<text x="{x + 34:g}" y="{y:g}" dy="0.35em" font-size="12" fill="{INK}">{words}</text>')
+        y += 20.0
+    drawing.raw(f'<text x="{x:g}" y="{y:g}" dy="0.35em" font-size="12" fill="{INK}">{view}</text>')
+
+
+def draw_section(section: WallSection, blank: Blank, bore_mm: float) -> str:
+    """Returns the section as SVG: about two bores of surroundings around the wall, and a map of the whole cut.
+
+    Args:
+        section: the cut.
+        blank: for finished faces under machining stock.
+        bore_mm: bore of the channel beside the wall; sets the window.
+    """
+    half = max(LEAST_HALF_WINDOW_MM, 0.5 * section.drawn_mm + 1.25 * bore_mm)
+    below = 2.0 * half * STRIP_PX / WINDOW_PX
+    verdict = section.verdict
+    drawing = Drawing(
+        (-half, -half - below),
+        (half, half),
+        WINDOW_PX,
+        "section",
+        "Section through the worst wall",
+        f"{OUTCOME_WORD[verdict.outcome]}: {verdict.text}",
+    )
+    square = f'width="{WINDOW_PX:g}" height="{WINDOW_PX:g}"'
+    drawing.define(f'<clipPath id="section-window"><rect {square}/></clipPath>')
+    hatch = drawing.hatch("metal", HATCH, 9.0, 45.0, 0.5)
+    drawing.raw('<g clip-path="url(#section-window)">')
+    _metal(drawing, section.loops, hatch)
+    _outlines(drawing, section.loops, 1.4)
+    finished = _finished_skin(section, blank)
+    for line in finished:
+        data = drawing.path_data(line)
+        drawing.shape(data, fill="none", stroke=STOCK_LINE, stroke_width="1.6", stroke_dasharray="7 4")
+    _dimension(drawing, section)
+    drawing.scale_bar((-half + drawing.mm(14.0), -half + drawing.mm(12.0)))
+    drawing.raw(
+        f'</g><rect x="0.5" y="0.5" width="{WINDOW_PX - 1:g}" height="{WINDOW_PX - 1:g}" fill="none" stroke="{HATCH}"/>'
+    )
+    drawing.raw(f'<g transform="translate(4 {WINDOW_PX + 2:g})">{_map_of_cut(section, half)}</g>')
+    _legend(drawing, section, hatch, bool(finished))
+    return drawing.svg()

@@ -1,0 +1,178 @@
+"""The sheet seen from the part side: every channel as a band of its bore, coloured by the wall to the part face.
+
+A drawing that reads from the metal side is mirrored here, and the caption says so; places are given
+in the drawing's own coordinates all the same. Branches without through-flow are hatched and dashed,
+ports have a shape per role: nothing is told by colour alone.
+"""
+
+from __future__ import annotations
+
+import itertools
+from dataclasses import dataclass
+
+import numpy as np
+
+from morph.body.plan import ChannelPlan, PlanBranch
+from morph.core.arrays import Floats, Ints
+from morph.layout.graph import NodeKind
+from morph.report.along import band_edges_mm, middle_index, sheet_branches, sheet_of
+from morph.report.colour import COLOUR_STEPS, map_hex
+from morph.report.drawing import FAINT, INK, PAPER, Drawing, Point, number
+from morph.report.legend import PORT_COLOUR, draw_port, draw_sheet_legend
+from morph.settings.job import Role, SeenFrom
+
+WIDTH_PX, LEGEND_PX = 400.0, 92.0
+SHEET = "#f7f8fa"
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class SheetScene:
+    """What the sheet picture shows.
+
+    Args:
+        plan: the channels. size_mm: of the sheet. seen_from: which way the drawing reads.
+        wall_mm: the wall to the part face along each channel, by branch id.
+        roles: role of each port by name.
+        worst: branch id and place (x, y) of the worst wall, or None.
+    """
+
+    plan: ChannelPlan
+    size_mm: tuple[float, float]
+    seen_from: SeenFrom
+    wall_mm: dict[str, Floats]
+    roles: dict[str, Role]
+    worst: tuple[str, tuple[float, float] | None] | None
+
+    @property
+    def mirrored(self) -> bool:
+        """Whether the part side shows the drawing mirrored."""
+        return self.seen_from is SeenFrom.METAL
+
+    def seen(self, sheet_mm: Floats) -> Floats:
+        """Returns sheet points (k, 2) as seen from the part side."""
+        points = np.array(sheet_mm, dtype=np.float64).reshape(-1, 2)
+        if self.mirrored:
+            points[:, 0] = self.size_mm[0] - points[:, 0]
+        return points
+
+    def wall_range_mm(self) -> tuple[float, float]:
+        """Returns the ends of the colour scale, in steps of half a millimetre around the walls shown."""
+        walls = np.concatenate(list(self.wall_mm.values()))
+        low, high = np.floor(2.0 * walls.min()) / 2.0, np.ceil(2.0 * walls.max()) / 2.0
+        return (float(low), float(high)) if high > low else (float(low), float(low) + 0.5)
+
+
+def _band(drawing: Drawing, points: Floats, bore_mm: Floats, step: Ints) -> None:
+    """Draws the band around `points` in one piece per run of equal colour step, with round ends."""
+    left, right = band_edges_mm(points, bore_mm)
+    colours = map_hex(np.arange(COLOUR_STEPS) / (COLOUR_STEPS - 1))
+    for end in (0, -1):
+        _disc(drawing, points[end], bore_mm[end], colours[int(step[end])], 0.0)
+    of_piece = np.minimum(step[:-1], step[1:])
+    cuts = [0, *(np.flatnonzero(np.diff(of_piece)) + 1).tolist(), len(of_piece)]
+    for a, b in itertools.pairwise(cuts):
+        outline = np.concatenate([left[a : b + 1], right[a : b + 1][::-1]])
+        colour = colours[int(of_piece[a])]
+        # a hairline in the same colour closes the seam between neighbouring pieces
+        drawing.shape(drawing.path_data(outline, closed=True), fill=colour, stroke=colour, stroke_width="0.6")
+
+
+def _disc(drawing: Drawing, at: Floats, width_mm: float, colour: str, rim_px: float) -> None:
+    x, y = drawing.xy((float(at[0]), float(at[1])))
+    radius = number(0.5 * float(width_mm) * drawing.px_per_mm + rim_px)
+    drawing.raw(f'<circle cx="{x}" cy="{y}" r="{radius}" fill="{colour}"/>')
+
+
+def _rim(drawing: Drawing, points: Floats, bore_mm: Floats) -> None:
+    """Draws a dark edge around a band, below all bands, so that crossings and joints stay clean."""
+    left, right = band_edges_mm(points, bore_mm)
+    outline = drawing.path_data(np.concatenate([left, right[::-1]]), closed=True)
+    drawing.shape(outline, fill=INK, stroke=INK, stroke_width="2")
+    for end in (0, -1):
+        _disc(drawing, points[end], bore_mm[end], INK, 1.0)
+
+
+def _no_flow(drawing: Drawing, points: Floats, bore_mm: Floats, hatch: str) -> None:
+    """Hatches a band and dashes its edge: no coolant passes through it."""
+    left, right = band_edges_mm(points, bore_mm)
+    outline = drawing.path_data(np.concatenate([left, right[::-1]]), closed=True)
+    drawing.shape(outline, fill=hatch, stroke=PAPER, stroke_width="1.6", stroke_dasharray="4 3")
+
+
+def draw_ports(drawing: Drawing, scene: SheetScene) -> None:
+    """Draws the symbol and the name of every port on the sheet; names stay inside the drawing."""
+    wide = drawing.high_mm[0] - drawing.low_mm[0]
+    for node in scene.plan.nodes:
+        if node.kind is not NodeKind.PORT or node.sheet_mm is None or node.port is None:
+            continue
+        x, y = scene.seen(node.sheet_mm)[0].tolist()
+        role = scene.roles.get(node.port, Role.ACCESS)
+        draw_port(drawing, (x, y), role)
+        share = (x - drawing.low_mm[0]) / wide
+        anchor = "start" if share < 0.2 else "end" if share > 0.8 else "middle"
+        shift = drawing.mm(18.0) * (1.0 if y > 0.5 * scene.size_mm[1] else -1.0)
+        words = f"{node.port} ({role.value})"
+        drawing.label((x, y + shift), words, size_px=12.0, colour=PORT_COLOUR, anchor=anchor, bold=True)
+
+
+def _names(drawing: Drawing, scene: SheetScene, branches: list[PlanBranch]) -> None:
+    """Names the branches without through-flow and the one with the worst wall."""
+    named = {b.id for b in branches if not b.through_flow}
+    if scene.worst is not None:
+        named.add(scene.worst[0])
+    for branch in branches:
+        if branch.id in named:
+            points = scene.seen(sheet_of(branch))
+            x, y = points[middle_index(points)].tolist()
+            drawing.label((x, y), branch.id, size_px=12.0, bold=True)
+
+
+def _worst(drawing: Drawing, scene: SheetScene) -> None:
+    """Rings the place of the worst wall."""
+    if scene.worst is None or scene.worst[1] is None:
+        return
+    x, y = drawing.xy(tuple(scene.seen(np.array(scene.worst[1]))[0].tolist()))
+    for colour, width in ((PAPER, "5.5"), (INK, "2.4")):
+        drawing.raw(f'<circle cx="{x}" cy="{y}" r="12" fill="none" stroke="{colour}" stroke-width="{width}"/>')
+
+
+def sheet_window(size_mm: tuple[float, float], square_px: float) -> tuple[Point, Point, float]:
+    """Returns lower left and upper right corner and drawn width of a window with a margin for names.
+
+    A sheet wider than high fills the width; a higher one is narrowed so that it stays `square_px` high.
+    """
+    margin = 0.085 * max(size_mm)
+    low, high = (-margin, -margin), (size_mm[0] + margin, size_mm[1] + margin)
+    tall = (high[1] - low[1]) / (high[0] - low[0])
+    if tall > 1.0:
+        extra = 0.5 * ((high[1] - low[1]) - (high[0] - low[0]))
+        low, high = (low[0] - extra, low[1]), (high[0] + extra, high[1])
+    return low, high, square_px
+
+
+def draw_sheet(scene: SheetScene) -> str:
+    """Returns the sheet from the part side as SVG, with its legend in mm below it."""
+    low, high, width_px = sheet_window(scene.size_mm, WIDTH_PX)
+    below = (high[0] - low[0]) * LEGEND_PX / width_px
+    title = "The sheet seen from the part side, coloured by the wall to the finished part face"
+    drawing = Drawing((low[0], low[1] - below), high, width_px, "sheet", title)
+    width, height = scene.size_mm
+    frame = np.array([[0, 0], [width, 0], [width, height], [0, height]], dtype=float)
+    drawing.shape(drawing.path_data(frame, closed=True), fill=SHEET, stroke=FAINT, stroke_width="1")
+    hatch = drawing.hatch("no-flow", INK, 6.0, 45.0, 0.6)
+    branches = sheet_branches(scene.plan)
+    wall_low, wall_high = scene.wall_range_mm()
+    for branch in branches:
+        _rim(drawing, scene.seen(sheet_of(branch)), branch.bore_mm)
+    for branch in branches:
+        ratio = (scene.wall_mm[branch.id] - wall_low) / (wall_high - wall_low)
+        step = np.clip(np.rint(ratio * (COLOUR_STEPS - 1)), 0, COLOUR_STEPS - 1).astype(np.int64)
+        _band(drawing, scene.seen(sheet_of(branch)), branch.bore_mm, step)
+    for branch in branches:
+        if not branch.through_flow:
+            _no_flow(drawing, scene.seen(sheet_of(branch)), branch.bore_mm, hatch)
+    _worst(drawing, scene)
+    draw_ports(drawing, scene)
+    _names(drawing, scene, branches)
+    draw_sheet_legend(drawing, (wall_low, wall_high), hatch, LEGEND_PX)
+    return drawing.svg()

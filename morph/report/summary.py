@@ -1,0 +1,262 @@
+"""summary.json as a dict: one block per stage, every number with its unit in its key.
+
+The same dict serves the file, the page and ``--json``. Nothing in it differs from run to run: no
+time, no path, no host. A stage that did not run is None and stands under ``not_checked``.
+"""
+
+from __future__ import annotations
+
+import dataclasses
+import platform
+from enum import Enum
+from importlib import metadata
+from pathlib import PurePath
+from typing import Any
+
+import numpy as np
+
+from morph.body.plan import BranchKind
+from morph.core.fingerprint import fingerprint
+from morph.core.units import mass_g
+from morph.core.verdict import Notice, Outcome, Verdict
+from morph.geometry.mesh import Mesh, measure_condition, mesh_area_mm2, mesh_volume_mm3
+from morph.layout.graph import ChannelGraph, NodeKind, count_loops
+from morph.report.headline import five_figures, sorted_verdicts, worst_outcome
+from morph.report.records import BuildRecords
+
+SCHEMA = 1
+LIBRARIES = ("numpy", "scipy", "scikit-image", "shapely", "manifold3d", "numba", "plotly", "jinja2")
+STAGES_NOT_RUN = {
+    "flow": "Flow, velocity and pressure drop were not calculated.",
+    "temperature": "Face temperature and cooling time were not calculated.",
+}
+
+Block = dict[str, Any]
+
+
+def _layout(graph: ChannelGraph) -> Block:
+    number = {node.id: index for index, node in enumerate(graph.nodes)}
+    ends = [(number[branch.start], number[branch.end]) for branch in graph.branches]
+    pieces, loops = count_loops(len(graph.nodes), ends)
+    dead = [node for node in graph.nodes if node.kind is NodeKind.DEAD_END]
+    blind = {node.id: [b for b in graph.branches if node.id in (b.start, b.end)] for node in dead}
+    return {
+        "components": pieces,
+        "loops": loops,
+        "area_ratio": graph.area_ratio,
+        "level_ratio": graph.level,
+        "size_mm": graph.size_mm,
+        "nodes": len(graph.nodes),
+        "branches": len(graph.branches),
+        "length_mm": sum(branch.length_mm for branch in graph.branches),
+        "fit_deviation_max_mm": max((branch.deviation_mm for branch in graph.branches), default=0.0),
+        "dead_ends": len(dead),
+        "dead_end_places": [
+            {"node": node.id, "branch": branch.id, "length_mm": branch.length_mm, "sheet_mm": node.sheet_mm}
+            for node in dead
+            for branch in blind[node.id]
+        ],
+        "dropped": [
+            {"reason": item.reason, "sheet_mm": item.sheet_mm, "area_mm2": item.area_mm2} for item in graph.dropped
+        ],
+        "suggestions": [
+            {
+                "id": item.id,
+                "node": item.node,
+                "onto": item.onto,
+                "gap_mm": item.gap_mm,
+                "lowest_density_ratio": item.lowest_density,
+                "likely": item.likely,
+                "sheet_mm": item.path_mm[0],
+            }
+            for item in graph.bridges
+        ],
+        "levels": [{"level_ratio": i.level, "pieces": i.pieces, "holes": i.holes} for i in graph.levels],
+    }
+
+
+def _carrier(records: BuildRecords) -> Block:
+    wrapped, settings = records.wrapped, records.job.carrier
+    return {
+        **dataclasses.asdict(wrapped.distortion),
+        "kind": "cylinder",
+        "metal": settings.metal,
+        "true_at": settings.true_at,
+        "radius_mm": settings.radius_mm,
+        "depth_mm": wrapped.depth_mm,
+        "seen_from": records.job.layout.seen_from,
+    }
+
+
+def _body(records: BuildRecords) -> Block:
+    plan = records.plan
+    channels = [branch for branch in plan.branches if branch.kind is BranchKind.CHANNEL]
+    leads = [branch for branch in plan.branches if branch.kind is BranchKind.LEAD]
+    bores = [float(v) for branch in plan.branches for v in (branch.bore_mm.min(), branch.bore_mm.max())]
+    length = sum(branch.length_mm for branch in channels)
+    capped = sum(cap.length_mm for cap in plan.caps)
+    return {
+        "circuits": len(plan.circuits),
+        "branches": len(channels),
+        "leads": len(leads),
+        "channel_length_mm": length,
+        "lead_length_mm": sum(branch.length_mm for branch in leads),
+        "bore_min_mm": min(bores, default=None),
+        "bore_max_mm": max(bores, default=None),
+        "branches_without_through_flow": [branch.id for branch in plan.branches if not branch.through_flow],
+        "capped_length_mm": capped,
+        "capped_ratio": capped / length if length > 0.0 else 0.0,
+        "capped_area_mm2": sum(cap.area_mm2 for cap in plan.caps),
+        "caps": [dataclasses.asdict(cap) for cap in plan.caps],
+        "merges": [
+            {"branches": merge.branch_ids, "xyz_mm": merge.xyz_mm, "wall_mm": merge.wall_mm} for merge in plan.merges
+        ],
+    }
+
+
+def _mesh(mesh: Mesh) -> Block:
+    condition = measure_condition(mesh)
+    return {
+        "volume_mm3": mesh_volume_mm3(mesh),
+        "area_mm2": mesh_area_mm2(mesh),
+        "triangles": len(mesh.triangles),
+        "genus": condition.genus if condition.closed else None,
+        "watertight": condition.closed,
+        "bodies": condition.bodies,
+    }
+
+
+def _solid(records: BuildRecords) -> Block:
+    solid = records.solid
+    return {
+        **_mesh(solid.trimmed),
+        "h_mm": solid.h_mm,
+        "crossings": solid.crossings,
+        "triangles_before_simplifying": solid.triangles_before,
+    }
+
+
+def _insert(records: BuildRecords) -> Block:
+    insert = records.insert
+    block = _mesh(insert.mesh)
+    density = records.job.printing.profile.density_kg_m3.value
+    low, high = insert.mesh.vertices_mm.min(axis=0), insert.mesh.vertices_mm.max(axis=0)
+    return {
+        **block,
+        "mass_g": mass_g(block["volume_mm3"], density),
+        "density_kg_m3": density,
+        "blank_volume_mm3": insert.blank_volume_mm3,
+        "size_mm": high - low,
+        "openings": len(insert.openings),
+        "openings_declared": len(records.plan.exits),
+        "opening_places": [
+            {"face": item.face, "xyz_mm": item.centre_mm, "diameter_mm": item.diameter_mm} for item in insert.openings
+        ],
+    }
+
+
+def verdict_row(verdict: Verdict) -> Block:
+    """Returns a verdict as its row: the keys of verdicts.csv."""
+    row = dataclasses.asdict(verdict)
+    row["verdict"] = row.pop("outcome")
+    return row
+
+
+def _notice_row(notice: Notice) -> Block:
+    return dataclasses.asdict(notice)
+
+
+def not_checked_rows(verdicts: tuple[Verdict, ...]) -> list[Block]:
+    """Returns what was not checked, why, and what to do instead; stages that did not run are always among them."""
+    rows = [{"what": v.code, "reason": v.text, "hint": v.hint} for v in verdicts if v.outcome is Outcome.NOT_CHECKED]
+    named = {row["what"] for row in rows}
+    rows += [{"what": w, "reason": r, "hint": ""} for w, r in STAGES_NOT_RUN.items() if w not in named]
+    return rows
+
+
+def plain_values(value: Any) -> Any:
+    """Returns records, choices, arrays and paths as mappings, text, lists and base names; numbers stay unrounded."""
+    if dataclasses.is_dataclass(value) and not isinstance(value, type):
+        return {field.name: plain_values(getattr(value, field.name)) for field in dataclasses.fields(value)}
+    if isinstance(value, Enum):
+        return value.value
+    if isinstance(value, PurePath):
+        return value.name
+    if isinstance(value, dict):
+        return {key: plain_values(item) for key, item in value.items()}
+    if isinstance(value, np.ndarray):
+        return value.tolist()
+    if isinstance(value, np.generic):
+        return value.item()
+    if isinstance(value, tuple | list):
+        return [plain_values(item) for item in value]
+    return value
+
+
+def _versions() -> Block:
+    found = {"morph-channels": _version("morph-channels"), "python": platform.python_version(), "summary": SCHEMA}
+    found.update({name: _version(name) for name in LIBRARIES})
+    return found
+
+
+def _version(name: str) -> str | None:
+    try:
+        return metadata.version(name)
+    except metadata.PackageNotFoundError:
+        return None
+
+
+def _fingerprints(records: BuildRecords) -> Block:
+    """Returns hashes of what went in and of what each stage made."""
+    return {
+        "image": {"file": records.density.source, "content": records.density.content},
+        "settings": fingerprint(records.job),
+        "density": fingerprint(records.density),
+        "graph": fingerprint(records.graph),
+        "wrapped": fingerprint(records.wrapped),
+        "blank": fingerprint(records.blank),
+        "plan": fingerprint(records.plan),
+        "channels": fingerprint(records.solid.trimmed),
+        "insert": fingerprint(records.insert.mesh),
+    }
+
+
+def make_summary(records: BuildRecords) -> dict[str, Any]:
+    """Returns what summary.json holds, as plain mappings, lists, text and numbers, before rounding.
+
+    Args:
+        records: of a finished build.
+    """
+    return dict(plain_values(_blocks(records)))
+
+
+def _blocks(records: BuildRecords) -> Block:
+    verdicts = tuple(sorted_verdicts(records.verdicts))
+    figures = five_figures(verdicts, records.plan)
+    printing = records.job.printing
+    return {
+        "name": records.job.name,
+        "headline": {
+            "outcome": worst_outcome(verdicts),
+            "counts": {outcome.value: sum(v.outcome is outcome for v in verdicts) for outcome in Outcome},
+            "figures": [dataclasses.asdict(figure) for figure in figures],
+        },
+        "layout": _layout(records.graph),
+        "carrier": _carrier(records),
+        "body": _body(records),
+        "solid": _solid(records),
+        "insert": _insert(records),
+        "print": {
+            "process": printing.profile.name,
+            "material": printing.profile.material,
+            "build_direction": printing.build_direction,
+            "verdicts": [verdict_row(verdict) for verdict in verdicts],
+        },
+        "flow": None,
+        "thermal": None,
+        "not_checked": not_checked_rows(verdicts),
+        "notices": [_notice_row(notice) for notice in records.notices],
+        "settings": records.job,
+        "versions": _versions(),
+        "fingerprints": _fingerprints(records),
+    }
