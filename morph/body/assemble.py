@@ -77,7 +77,7 @@ def assemble_plan(parts: Parts, blend_mm: float, notices: Sequence[Notice]) -> C
         exits=tuple(_exit(lead, parts.blank) for lead in parts.leads),
         circuits=tuple(tuple(ids[edge] for edge in piece) for piece in connected_pieces(len(nodes), ends)),
         caps=list_caps(branches),
-        merges=find_merges(network, pairs, wall),
+        merges=find_merges(network, pairs, parts.limits),
         blend_mm=blend_mm,
         notices=(*notices, *_room_notices(parts, branches), *_lead_notices(parts.leads)),
     )

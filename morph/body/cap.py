@@ -14,7 +14,8 @@ import numpy as np
 
 from morph.body.blank import Blank
 from morph.body.face import FaceRole
-from morph.body.neighbour import Network, Pairs, count_as_wall, keep_apart_mm, near_pairs
+from morph.body.island import Island, island_samples, measure_island, small_loops
+from morph.body.neighbour import WALL_WAY, Network, Pairs, count_as_wall, keep_apart_mm, near_pairs
 from morph.body.plan import Cap, Merge, PlanBranch
 from morph.body.room import Limits, Room, face_wall_mm, room_to_face_mm
 from morph.core.arrays import Floats
@@ -62,7 +63,7 @@ def fit_bores(network: Network, room: Room, limits: Limits) -> tuple[Network, Pa
     """
     wall = limits.between_mm + limits.band_mm
     bore = np.maximum(np.minimum(network.bore_mm, room.room_mm), limits.least_bore_mm)
-    network = network.with_bores(taper_network(network, bore))
+    network = _keep_islands(network.with_bores(taper_network(network, bore)), limits)
     near = near_pairs(network, float(network.bore_mm.max()) + wall + 1.0)
     for _ in range(ROUNDS):
         pairs = near.only(count_as_wall(network, near, wall))
@@ -71,6 +72,29 @@ def fit_bores(network: Network, room: Room, limits: Limits) -> tuple[Network, Pa
             break
         network = network.with_bores(taper_network(network, lowered))
     return network, near.only(count_as_wall(network, near, wall))
+
+
+def thin_islands(network: Network, limits: Limits) -> list[Island]:
+    """Returns the islands of small loops that are thinner than the process prints, bands included."""
+    wall = limits.process_mm + limits.band_mm
+    longest = 2.0 * WALL_WAY * (float(network.bore_mm.max(initial=0.0)) + limits.between_mm + limits.band_mm)
+    islands = [measure_island(network, loop) for loop in small_loops(network, longest)]
+    return [island for island in islands if island.width_mm < wall - BORE_SLACK_MM]
+
+
+def _keep_islands(network: Network, limits: Limits) -> Network:
+    """Returns the network with the bores around thin islands lowered by what the island lacks."""
+    for _ in range(ROUNDS):
+        bore = network.bore_mm.copy()
+        for island in thin_islands(network, limits):
+            around = island_samples(network, island)
+            lack = limits.process_mm + limits.band_mm - island.width_mm
+            bore[around] = np.minimum(bore[around], np.maximum(network.bore_mm[around] - lack, limits.least_bore_mm))
+        bore = np.minimum(network.bore_mm, bore)
+        if (network.bore_mm - bore).max(initial=0.0) <= BORE_SLACK_MM:
+            break
+        network = network.with_bores(taper_network(network, bore))
+    return network
 
 
 def _share_out(network: Network, pairs: Pairs, wall_mm: float, least_mm: float) -> Floats:
@@ -86,14 +110,17 @@ def _share_out(network: Network, pairs: Pairs, wall_mm: float, least_mm: float) 
     return np.maximum(bore, np.minimum(network.bore_mm, least_mm))
 
 
-def find_merges(network: Network, pairs: Pairs, wall_mm: float) -> tuple[Merge, ...]:
+def find_merges(network: Network, pairs: Pairs, limits: Limits) -> tuple[Merge, ...]:
     """Returns each pair of branches still nearer than their wall, at its worst place, thinnest wall first.
+
+    A small loop whose island is too thin to print is named by two of the branches around it.
 
     Args:
         network: strands with final bores.
         pairs: the pairs that count as walls.
-        wall_mm: wall to keep, bands included.
+        limits: walls and bands.
     """
+    wall_mm = limits.between_mm + limits.band_mm
     left = pairs.distance_mm - keep_apart_mm(network, pairs, 0.0)
     worst: dict[tuple[int, int], int] = {}
     for p in map(int, np.flatnonzero(left < wall_mm - 1e-6)):
@@ -105,6 +132,12 @@ def find_merges(network: Network, pairs: Pairs, wall_mm: float) -> tuple[Merge, 
     for (one, two), p in worst.items():
         x, y, z = (float(v) for v in 0.5 * (network.xyz_mm[pairs.i[p]] + network.xyz_mm[pairs.j[p]]))
         found.append(Merge((network.strands[one].id, network.strands[two].id), (x, y, z), float(left[p])))
+    named = {frozenset(merge.branch_ids) for merge in found}
+    for island in thin_islands(network, limits):
+        ids = (network.strands[island.strands[0]].id, network.strands[island.strands[-1]].id)
+        if frozenset(ids) not in named:
+            x, y, z = (float(value) for value in island.centre_mm)
+            found.append(Merge(ids, (x, y, z), island.width_mm))
     return tuple(sorted(found, key=lambda merge: (merge.wall_mm, merge.branch_ids)))
 
 

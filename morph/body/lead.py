@@ -11,6 +11,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from typing import TypeGuard
 
 import numpy as np
 
@@ -29,6 +30,13 @@ from morph.surface.carrier import Carrier
 
 COARSE_SAMPLES = 64
 CHUNK = 256
+FOR_MESSAGE = 8
+"""Paths judged although the coarse sampling found all of them blocked, to say what blocks the best."""
+
+FULL_SLACK = 1e-6
+LONGER = 1.15
+"""A lead with its full bore is preferred to one with a neck unless it is longer by more than this factor."""
+
 MOST_JUDGED = 120
 """Finely judged paths per stage of the search; the coarse sampling has dropped nearly all bad ones by then."""
 
@@ -220,32 +228,38 @@ def _first_legal(
         for p, bundle in zip(points, bundles, strict=True)
     ]
     order = sort_bundles(bundles, lengths)
-    best: tuple[Judged, str] | None = None
+    clear_first = [(b, k) for b, k in order if clear[b][k]]
+    # Nothing is clear of the faces: judge a few all the same, so that the message can say by how much.
+    wanted = clear_first or order[:FOR_MESSAGE]
+    best: Lead | None = None
     judged = 0
-    for group in (True, False):
-        wanted = [(b, k) for b, k in order if bool(clear[b][k]) is group]
-        if not group:
-            # Nothing is clear of the faces: judge a few all the same, so that the message can say by how much.
-            wanted = wanted[:8] if best is None else []
-        for low in range(0, len(wanted), CHUNK):
-            chunk = wanted[low : low + CHUNK]
-            free = coarse_channels(around, np.array([points[b][k] for b, k in chunk]), bend.bore_mm)
-            if best is None and not free.any():
-                free[: min(8, len(free))] = True
-            for (b, k), good in zip(chunk, free, strict=True):
-                if not good:
-                    continue
-                lead = _judge(around, ground, port, bundles[b], k, kinks[b], bend)
-                if lead is None:
-                    continue
-                if lead.path.share >= NECK and group:
-                    return lead, None
-                judged += 1
-                if best is None or lead.path.share > best[0].share:
-                    best = (lead.path, lead.face)
-                if judged >= MOST_JUDGED:
-                    return None, best
-    return None, best
+    for low in range(0, len(wanted), CHUNK):
+        chunk = wanted[low : low + CHUNK]
+        free = coarse_channels(around, np.array([points[b][k] for b, k in chunk]), bend.bore_mm)
+        if best is None and not free.any():
+            free[:FOR_MESSAGE] = True
+        for (b, k), good in zip(chunk, free, strict=True):
+            if not good:
+                continue
+            if judged >= MOST_JUDGED or (_legal(best) and lengths[b][k] > LONGER * best.length_mm):
+                return _sorted_out(best)
+            lead = _judge(around, ground, port, bundles[b], k, kinks[b], bend)
+            judged += 1
+            if lead is not None and lead.path.share >= 1.0 - FULL_SLACK:
+                return lead, None
+            if lead is not None and (best is None or (not _legal(best) and lead.path.share > best.path.share)):
+                best = lead
+    return _sorted_out(best)
+
+
+def _legal(lead: Lead | None) -> TypeGuard[Lead]:
+    return lead is not None and lead.path.share >= NECK
+
+
+def _sorted_out(lead: Lead | None) -> tuple[Lead | None, tuple[Judged, str] | None]:
+    if lead is None or _legal(lead):
+        return lead, None
+    return None, (lead.path, lead.face)
 
 
 def _judge(
