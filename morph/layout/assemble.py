@@ -47,18 +47,25 @@ class _Drawn:
     excess: float
 
 
-def assemble(web: Web, parts: Parts, suggestions: list[Suggestion]) -> ChannelGraph:
+def assemble(
+    web: Web, parts: Parts, suggestions: list[Suggestion], kept: dict[int, Branch] | None = None
+) -> ChannelGraph:
     """Returns the record of `web`: pieces with a port built, pieces without one kept aside as loose.
 
     Args:
         web: cleaned, centred, ports attached; its joints are moved onto the fitted curves.
         parts: the rest of the record.
         suggestions: ways on from dead ends, by joint and run keys of `web`.
+        kept: runs that are branches already and stay as they are.
     """
     for key in [key for key in sorted(web.joints) if web.degree(key) == 0]:
         web.remove_joint(key)
-    curves, at = fit_web(web)
-    drawn = {key: _draw(web.runs[key], key, curves[key], at[key], parts.pixel_mm) for key in sorted(web.runs)}
+    kept = kept or {}
+    curves, at = fit_web(web, frozenset(kept))
+    drawn = {
+        key: _keep(key, kept[key]) if key in kept else _draw(run, key, curves[key], at[key], parts.pixel_mm)
+        for key, run in sorted(web.runs.items())
+    }
     piece = web.pieces()
     fed = {piece[key] for key, joint in web.joints.items() if joint.port is not None}
     joint_id = _numbered("N", {key: joint.place_mm for key, joint in web.joints.items()}, piece, fed)
@@ -108,6 +115,19 @@ def _nodes(web: Web, joint_id: dict[int, str]) -> list[Node]:
             kind = NodeKind.DEAD_END if web.degree(key) == 1 else NodeKind.JUNCTION
         nodes.append(Node(joint_id[key], kind, joint.port, joint.place_mm))
     return sorted(nodes, key=lambda node: int(node.id[1:]))
+
+
+def _keep(key: int, branch: Branch) -> _Drawn:
+    return _Drawn(
+        key,
+        branch.curve,
+        branch.parameter,
+        branch.sheet_mm,
+        branch.bore_mm,
+        branch.length_mm,
+        branch.deviation_mm,
+        branch.deviation_mm / (DEVIATION_SHARE * float(branch.bore_mm.max())),
+    )
 
 
 def _draw(run: Run, key: int, curve: Curve, at: Floats, pixel_mm: float) -> _Drawn:

@@ -24,6 +24,9 @@ LOWEST_DENSITY = 0.22
 ABOVE_BACKGROUND = 0.10
 ABOVE_FLANKS = 0.12
 DETOUR = 1.35
+NEAR_END = 1.2
+BLIND_END = 2.5
+"""A way that lands within this many half-widths of a junction, or of another dead end, lands on it."""
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -211,10 +214,11 @@ def _flank_contrast(ground: _Field, path_mm: Floats) -> float:
 
 
 def _end_near(web: Web, run_key: int, sample: int, tip: int) -> int | None:
-    """Returns the end joint of the run that lies within 1.2 half-widths of the sample, if any but the tip."""
+    """Returns the end joint of the run that lies near the sample, if any but the tip."""
     run = web.runs[run_key]
     arc = arc_mm(run.place_mm)
     for joint, away in ((run.start, float(arc[sample])), (run.end, float(arc[-1] - arc[sample]))):
-        if joint != tip and away < 1.2 * web.joints[joint].radius_mm:
+        near = BLIND_END if web.degree(joint) == 1 else NEAR_END
+        if joint != tip and away < near * web.joints[joint].radius_mm:
             return joint
     return None

@@ -299,16 +299,25 @@ def reversed_curve(curve: Curve) -> Curve:
     return Curve(curve.knots[-1] - curve.knots[::-1], curve.control_mm[::-1])
 
 
-def fit_web(web: Web) -> tuple[dict[int, Curve], dict[int, Floats]]:
+def fit_web(web: Web, kept: frozenset[int] = frozenset()) -> tuple[dict[int, Curve], dict[int, Floats]]:
     """Returns per run its curve, walked as the run, and the parameter of each of its samples.
 
     Joints that a chain passes are moved onto it, then all chains that meet such a joint are fitted
     again towards its new place. Runs that continue each other leave their joint along one line.
+
+    Args:
+        web: joints and runs, centred.
+        kept: runs that have their curve already: they are neither fitted nor moved.
     """
-    following = pair_straightest(web)
-    chains = make_chains(web, following)
+    following = {
+        (joint, key): other
+        for (joint, key), other in pair_straightest(web).items()
+        if key not in kept and other not in kept
+    }
+    chains = [chain for chain in make_chains(web, following) if chain[0].run not in kept]
     fitted = [_fit_links(web, chain) for chain in chains]
-    moved = _move_passed_joints(web, chains, fitted)
+    fixed = {joint for key in kept for joint in (web.runs[key].start, web.runs[key].end)}
+    moved = _move_passed_joints(web, chains, fitted, fixed)
     for index, chain in enumerate(chains):
         if any({web.runs[link.run].start, web.runs[link.run].end} & moved for link in chain):
             fitted[index] = _fit_links(web, chain, SETTLED_WEIGHT)
@@ -339,17 +348,19 @@ def _fit_links(web: Web, chain: list[Link], seam_weight: float = SEAM_WEIGHT) ->
     return fitted
 
 
-def _move_passed_joints(web: Web, chains: list[list[Link]], fitted: list[list[tuple[int, Curve, Floats]]]) -> set[int]:
-    """Moves each joint that a chain passes to the mean of where chains pass it; returns the joints moved."""
+def _move_passed_joints(
+    web: Web, chains: list[list[Link]], fitted: list[list[tuple[int, Curve, Floats]]], fixed: set[int]
+) -> set[int]:
+    """Moves each joint that a chain passes, but the fixed, to the mean of where chains pass it; returns those moved."""
     passing: dict[int, list[Floats]] = {}
     for chain, pieces in zip(chains, fitted, strict=True):
         for link, (_, curve, _) in zip(chain[1:], pieces[1:], strict=True):
             run = web.runs[link.run]
             joint, place = (run.start, curve.control_mm[0]) if link.forward else (run.end, curve.control_mm[-1])
             passing.setdefault(joint, []).append(place)
-    for joint, places in sorted(passing.items()):
-        move_joint(web, joint, np.mean(places, axis=0))
-    return set(passing)
+    for joint in sorted(passing.keys() - fixed):
+        move_joint(web, joint, np.mean(passing[joint], axis=0))
+    return passing.keys() - fixed
 
 
 def _align(web: Web, curves: dict[int, Curve], following: dict[tuple[int, int], int]) -> None:
