@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from morph.check.fields import ChannelFields
-from morph.check.insert import check_insert, measure_fields
+from morph.check.insert import Measured, check_insert, measure_fields, measure_insert
 from morph.check.subject import CheckSubject
 
-__all__ = ["ChannelFields", "CheckSubject", "check_insert", "measure_fields"]
+__all__ = ["ChannelFields", "CheckSubject", "Measured", "check_insert", "measure_fields", "measure_insert"]

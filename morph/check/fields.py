@@ -8,9 +8,9 @@ import numpy as np
 
 from morph.body.blank import Blank
 from morph.body.face import FaceRole
-from morph.check.ceiling import ceiling_angles_deg
 from morph.check.centreline import Centrelines
 from morph.check.channel_wall import nearest_samples
+from morph.check.flat_patch import ceiling_angles_deg
 from morph.core.arrays import Floats, frozen_floats
 from morph.geometry.mesh import Mesh, triangle_normals
 

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import dataclass
+
 import numpy as np
 
 from morph.check.bend import check_bends
@@ -18,7 +20,7 @@ from morph.check.opening import check_openings
 from morph.check.powder import check_powder
 from morph.check.subject import CheckSubject
 from morph.check.wall import check_faces, check_holes
-from morph.core.arrays import Floats
+from morph.core.arrays import Floats, frozen_floats
 from morph.core.progress import SILENT, Progress
 from morph.core.verdict import Verdict
 
@@ -26,34 +28,54 @@ STAGE = "check"
 STEPS = 6
 
 
-def _measured(subject: CheckSubject, progress: Progress) -> tuple[Centrelines, ChannelWall, Floats]:
-    """Returns the centrelines, the channel wall as written, and the measured bore (n,) at every sample."""
+@dataclass(frozen=True, slots=True, eq=False)
+class Measured:
+    """What several checks share: centrelines, the channel wall as written, and the bore (n,) at every sample."""
+
+    lines: Centrelines
+    wall: ChannelWall
+    bore_mm: Floats
+
+    def __post_init__(self) -> None:
+        object.__setattr__(self, "bore_mm", frozen_floats("bore_mm", self.bore_mm, (len(self.lines.branch),)))
+
+
+def measure_insert(subject: CheckSubject, progress: Progress = SILENT) -> Measured:
+    """Returns the measurements that checks and fields share; pass them to both to measure once.
+
+    Raises:
+        ValueError: the plan has no branch, or the insert no channel wall.
+    """
     lines = make_centrelines(subject.plan)
     wall = make_channel_wall(subject.insert, lines)
     progress.step(STAGE, 1, STEPS)
     bore_mm = measure_bores(lines, wall)
     progress.step(STAGE, 2, STEPS)
-    return lines, wall, bore_mm
+    return Measured(lines, wall, bore_mm)
 
 
-def check_insert(subject: CheckSubject, progress: Progress = SILENT) -> tuple[Verdict, ...]:
+def check_insert(
+    subject: CheckSubject, progress: Progress = SILENT, measured: Measured | None = None
+) -> tuple[Verdict, ...]:
     """Returns every row for one insert, measured on the mesh as it is written.
 
     Args:
         subject: insert, channels, blank, plan and limits.
         progress: told between the families of checks; may raise Cancelled.
+        measured: from `measure_insert`; None measures here.
 
     Raises:
         ValueError: the plan has no branch, or the insert no channel wall.
     """
     direction = np.array(subject.build_direction)
-    lines, wall, bore_mm = _measured(subject, progress)
+    shared = measure_insert(subject, progress) if measured is None else measured
+    lines, wall = shared.lines, shared.wall
     rows = check_faces(subject, lines, wall)
     rows += check_between(subject, lines, wall)
     rows += check_holes(subject, lines, wall)
     progress.step(STAGE, 3, STEPS)
     rows += check_openings(subject.insert, subject.plan, subject.blank, lines)
-    rows += check_bores(subject, lines, bore_mm)
+    rows += check_bores(subject, lines, shared.bore_mm)
     rows += check_capped(subject.plan)
     rows += check_ceiling(wall.mesh, subject.profile, direction, lines)
     progress.step(STAGE, 4, STEPS)
@@ -66,7 +88,8 @@ def check_insert(subject: CheckSubject, progress: Progress = SILENT) -> tuple[Ve
     return tuple(rows)
 
 
-def measure_fields(subject: CheckSubject, progress: Progress = SILENT) -> ChannelFields:
+def measure_fields(subject: CheckSubject, measured: Measured | None = None) -> ChannelFields:
     """Returns wall and bore along every branch and over the trimmed channels, for drawing."""
-    lines, _, bore_mm = _measured(subject, progress)
-    return make_fields(lines, bore_mm, subject.solid.trimmed, subject.blank, np.array(subject.build_direction))
+    shared = measure_insert(subject) if measured is None else measured
+    direction = np.array(subject.build_direction)
+    return make_fields(shared.lines, shared.bore_mm, subject.solid.trimmed, subject.blank, direction)
