@@ -46,6 +46,9 @@ THINNER = (1.0, 0.85, 0.7, 0.0)
 LEAST_BEND_BORES = 1.5
 """Least centreline bend radius of a lead in bores (common practice, no source)."""
 
+BEND_MARGIN = 1.05
+"""Bends are built this much wider than asked, because they are judged on samples up to 1 mm apart."""
+
 KINKS_RAD = (np.radians(45.0), np.radians(90.0))
 """Starts turned from the channel's direction into the metal, when a smooth start has no way."""
 
@@ -188,7 +191,7 @@ def _bores(port: PortStart, limits: Limits, detour: bool) -> list[float]:
 def _bend(ground: Ground, bore_mm: float) -> Bend:
     radius = max(LEAST_BEND_BORES, ground.bend_bores) * bore_mm
     straight = ground.limits.outer_mm + ground.limits.band_mm + 0.5 * bore_mm
-    return Bend(radius * 1.001, straight, bore_mm)
+    return Bend(radius * BEND_MARGIN, straight, bore_mm)
 
 
 def _candidates(ground: Ground, port: PortStart, heading: Floats, bend: Bend, detour: bool) -> list[Bundle]:
