@@ -10,27 +10,13 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import NDArray
 
-from morph.export.written import single_precision_corners
+from morph.export.written import make_written_mesh
 from morph.geometry.mesh import Mesh
 
 HEADER = b"morph binary mesh, unit mm".ljust(80, b" ")
 """Does not start with "solid", which readers take for the text form of the format."""
 
 RECORD = np.dtype([("normal", "<f4", (3,)), ("corner", "<f4", (3, 3)), ("attribute", "<u2")])
-
-
-def _lowest_corner(corners: NDArray[np.float32]) -> NDArray[np.intp]:
-    """Returns for each triangle (m, 3, 3) the index (m,) of its corner that sorts first."""
-    x, y, z = corners[..., 0], corners[..., 1], corners[..., 2]
-    return np.asarray(np.lexsort((z, y, x), axis=1)[:, 0], dtype=np.intp)
-
-
-def _canonical(corners: NDArray[np.float32]) -> NDArray[np.float32]:
-    first = _lowest_corner(corners)
-    turn = (first[:, None] + np.arange(3)) % 3
-    turned = corners[np.arange(len(corners))[:, None], turn]
-    keys = turned.reshape(len(turned), 9).T[::-1]
-    return np.ascontiguousarray(turned[np.lexsort(keys)])
 
 
 def _normals(corners: NDArray[np.float32]) -> NDArray[np.float32]:
@@ -51,7 +37,7 @@ def stl_bytes(mesh: Mesh, what: str = "solid") -> bytes:
     Raises:
         ExportError: the mesh is empty or single precision cannot hold it.
     """
-    corners = _canonical(single_precision_corners(mesh, what))
+    corners = make_written_mesh(mesh, what).corners_mm
     record = np.zeros(len(corners), dtype=RECORD)
     record["normal"] = _normals(corners)
     record["corner"] = corners

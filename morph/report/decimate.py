@@ -12,10 +12,11 @@ from dataclasses import dataclass
 import numpy as np
 
 from morph.core.arrays import Floats, Ints, frozen_ints
-from morph.geometry.mesh import Mesh
+from morph.geometry.mesh import Mesh, mesh_area_mm2
 
-GROWTH = 1.25
-FIRST_CELL_SHARE = 1.0 / 600.0
+GROWTH = 1.15
+FIRST_CELL_SHARE = 0.7
+"""The first cell is this share of the one that would just do on an even surface."""
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -42,23 +43,23 @@ class ScreenMesh:
         return np.asarray(value)[order[first]]
 
 
-def _used_only(mesh: Mesh) -> tuple[Mesh, Ints]:
-    used, corner = np.unique(mesh.triangles, return_inverse=True)
-    return Mesh(mesh.vertices_mm[used], corner.reshape(-1, 3)), used
+def _one_key(rows: Ints) -> Ints:
+    """Returns one number (n,) per row of the small non-negative numbers `rows (n, 3)`, equal rows alike."""
+    span = int(rows.max(initial=0)) + 1
+    return np.asarray((rows[:, 0] * span + rows[:, 1]) * span + rows[:, 2], dtype=np.int64)
 
 
 def _clustered(mesh: Mesh, cell_mm: float) -> ScreenMesh:
     low = mesh.vertices_mm.min(axis=0)
     key = np.floor((mesh.vertices_mm - low) / cell_mm).astype(np.int64)
-    _, cluster = np.unique(key, axis=0, return_inverse=True)
-    cluster = cluster.reshape(-1)
+    _, cluster = np.unique(_one_key(key), return_inverse=True)
     size = int(cluster.max()) + 1
     count = np.bincount(cluster, minlength=size)
     centre = np.stack([np.bincount(cluster, mesh.vertices_mm[:, i], size) / count for i in range(3)], axis=1)
     triangles = cluster[mesh.triangles]
     a, b, c = triangles.T
     triangles = triangles[(a != b) & (b != c) & (c != a)]
-    _, first = np.unique(np.sort(triangles, axis=1), axis=0, return_index=True)
+    _, first = np.unique(_one_key(np.sort(triangles, axis=1)), return_index=True)
     return ScreenMesh(Mesh(centre, triangles[np.sort(first)]), cluster)
 
 
@@ -72,7 +73,8 @@ def make_screen_mesh(mesh: Mesh, most_triangles: int) -> ScreenMesh:
     if len(mesh.triangles) <= most_triangles:
         return ScreenMesh(mesh, np.arange(len(mesh.vertices_mm)))
     extent = float(np.ptp(mesh.vertices_mm, axis=0).max())
-    cell_mm = extent * FIRST_CELL_SHARE
+    # a grid of cells over the surface gives about two triangles per cell
+    cell_mm = max(FIRST_CELL_SHARE * float(np.sqrt(2.0 * mesh_area_mm2(mesh) / most_triangles)), 1e-6 * extent)
     while True:
         small = _clustered(mesh, cell_mm)
         if len(small.mesh.triangles) <= most_triangles:

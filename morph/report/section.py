@@ -33,6 +33,7 @@ class WallSection:
         verdict: the wall's verdict. plane: where the cut was made; its origin is the middle of the metal.
         loops: the outlines of the written insert, label 1 where they are channel wall.
         channel_side_mm, far_side_mm: (2,) the ends of the wall in drawing coordinates.
+        bore_mm: bore of the channel beside it.
         build_is_up: the build direction is drawn upwards; else the cut is seen along it.
     """
 
@@ -41,6 +42,7 @@ class WallSection:
     loops: tuple[Loop, ...]
     channel_side_mm: Floats
     far_side_mm: Floats
+    bore_mm: float
     build_is_up: bool
 
     def __post_init__(self) -> None:
@@ -149,11 +151,11 @@ def make_section(
         build_direction: part frame, any length.
     """
     middle = np.asarray(verdict.xyz_mm, dtype=np.float64)
-    centre, tangent, _ = _nearest_sample(plan, verdict.branch_ids, middle)
+    centre, tangent, bore_mm = _nearest_sample(plan, verdict.branch_ids, middle)
     build = np.asarray(build_direction, dtype=np.float64)
     plane, is_up = section_plane(middle, centre, tangent, build / np.linalg.norm(build))
     loops = cut_mesh(insert.mesh, insert.channel_triangle, plane)
     near = _nearest_on_loops(loops, CHANNEL)
     if near is None or verdict.value is None:
         return None
-    return WallSection(verdict, plane, loops, near, -near, is_up)
+    return WallSection(verdict, plane, loops, near, -near, bore_mm, is_up)

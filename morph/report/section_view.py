@@ -144,15 +144,14 @@ def _legend(drawing: Drawing, section: WallSection, hatch: str, has_stock: bool)
     drawing.raw(f'<text x="{x:g}" y="{y:g}" dy="0.35em" font-size="12" fill="{INK}">{view}</text>')
 
 
-def draw_section(section: WallSection, blank: Blank, bore_mm: float) -> str:
+def draw_section(section: WallSection, blank: Blank) -> str:
     """Returns the section as SVG: about two bores of surroundings around the wall, and a map of the whole cut.
 
     Args:
         section: the cut.
         blank: for finished faces under machining stock.
-        bore_mm: bore of the channel beside the wall; sets the window.
     """
-    half = max(LEAST_HALF_WINDOW_MM, 0.5 * section.drawn_mm + 1.25 * bore_mm)
+    half = max(LEAST_HALF_WINDOW_MM, 0.5 * section.drawn_mm + 1.25 * section.bore_mm)
     below = 2.0 * half * STRIP_PX / WINDOW_PX
     verdict = section.verdict
     drawing = Drawing(

@@ -1,0 +1,211 @@
+"""The report: one HTML file that opens from disk without a network, prints on A4 and works by keyboard.
+
+The template only lays out; every number in it comes from the records and the summary, and every
+text from the job is escaped by the template engine. The script that draws the 3D picture comes
+with the plotting library and is written into the page once.
+"""
+
+from __future__ import annotations
+
+from functools import cache
+from importlib import resources
+from typing import Any
+
+from morph.body.plan import BranchKind, ChannelPlan
+from morph.core.verdict import Outcome
+from morph.report.along import sheet_branches
+from morph.report.colour import OUTCOME_COLOUR, OUTCOME_SIGN, OUTCOME_WORD
+from morph.report.density_view import draw_density
+from morph.report.figures import (
+    DIV_ID,
+    ChannelScene,
+    figure_json,
+    make_figure,
+    make_scene,
+    plotly_script,
+)
+from morph.report.headline import Figure, five_figures, sorted_verdicts, worst_outcome
+from morph.report.projection_view import VIEWS, draw_view
+from morph.report.records import BuildRecords
+from morph.report.section import WallSection, make_section, wall_verdicts
+from morph.report.section_view import draw_section
+from morph.report.sheet_view import SheetScene, draw_sheet
+from morph.report.texts import (
+    CAUTIONS,
+    amount,
+    flat_settings,
+    limit_words,
+    outcome_class,
+    place_words,
+    profile_rows,
+)
+from morph.settings.job import SeenFrom
+
+TEMPLATE, STYLE, SCRIPT = "report.html", "report.css", "report.js"
+
+
+@cache
+def _text(name: str) -> str:
+    return (resources.files("morph.report") / "templates" / name).read_text(encoding="utf-8")
+
+
+def _section(records: BuildRecords) -> tuple[str, WallSection | None]:
+    """Returns the drawing of the section through the worst wall, and the section; empty when no wall was judged."""
+    walls = wall_verdicts(records.verdicts)
+    for verdict in walls[:1]:
+        section = make_section(records.insert, records.plan, verdict, records.job.printing.build_direction)
+        if section is not None:
+            return draw_section(section, records.blank), section
+    return "", None
+
+
+def sheet_scene(records: BuildRecords) -> SheetScene:
+    """Returns what the sheet picture shows: the wall to the part face along every channel.
+
+    Raises:
+        ValueError: the records hold no fields.
+    """
+    if records.fields is None:
+        raise ValueError("records.fields: expected measured fields, found None")
+    on_sheet = {branch.id for branch in sheet_branches(records.plan)}
+    walls = wall_verdicts(records.verdicts)
+    worst = None
+    if walls and walls[0].branch_ids and walls[0].branch_ids[0] in on_sheet:
+        worst = (walls[0].branch_ids[0], walls[0].sheet_mm)
+    return SheetScene(
+        records.plan,
+        records.graph.size_mm,
+        records.job.layout.seen_from,
+        {item.id: item.wall_mm for item in records.fields.branches if item.id in on_sheet},
+        {port.name: port.role for port in records.job.ports},
+        worst,
+    )
+
+
+def _port_rows(records: BuildRecords) -> list[dict[str, str]]:
+    """Returns the ports as words: where they come out and which way."""
+    lead = {branch.id: branch for branch in records.plan.branches}
+    return [
+        {
+            "port": exit_.port,
+            "role": exit_.role.value,
+            "exit": ", ".join(f"{value:.2f}" for value in exit_.xyz_mm) + " mm",
+            "leave": ", ".join(f"{value + 0.0:.3f}" for value in exit_.leave),
+            "face": exit_.face,
+            "bore": amount(exit_.bore_mm, "mm"),
+            "lead": f"{exit_.lead}, {amount(lead[exit_.lead].length_mm, 'mm')}",
+            "stock": amount(records.blank.face(exit_.face).stock_mm, "mm"),
+            "end": "plain, as printed",
+        }
+        for exit_ in records.plan.exits
+    ]
+
+
+def _branch_rows(plan: ChannelPlan) -> list[dict[str, Any]]:
+    return [
+        {
+            "id": branch.id,
+            "kind": branch.kind.value,
+            "ends": f"{branch.start} – {branch.end}",
+            "length": amount(branch.length_mm, "mm"),
+            "bore": f"{branch.bore_mm.min():.2f} – {branch.bore_mm.max():.2f} mm",
+            "flow": "yes" if branch.through_flow else "no",
+        }
+        for branch in plan.branches
+    ]
+
+
+def _view_data(scene: ChannelScene) -> str:
+    """Returns the other quantities of the 3D picture as JSON: base64 of little-endian single precision."""
+    import base64
+    import json
+
+    rows = [
+        {
+            "name": quantity.name,
+            "title": quantity.title,
+            "unit": quantity.unit,
+            "low": round(quantity.low, 6),
+            "high": round(quantity.high, 6),
+            "values": base64.b64encode(quantity.values.astype("<f4").tobytes()).decode("ascii"),
+        }
+        for quantity in scene.quantities
+    ]
+    return json.dumps(rows).replace("<", "\\u003c")
+
+
+def _figure_place(figure: Figure) -> list[str]:
+    ids = [", ".join(figure.branch_ids[:4]) + (" …" if len(figure.branch_ids) > 4 else "")] if figure.branch_ids else []
+    return ids + place_words(figure.sheet_mm, figure.xyz_mm)
+
+
+def _pictures(records: BuildRecords) -> dict[str, Any]:
+    from markupsafe import Markup
+
+    scene = make_scene(records)
+    drawing, section = _section(records)
+    return {
+        "section_svg": Markup(drawing),
+        "section": section,
+        "sheet_svg": Markup(draw_sheet(sheet_scene(records))),
+        "density_svg": Markup(draw_density(records.density, records.graph)),
+        "views": [(view.words, Markup(draw_view(view, records.plan, records.insert.mesh))) for view in VIEWS],
+        "figure_json": Markup(figure_json(make_figure(scene))),
+        "view_json": Markup(_view_data(scene)),
+        "quantities": scene.quantities,
+        "plotly_script": Markup(plotly_script()),
+        "style": Markup(_text(STYLE)),
+        "script": Markup(_text(SCRIPT)),
+    }
+
+
+def _tables(records: BuildRecords, summary: dict[str, Any]) -> dict[str, Any]:
+    verdicts = sorted_verdicts(records.verdicts)
+    layout = records.job.layout
+    return {
+        "headline": worst_outcome(records.verdicts),
+        "figures": [(figure, _figure_place(figure)) for figure in five_figures(records.verdicts, records.plan)],
+        "verdicts": [(v, amount(v.value, v.unit), limit_words(v), place_words(v.sheet_mm, v.xyz_mm)) for v in verdicts],
+        "counts": [(outcome, sum(v.outcome is outcome for v in verdicts)) for outcome in Outcome],
+        "ports": _port_rows(records),
+        "branches": _branch_rows(records.plan),
+        "n_channels": sum(branch.kind is BranchKind.CHANNEL for branch in records.plan.branches),
+        "notices": records.notices,
+        "settings": flat_settings(summary["settings"]),
+        "profile": profile_rows(summary["settings"]["printing"]["profile"]),
+        "mirrored": layout.seen_from is SeenFrom.METAL,
+        "seen_from": layout.seen_from.value,
+        "cautions": CAUTIONS,
+    }
+
+
+def make_report(records: BuildRecords, summary: dict[str, Any]) -> str:
+    """Returns the report as one HTML page.
+
+    Args:
+        records: of a finished build, fields included.
+        summary: what make_summary said of the same records.
+
+    Raises:
+        ValueError: the records hold no fields.
+    """
+    from jinja2 import DictLoader, Environment, StrictUndefined
+
+    environment = Environment(
+        loader=DictLoader({TEMPLATE: _text(TEMPLATE)}),
+        autoescape=True,
+        undefined=StrictUndefined,
+        trim_blocks=True,
+        lstrip_blocks=True,
+    )
+    environment.globals.update(
+        sign=OUTCOME_SIGN,
+        word=OUTCOME_WORD,
+        colour=OUTCOME_COLOUR,
+        css_class=outcome_class,
+        amount=amount,
+        place_words=place_words,
+        div_id=DIV_ID,
+    )
+    template = environment.get_template(TEMPLATE)
+    return template.render(summary=summary, **_pictures(records), **_tables(records, summary))

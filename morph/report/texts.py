@@ -1,0 +1,102 @@
+"""Numbers, places and settings as words on the page; each with its unit."""
+
+from __future__ import annotations
+
+from typing import Any
+
+from morph.core.verdict import Outcome, Verdict
+
+DECIMALS = {"mm": 2, "mm2": 1, "mm3": 0, "deg": 1, "count": 0, "ratio": 3}
+UNIT_WORDS = {"mm2": "mm²", "mm3": "mm³", "deg": "°", "count": "", "ratio": ""}
+LIMIT_WORDS = {"least": "≥", "most": "≤", "equal": "="}
+
+CAUTIONS = (
+    (
+        "Hot coolant under pressure.",
+        "A channel that opens while the press runs sprays hot water or oil. Test every circuit with cold water above "
+        "its working pressure, away from people, before it meets a press; repeat after every rework.",
+    ),
+    (
+        "Cracked tools.",
+        "Thin walls between coolant and a moulded face carry pressure and heat in turns, and crack from inside, "
+        "where nobody sees it. The limits here are settings, most of them common practice; they are no proof of "
+        "strength or of life under load.",
+    ),
+    (
+        "Metal powder.",
+        "Powder left in a channel blocks it, sinters in heat treatment, and is a danger to breathe and to burn. Empty, "
+        "rinse and inspect every branch before heat treatment, with the protection that the powder's safety data "
+        "sheet asks for.",
+    ),
+    (
+        "What this report is not.",
+        "It states geometry and simple rules. Local codes for pressure equipment and machines, and the judgement of a "
+        "licensed engineer, come before it.",
+    ),
+)
+
+
+def amount(value: float | None, unit: str) -> str:
+    """Returns a figure with its unit.
+
+    >>> amount(3.14159, "mm"), amount(2.0, "count"), amount(None, "mm")
+    ('3.14 mm', '2', '')
+    """
+    if value is None:
+        return ""
+    text = f"{value:,.{DECIMALS.get(unit, 3)}f}".replace(",", "\u202f")
+    word = UNIT_WORDS.get(unit, unit)
+    return text + ("" if word == "" else word if word == "°" else f" {word}")
+
+
+def limit_words(verdict: Verdict) -> str:
+    """Returns the limit of a verdict with its direction and unit; empty without one."""
+    if verdict.limit is None:
+        return ""
+    return f"{LIMIT_WORDS.get(verdict.limit_is, '')} {amount(verdict.limit, verdict.unit)}"
+
+
+def place_words(sheet_mm: tuple[float, float] | None, xyz_mm: tuple[float, float, float] | None) -> list[str]:
+    """Returns where something is, on the sheet and in the part, one line each."""
+    lines = []
+    if sheet_mm is not None:
+        lines.append(f"sheet {sheet_mm[0]:.1f}, {sheet_mm[1]:.1f} mm")
+    if xyz_mm is not None:
+        lines.append("part " + ", ".join(f"{value:.1f}" for value in xyz_mm) + " mm")
+    return lines
+
+
+def flat_settings(value: Any, name: str = "") -> list[tuple[str, str]]:
+    """Returns nested settings as rows of dotted name and text; what is sourced is left to its own table."""
+    if isinstance(value, dict):
+        rows: list[tuple[str, str]] = []
+        for key in value:
+            if key != "profile":
+                rows += flat_settings(value[key], f"{name}.{key}" if name else key)
+        return rows
+    if isinstance(value, list) and any(isinstance(item, dict) for item in value):
+        return [row for index, item in enumerate(value) for row in flat_settings(item, f"{name}[{index + 1}]")]
+    return [(name, "not set" if value is None else _listed(value))]
+
+
+def _listed(value: Any) -> str:
+    if isinstance(value, list):
+        return "none" if not value else ", ".join(_listed(item) for item in value)
+    return f"{value:g}" if isinstance(value, float) else str(value)
+
+
+def profile_rows(profile: dict[str, Any]) -> list[tuple[str, str, str]]:
+    """Returns the process profile as rows of name, value with unit, and source."""
+    rows = []
+    for name, item in profile.items():
+        items = item if isinstance(item, list) else [item]
+        for index, one in enumerate(items):
+            if isinstance(one, dict):
+                label = f"{name}[{index + 1}]" if len(items) > 1 else name
+                rows.append((label, f"{one['value']:g} {one['unit']}", one["source"]))
+    return rows
+
+
+def outcome_class(outcome: Outcome) -> str:
+    """Returns the outcome as a style class."""
+    return outcome.value.replace(" ", "-")
