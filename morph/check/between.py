@@ -26,7 +26,7 @@ from morph.body.neighbour import (
 from morph.body.room import wall_band_mm
 from morph.check.centreline import Centrelines, Place, measure_ways
 from morph.check.channel_wall import ChannelWall, sub_mesh
-from morph.check.rows import MOST_NAMED, Limit, judge_length, name_list, place, worse_limit
+from morph.check.rows import MEASURE_MM, MOST_NAMED, Limit, judge_length, name_list, place, worse_limit
 from morph.check.subject import CheckSubject
 from morph.core.arrays import Bools, Floats, Ints
 from morph.core.verdict import Outcome, Verdict
@@ -156,26 +156,34 @@ def _closest_on_segments(a: Floats, b: Floats, c: Floats, d: Floats) -> tuple[fl
     return s, t
 
 
-def _patch(lines: Centrelines, wall: ChannelWall, sample: int, reach_mm: float) -> Ints:
-    """Returns the wall triangles of the run of branch around `sample`, by their samples' way along it."""
-    near = lines.branch == lines.branch[sample]
-    near &= np.abs(lines.along_mm - lines.along_mm[sample]) <= reach_mm
-    return np.flatnonzero(near[wall.sample][wall.mesh.triangles].all(axis=1))
+def _patches(wall: ChannelWall, middle: Floats, toward: Floats, reach_mm: float) -> tuple[Ints, Ints]:
+    """Returns the wall triangles near `middle (3,)` before and behind the plane through it across `toward (3,)`.
+
+    Triangles that reach through the plane belong to neither: there the channels are not apart.
+    """
+    offset = wall.mesh.vertices_mm - middle
+    near = np.einsum("ij,ij->i", offset, offset) <= reach_mm**2
+    side = offset @ toward
+    index = np.flatnonzero(near[wall.mesh.triangles].any(axis=1))
+    corner = wall.mesh.triangles[index]
+    return index[(side[corner] < 0.0).all(axis=1)], index[(side[corner] > 0.0).all(axis=1)]
 
 
 def confirm(finding: BetweenFinding, lines: Centrelines, wall: ChannelWall) -> BetweenFinding:
     """Returns `finding` measured on the written mesh too; the smaller wall and its place are kept."""
     a, b = finding.samples
-    reach = 1.5 * float(max(lines.bore_mm[a], lines.bore_mm[b])) + max(finding.centreline_mm, 0.0)
-    if lines.branch[a] == lines.branch[b]:
-        reach = min(reach, 0.3 * abs(float(lines.along_mm[a] - lines.along_mm[b])))
-    one, two = _patch(lines, wall, a, reach), _patch(lines, wall, b, reach)
-    if finding.centreline_mm <= 0.0 or len(one) == 0 or len(two) == 0:
+    if finding.centreline_mm <= 0.0:
+        return finding
+    _, p, q, _, _ = _segments_gap(lines, a, b)
+    reach = float(max(lines.bore_mm[a], lines.bore_mm[b])) + 0.5 * finding.centreline_mm
+    one, two = _patches(wall, np.array(finding.xyz_mm), q - p, reach)
+    if len(one) == 0 or len(two) == 0:
         return finding
     gap = measure_gap(sub_mesh(wall.mesh, one), make_tree(sub_mesh(wall.mesh, two)))
     if gap is None:
         return finding
-    tighter = gap.distance_mm < finding.centreline_mm
+    # Where both routes agree the centreline knows the place, the mesh only a facet near it.
+    tighter = gap.distance_mm < finding.centreline_mm - MEASURE_MM
     return BetweenFinding(
         finding.branch_ids,
         finding.samples,
@@ -196,7 +204,8 @@ def check_between(subject: CheckSubject, lines: Centrelines, wall: ChannelWall |
     walls = [item for item in found if not item.rib]
     if wall is not None:
         confirmed = [confirm(item, lines, wall) for item in walls[:CONFIRMED]]
-        walls = sorted(confirmed + walls[CONFIRMED:], key=lambda item: (item.wall_mm, item.samples))
+        walls = confirmed + walls[CONFIRMED:]
+    walls = _without_repeats(walls, lines)
     rows = _merge_rows(subject, walls, lines)
     merged = {frozenset(row.branch_ids) for row in rows}
     walls = [item for item in walls if frozenset(item.branch_ids) not in merged]
@@ -209,6 +218,30 @@ def check_between(subject: CheckSubject, lines: Centrelines, wall: ChannelWall |
     if ribs:
         rows.append(_rib_row(ribs, limit, band, lines))
     return rows
+
+
+def _without_repeats(walls: list[BetweenFinding], lines: Centrelines) -> list[BetweenFinding]:
+    """Returns the findings thinnest first, without those that a neighbouring branch shows already.
+
+    A thin place at a node is found once for every branch that ends there. Of findings within one bore the
+    first is kept, unless a later one lies away from all branch ends; equal walls prefer such.
+    """
+
+    def at_end(sample: int) -> bool:
+        index = int(lines.branch[sample])
+        to_end = min(sample - int(lines.first[index]), int(lines.first[index + 1]) - 1 - sample)
+        return to_end <= 1
+
+    ends = {item.samples: sum(at_end(sample) for sample in item.samples) for item in walls}
+    kept: list[BetweenFinding] = []
+    for item in sorted(walls, key=lambda item: (round(item.wall_mm, 2), ends[item.samples], item.samples)):
+        near = float(max(lines.bore_mm[list(item.samples)]))
+        repeats = (
+            ends[item.samples] > 0 and np.linalg.norm(np.subtract(item.xyz_mm, other.xyz_mm)) < near for other in kept
+        )
+        if not any(repeats):
+            kept.append(item)
+    return kept
 
 
 def _merge_rows(subject: CheckSubject, walls: list[BetweenFinding], lines: Centrelines) -> list[Verdict]:

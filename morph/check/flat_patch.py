@@ -55,7 +55,8 @@ def _corner_normals(mesh: Mesh, normals: Floats, area_mm2: Floats, near: Ints, a
     from scipy.sparse import coo_array
 
     around, mine = mesh.triangles[near].reshape(-1), np.flatnonzero(asked)
-    touching = coo_array((np.ones(len(around), np.int8), (around, np.repeat(np.arange(len(near)), 3)))).tocsr()
+    at = (around, np.repeat(np.arange(len(near)), 3))
+    touching = coo_array((np.ones(len(around), np.int8), at), shape=(len(mesh.vertices_mm), len(near))).tocsr()
     flat = mesh.triangles[near[mine]].reshape(-1)
     start, count = touching.indptr[flat], np.diff(touching.indptr)[flat]
     corner = np.repeat(np.arange(len(flat)), count)
@@ -178,13 +179,29 @@ def largest_circle(mesh: Mesh, flat: FlatTriangles, frame: Floats) -> tuple[floa
     tree = cKDTree(border)
     _, near = tree.query(places)
     radius = np.linalg.norm(places[:, :2] - border[near, :2], axis=1)
-    best, middle = -1.0, places[0]
+    best, middle = -1.0, places[0].copy()
     for index in np.argsort(-radius, kind="stable")[:CIRCLES]:
         around = border[np.sort(tree.query_ball_point(places[index], 3.0 * radius[index] + 1.0))]
         grown, point = _grow(places[index, :2], around[:, :2])
         if grown > best:
             best, middle = grown, np.append(point, places[index, 2])
+    middle[2] = _height_at(corner @ frame.T, middle)
     return 2.0 * best, np.asarray(middle @ frame, dtype=np.float64)
+
+
+def _height_at(corner: Floats, point: Floats) -> float:
+    """Returns the height of the triangles (n, 3, 3) over the plan place of `point (3,)`, the one nearest to its own."""
+    a, u, v = corner[:, 0], corner[:, 1] - corner[:, 0], corner[:, 2] - corner[:, 0]
+    w = point - a
+    area = u[:, 0] * v[:, 1] - u[:, 1] * v[:, 0]
+    area[area == 0.0] = np.inf
+    s = (w[:, 0] * v[:, 1] - w[:, 1] * v[:, 0]) / area
+    t = (u[:, 0] * w[:, 1] - u[:, 1] * w[:, 0]) / area
+    over = np.flatnonzero((s >= -1e-9) & (t >= -1e-9) & (s + t <= 1.0 + 1e-9) & np.isfinite(area))
+    if len(over) == 0:
+        return float(point[2])
+    height = a[over, 2] + s[over] * u[over, 2] + t[over] * v[over, 2]
+    return float(height[np.argmin(np.abs(height - point[2]))])
 
 
 def _grow(start: Floats, border: Floats) -> tuple[float, Floats]:

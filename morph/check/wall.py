@@ -18,7 +18,7 @@ from morph.check.centreline import Centrelines, Place
 from morph.check.channel_wall import ChannelWall
 from morph.check.exits import own_exit_samples
 from morph.check.obstacle import FaceObstacle, HoleObstacle, Obstacle
-from morph.check.rows import Limit, judge_length, place, worse_limit
+from morph.check.rows import MEASURE_MM, Limit, judge_length, place, worse_limit
 from morph.check.subject import CheckSubject
 from morph.core.arrays import Bools, Floats, Ints
 from morph.core.verdict import Outcome, Verdict
@@ -78,6 +78,9 @@ def measure_wall(
         if mesh_mm - _limit(limit_at, lines, written[1]) < centreline_mm - _limit(limit_at, lines, best):
             found = written
     value, sample, point = found
+    if centreline_mm - value < MEASURE_MM:
+        # Both routes agree: the centreline knows the place, the mesh only a facet near it.
+        sample, point = best, middle
     bore = float(lines.bore_mm[sample])
     return WallFinding(value, centreline_mm, mesh_mm, _limit(limit_at, lines, sample), bore, sample, place(point))
 
