@@ -13,7 +13,7 @@ from morph.body.flow_path import connected_pieces, through_flow
 from morph.body.lead import Lead
 from morph.body.neighbour import Network, Strand, count_as_wall, make_network, near_pairs, polyline_arc_mm, room_beside
 from morph.body.plan import BranchKind, ChannelPlan, Exit, PlanBranch, PlanNode
-from morph.body.room import Limits, Room, measure_room, straight_run, with_neighbours
+from morph.body.room import Limits, Room, measure_room, way_out, with_neighbours
 from morph.core.arrays import Bools, Floats, Ints
 from morph.core.verdict import Notice
 from morph.layout.graph import NodeKind
@@ -107,7 +107,7 @@ def _rooms(parts: Parts, network: Network, beside_mm: Floats, by: Ints) -> list[
             room = measure_room(parts.blank, parts.limits, strand.xyz_mm)
         else:
             lead = parts.leads[k - len(parts.sheet_mm)]
-            opening = straight_run(strand.xyz_mm, lead.leave)
+            opening = way_out(parts.blank.face(lead.face), strand.xyz_mm)
             room = measure_room(parts.blank, parts.limits, strand.xyz_mm, lead.face, opening)
         rooms.append(with_neighbours(room, beside_mm[here], by[here], ids))
     return rooms

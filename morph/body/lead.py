@@ -40,11 +40,24 @@ LONGER = 1.15
 MOST_JUDGED = 120
 """Finely judged paths per stage of the search; the coarse sampling has dropped nearly all bad ones by then."""
 
-THINNER = (1.0, 0.85, 0.7, 0.0)
-"""Shares of the port's bore tried for a lead, never below the least bore."""
+SEARCHES = (
+    (False, False, 1.0),
+    (False, False, 0.85),
+    (True, False, 1.0),
+    (False, False, 0.7),
+    (True, False, 0.7),
+    (False, True, 1.0),
+    (False, False, 0.0),
+    (True, False, 0.0),
+    (True, True, 0.0),
+)
+"""Searches in order: start with a kink, make a detour, share of the port's bore (never below the least bore)."""
 
 LEAST_BEND_BORES = 1.5
 """Least centreline bend radius of a lead in bores (common practice, no source)."""
+
+STRAIGHT_BORES = 1.0
+"""Least straight end square to the face, in bores, so that an end can be machined (common practice, no source)."""
 
 BEND_MARGIN = 1.05
 """Bends are built this much wider than asked, because they are judged on samples up to 1 mm apart."""
@@ -153,45 +166,41 @@ def _surround(ground: Ground, port: PortStart, laid: dict[int, Lead], ports: Seq
 
 def _lay_lead(around: Surroundings, ground: Ground, port: PortStart) -> Lead:
     best: tuple[Judged, str] | None = None
-    for headings, detour in _stages(port):
-        for thinned in _bores(port, ground.limits, detour):
-            bend = _bend(ground, thinned)
-            bundles, kinks = [], []
-            for kink, heading in headings:
-                found = _candidates(ground, port, heading, bend, detour)
-                bundles += found
-                kinks += [kink] * len(found)
-            lead, close = _first_legal(around, ground, port, bundles, kinks, bend)
-            if lead is not None:
-                return lead
-            if close is not None and (best is None or close[0].share > best[0].share):
-                best = close
+    tried: set[tuple[bool, bool, float]] = set()
+    for kinked, detour, share in SEARCHES:
+        bore = max(share * port.bore_mm, min(ground.limits.least_bore_mm, port.bore_mm))
+        headings = _headings(port, kinked)
+        if not headings or (kinked, detour, bore) in tried:
+            continue
+        tried.add((kinked, detour, bore))
+        bend = _bend(ground, bore)
+        bundles, kinks = [], []
+        for kink, heading in headings:
+            found = _candidates(ground, port, heading, bend, detour)
+            bundles += found
+            kinks += [kink] * len(found)
+        lead, close = _first_legal(around, ground, port, bundles, kinks, bend)
+        if lead is not None:
+            return lead
+        if close is not None and (best is None or close[0].share > best[0].share):
+            best = close
     raise _Blocked(best)
 
 
-def _stages(port: PortStart) -> list[tuple[list[tuple[float, Floats]], bool]]:
-    """Returns the searches in order: headings with their kink, and whether detours are tried."""
-    inward = port.into_metal
-    if port.heading is None:
-        starts = [[(0.0, inward)]]
-    else:
-        ahead = port.heading
-        across = unit_rows((inward - (inward @ ahead) * ahead)[None, :])[0]
-        smooth = [(0.0, ahead)]
-        starts = [smooth, [(float(turn), np.cos(turn) * ahead + np.sin(turn) * across) for turn in KINKS_RAD]]
-    return [(headings, detour) for detour in (False, True) for headings in starts]
-
-
-def _bores(port: PortStart, limits: Limits, detour: bool) -> list[float]:
-    least = min(limits.least_bore_mm, port.bore_mm)
-    shares = (THINNER[0], THINNER[-1]) if detour else THINNER
-    return sorted({max(share * port.bore_mm, least) for share in shares}, reverse=True)
+def _headings(port: PortStart, kinked: bool) -> list[tuple[float, Floats]]:
+    """Returns the headings to start along, each with its kink at the port in rad."""
+    inward, ahead = port.into_metal, port.heading
+    if ahead is None:
+        return [] if kinked else [(0.0, inward)]
+    if not kinked:
+        return [(0.0, ahead)]
+    across = unit_rows((inward - (inward @ ahead) * ahead)[None, :])[0]
+    return [(float(turn), np.cos(turn) * ahead + np.sin(turn) * across) for turn in KINKS_RAD]
 
 
 def _bend(ground: Ground, bore_mm: float) -> Bend:
     radius = max(LEAST_BEND_BORES, ground.bend_bores) * bore_mm
-    straight = ground.limits.outer_mm + ground.limits.band_mm + 0.5 * bore_mm
-    return Bend(radius * BEND_MARGIN, straight, bore_mm)
+    return Bend(radius * BEND_MARGIN, STRAIGHT_BORES * bore_mm, bore_mm)
 
 
 def _candidates(ground: Ground, port: PortStart, heading: Floats, bend: Bend, detour: bool) -> list[Bundle]:
@@ -226,10 +235,7 @@ def _first_legal(
     """Returns the shortest legal lead, or None and the path that comes closest with the name of its face."""
     points = [bundle.points(ground.carrier, COARSE_SAMPLES) for bundle in bundles]
     lengths = [np.linalg.norm(np.diff(p, axis=1), axis=2).sum(axis=1) for p in points]
-    clear = [
-        coarse_faces(around, p, bundle.face, bend.straight_mm, bend.bore_mm)
-        for p, bundle in zip(points, bundles, strict=True)
-    ]
+    clear = [coarse_faces(around, p, bundle.face, bend.bore_mm) for p, bundle in zip(points, bundles, strict=True)]
     order = sort_bundles(bundles, lengths)
     clear_first = [(b, k) for b, k in order if clear[b][k]]
     # Nothing is clear of the faces: judge a few all the same, so that the message can say by how much.
@@ -277,7 +283,7 @@ def _judge(
     length = float(np.linalg.norm(np.diff(rough, axis=1), axis=2).sum())
     fine = one.points(ground.carrier, max(8, int(np.ceil(1.05 * length / spacing)) + 1))[0]
     fine[0] = port.xyz_mm
-    path = judge_path(around, fine, bundle.leave[k], bundle.face, port.bore_mm, bend.bore_mm)
+    path = judge_path(around, fine, bundle.face, port.bore_mm, bend.bore_mm)
     size = float(polyline_arc_mm(fine)[-1])
     return Lead(port, path, bundle.face.name, bundle.leave[k], size, kink, bend.bore_mm / port.bore_mm)
 

@@ -11,7 +11,7 @@ from morph.body.blank import Blank
 from morph.body.cap import TAPER, lower_to_taper
 from morph.body.face import Face
 from morph.body.neighbour import WALL_WAY, Network, distance_to_strand_mm, polyline_arc_mm, way_from_node_mm
-from morph.body.room import Limits, Room, measure_room, straight_run, with_neighbours
+from morph.body.room import STEEPNESS, Limits, Room, measure_room, way_out, with_neighbours
 from morph.core.arrays import Bools, Floats, Ints
 
 NECK = 0.95
@@ -19,6 +19,9 @@ NECK = 0.95
 
 COARSE_SLACK_MM = 0.4
 """Room forgiven on the coarse sampling, which judges single samples and not the pieces between them."""
+
+COARSE_STEEPNESS = 0.8
+"""The way out is judged this much more leniently on the coarse sampling, whose pieces cut corners."""
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -59,22 +62,19 @@ class Judged:
     worst: int
 
 
-def coarse_faces(around: Surroundings, points_mm: Floats, face: Face, straight_mm: float, bore_mm: float) -> Bools:
+def coarse_faces(around: Surroundings, points_mm: Floats, face: Face, bore_mm: float) -> Bools:
     """Returns which paths (n,) keep clear of faces and holes on a coarse sampling.
 
     Args:
         around: what surrounds the lead.
         points_mm: (n, k, 3) samples of each path.
         face: the face they come out of.
-        straight_mm: within this way of the exit that face does not count.
         bore_mm: bore of the lead.
     """
-    n, count, _ = points_mm.shape
-    step = np.linalg.norm(np.diff(points_mm, axis=1), axis=2)
-    left = np.concatenate([np.cumsum(step[:, ::-1], axis=1)[:, ::-1], np.zeros((n, 1))], axis=1)
-    opening = (left <= straight_mm + step.max(axis=1, initial=0.0)[:, None]).ravel()
+    opening = way_out(face, points_mm, COARSE_STEEPNESS * STEEPNESS).ravel()
     room = measure_room(around.blank, around.limits, points_mm.reshape(-1, 3), face.name, opening).room_mm
-    return np.asarray((room.reshape(n, count) >= NECK * bore_mm - COARSE_SLACK_MM).all(axis=1), dtype=np.bool_)
+    enough = room.reshape(points_mm.shape[:2]) >= NECK * bore_mm - COARSE_SLACK_MM
+    return np.asarray(enough.all(axis=1), dtype=np.bool_)
 
 
 def coarse_channels(around: Surroundings, points_mm: Floats, bore_mm: float) -> Bools:
@@ -126,22 +126,19 @@ def room_between(around: Surroundings, xyz_mm: Floats, arc_mm: Floats, bore_mm: 
     return room, by
 
 
-def judge_path(
-    around: Surroundings, xyz_mm: Floats, leave: Floats, face: Face, port_bore_mm: float, bore_mm: float
-) -> Judged:
+def judge_path(around: Surroundings, xyz_mm: Floats, face: Face, port_bore_mm: float, bore_mm: float) -> Judged:
     """Returns the bore that fits along a finely sampled path and how short it falls of the one wanted.
 
     Args:
         around: what surrounds the lead.
         xyz_mm: (k, 3) from the port to the exit.
-        leave: (3,) unit direction out of the metal.
         face: the face it comes out of.
         port_bore_mm: bore of the channel at the port.
         bore_mm: bore wanted; from the port's bore it is reached at the taper.
     """
     arc = polyline_arc_mm(xyz_mm)
     wanted = np.maximum(port_bore_mm - TAPER * arc, min(bore_mm, port_bore_mm))
-    opening = straight_run(xyz_mm, leave)
+    opening = way_out(face, xyz_mm)
     room = measure_room(around.blank, around.limits, xyz_mm, face.name, opening)
     beside, by = room_between(around, xyz_mm, arc, wanted)
     room = with_neighbours(room, beside, by, [strand.id for strand in around.network.strands])

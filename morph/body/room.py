@@ -30,6 +30,10 @@ BUILD_MM = 0.03
 simplification 0.008 mm, and samples up to 1 mm apart on a bend."""
 
 
+STEEPNESS = 0.5
+"""A channel is on its way out of a face while it nears it by at least this per mm (30 degrees to the face)."""
+
+
 @dataclass(frozen=True, slots=True)
 class Limits:
     """The walls every bore must leave, the bands to spend first, and the bores allowed, all in mm.
@@ -115,7 +119,7 @@ def measure_room(
         limits: walls and bands.
         xyz_mm: (k, 3) places on a centreline.
         open_face: face through which the channel comes out, if any.
-        opening: (k,) where the channel runs straight to its opening; there `open_face` does not count.
+        opening: (k,) where the channel is on its way out; there `open_face` does not count.
     """
     rows: list[Floats] = []
     names: list[str] = []
@@ -141,15 +145,14 @@ def with_neighbours(room: Room, other_mm: Floats, other: Ints, ids: Sequence[str
     return Room(np.where(closer, other_mm, room.room_mm), np.where(closer, other + len(room.names), room.by), names)
 
 
-def straight_run(xyz_mm: Floats, leave: Floats, slack_mm: float = 1e-6) -> Bools:
-    """Returns which samples (k,) at the end of a path lie on the straight line on which it leaves the metal.
+def way_out(face: Face, xyz_mm: Floats, steepness: float = STEEPNESS) -> Bools:
+    """Returns which samples (..., k) at the end of paths (..., k, 3) keep nearing `face` by `steepness` per mm.
 
-    Args:
-        xyz_mm: (k, 3) path, ending on the face.
-        leave: (3,) unit direction out of the metal there.
-        slack_mm: how far from the line a sample still counts as on it.
+    That stretch is the channel's own way out: its nearness to the face is wanted, not a thin wall.
     """
-    offset = xyz_mm - xyz_mm[-1]
-    off_line = np.linalg.norm(offset - (offset @ leave)[:, None] * leave, axis=1) > slack_mm
-    last = int(np.flatnonzero(off_line)[-1]) if off_line.any() else -1
-    return np.arange(len(xyz_mm)) > last
+    shape = xyz_mm.shape[:-1]
+    height = face.distance_mm(xyz_mm.reshape(-1, 3)).reshape(shape)
+    way = np.linalg.norm(np.diff(xyz_mm, axis=-2), axis=-1)
+    nears = height[..., :-1] - height[..., 1:] >= steepness * way
+    onward = np.logical_and.accumulate(nears[..., ::-1], axis=-1)[..., ::-1]
+    return np.concatenate([onward, np.ones((*shape[:-1], 1), dtype=np.bool_)], axis=-1)
