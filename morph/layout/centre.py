@@ -13,9 +13,9 @@ from dataclasses import replace
 
 import numpy as np
 
-from morph.core.arrays import Bools, Floats
+from morph.core.arrays import Bools, Floats, Ints
 from morph.layout.walls import Walls
-from morph.layout.web import Joint, Run, Web, arc_mm, measure_length_mm
+from morph.layout.web import Joint, Run, Web, arc_mm, is_parallel, measure_length_mm, merge_along
 
 ROUNDS = 3
 PROBE_SHARE = 0.5
@@ -98,25 +98,59 @@ def centre(web: Web, walls: Walls, step_mm: float) -> None:
     _measure_widths(web, walls, keys, bounds, step_mm)
 
 
-def _measure_widths(web: Web, walls: Walls, keys: list[int], bounds: Floats, step_mm: float) -> None:
-    """Sets half-widths from probes near both walls, and which samples are free."""
+def _measure_widths(web: Web, walls: Walls, keys: list[int], bounds: Ints, step_mm: float) -> None:
+    """Sets half-widths from the walls abreast of each sample, and which samples are free."""
     place = np.concatenate([web.runs[key].place_mm for key in keys])
     half = np.concatenate([web.runs[key].half_mm for key in keys])
     normal = np.concatenate([_normals(web.runs[key], step_mm) for key in keys])
-    reach = WIDTH_PROBE_SHARE * half
     tangent = np.column_stack([normal[:, 1], -normal[:, 0]])
     own = np.ones(len(place), dtype=bool)
-    mean = np.zeros(len(place))
     for sign in (1.0, -1.0):
-        away, wall = walls.nearest(place + sign * reach[:, None] * normal)
+        _, wall = walls.nearest(place + sign * WIDTH_PROBE_SHARE * half[:, None] * normal)
         ahead = np.abs(((wall - place) * tangent).sum(axis=1))
         own &= ahead <= ABREAST_SHARE * half + 0.5 * step_mm
-        mean += 0.5 * (away + reach)
+    wall_length, wall_away = _walls_abreast(walls, place, half, normal, step_mm)
     for key, first, last in zip(keys, bounds[:-1], bounds[1:], strict=True):
         run = web.runs[key]
-        run.half_mm = np.where(own[first:last], mean[first:last], half[first:last])
-        run.free = own[first:last].copy()
+        here = slice(first, last)
+        run.free = own[here].copy()
+        run.half_mm = _mean_half(half[here], own[here], wall_length[here], wall_away[here], step_mm)
         _close_zones(web, run)
+
+
+def _walls_abreast(walls: Walls, place: Floats, half: Floats, normal: Floats, step_mm: float) -> tuple[Floats, Floats]:
+    """Returns per sample the length of wall abreast of it, and that length times its mean distance.
+
+    Each contour segment belongs to the sample nearest to its middle and counts with its length along
+    the channel, so that the mean is the channel's area over its length, whatever the walls' roughness:
+    the distance to the nearest wall point alone would read rough walls too narrow.
+    """
+    from scipy.spatial import cKDTree
+
+    start, stop = walls.point_mm, walls.point_mm[walls.following]
+    middle = 0.5 * (start + stop)
+    _, index = cKDTree(place).query(middle)
+    away = middle - place[index]
+    across = np.abs((away * normal[index]).sum(axis=1))
+    tangent = np.column_stack([normal[index, 1], -normal[index, 0]])
+    along = np.abs((away * tangent).sum(axis=1))
+    left = np.sign((away * normal[index]).sum(axis=1))
+    length = np.abs(((stop - start) * tangent).sum(axis=1)) * np.abs(left)
+    length[(along > 1.5 * step_mm) | (across > 1.6 * half[index] + step_mm)] = 0.0
+    n = len(place)
+    total, moment = np.bincount(index, length, n), np.bincount(index, length * across, n)
+    return total.astype(np.float64), moment.astype(np.float64)
+
+
+def _mean_half(half: Floats, own: Bools, wall_length: Floats, wall_away: Floats, step_mm: float) -> Floats:
+    """Returns the half-width (k,) of a run, averaged along half a half-width; where no wall lies abreast, `half`."""
+    from scipy.ndimage import gaussian_filter1d
+
+    sigma = max(1.0, 0.5 * float(np.median(half)) / step_mm)
+    weight = np.where(own, wall_length, 0.0)
+    total = gaussian_filter1d(weight, sigma, mode="constant")
+    mean = gaussian_filter1d(np.where(own, wall_away, 0.0), sigma, mode="constant") / np.maximum(total, 1e-12)
+    return np.where(own & (total > 0.2 * step_mm), mean, half)
 
 
 def _close_zones(web: Web, run: Run) -> None:
@@ -166,6 +200,38 @@ def _zone_end(away: Floats, free: Bools, stretch: float, limit: float) -> float:
     return limit if start is None else min(start, limit)
 
 
+def merge_aimed(web: Web, ratio: float = 2.6) -> int:
+    """Makes one junction of two whose other channels all aim at one point between them.
+
+    Where channels cross at a slant, thinning finds two junctions joined by a short run. They are one
+    when the run is shorter than `ratio` half-widths and the lines of the other runs meet.
+
+    Returns:
+        How many runs were taken up.
+    """
+    n_merged = 0
+    for key in sorted(web.runs, key=lambda k: (web.runs[k].length_mm, k)):
+        run = web.runs.get(key)
+        if run is None or run.start == run.end or min(web.degree(run.start), web.degree(run.end)) < 3:
+            continue
+        radius = max(web.joints[run.start].radius_mm, web.joints[run.end].radius_mm)
+        if run.length_mm >= ratio * radius or is_parallel(web, run):
+            continue
+        lines = [
+            line
+            for joint in (run.start, run.end)
+            for other, leaving in web.leaving(joint)
+            if other != key and (line := _line_near(leaving, radius)) is not None
+        ]
+        n_others = web.degree(run.start) + web.degree(run.end) - 2
+        aim = _aim(lines) if len(lines) == n_others else None
+        middle = 0.5 * (web.joints[run.start].place_mm + web.joints[run.end].place_mm)
+        if aim is not None and aim[1] < AIM_SPREAD * radius and np.hypot(*(aim[0] - middle)) < radius:
+            merge_along(web, key)
+            n_merged += 1
+    return n_merged
+
+
 def place_junctions(web: Web) -> None:
     """Moves each junction to the point nearest, in the least-squares sense, to the lines its free runs make near it.
 
@@ -177,26 +243,29 @@ def place_junctions(web: Web) -> None:
         if web.degree(key) < 3:
             continue
         joint = web.joints[key]
-        matrix, vector, square, n_lines = np.zeros((2, 2)), np.zeros(2), 0.0, 0
-        for _, run in web.leaving(key):
-            line = _line_near(run, joint.radius_mm)
-            if line is not None:
-                middle, direction = line
-                across = np.eye(2) - np.outer(direction, direction)
-                matrix += across
-                vector += across @ middle
-                square += float(middle @ across @ middle)
-                n_lines += 1
-        (a, b), (_, d) = matrix
-        smallest = 0.5 * (a + d) - float(np.hypot(0.5 * (a - d), b))
-        if smallest < 0.15:
+        lines = [line for _, run in web.leaving(key) if (line := _line_near(run, joint.radius_mm)) is not None]
+        aim = _aim(lines)
+        if aim is None:
             continue
-        determinant = a * d - b * b
-        place = np.array([d * vector[0] - b * vector[1], a * vector[1] - b * vector[0]]) / determinant
-        spread = np.sqrt(max(0.0, square - 2.0 * float(vector @ place) + float(place @ matrix @ place)) / n_lines)
-        moves_mm = float(np.hypot(*(place - joint.place_mm)))
-        if moves_mm < joint.radius_mm and spread < AIM_SPREAD * joint.radius_mm:
+        place, spread = aim
+        if np.hypot(*(place - joint.place_mm)) < joint.radius_mm and spread < AIM_SPREAD * joint.radius_mm:
             move_joint(web, key, place)
+
+
+def _aim(lines: list[tuple[Floats, Floats]]) -> tuple[Floats, float] | None:
+    """Returns the point nearest to all lines and its rms distance from them; None when they are near parallel."""
+    matrix, vector, square = np.zeros((2, 2)), np.zeros(2), 0.0
+    for middle, direction in lines:
+        across = np.eye(2) - np.outer(direction, direction)
+        matrix += across
+        vector += across @ middle
+        square += float(middle @ across @ middle)
+    (a, b), (_, d) = matrix
+    if 0.5 * (a + d) - float(np.hypot(0.5 * (a - d), b)) < 0.15:
+        return None
+    place = np.array([d * vector[0] - b * vector[1], a * vector[1] - b * vector[0]]) / (a * d - b * b)
+    rest = square - 2.0 * float(vector @ place) + float(place @ matrix @ place)
+    return place, float(np.sqrt(max(0.0, rest) / len(lines)))
 
 
 def _line_near(run: Run, radius_mm: float) -> tuple[Floats, Floats] | None:

@@ -17,7 +17,7 @@ from morph.core.verdict import Notice
 from morph.layout import notices as say
 from morph.layout.assemble import Parts, assemble
 from morph.layout.bridges import suggest_bridges
-from morph.layout.centre import centre, cut_at_frame, place_junctions, resample, trim_tips
+from morph.layout.centre import centre, cut_at_frame, merge_aimed, place_junctions, resample, trim_tips
 from morph.layout.density import Density
 from morph.layout.frame import extend, find_mouths
 from morph.layout.graph import ChannelGraph, Dropped, DropReason
@@ -137,6 +137,7 @@ def _trace(
     betti = web.betti()
     resample(web, pixel_mm)
     centre(web, walls, pixel_mm)
+    merge_aimed(web)
     place_junctions(web)
     cut_at_frame(web, density.size_mm)
     trim_tips(web)

@@ -175,7 +175,7 @@ def cleaned(mask: Bools, width_px: float, keep_px: Floats) -> tuple[Bools, Bools
     Args:
         mask: coolant.
         width_px: mean channel width.
-        keep_px: (n, 2) array positions (row, column) of ports; a piece within one width of one stays.
+        keep_px: (n, 2) array positions (row, column) of ports; the piece nearest to one, within one width, stays.
     """
     from scipy import ndimage
 
@@ -185,7 +185,10 @@ def cleaned(mask: Bools, width_px: float, keep_px: Floats) -> tuple[Bools, Bools
     crumb[0] = False
     for row, column in np.asarray(keep_px).reshape(-1, 2):
         top, left = max(0, int(row - width_px)), max(0, int(column - width_px))
-        crumb[np.unique(label[top : int(row + width_px) + 2, left : int(column + width_px) + 2])] = False
+        near = np.argwhere(mask[top : int(row + width_px) + 2, left : int(column + width_px) + 2]) + np.array([top, left])
+        if len(near):
+            r, c = near[int(np.argmin(np.hypot(*(near - (row, column)).T)))]
+            crumb[label[r, c]] = False
     islands = crumb[label]
     solid = mask & ~islands
     label, n = ndimage.label(~np.pad(solid, 1))

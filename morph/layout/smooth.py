@@ -3,8 +3,8 @@
 Minimised over the control points is sum w |C(s_i) - p_i|^2 + lambda times the integral of the squared
 second derivative (penalised B-splines: Eilers and Marx, 1996, Statistical Science 11:2). A ripple of wavelength W
 is damped by 1 / (1 + (W_c / W)^4) where lambda = (W_c / 2 pi)^4 / ds, so the firmness is stated as the
-wavelength W_c. It starts at two channel widths and is raised only while a bend is tighter than one
-width, never beyond a deviation of 0.10 of the local width; where even that is exceeded it is lowered and
+wavelength W_c. It starts at 1.4 channel widths; around bends tighter than one width it is raised,
+never beyond a deviation of 0.10 of the local width; where even the start exceeds that it is lowered and
 knots are added. A chain runs straight on through junctions, so the straighter pair shares its tangent.
 """
 
@@ -22,8 +22,7 @@ from morph.layout.centre import move_joint, smoothed_along
 from morph.layout.web import Run, Web, arc_mm
 
 DEVIATION_SHARE = 0.10
-GENTLE_WIDTHS = 2.0
-FIRMEST_WIDTHS = 40.0
+GENTLE_WIDTHS = 1.4
 TIGHTEST_BEND = 1.0
 """Curvature times width above which a chain is smoothed more firmly."""
 STRAIGHT_COSINE = -0.7
@@ -33,7 +32,9 @@ SEAM_WEIGHT = 2.0
 SETTLED_WEIGHT = 50.0
 MOVED_POINTS = 4
 """A joint moved off its curve takes this many control points along, the last ones less and less."""
-HALVINGS = 7
+ROUNDS = 8
+STEP = 1.4
+"""The stated wavelength changes by this factor per round, only where it must."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -148,7 +149,9 @@ class _Fit:
         weight[[0, -1]] = END_WEIGHT
         self.normal = self._bands(self.design.T @ self.design.multiply(weight[:, None]))
         self.right: Floats = np.asarray(self.design.T @ (weight[:, None] * samples.place_mm), dtype=np.float64)
-        self.penalty = self._bands(_roughness(self.knots, length / n_spans))
+        self.span_mm = length / n_spans
+        self.bending = _bending(self.knots, self.span_mm)
+        self.span_at = (np.arange(n_spans) + 0.5) * self.span_mm
 
     @staticmethod
     def _bands(matrix: Any) -> Floats:
@@ -161,49 +164,55 @@ class _Fit:
             bands[DEGREE - offset, offset:] = sparse.diagonal(offset)
         return bands
 
-    def solve(self, wavelength_mm: float) -> Curve:
-        """Returns the curve that damps ripples shorter than `wavelength_mm`."""
+    def solve(self, wavelength_mm: Floats) -> Curve:
+        """Returns the curve that damps ripples shorter than `wavelength_mm (n_spans,)` on each span."""
         from scipy.linalg import solveh_banded
+        from scipy.sparse import diags
 
         spacing = float(self.samples.at[-1]) / (len(self.samples.at) - 1)
-        firmness = (wavelength_mm / (2.0 * math.pi)) ** 4 / spacing
-        bands = self.normal + firmness * self.penalty
+        firmness = diags((wavelength_mm / (2.0 * math.pi)) ** 4 / spacing * 0.5 * self.span_mm)
+        first, second = self.bending
+        bands = self.normal + self._bands(first.T @ firmness @ first + second.T @ firmness @ second)
         bands[DEGREE] += 1e-12 * bands[DEGREE].max()
-        control = solveh_banded(bands, self.right, check_finite=False)
-        return Curve(self.knots, control)
+        return Curve(self.knots, solveh_banded(bands, self.right, check_finite=False))
 
-    def excess(self, curve: Curve) -> float:
-        """Returns the largest deviation of free samples as a share of what is allowed (1 = at the bound)."""
+    def near(self, bad: Bools, reach_mm: float) -> Bools:
+        """Returns which spans (n_spans,) lie within `reach_mm` of a sample marked in `bad (k,)`."""
+        at = self.samples.at[bad]
+        right = np.searchsorted(at, self.span_at)
+        after = np.abs(at[np.minimum(right, len(at) - 1)] - self.span_at)
+        before = np.abs(at[np.maximum(right - 1, 0)] - self.span_at)
+        return np.asarray(np.minimum(after, before) <= reach_mm + self.span_mm)
+
+    def excess(self, curve: Curve) -> Floats:
+        """Returns per sample the deviation as a share of what is allowed (1 = at the bound), 0 where not free."""
         away = deviations_mm(curve, self.samples.at, self.samples.place_mm)
-        share = away / (DEVIATION_SHARE * 2.0 * self.samples.half_mm)
-        return float(share[self.samples.free].max(initial=0.0))
+        return np.where(self.samples.free, away / (DEVIATION_SHARE * 2.0 * self.samples.half_mm), 0.0)
 
-    def bend(self, curve: Curve) -> float:
-        """Returns the largest curvature times local width."""
-        return float((curvature_per_mm(curve, self.samples.at) * 2.0 * self.samples.half_mm).max())
+    def bend(self, curve: Curve) -> Floats:
+        """Returns per sample the curvature times the local width."""
+        return curvature_per_mm(curve, self.samples.at) * 2.0 * self.samples.half_mm
 
 
-def _roughness(knots: Floats, span_mm: float) -> Any:
-    """Returns the sparse matrix of the integrated squared second derivative, spans of equal length `span_mm`.
+def _bending(knots: Floats, span_mm: float) -> list[Any]:
+    """Returns two sparse matrices (n_spans, n): the second derivative at each span's two Gauss points.
 
-    The second derivative of a cubic is linear on a span, so two Gauss points per span are exact.
+    The second derivative of a cubic is linear on a span, so two points integrate its square exactly.
     """
     from scipy.interpolate import BSpline
     from scipy.sparse import csr_matrix
 
     spans = knots[DEGREE:-DEGREE]
     middle = 0.5 * (spans[:-1] + spans[1:])
-    n = len(knots) - DEGREE - 1
-    total = csr_matrix((n, n))
     spread = span_mm / 8.0
+    found = []
     for gauss in (-1.0, 1.0):
         at = middle + gauss * 0.5 * span_mm / math.sqrt(3.0)
         before, here, after = (
             csr_matrix(BSpline.design_matrix(at + shift * spread, knots, DEGREE)) for shift in (-1.0, 0.0, 1.0)
         )
-        second = (before + after - here.multiply(2.0)).multiply(spread**-2)
-        total = total + (second.T @ second).multiply(0.5 * span_mm)
-    return total
+        found.append((before + after - here.multiply(2.0)).multiply(spread**-2))
+    return found
 
 
 def deviations_mm(curve: Curve, at: Floats, place_mm: Floats) -> Floats:
@@ -222,37 +231,33 @@ def curvature_per_mm(curve: Curve, at: Floats) -> Floats:
 
 
 def fit_chain(samples: Samples, seam_weight: float = SEAM_WEIGHT) -> Curve:
-    """Returns the smoothest curve through `samples` that keeps the deviation bound and needs no tight bend."""
+    """Returns the curve through `samples`: gentle, softer where it would deviate, firmer where it bends tightly."""
     half = float(np.median(samples.half_mm))
-    gentle = GENTLE_WIDTHS * 2.0 * half
-    fit, curve = None, None
     for knot_step in (half, 0.5 * half, 0.25 * half):
         fit = _Fit(samples, knot_step, seam_weight)
-        curve = fit.solve(gentle)
-        if fit.excess(curve) > 1.0:
-            curve = _search(fit, 0.05 * gentle, gentle, bends_matter=False)
-        if fit.excess(curve) <= 1.0:
-            break
-    assert fit is not None and curve is not None
-    if fit.excess(curve) <= 1.0 and fit.bend(curve) > TIGHTEST_BEND:
-        curve = _search(fit, gentle, FIRMEST_WIDTHS * 2.0 * half, bends_matter=True)
+        wavelength = np.full(len(fit.span_at), GENTLE_WIDTHS * 2.0 * half)
+        curve = fit.solve(wavelength)
+        for _ in range(ROUNDS):
+            bad = fit.excess(curve) > 1.0
+            if not bad.any():
+                return _straightened(fit, wavelength, curve, 2.0 * half)
+            wavelength = np.where(fit.near(bad, half), wavelength / STEP, wavelength)
+            curve = fit.solve(wavelength)
     return curve
 
 
-def _search(fit: _Fit, low: float, high: float, bends_matter: bool) -> Curve:
-    """Returns the firmest curve within the bound by halving log wavelength; stops early once bends are wide enough."""
-    best = fit.solve(low)
-    for _ in range(HALVINGS):
-        middle = math.sqrt(low * high)
-        curve = fit.solve(middle)
-        inside = fit.excess(curve) <= 1.0
-        if inside:
-            best = curve
-        if inside and not (bends_matter and fit.bend(curve) <= TIGHTEST_BEND):
-            low = middle
-        else:
-            high = middle
-    return best
+def _straightened(fit: _Fit, wavelength: Floats, curve: Curve, width_mm: float) -> Curve:
+    """Returns `curve` made firmer around bends tighter than one width, as long as it keeps the deviation bound."""
+    for _ in range(ROUNDS):
+        tight = fit.bend(curve) > TIGHTEST_BEND
+        if not tight.any():
+            break
+        wavelength = np.where(fit.near(tight, width_mm), wavelength * STEP, wavelength)
+        firmer = fit.solve(wavelength)
+        if fit.excess(firmer).max() > 1.0:
+            break
+        curve = firmer
+    return curve
 
 
 def cut_curve(curve: Curve, at: tuple[float, ...]) -> list[Curve]:

@@ -243,20 +243,22 @@ def merge_near(web: Web, ratio: float = 1.0) -> int:
             if run.start == run.end or web.degree(run.start) < 3 or web.degree(run.end) < 3:
                 continue
             score = run.length_mm / (ratio * max(web.joints[run.start].radius_mm, web.joints[run.end].radius_mm))
-            if score < 1.0 and (best is None or score < best[0]) and not _is_parallel(web, run):
+            if score < 1.0 and (best is None or score < best[0]) and not is_parallel(web, run):
                 best = (score, key)
         if best is None:
             return n_merged
-        _merge_along(web, best[1])
+        merge_along(web, best[1])
         n_merged += 1
 
 
-def _is_parallel(web: Web, run: Run) -> bool:
+def is_parallel(web: Web, run: Run) -> bool:
+    """Returns whether another run joins the same two joints."""
     ends = {run.start, run.end}
     return sum({web.runs[key].start, web.runs[key].end} == ends for key in web.at[run.start]) > 1
 
 
-def _merge_along(web: Web, key: int) -> None:
+def merge_along(web: Web, key: int) -> None:
+    """Takes up the run `key`: its two joints become one, halfway between them."""
     run = web.remove_run(key)
     first, second = run.start, run.end
     kept, gone = web.joints[first], web.joints[second]
@@ -272,7 +274,11 @@ def _merge_along(web: Web, key: int) -> None:
             place, half = np.vstack([place[:1], place]), np.concatenate([half[:1], half])
         if moved.end == second:
             place, half = np.vstack([place, place[-1:]]), np.concatenate([half, half[-1:]])
-        web.add_run(Run(start, end, place, half))
+        free = moved.free
+        if free is not None:
+            head, tail = [False] * (moved.start == second), [False] * (moved.end == second)
+            free = np.concatenate([head, free, tail]).astype(np.bool_)
+        web.add_run(Run(start, end, place, half, free))
     web.remove_joint(second)
     for other in sorted(set(web.at[first])):
         web.add_run(web.remove_run(other))

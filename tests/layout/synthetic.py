@@ -175,7 +175,7 @@ def _simplify(rng, places, edges, ports, width):
         second = two.line if two.a == n else two.line[::-1]
         a, b = one.a if one.b == n else one.b, two.b if two.a == n else two.a
         edges = [e for e in edges if e is not one and e is not two]
-        edges.append(Edge(a, b, _rounded(np.vstack([first, second[1:]]), len(first) - 1, 2.2 * width), np.empty(0)))
+        edges.append(Edge(a, b, _rounded(np.vstack([first, second[1:]]), len(first) - 1, 3.0 * width), np.empty(0)))
     return edges
 
 
@@ -188,25 +188,29 @@ def _rounded(line, corner, reach_px):
     return _resampled(np.vstack([line[: corner - n], arc, line[corner + n + 1 :]]))
 
 
-def _twin(rng, edges, width, port_nodes):
-    """Splits the longest edges into two that run side by side with a narrow wall between them."""
+def _twin(rng, places, edges, width, port_nodes):
+    """Splits a stretch of the longest edges into two channels that run side by side with a narrow wall between them."""
     out, made = [], 0
     for edge in sorted(edges, key=lambda e: -e.arc[-1]):
-        length = edge.arc[-1]
-        if made >= 2 or length < 12 * width or edge.a == edge.b or {edge.a, edge.b} & port_nodes:
+        arc = edge.arc
+        if made >= 3 or arc[-1] < 15 * width or edge.a == edge.b:
             out.append(edge)
             continue
-        gap = rng.uniform(3.0, 4.5)
-        share = np.clip(np.minimum(edge.arc, length - edge.arc) / (2.6 * width), 0.0, 1.0)
-        share = np.sin(0.5 * np.pi * share)
-        tangent = np.gradient(edge.line, axis=0)
+        lens = rng.uniform(8.0, max(8.1, min(20.0, arc[-1] / width - 7.0))) * width
+        first = int(np.searchsorted(arc, 0.5 * (arc[-1] - lens)))
+        last = int(np.searchsorted(arc, 0.5 * (arc[-1] + lens)))
+        u, v = len(places), len(places) + 1
+        places = np.vstack([places, edge.line[first], edge.line[last]])
+        middle = Edge(u, v, edge.line[first : last + 1], np.empty(0))
+        share = np.clip(np.minimum(middle.arc, middle.arc[-1] - middle.arc) / (1.4 * width), 0.0, 1.0)
+        tangent = np.gradient(middle.line, axis=0)
         tangent /= np.hypot(*tangent.T)[:, None]
         normal = np.column_stack([-tangent[:, 1], tangent[:, 0]])
-        for sign in (1.0, -1.0):
-            line = edge.line + sign * 0.5 * (width + gap) * share[:, None] * normal
-            out.append(Edge(edge.a, edge.b, _resampled(line), np.empty(0)))
+        apart = 0.5 * (width + rng.uniform(3.0, 4.5)) * np.sin(0.5 * np.pi * share)[:, None] * normal
+        out += [Edge(u, v, _resampled(middle.line + sign * apart), np.empty(0)) for sign in (1.0, -1.0)]
+        out += [Edge(edge.a, u, edge.line[: first + 1], np.empty(0)), Edge(v, edge.b, edge.line[last:], np.empty(0))]
         made += 1
-    return out, made
+    return places, out, made
 
 
 def _distance(rows, columns, edges):
@@ -262,7 +266,7 @@ def _draw(rng, seed, mode):
     width = float(rng.uniform(6.0, 12.0))
     if mode == "necks" or mode == "close_pairs":
         width = min(width, 9.0)
-    spacing = float(rng.uniform(5.5, 9.0)) * width
+    spacing = float(rng.uniform(5.5, 9.0)) * width * (1.3 if mode == "close_pairs" else 1.0)
     places, edges = _graph(rng, rows, columns, width, spacing)
     places, edges, ports = _add_ports(rng, places, edges, rows, columns, width)
     if len(ports) < 2:
@@ -272,7 +276,7 @@ def _draw(rng, seed, mode):
     if len(edges) < 4 or not port_nodes <= {n for e in edges for n in (e.a, e.b)}:
         return None
     if mode == "close_pairs":
-        edges, made = _twin(rng, edges, width, port_nodes)
+        places, edges, made = _twin(rng, places, edges, width, port_nodes)
         if not made:
             return None
     if min(e.arc[-1] / (0.7 if {e.a, e.b} & port_nodes else 1.0) for e in edges) < 3.2 * width or any(e.a == e.b for e in edges):
