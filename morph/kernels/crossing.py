@@ -71,21 +71,10 @@ def triangles_cross(v: Floats, one: Ints, two: Ints) -> bool:
 
 
 @njit(cache=True, nogil=True)
-def triangles_apart(v: Floats, one: Ints, two: Ints) -> bool:
-    """Returns whether the boxes of two triangles do not even touch."""
+def boxes_meet(one: Floats, a: int, two: Floats, b: int) -> bool:
+    """Returns whether box `one[a]` and box `two[b]` overlap or touch."""
     for axis in range(3):
-        a, b, c = v[one[0], axis], v[one[1], axis], v[one[2], axis]
-        d, e, f = v[two[0], axis], v[two[1], axis], v[two[2], axis]
-        if min(a, b, c) > max(d, e, f) or max(a, b, c) < min(d, e, f):
-            return True
-    return False
-
-
-@njit(cache=True, nogil=True)
-def boxes_meet(boxes: Floats, a: int, b: int) -> bool:
-    """Returns whether the boxes of rows a and b overlap or touch."""
-    for axis in range(3):
-        if boxes[a, axis] > boxes[b, 3 + axis] or boxes[b, axis] > boxes[a, 3 + axis]:
+        if one[a, axis] > two[b, 3 + axis] or two[b, axis] > one[a, 3 + axis]:
             return False
     return True
 
@@ -96,6 +85,7 @@ def find_crossings(
     last: int,
     vertices: Floats,
     triangles: Ints,
+    triangle_boxes: Floats,
     boxes: Floats,
     n_leaves: int,
     pairs: Ints,
@@ -103,9 +93,9 @@ def find_crossings(
 ) -> None:
     """Counts the crossing pairs whose lower triangle lies in the leaves first..last - 1.
 
-    `triangles (m, 3)` stand in the order of the tree, `boxes (2 n_leaves, 6)` is the heap (empty leaves have low above
-    high), `n_leaves` a power of two. `pairs (n_leaves,)` receives the number of crossing pairs of each leaf;
-    `crossed (m,)` is set to 1 for every triangle in one.
+    `triangles (m, 3)` stand in the order of the tree with their own `triangle_boxes`; `boxes (2 n_leaves, 6)` is the
+    heap (empty leaves have low above high), `n_leaves` a power of two. `pairs (n_leaves,)` receives the number of
+    crossing pairs of each leaf; `crossed (m,)` is set to 1 for every triangle in one.
     """
     stack = np.empty(128, np.int64)
     n_triangles = len(triangles)
@@ -117,7 +107,7 @@ def find_crossings(
         while depth > 0:
             depth -= 1
             node = stack[depth]
-            if not boxes_meet(boxes, own, node):
+            if not boxes_meet(boxes, own, boxes, node):
                 continue
             if node < n_leaves:
                 stack[depth] = 2 * node + 1
@@ -128,8 +118,10 @@ def find_crossings(
             if other < leaf:
                 continue
             for i in range(LEAF * leaf, min(LEAF * leaf + LEAF, n_triangles)):
+                if not boxes_meet(triangle_boxes, i, boxes, node):
+                    continue
                 for j in range(max(LEAF * other, i + 1), min(LEAF * other + LEAF, n_triangles)):
-                    if triangles_apart(vertices, triangles[i], triangles[j]):
+                    if not boxes_meet(triangle_boxes, i, triangle_boxes, j):
                         continue
                     if triangles_cross(vertices, triangles[i], triangles[j]):
                         pairs[leaf] += 1

@@ -1,8 +1,8 @@
 """The channels as one closed solid: swept, extracted, simplified, tested for crossings, trimmed.
 
 The extracted surface is simplified once by edge collapses that move it by at most SIMPLIFY_MM. If
-that, or the extraction itself, makes triangles pass through each other, it is taken back there: vertices
-of crossing triangles return to the middle of their cells, and the tolerance is lowered.
+that, or the extraction itself, makes triangles pass through each other or pinches a neck, it is taken
+back: vertices of crossing triangles return to the middle of their cells, and the tolerance is lowered.
 """
 
 from __future__ import annotations
@@ -23,7 +23,7 @@ from morph.solid.extract import extract_surface
 from morph.solid.field import SampledField, sample_field
 from morph.solid.result import ChannelSolid
 from morph.solid.sweep import make_sweep
-from morph.solid.tidy import make_file_mesh, round_to_file
+from morph.solid.tidy import is_closed, make_file_mesh, require_closed, round_to_file, tidy_mesh
 
 MOST_TAKE_BACKS = 4
 
@@ -43,13 +43,15 @@ def make_channel_solid(plan: ChannelPlan, blank: Blank, h_mm: float, progress: P
     field = sample_field(make_sweep(plan), h_mm, progress)
     vertices, triangles = extract_surface(field, progress)
     vertices = round_to_file(vertices)
+    euler = len(vertices) - len(triangles) // 2
     swept, found = _simplified(vertices, triangles, SIMPLIFY_MM, progress)
-    if found.pairs:
+    if not _is_sound(swept, found, euler):
         vertices = _untangled(field, vertices, triangles, progress)
         for tolerance in (SIMPLIFY_MM, 0.25 * SIMPLIFY_MM, 0.0):
             swept, found = _simplified(vertices, triangles, tolerance, progress)
-            if not found.pairs:
+            if _is_sound(swept, found, euler):
                 break
+    require_closed(swept, "the channel solid")
     require_uncrossed(swept, found)
     return ChannelSolid(
         swept=swept,
@@ -74,16 +76,20 @@ def require_uncrossed(mesh: Mesh, found: Crossings) -> None:
     )
 
 
+def _is_sound(mesh: Mesh, found: Crossings, euler: int) -> bool:
+    """Returns whether a simplified mesh is closed, crosses nowhere and kept its Euler number (bodies and loops)."""
+    return found.pairs == 0 and is_closed(mesh) and len(mesh.vertices_mm) - len(mesh.triangles) // 2 == euler
+
+
 def _simplified(vertices: Floats, triangles: Ints, tolerance_mm: float, progress: Progress) -> tuple[Mesh, Crossings]:
     """Returns the surface moved by at most `tolerance_mm` with fewer triangles, and its crossings."""
-    what = "the channel solid"
     if tolerance_mm > 0.0:
         progress.step("solid: simplify", 0, 1)
-        body, _ = body_from(vertices, triangles, what)
+        body, _ = body_from(vertices, triangles, "the channel solid")
         progress.step("solid: simplify", 0, 1)
         vertices, triangles, _ = arrays_of(body.simplify(tolerance_mm))
         progress.step("solid: simplify", 1, 1)
-    mesh, _ = make_file_mesh(vertices, triangles, np.zeros(len(triangles), np.int64), what)
+    mesh, _ = tidy_mesh(vertices, triangles, np.zeros(len(triangles), np.int64))
     return mesh, measure_crossings(mesh, progress)
 
 

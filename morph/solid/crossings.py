@@ -35,14 +35,14 @@ def measure_crossings(mesh: Mesh, progress: Progress = SILENT) -> Crossings:
         return Crossings(0, np.zeros(0, np.bool_))
     order = _space_filling_order(mesh.vertices_mm, mesh.triangles)
     triangles = np.ascontiguousarray(mesh.triangles[order])
-    boxes, n_leaves = _box_tree(mesh.vertices_mm, triangles)
+    triangle_boxes, boxes, n_leaves = _box_tree(mesh.vertices_mm, triangles)
     pairs, crossed = np.zeros(n_leaves, np.int64), np.zeros(len(triangles), np.uint8)
     vertices = mesh.vertices_mm
     run_slabs(
         "solid: crossings",
         n_leaves,
         LEAVES_PER_SLAB,
-        lambda a, b: find_crossings(a, b, vertices, triangles, boxes, n_leaves, pairs, crossed),
+        lambda a, b: find_crossings(a, b, vertices, triangles, triangle_boxes, boxes, n_leaves, pairs, crossed),
         progress,
     )
     back = np.zeros(len(triangles), np.bool_)
@@ -71,18 +71,18 @@ def _space_filling_order(vertices_mm: Floats, triangles: Ints) -> Ints:
     return np.argsort(code, kind="stable")
 
 
-def _box_tree(vertices_mm: Floats, triangles: Ints) -> tuple[Floats, int]:
-    """Returns the heap of boxes (2 n_leaves, 6) over triangles in tree order, and n_leaves."""
+def _box_tree(vertices_mm: Floats, triangles: Ints) -> tuple[Floats, Floats, int]:
+    """Returns the box of each triangle in tree order, the heap of boxes (2 n_leaves, 6) over them, and n_leaves."""
     from morph.kernels.crossing import LEAF
 
-    corner = vertices_mm[triangles]
+    a, b, c = (vertices_mm[triangles[:, corner]] for corner in range(3))
     n_leaves = 1
     while n_leaves * LEAF < len(triangles):
         n_leaves *= 2
     filled = np.full((n_leaves * LEAF, 6), np.inf)
     filled[:, 3:] = -np.inf
-    filled[: len(triangles), :3] = corner.min(axis=1)
-    filled[: len(triangles), 3:] = corner.max(axis=1)
+    filled[: len(triangles), :3] = np.minimum(np.minimum(a, b), c)
+    filled[: len(triangles), 3:] = np.maximum(np.maximum(a, b), c)
     boxes = np.empty((2 * n_leaves, 6))
     boxes[0] = np.inf
     level = filled.reshape(n_leaves, LEAF, 6)
@@ -91,6 +91,6 @@ def _box_tree(vertices_mm: Floats, triangles: Ints) -> tuple[Floats, int]:
         boxes[n : 2 * n, :3] = level[:, :, :3].min(axis=1)
         boxes[n : 2 * n, 3:] = level[:, :, 3:].max(axis=1)
         if n == 1:
-            return boxes, n_leaves
+            return filled, boxes, n_leaves
         level = boxes[n : 2 * n].reshape(n // 2, 2, 6)
         n //= 2

@@ -7,6 +7,7 @@ the memory are predicted from the plan.
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 from typing import Any
 
@@ -71,13 +72,13 @@ def choose_h_mm(plan: ChannelPlan, quality: QualitySettings) -> float:
         )
     triangles = predict_triangles(plan, h_mm)
     if triangles > MOST_TRIANGLES or triangles * BYTES_PER_TRIANGLE > MOST_BYTES:
-        least = h_mm * float(np.sqrt(triangles / min(MOST_TRIANGLES, MOST_BYTES / BYTES_PER_TRIANGLE)))
+        least = h_mm * math.sqrt(triangles / min(MOST_TRIANGLES, MOST_BYTES / BYTES_PER_TRIANGLE))
         raise GeometryError(
             "solid-too-large",
             expected=f"at most {MOST_TRIANGLES / 1e6:.0f} million triangles and {MOST_BYTES / 1e9:.0f} GB",
             found=f"{triangles / 1e6:.3g} million triangles, {triangles * BYTES_PER_TRIANGLE / 1e9:.3g} GB predicted",
             where=f"{len(plan.branches)} branches at h_mm = {h_mm:.3g} mm",
-            do=f"Set [quality] h_mm to {least:.2f} mm or more, or make the layout smaller.",
+            do=f"Set [quality] h_mm to {math.ceil(1000.0 * least) / 1000.0:.3f} mm or more, or make the layout smaller.",
         )
     return float(h_mm)
 

@@ -38,21 +38,29 @@ def make_file_mesh(vertices_mm: Floats, triangles: Ints, label: Ints, what: str)
     Raises:
         GeometryError: ``solid-not-closed`` when the result is not closed.
     """
+    mesh, label = tidy_mesh(vertices_mm, triangles, label)
+    require_closed(mesh, what)
+    return mesh, label
+
+
+def tidy_mesh(vertices_mm: Floats, triangles: Ints, label: Ints) -> tuple[Mesh, Ints]:
+    """Returns what `make_file_mesh` returns, without the test that it is closed."""
     vertices, triangles = _weld(round_to_file(vertices_mm), triangles)
     triangles, label = _drop_collapsed(triangles, label)
     for _ in range(MOST_ROUNDS):
-        short = _short_edges(vertices, triangles)
-        if len(short):
-            triangles = _merged(triangles, short, len(vertices))
+        length, height = _measure(vertices, triangles)
+        short = length < WELD_MM
+        if short.any():
+            row, side = np.nonzero(short)
+            edges = np.column_stack([triangles[row, side], triangles[row, (side + 1) % 3]])
+            triangles = _merged(triangles, np.sort(edges, axis=1), len(vertices))
             triangles, label = _drop_collapsed(triangles, label)
-        flat = _flat_triangles(vertices, triangles)
-        if len(flat):
-            triangles, label = _flip_flat(vertices, triangles, label, flat)
-        elif len(short) == 0:
+            continue
+        flat = np.flatnonzero(height < FLAT_HEIGHT_MM)
+        if len(flat) == 0:
             break
-    mesh, label = _ordered(vertices, triangles, label)
-    require_closed(mesh, what)
-    return mesh, label
+        triangles, label = _flip_flat(vertices, triangles, label, flat, length[flat].argmax(axis=1))
+    return _ordered(vertices, triangles, label)
 
 
 def require_closed(mesh: Mesh, what: str) -> None:
@@ -104,14 +112,6 @@ def _drop_collapsed(triangles: Ints, label: Ints) -> tuple[Ints, Ints]:
     return triangles[~twin], label[~twin]
 
 
-def _short_edges(vertices: Floats, triangles: Ints) -> Ints:
-    """Returns the edges (k, 2), lower vertex first, shorter than the welding distance."""
-    edges = np.concatenate([triangles[:, [0, 1]], triangles[:, [1, 2]], triangles[:, [2, 0]]])
-    edges = edges[edges[:, 0] < edges[:, 1]]
-    short = ((vertices[edges[:, 1]] - vertices[edges[:, 0]]) ** 2).sum(axis=1) < WELD_MM**2
-    return np.asarray(edges[short], dtype=np.int64)
-
-
 def _merged(triangles: Ints, edges: Ints, n_vertices: int) -> Ints:
     """Returns the triangles with the ends of `edges` made one vertex (the lowest of each group)."""
     into = np.arange(n_vertices)
@@ -129,25 +129,22 @@ def _merged(triangles: Ints, edges: Ints, n_vertices: int) -> Ints:
         into = deeper
 
 
-def _heights(vertices: Floats, triangles: Ints) -> tuple[Floats, Ints]:
-    """Returns each triangle's height (m,) over its longest edge in mm, and the corner (m,) where that edge starts."""
-    corner = vertices[triangles]
-    side = np.roll(corner, -1, axis=1) - corner
-    length = np.sqrt((side**2).sum(axis=2))
-    area2 = np.linalg.norm(np.cross(side[:, 0], side[:, 1]), axis=1)
-    return area2 / length.max(axis=1), length.argmax(axis=1)
+def _measure(vertices: Floats, triangles: Ints) -> tuple[Floats, Floats]:
+    """Returns the side lengths (m, 3) of each triangle, from corner k to the next, and its least height (m,), in mm."""
+    a, b, c = vertices[triangles[:, 0]], vertices[triangles[:, 1]], vertices[triangles[:, 2]]
+    one, two = b - a, c - b
+    length = np.sqrt(np.column_stack([(one**2).sum(axis=1), (two**2).sum(axis=1), ((a - c) ** 2).sum(axis=1)]))
+    x = one[:, 1] * two[:, 2] - one[:, 2] * two[:, 1]
+    y = one[:, 2] * two[:, 0] - one[:, 0] * two[:, 2]
+    z = one[:, 0] * two[:, 1] - one[:, 1] * two[:, 0]
+    return length, np.sqrt(x * x + y * y + z * z) / np.maximum(length.max(axis=1), 1e-300)
 
 
-def _flat_triangles(vertices: Floats, triangles: Ints) -> Ints:
-    """Returns the numbers of the triangles without height."""
-    return np.flatnonzero(_heights(vertices, triangles)[0] < FLAT_HEIGHT_MM)
-
-
-def _flip_flat(vertices: Floats, triangles: Ints, label: Ints, flat: Ints) -> tuple[Ints, Ints]:
+def _flip_flat(vertices: Floats, triangles: Ints, label: Ints, flat: Ints, longest: Ints) -> tuple[Ints, Ints]:
     """Returns triangles and labels with the long edge of each flat triangle flipped, where that makes no double edge.
 
-    A flat triangle (a, b, c) with b on its long edge a c hands b to the triangle (c, a, d) behind that edge:
-    (a, b, d) and (b, c, d) take its place, with its label.
+    A flat triangle (a, b, c) with b on its long edge a c hands b to the triangle (c, a, d) behind that edge: (a, b, d)
+    and (b, c, d) take its place, with its label. `longest (len(flat),)` is the corner at which the long edge starts.
     """
     triangles, label = triangles.copy(), label.copy()
     n = len(vertices)
@@ -155,10 +152,9 @@ def _flip_flat(vertices: Floats, triangles: Ints, label: Ints, flat: Ints) -> tu
     key = np.concatenate([a * n + b, b * n + c, c * n + a])
     order = np.argsort(key, kind="stable")
     directed = key[order]
-    _, starts = _heights(vertices, triangles[flat])
     touched: set[int] = set()
     made: set[int] = set()
-    for row, start in zip(flat.tolist(), starts.tolist(), strict=True):
+    for row, start in zip(flat.tolist(), longest.tolist(), strict=True):
         end, corner, far = triangles[row, start], triangles[row, (start + 2) % 3], triangles[row, (start + 1) % 3]
         # the long edge runs end -> far; the corner lies on it; the triangle behind holds far -> end
         at = np.searchsorted(directed, far * n + end)
@@ -182,9 +178,13 @@ def _flip_flat(vertices: Floats, triangles: Ints, label: Ints, flat: Ints) -> tu
 
 def _ordered(vertices: Floats, triangles: Ints, label: Ints) -> tuple[Mesh, Ints]:
     """Returns mesh and labels in the fixed order, unused vertices left out."""
-    used = np.unique(triangles)
-    triangles = np.searchsorted(used, triangles)
-    first = triangles.argmin(axis=1)
-    triangles = triangles[np.arange(len(triangles))[:, None], (first[:, None] + np.arange(3)) % 3]
-    order = np.lexsort((triangles[:, 2], triangles[:, 1], triangles[:, 0]))
-    return Mesh(vertices[used], triangles[order]), label[order]
+    is_used = np.zeros(len(vertices), np.bool_)
+    is_used[triangles] = True
+    triangles = (np.cumsum(is_used) - 1)[triangles]
+    a, b, c = triangles.T
+    low = np.minimum(np.minimum(a, b), c)
+    after = np.where(low == a, b, np.where(low == b, c, a))
+    # on a closed mesh no two triangles share a directed edge, so the first two corners order them
+    order = np.argsort(low * len(vertices) + after, kind="stable")
+    triangles = np.column_stack([low, after, a + b + c - low - after])[order]
+    return Mesh(vertices[is_used], triangles), label[order]

@@ -289,7 +289,7 @@ def test_channels_outside_the_blank_are_refused():
 def test_a_mesh_that_crosses_itself_is_refused():
     tetra = np.array([[0.0, 0, 0], [4, 0, 0], [0, 4, 0], [0, 0, 4]])
     faces = np.array([[0, 2, 1], [0, 1, 3], [1, 2, 3], [0, 3, 2]])
-    two = Mesh(np.vstack([tetra, tetra + (0.5, 0.6, 0.7)]), np.vstack([faces, faces + 4]))
+    two = Mesh(np.vstack([tetra, tetra + np.array([0.5, 0.6, 0.7])]), np.vstack([faces, faces + 4]))
     with pytest.raises(GeometryError) as caught:
         require_uncrossed(two, measure_crossings(two))
     assert caught.value.code == "solid-self-crosses"
