@@ -21,6 +21,9 @@ from morph.settings.job import PortSettings
 ON_FACE_MM = 0.05
 """A given exit lies on a port face when it is this near; it is then moved onto it."""
 
+NEAREST_SITES, FAR_SITES = 250, 100
+"""Sites tried on each face: the nearest to the port, and some of the others."""
+
 ROOM_SLACK_MM = 1e-6
 """A bore capped by its room equals it up to rounding."""
 
@@ -62,7 +65,10 @@ def list_sites(
         places = _polar_grid(blank, face, port_mm, step)
     else:
         places = _square_grid(blank, face, port_mm, step)
-    return keep_legal(blank, face, places, bore_mm, leave, limits)
+    near = np.argsort(np.round(np.linalg.norm(places - port_mm, axis=1), 9), kind="stable")
+    far = near[NEAREST_SITES:]
+    chosen = np.concatenate([near[:NEAREST_SITES], far[:: max(1, len(far) // FAR_SITES)]])
+    return keep_legal(blank, face, places[chosen], bore_mm, leave, limits)
 
 
 def keep_legal(

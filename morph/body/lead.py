@@ -18,7 +18,7 @@ import numpy as np
 from morph.body.blank import Blank
 from morph.body.exit import given_exit, given_leave, list_sites, port_faces
 from morph.body.lead_candidate import Bend, Bundle, detours, make_start, one_bend, sort_bundles, two_bends
-from morph.body.lead_check import NECK, Judged, Surroundings, coarse_channels, coarse_faces, judge_path
+from morph.body.lead_check import COARSE_SLACK_MM, NECK, Judged, Surroundings, coarse_channels, coarse_faces, judge_path
 from morph.body.lead_path import least_bend_radius_mm
 from morph.body.neighbour import Strand, make_network, polyline_arc_mm
 from morph.body.room import Limits
@@ -28,10 +28,8 @@ from morph.core.progress import Progress
 from morph.settings.job import PortSettings
 from morph.surface.carrier import Carrier
 
-COARSE_SAMPLES = 64
-CHUNK = 256
-FOR_MESSAGE = 8
-"""Paths judged although the coarse sampling found all of them blocked, to say what blocks the best."""
+CHUNK = 512
+"""Paths sampled coarsely at first, shortest first; then three times as many each time."""
 
 FULL_SLACK = 1e-6
 LONGER = 1.15
@@ -56,7 +54,7 @@ SEARCHES = (
 LEAST_BEND_BORES = 1.5
 """Least centreline bend radius of a lead in bores (common practice, no source)."""
 
-STRAIGHT_BORES = 1.0
+STRAIGHT_BORES = 0.5
 """Least straight end square to the face, in bores, so that an end can be machined (common practice, no source)."""
 
 BEND_MARGIN = 1.05
@@ -88,7 +86,7 @@ class PortStart:
 class Lead:
     """A lead that keeps its walls: the judged path, face and direction of its exit, and how it differs from the ideal.
 
-    `kink_rad`: turn at the port; 0 when it carries on smoothly. `thinned`: share of the port's bore.
+    `kink_rad`: turn at the port; 0 when it carries on smoothly.
     """
 
     port: PortStart
@@ -97,7 +95,6 @@ class Lead:
     leave: Floats
     length_mm: float
     kink_rad: float
-    thinned: float
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -130,8 +127,9 @@ def lay_leads(ground: Ground, ports: Sequence[PortStart], progress: Progress) ->
 
     Raises:
         GeometryError: `lead-blocked` names what blocks the best way found; `exit-off-port-face`,
-            `exit-without-wall`. SettingError: `leave-into-metal`, `leave-without-direction`.
+            `exit-without-wall`, `exits-too-near`. SettingError: `leave-into-metal`, `leave-without-direction`.
     """
+    _require_exits_apart(ground, ports)
     order = list(range(len(ports)))
     tried: set[tuple[int, ...]] = set()
     while True:
@@ -149,6 +147,23 @@ def lay_leads(ground: Ground, ports: Sequence[PortStart], progress: Progress) ->
                 break
         else:
             return tuple(laid[k] for k in range(len(ports)))
+
+
+def _require_exits_apart(ground: Ground, ports: Sequence[PortStart]) -> None:
+    """Raises `exits-too-near` when two given exits cannot keep a wall between even the least bores."""
+    given = [port.settings for port in ports if port.settings.exit_mm is not None]
+    needed = ground.limits.least_bore_mm + ground.limits.between_mm + ground.limits.band_mm
+    for k, one in enumerate(given):
+        for other in given[:k]:
+            apart = float(np.linalg.norm(np.subtract(one.exit_mm or (), other.exit_mm or ())))
+            if apart < needed:
+                raise GeometryError(
+                    "exits-too-near",
+                    expected=f"at least {needed:.3f} mm between two exits (least bore plus wall and bands)",
+                    found=f"{apart:.3f} mm",
+                    where=f"[[port]] '{other.name}' and '{one.name}' exit_mm",
+                    do="Move the exits apart, or allow a smaller bore or wall.",
+                )
 
 
 def _surround(ground: Ground, port: PortStart, laid: dict[int, Lead], ports: Sequence[PortStart]) -> Surroundings:
@@ -233,24 +248,21 @@ def _first_legal(
     bend: Bend,
 ) -> tuple[Lead | None, tuple[Judged, str] | None]:
     """Returns the shortest legal lead, or None and the path that comes closest with the name of its face."""
-    points = [bundle.points(ground.carrier, COARSE_SAMPLES) for bundle in bundles]
-    lengths = [np.linalg.norm(np.diff(p, axis=1), axis=2).sum(axis=1) for p in points]
-    clear = [coarse_faces(around, p, bundle.face, bend.bore_mm) for p, bundle in zip(points, bundles, strict=True)]
-    order = sort_bundles(bundles, lengths)
-    clear_first = [(b, k) for b, k in order if clear[b][k]]
-    # Nothing is clear of the faces: judge a few all the same, so that the message can say by how much.
-    wanted = clear_first or order[:FOR_MESSAGE]
+    order = sort_bundles(bundles)
     best: Lead | None = None
-    judged = 0
-    for low in range(0, len(wanted), CHUNK):
-        chunk = wanted[low : low + CHUNK]
-        free = coarse_channels(around, np.array([points[b][k] for b, k in chunk]), bend.bore_mm)
-        if best is None and not free.any():
-            free[:FOR_MESSAGE] = True
-        for (b, k), good in zip(chunk, free, strict=True):
-            if not good:
-                continue
-            if judged >= MOST_JUDGED or (_legal(best) and lengths[b][k] > LONGER * best.length_mm):
+    near_miss: tuple[float, int, int] | None = None
+    judged = low = 0
+    while low < len(order):
+        chunk = order[low : low + CHUNK + 2 * low]
+        low += len(chunk)
+        spare = _coarse(around, ground, bundles, chunk, bend)
+        top = int(np.argmax(spare))
+        if near_miss is None or spare[top] > near_miss[0]:
+            near_miss = (float(spare[top]), *chunk[top])
+        for b, k in (chunk[i] for i in np.flatnonzero(spare >= 0.0)):
+            if judged >= MOST_JUDGED or (
+                _legal(best) and float(bundles[b].paths.pieces[k].sum()) > LONGER * best.length_mm
+            ):
                 return _sorted_out(best)
             lead = _judge(around, ground, port, bundles[b], k, kinks[b], bend)
             judged += 1
@@ -258,7 +270,28 @@ def _first_legal(
                 return lead, None
             if lead is not None and (best is None or (not _legal(best) and lead.path.share > best.path.share)):
                 best = lead
+    if best is None and near_miss is not None:
+        _, b, k = near_miss
+        best = _judge(around, ground, port, bundles[b], k, kinks[b], bend)
+        return None, None if best is None else (best.path, best.face)
     return _sorted_out(best)
+
+
+def _coarse(
+    around: Surroundings, ground: Ground, bundles: Sequence[Bundle], chunk: Sequence[tuple[int, int]], bend: Bend
+) -> Floats:
+    """Returns by how much the paths of a chunk (n,) keep clear on a coarse sampling, below 0 where they do not."""
+    which = np.array(chunk, dtype=np.int64)
+    spare = np.empty(len(chunk))
+    for b in np.unique(which[:, 0]):
+        here = np.flatnonzero(which[:, 0] == b)
+        bundle = bundles[b].only(which[here, 1])
+        points = bundle.rough(ground.carrier)
+        spare[here] = coarse_faces(around, points, bundle.face, bend.bore_mm)
+        clear = np.flatnonzero(spare[here] >= 0.0)
+        free = coarse_channels(around, points[clear], bend.bore_mm)
+        spare[here[clear[~free]]] = -0.5 * COARSE_SLACK_MM
+    return spare
 
 
 def _legal(lead: Lead | None) -> TypeGuard[Lead]:
@@ -275,7 +308,7 @@ def _judge(
     around: Surroundings, ground: Ground, port: PortStart, bundle: Bundle, k: int, kink: float, bend: Bend
 ) -> Lead | None:
     """Returns path `k` of a bundle as a lead, legal or not; None when wrapping bent it too tightly."""
-    one = Bundle(bundle.paths.only(np.arange(len(bundle.leave)) == k), bundle.developed, bundle.face, bundle.leave[[k]])
+    one = bundle.only(np.array([k]))
     spacing = min(0.25 * ground.limits.least_bore_mm, 1.0)
     rough = one.points(ground.carrier, 256)
     if bundle.developed and float(least_bend_radius_mm(rough)[0]) < 0.999 * bend.radius_mm:
@@ -285,7 +318,7 @@ def _judge(
     fine[0] = port.xyz_mm
     path = judge_path(around, fine, bundle.face, port.bore_mm, bend.bore_mm)
     size = float(polyline_arc_mm(fine)[-1])
-    return Lead(port, path, bundle.face.name, bundle.leave[k], size, kink, bend.bore_mm / port.bore_mm)
+    return Lead(port, path, bundle.face.name, bundle.leave[k], size, kink)
 
 
 def _blocked_error(port: PortStart, best: tuple[Judged, str] | None, limits: Limits) -> GeometryError:

@@ -16,13 +16,24 @@ import numpy as np
 from morph.body.blank import Blank
 from morph.body.exit import Sites, keep_legal, port_faces, project_along, project_to_face
 from morph.body.face import CylinderFace, PlaneFace
-from morph.body.lead_path import SHARPEST_TURN_RAD, Paths, make_paths, sample_paths, start_corner, turn_between_rad
+from morph.body.lead_path import (
+    SHARPEST_TURN_RAD,
+    Paths,
+    make_paths,
+    rough_points,
+    sample_paths,
+    start_corner,
+    turn_between_rad,
+)
 from morph.body.room import Limits
-from morph.core.arrays import Floats, unit_rows
+from morph.core.arrays import Bools, Floats, Ints, unit_rows
 from morph.surface.carrier import Carrier
 
 LEVELS = (1.0, 0.7, 0.4, 0.0)
 """Heights of the last corner: 1 level with the first corner, 0 as near to the exit as its straight end allows."""
+
+LEAST_LEVEL_MM = 0.5
+"""Levels nearer to the lowest one than this are not tried by themselves."""
 
 EXTRA_BENDS = (0.0, 1.0, 2.5)
 """Straight starts tried, in bend radii."""
@@ -64,10 +75,21 @@ class Bundle:
         flat = points.reshape(-1, 3)
         return carrier.point_mm(flat[:, :2], flat[:, 2]).reshape(points.shape)
 
+    def rough(self, carrier: Carrier) -> Floats:
+        """Returns a few points (n, k, 3) on every piece of each path in the part frame."""
+        points = rough_points(self.paths)
+        if not self.developed:
+            return points
+        flat = points.reshape(-1, 3)
+        return carrier.point_mm(flat[:, :2], flat[:, 2]).reshape(points.shape)
+
+    def only(self, keep: Bools | Ints) -> Bundle:
+        """Returns the bundle with the paths `keep` (a mask or numbers)."""
+        return Bundle(self.paths.only(keep), self.developed, self.face, self.leave[keep])
+
     def only_valid(self) -> Bundle:
         """Returns the bundle without the paths whose legs are too short for their arcs."""
-        keep = self.paths.valid
-        return Bundle(self.paths.only(keep), self.developed, self.face, self.leave[keep])
+        return self.only(self.paths.valid)
 
 
 @dataclass(frozen=True, slots=True)
@@ -113,8 +135,11 @@ def two_bends(start: Start, sites: Sites, bend: Bend, carrier: Carrier | None) -
                 radii = np.full(n, radius)
                 first = start_corner(origin, heading, last, radii, np.full(n, extra * radius))
                 vertices = np.stack([np.broadcast_to(origin, exits.shape), first, last, exits], axis=1)
-                found.append(Bundle(make_paths(vertices, radii), carrier is not None, sites.face, sites.leave))
-    return [bundle.only_valid() for bundle in found]
+                bundle = Bundle(make_paths(vertices, radii), carrier is not None, sites.face, sites.leave)
+                # Where there is no height to choose from, all levels are the same path.
+                same = (share > 0.0) & (height - lowest < LEAST_LEVEL_MM)
+                found.append(bundle.only(bundle.paths.valid & ~same))
+    return found
 
 
 def one_bend(
@@ -250,8 +275,13 @@ def _turn_mm(carrier: Carrier, start: Start) -> float:
     return 4.0 * abs(float(x[1] - x[0]))
 
 
-def sort_bundles(bundles: Sequence[Bundle], lengths: Sequence[Floats]) -> list[tuple[int, int]]:
-    """Returns (bundle, path) numbers of all paths, shortest first; equal lengths keep their order."""
+def sort_bundles(bundles: Sequence[Bundle]) -> list[tuple[int, int]]:
+    """Returns (bundle, path) numbers of all paths, shortest first; equal lengths keep their order.
+
+    Developed paths are sorted by their developed length, which is the true one where the sheet is.
+    """
     which = [(b, k) for b, bundle in enumerate(bundles) for k in range(len(bundle.leave))]
-    size = np.concatenate([np.round(length, 9) for length in lengths]) if which else np.empty(0)
+    if not which:
+        return []
+    size = np.concatenate([np.round(bundle.paths.lengths(), 9) for bundle in bundles])
     return [which[i] for i in np.argsort(size, kind="stable")]

@@ -20,6 +20,9 @@ NECK = 0.95
 COARSE_SLACK_MM = 0.4
 """Room forgiven on the coarse sampling, which judges single samples and not the pieces between them."""
 
+SHORT_BORES = 4.0
+"""Within this many bores of a port that is itself short of room, its lead may be as short."""
+
 COARSE_STEEPNESS = 0.8
 """The way out is judged this much more leniently on the coarse sampling, whose pieces cut corners."""
 
@@ -51,7 +54,7 @@ class Judged:
 
     Args:
         xyz_mm: (k, 3). wanted_mm: (k,) bore wanted. bore_mm: (k,) bore that fits. room: what limits it.
-        share: least room over bore wanted; legal from NECK on. worst: the sample of the least share.
+        share: least room over the room due; legal from NECK on. worst: the sample of the least share.
     """
 
     xyz_mm: Floats
@@ -62,8 +65,8 @@ class Judged:
     worst: int
 
 
-def coarse_faces(around: Surroundings, points_mm: Floats, face: Face, bore_mm: float) -> Bools:
-    """Returns which paths (n,) keep clear of faces and holes on a coarse sampling.
+def coarse_faces(around: Surroundings, points_mm: Floats, face: Face, bore_mm: float) -> Floats:
+    """Returns by how much each path (n,) keeps clear of faces and holes on a coarse sampling; not below 0 is clear.
 
     Args:
         around: what surrounds the lead.
@@ -73,8 +76,19 @@ def coarse_faces(around: Surroundings, points_mm: Floats, face: Face, bore_mm: f
     """
     opening = way_out(face, points_mm, COARSE_STEEPNESS * STEEPNESS).ravel()
     room = measure_room(around.blank, around.limits, points_mm.reshape(-1, 3), face.name, opening).room_mm
-    enough = room.reshape(points_mm.shape[:2]) >= NECK * bore_mm - COARSE_SLACK_MM
-    return np.asarray(enough.all(axis=1), dtype=np.bool_)
+    room = room.reshape(points_mm.shape[:2])
+    arc = np.cumsum(np.linalg.norm(np.diff(points_mm, axis=1, prepend=points_mm[:, :1]), axis=2), axis=1)
+    spare = room - (NECK * _due(room, np.full_like(room, bore_mm), arc, bore_mm) - COARSE_SLACK_MM)
+    return np.asarray(spare.min(axis=1), dtype=np.float64)
+
+
+def _due(room_mm: Floats, wanted_mm: Floats, arc_mm: Floats, bore_mm: float) -> Floats:
+    """Returns the room due (..., k): the bore wanted, or near a port that is itself short, what the port has.
+
+    A channel that already lies too near to a face is told as such; its lead must not make it worse.
+    """
+    at_port = np.maximum(room_mm[..., :1], 0.0)
+    return np.where(arc_mm <= SHORT_BORES * bore_mm, np.minimum(wanted_mm, at_port), wanted_mm)
 
 
 def coarse_channels(around: Surroundings, points_mm: Floats, bore_mm: float) -> Bools:
@@ -139,10 +153,10 @@ def judge_path(around: Surroundings, xyz_mm: Floats, face: Face, port_bore_mm: f
     arc = polyline_arc_mm(xyz_mm)
     wanted = np.maximum(port_bore_mm - TAPER * arc, min(bore_mm, port_bore_mm))
     opening = way_out(face, xyz_mm)
-    room = measure_room(around.blank, around.limits, xyz_mm, face.name, opening)
+    faces = measure_room(around.blank, around.limits, xyz_mm, face.name, opening)
     beside, by = room_between(around, xyz_mm, arc, wanted)
-    room = with_neighbours(room, beside, by, [strand.id for strand in around.network.strands])
-    share = room.room_mm / wanted
+    room = with_neighbours(faces, beside, by, [strand.id for strand in around.network.strands])
+    share = room.room_mm / np.maximum(_due(faces.room_mm, wanted, arc, bore_mm), 1e-9)
     worst = int(share.argmin())
     bore = np.minimum(wanted, np.maximum(room.room_mm, around.limits.least_bore_mm))
     return Judged(xyz_mm, wanted, lower_to_taper(bore, arc), room, float(share[worst]), worst)

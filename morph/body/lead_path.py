@@ -11,10 +11,12 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from morph.core.arrays import Bools, Floats, unit_rows
+from morph.core.arrays import Bools, Floats, Ints, unit_rows
 
 SHARPEST_TURN_RAD = np.radians(135.0)
 LEG_SLACK_MM = 1e-9
+ON_LINE, ON_ARC = 16, 6
+"""Rough points on each line and inside each arc."""
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -34,8 +36,8 @@ class Paths:
     pieces: Floats
     valid: Bools
 
-    def only(self, keep: Bools) -> Paths:
-        """Returns the paths where `keep (n,)`."""
+    def only(self, keep: Bools | Ints) -> Paths:
+        """Returns the paths `keep` (a mask (n,) or numbers)."""
         return Paths(self.vertices[keep], self.radius[keep], self.turn_rad[keep], self.pieces[keep], self.valid[keep])
 
     def lengths(self) -> Floats:
@@ -87,6 +89,25 @@ def sample_paths(paths: Paths, count: int) -> tuple[Floats, Floats]:
     result[:, 0] = paths.vertices[:, 0]
     result[:, -1] = paths.vertices[:, -1]
     return result, arc
+
+
+def rough_points(paths: Paths) -> Floats:
+    """Returns a few points (n, k, 3) on every line and arc of each path, in order: cheap, not even in spacing."""
+    along = unit_rows(np.diff(paths.vertices, axis=1))
+    cut = paths.radius[:, None] * np.tan(0.5 * np.minimum(paths.turn_rad, SHARPEST_TURN_RAD))
+    parts = []
+    for piece in range(paths.pieces.shape[1]):
+        corner = (piece + 1) // 2
+        share = np.linspace(0.0, 1.0, ON_ARC + 2)[1:-1] if piece % 2 else np.linspace(0.0, 1.0, ON_LINE)
+        local = paths.pieces[:, piece][:, None] * share
+        if piece % 2:
+            parts.append(_arc_points(paths, corner, along, cut[:, corner - 1], local))
+            continue
+        start = paths.vertices[:, corner]
+        if corner > 0:
+            start = start + cut[:, corner - 1][:, None] * along[:, corner]
+        parts.append(start[:, None, :] + local[..., None] * along[:, corner][:, None, :])
+    return np.concatenate(parts, axis=1)
 
 
 def _arc_points(paths: Paths, corner: int, along: Floats, cut: Floats, local: Floats) -> Floats:

@@ -61,7 +61,8 @@ def make_plan(
 
     Raises:
         SettingError: `bore-range-empty`, `leave-into-metal`, `leave-without-direction`.
-        GeometryError: `no-room-for-smallest-bore`, `lead-blocked`, `exit-off-port-face`, `exit-without-wall`.
+        GeometryError: `no-room-for-smallest-bore`, `lead-blocked`, `exit-off-port-face`, `exit-without-wall`,
+            `exits-too-near`.
     """
     limits = make_limits(section, service, profile)
     allowed = (limits.least_bore_mm, limits.greatest_bore_mm)
@@ -120,7 +121,7 @@ def _port_start(
     port: PortSettings, wrapped: WrappedGraph, laid: Sequence[_Laid], fitted: Network, index: dict[str, int]
 ) -> PortStart:
     """Returns where the lead of `port` starts: its node, the way its channel carries on, and the bore there."""
-    node = next(n for n in wrapped.graph.nodes if n.port == port.name)
+    node = {n.port: n for n in wrapped.graph.nodes}[port.name]
     ends: list[tuple[Floats, float]] = []
     for k, one in enumerate(laid):
         for at, sign in ((one.branch.start, -1.0), (one.branch.end, 1.0)):
