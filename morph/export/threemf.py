@@ -32,8 +32,8 @@ CONTENT = "http://schemas.openxmlformats.org/package/2006/content-types"
 START_PART = "http://schemas.microsoft.com/3dmanufacturing/2013/01/3dmodel"
 ARCHIVE_DATE = (1980, 1, 1, 0, 0, 0)
 LEAST_TRIANGLES = 4
-COMPRESSION = 3
-"""Level 6 takes 2.3 times as long for a file that is 12 % smaller (measured on a 140 000 triangle build)."""
+COMPRESSION = 1
+"""Level 6 takes 4 times as long for a file that is 18 % smaller (measured on a build of 140 000 triangles)."""
 
 _HEAD = '<?xml version="1.0" encoding="UTF-8"?>\n'
 _CONTENT_TYPES = (

@@ -85,7 +85,7 @@ def make_scene(records: BuildRecords) -> ChannelScene:
             _quantity("bore", "Bore as written", "mm", small.mean_of(fields.bore_mm)),
             Quantity(
                 "ceiling",
-                "Angle from the plate: 0 ceiling, 180 floor",
+                "Angle from the plate (0 ceiling, 90 upright, 180 floor)",
                 "deg",
                 small.mean_of(fields.ceiling_deg),
                 0.0,

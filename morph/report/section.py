@@ -26,12 +26,24 @@ FLATTEST_UP = 0.3
 
 
 @dataclass(frozen=True, slots=True, eq=False)
+class Crossing:
+    """Where a branch passes through the plane of a cut: its id and `at_mm (2,)` in drawing coordinates."""
+
+    branch: str
+    at_mm: Floats
+
+    def __post_init__(self) -> None:
+        object.__setattr__(self, "at_mm", frozen_floats("at_mm", self.at_mm, (2,)))
+
+
+@dataclass(frozen=True, slots=True, eq=False)
 class WallSection:
     """A cut through the insert that shows one wall in its true length.
 
     Args:
         verdict: the wall's verdict. plane: where the cut was made; its origin is the middle of the metal.
         loops: the outlines of the written insert, label 1 where they are channel wall.
+        crossings: where branches pass through the plane, in plan order.
         channel_side_mm, far_side_mm: (2,) the ends of the wall in drawing coordinates.
         bore_mm: bore of the channel beside it.
         build_is_up: the build direction is drawn upwards; else the cut is seen along it.
@@ -40,6 +52,7 @@ class WallSection:
     verdict: Verdict
     plane: Plane
     loops: tuple[Loop, ...]
+    crossings: tuple[Crossing, ...]
     channel_side_mm: Floats
     far_side_mm: Floats
     bore_mm: float
@@ -139,6 +152,19 @@ def _nearest_on_loops(loops: tuple[Loop, ...], label: int) -> Floats | None:
     return found
 
 
+def plane_crossings(plan: ChannelPlan, plane: Plane) -> tuple[Crossing, ...]:
+    """Returns where the centrelines of `plan` pass through `plane`."""
+    found = []
+    for branch in plan.branches:
+        height = np.einsum("ij,j->i", branch.xyz_mm - plane.origin_mm, plane.normal)
+        front = height >= 0.0
+        for i in np.flatnonzero(front[1:] != front[:-1]).tolist():
+            t = height[i] / (height[i] - height[i + 1])
+            point = (1.0 - t) * branch.xyz_mm[i] + t * branch.xyz_mm[i + 1]
+            found.append(Crossing(branch.id, plane.flat_mm(point)[0]))
+    return tuple(found)
+
+
 def make_section(
     insert: Insert, plan: ChannelPlan, verdict: Verdict, build_direction: tuple[float, float, float]
 ) -> WallSection | None:
@@ -158,4 +184,4 @@ def make_section(
     near = _nearest_on_loops(loops, CHANNEL)
     if near is None or verdict.value is None:
         return None
-    return WallSection(verdict, plane, loops, near, -near, bore_mm, is_up)
+    return WallSection(verdict, plane, loops, plane_crossings(plan, plane), near, -near, bore_mm, is_up)

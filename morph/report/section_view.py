@@ -107,6 +107,17 @@ def _dimension_words(drawing: Drawing, verdict: Verdict, colour: str, along: Flo
     drawing.label((middle[0], middle[1] - drawing.mm(11.0)), limit, size_px=11.5)
 
 
+def _channel_names(drawing: Drawing, section: WallSection, half_mm: float) -> None:
+    """Names the channels in the window where their centrelines pass; a name that would cover another is left out."""
+    taken = [0.5 * (section.channel_side_mm + section.far_side_mm)]
+    for crossing in section.crossings:
+        at = crossing.at_mm
+        inside = bool(np.abs(at).max() < half_mm - drawing.mm(16.0))
+        if inside and min(float(np.linalg.norm(at - other)) for other in taken) > drawing.mm(26.0):
+            taken.append(at)
+            drawing.label((float(at[0]), float(at[1])), crossing.branch, size_px=13.0, colour=CHANNEL_LINE, bold=True)
+
+
 def _bounds(loops: tuple[Loop, ...]) -> tuple[Floats, Floats]:
     points = np.concatenate([loop.points_mm for loop in loops])
     return points.min(axis=0), points.max(axis=0)
@@ -172,6 +183,7 @@ def draw_section(section: WallSection, blank: Blank) -> str:
     for line in finished:
         data = drawing.path_data(line)
         drawing.shape(data, fill="none", stroke=STOCK_LINE, stroke_width="1.6", stroke_dasharray="7 4")
+    _channel_names(drawing, section, half)
     _dimension(drawing, section)
     drawing.scale_bar((-half + drawing.mm(14.0), -half + drawing.mm(12.0)))
     drawing.raw(

@@ -57,7 +57,7 @@ class SheetScene:
 
     def wall_range_mm(self) -> tuple[float, float]:
         """Returns the ends of the colour scale, in steps of half a millimetre around the walls shown."""
-        walls = np.concatenate(list(self.wall_mm.values()))
+        walls = np.round(np.concatenate(list(self.wall_mm.values())), 6)
         low, high = np.floor(2.0 * walls.min()) / 2.0, np.ceil(2.0 * walls.max()) / 2.0
         return (float(low), float(high)) if high > low else (float(low), float(low) + 0.5)
 

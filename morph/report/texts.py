@@ -6,7 +6,7 @@ from typing import Any
 
 from morph.core.verdict import Outcome, Verdict
 
-DECIMALS = {"mm": 2, "mm2": 1, "mm3": 0, "deg": 1, "count": 0, "ratio": 3}
+DECIMALS = {"mm": 2, "mm2": 1, "mm3": 0, "deg": 1, "count": 0, "ratio": 3, "bores": 2}
 UNIT_WORDS = {"mm2": "mm²", "mm3": "mm³", "deg": "°", "count": "", "ratio": ""}
 LIMIT_WORDS = {"least": "≥", "most": "≤", "equal": "="}
 

@@ -6,7 +6,7 @@ Two rungs join two uprights (loops), and one blind branch hangs on the upper run
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+import itertools
 from pathlib import Path
 
 import numpy as np
@@ -161,9 +161,7 @@ def plan(wrapped) -> ChannelPlan:
         end = np.array([top[0], top[1], FOOT_MM])
         xyz = top + np.linspace(0, 1, 20)[:, None] * (end - top)
         nodes.append(PlanNode(f"X-{port}", NodeKind.EXIT, port, None, end))
-        items.append(
-            _plan_branch(f"L-{port}", BranchKind.LEAD, node, f"X-{port}", None, xyz, np.full(20, 4.0), True)
-        )
+        items.append(_plan_branch(f"L-{port}", BranchKind.LEAD, node, f"X-{port}", None, xyz, np.full(20, 4.0), True))
         exits.append(Exit(port, role, f"X-{port}", f"L-{port}", end, np.array([0, 0, -1.0]), "foot", 4.0, 4.5))
     circuit = (tuple(item.id for item in items),)
     caps = (Cap("B8", 4.0, 1.25, "face:carrier"),)
@@ -186,7 +184,7 @@ def _tubes(plan: ChannelPlan, overshoot_mm: float):
             ball = trimesh.creation.icosphere(subdivisions=2, radius=width / 2)
             ball.apply_translation(point)
             balls.append(ball.vertices)
-        for one, two in zip(balls[:-1], balls[1:], strict=True):
+        for one, two in itertools.pairwise(balls):
             solids.append(trimesh.convex.convex_hull(np.vstack([one, two])))
     return trimesh.boolean.union(solids, engine="manifold")
 
@@ -266,13 +264,6 @@ def verdicts(plan: ChannelPlan) -> tuple[Verdict, ...]:
         Verdict("flow", Outcome.NOT_CHECKED, "Flow was not calculated.", hint="Measure it on the printed insert."),
         Verdict("temperature", Outcome.NOT_CHECKED, "Face temperature was not calculated."),
     )
-
-
-@dataclass(frozen=True)
-class Parts:
-    """What make_records takes, as keywords."""
-
-    values: dict
 
 
 def parts(name: str = "hand-core", seen_from: SeenFrom = SeenFrom.PART) -> dict:
