@@ -1,10 +1,11 @@
 """Walls between channels: every pair of places that lie near each other but far apart through the channels.
 
 Which pairs bound a wall is asked of body/neighbour.py, the same rule the bores were thinned by; the
-rest belongs to a junction. There a pair may still face each other across a thin rib: following the
-channels towards each other closes its gap by 2 sin(a / 2) per mm at a junction of angle a, so below
-30 degrees it is named as a watch. Centrelines find the pairs, the tightest are then measured on the
-written mesh, triangle against triangle, because roofs and fillets thin walls.
+rest belongs to a junction, whose crotch tapers to nothing. There a pair may still run side by side
+across a thin rib: following the channels towards each other closes its gap by 2 sin(a / 2) per mm
+where they part at angle a, so below 3 degrees it is a rib and named as a watch. Centrelines find
+the pairs, the tightest are then measured on the written mesh, triangle against triangle, because
+roofs and fillets thin walls.
 """
 
 from __future__ import annotations
@@ -33,10 +34,10 @@ from morph.core.verdict import Outcome, Verdict
 from morph.geometry.gap import measure_gap
 from morph.geometry.tree import make_tree
 
-RIB_CLOSES = 2.0 * np.sin(np.radians(15.0))
-"""Two runs that part at less than 30 degrees enclose a rib; wider, the crotch of a junction (own choice)."""
+RIB_CLOSES = 2.0 * np.sin(np.radians(1.5))
+"""Two runs that part at less than 3 degrees enclose a rib; wider, the crotch of a junction (own choice)."""
 
-CONFIRMED = 12
+CONFIRMED = 6
 """This many of the tightest pairs of branches are measured on the written mesh."""
 
 SEARCH_RATIO = 2.0
@@ -112,7 +113,7 @@ def find_walls(lines: Centrelines, limit_mm: float, band_mm: float) -> list[Betw
 
 def _finding(lines: Centrelines, a: int, b: int, rib: bool) -> BetweenFinding:
     """Returns the finding at samples a, b, refined between the samples."""
-    distance, p, q, radius_p, radius_q = _segments_gap(lines, a, b)
+    distance, p, q, radius_p, radius_q = _segments_gap(lines, a, b, pieces=not rib)
     wall = distance - radius_p - radius_q
     toward = (q - p) / max(distance, 1e-12)
     middle = p + toward * (radius_p + 0.5 * wall)
@@ -120,10 +121,15 @@ def _finding(lines: Centrelines, a: int, b: int, rib: bool) -> BetweenFinding:
     return BetweenFinding(ids, (a, b), wall, wall, np.inf, place(middle), rib)
 
 
-def _segments_gap(lines: Centrelines, a: int, b: int) -> tuple[float, Floats, Floats, float, float]:
-    """Returns the smallest distance between the pieces of centreline next to samples a and b, the points and radii."""
+def _segments_gap(
+    lines: Centrelines, a: int, b: int, *, pieces: bool = True
+) -> tuple[float, Floats, Floats, float, float]:
+    """Returns the smallest distance between the pieces of centreline next to samples a and b, the points and radii.
+
+    Without `pieces` the samples themselves are taken.
+    """
     best: tuple[float, Floats, Floats, float, float] | None = None
-    for i in _pieces(lines, a):
+    for i in _pieces(lines, a) if pieces else ():
         for k in _pieces(lines, b):
             s, t = _closest_on_segments(*lines.xyz_mm[[i, i + 1, k, k + 1]])
             p = (1.0 - s) * lines.xyz_mm[i] + s * lines.xyz_mm[i + 1]

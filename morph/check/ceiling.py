@@ -13,7 +13,8 @@ import numpy as np
 
 from morph.check.centreline import Centrelines, Place
 from morph.check.channel_wall import nearest_samples
-from morph.check.flat_patch import find_flat, flat_area_mm2, largest_circle
+from morph.check.flat_circle import largest_circle
+from morph.check.flat_patch import find_flat, flat_area_mm2
 from morph.check.machine import upright_frame
 from morph.check.rows import judge_length, place
 from morph.core.arrays import Floats

@@ -11,6 +11,9 @@ from morph.core.arrays import Floats, Ints, frozen_floats, frozen_ints
 
 Place = tuple[float, float, float]
 
+TIE_RATIO = 1e-6
+"""Ways that differ by less than this of their length are equal."""
+
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Centrelines:
@@ -112,7 +115,9 @@ def measure_ways(lines: Centrelines, first: Ints, second: Ints) -> Way:
             np.where(a == b, np.abs(back_a - back_b), np.inf),
         ]
     )
-    best = np.argmin(options, axis=0)
+    own = np.stack([back_a + back_b, back_a + ahead_b, ahead_a + back_b, ahead_a + ahead_b, np.abs(back_a - back_b)])
+    # From a node a way along the branch itself ties with one that leaves it at once: the former is meant.
+    best = np.argmin(options - TIE_RATIO * own, axis=0)
     onward = np.where(back_b > back_a, 1.0, -1.0)
     sign_a = np.choose(best, [-1.0, -1.0, 1.0, 1.0, onward])
     sign_b = np.choose(best, [-1.0, 1.0, -1.0, 1.0, -onward])

@@ -38,8 +38,9 @@ def channel_mesh(insert: Insert) -> Mesh:
 
 def sub_mesh(mesh: Mesh, triangle: Ints) -> Mesh:
     """Returns the triangles `triangle (k,)` of `mesh` with only their own vertices, in their old order."""
-    used, corner = np.unique(mesh.triangles[triangle], return_inverse=True)
-    return Mesh(mesh.vertices_mm[used], corner.reshape(-1, 3))
+    used = np.zeros(len(mesh.vertices_mm), dtype=bool)
+    used[mesh.triangles[triangle]] = True
+    return Mesh(mesh.vertices_mm[used], (np.cumsum(used) - 1)[mesh.triangles[triangle]])
 
 
 def nearest_samples(lines: Centrelines, xyz_mm: Floats) -> Ints:
