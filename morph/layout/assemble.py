@@ -13,8 +13,9 @@ from morph.geometry.curve import Curve, curve_at, curve_length_mm
 from morph.layout import notices as say
 from morph.layout.bridges import Suggestion
 from morph.layout.centre import smoothed_along
+from morph.layout.fit import DEVIATION_SHARE
 from morph.layout.graph import Branch, Bridge, ChannelGraph, Dropped, DropReason, LevelCount, Node, NodeKind
-from morph.layout.smooth import DEVIATION_SHARE, fit_web
+from morph.layout.smooth import fit_web
 from morph.layout.web import Run, Web, arc_mm
 
 LONGEST_STEP_MM = 1.0
@@ -149,7 +150,7 @@ def _draw(run: Run, key: int, curve: Curve, at: Floats, pixel_mm: float) -> _Dra
 
 def _sampled(curve: Curve, length_mm: float, step_mm: float) -> tuple[Floats, Floats]:
     """Returns parameters and places of samples at most `step_mm` apart, evenly spread along the curve."""
-    fine = np.linspace(0.0, float(curve.knots[-1]), max(200, 8 * math.ceil(length_mm / step_mm)) + 1)
+    fine = np.linspace(0.0, float(curve.knots[-1]), max(64, 4 * math.ceil(length_mm / step_mm)) + 1)
     arc = arc_mm(curve_at(curve, fine))
     n = max(2, math.ceil(float(arc[-1]) / step_mm * 1.001) + 1)
     parameter = np.interp(np.linspace(0.0, arc[-1], n), arc, fine)

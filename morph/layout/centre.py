@@ -1,4 +1,4 @@
-"""Centring: every sample is moved midway between its two walls, junctions to where their channels aim.
+"""Centring: every sample is moved midway between its two walls, and its half-width is measured.
 
 A point is centred when probes half a half-width to its left and right are equally far from the
 walls; for a channel of constant width this is exact on straight and bent stretches alike. Near a
@@ -9,22 +9,19 @@ weigh nothing in the fit, and take the bore of that stretch, so the junction dis
 
 from __future__ import annotations
 
-from dataclasses import replace
-
 import numpy as np
 
 from morph.core.arrays import Bools, Floats, Ints
 from morph.layout.walls import Walls
-from morph.layout.web import Joint, Run, Web, arc_mm, is_parallel, measure_length_mm, merge_along
+from morph.layout.web import Run, Web, arc_mm
 
-ROUNDS = 3
+ROUNDS = 2
 PROBE_SHARE = 0.5
 WIDTH_PROBE_SHARE = 0.7
 ABREAST_SHARE = 0.5
 """A wall further ahead or behind than this many half-widths is not the sample's own."""
 FREE_STRETCH = 0.4
 """Free samples must last this many half-widths before the junction is taken to be left behind."""
-AIM_SPREAD = 0.2
 LONGEST_ZONE = 3.0
 """A junction's zone ends at the latest this many half-widths from it, or at 45 % of the run."""
 
@@ -198,181 +195,3 @@ def _zone_end(away: Floats, free: Bools, stretch: float, limit: float) -> float:
         elif distance - start >= stretch:
             return start
     return limit if start is None else min(start, limit)
-
-
-def merge_aimed(web: Web, ratio: float = 2.6) -> int:
-    """Makes one junction of two whose other channels all aim at one point between them.
-
-    Where channels cross at a slant, thinning finds two junctions joined by a short run. They are one
-    when the run is shorter than `ratio` half-widths and the lines of the other runs meet.
-
-    Returns:
-        How many runs were taken up.
-    """
-    n_merged = 0
-    for key in sorted(web.runs, key=lambda k: (web.runs[k].length_mm, k)):
-        run = web.runs.get(key)
-        if run is None or run.start == run.end or min(web.degree(run.start), web.degree(run.end)) < 3:
-            continue
-        radius = max(web.joints[run.start].radius_mm, web.joints[run.end].radius_mm)
-        if run.length_mm >= ratio * radius or is_parallel(web, run):
-            continue
-        lines = [
-            line
-            for joint in (run.start, run.end)
-            for other, leaving in web.leaving(joint)
-            if other != key and (line := _line_near(leaving, radius)) is not None
-        ]
-        n_others = web.degree(run.start) + web.degree(run.end) - 2
-        aim = _aim(lines) if len(lines) == n_others else None
-        middle = 0.5 * (web.joints[run.start].place_mm + web.joints[run.end].place_mm)
-        if aim is not None and aim[1] < AIM_SPREAD * radius and np.hypot(*(aim[0] - middle)) < radius:
-            merge_along(web, key)
-            n_merged += 1
-    return n_merged
-
-
-def place_junctions(web: Web) -> None:
-    """Moves each junction to the point nearest, in the least-squares sense, to the lines its free runs make near it.
-
-    A line is fitted to the free samples within one and a half half-widths of the zone's end. The
-    junction stays where it is when the lines are near parallel, miss each other by more than a fifth
-    of its radius, or meet further off than its radius.
-    """
-    for key in sorted(web.joints):
-        if web.degree(key) < 3:
-            continue
-        joint = web.joints[key]
-        lines = [line for _, run in web.leaving(key) if (line := _line_near(run, joint.radius_mm)) is not None]
-        aim = _aim(lines)
-        if aim is None:
-            continue
-        place, spread = aim
-        if np.hypot(*(place - joint.place_mm)) < joint.radius_mm and spread < AIM_SPREAD * joint.radius_mm:
-            move_joint(web, key, place)
-
-
-def _aim(lines: list[tuple[Floats, Floats]]) -> tuple[Floats, float] | None:
-    """Returns the point nearest to all lines and its rms distance from them; None when they are near parallel."""
-    matrix, vector, square = np.zeros((2, 2)), np.zeros(2), 0.0
-    for middle, direction in lines:
-        across = np.eye(2) - np.outer(direction, direction)
-        matrix += across
-        vector += across @ middle
-        square += float(middle @ across @ middle)
-    (a, b), (_, d) = matrix
-    if 0.5 * (a + d) - float(np.hypot(0.5 * (a - d), b)) < 0.15:
-        return None
-    place = np.array([d * vector[0] - b * vector[1], a * vector[1] - b * vector[0]]) / (a * d - b * b)
-    rest = square - 2.0 * float(vector @ place) + float(place @ matrix @ place)
-    return place, float(np.sqrt(max(0.0, rest) / len(lines)))
-
-
-def _line_near(run: Run, radius_mm: float) -> tuple[Floats, Floats] | None:
-    """Returns a point on, and the direction of, the line through the first free samples of `run`."""
-    assert run.free is not None
-    arc = arc_mm(run.place_mm)
-    free = np.flatnonzero(run.free)
-    if not len(free):
-        return None
-    begin = arc[free[0]]
-    chosen = run.place_mm[run.free & (arc >= begin) & (arc <= begin + 1.5 * radius_mm) & (arc < 0.6 * arc[-1])]
-    if len(chosen) < 3:
-        return None
-    middle = chosen.mean(axis=0)
-    (xx, xy), (_, yy) = (chosen - middle).T @ (chosen - middle)
-    angle = 0.5 * float(np.arctan2(2.0 * xy, xx - yy))
-    return middle, np.array([np.cos(angle), np.sin(angle)])
-
-
-def move_joint(web: Web, key: int, place_mm: Floats) -> None:
-    """Moves the joint `key` and the run ends on it to `place_mm`."""
-    web.joints[key].place_mm = place_mm
-    for run_key in web.at[key]:
-        run = web.runs[run_key]
-        if run.start == key:
-            run.place_mm[0] = place_mm
-        if run.end == key:
-            run.place_mm[-1] = place_mm
-        run.length_mm = measure_length_mm(run.place_mm)
-
-
-def cut_at_frame(web: Web, size_mm: tuple[float, float]) -> None:
-    """Cuts the runs that leave through a mouth exactly on the frame; what lies outside is dropped."""
-    for key in sorted(web.joints):
-        joint = web.joints.get(key)
-        if joint is None or joint.mouth < 0 or web.degree(key) != 1:
-            continue
-        run_key = web.at[key][0]
-        run = web.runs[run_key]
-        if run.end == key:
-            run = run.reversed()
-        outside = _outside_mm(run.place_mm, size_mm)
-        inner = np.flatnonzero(outside <= 0.0)
-        if not len(inner) or inner[0] == 0:
-            continue
-        first = int(inner[0])
-        place = _crossing(run.place_mm[first - 1], run.place_mm[first], size_mm)
-        half = float(run.half_mm[first])
-        web.remove_run(run_key)
-        joint.place_mm = place
-        free = None if run.free is None else np.concatenate([run.free[first : first + 1], run.free[first:]])
-        web.add_run(
-            Run(
-                key,
-                run.end,
-                np.vstack([place, run.place_mm[first:]]),
-                np.concatenate([[half], run.half_mm[first:]]),
-                free,
-            )
-        )
-
-
-def _outside_mm(place_mm: Floats, size_mm: tuple[float, float]) -> Floats:
-    x, y = place_mm.T
-    out = np.maximum(np.maximum(-x, x - size_mm[0]), np.maximum(-y, y - size_mm[1]))
-    return np.asarray(out, dtype=np.float64)
-
-
-def _crossing(outer: Floats, inner: Floats, size_mm: tuple[float, float]) -> Floats:
-    """Returns where the segment from `outer` to `inner` enters the sheet, exactly on the frame line."""
-    share, axis_hit, line_hit = 0.0, 0, 0.0
-    for axis in (0, 1):
-        for line in (0.0, size_mm[axis]):
-            before, after = outer[axis] - line, inner[axis] - line
-            crosses = (before < 0.0 <= after) if line == 0.0 else (before > 0.0 >= after)
-            if crosses and before / (before - after) >= share:
-                share, axis_hit, line_hit = before / (before - after), axis, line
-    place = outer + share * (inner - outer)
-    place[axis_hit] = line_hit
-    return np.asarray(place, dtype=np.float64)
-
-
-def trim_tips(web: Web, least_ratio: float = 0.8) -> None:
-    """Shortens each dead end to where the channel still has `least_ratio` of its half-width.
-
-    Thinning may run on into the rounded end of a channel, where the half-width falls to nothing.
-    """
-    for key in sorted(web.joints):
-        joint = web.joints[key]
-        if web.degree(key) != 1 or joint.mouth >= 0:
-            continue
-        run_key = web.at[key][0]
-        run = web.runs[run_key]
-        if run.end == key:
-            run = run.reversed()
-        arc = arc_mm(run.place_mm)
-        near = arc <= min(4.0 * float(run.half_mm.max()), 0.6 * arc[-1])
-        wanted = least_ratio * float(np.median(run.half_mm[near]))
-        full = np.flatnonzero(run.half_mm >= wanted)
-        first = min(int(full[0]) if len(full) else 0, len(arc) - 4)
-        half = np.maximum(run.half_mm[first:], np.where(near[first:], wanted, 0.0))
-        web.remove_run(run_key)
-        web.joints[key] = replace_place(joint, run.place_mm[first])
-        free = None if run.free is None else run.free[first:]
-        web.add_run(Run(key, run.end, run.place_mm[first:], half, free))
-
-
-def replace_place(joint: Joint, place_mm: Floats) -> Joint:
-    """Returns `joint` at another place."""
-    return replace(joint, place_mm=place_mm)

@@ -17,11 +17,13 @@ from morph.core.verdict import Notice
 from morph.layout import notices as say
 from morph.layout.assemble import Parts, assemble
 from morph.layout.bridges import suggest_bridges
-from morph.layout.centre import centre, cut_at_frame, merge_aimed, place_junctions, resample, trim_tips
+from morph.layout.centre import centre, resample
 from morph.layout.density import Density
+from morph.layout.ends import cut_at_frame, trim_tips
 from morph.layout.frame import extend, find_mouths
 from morph.layout.graph import ChannelGraph, Dropped, DropReason
-from morph.layout.level import Picture, count_at_levels, count_pieces_and_holes, find_level, make_picture, smoothed
+from morph.layout.junctions import merge_aimed, place_junctions
+from morph.layout.level import Picture, count_at_levels, find_level, make_picture, smoothed
 from morph.layout.ports import attach_ports, keep_port_tips, list_candidates, require_ports
 from morph.layout.skeleton import make_web
 from morph.layout.walls import find_walls
@@ -30,6 +32,7 @@ from morph.settings.job import LayoutSettings, PortSettings, Role
 
 STAGE = "layout"
 N_STEPS = 6
+SAMPLES_PER_WIDTH = 10.0
 RETRIES = (1, 2, 3)
 """Refinements of the fine grid tried in turn while the graph's pieces or loops differ from the picture's."""
 
@@ -80,7 +83,7 @@ def find_graph(
     web, picture = traced.web, traced.picture
     attach_ports(web, ports, list_candidates(picture, density.size_mm), density.size_mm)
     progress.step(STAGE, 3, N_STEPS)
-    levels = count_at_levels(density, level)
+    levels = count_at_levels(density, picture)
     suggestions = suggest_bridges(web, smoothed(density.value), density, picture)
     progress.step(STAGE, 4, N_STEPS)
     found: list[Notice] = []
@@ -135,8 +138,9 @@ def _trace(
     spurs += prune(web, pixel_mm)
     join_all(web)
     betti = web.betti()
-    resample(web, pixel_mm)
-    centre(web, walls, pixel_mm)
+    step_mm = max(pixel_mm, picture.width_mm / SAMPLES_PER_WIDTH)
+    resample(web, step_mm)
+    centre(web, walls, step_mm)
     merge_aimed(web)
     place_junctions(web)
     cut_at_frame(web, density.size_mm)
@@ -145,7 +149,7 @@ def _trace(
     dropped = tuple(
         Dropped(DropReason.SPUR, (float(place[0]), float(place[1])), length * width) for place, length, width in spurs
     )
-    return _Traced(web, picture, dropped, count_pieces_and_holes(picture.mask), betti)
+    return _Traced(web, picture, dropped, picture.betti, betti)
 
 
 def require_circuits(graph: ChannelGraph, ports: tuple[PortSettings, ...]) -> None:

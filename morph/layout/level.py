@@ -57,6 +57,7 @@ class Picture:
         field: (rows, columns) smoothed density, pushed to the metal or coolant side where crumbs went.
         mask: field > level. grid: where the samples lie. level: the density level.
         width_mm: mean channel width, 2 area / perimeter.
+        betti: pieces and holes.
         dropped: the crumbs.
     """
 
@@ -65,6 +66,7 @@ class Picture:
     grid: Grid
     level: float
     width_mm: float
+    betti: tuple[int, int]
     dropped: tuple[Dropped, ...]
 
 
@@ -169,8 +171,19 @@ def find_refinement(mask: Bools) -> int:
     return max(1, min(wanted, possible, MOST_REFINEMENT))
 
 
-def cleaned(mask: Bools, width_px: float, keep_px: Floats) -> tuple[Bools, Bools, Bools]:
-    """Returns `mask` without crumbs, the removed islands and the filled pinholes, all (rows, columns).
+@dataclass(frozen=True, slots=True, eq=False)
+class Cleaned:
+    """A mask without crumbs, what was removed and filled (rows, columns), and its pieces and holes."""
+
+    mask: Bools
+    islands: Bools
+    pinholes: Bools
+    pieces: int
+    holes: int
+
+
+def clean(mask: Bools, width_px: float, keep_px: Floats) -> Cleaned:
+    """Returns `mask` without islands and pinholes.
 
     Args:
         mask: coolant.
@@ -183,28 +196,30 @@ def cleaned(mask: Bools, width_px: float, keep_px: Floats) -> tuple[Bools, Bools
     label, n = ndimage.label(mask, EIGHT)
     crumb = np.bincount(label.ravel(), minlength=n + 1) < ISLAND_DISCS * disc
     crumb[0] = False
-    for row, column in np.asarray(keep_px).reshape(-1, 2):
-        top, left = max(0, int(row - width_px)), max(0, int(column - width_px))
-        near = np.argwhere(mask[top : int(row + width_px) + 2, left : int(column + width_px) + 2]) + np.array([top, left])
+    for port in np.asarray(keep_px).reshape(-1, 2):
+        corner = np.maximum(port - width_px, 0.0).astype(np.int64)
+        stop = (port + width_px).astype(np.int64) + 2
+        near = np.argwhere(mask[corner[0] : stop[0], corner[1] : stop[1]]) + corner
         if len(near):
-            r, c = near[int(np.argmin(np.hypot(*(near - (row, column)).T)))]
-            crumb[label[r, c]] = False
-    islands = crumb[label]
+            row, column = near[int(np.argmin(np.hypot(*(near - port).T)))]
+            crumb[label[row, column]] = False
+    islands = crumb[label] if crumb.any() else np.zeros_like(mask)
+    pieces = n - int(crumb.sum())
     solid = mask & ~islands
     label, n = ndimage.label(~np.pad(solid, 1))
     flaw = np.bincount(label.ravel(), minlength=n + 1) < PINHOLE_DISCS * disc
     flaw[[0, label[0, 0]]] = False
-    pinholes = flaw[label][1:-1, 1:-1]
-    return solid | pinholes, islands, pinholes
+    pinholes = flaw[label][1:-1, 1:-1] if flaw.any() else np.zeros_like(mask)
+    return Cleaned(solid | pinholes, islands, pinholes, pieces, n - 1 - int(flaw.sum()))
 
 
 def list_dropped(region: Bools, reason: DropReason, grid: Grid) -> tuple[Dropped, ...]:
     """Returns one Dropped per piece of `region`: its centroid on the sheet and its area."""
     from scipy import ndimage
 
-    label, n = ndimage.label(region, EIGHT)
-    if not n:
+    if not region.any():
         return ()
+    label, n = ndimage.label(region, EIGHT)
     index = np.arange(1, n + 1)
     area = ndimage.sum_labels(region, label, index) * grid.pixel_mm**2
     centre = grid.sheet_mm(np.array(ndimage.center_of_mass(region, label, index)))
@@ -234,8 +249,8 @@ def make_picture(density: Density, level: float, ports_mm: Floats, more: int = 1
     grid = Grid((inset * pitch_mm[0], inset * pitch_mm[1]), pitch_mm)
     mask = field > level
     width_px = measure_width_px(mask)
-    clean, islands, pinholes = cleaned(mask, width_px, grid.row_column(ports_mm))
-    if not clean.any():
+    found = clean(mask, width_px, grid.row_column(ports_mm))
+    if not found.pieces:
         raise InputError(
             "no-channel",
             expected="at least one channel",
@@ -244,9 +259,12 @@ def make_picture(density: Density, level: float, ports_mm: Floats, more: int = 1
             do="Lower the level, or give the image at its full resolution.",
         )
     nudge = 1e-4
-    field = np.where(clean, np.maximum(field, level + nudge), np.minimum(field, level - nudge))
-    dropped = list_dropped(islands, DropReason.ISLAND, grid) + list_dropped(pinholes, DropReason.PINHOLE, grid)
-    return Picture(field, clean, grid, level, measure_width_px(clean) * grid.pixel_mm, dropped)
+    field = np.where(found.mask, np.maximum(field, level + nudge), np.minimum(field, level - nudge))
+    dropped = list_dropped(found.islands, DropReason.ISLAND, grid) + list_dropped(
+        found.pinholes, DropReason.PINHOLE, grid
+    )
+    width_mm = measure_width_px(found.mask) * grid.pixel_mm
+    return Picture(field, found.mask, grid, level, width_mm, (found.pieces, found.holes), dropped)
 
 
 def _require_both_phases(field: Floats, level: float) -> None:
@@ -269,16 +287,23 @@ def _require_both_phases(field: Floats, level: float) -> None:
         )
 
 
-def count_at_levels(density: Density, level: float, step: float = 0.1) -> tuple[LevelCount, ...]:
-    """Returns pieces and holes, crumbs removed, at level - step, level, level + step (those within 0..1)."""
+def count_at_levels(density: Density, picture: Picture, step: float = 0.1) -> tuple[LevelCount, ...]:
+    """Returns pieces and holes, crumbs removed, at level - step, level, level + step (those within 0..1).
+
+    Args:
+        density: canonical density.
+        picture: its picture at the level in use.
+        step: change of level.
+    """
     base = smoothed(density.value)
-    field = refined(base, find_refinement(base > level), density.samples)
+    field = refined(base, round(density.pitch_mm[0] / picture.grid.pitch_mm[0]), density.samples)
     counts = []
-    for at in (level - step, level, level + step):
-        if not 0.0 < at < 1.0:
-            continue
-        mask = field > at
-        if mask.any():
-            mask, _, _ = cleaned(mask, measure_width_px(mask), np.empty((0, 2)))
-        counts.append(LevelCount(at, *(count_pieces_and_holes(mask) if mask.any() else (0, 0))))
+    for change in (-step, 0.0, step):
+        level = picture.level + change
+        if change == 0.0:
+            counts.append(LevelCount(level, *picture.betti))
+        elif 0.0 < level < 1.0:
+            mask = field > level
+            found = clean(mask, measure_width_px(mask), np.empty((0, 2)))
+            counts.append(LevelCount(level, found.pieces, found.holes))
     return tuple(counts)

@@ -1,40 +1,26 @@
-"""Smooth centrelines: one penalised cubic B-spline per chain of runs, cut into one curve per branch.
+"""Smooth centrelines: chains of runs fitted as one curve each, cut into one curve per branch.
 
-Minimised over the control points is sum w |C(s_i) - p_i|^2 + lambda times the integral of the squared
-second derivative (penalised B-splines: Eilers and Marx, 1996, Statistical Science 11:2). A ripple of wavelength W
-is damped by 1 / (1 + (W_c / W)^4) where lambda = (W_c / 2 pi)^4 / ds, so the firmness is stated as the
-wavelength W_c. It starts at 1.4 channel widths; around bends tighter than one width it is raised,
-never beyond a deviation of 0.10 of the local width; where even the start exceeds that it is lowered and
-knots are added. A chain runs straight on through junctions, so the straighter pair shares its tangent.
+A chain runs straight on through junctions, so the straighter pair shares its tangent there; cutting is
+exact, by knot insertion. Joints that a chain passes are moved onto it.
 """
 
 from __future__ import annotations
 
-import math
 from dataclasses import dataclass
-from typing import Any
 
 import numpy as np
 
-from morph.core.arrays import Bools, Floats
-from morph.geometry.curve import DEGREE, Curve, curve_at
-from morph.layout.centre import move_joint, smoothed_along
+from morph.core.arrays import Floats
+from morph.geometry.curve import DEGREE, Curve
+from morph.layout.centre import smoothed_along
+from morph.layout.fit import SEAM_WEIGHT, Samples, fit_chain
+from morph.layout.junctions import move_joint
 from morph.layout.web import Run, Web, arc_mm
 
-DEVIATION_SHARE = 0.10
-GENTLE_WIDTHS = 1.4
-TIGHTEST_BEND = 1.0
-"""Curvature times width above which a chain is smoothed more firmly."""
 STRAIGHT_COSINE = -0.7
-ZONE_WEIGHT = 1e-3
-END_WEIGHT = 50.0
-SEAM_WEIGHT = 2.0
 SETTLED_WEIGHT = 50.0
 MOVED_POINTS = 4
 """A joint moved off its curve takes this many control points along, the last ones less and less."""
-ROUNDS = 8
-STEP = 1.4
-"""The stated wavelength changes by this factor per round, only where it must."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -43,17 +29,6 @@ class Link:
 
     run: int
     forward: bool
-
-
-@dataclass(frozen=True, slots=True, eq=False)
-class Samples:
-    """What a chain is fitted to: parameter, place, half-width, free flag per sample, and where runs meet."""
-
-    at: Floats
-    place_mm: Floats
-    half_mm: Floats
-    free: Bools
-    seams: tuple[int, ...]
 
 
 def pair_straightest(web: Web) -> dict[tuple[int, int], int]:
@@ -131,133 +106,6 @@ def _gather(web: Web, chain: list[Link]) -> Samples:
     step = np.maximum(np.hypot(*np.diff(calm, axis=0).T), 1e-9)
     at = np.concatenate([[0.0], np.cumsum(step)])
     return Samples(at, place, np.concatenate(halves), np.concatenate(frees), tuple(seams))
-
-
-class _Fit:
-    """One chain's least-squares problem, solved for any firmness."""
-
-    def __init__(self, samples: Samples, knot_step_mm: float, seam_weight: float) -> None:
-        from scipy.interpolate import BSpline
-
-        self.samples = samples
-        length = float(samples.at[-1])
-        n_spans = int(min(max(2, math.ceil(length / knot_step_mm)), max(2, len(samples.at) - 2)))
-        self.knots = np.concatenate([[0.0] * DEGREE, np.linspace(0.0, length, n_spans + 1), [length] * DEGREE])
-        self.design = BSpline.design_matrix(np.minimum(samples.at, length), self.knots, DEGREE).tocsr()
-        weight = np.where(samples.free, 1.0, ZONE_WEIGHT)
-        weight[list(samples.seams)] = seam_weight
-        weight[[0, -1]] = END_WEIGHT
-        self.normal = self._bands(self.design.T @ self.design.multiply(weight[:, None]))
-        self.right: Floats = np.asarray(self.design.T @ (weight[:, None] * samples.place_mm), dtype=np.float64)
-        self.span_mm = length / n_spans
-        self.bending = _bending(self.knots, self.span_mm)
-        self.span_at = (np.arange(n_spans) + 0.5) * self.span_mm
-
-    @staticmethod
-    def _bands(matrix: Any) -> Floats:
-        from scipy.sparse import csr_matrix
-
-        sparse = csr_matrix(matrix)
-        n = sparse.shape[0]
-        bands = np.zeros((DEGREE + 1, n))
-        for offset in range(min(DEGREE + 1, n)):
-            bands[DEGREE - offset, offset:] = sparse.diagonal(offset)
-        return bands
-
-    def solve(self, wavelength_mm: Floats) -> Curve:
-        """Returns the curve that damps ripples shorter than `wavelength_mm (n_spans,)` on each span."""
-        from scipy.linalg import solveh_banded
-        from scipy.sparse import diags
-
-        spacing = float(self.samples.at[-1]) / (len(self.samples.at) - 1)
-        firmness = diags((wavelength_mm / (2.0 * math.pi)) ** 4 / spacing * 0.5 * self.span_mm)
-        first, second = self.bending
-        bands = self.normal + self._bands(first.T @ firmness @ first + second.T @ firmness @ second)
-        bands[DEGREE] += 1e-12 * bands[DEGREE].max()
-        return Curve(self.knots, solveh_banded(bands, self.right, check_finite=False))
-
-    def near(self, bad: Bools, reach_mm: float) -> Bools:
-        """Returns which spans (n_spans,) lie within `reach_mm` of a sample marked in `bad (k,)`."""
-        at = self.samples.at[bad]
-        right = np.searchsorted(at, self.span_at)
-        after = np.abs(at[np.minimum(right, len(at) - 1)] - self.span_at)
-        before = np.abs(at[np.maximum(right - 1, 0)] - self.span_at)
-        return np.asarray(np.minimum(after, before) <= reach_mm + self.span_mm)
-
-    def excess(self, curve: Curve) -> Floats:
-        """Returns per sample the deviation as a share of what is allowed (1 = at the bound), 0 where not free."""
-        away = deviations_mm(curve, self.samples.at, self.samples.place_mm)
-        return np.where(self.samples.free, away / (DEVIATION_SHARE * 2.0 * self.samples.half_mm), 0.0)
-
-    def bend(self, curve: Curve) -> Floats:
-        """Returns per sample the curvature times the local width."""
-        return curvature_per_mm(curve, self.samples.at) * 2.0 * self.samples.half_mm
-
-
-def _bending(knots: Floats, span_mm: float) -> list[Any]:
-    """Returns two sparse matrices (n_spans, n): the second derivative at each span's two Gauss points.
-
-    The second derivative of a cubic is linear on a span, so two points integrate its square exactly.
-    """
-    from scipy.interpolate import BSpline
-    from scipy.sparse import csr_matrix
-
-    spans = knots[DEGREE:-DEGREE]
-    middle = 0.5 * (spans[:-1] + spans[1:])
-    spread = span_mm / 8.0
-    found = []
-    for gauss in (-1.0, 1.0):
-        at = middle + gauss * 0.5 * span_mm / math.sqrt(3.0)
-        before, here, after = (
-            csr_matrix(BSpline.design_matrix(at + shift * spread, knots, DEGREE)) for shift in (-1.0, 0.0, 1.0)
-        )
-        found.append((before + after - here.multiply(2.0)).multiply(spread**-2))
-    return found
-
-
-def deviations_mm(curve: Curve, at: Floats, place_mm: Floats) -> Floats:
-    """Returns (k,) distances across the curve from its points at parameters `at` to `place_mm (k, 2)`."""
-    away = place_mm - curve_at(curve, at)
-    tangent = curve_at(curve, at, 1)
-    tangent /= np.maximum(np.hypot(*tangent.T), 1e-12)[:, None]
-    return np.asarray(np.abs(away[:, 0] * tangent[:, 1] - away[:, 1] * tangent[:, 0]), dtype=np.float64)
-
-
-def curvature_per_mm(curve: Curve, at: Floats) -> Floats:
-    """Returns (k,) curvature |x'y'' - y'x''| / |C'|^3 of a plane curve at parameters `at`."""
-    first, second = curve_at(curve, at, 1), curve_at(curve, at, 2)
-    cross = first[:, 0] * second[:, 1] - first[:, 1] * second[:, 0]
-    return np.asarray(np.abs(cross) / np.maximum(np.hypot(*first.T), 1e-9) ** 3, dtype=np.float64)
-
-
-def fit_chain(samples: Samples, seam_weight: float = SEAM_WEIGHT) -> Curve:
-    """Returns the curve through `samples`: gentle, softer where it would deviate, firmer where it bends tightly."""
-    half = float(np.median(samples.half_mm))
-    for knot_step in (half, 0.5 * half, 0.25 * half):
-        fit = _Fit(samples, knot_step, seam_weight)
-        wavelength = np.full(len(fit.span_at), GENTLE_WIDTHS * 2.0 * half)
-        curve = fit.solve(wavelength)
-        for _ in range(ROUNDS):
-            bad = fit.excess(curve) > 1.0
-            if not bad.any():
-                return _straightened(fit, wavelength, curve, 2.0 * half)
-            wavelength = np.where(fit.near(bad, half), wavelength / STEP, wavelength)
-            curve = fit.solve(wavelength)
-    return curve
-
-
-def _straightened(fit: _Fit, wavelength: Floats, curve: Curve, width_mm: float) -> Curve:
-    """Returns `curve` made firmer around bends tighter than one width, as long as it keeps the deviation bound."""
-    for _ in range(ROUNDS):
-        tight = fit.bend(curve) > TIGHTEST_BEND
-        if not tight.any():
-            break
-        wavelength = np.where(fit.near(tight, width_mm), wavelength * STEP, wavelength)
-        firmer = fit.solve(wavelength)
-        if fit.excess(firmer).max() > 1.0:
-            break
-        curve = firmer
-    return curve
 
 
 def cut_curve(curve: Curve, at: tuple[float, ...]) -> list[Curve]:

@@ -1,0 +1,108 @@
+"""Junctions: two that are one are merged, and each is moved to where its channels aim."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from morph.core.arrays import Floats
+from morph.layout.web import Run, Web, arc_mm, is_parallel, measure_length_mm, merge_along
+
+AIM_SPREAD = 0.2
+"""Lines that miss their common point by more than this many radii (rms) do not aim at one point."""
+
+
+def merge_aimed(web: Web, ratio: float = 2.6) -> int:
+    """Makes one junction of two whose other channels all aim at one point between them.
+
+    Where channels cross at a slant, thinning finds two junctions joined by a short run. They are one
+    when the run is shorter than `ratio` half-widths and the lines of the other runs meet.
+
+    Returns:
+        How many runs were taken up.
+    """
+    n_merged = 0
+    for key in sorted(web.runs, key=lambda k: (web.runs[k].length_mm, k)):
+        run = web.runs.get(key)
+        if run is None or run.start == run.end or min(web.degree(run.start), web.degree(run.end)) < 3:
+            continue
+        radius = max(web.joints[run.start].radius_mm, web.joints[run.end].radius_mm)
+        if run.length_mm >= ratio * radius or is_parallel(web, run):
+            continue
+        lines = [
+            line
+            for joint in (run.start, run.end)
+            for other, leaving in web.leaving(joint)
+            if other != key and (line := _line_near(leaving, radius)) is not None
+        ]
+        n_others = web.degree(run.start) + web.degree(run.end) - 2
+        aim = _aim(lines) if len(lines) == n_others else None
+        middle = 0.5 * (web.joints[run.start].place_mm + web.joints[run.end].place_mm)
+        if aim is not None and aim[1] < AIM_SPREAD * radius and np.hypot(*(aim[0] - middle)) < radius:
+            merge_along(web, key)
+            n_merged += 1
+    return n_merged
+
+
+def place_junctions(web: Web) -> None:
+    """Moves each junction to the point nearest, in the least-squares sense, to the lines its free runs make near it.
+
+    A line is fitted to the free samples within one and a half half-widths of the zone's end. The
+    junction stays where it is when the lines are near parallel, miss each other by more than a fifth
+    of its radius, or meet further off than its radius.
+    """
+    for key in sorted(web.joints):
+        if web.degree(key) < 3:
+            continue
+        joint = web.joints[key]
+        lines = [line for _, run in web.leaving(key) if (line := _line_near(run, joint.radius_mm)) is not None]
+        aim = _aim(lines)
+        if aim is None:
+            continue
+        place, spread = aim
+        if np.hypot(*(place - joint.place_mm)) < joint.radius_mm and spread < AIM_SPREAD * joint.radius_mm:
+            move_joint(web, key, place)
+
+
+def _aim(lines: list[tuple[Floats, Floats]]) -> tuple[Floats, float] | None:
+    """Returns the point nearest to all lines and its rms distance from them; None when they are near parallel."""
+    matrix, vector, square = np.zeros((2, 2)), np.zeros(2), 0.0
+    for middle, direction in lines:
+        across = np.eye(2) - np.outer(direction, direction)
+        matrix += across
+        vector += across @ middle
+        square += float(middle @ across @ middle)
+    (a, b), (_, d) = matrix
+    if 0.5 * (a + d) - float(np.hypot(0.5 * (a - d), b)) < 0.15:
+        return None
+    place = np.array([d * vector[0] - b * vector[1], a * vector[1] - b * vector[0]]) / (a * d - b * b)
+    rest = square - 2.0 * float(vector @ place) + float(place @ matrix @ place)
+    return place, float(np.sqrt(max(0.0, rest) / len(lines)))
+
+
+def _line_near(run: Run, radius_mm: float) -> tuple[Floats, Floats] | None:
+    """Returns a point on, and the direction of, the line through the first free samples of `run`."""
+    assert run.free is not None
+    arc = arc_mm(run.place_mm)
+    free = np.flatnonzero(run.free)
+    if not len(free):
+        return None
+    begin = arc[free[0]]
+    chosen = run.place_mm[run.free & (arc >= begin) & (arc <= begin + 1.5 * radius_mm) & (arc < 0.6 * arc[-1])]
+    if len(chosen) < 3:
+        return None
+    middle = chosen.mean(axis=0)
+    (xx, xy), (_, yy) = (chosen - middle).T @ (chosen - middle)
+    angle = 0.5 * float(np.arctan2(2.0 * xy, xx - yy))
+    return middle, np.array([np.cos(angle), np.sin(angle)])
+
+
+def move_joint(web: Web, key: int, place_mm: Floats) -> None:
+    """Moves the joint `key` and the run ends on it to `place_mm`."""
+    web.joints[key].place_mm = place_mm
+    for run_key in web.at[key]:
+        run = web.runs[run_key]
+        if run.start == key:
+            run.place_mm[0] = place_mm
+        if run.end == key:
+            run.place_mm[-1] = place_mm
+        run.length_mm = measure_length_mm(run.place_mm)
