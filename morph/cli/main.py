@@ -13,11 +13,13 @@ import os
 import signal
 import sys
 from collections.abc import Sequence
+from pathlib import Path
 from types import FrameType
 from typing import NoReturn
 
 from morph import __version__
 from morph.cli import build, explain, later, start
+from morph.cli.supervise import can_supervise, run_supervised
 from morph.core.errors import Cancelled, MorphError
 
 EXIT_DONE, EXIT_ERROR, EXIT_USAGE, EXIT_INTERRUPTED, EXIT_TERMINATED = 0, 1, 2, 130, 143
@@ -73,6 +75,14 @@ def _terminate(_signal: int, _frame: FrameType | None) -> NoReturn:
     raise SystemExit(EXIT_TERMINATED)
 
 
+def _clean_after(process: int) -> None:
+    """Removes what a build that was ended by force may have begun to write."""
+    from morph.core.files import remove_partial
+
+    out = make_parser().parse_args().out
+    remove_partial(Path("out") / "any" if out is None else out, process)
+
+
 def entry() -> NoReturn:
     """Runs the command line of this process and exits with its status."""
     for stream in (sys.stdout, sys.stderr):
@@ -81,7 +91,8 @@ def entry() -> NoReturn:
             reconfigure(errors="backslashreplace")
     signal.signal(signal.SIGTERM, _terminate)
     try:
-        status = main()
+        supervised = sys.argv[1:2] == ["build"] and can_supervise()
+        status = run_supervised(main, _clean_after) if supervised else main()
         sys.stdout.flush()
     except BrokenPipeError:  # the reader of our output has gone, as in `morph explain | head`
         os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())

@@ -230,6 +230,16 @@ def _new_folder(folder: Path) -> Path:
             return stage
 
 
+def remove_partial(target: Path, process: int) -> None:
+    """Removes the hidden folders that the ended process `process` left beside `target` or in it."""
+    with suppress(OSError):
+        folder = target.resolve()
+        places = [folder.parent, *(entry for entry in folder.parent.iterdir() if entry.is_dir())]
+        for place in places:
+            for stage in place.glob(f".*.partial-{process}-*"):
+                shutil.rmtree(stage, ignore_errors=True)
+
+
 def _publish(stage: Path, folder: Path, names: list[str], *, force: bool) -> None:
     if not folder.exists():
         with suppress(FileExistsError, NotADirectoryError):
