@@ -29,7 +29,7 @@
   function show(name) {
     var quantity = quantities.find(function (item) { return item.name === name; });
     tellScale(quantity);
-    document.querySelectorAll("[data-quantity]").forEach(function (button) {
+    document.querySelectorAll("button[data-quantity]").forEach(function (button) {
       button.setAttribute("aria-pressed", String(button.dataset.quantity === name));
     });
     return Plotly.restyle(place, {
@@ -37,7 +37,7 @@
       cmin: [quantity.low],
       cmax: [quantity.high],
       "colorbar.title.text": [quantity.unit]
-    }, [0]).then(function () { root.dataset.quantity = name; });
+    }, [0]).then(function () { root.dataset.shown = name; });
   }
 
   function eye() { return place.layout.scene.camera.eye; }
@@ -56,16 +56,16 @@
   }
 
   function connect() {
-    document.querySelectorAll("[data-quantity]").forEach(function (button) {
+    document.querySelectorAll("button[data-quantity]").forEach(function (button) {
       button.addEventListener("click", function () { show(button.dataset.quantity); });
     });
-    document.querySelectorAll("[data-view]").forEach(function (button) {
+    document.querySelectorAll("button[data-view]").forEach(function (button) {
       button.addEventListener("click", function () { look(views[button.dataset.view]); });
     });
-    document.querySelectorAll("[data-turn]").forEach(function (button) {
+    document.querySelectorAll("button[data-turn]").forEach(function (button) {
       button.addEventListener("click", function () { turn(Number(button.dataset.turn)); });
     });
-    document.querySelectorAll("[data-zoom]").forEach(function (button) {
+    document.querySelectorAll("button[data-zoom]").forEach(function (button) {
       button.addEventListener("click", function () { zoom(Number(button.dataset.zoom)); });
     });
   }
@@ -86,7 +86,7 @@
   });
 
   tellScale(quantities[0]);
-  root.dataset.quantity = quantities[0].name;
+  root.dataset.shown = quantities[0].name;
   var canvas = document.createElement("canvas");
   if (!(canvas.getContext("webgl") || canvas.getContext("experimental-webgl"))) { without3d(); return; }
   var config = { displaylogo: false, responsive: true, displayModeBar: false, scrollZoom: true };
