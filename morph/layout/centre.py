@@ -18,7 +18,7 @@ from morph.layout.web import Run, Web, arc_mm
 ROUNDS = 2
 PROBE_SHARE = 0.5
 WIDTH_PROBE_SHARE = 0.7
-ABREAST_SHARE = 0.5
+ABREAST_SHARE = 0.25
 """A wall further ahead or behind than this many half-widths is not the sample's own."""
 FREE_STRETCH = 0.4
 """Free samples must last this many half-widths before the junction is taken to be left behind."""
@@ -105,7 +105,7 @@ def _measure_widths(web: Web, walls: Walls, keys: list[int], bounds: Ints, step_
     for sign in (1.0, -1.0):
         _, wall = walls.nearest(place + sign * WIDTH_PROBE_SHARE * half[:, None] * normal)
         ahead = np.abs(((wall - place) * tangent).sum(axis=1))
-        own &= ahead <= ABREAST_SHARE * half + 0.5 * step_mm
+        own &= ahead <= ABREAST_SHARE * half + 0.25 * step_mm
     wall_length, wall_away = _walls_abreast(walls, place, half, normal, step_mm)
     for key, first, last in zip(keys, bounds[:-1], bounds[1:], strict=True):
         run = web.runs[key]

@@ -7,7 +7,7 @@ from dataclasses import replace
 import numpy as np
 
 from morph.core.arrays import Floats
-from morph.layout.web import Joint, Run, Web, arc_mm
+from morph.layout.web import Run, Web, arc_mm, line_through
 
 
 def cut_at_frame(web: Web, size_mm: tuple[float, float]) -> None:
@@ -78,14 +78,26 @@ def trim_tips(web: Web, least_ratio: float = 0.8) -> None:
         near = arc <= min(4.0 * float(run.half_mm.max()), 0.6 * arc[-1])
         wanted = least_ratio * float(np.median(run.half_mm[near]))
         full = np.flatnonzero(run.half_mm >= wanted)
-        first = min(int(full[0]) if len(full) else 0, len(arc) - 4)
+        first = max(0, min(int(full[0]) if len(full) else 0, len(arc) - 4))
         half = np.maximum(run.half_mm[first:], np.where(near[first:], wanted, 0.0))
-        web.remove_run(run_key)
-        web.joints[key] = replace_place(joint, run.place_mm[first])
         free = None if run.free is None else run.free[first:]
-        web.add_run(Run(key, run.end, run.place_mm[first:], half, free))
+        place = _straight_tip(run.place_mm[first:], float(np.median(half[near[first:]])) if near[first:].any() else 0.0)
+        web.remove_run(run_key)
+        web.joints[key] = replace(joint, place_mm=place[0])
+        web.add_run(Run(key, run.end, place, half, free))
 
 
-def replace_place(joint: Joint, place_mm: Floats) -> Joint:
-    """Returns `joint` at another place."""
-    return replace(joint, place_mm=place_mm)
+def _straight_tip(place_mm: Floats, half_mm: float) -> Floats:
+    """Returns the samples with those within one half-width of the tip moved onto the line of the next one and a half.
+
+    There a wall across the end draws samples aside.
+    """
+    arc = arc_mm(place_mm)
+    stretch = (arc >= half_mm) & (arc <= 2.5 * half_mm) & (arc <= 0.8 * arc[-1])
+    if np.count_nonzero(stretch) < 3:
+        return place_mm
+    middle, direction = line_through(place_mm[stretch])
+    tip = arc < half_mm
+    moved = place_mm.copy()
+    moved[tip] = middle + ((place_mm[tip] - middle) @ direction)[:, None] * direction
+    return moved

@@ -82,6 +82,7 @@ def find_graph(
     traced = _trace_faithfully(density, level, ports, at_mm, progress)
     web, picture = traced.web, traced.picture
     attach_ports(web, ports, list_candidates(picture, density.size_mm), density.size_mm)
+    join_all(web)
     progress.step(STAGE, 3, N_STEPS)
     levels = count_at_levels(density, picture)
     suggestions = suggest_bridges(web, smoothed(density.value), density, picture)

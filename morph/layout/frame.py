@@ -144,7 +144,7 @@ def find_mouths(picture: Picture, ports_mm: Floats, size_mm: tuple[float, float]
         size_mm: of the sheet.
     """
     runs = find_frame_runs(picture.mask)
-    mouths = [run for run in runs if run.kind is RunKind.CUT]
+    mouths = _one_per_corner([run for run in runs if run.kind is RunKind.CUT], picture, ports_mm)
     for port, place in zip(ports_mm, picture.grid.row_column(ports_mm), strict=True):
         side, away_mm = side_of((float(port[0]), float(port[1])), size_mm)
         if abs(away_mm) > 0.75 * picture.width_mm:
@@ -156,12 +156,44 @@ def find_mouths(picture: Picture, ports_mm: Floats, size_mm: tuple[float, float]
     return tuple(mouths)
 
 
+def _one_per_corner(runs: list[FrameRun], picture: Picture, ports_mm: Floats) -> list[FrameRun]:
+    """Returns `runs` with one of every two that share a corner: the one nearer to a port, else the longer."""
+    rows, columns = picture.mask.shape
+    along = {Side.BOTTOM: columns, Side.TOP: columns, Side.LEFT: rows, Side.RIGHT: rows}
+    kept = list(runs)
+    for level in (Side.BOTTOM, Side.TOP):
+        for upright in (Side.LEFT, Side.RIGHT):
+            pair = [
+                next((r for r in kept if r.side is side and _touches(r, other, along[side])), None)
+                for side, other in ((level, upright), (upright, level))
+            ]
+            if pair[0] is not None and pair[1] is not None:
+                first, second = pair[0], pair[1]
+                away = [_away_from_ports(run, picture, ports_mm) for run in (first, second)]
+                shorter = second if first.last - first.first >= second.last - second.first else first
+                kept.remove(shorter if away[0] == away[1] else first if away[0] > away[1] else second)
+    return kept
+
+
+def _touches(run: FrameRun, corner_side: Side, n: int) -> bool:
+    return run.first == 0 if corner_side in {Side.LEFT, Side.BOTTOM} else run.last == n
+
+
+def _away_from_ports(run: FrameRun, picture: Picture, ports_mm: Floats) -> float:
+    rows, columns = picture.mask.shape
+    across = {Side.BOTTOM: 0.0, Side.TOP: rows - 1.0, Side.LEFT: 0.0, Side.RIGHT: columns - 1.0}[run.side]
+    upright = run.side in {Side.LEFT, Side.RIGHT}
+    place = np.array([[run.middle_px, across] if upright else [across, run.middle_px]])
+    away = np.hypot(*(ports_mm - picture.grid.sheet_mm(place)).T)
+    return float(away.min()) if len(away) else math.inf
+
+
 def _window(mask: Bools, run: FrameRun, along: float) -> FrameRun:
     column = min(max(round(along), run.first), run.last - 1)
     behind = seen_from_side(mask, run.side)[:, column]
     depth = len(behind) if behind.all() else int(np.argmin(behind))
     half = max(2, min(depth, run.last - run.first)) / 2.0
-    first, last = max(run.first, math.floor(column - half)), min(run.last, math.ceil(column + half) + 1)
+    first, last = max(run.first, math.floor(column - half)), min(run.last, math.ceil(column + half))
     return FrameRun(run.side, first, last, RunKind.CUT)
 
 

@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 
 from morph.core.arrays import Floats
-from morph.layout.web import Run, Web, arc_mm, is_parallel, measure_length_mm, merge_along
+from morph.layout.web import Run, Web, arc_mm, is_parallel, line_through, measure_length_mm, merge_along
 
 AIM_SPREAD = 0.2
 """Lines that miss their common point by more than this many radii (rms) do not aim at one point."""
@@ -90,10 +90,7 @@ def _line_near(run: Run, radius_mm: float) -> tuple[Floats, Floats] | None:
     chosen = run.place_mm[run.free & (arc >= begin) & (arc <= begin + 1.5 * radius_mm) & (arc < 0.6 * arc[-1])]
     if len(chosen) < 3:
         return None
-    middle = chosen.mean(axis=0)
-    (xx, xy), (_, yy) = (chosen - middle).T @ (chosen - middle)
-    angle = 0.5 * float(np.arctan2(2.0 * xy, xx - yy))
-    return middle, np.array([np.cos(angle), np.sin(angle)])
+    return line_through(chosen)
 
 
 def move_joint(web: Web, key: int, place_mm: Floats) -> None:

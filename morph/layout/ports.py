@@ -119,10 +119,14 @@ class _Nearest:
 
 
 def _find_nearest(web: Web, at_mm: tuple[float, float]) -> _Nearest | None:
+    """Returns the nearest sample; a blind end reaches on to its end wall, half a bore past its last sample."""
     best: _Nearest | None = None
     for key in sorted(web.runs):
         run = web.runs[key]
         away = np.hypot(*(run.place_mm - at_mm).T)
+        for end, joint in ((0, run.start), (-1, run.end)):
+            if web.degree(joint) == 1:
+                away[end] = max(0.0, away[end] - run.half_mm[end])
         sample = int(np.argmin(away))
         if best is None or away[sample] < best.away_mm:
             best = _Nearest(key, sample, float(away[sample]), float(run.half_mm[sample]))
@@ -208,7 +212,7 @@ def _fit_tip(web: Web, key: int, at_mm: tuple[float, float], size_mm: tuple[floa
     run_key = web.at[key][0]
     run = web.runs[run_key] if web.runs[run_key].start == key else web.runs[run_key].reversed()
     arc = arc_mm(run.place_mm)
-    inner = run.place_mm[min(int(np.searchsorted(arc, float(run.half_mm[0]))), len(arc) - 1)]
+    inner = run.place_mm[min(max(1, int(np.searchsorted(arc, float(run.half_mm[0])))), len(arc) - 1)]
     outward = run.place_mm[0] - inner
     outward = outward / max(float(np.hypot(*outward)), 1e-12)
     ahead = float((np.asarray(at_mm) - run.place_mm[0]) @ outward)

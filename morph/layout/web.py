@@ -57,6 +57,14 @@ def measure_length_mm(place_mm: Floats) -> float:
     return float(np.hypot(*np.diff(place_mm, axis=0).T).sum())
 
 
+def line_through(place_mm: Floats) -> tuple[Floats, Floats]:
+    """Returns the middle of `place_mm (k, 2)` and the unit direction of the line nearest to them (principal axis)."""
+    middle = place_mm.mean(axis=0)
+    (xx, xy), (_, yy) = (place_mm - middle).T @ (place_mm - middle)
+    angle = 0.5 * float(np.arctan2(2.0 * xy, xx - yy))
+    return middle, np.array([np.cos(angle), np.sin(angle)])
+
+
 def arc_mm(place_mm: Floats) -> Floats:
     """Returns (k,) lengths along the polyline `place_mm (k, 2)` from its first point."""
     return np.concatenate([[0.0], np.cumsum(np.hypot(*np.diff(place_mm, axis=0).T))])
