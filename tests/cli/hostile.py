@@ -11,7 +11,7 @@ import numpy as np
 
 from tests.cli.scene import JOB, straight_channel
 
-LAYOUT, CARRIER = "size_mm = [60.0, 40.0]", "radius_mm = 30.0"
+LAYOUT, CARRIER, EXIT = "size_mm = [60.0, 40.0]", "radius_mm = 30.0", "exit_mm = [0.0, 0.0, -30.0]"
 
 
 @dataclass(frozen=True)
@@ -101,6 +101,19 @@ def two_channels():
     return value
 
 
+def specks():
+    """Five dots far smaller than any channel."""
+    value = np.zeros((80, 120))
+    for row, column in ((10, 10), (30, 80), (50, 20), (60, 100), (70, 60)):
+        value[row : row + 2, column : column + 2] = 1.0
+    return value
+
+
+def make_pipe(path):
+    path.unlink(missing_ok=True)
+    os.mkfifo(path)
+
+
 def make_folder(path):
     path.unlink(missing_ok=True)
     path.mkdir()
@@ -144,6 +157,8 @@ IMAGES = [
     image("image-out-of-range", "density.npy", spoiled(255.0)),
     image("image-constant", "density.npy", npy(np.full((40, 60), 0.7))),
     image("image-coloured", "density.png", png(60, 40, 2, (b"\0" + b"\x10\x80\xf0" * 60) * 40)),
+    image("image-png-kind", "density.png", png(60, 40, 3, (b"\0" + b"\x10" * 60) * 40)),
+    image("image-transparent", "density.png", png(60, 40, 4, (b"\0" + b"\x10\x80" * 60) * 40)),
     image("format-not-available", "density.tif", b"II*\0"),
     image("format-not-available", "density.npz", b"PK\x03\x04"),
     image("image-format-unknown", "density.jpg", b"\xff\xd8\xff"),
@@ -183,6 +198,7 @@ GEOMETRY = [
     setting("aspect-mismatch", LAYOUT, "size_mm = [60.0, 60.0]"),
     setting("aspect-mismatch", LAYOUT, "size_mm = [60.0, 41.0]"),
     density("level-empty", straight_channel() * 0.4),
+    density("port-off-channel", specks()),
     density("level-full", 0.6 + 0.4 * straight_channel()),
     setting("keep-area-missed", LAYOUT, LAYOUT + '\nlevel = "keep-area"\narea_ratio = 0.9'),
     setting("port-off-channel", "[60.0, 20.0]", "[60.0, 39.0]"),
@@ -207,6 +223,16 @@ GEOMETRY = [
     more("blank-stock-refused", "[blank]\nstock_mm = { carrier = 1.0 }"),
     more("hole-misses-body", "[[hole]]\nat_mm = [500, 0, 0]\naxis = [0, 0, 1]\ndiameter_mm = 5"),
     setting("exit-off-port-face", "at_mm = [0.0, 20.0]", "at_mm = [0.0, 20.0]\nexit_mm = [0.0, 0.0, 0.0]"),
+    setting("exit-without-wall", "at_mm = [0.0, 20.0]", "at_mm = [0.0, 20.0]\nexit_mm = [29.0, 0.0, -30.0]"),
+    setting("leave-into-metal", "at_mm = [0.0, 20.0]", f"at_mm = [0.0, 20.0]\n{EXIT}\nleave = [0, 0, 1]"),
+    Bad(
+        "exits-too-near",
+        (
+            ("at_mm = [0.0, 20.0]", f"at_mm = [0.0, 20.0]\n{EXIT}"),
+            ("at_mm = [60.0, 20.0]", "at_mm = [60.0, 20.0]\nexit_mm = [1.0, 0.0, -30.0]"),
+        ),
+    ),
+    more("lead-blocked", "[[hole]]\nat_mm = [0, 0, -30]\naxis = [0, 0, 1]\ndiameter_mm = 50\ndepth_mm = 5"),
     more("no-room-for-smallest-bore", "[service]\nwall_face_mm = 12.0"),
 ]
 
@@ -223,5 +249,9 @@ OUTPUT = [
     Bad("not-available", arguments=("check", "insert.stl")),
     Bad("code-unknown", arguments=("explain", "no-such-code")),
 ]
+
+if hasattr(os, "mkfifo"):
+    IMAGES.append(Bad("image-unreadable", files={"density.npy": make_pipe}))
+    FILES.append(Bad("job-unreadable", files={"job.toml": make_pipe}))
 
 ALL = FILES + IMAGES + SETTINGS + GEOMETRY + OUTPUT

@@ -33,10 +33,10 @@ from morph.cli.main import entry
 def _begin(folder, work, more=""):
     script = PRELUDE.replace("WORK", work) + more + "\nentry()\n"
     process = subprocess.Popen(
-        [sys.executable, "-c", script], cwd=folder, stdout=subprocess.PIPE, stderr=subprocess.PIPE, text=True
+        [sys.executable, "-c", script], cwd=folder, stdout=subprocess.PIPE, stderr=subprocess.PIPE, bufsize=0
     )
-    first = process.stderr.read(10)
-    assert first.startswith("  layout"), first + process.stderr.read()
+    first = process.stderr.read(8)
+    assert first == b"  layout", first + process.stderr.read()
     time.sleep(0.3)
     return process
 
@@ -44,7 +44,7 @@ def _begin(folder, work, more=""):
 def _finish(process):
     begin = time.perf_counter()
     out, err = process.communicate(timeout=30)
-    return process.returncode, out, err, time.perf_counter() - begin
+    return process.returncode, out.decode(), err.decode(), time.perf_counter() - begin
 
 
 @pytest.mark.parametrize(("number", "status"), [(signal.SIGINT, 130), (signal.SIGTERM, 143)])
