@@ -156,9 +156,10 @@ def test_a_small_loop_keeps_its_island():
     links = [("N1", "A", 4.0), ("A", "Z", 5.5, arms[0]), ("A", "Z", 5.5, arms[1]), ("Z", "N2", 4.0)]
     plan = Scene(make_graph(SIZE, places, links), service=ServiceSettings(wall_face_bores=0.0)).plan()
     left, right = plan.branches[1:3]
-    k = int(np.abs(left.sheet_mm[:, 1] - 19).argmin())
-    width = np.linalg.norm(left.xyz_mm[k] - right.xyz_mm, axis=1).min() - left.bore_mm[k] / 2 - right.bore_mm[k] / 2
-    assert width > 1.0 + BAND - 0.1
+    k, m = (int(np.abs(arm.sheet_mm[:, 1] - 19).argmin()) for arm in (left, right))
+    width = np.linalg.norm(left.xyz_mm[k] - right.xyz_mm[m]) - left.bore_mm[k] / 2 - right.bore_mm[m] / 2
+    # The straight distance between the arms; around the carrier it is 0.04 mm more.
+    assert width == pytest.approx(1.0 + BAND, abs=0.05)
     assert left.capped.any() and left.bore_mm.max() < 5.5
 
 
