@@ -10,7 +10,8 @@ from collections.abc import Sequence
 
 import numpy as np
 
-from morph.body.blank import Blank, Hole
+from morph.body.blank import Blank
+from morph.body.hole import distance_to_hole_mm
 from morph.body.plan import Exit, PlanBranch
 from morph.core.arrays import Floats
 
@@ -33,15 +34,6 @@ def rim_mm(exit_: Exit) -> Floats:
     return rim
 
 
-def _hole_distance_mm(hole: Hole, points_mm: Floats) -> Floats:
-    """Returns the distance (k,) of `points_mm (k, 3)` from the round flank or the end of `hole`, negative inside it."""
-    offset = points_mm - hole.start_mm
-    along = np.einsum("ij,j->i", offset, hole.axis)
-    across = np.linalg.norm(offset - along[:, None] * hole.axis, axis=1) - 0.5 * hole.diameter_mm
-    beyond = np.maximum(np.maximum(-along, along - hole.length_mm), 0.0)
-    return np.asarray(np.where(beyond > 0.0, np.hypot(np.maximum(across, 0.0), beyond), across), dtype=np.float64)
-
-
 def least_wall_around(exit_: Exit, exits: Sequence[Exit], blank: Blank) -> tuple[float, str]:
     """Returns the least metal in mm around the opening of `exit_`, and the name of what lies behind it.
 
@@ -54,7 +46,7 @@ def least_wall_around(exit_: Exit, exits: Sequence[Exit], blank: Blank) -> tuple
     found = [
         (float(face.distance_mm(rim).min()), f"face:{face.name}") for face in blank.faces if face.name != exit_.face
     ]
-    found += [(float(_hole_distance_mm(hole, rim).min()), f"hole:{hole.id}") for hole in blank.holes]
+    found += [(float(distance_to_hole_mm(hole, rim).min()), f"hole:{hole.id}") for hole in blank.holes]
     for other in exits:
         if other.node != exit_.node:
             gap = np.linalg.norm(rim[:, None, :] - rim_mm(other)[None, :, :], axis=2)

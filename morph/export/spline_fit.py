@@ -23,12 +23,11 @@ from morph.geometry.curve import DEGREE, Curve, curve_at
 FIT_MM = 5e-4
 """Largest distance of the spline from its samples; half of what is promised, the rest is for rounding."""
 
-CORNER_RAD = 0.5
-"""A turn at a single sample above this (29 degrees) may be a corner: the tightest bend that prints,
-one bore of radius sampled at a quarter bore, turns by 0.25 per sample."""
-
-CORNER_TIMES_NEIGHBOUR = 3.0
-"""A corner also turns this many times more than at the samples beside it."""
+CORNERS = ((0.5, 3.0), (0.005, 10.0))
+"""A sample is a corner when the path turns there by more than the first number (rad) and by more than the
+second number times what it turns at the samples beside it. A bend of one bore radius, sampled at a
+quarter bore, turns by 0.25 at every sample, so it is no corner; a kink of 0.3 degrees between
+straight runs is one, because a smooth curve would ripple by more than the fit allows."""
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -56,7 +55,8 @@ def _corners(points: Floats) -> list[int]:
     cosine = np.einsum("ij,ij->i", heading[1:], heading[:-1])
     turn = np.concatenate([[0.0], np.arccos(np.clip(cosine, -1.0, 1.0)), [0.0]])
     beside = np.maximum(np.roll(turn, 1), np.roll(turn, -1))
-    return [int(i) for i in np.flatnonzero((turn > CORNER_RAD) & (turn > CORNER_TIMES_NEIGHBOUR * beside))]
+    sharp = np.any([(turn > least) & (turn > times * beside) for least, times in CORNERS], axis=0)
+    return [int(i) for i in np.flatnonzero(sharp)]
 
 
 def _reference(parameter: Floats, points: Floats) -> tuple[Floats, Curve]:

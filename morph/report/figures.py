@@ -155,7 +155,7 @@ def make_figure(scene: ChannelScene) -> Any:
             "template": "none",
             "scene": {
                 "aspectmode": "data",
-                "camera": {"eye": {"x": 1.6, "y": 1.3, "z": 0.6}, "center": {"x": 0.0, "y": 0.0, "z": -0.12}},
+                "camera": {"eye": {"x": 1.75, "y": 1.4, "z": 0.65}, "center": {"x": 0.0, "y": 0.0, "z": -0.12}},
                 **{f"{name}axis": {**axis, "title": {"text": f"{name}, mm"}} for name in "xyz"},
             },
             "margin": {"l": 0, "r": 0, "t": 0, "b": 0},

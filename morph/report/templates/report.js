@@ -5,7 +5,7 @@
   var figure = JSON.parse(document.getElementById("figure-data").textContent);
   var quantities = JSON.parse(document.getElementById("quantity-data").textContent);
   var views = {
-    corner: { x: 1.6, y: 1.3, z: 0.6 },
+    corner: { x: 1.75, y: 1.4, z: 0.65 },
     front: { x: 0, y: -1.9, z: 0.001 },
     side: { x: 1.9, y: 0, z: 0.001 },
     top: { x: 0, y: -0.001, z: 1.9 }
