@@ -27,6 +27,8 @@ from morph.solid.tidy import is_closed, make_file_mesh, require_closed, round_to
 
 MOST_TAKE_BACKS = 4
 
+TOLERANCES_MM = (SIMPLIFY_MM, 0.25 * SIMPLIFY_MM, 0.0)
+
 
 def make_channel_solid(plan: ChannelPlan, blank: Blank, h_mm: float, progress: Progress = SILENT) -> ChannelSolid:
     """Returns the channels of `plan` swept past their exits, and trimmed at the finished faces of `blank`.
@@ -46,8 +48,8 @@ def make_channel_solid(plan: ChannelPlan, blank: Blank, h_mm: float, progress: P
     euler = len(vertices) - len(triangles) // 2
     swept, found = _simplified(vertices, triangles, SIMPLIFY_MM, progress)
     if not _is_sound(swept, found, euler):
-        vertices = _untangled(field, vertices, triangles, progress)
-        for tolerance in (SIMPLIFY_MM, 0.25 * SIMPLIFY_MM, 0.0):
+        before, vertices = vertices, _untangled(field, vertices, triangles, progress)
+        for tolerance in TOLERANCES_MM[int(vertices is before) :]:
             swept, found = _simplified(vertices, triangles, tolerance, progress)
             if _is_sound(swept, found, euler):
                 break
@@ -83,12 +85,13 @@ def _is_sound(mesh: Mesh, found: Crossings, euler: int) -> bool:
 
 def _simplified(vertices: Floats, triangles: Ints, tolerance_mm: float, progress: Progress) -> tuple[Mesh, Crossings]:
     """Returns the surface moved by at most `tolerance_mm` with fewer triangles, and its crossings."""
+    progress.step("solid: simplify", 0, 2)
+    body, _ = body_from(vertices, triangles, "the channel solid")
+    progress.step("solid: simplify", 1, 2)
     if tolerance_mm > 0.0:
-        progress.step("solid: simplify", 0, 1)
-        body, _ = body_from(vertices, triangles, "the channel solid")
-        progress.step("solid: simplify", 0, 1)
-        vertices, triangles, _ = arrays_of(body.simplify(tolerance_mm))
-        progress.step("solid: simplify", 1, 1)
+        body = body.simplify(tolerance_mm)
+    vertices, triangles, _ = arrays_of(body)
+    progress.step("solid: simplify", 2, 2)
     mesh, _ = tidy_mesh(vertices, triangles, np.zeros(len(triangles), np.int64))
     return mesh, measure_crossings(mesh, progress)
 
@@ -113,7 +116,10 @@ def _untangled(field: SampledField, vertices: Floats, triangles: Ints, progress:
 
 
 def _trimmed(swept: Mesh, blank: Blank, progress: Progress) -> Mesh:
-    """Returns the part of the swept channels inside the finished blank."""
+    """Returns the part of the swept channels inside the finished blank.
+
+    The library gets the mesh anew, as it does for the insert, so that trimmed channels and insert fit without a gap.
+    """
     progress.step("solid: trim", 0, 1)
     what = "the channels inside the blank"
     body = body_of(swept, what)[0] ^ blank_body(blank, printed=False)

@@ -78,7 +78,7 @@ def choose_h_mm(plan: ChannelPlan, quality: QualitySettings) -> float:
             expected=f"at most {MOST_TRIANGLES / 1e6:.0f} million triangles and {MOST_BYTES / 1e9:.0f} GB",
             found=f"{triangles / 1e6:.3g} million triangles, {triangles * BYTES_PER_TRIANGLE / 1e9:.3g} GB predicted",
             where=f"{len(plan.branches)} branches at h_mm = {h_mm:.3g} mm",
-            do=f"Set [quality] h_mm to {math.ceil(1000.0 * least) / 1000.0:.3f} mm or more, or make the layout smaller.",
+            do=f"Set [quality] h_mm to {math.ceil(1000.0 * least) / 1000.0:.3f} mm or more, or shrink the layout.",
         )
     return float(h_mm)
 

@@ -61,3 +61,29 @@ def random_net(seed: int):
         )
         exits.append((name, ("in", "out")[side], f"L-{name}", face, (2.0 * side - 1.0, 0, 0), 0.0))
     return plans.plan_of(items, exits), plans.box_blank(high=tuple(size)), loops, len(exits)
+
+
+def tangled_net(seed: int):
+    """Returns (plan, blank, h_mm): bowed channels of 1.3 to 6 mm bore between random points of a box, most of them running
+    into each other, one exit. Nothing is known of its topology; it must still give sound meshes.
+    """
+    rng = np.random.default_rng(seed)
+    n = rng.integers(3, 8)
+    points, items = rng.uniform([8, 8, 8], [52, 32, 22], (n, 3)), []
+    for number in range(n + 2):
+        a, b = rng.choice(n, 2, replace=False)
+        if np.linalg.norm(points[a] - points[b]) < 1.0:
+            continue
+        t, bow = np.linspace(0.0, 1.0, 41)[:, None], rng.normal(0.0, 3.0, 3)
+        path = np.clip(points[a] + t * (points[b] - points[a]) + 4.0 * t * (1.0 - t) * bow, [6, 6, 6], [54, 34, 24])
+        path[0], path[-1] = points[a], points[b]
+        width = np.linspace(*rng.uniform(1.3, 6.0, 2), 41)
+        items.append(plans.branch(f"B{number}", f"N{a}", f"N{b}", path, width))
+    start = items[0].xyz_mm[0]
+    end = np.array([0.0, start[1] + rng.uniform(-3.0, 3.0), start[2]])
+    leave = (end - start) / np.linalg.norm(end - start)
+    items.append(plans.branch("L-a", items[0].start, "X", plans.sampled([start, end], 4.0), 4.0, lead=True))
+    exits = [("a", "in", "L-a", "-x", leave, 0.0)]
+    plan = plans.plan_of(items, exits, blend_mm=float(rng.choice([0.0, 0.3, 0.6, 1.5])))
+    blank = plans.box_blank(stock={"-x": float(rng.choice([0.0, 0.5]))})
+    return plan, blank, float(rng.uniform(0.2, 0.32))

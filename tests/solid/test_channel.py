@@ -14,7 +14,7 @@ from morph.solid.crossings import measure_crossings
 from morph.solid.cut import expected_channel_genus, expected_genus, make_insert
 from morph.solid.field import choose_h_mm
 from tests.solid import plans
-from tests.solid.nets import random_net
+from tests.solid.nets import random_net, tangled_net
 
 CASES = {
     "straight": (plans.straight_pipe, plans.box_blank, 0, 2),
@@ -168,6 +168,56 @@ def test_random_nets_keep_their_topology(seed):
         insert.blank_volume_mm3, rel=1e-6
     )
     assert measure_crossings(insert.mesh).pairs == 0
+
+
+@pytest.mark.parametrize("seed", [4, 15, 95])
+def test_tangled_nets_are_taken_back_until_sound(seed, monkeypatch):
+    """Nets whose first simplification crosses itself or pinches a neck (found by trying a hundred)."""
+    from morph.solid import channel
+
+    calls, original = [], channel._untangled
+    monkeypatch.setattr(channel, "_untangled", lambda *given: calls.append(1) or original(*given))
+    plan, blank, h_mm = tangled_net(seed)
+    solid = make_channel_solid(plan, blank, h_mm)
+    insert = make_insert(solid, blank, plan)
+    assert calls
+    for mesh in (solid.swept, solid.trimmed, insert.mesh):
+        assert measure_condition(mesh).closed and measure_crossings(mesh).pairs == 0
+
+
+@pytest.mark.parametrize("plan", [plans.ring(bore_mm=2.0, radius_mm=9.0), plans.tee(bore_mm=2.0, dead_end_mm=7.0)])
+def test_four_cells_per_bore_still_hold_the_branch(plan):
+    h_mm = choose_h_mm(plan, QualitySettings(h_mm=0.5))
+    solid = make_channel_solid(plan, plans.box_blank(), h_mm)
+    condition = measure_condition(solid.trimmed)
+    assert (condition.bodies, condition.genus) == (1, len(plan.branches) - len(plan.nodes) + 1)
+
+
+def test_a_ring_of_one_branch_is_blended_like_any_junction():
+    """A branch that starts and ends on one node: a drop shape whose ends meet there at a right angle."""
+    t = np.linspace(0.0, 1.0, 241)
+    a = 2.0 * np.pi * t
+    xyz = np.column_stack([20 + 14 * (1 - np.cos(a)), 20 + 7 * np.sin(a) - 3.5 * np.sin(2 * a), np.full(241, 15.0)])
+    xyz[-1] = xyz[0]
+    plan = plans.plan_of([plans.branch("B1", "N1", "N1", xyz, 4.0)])
+    for blend in (0.0, 1.0):
+        solid = make_channel_solid(dataclasses.replace(plan, blend_mm=blend), plans.box_blank(), 0.25)
+        assert measure_condition(solid.trimmed).genus == 1
+
+
+def test_blending_opens_the_crotch_and_nothing_away_from_it():
+    sharp, soft = (
+        make_channel_solid(dataclasses.replace(plans.tee(), blend_mm=blend), plans.box_blank(), 0.25).trimmed
+        for blend in (0.0, 1.0)
+    )
+    assert mesh_volume_mm3(soft) > mesh_volume_mm3(sharp) + 0.5
+    import manifold3d
+
+    def body(mesh):
+        return manifold3d.Manifold(manifold3d.Mesh64(mesh.vertices_mm.copy(), mesh.triangles.astype(np.uint64)))
+
+    far = manifold3d.Manifold.cube([12.0, 40.0, 30.0])
+    assert (body(soft) ^ far).volume() == pytest.approx((body(sharp) ^ far).volume(), rel=2e-4)
 
 
 def test_a_breakout_is_one_more_opening_on_that_face():
