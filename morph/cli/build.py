@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import argparse
-import json
 from pathlib import Path
 from typing import Any
 
@@ -52,7 +51,7 @@ def run(arguments: argparse.Namespace) -> int:
             lines.close()
     paths = pipeline.write(result, out, force=arguments.force)
     if arguments.json:
-        print(json.dumps(result.summary, indent=1, sort_keys=True, allow_nan=False))
+        print(result.files["summary.json"].decode("utf-8").rstrip())
     else:
         for line in result_lines(result, paths):
             print(line)

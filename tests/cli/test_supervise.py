@@ -19,7 +19,7 @@ import os, pathlib, signal, sys
 from types import SimpleNamespace
 import morph.pipeline
 from morph.core.verdict import Outcome
-DONE = SimpleNamespace(summary={}, verdicts=(), notices=(), files={"a.json": b"a", "b.json": b"b"}, headline=Outcome.PASS)
+DONE = SimpleNamespace(summary={}, verdicts=(), notices=(), files={"summary.json": b"{}", "b.json": b"b"}, headline=Outcome.PASS)
 def build(job, progress):
     progress.step("layout", 0, 1)
     WORK
@@ -109,7 +109,7 @@ def test_a_build_that_the_system_kills_says_so(job_folder):
 
 def test_a_good_build_passes_its_output_on(job_folder):
     code, out, _, _ = _finish(_begin(job_folder, "pass"))
-    assert (code, out) == (0, "{}\n") and (job_folder / "out" / "lamp" / "a.json").read_bytes() == b"a"
+    assert (code, out) == (0, "{}\n") and (job_folder / "out" / "lamp" / "b.json").read_bytes() == b"b"
 
 
 @pytest.mark.skipif(sys.platform != "linux", reason="only there the system can tie the two")
