@@ -31,14 +31,17 @@ from morph.check.rows import MEASURE_MM, MOST_NAMED, Limit, judge_length, name_l
 from morph.check.subject import CheckSubject
 from morph.core.arrays import Bools, Floats, Ints
 from morph.core.verdict import Outcome, Verdict
-from morph.geometry.gap import measure_gap
-from morph.geometry.tree import make_tree
+from morph.geometry.gap import Gap, measure_gap
+from morph.geometry.tree import cast_rays, make_tree
 
 RIB_CLOSES = 2.0 * np.sin(np.radians(1.5))
 """Two runs that part at less than 3 degrees enclose a rib; wider, the crotch of a junction (own choice)."""
 
 CONFIRMED = 6
 """This many of the tightest pairs of branches are measured on the written mesh."""
+
+PATCH_BORES = 0.4
+"""The mesh is searched this many bores around the points where the walls face each other."""
 
 SEARCH_RATIO = 2.0
 """Walls up to this many limits are looked for; wider ones are reported as wider."""
@@ -162,30 +165,51 @@ def _closest_on_segments(a: Floats, b: Floats, c: Floats, d: Floats) -> tuple[fl
     return s, t
 
 
-def _patches(wall: ChannelWall, middle: Floats, toward: Floats, reach_mm: float) -> tuple[Ints, Ints]:
-    """Returns the wall triangles near `middle (3,)` before and behind the plane through it across `toward (3,)`.
+def _patch(wall: ChannelWall, middle: Floats, toward: Floats, centre: Floats, reach_mm: float) -> Ints:
+    """Returns the wall triangles within `reach_mm` of `centre (3,)` that lie beyond the plane through `middle (3,)`.
 
-    Triangles that reach through the plane belong to neither: there the channels are not apart.
+    The plane lies across `toward (3,)`; triangles that reach through it are left out: there the channels are not apart.
     """
-    offset = wall.mesh.vertices_mm - middle
+    offset = wall.mesh.vertices_mm - centre
     near = np.einsum("ij,ij->i", offset, offset) <= reach_mm**2
-    side = offset @ toward
     index = np.flatnonzero(near[wall.mesh.triangles].any(axis=1))
-    corner = wall.mesh.triangles[index]
-    return index[(side[corner] < 0.0).all(axis=1)], index[(side[corner] > 0.0).all(axis=1)]
+    side = (wall.mesh.vertices_mm[wall.mesh.triangles[index]] - middle) @ toward
+    return np.asarray(index[(side > 0.0).all(axis=1)], dtype=np.int64)
+
+
+def _gap_on_mesh(finding: BetweenFinding, lines: Centrelines, wall: ChannelWall) -> Gap | None:
+    """Returns the smallest gap on the mesh around the finding, or the metal straight across where it only slides away.
+
+    Beside a crotch the smallest gap of two patches lies on their rim towards the junction, wherever the rim is
+    drawn: that is the crotch's taper and no wall, so the metal on the line between the centrelines is taken.
+    """
+    _, p, q, radius_p, radius_q = _segments_gap(lines, *finding.samples)
+    toward = (q - p) / max(float(np.linalg.norm(q - p)), 1e-12)
+    middle = np.array(finding.xyz_mm)
+    from_p, from_q = p + radius_p * toward, q - radius_q * toward
+    reach_p, reach_q = PATCH_BORES * 2.0 * radius_p, PATCH_BORES * 2.0 * radius_q
+    one = _patch(wall, middle, -toward, from_p, reach_p)
+    two = _patch(wall, middle, toward, from_q, reach_q)
+    if len(one) and len(two):
+        gap = measure_gap(sub_mesh(wall.mesh, one), make_tree(sub_mesh(wall.mesh, two)))
+        inner = gap is not None and (
+            float(np.linalg.norm(np.subtract(gap.from_mm, from_p))) <= 0.8 * reach_p
+            and float(np.linalg.norm(np.subtract(gap.to_mm, from_q))) <= 0.8 * reach_q
+        )
+        if inner:
+            return gap
+    reach, hit = cast_rays(wall.tree, np.array([p, q]), np.array([toward, -toward]))
+    if (hit < 0).any():
+        return None
+    start, end = p + reach[0] * toward, q - reach[1] * toward
+    return Gap(float((end - start) @ toward), place(start), place(end))
 
 
 def confirm(finding: BetweenFinding, lines: Centrelines, wall: ChannelWall) -> BetweenFinding:
     """Returns `finding` measured on the written mesh too; the smaller wall and its place are kept."""
-    a, b = finding.samples
     if finding.centreline_mm <= 0.0:
         return finding
-    _, p, q, _, _ = _segments_gap(lines, a, b)
-    reach = float(max(lines.bore_mm[a], lines.bore_mm[b])) + 0.5 * finding.centreline_mm
-    one, two = _patches(wall, np.array(finding.xyz_mm), q - p, reach)
-    if len(one) == 0 or len(two) == 0:
-        return finding
-    gap = measure_gap(sub_mesh(wall.mesh, one), make_tree(sub_mesh(wall.mesh, two)))
+    gap = _gap_on_mesh(finding, lines, wall)
     if gap is None:
         return finding
     # Where both routes agree the centreline knows the place, the mesh only a facet near it.

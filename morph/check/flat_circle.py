@@ -1,29 +1,43 @@
-"""The largest circle inside a flat patch, seen along a direction: the span a ceiling has to bridge."""
+"""The largest circle inside a flat patch, seen along a direction: the span a ceiling has to bridge.
+
+Around each wide place the border of its patch is triangulated in the plan (Delaunay); the largest
+circle clear of the border has its middle at a circumcentre, so the largest circumcircle whose
+middle lies on the patch is it, to the sampling of the border.
+"""
 
 from __future__ import annotations
+
+from typing import TYPE_CHECKING
 
 import numpy as np
 
 from morph.check.flat_patch import FlatTriangles
-from morph.core.arrays import Floats, Ints
+from morph.core.arrays import Bools, Floats, Ints
 from morph.geometry.mesh import Mesh
+
+if TYPE_CHECKING:
+    from scipy.spatial import cKDTree
 
 BORDER_STEP_MM = 0.1
 """Borders of flat patches are sampled at most this far apart."""
 
 INSIDE_MM = 0.02
-"""Places nearer to a border cannot be told from outside, and no circle is grown from them."""
+"""Places nearer to a border cannot be told from outside."""
 
 LARGE_MM = 3.0
 """Triangles with a longer side get a grid of places inside."""
 
-CIRCLES = 40
-"""This many of the widest places are grown to their largest circle."""
+REACH_RADII = 4.0
+"""The border is looked at this many radii around a place."""
 
-GROW_STEPS = 60
+LOOKS = 60
+"""So many places at most are looked at, widest first, each a radius apart from the others."""
 
-MOVES = 8
-"""A circle that outgrows the border looked at is grown on from where it is at most this often."""
+HOPELESS_RATIO = 0.6
+"""Places whose distance from the border is below this part of the best radius are not looked at."""
+
+TRIED = 64
+"""Of the circumcentres around a place the widest so many are asked whether they lie on the patch."""
 
 
 def _level_lines(corner: Floats, over: Floats) -> tuple[Floats, Floats, Ints]:
@@ -115,9 +129,6 @@ def _places(mesh: Mesh, flat: FlatTriangles, patch: Ints) -> tuple[Floats, Ints]
 def largest_circle(mesh: Mesh, flat: FlatTriangles, frame: Floats) -> tuple[float, Floats] | None:
     """Returns diameter in mm and middle (3,) of the largest circle inside a flat patch, seen along the third axis.
 
-    The nearest border point of a place is asked in space, its distance is taken in the plan; the widest
-    places are then grown against the border of their own patch around them.
-
     Args:
         mesh: the surface.
         flat: its flat triangles, from `find_flat`.
@@ -136,71 +147,82 @@ def largest_circle(mesh: Mesh, flat: FlatTriangles, frame: Floats) -> tuple[floa
     border = np.concatenate([points for points, _ in pieces]) @ frame.T
     border_patch = patch[np.concatenate([owner for _, owner in pieces])]
     places, place_patch = _places(mesh, flat, patch)
-    places = places @ frame.T
-    tree = cKDTree(border)
+    places, corner = places @ frame.T, corner @ frame.T
+    tree, middles = cKDTree(border), cKDTree(corner.mean(axis=1))
+    largest_side = float(np.linalg.norm(corner - np.roll(corner, 1, axis=1), axis=2).max())
     _, near = tree.query(places)
     radius = np.linalg.norm(places[:, :2] - border[near, :2], axis=1)
-    order = np.argsort(-radius, kind="stable")
-    best, middle = 0.0, places[order[0]].copy()
-    for index in order[:CIRCLES]:
-        if radius[index] <= INSIDE_MM:
+    best, middle = 0.0, places[int(np.argmax(radius))].copy()
+    for _ in range(LOOKS):
+        index = int(np.argmax(radius))
+        wide = float(radius[index])
+        if wide <= max(INSIDE_MM, HOPELESS_RATIO * best):
             break
-        point, grown = places[index].copy(), float(radius[index])
-        for _ in range(MOVES):
-            reach = 3.0 * grown + 1.0
-            around = np.sort(np.asarray(tree.query_ball_point(point, reach), dtype=np.int64))
-            around = around[border_patch[around] == place_patch[index]]
-            if len(around) == 0:
-                break
-            grown, point[:2], settled = _grow(point[:2], border[around, :2], reach)
-            if settled:
-                break
+        reach = REACH_RADII * wide + 1.0
+        around = _within(tree, places[index], reach, border_patch == place_patch[index])
+        close = _within(middles, places[index], reach + largest_side, patch == place_patch[index])
+        grown, point = _widest_circle(places[index], border[around, :2], corner[close], reach)
         if grown > best:
             best, middle = grown, point
-    middle[2] = _height_at(corner @ frame.T, middle)
+        radius[np.linalg.norm(places - places[index], axis=1) <= wide] = 0.0
     return 2.0 * best, np.asarray(middle @ frame, dtype=np.float64)
 
 
-def _height_at(corner: Floats, point: Floats) -> float:
-    """Returns the height of the triangles (n, 3, 3) over the plan place of `point (3,)`, the one nearest to its own."""
-    a, u, v = corner[:, 0], corner[:, 1] - corner[:, 0], corner[:, 2] - corner[:, 0]
-    w = point - a
-    area = u[:, 0] * v[:, 1] - u[:, 1] * v[:, 0]
-    area[area == 0.0] = np.inf
-    s = (w[:, 0] * v[:, 1] - w[:, 1] * v[:, 0]) / area
-    t = (u[:, 0] * w[:, 1] - u[:, 1] * w[:, 0]) / area
-    over = np.flatnonzero((s >= -1e-9) & (t >= -1e-9) & (s + t <= 1.0 + 1e-9) & np.isfinite(area))
-    if len(over) == 0:
-        return float(point[2])
-    height = a[over, 2] + s[over] * u[over, 2] + t[over] * v[over, 2]
-    return float(height[np.argmin(np.abs(height - point[2]))])
+def _within(tree: cKDTree, point: Floats, reach_mm: float, wanted: Bools) -> Ints:
+    """Returns the points of `tree` within reach that are wanted, in order."""
+    found = np.sort(np.asarray(tree.query_ball_point(point, reach_mm), dtype=np.int64))
+    return found[wanted[found]]
 
 
-def _grow(start: Floats, border: Floats, reach_mm: float) -> tuple[float, Floats, bool]:
-    """Returns radius and middle (2,) of the largest circle reached from `start (2,)`, and whether it is settled.
+def _widest_circle(start: Floats, border: Floats, corner: Floats, reach_mm: float) -> tuple[float, Floats]:
+    """Returns radius and middle (3,) of the widest circle near `start (3,)` that is clear of the border.
 
-    Each step goes to the middle of the widest angle free of contacts (border within a step of the circle); the
-    circle is at its largest when no free angle is wider than half a turn. The border (n, 2) is known within
-    `reach_mm` of the start: a circle that comes to the end of that is not settled.
+    Args:
+        start: a place on the patch.
+        border: (n, 2) border points within reach of it, in the plan.
+        corner: (k, 3, 3) triangles of the patch around it.
+        reach_mm: circles that leave this reach are not known to be clear.
     """
-    point = start
-    distance = np.linalg.norm(border - point, axis=1)
-    best = float(distance.min())
-    step = 0.5 * best
-    for _ in range(GROW_STEPS):
-        if step < 1e-4:
-            break
-        contact = border[distance <= best + 0.5 * step] - point
-        angle = np.sort(np.arctan2(contact[:, 1], contact[:, 0]))
-        gap = np.diff(np.append(angle, angle[0] + 2.0 * np.pi))
-        widest = int(np.argmax(gap))
-        heading = angle[widest] + 0.5 * gap[widest]
-        trial = point + step * np.array([np.cos(heading), np.sin(heading)])
-        trial_distance = np.linalg.norm(border - trial, axis=1)
-        if gap[widest] > np.pi and trial_distance.min() > best:
-            if float(np.linalg.norm(trial - start)) + float(trial_distance.min()) > reach_mm:
-                return best, point, False
-            point, distance, best = trial, trial_distance, float(trial_distance.min())
-        else:
-            step *= 0.5
-    return best, point, True
+    from scipy.spatial import Delaunay, QhullError
+
+    radius = float(np.linalg.norm(border - start[:2], axis=1).min()) if len(border) else 0.0
+    if len(border) < 4:
+        return radius, start
+    try:
+        simplex = Delaunay(border).simplices
+    except QhullError:
+        return radius, start
+    centre, size = _circumcircles(border[simplex])
+    known = np.linalg.norm(centre - start[:2], axis=1) + size <= reach_mm
+    centre, size = centre[known & (size > radius)], size[known & (size > radius)]
+    for index in np.argsort(-size, kind="stable")[:TRIED]:
+        height = _height_at(corner, centre[index], float(start[2]))
+        if height is not None:
+            return float(size[index]), np.append(centre[index], height)
+    return radius, start
+
+
+def _circumcircles(corner: Floats) -> tuple[Floats, Floats]:
+    """Returns the circumcentres (k, 2) and radii (k,) of triangles (k, 3, 2); a sliver gets an infinite one."""
+    b, c = corner[:, 1] - corner[:, 0], corner[:, 2] - corner[:, 0]
+    cross = 2.0 * (b[:, 0] * c[:, 1] - b[:, 1] * c[:, 0])
+    bb, cc = (b**2).sum(axis=1), (c**2).sum(axis=1)
+    safe = np.where(cross == 0.0, 1.0, cross)
+    offset = np.column_stack([c[:, 1] * bb - b[:, 1] * cc, b[:, 0] * cc - c[:, 0] * bb]) / safe[:, None]
+    size = np.where(cross == 0.0, np.inf, np.linalg.norm(offset, axis=1))
+    return corner[:, 0] + offset, size
+
+
+def _height_at(corner: Floats, plan: Floats, near_mm: float) -> float | None:
+    """Returns the height of the triangles (n, 3, 3) over the place `plan (2,)`, nearest to `near_mm`; None beside."""
+    a, u, v = corner[:, 0], corner[:, 1] - corner[:, 0], corner[:, 2] - corner[:, 0]
+    w = plan - a[:, :2]
+    area = u[:, 0] * v[:, 1] - u[:, 1] * v[:, 0]
+    safe = np.where(area == 0.0, 1.0, area)
+    s = (w[:, 0] * v[:, 1] - w[:, 1] * v[:, 0]) / safe
+    t = (u[:, 0] * w[:, 1] - u[:, 1] * w[:, 0]) / safe
+    over = np.flatnonzero((area != 0.0) & (s >= -1e-9) & (t >= -1e-9) & (s + t <= 1.0 + 1e-9))
+    if len(over) == 0:
+        return None
+    height = a[over, 2] + s[over] * u[over, 2] + t[over] * v[over, 2]
+    return float(height[np.argmin(np.abs(height - near_mm))])

@@ -125,13 +125,14 @@ def test_nothing_is_flat_on_an_upright_wall():
     assert len(find_flat(channel(bore(3.0, 20.0)), np.array([1.0, 0, 0]), 45.0).triangle) == 0
 
 
-def test_the_wider_arm_of_a_coarse_roof_is_found():
-    """An L of an 8 mm and a 5 mm arm in a handful of triangles: the circle sits in the corner, touching three sides.
+@pytest.mark.parametrize("arm_mm", [8.0, 5.0])
+def test_the_corner_of_a_coarse_roof_is_found(arm_mm):
+    """An L of arms 8 mm and `arm_mm` wide in a handful of triangles: the widest place is its corner.
 
-    Inside the corner it touches both outer sides and the inner corner at (5, 8) from the outer one:
-    (5 - r)^2 + (8 - r)^2 = r^2 gives r = 13 - sqrt(80) = 4.056.
+    The circle touches both outer sides and the inner corner: (a - r)^2 + (8 - r)^2 = r^2, r = a + 8 - sqrt(16 a).
     """
-    outline = trimesh.path.polygons.Polygon([(0, 0), (30, 0), (30, 8), (5, 8), (5, 30), (0, 30)])
+    a = arm_mm
+    outline = trimesh.path.polygons.Polygon([(0, 0), (30, 0), (30, 8), (a, 8), (a, 30), (0, 30)])
     found = measure_ceiling(channel(trimesh.creation.extrude_polygon(outline, 4.0)), UP, 45.0)
-    assert found.span_mm == pytest.approx(2.0 * (13.0 - np.sqrt(80.0)), abs=SPAN_MM)
-    assert found.area_mm2 == pytest.approx(30 * 8 + 22 * 5)
+    assert found.span_mm == pytest.approx(2.0 * (a + 8.0 - np.sqrt(16.0 * a)), abs=SPAN_MM)
+    assert found.area_mm2 == pytest.approx(30 * 8 + 22 * a)
