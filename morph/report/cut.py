@@ -80,6 +80,20 @@ def cut_mesh(mesh: Mesh, label: Ints, plane: Plane) -> tuple[Loop, ...]:
     return tuple(sorted(loops, key=lambda loop: -_length_mm(loop)))
 
 
+def rod_mesh(start_mm: Floats, axis: Floats, length_mm: float, diameter_mm: float, sides: int = 96) -> Mesh:
+    """Returns a closed rod from `start_mm (3,)` along unit `axis (3,)`, as a prism of `sides` sides on its circle."""
+    least = np.eye(3)[int(np.argmin(np.abs(axis)))]
+    across = np.cross(axis, least) / np.linalg.norm(np.cross(axis, least))
+    angle = np.arange(sides) * (2.0 * np.pi / sides)
+    rim = 0.5 * diameter_mm * (np.cos(angle)[:, None] * across + np.sin(angle)[:, None] * np.cross(axis, across))
+    end = start_mm + length_mm * axis
+    vertices = np.vstack([start_mm + rim, end + rim, [start_mm], [end]])
+    i, j = np.arange(sides), (np.arange(sides) + 1) % sides
+    low, high = np.full(sides, 2 * sides), np.full(sides, 2 * sides + 1)
+    faces = [(i, j, sides + j), (i, sides + j, sides + i), (low, j, i), (high, sides + i, sides + j)]
+    return Mesh(vertices, np.concatenate([np.column_stack(face) for face in faces]))
+
+
 def _length_mm(loop: Loop) -> float:
     return float(np.linalg.norm(np.roll(loop.points_mm, -1, axis=0) - loop.points_mm, axis=1).sum())
 

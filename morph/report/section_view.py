@@ -8,7 +8,7 @@ from morph.body.blank import Blank
 from morph.core.arrays import Floats
 from morph.core.verdict import Verdict
 from morph.report.colour import OUTCOME_COLOUR, OUTCOME_SIGN, OUTCOME_WORD
-from morph.report.cut import Loop
+from morph.report.cut import Loop, cut_mesh, rod_mesh
 from morph.report.drawing import INK, PAPER, Drawing
 from morph.report.section import CHANNEL, WallSection
 
@@ -17,6 +17,7 @@ METAL = "#c9d0d8"
 HATCH = "#9aa5b1"
 CHANNEL_LINE = "#0b5394"
 STOCK_LINE = "#6b4c9a"
+LINES = {"channel": (CHANNEL_LINE, ""), "stock": (STOCK_LINE, "7 4"), "hole": (INK, "6 3")}
 LEAST_HALF_WINDOW_MM = 5.0
 FINISHED_NEAR = 0.02
 
@@ -107,6 +108,22 @@ def _dimension_words(drawing: Drawing, verdict: Verdict, colour: str, along: Flo
     drawing.label((middle[0], middle[1] - drawing.mm(11.0)), limit, size_px=11.5)
 
 
+def _holes(drawing: Drawing, section: WallSection, blank: Blank, half_mm: float) -> bool:
+    """Draws the holes that are made later, dashed and empty, with their names; returns whether any is in the window."""
+    any_seen = False
+    for hole in blank.holes:
+        rod = rod_mesh(hole.start_mm, hole.axis, hole.length_mm, hole.diameter_mm)
+        for loop in cut_mesh(rod, np.zeros(len(rod.triangles), dtype=np.int64), section.plane):
+            data = drawing.path_data(loop.points_mm, closed=True)
+            drawing.shape(data, fill=PAPER, stroke=INK, stroke_width="1.6", stroke_dasharray="6 3")
+            seen = loop.points_mm[np.abs(loop.points_mm).max(axis=1) < half_mm]
+            if len(seen):
+                x, y = seen.mean(axis=0).tolist()
+                drawing.label((x, y), hole.id, size_px=13.0, bold=True)
+                any_seen = True
+    return any_seen
+
+
 def _channel_names(drawing: Drawing, section: WallSection, half_mm: float) -> None:
     """Names the channels in the window where their centrelines pass; a name that would cover another is left out."""
     taken = [0.5 * (section.channel_side_mm + section.far_side_mm)]
@@ -137,21 +154,23 @@ def _map_of_cut(section: WallSection, half_mm: float) -> str:
     return small.svg()
 
 
-def _legend(drawing: Drawing, section: WallSection, hatch: str, has_stock: bool) -> None:
+def _legend(drawing: Drawing, section: WallSection, hatch: str, has_stock: bool, has_hole: bool) -> None:
     """Writes below the window what its lines and fills mean, beside the map of the whole cut."""
     view = "Build direction points up." if section.build_is_up else "Seen against the build direction."
     rows = [("metal", "metal, as written to insert.stl"), ("channel", "channel wall; the channel is empty")]
     rows += [("stock", "finished face, under machining stock")] if has_stock else []
-    x, y = STRIP_PX + 20.0, WINDOW_PX + 18.0
+    rows += [("hole", "hole, made later")] if has_hole else []
+    x, y = STRIP_PX + 20.0, WINDOW_PX + 13.0
     for kind, words in rows:
         if kind == "metal":
             for fill in (METAL, hatch):
                 drawing.raw(f'<rect x="{x:g}" y="{y - 7:g}" width="26" height="14" fill="{fill}" stroke="{INK}"/>')
         else:
-            colour, dash = (CHANNEL_LINE, "") if kind == "channel" else (STOCK_LINE, ' stroke-dasharray="7 4"')
+            colour, dash = LINES[kind]
+            dash = f' stroke-dasharray="{dash}"' if dash else ""
             drawing.raw(f'<path d="M{x:g} {y:g}h26" stroke="{colour}" stroke-width="2.4" fill="none"{dash}/>')
         drawing.raw(f'<text x="{x + 34:g}" y="{y:g}" dy="0.35em" font-size="12" fill="{INK}">{words}</text>')
-        y += 20.0
+        y += 18.0
     drawing.raw(f'<text x="{x:g}" y="{y:g}" dy="0.35em" font-size="12" fill="{INK}">{view}</text>')
 
 
@@ -183,6 +202,7 @@ def draw_section(section: WallSection, blank: Blank) -> str:
     for line in finished:
         data = drawing.path_data(line)
         drawing.shape(data, fill="none", stroke=STOCK_LINE, stroke_width="1.6", stroke_dasharray="7 4")
+    has_hole = _holes(drawing, section, blank, half)
     _channel_names(drawing, section, half)
     _dimension(drawing, section)
     drawing.scale_bar((-half + drawing.mm(14.0), -half + drawing.mm(12.0)))
@@ -190,5 +210,5 @@ def draw_section(section: WallSection, blank: Blank) -> str:
         f'</g><rect x="0.5" y="0.5" width="{WINDOW_PX - 1:g}" height="{WINDOW_PX - 1:g}" fill="none" stroke="{HATCH}"/>'
     )
     drawing.raw(f'<g transform="translate(4 {WINDOW_PX + 2:g})">{_map_of_cut(section, half)}</g>')
-    _legend(drawing, section, hatch, bool(finished))
+    _legend(drawing, section, hatch, bool(finished), has_hole)
     return drawing.svg()

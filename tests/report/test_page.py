@@ -47,6 +47,12 @@ def test_first_page_is_section_then_sheet_then_figures_then_not_checked(tree):
     assert [b.text for b in first.xpath(".//div[@class='unchecked']//b")] == ["flow", "temperature"]
 
 
+def test_section_says_what_the_cut_itself_measures(tree):
+    # the written mesh is facetted, so the cut may read a little less or more than the 5.40 mm of the verdict
+    words = re.sub(r"\s+", " ", tree.xpath("//figcaption")[0].text_content())
+    assert float(re.search(r"Measured in this cut: ([\d.]+) mm", words)[1]) == pytest.approx(5.40, abs=0.03)
+
+
 def test_rest_follows_in_the_promised_order(tree):
     ids = [s.get("id") for s in tree.xpath("//main/section")][1:]
     assert ids == ["layout", "channels", "verdicts", "ports", "numbers", "notices", "settings", "cautions"]

@@ -147,6 +147,30 @@ def test_machining_stock_is_drawn_where_it_is_cut(make_records, scene):
     assert "machining stock" not in draw_section(section, scene.blank(stock_mm=0.0))
 
 
+def test_rod_is_closed_and_of_the_right_size():
+    from morph.geometry.mesh import measure_condition, mesh_volume_mm3
+    from morph.report.cut import rod_mesh
+
+    axis = np.array([1.0, 2.0, 2.0]) / 3.0
+    rod = rod_mesh(np.array([1.0, 2.0, 3.0]), axis, 10.0, 6.0)
+    assert measure_condition(rod).closed
+    # a prism on 96 points of the circle: 48 r^2 sin(2 pi / 96) times its length
+    assert mesh_volume_mm3(rod) == pytest.approx(48 * 9 * np.sin(2 * np.pi / 96) * 10.0)
+
+
+def test_hole_beside_the_wall_is_drawn_and_named(records, scene):
+    import dataclasses
+
+    from morph.body.blank import Hole
+
+    worst = wall_verdicts(records.verdicts)[0]
+    section = make_section(records.insert, records.plan, worst, (0, 0, 1))
+    hole = Hole("H1", np.array([21.0, 0.0, 40.0]), np.array([0, 0, -1.0]), 30.0, 4.0, 3.0)
+    svg = draw_section(section, dataclasses.replace(scene.blank(), holes=(hole,)))
+    assert ">H1</text>" in svg and "hole, made later" in svg
+    assert "hole, made later" not in draw_section(section, scene.blank())
+
+
 def test_plane_that_meets_no_channel_gives_no_section(make_records):
     verdict = Verdict("wall-outer", Outcome.PASS, "x", 2.0, "mm", 3.0, branch_ids=("B9",), xyz_mm=(0.0, 0.0, 500.0))
     records = make_records()
