@@ -17,7 +17,7 @@ from numpy.typing import NDArray
 
 from morph.core.arrays import Floats, Ints
 
-LEAF = 4
+LEAF = 8
 """Triangles per leaf."""
 
 ROUNDING = 1e-14

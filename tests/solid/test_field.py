@@ -9,7 +9,7 @@ import pytest
 from morph.core.errors import GeometryError
 from morph.core.progress import SILENT
 from morph.settings.job import QualitySettings
-from morph.solid.field import MOST_TRIANGLES, choose_h_mm, predict_triangles
+from morph.solid.field import BYTES_PER_TRIANGLE, MOST_BYTES, MOST_TRIANGLES, choose_h_mm, predict_triangles
 from morph.solid.slabs import run_slabs
 from morph.solid.sweep import make_sweep
 from tests.solid import plans
@@ -44,7 +44,8 @@ def test_a_solid_too_large_is_refused_before_any_work():
         choose_h_mm(plans.ladder(), QualitySettings(h_mm=0.005))
     assert caught.value.code == "solid-too-large"
     wanted = float(caught.value.do.split("h_mm to ")[1].split(" mm")[0])
-    assert 0.8 * MOST_TRIANGLES < predict_triangles(plans.ladder(), wanted) <= MOST_TRIANGLES
+    most = min(MOST_TRIANGLES, MOST_BYTES / BYTES_PER_TRIANGLE)
+    assert 0.8 * most < predict_triangles(plans.ladder(), wanted) <= most
     assert choose_h_mm(plans.ladder(), QualitySettings(h_mm=wanted)) == wanted
 
 
