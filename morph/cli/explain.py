@@ -5,9 +5,13 @@ from __future__ import annotations
 import argparse
 import difflib
 import json
-from typing import Any
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
 
 from morph.core.errors import InputError
+
+if TYPE_CHECKING:
+    from morph.core.codes import Explanation
 
 
 def add_to(commands: Any) -> None:
@@ -20,6 +24,8 @@ def add_to(commands: Any) -> None:
     )
     parser.add_argument("code", nargs="?", metavar="CODE", help="a code as printed in [brackets]")
     parser.add_argument("--json", action="store_true", help="print JSON")
+    parser.add_argument("--out", metavar="FILE", type=Path, help="write to a new file instead of stdout")
+    parser.add_argument("--force", action="store_true", help="replace an existing file")
     parser.set_defaults(run=run)
 
 
@@ -31,12 +37,14 @@ def _nearest_few(code: str, known: list[str]) -> str:
 
 
 def run(arguments: argparse.Namespace) -> int:
-    """Prints the explanation of one code, or the list of codes.
+    """Prints or writes the explanation of one code, or the list of codes.
 
     Raises:
         InputError: no such code; the nearest ones are named.
+        ExportError: the file cannot be written.
     """
     from morph.core.codes import explanations
+    from morph.core.files import write_file
     from morph.settings.table import show
 
     known = explanations()
@@ -53,13 +61,20 @@ def run(arguments: argparse.Namespace) -> int:
                 do=_nearest_few(code, list(known)),
             )
         rows = [known[code]]
-    if arguments.json:
-        table = {row.code: {"kind": row.kind, "cause": row.cause, "cure": row.cure} for row in rows}
-        print(json.dumps(table, indent=1, sort_keys=True))
-    elif arguments.code is None:
-        width = max(len(row.code) for row in rows)
-        for row in rows:
-            print(f"{row.code:<{width}}  {row.kind:<7}  {row.cause.split('. ')[0].rstrip('.')}")
+    text = _text(rows, as_json=arguments.json, brief=arguments.code is None)
+    if arguments.out is None:
+        print(text)
     else:
-        print(f"{rows[0].code} ({rows[0].kind})\ncause: {rows[0].cause}\ncure:  {rows[0].cure}")
+        write_file(arguments.out, (text + "\n").encode("utf-8"), force=arguments.force)
     return 0
+
+
+def _text(rows: list[Explanation], *, as_json: bool, brief: bool) -> str:
+    """Returns the rows as JSON, as one line each, or as one whole explanation."""
+    if as_json:
+        table = {row.code: {"kind": row.kind, "cause": row.cause, "cure": row.cure} for row in rows}
+        return json.dumps(table, indent=1, sort_keys=True)
+    if brief:
+        width = max(len(row.code) for row in rows)
+        return "\n".join(f"{row.code:<{width}}  {row.kind:<7}  {row.cause.split('. ')[0].rstrip('.')}" for row in rows)
+    return f"{rows[0].code} ({rows[0].kind})\ncause: {rows[0].cause}\ncure:  {rows[0].cure}"

@@ -18,7 +18,7 @@ _DOING = {
     "export": "meshes, curves, tables",
     "report": "figures and page",
 }
-_FIRST_WITH_KERNELS = "solid"
+_WITH_KERNELS = {"solid": "; compiling, first run only: about half a minute", "check": "; compiling, first run only"}
 
 
 def kernels_are_cold() -> bool:
@@ -40,6 +40,7 @@ class StageLines:
         self._stream = stream or sys.stderr
         self._seen: set[str] = set()
         self._begin: float | None = None
+        self._cold: bool | None = None
 
     def step(self, stage: str, done: int, total: int) -> None:
         """Begins a line when `stage` is a stage of the build not seen yet; steps inside a stage say nothing."""
@@ -48,8 +49,9 @@ class StageLines:
             return
         self._end_line()
         self._seen.add(stage)
-        cold = stage == _FIRST_WITH_KERNELS and kernels_are_cold()
-        note = "; compiling, first run only: about half a minute" if cold else ""
+        if self._cold is None:
+            self._cold = kernels_are_cold()
+        note = _WITH_KERNELS.get(stage, "") if self._cold else ""
         self._write(f"  {stage:<8} {_DOING[stage]}{note} ...")
         self._begin = time.monotonic()
 

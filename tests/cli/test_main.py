@@ -147,6 +147,14 @@ def test_explain_one_code_and_all(capsys):
     assert json.loads(capsys.readouterr().out)["port-outside"]["kind"] == "error"
 
 
+def test_explain_into_a_file(tmp_path, capsys):
+    file = tmp_path / "codes.txt"
+    assert main(["explain", "--out", str(file)]) == 0
+    assert capsys.readouterr().out == "" and len(file.read_text().splitlines()) == len(explanations())
+    assert main(["explain", "--out", str(file)]) == 1
+    assert "[output-exists]" in capsys.readouterr().err
+
+
 def test_explain_an_unknown_code_names_the_nearest(capsys):
     assert main(["explain", "port-outsid"]) == 1
     said = capsys.readouterr()
@@ -160,11 +168,13 @@ def test_the_first_use_of_the_kernels_is_announced(job_folder, answer, capsys, m
 
     monkeypatch.setenv("NUMBA_CACHE_DIR", str(job_folder / "cache"))
     lines = StageLines()
-    for stage in ("layout", "solid"):
+    for stage in ("layout", "solid", "insert", "check"):
         lines.step(stage, 0, 1)
+        (job_folder / "cache").mkdir(exist_ok=True)
     lines.close()
-    assert "compiling, first run only" in capsys.readouterr().err.splitlines()[1]
-    (job_folder / "cache" / "x").mkdir(parents=True)
+    said = capsys.readouterr().err.splitlines()
+    assert ["compiling, first run only" in line for line in said] == [False, True, False, True]
+    (job_folder / "cache" / "x").mkdir()
     (job_folder / "cache" / "x" / "kernel.nbc").write_bytes(b"x")
     lines = StageLines()
     lines.step("solid", 0, 1)
