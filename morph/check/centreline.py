@@ -108,19 +108,19 @@ def measure_ways(lines: Centrelines, first: Ints, second: Ints) -> Way:
     ahead_a, ahead_b = length_mm[a] - back_a, length_mm[b] - back_b
     options = np.stack(
         [
+            np.where(a == b, np.abs(back_a - back_b), np.inf),
             back_a + between[start[a], start[b]] + back_b,
             back_a + between[start[a], end[b]] + ahead_b,
             ahead_a + between[end[a], start[b]] + back_b,
             ahead_a + between[end[a], end[b]] + ahead_b,
-            np.where(a == b, np.abs(back_a - back_b), np.inf),
         ]
     )
-    own = np.stack([back_a + back_b, back_a + ahead_b, ahead_a + back_b, ahead_a + ahead_b, np.abs(back_a - back_b)])
+    own = np.stack([np.abs(back_a - back_b), back_a + back_b, back_a + ahead_b, ahead_a + back_b, ahead_a + ahead_b])
     # From a node a way along the branch itself ties with one that leaves it at once: the former is meant.
     best = np.argmin(options - TIE_RATIO * own, axis=0)
     onward = np.where(back_b > back_a, 1.0, -1.0)
-    sign_a = np.choose(best, [-1.0, -1.0, 1.0, 1.0, onward])
-    sign_b = np.choose(best, [-1.0, 1.0, -1.0, 1.0, -onward])
+    sign_a = np.choose(best, [onward, -1.0, -1.0, 1.0, 1.0])
+    sign_b = np.choose(best, [-onward, -1.0, 1.0, -1.0, 1.0])
     return Way(
         np.take_along_axis(options, best[None], axis=0)[0],
         lines.tangent[first] * sign_a[:, None],

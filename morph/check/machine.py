@@ -34,20 +34,30 @@ def plan_hull_mm(plan_mm: Floats) -> Floats:
 def best_turn(plan_mm: Floats, room_mm: tuple[float, float]) -> tuple[float, float, float]:
     """Returns width, depth and slack in mm of points (n, 2) turned so that the slack to `room_mm` is largest.
 
-    Tried are all multiples of TURN_STEP_DEG and the hull's own edges, where the least box lies.
+    Tried are all multiples of TURN_STEP_DEG and the hull's own edges, where the least box lies; around the best
+    of them a hundredth of that step.
     """
     hull = plan_hull_mm(plan_mm)
     edges = np.roll(hull, -1, axis=0) - hull
-    angle = np.concatenate(
-        [np.radians(np.arange(0.0, 180.0, TURN_STEP_DEG)), np.mod(-np.arctan2(edges[:, 1], edges[:, 0]), np.pi)]
-    )
-    angle = np.concatenate([angle, angle + 0.5 * np.pi])
+    along = np.mod(-np.arctan2(edges[:, 1], edges[:, 0]), np.pi)
+    coarse = np.concatenate([np.radians(np.arange(0.0, 180.0, TURN_STEP_DEG)), along, along + 0.5 * np.pi])
+    best = _best_angle(hull, coarse, room_mm)
+    fine = best + np.radians(TURN_STEP_DEG) * np.linspace(-1.0, 1.0, 201)
+    width, depth, slack = _turned(hull, np.array([_best_angle(hull, np.append(best, fine), room_mm)]), room_mm)
+    return float(width[0]), float(depth[0]), float(slack[0])
+
+
+def _turned(hull: Floats, angle: Floats, room_mm: tuple[float, float]) -> tuple[Floats, Floats, Floats]:
+    """Returns width, depth and slack (k,) of the hull (n, 2) turned by `angle (k,)` in rad."""
     x = np.outer(np.cos(angle), hull[:, 0]) - np.outer(np.sin(angle), hull[:, 1])
     y = np.outer(np.sin(angle), hull[:, 0]) + np.outer(np.cos(angle), hull[:, 1])
     width, depth = np.ptp(x, axis=1), np.ptp(y, axis=1)
-    slack = np.minimum(room_mm[0] - width, room_mm[1] - depth)
-    best = int(np.argmax(np.round(slack, 9)))
-    return float(width[best]), float(depth[best]), float(slack[best])
+    return width, depth, np.minimum(room_mm[0] - width, room_mm[1] - depth)
+
+
+def _best_angle(hull: Floats, angle: Floats, room_mm: tuple[float, float]) -> float:
+    """Returns the first of the angles (k,) with the largest slack; slacks equal to 1e-9 mm are the same."""
+    return float(angle[np.argmax(np.round(_turned(hull, angle, room_mm)[2], 9))])
 
 
 def check_machine(mesh: Mesh, profile: Profile, direction: Floats) -> list[Verdict]:
