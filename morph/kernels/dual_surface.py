@@ -211,20 +211,33 @@ def place_vertices(
                 for a in range(3):
                     point[a] = low[a] + point[a] * h_mm
                 for _ in range(steps):
-                    f, blended = field_at(
-                        point[0], point[1], point[2],
+                    settle(
+                        point, low, margin, h_mm, bias,
                         pieces, owner, nodes, blend_mm, kept, n, distance, run_piece, gradient,
                     )  # fmt: skip
-                    size = gradient[0] ** 2 + gradient[1] ** 2 + gradient[2] ** 2 + 1e-12
-                    target = bias * h_mm * h_mm / nearest_radius(pieces, run_piece, distance, n, owner, kept)
-                    if blended > 0.0:
-                        target *= max(0.0, 1.0 - 16.0 * blended / blend_mm)
-                    for a in range(3):
-                        moved = point[a] + (target - f) * gradient[a] / size
-                        point[a] = min(max(moved, low[a] + margin), low[a] + h_mm - margin)
                 for a in range(3):
                     vertices[at, a] = point[a]
                 at += 1
+
+
+@njit(cache=True, nogil=True, error_model="numpy")
+def settle(
+    point: Floats, low: Floats, margin: float, h_mm: float, bias: float,
+    pieces: Floats, owner: Ints, nodes: Floats, blend_mm: float, near: Ints, n_near: int,
+    run_distance: Floats, run_piece: Ints, gradient: Floats,
+) -> None:  # fmt: skip
+    """Moves a vertex one Newton step along the gradient to its level, held `margin` inside the cell from `low`."""
+    f, blended = field_at(
+        point[0], point[1], point[2],
+        pieces, owner, nodes, blend_mm, near, n_near, run_distance, run_piece, gradient,
+    )  # fmt: skip
+    size = gradient[0] ** 2 + gradient[1] ** 2 + gradient[2] ** 2 + 1e-12
+    level = bias * h_mm * h_mm / nearest_radius(pieces, run_piece, run_distance, n_near, owner, near)
+    if blended > 0.0:
+        level *= max(0.0, 1.0 - 16.0 * blended / blend_mm)
+    for a in range(3):
+        moved = point[a] + (level - f) * gradient[a] / size
+        point[a] = min(max(moved, low[a] + margin), low[a] + h_mm - margin)
 
 
 @njit(cache=True, nogil=True)
