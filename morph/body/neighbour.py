@@ -178,13 +178,16 @@ def count_as_wall(network: Network, pairs: Pairs, wall_mm: float) -> Bools:
     for one, two in groups:
         ends_one = (network.strands[one].start, network.strands[one].end)
         ends_two = (network.strands[two].start, network.strands[two].end)
-        shared = set(ends_one) & set(ends_two)
-        if len(shared) != 1 or ends_one[0] == ends_one[1] or ends_two[0] == ends_two[1]:
+        if ends_one[0] == ends_one[1] or ends_two[0] == ends_two[1]:
             continue
         here = close & (((a == one) & (b == two)) | ((a == two) & (b == one)))
         mine = np.where(a == one, pairs.i, pairs.j)
-        web = _web_samples(network, one, shared.pop(), mine[here])
-        counted[doubtful] &= ~(here[doubtful] & np.isin(mine[doubtful], web))
+        shared = sorted(set(ends_one) & set(ends_two))
+        webs = [_web_samples(network, one, node, mine[here]) for node in shared]
+        if len(shared) == 2 and len(webs[0]) == network.first[one + 1] - network.first[one]:
+            continue  # two branches between the same nodes that never part are no web but one slot
+        for web in webs:
+            counted[doubtful] &= ~(here[doubtful] & np.isin(mine[doubtful], web))
     return counted
 
 

@@ -163,3 +163,21 @@ def test_ways_follow_the_shortest_route_through_the_network():
 def test_pieces_that_are_not_connected_always_count():
     network = make_network([strand("A", 0, 1, [(0, 0, 0), (2, 0, 0)]), strand("B", 2, 3, [(0, 5, 0), (2, 5, 0)])], 4)
     assert len(walls(network).i) > 0
+
+
+def test_an_eye_that_opens_wide_has_only_webs_at_its_corners():
+    """Two branches between the same nodes, 12 mm apart in the middle, meeting at about 30 degrees: no wall."""
+    t = np.linspace(0.0, 1.0, 60)
+    arms = [[(70 * s, sign * 24 * s * (1 - s), 0) for s in t] for sign in (1, -1)]
+    network = make_network([strand(n, 0, 1, a) for n, a in zip("AB", arms, strict=True)], 2)
+    pairs = walls(network)
+    assert (pairs.distance_mm >= 4.0 + WALL - 1e-9).all()
+
+
+def test_an_eye_that_never_opens_is_one_long_thin_wall():
+    t = np.linspace(0.0, 1.0, 60)
+    arms = [[(70 * s, sign * 12 * s * (1 - s), 0) for s in t] for sign in (1, -1)]
+    network = make_network([strand(n, 0, 1, a) for n, a in zip("AB", arms, strict=True)], 2)
+    pairs = walls(network)
+    # 6 mm apart at most, 7.2 needed.
+    assert (pairs.distance_mm < 4.0 + WALL).sum() > 50
