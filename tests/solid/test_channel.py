@@ -258,6 +258,39 @@ def test_a_through_bore_blank_counts_its_own_handle():
     assert measure_condition(insert.mesh).genus == expected_genus(1, [(3, 2)])
 
 
+def test_an_oblique_exit_is_a_full_ellipse():
+    """Leaving at 50 degrees from the face's normal: the opening has the area pi r^2 / cos 50, none of it a rounded end."""
+    lean = np.radians(50.0)
+    leave = np.array([-np.cos(lean), np.sin(lean), 0.0])
+    end = np.array([0.0, 24.0, 15.0])
+    path = plans.sampled([end - 18.0 * leave, end], 5.0)
+    plan = plans.plan_of(
+        [plans.branch("L-a", "N1", "X1", path, 5.0, lead=True)],
+        [("a", "in", "L-a", "-x", leave, 0.0)],
+        dead_ends=("N1",),
+    )
+    blank = plans.box_blank()
+    opening = make_insert(make_channel_solid(plan, blank, 0.3), blank, plan).openings[0]
+    assert np.pi / 4 * opening.diameter_mm**2 == pytest.approx(np.pi * 2.5**2 / np.cos(lean), rel=2e-3)
+    assert np.abs(opening.centre_mm - end).max() < 0.01
+
+
+def test_an_exit_through_a_round_face():
+    """Radially out of a cylinder of radius R: seen along the exit the rim is the circle of the bore."""
+    bore, path = 6.0, plans.sampled([(8.0, 0.0, 40.0), (30.0, 0.0, 40.0)], 6.0)
+    plan = plans.plan_of(
+        [plans.branch("L-a", "N1", "X1", path, bore, lead=True)],
+        [("a", "in", "L-a", "carrier", (1, 0, 0), 0.0)],
+        dead_ends=("N1",),
+    )
+    blank = plans.cylinder_blank()
+    opening = make_insert(make_channel_solid(plan, blank, 0.3), blank, plan).openings[0]
+    assert opening.face == "carrier"
+    assert opening.diameter_mm == pytest.approx(bore, abs=0.01)
+    assert np.hypot(*(opening.centre_mm - (30, 0, 40))[1:]) < 0.005
+    assert np.hypot(opening.loop_mm[:, 0], opening.loop_mm[:, 1]) == pytest.approx(30.0, abs=0.002)
+
+
 def test_two_circuits_are_two_bodies():
     low, high = plans.straight_pipe(y=10.0), plans.straight_pipe(y=30.0)
 
