@@ -35,7 +35,7 @@ def measure_gap(surface: Mesh, tree: TriangleTree, limit_mm: float = np.inf) -> 
 
     The two surfaces must not cross: crossing faces are not noticed, only corners and edges are measured.
     """
-    from morph.kernels.tree_walk import smallest_gap
+    from morph.kernels.tree_gap import smallest_gap
 
     pair = np.zeros(6)
     queries = surface.vertices_mm[surface.triangles].reshape(-1, 9)

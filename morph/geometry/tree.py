@@ -1,7 +1,7 @@
 """The triangle tree: nearest points, first hits, inscribed balls and gaps on triangle meshes.
 
 A TriangleTree is built once per mesh (about 1 microsecond per triangle) and asked many times. The
-loops are in kernels/tree_walk.py; this is their front, with triangle numbers of the caller's mesh.
+loops are in kernels/tree_build.py and tree_walk.py; this is their front, with triangle numbers of the caller's mesh.
 """
 
 from __future__ import annotations
@@ -60,7 +60,7 @@ def make_tree(mesh: Mesh) -> TriangleTree:
     Raises:
         ValueError: the mesh has no triangle.
     """
-    from morph.kernels.tree_walk import build
+    from morph.kernels.tree_build import build
 
     n = len(mesh.triangles)
     if n == 0:

@@ -1,14 +1,10 @@
-"""Bounding-volume tree over triangles: built by the surface-area heuristic, walked by every query.
+"""Walking a bounding-volume tree: nearest point, first triangle on a ray, largest ball that touches a point.
 
-One tree answers four questions: nearest point, first triangle on a ray, largest ball that touches
-a surface point, and smallest gap between two surfaces. Children lie side by side, triangles lie in
-leaf order. Queries run one after another (the same bytes on one or two threads); against trimesh's
-closest point one query costs about a hundredth.
+Queries run one after another: the same bytes on one or two threads.
 
-Method: binned surface-area heuristic (Wald, "On fast construction of SAH-based bounding volume
-hierarchies", 2007); closest point by region test (Ericson, "Real-Time Collision Detection", 2005,
-section 5.1.5); ray by Moeller and Trumbore (1997). All three from memory, checked against plain
-numpy in the tests.
+Method: closest point by region test (Ericson, "Real-Time Collision Detection", 2005, section 5.1.5),
+ray by Moeller and Trumbore (1997), both from memory and checked against plain numpy in the tests.
+A ball is shrunk from its largest size by each triangle that enters it, nearest boxes first.
 """
 
 from __future__ import annotations
@@ -16,147 +12,12 @@ from __future__ import annotations
 import numpy as np
 from numba import njit
 
-N_BINS = 16
-LEAF = 4
-STACK = 160
-"""Levels below DEEP are halved by count, so no tree is deeper than DEEP + log2(n) < STACK."""
-DEEP = 96
+from morph.core.arrays import Floats, Ints
+from morph.kernels.tree_build import STACK
 
 
 @njit(cache=True)
-def _half_area(box):
-    """Half the surface area of `box (6,)`: low x y z, high x y z."""
-    x, y, z = box[3] - box[0], box[4] - box[1], box[5] - box[2]
-    return x * y + y * z + z * x
-
-
-@njit(cache=True)
-def _clear(box):
-    """Makes `box` the empty box."""
-    for a in range(3):
-        box[a] = np.inf
-        box[3 + a] = -np.inf
-
-
-@njit(cache=True)
-def _grow(box, other):
-    """Grows `box` to hold `other`."""
-    for a in range(3):
-        box[a] = min(box[a], other[a])
-        box[3 + a] = max(box[3 + a], other[3 + a])
-
-
-@njit(cache=True)
-def _bin_of(box, axis, low, scale):
-    """Number of the bin that the centre of `box` falls in."""
-    return min(max(int((box[axis] + box[3 + axis] - low) * scale), 0), N_BINS - 1)
-
-
-@njit(cache=True)
-def _best_bin(bins, n_in_bin, area_right, n_right):
-    """Returns the bin after which splitting costs least, or -1; the last two arrays are scratch."""
-    box = np.empty(6)
-    _clear(box)
-    n = 0
-    for j in range(N_BINS - 1, 0, -1):
-        n += n_in_bin[j]
-        _grow(box, bins[j])
-        n_right[j] = n
-        area_right[j] = _half_area(box) if n > 0 else 0.0
-    _clear(box)
-    n = 0
-    best, best_cost = -1, np.inf
-    for j in range(N_BINS - 1):
-        n += n_in_bin[j]
-        _grow(box, bins[j])
-        if n > 0 and n_right[j + 1] > 0:
-            cost = _half_area(box) * n + area_right[j + 1] * n_right[j + 1]
-            if cost < best_cost:
-                best, best_cost = j, cost
-    return best
-
-
-@njit(cache=True)
-def _split(boxes, order, start, end, centres, bins, n_in_bin, area_right, n_right):
-    """Reorders `order[start:end]` into two groups and returns where the second begins."""
-    axis = 0
-    for a in range(1, 3):
-        if centres[3 + a] - centres[a] > centres[3 + axis] - centres[axis]:
-            axis = a
-    width = centres[3 + axis] - centres[axis]
-    middle = (start + end) // 2
-    if width <= 0.0:
-        return middle
-    low, scale = centres[axis], N_BINS * 0.999999 / width
-    for j in range(N_BINS):
-        n_in_bin[j] = 0
-        _clear(bins[j])
-    for q in range(start, end):
-        j = _bin_of(boxes[order[q]], axis, low, scale)
-        n_in_bin[j] += 1
-        _grow(bins[j], boxes[order[q]])
-    best = _best_bin(bins, n_in_bin, area_right, n_right)
-    if best < 0:
-        return middle
-    left, right = start, end - 1
-    while left <= right:
-        i = order[left]
-        if _bin_of(boxes[i], axis, low, scale) <= best:
-            left += 1
-        else:
-            order[left] = order[right]
-            order[right] = i
-            right -= 1
-    return left if start < left < end else middle
-
-
-@njit(cache=True)
-def build(boxes, order, node_box, node_child, node_count):
-    """Builds the tree and returns its number of nodes.
-
-    Args:
-        boxes: (n, 6) box of each triangle.
-        order: (n,) 0..n-1, reordered to leaf order.
-        node_box: (2n, 6) filled.
-        node_child: (2n,) filled: first child (the second follows it), or first triangle of a leaf.
-        node_count: (2n,) filled: triangles of a leaf (consecutive in leaf order), 0 for an inner node.
-    """
-    todo = np.empty((STACK, 4), np.int64)
-    bins, n_in_bin = np.empty((N_BINS, 6)), np.empty(N_BINS, np.int64)
-    area_right, n_right = np.empty(N_BINS), np.empty(N_BINS, np.int64)
-    centres = np.empty(6)
-    todo[0] = np.array([0, 0, len(boxes), 0])
-    n_todo, n_nodes = 1, 1
-    while n_todo > 0:
-        n_todo -= 1
-        node, start, end, depth = todo[n_todo]
-        _clear(node_box[node])
-        _clear(centres)
-        for q in range(start, end):
-            box = boxes[order[q]]
-            _grow(node_box[node], box)
-            for a in range(3):
-                centres[a] = min(centres[a], box[a] + box[3 + a])
-                centres[3 + a] = max(centres[3 + a], box[a] + box[3 + a])
-        if end - start <= LEAF:
-            node_child[node], node_count[node] = start, end - start
-            continue
-        middle = (start + end) // 2
-        if depth < DEEP:
-            middle = _split(boxes, order, start, end, centres, bins, n_in_bin, area_right, n_right)
-        node_child[node], node_count[node] = n_nodes, 0
-        for side in range(2):
-            todo[n_todo, 0] = n_nodes + side
-            todo[n_todo, 1] = start if side == 0 else middle
-            todo[n_todo, 2] = middle if side == 0 else end
-            todo[n_todo, 3] = depth + 1
-            n_todo += 1
-        n_nodes += 2
-    return n_nodes
-
-
-@njit(cache=True)
-def _box_gap_squared(box, x, y, z):
+def _box_gap_squared(box: Floats, x: float, y: float, z: float) -> float:
     """Squared distance of a point from a box, 0 inside."""
     a = max(box[0] - x, 0.0, x - box[3])
     b = max(box[1] - y, 0.0, y - box[4])
@@ -165,7 +26,7 @@ def _box_gap_squared(box, x, y, z):
 
 
 @njit(cache=True)
-def _nearest_on_triangle(corner, px, py, pz):
+def nearest_on_triangle(corner: Floats, px: float, py: float, pz: float) -> tuple[float, float, float]:
     """Returns the point of the triangle `corner (9,)` nearest to (px, py, pz)."""
     ax, ay, az = corner[0], corner[1], corner[2]
     ux, uy, uz = corner[3] - ax, corner[4] - ay, corner[5] - az
@@ -199,7 +60,17 @@ def _nearest_on_triangle(corner, px, py, pz):
 
 
 @njit(cache=True)
-def closest_many(node_box, node_child, node_count, corners, points, limit, distance, hit, nearest):
+def closest_many(
+    node_box: Floats,
+    node_child: Ints,
+    node_count: Ints,
+    corners: Floats,
+    points: Floats,
+    limit: float,
+    distance: Floats,
+    hit: Ints,
+    nearest: Floats,
+) -> None:
     """Fills the nearest triangle (leaf order, -1 for none within `limit`), its distance (inf) and point."""
     stack, stack_gap = np.empty(STACK, np.int64), np.empty(STACK)
     for i in range(len(points)):
@@ -214,7 +85,7 @@ def closest_many(node_box, node_child, node_count, corners, points, limit, dista
             node = stack[n_stack]
             if node_count[node] > 0:
                 for k in range(node_child[node], node_child[node] + node_count[node]):
-                    qx, qy, qz = _nearest_on_triangle(corners[k], x, y, z)
+                    qx, qy, qz = nearest_on_triangle(corners[k], x, y, z)
                     gap = (qx - x) ** 2 + (qy - y) ** 2 + (qz - z) ** 2
                     if gap < best or (found < 0 and gap <= best):
                         best, found = gap, k
@@ -237,7 +108,7 @@ def closest_many(node_box, node_child, node_count, corners, points, limit, dista
 
 
 @njit(cache=True)
-def _ray_on_triangle(corner, ox, oy, oz, dx, dy, dz):
+def _ray_on_triangle(corner: Floats, ox: float, oy: float, oz: float, dx: float, dy: float, dz: float) -> float:
     """Returns the ray parameter at which it meets the triangle, or -1."""
     ux, uy, uz = corner[3] - corner[0], corner[4] - corner[1], corner[5] - corner[2]
     vx, vy, vz = corner[6] - corner[0], corner[7] - corner[1], corner[8] - corner[2]
@@ -257,7 +128,7 @@ def _ray_on_triangle(corner, ox, oy, oz, dx, dy, dz):
 
 
 @njit(cache=True)
-def _ray_in_box(box, ox, oy, oz, ix, iy, iz, most):
+def _ray_in_box(box: Floats, ox: float, oy: float, oz: float, ix: float, iy: float, iz: float, most: float) -> float:
     """Returns where the ray enters the box, or inf when it misses it or enters past `most`."""
     a, b = (box[0] - ox) * ix, (box[3] - ox) * ix
     low, high = min(a, b), max(a, b)
@@ -272,13 +143,23 @@ def _ray_in_box(box, ox, oy, oz, ix, iy, iz, most):
 
 
 @njit(cache=True)
-def _inverse(d):
+def _inverse(d: float) -> float:
     """1 / d, large but finite for 0 so that 0 times it is 0."""
     return 1.0 / d if abs(d) > 1e-30 else 1e30
 
 
 @njit(cache=True)
-def ray_many(node_box, node_child, node_count, corners, origins, directions, least, distance, hit):
+def ray_many(
+    node_box: Floats,
+    node_child: Ints,
+    node_count: Ints,
+    corners: Floats,
+    origins: Floats,
+    directions: Floats,
+    least: float,
+    distance: Floats,
+    hit: Ints,
+) -> None:
     """Fills the first triangle (leaf order, -1 for none) met beyond `least` and its distance along the ray (inf)."""
     stack, stack_at = np.empty(STACK, np.int64), np.empty(STACK)
     for i in range(len(origins)):
@@ -315,11 +196,11 @@ def ray_many(node_box, node_child, node_count, corners, origins, directions, lea
 
 
 @njit(cache=True)
-def _shrink(corner, px, py, pz, nx, ny, nz, radius):
+def _shrink(corner: Floats, px: float, py: float, pz: float, nx: float, ny: float, nz: float, radius: float) -> float:
     """Returns the largest radius <= `radius` whose ball through p with centre p + radius n leaves the triangle out."""
     for _ in range(60):
         cx, cy, cz = px + radius * nx, py + radius * ny, pz + radius * nz
-        qx, qy, qz = _nearest_on_triangle(corner, cx, cy, cz)
+        qx, qy, qz = nearest_on_triangle(corner, cx, cy, cz)
         if (qx - cx) ** 2 + (qy - cy) ** 2 + (qz - cz) ** 2 >= radius * radius * (1.0 - 1e-12):
             break
         vx, vy, vz = qx - px, qy - py, qz - pz
@@ -334,7 +215,19 @@ def _shrink(corner, px, py, pz, nx, ny, nz, radius):
 
 
 @njit(cache=True)
-def ball_many(node_box, node_child, node_count, corners, normals, points, inward, largest, most_cosine, radius, hit):
+def ball_many(
+    node_box: Floats,
+    node_child: Ints,
+    node_count: Ints,
+    corners: Floats,
+    normals: Floats,
+    points: Floats,
+    inward: Floats,
+    largest: float,
+    most_cosine: float,
+    radius: Floats,
+    hit: Ints,
+) -> None:
     """Fills the largest ball that touches each surface point and no counted triangle enters.
 
     Args:
@@ -378,82 +271,3 @@ def ball_many(node_box, node_child, node_count, corners, normals, points, inward
                 if smaller < r:
                     r, found = smaller, k
         radius[i], hit[i] = r, found
-
-
-@njit(cache=True)
-def _segment_gap(a, i, j, b, k, m):
-    """Returns the squared gap of edges a[i]-a[j] and b[k]-b[m] and their nearest points (corner rows of 3)."""
-    ux, uy, uz = a[3 * j] - a[3 * i], a[3 * j + 1] - a[3 * i + 1], a[3 * j + 2] - a[3 * i + 2]
-    vx, vy, vz = b[3 * m] - b[3 * k], b[3 * m + 1] - b[3 * k + 1], b[3 * m + 2] - b[3 * k + 2]
-    wx, wy, wz = a[3 * i] - b[3 * k], a[3 * i + 1] - b[3 * k + 1], a[3 * i + 2] - b[3 * k + 2]
-    uu, uv, vv = ux * ux + uy * uy + uz * uz, ux * vx + uy * vy + uz * vz, vx * vx + vy * vy + vz * vz
-    uw, vw = ux * wx + uy * wy + uz * wz, vx * wx + vy * wy + vz * wz
-    den = uu * vv - uv * uv
-    s = min(max((uv * vw - vv * uw) / den, 0.0), 1.0) if den > 1e-18 * uu * vv else 0.0
-    t = min(max((uv * s + vw) / vv, 0.0), 1.0) if vv > 0.0 else 0.0
-    s = min(max((uv * t - uw) / uu, 0.0), 1.0) if uu > 0.0 else 0.0
-    px, py, pz = a[3 * i] + s * ux, a[3 * i + 1] + s * uy, a[3 * i + 2] + s * uz
-    qx, qy, qz = b[3 * k] + t * vx, b[3 * k + 1] + t * vy, b[3 * k + 2] + t * vz
-    return (px - qx) ** 2 + (py - qy) ** 2 + (pz - qz) ** 2, px, py, pz, qx, qy, qz
-
-
-@njit(cache=True)
-def _triangle_gap(a, b, best, pair):
-    """Returns the smaller of `best` and the squared gap of triangles a, b (9,); writes the points to pair (6,)."""
-    for c in range(3):
-        x, y, z = a[3 * c], a[3 * c + 1], a[3 * c + 2]
-        qx, qy, qz = _nearest_on_triangle(b, x, y, z)
-        gap = (qx - x) ** 2 + (qy - y) ** 2 + (qz - z) ** 2
-        if gap < best:
-            best = gap
-            pair[0], pair[1], pair[2], pair[3], pair[4], pair[5] = x, y, z, qx, qy, qz
-        x, y, z = b[3 * c], b[3 * c + 1], b[3 * c + 2]
-        qx, qy, qz = _nearest_on_triangle(a, x, y, z)
-        gap = (qx - x) ** 2 + (qy - y) ** 2 + (qz - z) ** 2
-        if gap < best:
-            best = gap
-            pair[0], pair[1], pair[2], pair[3], pair[4], pair[5] = qx, qy, qz, x, y, z
-    for c in range(3):
-        for d in range(3):
-            gap, px, py, pz, qx, qy, qz = _segment_gap(a, c, (c + 1) % 3, b, d, (d + 1) % 3)
-            if gap < best:
-                best = gap
-                pair[0], pair[1], pair[2], pair[3], pair[4], pair[5] = px, py, pz, qx, qy, qz
-    return best
-
-
-@njit(cache=True)
-def smallest_gap(node_box, node_child, node_count, corners, queries, limit, pair):
-    """Returns the smallest gap between the tree and the triangles `queries (k, 9)`, inf when above `limit`.
-
-    Crossing triangles have a gap of 0 only where an edge meets an edge or a corner a face; surfaces
-    that cross are found by their centrelines first. `pair (6,)` gets the nearest points (query, tree).
-    """
-    stack = np.empty(STACK, np.int64)
-    best = limit * limit
-    found = False
-    for i in range(len(queries)):
-        q = queries[i]
-        stack[0] = 0
-        n_stack = 1
-        while n_stack > 0:
-            n_stack -= 1
-            node = stack[n_stack]
-            gap = 0.0
-            for a in range(3):
-                low, high = min(q[a], q[3 + a], q[6 + a]), max(q[a], q[3 + a], q[6 + a])
-                side = max(node_box[node, a] - high, low - node_box[node, 3 + a], 0.0)
-                gap += side * side
-            if gap > best:
-                continue
-            if node_count[node] == 0:
-                stack[n_stack] = node_child[node] + 1
-                stack[n_stack + 1] = node_child[node]
-                n_stack += 2
-                continue
-            for k in range(node_child[node], node_child[node] + node_count[node]):
-                smaller = _triangle_gap(q, corners[k], best, pair)
-                if smaller < best:
-                    best = smaller
-                    found = True
-    return np.sqrt(best) if found else np.inf
