@@ -20,9 +20,12 @@ from morph.layout.web import Run, Web, arc_mm, measure_length_mm
 
 REACH_WIDTHS = 4.0
 AHEAD_COSINE = 0.5
+NEAR_WIDTHS = 2.0
+"""A way on lies within 60 degrees of the tip's heading, within this many widths of it also sideways."""
 LOWEST_DENSITY = 0.22
 ABOVE_BACKGROUND = 0.10
 ABOVE_FLANKS = 0.12
+FLANK_WIDTHS = (1.0, 1.3, 1.6)
 DETOUR = 1.35
 NEAR_END = 1.2
 BLIND_END = 2.5
@@ -109,7 +112,8 @@ def _way_on(web: Web, tip: int, ground: _Field, place: Floats, owner: Ints, samp
     away = place - start
     distance = np.hypot(*away.T)
     with np.errstate(invalid="ignore", divide="ignore"):
-        ahead = (away @ heading) / distance >= AHEAD_COSINE
+        cosine = (away @ heading) / distance
+    ahead = (cosine >= AHEAD_COSINE) | ((cosine >= 0.0) & (distance <= NEAR_WIDTHS * ground.width_mm))
     allowed = ahead & (distance > 1e-6) & ~_too_near_on_own_run(run, run_key, web, owner, sample, distance, ground)
     if not allowed.any():
         return None
@@ -203,14 +207,21 @@ def _first_meeting(ground: _Field, path_mm: Floats) -> int | None:
 
 
 def _flank_contrast(ground: _Field, path_mm: Floats) -> float:
-    """Returns how far the mean density of the way's middle half stands above the poorer-contrast flank."""
+    """Returns how far the mean density of the way's middle half stands above its denser flank.
+
+    A flank's density is the median over lines beside the way, so that a speck beside it does not count as a cloud.
+    """
     n = len(path_mm)
     middle = slice(n // 4, max(n // 4 + 1, 3 * n // 4))
     tangent = np.gradient(path_mm, axis=0)
     tangent /= np.maximum(np.hypot(*tangent.T), 1e-12)[:, None]
-    normal = np.column_stack([-tangent[:, 1], tangent[:, 0]])[middle] * 1.1 * ground.width_mm
+    normal = np.column_stack([-tangent[:, 1], tangent[:, 0]]) * ground.width_mm
     here = float(ground.at(path_mm[middle]).mean())
-    return min(here - float(ground.at(path_mm[middle] + sign * normal).mean()) for sign in (1.0, -1.0))
+    flanks = [
+        float(np.median(np.concatenate([ground.at(path_mm + sign * widths * normal) for widths in FLANK_WIDTHS])))
+        for sign in (1.0, -1.0)
+    ]
+    return here - max(flanks)
 
 
 def _end_near(web: Web, run_key: int, sample: int, tip: int) -> int | None:

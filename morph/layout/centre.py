@@ -21,7 +21,7 @@ WIDTH_PROBE_SHARE = 0.7
 ABREAST_SHARE = 0.25
 """A wall further ahead or behind than this many half-widths is not the sample's own."""
 FREE_STRETCH = 0.4
-"""Free samples must last this many half-widths before the junction is taken to be left behind."""
+"""Once samples have been free for this many half-widths the junction is left behind."""
 LONGEST_ZONE = 3.0
 """A junction's zone ends at the latest this many half-widths from it, or at 45 % of the run."""
 
@@ -153,12 +153,13 @@ def _mean_half(half: Floats, own: Bools, wall_length: Floats, wall_away: Floats,
 def _close_zones(web: Web, run: Run) -> None:
     """Marks samples from each junction up to the first free stretch as not free, all others as free.
 
-    Over a zone the half-width of that stretch is held.
+    Over a zone, and half a half-width more, the half-width of the stretch that follows is held.
     """
     assert run.free is not None
     arc = arc_mm(run.place_mm)
     free = run.free
     zone = np.zeros(len(arc), dtype=bool)
+    half = run.half_mm.copy()
     for joint, away in ((run.start, arc), (run.end, arc[-1] - arc)):
         if web.degree(joint) < 3:
             continue
@@ -166,22 +167,15 @@ def _close_zones(web: Web, run: Run) -> None:
         limit = min(LONGEST_ZONE * radius, 0.45 * arc[-1])
         far = _zone_end(away, free & (away >= min(radius, limit)), FREE_STRETCH * radius, limit)
         zone |= away < far
-    if zone.all():
-        run.half_mm = np.full(len(arc), float(run.half_mm.min()))
-    elif zone.any():
-        inside = np.flatnonzero(~zone)
-        half = run.half_mm.copy()
-        stretch = FREE_STRETCH * float(np.median(run.half_mm[inside]))
-        for end, at in enumerate((inside[0], inside[-1])):
-            around = inside[np.abs(arc[inside] - arc[at]) <= stretch]
-            side = zone & (np.arange(len(arc)) < inside[0]) if end == 0 else zone & (np.arange(len(arc)) > inside[-1])
-            half[side] = float(np.median(run.half_mm[around]))
-        run.half_mm = half
+        held = min(far + 0.5 * radius, 0.45 * arc[-1])
+        beyond = (away >= held) & (away <= held + FREE_STRETCH * radius)
+        half[away < held] = float(np.median(run.half_mm[beyond])) if beyond.any() else float(run.half_mm.min())
+    run.half_mm = half
     run.free = ~zone
 
 
 def _zone_end(away: Floats, free: Bools, stretch: float, limit: float) -> float:
-    """Returns the distance from a junction at which `stretch` of free samples begins, at most `limit`."""
+    """Returns the distance from a junction at which `stretch` of free samples has passed, at most `limit`."""
     order = np.argsort(away, kind="stable")
     start: float | None = None
     for index in order:
@@ -193,5 +187,5 @@ def _zone_end(away: Floats, free: Bools, stretch: float, limit: float) -> float:
         elif start is None:
             start = distance
         elif distance - start >= stretch:
-            return start
-    return limit if start is None else min(start, limit)
+            return distance
+    return limit

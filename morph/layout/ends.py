@@ -2,12 +2,37 @@
 
 from __future__ import annotations
 
+import math
 from dataclasses import replace
 
 import numpy as np
 
 from morph.core.arrays import Floats
-from morph.layout.web import Run, Web, arc_mm, line_through
+from morph.layout.web import Run, Web, arc_mm, line_through, measure_length_mm
+from morph.settings.job import PortSettings
+
+
+def find_stubs(
+    web: Web, size_mm: tuple[float, float], ports: tuple[PortSettings, ...], pixel_mm: float
+) -> frozenset[int]:
+    """Returns the mouths without a port near them behind which there is hardly a channel.
+
+    A channel that grazes the frame shows a run there that looks cut; what leads to it within the sheet
+    is shorter than its junction is wide.
+    """
+    stubs = set()
+    for key, joint in web.joints.items():
+        if joint.mouth < 0 or web.degree(key) != 1:
+            continue
+        run = web.runs[web.at[key][0]]
+        root = run.end if run.start == key else run.start
+        inside = _outside_mm(run.place_mm, size_mm) <= 0.0
+        length_mm = measure_length_mm(run.place_mm[inside]) if np.count_nonzero(inside) > 1 else 0.0
+        radius_mm = web.joints[root].radius_mm
+        claimed = any(math.dist(joint.place_mm, port.at_mm) < 4.0 * joint.radius_mm for port in ports)
+        if not claimed and web.degree(root) >= 3 and length_mm < 2.0 * radius_mm + 2.0 * pixel_mm:
+            stubs.add(joint.mouth)
+    return frozenset(stubs)
 
 
 def cut_at_frame(web: Web, size_mm: tuple[float, float]) -> None:

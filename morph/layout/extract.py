@@ -19,14 +19,14 @@ from morph.layout.assemble import Parts, assemble
 from morph.layout.bridges import suggest_bridges
 from morph.layout.centre import centre, resample
 from morph.layout.density import Density
-from morph.layout.ends import cut_at_frame, trim_tips
-from morph.layout.frame import extend, find_mouths
+from morph.layout.ends import cut_at_frame, find_stubs, trim_tips
+from morph.layout.frame import FrameRun, extend, find_mouths
 from morph.layout.graph import ChannelGraph, Dropped, DropReason
 from morph.layout.junctions import merge_aimed, place_junctions
-from morph.layout.level import Picture, count_at_levels, find_level, make_picture, smoothed
+from morph.layout.level import Picture, count_at_levels, find_level, make_picture, measure_area_ratio, smoothed
 from morph.layout.ports import attach_ports, keep_port_tips, list_candidates, require_ports
 from morph.layout.skeleton import make_web
-from morph.layout.walls import find_walls
+from morph.layout.walls import Walls, find_walls
 from morph.layout.web import Web, join_all, merge_near, prune
 from morph.settings.job import LayoutSettings, PortSettings, Role
 
@@ -94,7 +94,7 @@ def find_graph(
     parts = Parts(
         density.size_mm,
         level,
-        float(np.count_nonzero(picture.mask)) * picture.grid.pixel_mm**2 / (density.size_mm[0] * density.size_mm[1]),
+        measure_area_ratio(picture, density.samples),
         picture.dropped + traced.spurs,
         levels,
         tuple(found),
@@ -128,16 +128,13 @@ def _trace(
 ) -> _Traced:
     picture = make_picture(density, level, at_mm, more)
     progress.step(STAGE, 1, N_STEPS)
-    extended = extend(picture, find_mouths(picture, at_mm, density.size_mm))
-    walls = find_walls(extended, level)
-    web = make_web(extended, walls)
+    mouths = find_mouths(picture, at_mm, density.size_mm)
+    web, walls, spurs = _thin(picture, mouths, ports)
+    stubs = find_stubs(web, density.size_mm, ports, picture.grid.pixel_mm)
+    if stubs:
+        mouths = tuple(mouth for number, mouth in enumerate(mouths) if number not in stubs)
+        web, walls, spurs = _thin(picture, mouths, ports)
     pixel_mm = picture.grid.pixel_mm
-    keep_port_tips(web, ports)
-    join_all(web)
-    spurs = prune(web, pixel_mm)
-    merge_near(web)
-    spurs += prune(web, pixel_mm)
-    join_all(web)
     betti = web.betti()
     step_mm = max(pixel_mm, picture.width_mm / SAMPLES_PER_WIDTH)
     resample(web, step_mm)
@@ -151,6 +148,22 @@ def _trace(
         Dropped(DropReason.SPUR, (float(place[0]), float(place[1])), length * width) for place, length, width in spurs
     )
     return _Traced(web, picture, dropped, picture.betti, betti)
+
+
+def _thin(
+    picture: Picture, mouths: tuple[FrameRun, ...], ports: tuple[PortSettings, ...]
+) -> tuple[Web, Walls, list[tuple[Floats, float, float]]]:
+    """Returns the web of the picture without spurs and doubled junctions, the walls, and the spurs."""
+    extended = extend(picture, mouths)
+    walls = find_walls(extended, picture.level)
+    web = make_web(extended, walls)
+    keep_port_tips(web, ports)
+    join_all(web)
+    spurs = prune(web, picture.grid.pixel_mm)
+    merge_near(web)
+    spurs += prune(web, picture.grid.pixel_mm)
+    join_all(web)
+    return web, walls, spurs
 
 
 def require_circuits(graph: ChannelGraph, ports: tuple[PortSettings, ...]) -> None:

@@ -21,7 +21,7 @@ from morph.layout.level import Grid, Picture
 
 CUT_RATIO = 3.2
 """A run up to this many half-widths long is a channel cut by the frame (2 straight, 2.83 at 45 degrees)."""
-WIDENING = 1.8
+WIDENING = 1.6
 """Behind a channel cut by the frame the coolant is at most this many times as wide; a body touching it opens wider."""
 
 

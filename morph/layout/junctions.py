@@ -9,6 +9,12 @@ from morph.layout.web import Run, Web, arc_mm, is_parallel, line_through, measur
 
 AIM_SPREAD = 0.2
 """Lines that miss their common point by more than this many radii (rms) do not aim at one point."""
+LINE_STRETCH, BENT_STRETCH = 1.5, 3.0
+"""A line is fitted to this many radii of free samples, a parabola to that many."""
+BENT_GAIN = 4.0
+"""A parabola counts when it leaves this many times less than the line."""
+MERGE_SPREAD = 0.3
+"""The same for the channels of two junctions that may be one."""
 
 
 def merge_aimed(web: Web, ratio: float = 2.6) -> int:
@@ -37,7 +43,7 @@ def merge_aimed(web: Web, ratio: float = 2.6) -> int:
         n_others = web.degree(run.start) + web.degree(run.end) - 2
         aim = _aim(lines) if len(lines) == n_others else None
         middle = 0.5 * (web.joints[run.start].place_mm + web.joints[run.end].place_mm)
-        if aim is not None and aim[1] < AIM_SPREAD * radius and np.hypot(*(aim[0] - middle)) < radius:
+        if aim is not None and aim[1] < MERGE_SPREAD * radius and np.hypot(*(aim[0] - middle)) < radius:
             merge_along(web, key)
             n_merged += 1
     return n_merged
@@ -80,17 +86,40 @@ def _aim(lines: list[tuple[Floats, Floats]]) -> tuple[Floats, float] | None:
 
 
 def _line_near(run: Run, radius_mm: float) -> tuple[Floats, Floats] | None:
-    """Returns a point on, and the direction of, the line through the first free samples of `run`."""
+    """Returns a point on, and the direction of, the line along which `run` reaches its first joint.
+
+    A straight line is fitted to the first free samples. Where a parabola over a longer stretch fits much
+    better, the channel is bent there, and its tangent abreast of the joint is the line.
+    """
     assert run.free is not None
     arc = arc_mm(run.place_mm)
     free = np.flatnonzero(run.free)
     if not len(free):
         return None
-    begin = arc[free[0]]
-    chosen = run.place_mm[run.free & (arc >= begin) & (arc <= begin + 1.5 * radius_mm) & (arc < 0.6 * arc[-1])]
+    usable = run.free & (arc >= arc[free[0]]) & (arc < 0.6 * arc[-1])
+    chosen = run.place_mm[usable & (arc <= arc[free[0]] + LINE_STRETCH * radius_mm)]
     if len(chosen) < 3:
         return None
-    return line_through(chosen)
+    line = line_through(chosen)
+    bent = run.place_mm[usable & (arc <= arc[free[0]] + BENT_STRETCH * radius_mm)]
+    return (_bent_line(bent, run.place_mm[0]) if len(bent) >= 6 else None) or line
+
+
+def _bent_line(place_mm: Floats, joint_mm: Floats) -> tuple[Floats, Floats] | None:
+    """Returns point and direction of the parabola through `place_mm` abreast of the joint; None where it bends not."""
+    middle, direction = line_through(place_mm)
+    across = np.array([-direction[1], direction[0]])
+    u, v = (place_mm - middle) @ direction, (place_mm - middle) @ across
+    moments = [float((u**k).mean()) for k in range(5)]
+    normal = np.array([[moments[i + j] for j in range(3)] for i in range(3)])
+    factor = np.linalg.solve(normal, np.array([float((v * u**k).mean()) for k in range(3)]))
+    rest = v - factor[0] - factor[1] * u - factor[2] * u**2
+    if float(np.sqrt((v**2).mean())) < BENT_GAIN * float(np.sqrt((rest**2).mean())) + 1e-9:
+        return None
+    at = float((joint_mm - middle) @ direction)
+    point = middle + at * direction + (factor[0] + factor[1] * at + factor[2] * at**2) * across
+    slope = factor[1] + 2.0 * factor[2] * at
+    return point, (direction + slope * across) / float(np.hypot(1.0, slope))
 
 
 def move_joint(web: Web, key: int, place_mm: Floats) -> None:

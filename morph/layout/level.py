@@ -182,6 +182,13 @@ class Cleaned:
     holes: int
 
 
+def measure_area_ratio(picture: Picture, samples: Samples) -> float:
+    """Returns coolant area over sheet area; a sample cut by the contour counts with the share the contour leaves it."""
+    slope = np.hypot(*np.gradient(picture.field))
+    share = np.clip(0.5 + (picture.field - picture.level) / np.maximum(slope, 1e-9), 0.0, 1.0)
+    return float((share * _cell_weight(share.shape, samples)).sum())
+
+
 def clean(mask: Bools, width_px: float, keep_px: Floats) -> Cleaned:
     """Returns `mask` without islands and pinholes.
 
@@ -250,14 +257,6 @@ def make_picture(density: Density, level: float, ports_mm: Floats, more: int = 1
     mask = field > level
     width_px = measure_width_px(mask)
     found = clean(mask, width_px, grid.row_column(ports_mm))
-    if not found.pieces:
-        raise InputError(
-            "no-channel",
-            expected="at least one channel",
-            found=f"only specks above level {level:.3f}",
-            where=density.source,
-            do="Lower the level, or give the image at its full resolution.",
-        )
     nudge = 1e-4
     field = np.where(found.mask, np.maximum(field, level + nudge), np.minimum(field, level - nudge))
     dropped = list_dropped(found.islands, DropReason.ISLAND, grid) + list_dropped(

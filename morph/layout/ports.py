@@ -125,7 +125,7 @@ def _find_nearest(web: Web, at_mm: tuple[float, float]) -> _Nearest | None:
         run = web.runs[key]
         away = np.hypot(*(run.place_mm - at_mm).T)
         for end, joint in ((0, run.start), (-1, run.end)):
-            if web.degree(joint) == 1:
+            if web.degree(joint) == 1 and web.joints[joint].mouth < 0:
                 away[end] = max(0.0, away[end] - run.half_mm[end])
         sample = int(np.argmin(away))
         if best is None or away[sample] < best.away_mm:

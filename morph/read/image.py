@@ -340,7 +340,7 @@ def _checked(raw: NDArray[Any], name: str) -> Floats:
         raise InputError(
             "image-out-of-range",
             expected="values within 0..1",
-            found=f"values from {low:.6g} to {high:.6g}",
+            found=f"values from {low:.9g} to {high:.9g}",
             where=name,
             do="Scale the density to 0..1 before saving; morph does not guess a scale.",
         )

@@ -101,8 +101,7 @@ def _graph(rng, rows, columns, width, spacing):
         return i
 
     edges, wait = [], []
-    for a, b in pairs:
-        a, b = int(a), int(b)
+    for a, b in [(int(a), int(b)) for a, b in pairs]:
         length = np.hypot(*(places[a] - places[b]))
         if not 3.4 * width < length < 1.75 * spacing:
             continue
@@ -125,7 +124,12 @@ def _add_ports(rng, places, edges, rows, columns, width):
     ports, n_wanted = [], int(rng.integers(2, 5))
     used = sorted({e.a for e in edges} | {e.b for e in edges})
     away = {"L": places[:, 0], "R": columns - places[:, 0], "B": places[:, 1], "T": rows - places[:, 1]}
-    tries = [(side, node) for side in "LRBT" for node in used if away[side][node] < 0.45 * (columns if side in "LR" else rows)]
+    tries = [
+        (side, node)
+        for side in "LRBT"
+        for node in used
+        if away[side][node] < 0.45 * (columns if side in "LR" else rows)
+    ]
     for number in rng.permutation(len(tries)):
         side, node = tries[number]
         if len(ports) == n_wanted:
@@ -133,13 +137,20 @@ def _add_ports(rng, places, edges, rows, columns, width):
         depth = away[side][node]
         shift = rng.uniform(-0.35, 0.35) * depth
         x, y = places[node]
-        place = np.array({"L": (0, y + shift), "R": (columns, y + shift), "B": (x + shift, 0), "T": (x + shift, rows)}[side], float)
+        place = np.array(
+            {"L": (0, y + shift), "R": (columns, y + shift), "B": (x + shift, 0), "T": (x + shift, rows)}[side], float
+        )
         along, limit = (place[1], rows) if side in "LR" else (place[0], columns)
         if not 1.5 * width < along < limit - 1.5 * width or depth < 2.2 * width:
             continue
         edge = Edge(len(places), node, _resampled(_bezier(place, places[node], 0.0, 200)), np.empty(0))
         near_other = any(
-            np.hypot(*(e.line[::8, None] - edge.line[: max(8, len(edge.line) - int(3 * width / 0.25)) : 8][None]).transpose(2, 0, 1)).min() < 2 * width
+            np.hypot(
+                *(e.line[::8, None] - edge.line[: max(8, len(edge.line) - int(3 * width / 0.25)) : 8][None]).transpose(
+                    2, 0, 1
+                )
+            ).min()
+            < 2 * width
             for e in edges
         )
         if near_other or not _angles_ok(edges, node, edge, width, 50):
@@ -165,7 +176,9 @@ def _simplify(rng, places, edges, ports, width):
         gone = blind[int(rng.integers(len(blind)))]
         edges = [e for e in edges if gone not in (e.a, e.b)]
     while True:
-        through = [n for n in sorted({e.a for e in edges} | {e.b for e in edges}) if degree(n) == 2 and n not in port_nodes]
+        through = [
+            n for n in sorted({e.a for e in edges} | {e.b for e in edges}) if degree(n) == 2 and n not in port_nodes
+        ]
         through = [n for n in through if sum(n in (e.a, e.b) for e in edges) == 2]
         if not through:
             break
@@ -245,19 +258,22 @@ def _betti(mask):
 
 def _over_frame(edges, ports, width):
     """Carries port edges on past the frame so that their rounded caps lie outside."""
-    out = []
-    for edge in edges:
-        for index, _, _ in ports:
-            if edge.a == index:
-                step = edge.line[0] - edge.line[4]
-                step /= np.hypot(*step)
-                more = edge.line[0] + np.arange(int(8 * width), 0, -1)[:, None] * 0.25 * step
-                shift = len(more) * 0.25
-                necks = [(u + shift, v + shift, g) for u, v, g in edge.necks]
-                half = np.concatenate([np.full(len(more), edge.half[0]), edge.half])
-                edge = Edge(edge.a, edge.b, np.vstack([more, edge.line]), half, necks)
-        out.append(edge)
-    return out
+    indices = {index for index, _, _ in ports}
+    return [_longer(edge, edge.a in indices, edge.b in indices, width) for edge in edges]
+
+
+def _longer(edge, before, after, width):
+    n = int(8 * width)
+    line, half, shift = edge.line, edge.half, 0.0
+    if before:
+        step = (line[0] - line[4]) / np.hypot(*(line[0] - line[4])) * 0.25
+        line = np.vstack([line[0] + np.arange(n, 0, -1)[:, None] * step, line])
+        half, shift = np.concatenate([np.full(n, half[0]), half]), 0.25 * n
+    if after:
+        step = (line[-1] - line[-5]) / np.hypot(*(line[-1] - line[-5])) * 0.25
+        line = np.vstack([line, line[-1] + np.arange(1, n + 1)[:, None] * step])
+        half = np.concatenate([half, np.full(n, half[-1])])
+    return Edge(edge.a, edge.b, line, half, [(u + shift, v + shift, g) for u, v, g in edge.necks])
 
 
 def _draw(rng, seed, mode):
@@ -279,7 +295,9 @@ def _draw(rng, seed, mode):
         places, edges, made = _twin(rng, places, edges, width, port_nodes)
         if not made:
             return None
-    if min(e.arc[-1] / (0.7 if {e.a, e.b} & port_nodes else 1.0) for e in edges) < 3.2 * width or any(e.a == e.b for e in edges):
+    if min(e.arc[-1] / (0.7 if {e.a, e.b} & port_nodes else 1.0) for e in edges) < 3.2 * width or any(
+        e.a == e.b for e in edges
+    ):
         return None
     for edge in edges:
         if mode == "width" or every:
@@ -375,7 +393,9 @@ def _truth(places, edges, ports):
     for n in used:
         degree = sum((e.a == n) + (e.b == n) for e in edges)
         kinds.append("port" if n in port_nodes else "dead-end" if degree == 1 else "junction")
-    return Truth([places[n] for n in used], kinds, [Edge(number[e.a], number[e.b], e.line, e.half, e.necks) for e in edges])
+    return Truth(
+        [places[n] for n in used], kinds, [Edge(number[e.a], number[e.b], e.line, e.half, e.necks) for e in edges]
+    )
 
 
 def _cut(truth):
