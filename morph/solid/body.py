@@ -6,6 +6,7 @@ resolution; results come back as float64 arrays with a number per triangle sayin
 
 from __future__ import annotations
 
+from functools import lru_cache
 from typing import Any
 
 import numpy as np
@@ -41,8 +42,12 @@ def body_from(vertices_mm: Floats, triangles: Ints, what: str) -> tuple[Any, int
     return body, source
 
 
+@lru_cache(maxsize=1)
 def body_of(mesh: Mesh, what: str) -> tuple[Any, int]:
-    """Returns the manifold3d body of `mesh` and its id; errors as `body_from`."""
+    """Returns the manifold3d body of `mesh` and its id; errors as `body_from`.
+
+    The last one is kept, because trimming the channels and cutting the insert take the same mesh one after the other.
+    """
     return body_from(mesh.vertices_mm, mesh.triangles, what)
 
 

@@ -25,6 +25,8 @@ from morph.solid.result import ChannelSolid
 from morph.solid.sweep import make_sweep
 from morph.solid.tidy import is_closed, make_file_mesh, require_closed, round_to_file, tidy_mesh
 
+WHAT = "the channel solid"
+
 MOST_TAKE_BACKS = 4
 
 TOLERANCES_MM = (SIMPLIFY_MM, 0.25 * SIMPLIFY_MM, 0.0)
@@ -47,14 +49,17 @@ def make_channel_solid(plan: ChannelPlan, blank: Blank, h_mm: float, progress: P
     vertices = round_to_file(vertices)
     euler = len(vertices) - len(triangles) // 2
     swept, found = _simplified(vertices, triangles, SIMPLIFY_MM, progress)
-    if not _is_sound(swept, found, euler):
+    sound = _is_sound(swept, found, euler)
+    if not sound:
         before, vertices = vertices, _untangled(field, vertices, triangles, progress)
         for tolerance in TOLERANCES_MM[int(vertices is before) :]:
             swept, found = _simplified(vertices, triangles, tolerance, progress)
-            if _is_sound(swept, found, euler):
+            sound = _is_sound(swept, found, euler)
+            if sound:
                 break
-    require_closed(swept, "the channel solid")
-    require_uncrossed(swept, found)
+    if not sound:
+        require_closed(swept, WHAT)
+        require_uncrossed(swept, found)
     return ChannelSolid(
         swept=swept,
         trimmed=_trimmed(swept, blank, progress),
@@ -86,7 +91,7 @@ def _is_sound(mesh: Mesh, found: Crossings, euler: int) -> bool:
 def _simplified(vertices: Floats, triangles: Ints, tolerance_mm: float, progress: Progress) -> tuple[Mesh, Crossings]:
     """Returns the surface moved by at most `tolerance_mm` with fewer triangles, and its crossings."""
     progress.step("solid: simplify", 0, 2)
-    body, _ = body_from(vertices, triangles, "the channel solid")
+    body, _ = body_from(vertices, triangles, WHAT)
     progress.step("solid: simplify", 1, 2)
     if tolerance_mm > 0.0:
         body = body.simplify(tolerance_mm)
@@ -118,11 +123,11 @@ def _untangled(field: SampledField, vertices: Floats, triangles: Ints, progress:
 def _trimmed(swept: Mesh, blank: Blank, progress: Progress) -> Mesh:
     """Returns the part of the swept channels inside the finished blank.
 
-    The library gets the mesh anew, as it does for the insert, so that trimmed channels and insert fit without a gap.
+    The library gets the mesh anew, the same as for the insert, so that trimmed channels and insert fit without a gap.
     """
     progress.step("solid: trim", 0, 1)
     what = "the channels inside the blank"
-    body = body_of(swept, what)[0] ^ blank_body(blank, printed=False)
+    body = body_of(swept, WHAT)[0] ^ blank_body(blank, printed=False)
     require_valid(body, what)
     vertices, triangles, _ = arrays_of(body)
     mesh, _ = make_file_mesh(vertices, triangles, np.zeros(len(triangles), np.int64), what)

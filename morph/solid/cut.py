@@ -12,6 +12,7 @@ from morph.core.progress import SILENT, Progress
 from morph.geometry.mesh import measure_condition, mesh_volume_mm3
 from morph.solid.blank import blank_mesh
 from morph.solid.body import arrays_of, body_of, require_valid
+from morph.solid.channel import WHAT
 from morph.solid.openings import find_openings
 from morph.solid.result import ChannelSolid, Insert
 from morph.solid.tidy import make_file_mesh
@@ -33,7 +34,7 @@ def make_insert(solid: ChannelSolid, blank: Blank, plan: ChannelPlan, progress: 
     """
     progress.step("insert: cut", 0, 3)
     what = f"the insert with {len(plan.branches)} branches cut"
-    channels, channel_source = body_of(solid.swept, "the channel solid")
+    channels, channel_source = body_of(solid.swept, WHAT)
     printed = blank_mesh(blank, printed=True)
     metal, _ = body_of(printed, "the blank")
     progress.step("insert: cut", 1, 3)

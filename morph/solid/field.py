@@ -1,9 +1,9 @@
 """Resolution of the channel field, and its sampling on sparse blocks of 8 x 8 x 8 cells.
 
 Only blocks that the channel wall can pass are ever sampled, so time and memory grow with the wall's
-area, not with the volume of the insert. Metal between two channels that is thinner than h can fall between
-the samples: such channels come out as one, with one more loop or fewer openings than planned. Before anything is taken the number of triangles and
-the memory are predicted from the plan.
+area, not with the volume of the insert. Metal between two channels that is thinner than h can fall
+between the samples: such channels come out as one, with one more loop or fewer openings than planned.
+Before anything is taken the number of triangles and the memory are predicted from the plan.
 """
 
 from __future__ import annotations
