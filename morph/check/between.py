@@ -226,7 +226,7 @@ def confirm(finding: BetweenFinding, lines: Centrelines, wall: ChannelWall) -> B
 
 
 def check_between(subject: CheckSubject, lines: Centrelines, wall: ChannelWall | None) -> list[Verdict]:
-    """Returns `branches-merge` and `wall-between` rows (each thin pair, else the thinnest) and `web-tip` rows."""
+    """Returns `branches-merge` and `wall-between` rows (each thin pair, else the thinnest) and a `thin-rib` row."""
     profile, service = subject.profile, subject.service
     limit = worse_limit(service.wall_between_mm, "wall_between_mm", profile.wall_mm.value, profile.wall_mm.source)
     band = wall_band_mm(profile)

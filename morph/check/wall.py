@@ -28,6 +28,9 @@ from morph.settings.profile import Profile
 REFINED_TRIANGLES = 200
 """This many of the nearest triangles are also measured between their corners."""
 
+REFINED_MM = 0.25
+"""Of those with a corner at most this much farther than the nearest one."""
+
 LimitAt = Callable[[Floats], Floats]
 
 
@@ -98,10 +101,11 @@ def _on_mesh(
     margin[~counted[wall.sample]] = np.inf
     if not np.isfinite(margin).any():
         return None
-    of_triangle = margin[wall.mesh.triangles]
-    whole = np.flatnonzero(np.isfinite(of_triangle).all(axis=1))
-    near = whole[np.argsort(of_triangle[whole].min(axis=1), kind="stable")[:REFINED_TRIANGLES]]
     best = int(np.argmin(margin))
+    near = np.flatnonzero((margin <= margin[best] + REFINED_MM)[wall.mesh.triangles].any(axis=1))
+    of_triangle = margin[wall.mesh.triangles[near]]
+    near, of_triangle = near[np.isfinite(of_triangle).all(axis=1)], of_triangle[np.isfinite(of_triangle).all(axis=1)]
+    near = near[np.argsort(of_triangle.min(axis=1), kind="stable")[:REFINED_TRIANGLES]]
     points, samples = vertices[best : best + 1], wall.sample[best : best + 1]
     if len(near):
         fine, owner = _between_corners(vertices, wall.mesh.triangles[near])
