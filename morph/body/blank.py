@@ -31,6 +31,9 @@ from morph.surface.cylinder import CylinderCarrier
 
 __all__ = ["Blank", "Hole", "make_blank"]
 
+LARGEST_MM = 3000.0
+"""No powder bed holds a body this large (common practice, no source); larger ones are mistyped sizes."""
+
 SYNONYMS = {"-z": "foot", "+z": "top"}
 
 
@@ -94,11 +97,12 @@ def make_blank(
         service: the wall of a hole that names none.
 
     Raises:
-        SettingError: `blank-not-a-body`, `blank-thickness-missing`, `blank-face-unknown`,
-            `blank-face-twice`, `blank-no-port-face`, `blank-stock-refused`, `hole-not-a-hole`.
+        SettingError: `blank-not-a-body`, `blank-too-large`, `blank-thickness-missing`,
+            `blank-face-unknown`, `blank-face-twice`, `blank-no-port-face`, `blank-stock-refused`, `hole-not-a-hole`.
         GeometryError: `blank-inside-carrier`, `blank-misses-carrier`, `hole-misses-body`.
     """
     shape = _make_shape(settings.shape, carrier, size_mm)
+    _require_size(shape)
     faces = _assign_roles(_name_faces(shape, carrier), settings)
     _require_sheet_inside(faces, carrier, size_mm)
     clipped = tuple(make_hole(i + 1, hole, faces, service) for i, hole in enumerate(holes))
@@ -108,6 +112,20 @@ def make_blank(
 def _not_a_body(where: str, expected: str, found: str) -> SettingError:
     do = "Correct the sizes; all lengths are mm in the part frame."
     return SettingError("blank-not-a-body", expected=expected, found=found, where=where, do=do)
+
+
+def _require_size(shape: _Shape) -> None:
+    """Raises `blank-too-large` when the body is larger than any machine."""
+    across = 2.0 * (shape.outer_radius_mm or 0.0) if shape.box_mm is None else float(np.ptp(shape.box_mm, axis=0).max())
+    size = max(across, shape.z_mm[1] - shape.z_mm[0])
+    if not size <= LARGEST_MM:
+        raise SettingError(
+            "blank-too-large",
+            expected=f"a body of at most {LARGEST_MM:.0f} mm",
+            found=f"{size:.6g} mm",
+            where="[blank]",
+            do="Give all lengths in mm; check the carrier's radius, the margins and the blank's sizes.",
+        )
 
 
 def _make_shape(

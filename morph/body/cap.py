@@ -42,7 +42,9 @@ def lower_to_taper(bore_mm: Floats, arc_mm: Floats, taper: float = TAPER) -> Flo
     rise = taper * arc_mm
     forth = np.minimum.accumulate(bore_mm - rise) + rise
     back = np.minimum.accumulate((bore_mm + rise)[::-1])[::-1] - rise
-    return np.asarray(np.minimum(bore_mm, np.minimum(forth, back)), dtype=np.float64)
+    # The subtraction and addition of the rise may lose the last digit; nothing lies below the least bore.
+    envelope = np.minimum(bore_mm, np.minimum(forth, back))
+    return np.asarray(np.maximum(envelope, bore_mm.min(initial=np.inf)), dtype=np.float64)
 
 
 def taper_network(network: Network, bore_mm: Floats) -> Floats:

@@ -21,6 +21,9 @@ from morph.settings.job import PortSettings
 ON_FACE_MM = 0.05
 """A given exit lies on a port face when it is this near; it is then moved onto it."""
 
+WINDOW = 30
+"""Steps of the grid of sites to either side of the port; a step is 2.5 to 5 mm."""
+
 NEAREST_SITES, FAR_SITES = 250, 100
 """Sites tried on each face: the nearest to the port, and some of the others."""
 
@@ -62,13 +65,14 @@ def list_sites(
     if isinstance(face, CylinderFace):
         places = _round_grid(blank, face, port_mm, step)
     elif abs(face.normal[2]) > 0.5:
-        places = _polar_grid(blank, face, port_mm, step)
+        places = _polar_grid(face, port_mm, step)
     else:
         places = _square_grid(blank, face, port_mm, step)
-    near = np.argsort(np.round(np.linalg.norm(places - port_mm, axis=1), 9), kind="stable")
+    sites = keep_legal(blank, face, places, bore_mm, leave, limits)
+    near = np.argsort(np.round(np.linalg.norm(sites.xyz_mm - port_mm, axis=1), 9), kind="stable")
     far = near[NEAREST_SITES:]
     chosen = np.concatenate([near[:NEAREST_SITES], far[:: max(1, len(far) // FAR_SITES)]])
-    return keep_legal(blank, face, places[chosen], bore_mm, leave, limits)
+    return Sites(face, sites.xyz_mm[chosen], sites.leave[chosen])
 
 
 def keep_legal(
@@ -88,27 +92,24 @@ def keep_legal(
     return Sites(face, places_mm[keep], directions[keep])
 
 
-def _reach_mm(blank: Blank) -> float:
-    if blank.outer_radius_mm is not None:
-        return blank.outer_radius_mm
-    return float(np.hypot(*np.abs(blank.box_mm[:, :2]).max(axis=0))) if blank.box_mm is not None else 0.0
-
-
 def _spread(centre: float, low: float, high: float, step: float) -> Floats:
-    """Returns the numbers centre + k step in [low, high]."""
-    first, last = int(np.ceil((low - centre) / step)), int(np.floor((high - centre) / step))
+    """Returns the numbers centre + k step in [low, high], at most WINDOW to either side."""
+    first = max(int(np.ceil(max(low - centre, -WINDOW * step) / step)), -WINDOW)
+    last = min(int(np.floor(min(high - centre, WINDOW * step) / step)), WINDOW)
     return np.asarray(centre + step * np.arange(first, last + 1), dtype=np.float64)
 
 
 def _around(port_mm: Floats, radius: float, step: float) -> Floats:
-    start = np.arctan2(port_mm[1], port_mm[0])
-    n = max(1, int(np.ceil(2.0 * np.pi * radius / step)))
-    return np.asarray(start + 2.0 * np.pi * np.arange(n) / n, dtype=np.float64)
+    """Returns angles about z from the port's own, `step` apart on `radius`: the whole turn or WINDOW each way."""
+    start = float(np.arctan2(port_mm[1], port_mm[0]))
+    n = max(1, int(np.ceil(min(2.0 * np.pi * radius / step, 1e6))))
+    turn = 2.0 * np.pi * np.arange(n) / n if n <= 2 * WINDOW else np.arange(-WINDOW, WINDOW + 1) * (step / radius)
+    return np.asarray(start + turn, dtype=np.float64)
 
 
-def _polar_grid(blank: Blank, face: PlaneFace, port_mm: Floats, step: float) -> Floats:
+def _polar_grid(face: PlaneFace, port_mm: Floats, step: float) -> Floats:
     rings = []
-    for radius in _spread(float(np.hypot(*port_mm[:2])), 0.0, _reach_mm(blank), step):
+    for radius in _spread(float(np.hypot(*port_mm[:2])), 0.0, np.inf, step):
         angle = _around(port_mm, float(radius), step)
         rings.append(np.column_stack([radius * np.cos(angle), radius * np.sin(angle)]))
     flat = np.concatenate([*rings, np.zeros((1, 2))])
@@ -118,8 +119,7 @@ def _polar_grid(blank: Blank, face: PlaneFace, port_mm: Floats, step: float) -> 
 def _square_grid(blank: Blank, face: PlaneFace, port_mm: Floats, step: float) -> Floats:
     axis = int(np.abs(face.normal).argmax())
     across = 1 - axis
-    reach = _reach_mm(blank)
-    u, v = np.meshgrid(_spread(port_mm[across], -reach, reach, step), _spread(port_mm[2], *blank.z_mm, step))
+    u, v = np.meshgrid(_spread(port_mm[across], -np.inf, np.inf, step), _spread(port_mm[2], *blank.z_mm, step))
     places = np.zeros((u.size, 3))
     places[:, axis], places[:, across], places[:, 2] = face.origin_mm[axis], u.ravel(), v.ravel()
     return places
@@ -180,7 +180,7 @@ def given_exit(blank: Blank, port: PortSettings, bore_mm: float, limits: Limits)
     nearest, name = nearest_on_port_face(blank, wanted)
     off = float(np.linalg.norm(nearest - wanted))
     where = f"[[port]] '{port.name}' exit_mm"
-    if off > ON_FACE_MM:
+    if not off <= ON_FACE_MM:
         x, y, z = nearest
         raise GeometryError(
             "exit-off-port-face",

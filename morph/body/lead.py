@@ -123,7 +123,7 @@ def lay_leads(ground: Ground, ports: Sequence[PortStart], progress: Progress) ->
     Args:
         ground: body, carrier, limits and channels.
         ports: the ports in the job's order.
-        progress: told after each lead.
+        progress: told before each search of each lead.
 
     Raises:
         GeometryError: `lead-blocked` names what blocks the best way found; `exit-off-port-face`,
@@ -136,9 +136,8 @@ def lay_leads(ground: Ground, ports: Sequence[PortStart], progress: Progress) ->
         tried.add(tuple(order))
         laid: dict[int, Lead] = {}
         for k in order:
-            progress.step("leads", len(laid), len(ports))
             try:
-                laid[k] = _lay_lead(_surround(ground, ports[k], laid, ports), ground, ports[k])
+                laid[k] = _lay_lead(_surround(ground, ports[k], laid, ports), ground, ports[k], progress)
             except _Blocked as blocked:
                 again = [k, *(other for other in order if other != k)]
                 if order[0] == k or tuple(again) in tried:
@@ -179,10 +178,11 @@ def _surround(ground: Ground, port: PortStart, laid: dict[int, Lead], ports: Seq
     return Surroundings(ground.blank, ground.limits, network, cKDTree(network.xyz_mm), port.node)
 
 
-def _lay_lead(around: Surroundings, ground: Ground, port: PortStart) -> Lead:
+def _lay_lead(around: Surroundings, ground: Ground, port: PortStart, progress: Progress) -> Lead:
     best: tuple[Judged, str] | None = None
     tried: set[tuple[bool, bool, float]] = set()
-    for kinked, detour, share in SEARCHES:
+    for done, (kinked, detour, share) in enumerate(SEARCHES):
+        progress.step(f"lead of {port.settings.name}", done, len(SEARCHES))
         bore = max(share * port.bore_mm, min(ground.limits.least_bore_mm, port.bore_mm))
         headings = _headings(port, kinked)
         if not headings or (kinked, detour, bore) in tried:

@@ -18,6 +18,9 @@ from morph.settings.job import CarrierSettings, SectionSettings, ServiceSettings
 from morph.settings.profile import Profile
 from morph.surface.carrier import Carrier
 
+LEAST_BORE_MM = 0.5
+"""No process leaves a smaller channel open (common practice, no source), and the field would lose it."""
+
 LENGTH_ORDER = 20
 """Gauss points per knot span for lengths: a span that turns by 90 degrees is still exact to about 1e-10."""
 
@@ -79,7 +82,7 @@ def bore_range_mm(section: SectionSettings, service: ServiceSettings, profile: P
     """Returns the least and greatest bore allowed: the job's own, or what service and process leave.
 
     Raises:
-        SettingError: `bore-range-empty` when the least is not a positive number or exceeds the greatest.
+        SettingError: `bore-range-empty` when the least is below LEAST_BORE_MM or exceeds the greatest.
     """
     if section.bore_range_mm is not None:
         low, high, where = *section.bore_range_mm, "[section] bore_range_mm"
@@ -87,10 +90,10 @@ def bore_range_mm(section: SectionSettings, service: ServiceSettings, profile: P
         low = max(service.smallest_bore_mm, profile.smallest_bore_mm.value)
         high = profile.largest_bore_mm.value
         where = f"[service] smallest_bore_mm and the process profile {profile.name}"
-    if not 0.0 < low <= high < np.inf:
+    if not LEAST_BORE_MM <= low <= high < np.inf:
         raise SettingError(
             "bore-range-empty",
-            expected="a least bore above 0 mm and not above the greatest",
+            expected=f"a least bore of {LEAST_BORE_MM} mm or more, not above the greatest",
             found=f"{low:.3f} mm to {high:.3f} mm",
             where=where,
             do="Give [section] bore_range_mm with two increasing bores, or lower smallest_bore_mm.",

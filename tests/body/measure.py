@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import networkx as nx
 import numpy as np
 from scipy.spatial import cKDTree
 
@@ -43,23 +44,26 @@ def hole_walls(blank, branch):
         yield hole, distance - hole.diameter_mm / 2 - bore / 2
 
 
-def apart(plan, one, two, clear_mm):
-    """Least wall between two branches, leaving out what is within `clear_mm` along either of a shared node."""
-    shared = {one.start, one.end} & {two.start, two.end}
-    kept = []
-    for branch in (one, two):
-        points, bore, at = dense(branch)
-        keep = np.ones(len(points), dtype=bool)
-        if branch.start in shared:
-            keep &= at > clear_mm
-        if branch.end in shared:
-            keep &= at[-1] - at > clear_mm
-        kept.append((points[keep], bore[keep]))
-    (a, bore_a), (b, bore_b) = kept
-    if not len(a) or not len(b):
-        return np.inf
-    distance, near = cKDTree(b).query(a)
-    return float((distance - bore_a / 2 - bore_b[near] / 2).min())
+def node_ways(plan):
+    """Shortest ways along the branches between all nodes, by a general-purpose graph library."""
+    graph = nx.MultiGraph()
+    for branch in plan.branches:
+        graph.add_edge(branch.start, branch.end, weight=dense(branch)[2][-1])
+    return dict(nx.all_pairs_dijkstra_path_length(graph))
+
+
+def apart(plan, one, two, clear_mm, ways=None):
+    """Least wall between two branches over places more than `clear_mm` apart along the channels, inf if wider than 12 mm."""
+    ways = ways or node_ways(plan)
+    (a, bore_a, at_a), (b, bore_b, at_b) = dense(one), dense(two)
+    close = cKDTree(a).sparse_distance_matrix(cKDTree(b), 12.0, output_type="ndarray")
+    i, j = close["i"], close["j"]
+    way = np.full(len(i), np.inf)
+    for near, rest in ((one.start, at_a[i]), (one.end, at_a[-1] - at_a[i])):
+        for far, tail in ((two.start, at_b[j]), (two.end, at_b[-1] - at_b[j])):
+            way = np.minimum(way, rest + ways[near].get(far, np.inf) + tail)
+    wall = close["v"] - bore_a[i] / 2 - bore_b[j] / 2
+    return float(wall[way > clear_mm].min(initial=np.inf))
 
 
 def sharpest_bend_bores(branch, reach=4):

@@ -177,3 +177,16 @@ def test_a_blank_that_misses_the_sheet_says_by_how_much():
     assert "0.500 mm outside face 'inner'" in error.found
     # A box side that cuts the face under the sheet: the half-sheet spans 60/2/22 rad on the face.
     refused("blank-misses-carrier", BoxBlankSettings((10, -80, -40), (80, 80, 40)))
+
+
+@pytest.mark.parametrize(
+    ("shape", "metal"),
+    [
+        (CarrierBlankSettings((10.0, 1e4)), CORE),
+        (CarrierBlankSettings(thickness_mm=1e9), JACKET),
+        (BoxBlankSettings((-50, -1e7, -40), (50, 55, 40)), JACKET),
+        (CylinderBlankSettings(40.0, (-40.0, float("inf"))), CORE),
+    ],
+)
+def test_a_body_larger_than_any_machine_is_refused(shape, metal):
+    assert "3000 mm" in refused("blank-too-large", shape, metal).expected

@@ -104,3 +104,10 @@ def test_two_exits_too_near_are_refused_before_any_search():
             straight_line(), exits={"in": {"exit_mm": (10.0, 0.0, -35.0)}, "out": {"exit_mm": (10.0, 5.0, -35.0)}}
         ).plan()
     assert caught.value.code == "exits-too-near" and "5.000 mm" in caught.value.found
+
+
+def test_sites_of_a_large_blank_stay_few():
+    """The grid of sites does not grow with the body."""
+    it = Scene(straight_line(), radius_mm=1450.0)
+    sites = list_sites(it.blank, it.blank.face("foot"), np.array([1442.0, 0.0, -20.0]), 5.0, None, it.limits)
+    assert 10 < len(sites.xyz_mm) < 1000

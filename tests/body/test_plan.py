@@ -17,6 +17,8 @@ pytestmark = pytest.mark.quick
 
 JACKET = {"metal": Metal.AWAY_FROM_AXIS, "radius_mm": 30.0}
 BAND = 0.2
+WEB_MM = 26.0
+"""Nearer than this along the channels two places bound a junction, not a wall: 3 times bore plus wall."""
 PIN = HoleSettings((6.0, 0.0, -51.0), (0, 0, 1), 8.0)
 SCENES = {
     "line": Scene(straight_line()),
@@ -82,10 +84,10 @@ def test_every_wall_to_faces_and_holes_holds(built):
 
 def test_leads_keep_their_wall_to_channels_and_to_each_other(built):
     _, plan = built
+    ways = measure.node_ways(plan)
     for one, two in itertools.combinations(plan.branches, 2):
         if BranchKind.LEAD in (one.kind, two.kind):
-            # A junction's web reaches at most about two bores plus wall along each branch.
-            wall = measure.apart(plan, one, two, 18.0)
+            wall = measure.apart(plan, one, two, WEB_MM, ways)
             assert wall - BAND >= 3.0 - 0.02, (one.id, two.id, wall)
 
 
@@ -267,3 +269,10 @@ def test_progress_is_told_and_may_stop_the_work():
             make_plan(
                 scene.wrapped, scene.blank, scene.ports, scene.section, scene.service, scene.made_profile, Stop(at)
             )
+
+
+def test_a_start_without_room_is_kinked_and_named():
+    """10 mm above the sheet a U-turn does not fit at full bore: the lead dives from the port at an angle."""
+    plan = SCENES["default margin"].plan()
+    (notice,) = [notice for notice in plan.notices if notice.code == "lead-kinked"]
+    assert notice.branch_ids == ("L-top",) and "deg" in notice.text

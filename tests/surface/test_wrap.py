@@ -1,5 +1,6 @@
 """Lengths, depth and distortion of a wrapped graph against closed forms."""
 
+import itertools
 import math
 
 import numpy as np
@@ -61,7 +62,7 @@ def test_curved_lengths_agree_with_adaptive_quadrature():
             return math.hypot(scale * dx, dy)
 
         breaks = np.unique(branch.curve.knots)
-        reference = sum(quad(speed, a, b, epsabs=1e-12)[0] for a, b in zip(breaks, breaks[1:], strict=False))
+        reference = sum(quad(speed, a, b, epsabs=1e-12)[0] for a, b in itertools.pairwise(breaks))
         # The longest span of these curves is a whole branch that turns by about 40 degrees.
         assert laid.length_mm == pytest.approx(reference, rel=1e-9)
 
@@ -118,7 +119,7 @@ def test_depth_wants_exactly_one_way(carrier):
     assert caught.value.code == "depth-not-one-way"
 
 
-@pytest.mark.parametrize("allowed", [(5.0, 3.0), (0.0, 4.0), (-1.0, 4.0), (math.nan, 4.0), (3.0, math.inf)])
+@pytest.mark.parametrize("allowed", [(5.0, 3.0), (0.0, 4.0), (0.49, 4.0), (-1.0, 4.0), (math.nan, 4.0), (3.0, math.inf)])
 def test_a_bore_range_must_hold_a_bore(allowed):
     with pytest.raises(MorphError) as caught:
         depth(
