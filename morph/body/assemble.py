@@ -10,8 +10,8 @@ import numpy as np
 from morph.body.blank import Blank
 from morph.body.cap import BORE_SLACK_MM, find_merges, list_caps
 from morph.body.flow_path import connected_pieces, through_flow
-from morph.body.lead import Lead
-from morph.body.neighbour import Network, Strand, count_as_wall, make_network, near_pairs, polyline_arc_mm, room_beside
+from morph.body.lead import Lead, lead_strand
+from morph.body.neighbour import Network, Strand, count_as_wall, make_network, near_pairs, room_beside
 from morph.body.plan import BranchKind, ChannelPlan, Exit, PlanBranch, PlanNode
 from morph.body.room import Limits, Room, measure_room, way_out, with_neighbours
 from morph.core.arrays import Bools, Floats, Ints
@@ -81,13 +81,6 @@ def assemble_plan(parts: Parts, blend_mm: float, notices: Sequence[Notice]) -> C
         blend_mm=blend_mm,
         notices=(*notices, *_room_notices(parts, branches), *_lead_notices(parts.leads)),
     )
-
-
-def lead_strand(lead: Lead, end: int) -> Strand:
-    """Returns the lead as a strand that ends at node index `end`."""
-    path = lead.path
-    name = f"L-{lead.port.settings.name}"
-    return Strand(name, lead.port.node, end, path.xyz_mm, polyline_arc_mm(path.xyz_mm), path.bore_mm)
 
 
 def _through(parts: Parts, strands: Sequence[Strand]) -> Bools:

@@ -125,11 +125,12 @@ def two_bends(start: Start, sites: Sites, bend: Bend, carrier: Carrier | None) -
     for wider in DEVELOPED_WIDER if carrier is not None else (1.0,):
         radius = wider * bend.radius_mm
         lowest = bend.straight_mm + radius
-        level = np.maximum(((exits - origin) * leave).sum(axis=1), 0.0)
-        level = np.maximum(level - radius * (leave @ heading), lowest)
+        # Height of the first corner above the face: of the port, and higher where the port heads away from it.
+        away = -(leave @ heading)
+        level = np.maximum(np.maximum(((exits - origin) * leave).sum(axis=1), 0.0) + radius * away, lowest)
         for extra in EXTRA_BENDS:
             for share in LEVELS:
-                height = lowest + share * (level + np.maximum(-extra * radius * (leave @ heading), 0.0) - lowest)
+                height = lowest + share * (level + np.maximum(extra * radius * away, 0.0) - lowest)
                 last = exits - height[:, None] * leave
                 n = len(exits)
                 radii = np.full(n, radius)
