@@ -237,14 +237,15 @@ def check_between(subject: CheckSubject, lines: Centrelines, wall: ChannelWall |
         walls = confirmed + walls[CONFIRMED:]
     walls = _without_repeats(walls, lines)
     rows = _merge_rows(subject, walls, lines)
-    merged = {frozenset(row.branch_ids) for row in rows}
-    walls = [item for item in walls if frozenset(item.branch_ids) not in merged]
+    walls = [item for item in walls if item.wall_mm > 0.0]
     thin = [item for item in walls if judge_length(item.wall_mm, limit.value, band) is Outcome.FAIL]
     for item in (thin or walls[:1])[:MOST_NAMED]:
         rows.append(_between_row(item, len(thin), limit, band, lines))
-    if not walls:
+    if not walls and not rows:
         rows.append(_wide_row(limit, band))
+    named = {frozenset(row.branch_ids) for row in rows if row.outcome is Outcome.FAIL}
     ribs = [item for item in found if item.rib and item.wall_mm < limit.value]
+    ribs = [item for item in ribs if frozenset(item.branch_ids) not in named]
     if ribs:
         rows.append(_rib_row(ribs, limit, band, lines))
     return rows
@@ -275,22 +276,29 @@ def _without_repeats(walls: list[BetweenFinding], lines: Centrelines) -> list[Be
 
 
 def _merge_rows(subject: CheckSubject, walls: list[BetweenFinding], lines: Centrelines) -> list[Verdict]:
-    """Returns one failing row per pair that runs together: what the centrelines show, then what the plan says."""
+    """Returns one failing row per pair that runs together: no metal left, or by the plan too little to print.
+
+    Pairs of the plan that print, only miss the service wall and are among `walls` are left to `wall-between`.
+    """
+    process_mm, band_mm = subject.profile.wall_mm.value, wall_band_mm(subject.profile)
     found = [
         (item.branch_ids, item.wall_mm, item.xyz_mm, lines.sheet_of(item.samples[0]))
         for item in walls
         if item.wall_mm <= 0.0
     ]
     seen = {frozenset(item[0]) for item in found}
+    measured = {frozenset(item.branch_ids) for item in walls}
     for merge in subject.plan.merges:
-        if frozenset(merge.branch_ids) not in seen:
+        pair = frozenset(merge.branch_ids)
+        prints = judge_length(merge.wall_mm, process_mm, band_mm) is not Outcome.FAIL
+        if pair not in seen and not (prints and pair in measured):
             sheet = lines.sheet_of(int(np.argmin(((lines.xyz_mm - merge.xyz_mm) ** 2).sum(axis=1))))
             found.append((merge.branch_ids, merge.wall_mm, merge.xyz_mm, sheet))
     return [_merge_row(*item) for item in sorted(found, key=lambda item: (item[1], item[0]))]
 
 
 def _merge_row(ids: tuple[str, str], wall_mm: float, xyz_mm: Place, sheet_mm: tuple[float, float] | None) -> Verdict:
-    how = f"run together over {-wall_mm:.2f} mm" if wall_mm <= 0.0 else f"keep only {wall_mm:.2f} mm of metal between"
+    how = f"overlap by {-wall_mm:.2f} mm" if wall_mm <= 0.0 else f"keep only {wall_mm:.2f} mm of metal"
     pair = f"{ids[0]} and {ids[1]}" if ids[0] != ids[1] else f"Two runs of {ids[0]}"
     return Verdict(
         "branches-merge",

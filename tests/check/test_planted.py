@@ -108,11 +108,19 @@ def test_merged_pair():
 
 
 def test_merges_named_by_the_plan(sound):
-    plan = dataclasses.replace(sound.plan, merges=(Merge(("B1", "B2"), (30.0, 8.0, 15.0), 0.4),))
+    merges = (Merge(("B1", "B2"), (30.0, 8.0, 15.0), 0.4),)
+    plan = dataclasses.replace(sound.plan, merges=merges)
     found = check_insert(dataclasses.replace(sound, plan=plan))
     merge = [v for v in found if v.code == "branches-merge"]
     assert [(v.outcome, v.value, v.branch_ids) for v in merge] == [(Outcome.FAIL, 0.4, ("B1", "B2"))]
     assert [v.outcome for v in found if v.code == "genus"] == [Outcome.NOT_CHECKED]
+
+
+def test_a_merge_that_prints_is_a_thin_wall():
+    """A pair the plan could not thin to the service wall but that prints is one row, not two."""
+    plan = dataclasses.replace(crossing(7.5), merges=(Merge(("A-B1", "B-B1"), (30.0, 20.0, 19.0), 2.0),))
+    subject = subject_of(plan, box_blank(**BOX))
+    assert rows(subject, "branches-merge") == [] and rows(subject, "wall-between")[0].outcome is Outcome.FAIL
 
 
 def test_hairpin_of_one_branch():
