@@ -119,7 +119,9 @@ def test_depth_wants_exactly_one_way(carrier):
     assert caught.value.code == "depth-not-one-way"
 
 
-@pytest.mark.parametrize("allowed", [(5.0, 3.0), (0.0, 4.0), (0.49, 4.0), (-1.0, 4.0), (math.nan, 4.0), (3.0, math.inf)])
+@pytest.mark.parametrize(
+    "allowed", [(5.0, 3.0), (0.0, 4.0), (0.49, 4.0), (-1.0, 4.0), (math.nan, 4.0), (3.0, math.inf)]
+)
 def test_a_bore_range_must_hold_a_bore(allowed):
     with pytest.raises(MorphError) as caught:
         depth(
