@@ -9,6 +9,10 @@ from morph.layout.web import Run, Web, arc_mm, is_parallel, line_through, measur
 
 AIM_SPREAD = 0.2
 """Lines that miss their common point by more than this many radii (rms) do not aim at one point."""
+AIM_REACH = 1.6
+"""A junction moves at most this many radii: where channels meet at a slant, thinning joins them late."""
+AIM_SHARE = 0.4
+"""... and at most this share of the shortest run that meets it."""
 LINE_STRETCH, BENT_STRETCH = 1.5, 3.0
 """A line is fitted to this many radii of free samples, a parabola to that many."""
 BENT_GAIN = 4.0
@@ -54,7 +58,7 @@ def place_junctions(web: Web) -> None:
 
     A line is fitted to the free samples within one and a half half-widths of the zone's end. The
     junction stays where it is when the lines are near parallel, miss each other by more than a fifth
-    of its radius, or meet further off than its radius.
+    of its radius, or meet further off than 1.6 radii.
     """
     for key in sorted(web.joints):
         if web.degree(key) < 3:
@@ -65,8 +69,32 @@ def place_junctions(web: Web) -> None:
         if aim is None:
             continue
         place, spread = aim
-        if np.hypot(*(place - joint.place_mm)) < joint.radius_mm and spread < AIM_SPREAD * joint.radius_mm:
+        reach = min(AIM_REACH * joint.radius_mm, AIM_SHARE * min(run.length_mm for _, run in web.leaving(key)))
+        if np.hypot(*(place - joint.place_mm)) < reach and spread < AIM_SPREAD * joint.radius_mm:
             move_joint(web, key, place)
+            _pass_over(web, key)
+
+
+def _pass_over(web: Web, key: int) -> None:
+    """Drops the samples of each run that the moved joint `key` has passed; those in its disc are free no more."""
+    place, radius_mm = web.joints[key].place_mm, web.joints[key].radius_mm
+    for run_key in web.at[key]:
+        run = web.runs[run_key]
+        if run.start == run.end or run.free is None:
+            continue
+        away = np.hypot(*(run.place_mm - place).T)
+        run.free = run.free & (away >= radius_mm)
+        n = len(away)
+        ahead = away if run.start == key else away[::-1]
+        passed = int(np.argmin(np.where(np.arange(n) < n // 2, ahead, np.inf)[1:])) + 1
+        passed = min(passed, n - 5)
+        if passed < 2 or ahead[passed] > radius_mm:
+            continue
+        keep = np.concatenate([[0], np.arange(passed + 1, n)])
+        if run.end == key:
+            keep = (n - 1 - keep)[::-1]
+        run.place_mm, run.half_mm, run.free = run.place_mm[keep], run.half_mm[keep], run.free[keep]
+        run.length_mm = measure_length_mm(run.place_mm)
 
 
 def _aim(lines: list[tuple[Floats, Floats]]) -> tuple[Floats, float] | None:
