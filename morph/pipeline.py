@@ -130,7 +130,7 @@ def make_records(job: Job, clock: _Clock) -> BuildRecords:
         blank = make_blank(job.blank, job.holes, carrier, graph.size_mm, job.service)
         plan = make_plan(wrapped, blank, job.ports, job.section, job.service, profile, progress)
 
-    from morph.check import CheckSubject, check_insert, measure_fields
+    from morph.check import CheckSubject, check_insert, measure_fields, measure_insert
     from morph.solid.channel import make_channel_solid
     from morph.solid.cut import make_insert
     from morph.solid.field import choose_h_mm
@@ -150,8 +150,9 @@ def make_records(job: Job, clock: _Clock) -> BuildRecords:
             service=job.service,
             build_direction=job.printing.build_direction,
         )
-        verdicts = sort_verdicts(check_insert(subject) + _not_checked())
-        fields = measure_fields(subject)
+        measured = measure_insert(subject, progress)
+        verdicts = sort_verdicts(check_insert(subject, progress, measured) + _not_checked())
+        fields = measure_fields(subject, measured)
     return BuildRecords(
         job=job,
         density=density,

@@ -21,14 +21,10 @@ from morph.body.blank import Blank
 from morph.body.face import Face, FaceRole
 from morph.body.hole import distance_to_hole_mm
 from morph.core.arrays import Bools, Floats, Ints
+from morph.core.tolerance import BUILD_MM
 from morph.settings.job import SectionSettings, ServiceSettings
 from morph.settings.profile import Profile
 from morph.surface.wrap import bore_range_mm
-
-BUILD_MM = 0.03
-"""Planned on top of every wall, so that a wall built at its limit still passes on the written mesh: field 0.011 mm,
-simplification 0.008 mm, and samples up to 1 mm apart on a bend."""
-
 
 STEEPNESS = 0.5
 """A channel is on its way out of a face while it nears it by at least this per mm (30 degrees to the face)."""

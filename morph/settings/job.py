@@ -201,7 +201,7 @@ class HoleSettings:
 
 @dataclass(frozen=True, slots=True)
 class QualitySettings:
-    """The [quality] table: `h_mm` None means clamp(smallest bore / 16, 0.15, 0.30)."""
+    """The [quality] table: `h_mm` None means clamp(smallest bore / 12, 0.15, 0.30)."""
 
     h_mm: float | None = None
 

@@ -12,6 +12,7 @@ import numpy as np
 
 from morph.core.arrays import Floats, frozen_floats, unit_rows
 from morph.core.errors import SettingError
+from morph.core.tolerance import BUILD_MM
 from morph.geometry.curve import curve_at, gauss_on_spans
 from morph.layout.graph import Branch, ChannelGraph
 from morph.settings.job import CarrierSettings, SectionSettings, ServiceSettings
@@ -81,13 +82,16 @@ class WrappedGraph:
 def bore_range_mm(section: SectionSettings, service: ServiceSettings, profile: Profile) -> tuple[float, float]:
     """Returns the least and greatest bore allowed: the job's own, or what service and process leave.
 
+    The process leaves its bore band (and what meshing may take) above the smallest bore, so that a bore built at
+    the least one still passes after its band.
+
     Raises:
         SettingError: `bore-range-empty` when the least is below LEAST_BORE_MM or exceeds the greatest.
     """
     if section.bore_range_mm is not None:
         low, high, where = *section.bore_range_mm, "[section] bore_range_mm"
     else:
-        low = max(service.smallest_bore_mm, profile.smallest_bore_mm.value)
+        low = max(service.smallest_bore_mm, profile.smallest_bore_mm.value) + profile.bore_band_mm.value + BUILD_MM
         high = profile.largest_bore_mm.value
         where = f"[service] smallest_bore_mm and the process profile {profile.name}"
     if not LEAST_BORE_MM <= low <= high < np.inf:

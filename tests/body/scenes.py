@@ -42,7 +42,8 @@ class Scene:
     stock_mm: tuple = ()
     holes: tuple[HoleSettings, ...] = ()
     service: ServiceSettings = field(default_factory=ServiceSettings)
-    section: SectionSettings = field(default_factory=SectionSettings)
+    # Round numbers for hand-worked figures; by itself the range starts a band above the smallest bore.
+    section: SectionSettings = field(default_factory=lambda: SectionSettings(bore_range_mm=(3.0, 12.0)))
     profile: Profile = None
     exits: dict = None
 

@@ -7,8 +7,8 @@ import numpy as np
 import pytest
 
 from morph.body.cap import TAPER, lower_to_taper
-from morph.body.room import BUILD_MM
 from morph.core.errors import MorphError
+from morph.core.tolerance import BUILD_MM
 from morph.settings.job import HoleSettings, SectionSettings, ServiceSettings
 from tests.body.scenes import Scene
 from tests.surface.graphs import ladder, make_graph, straight_line

@@ -17,14 +17,14 @@ from tests.solid import plans
 pytestmark = pytest.mark.quick
 
 
-@pytest.mark.parametrize(("bore", "h"), [(1.0, 0.15), (2.4, 0.15), (4.0, 0.25), (4.8, 0.30), (9.0, 0.30)])
-def test_h_is_a_sixteenth_of_the_bore_between_bounds(bore, h):
+@pytest.mark.parametrize(("bore", "h"), [(1.0, 0.15), (1.8, 0.15), (3.0, 0.25), (3.6, 0.30), (9.0, 0.30)])
+def test_h_is_a_twelfth_of_the_bore_between_bounds(bore, h):
     assert choose_h_mm(plans.straight_pipe(bore), QualitySettings()) == pytest.approx(h)
 
 
 def test_the_smallest_bore_of_any_branch_decides():
     plan = plans.tee(bore_mm=4.8)
-    thin = dataclasses.replace(plan.branches[2], bore_mm=np.linspace(4.8, 3.2, len(plan.branches[2].bore_mm)))
+    thin = dataclasses.replace(plan.branches[2], bore_mm=np.linspace(4.8, 2.4, len(plan.branches[2].bore_mm)))
     plan = dataclasses.replace(plan, branches=(*plan.branches[:2], thin, *plan.branches[3:]))
     assert choose_h_mm(plan, QualitySettings()) == pytest.approx(0.2)
     assert choose_h_mm(plan, QualitySettings(h_mm=0.4)) == 0.4
