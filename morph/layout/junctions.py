@@ -2,23 +2,36 @@
 
 from __future__ import annotations
 
+from dataclasses import dataclass
+
 import numpy as np
 
 from morph.core.arrays import Floats
 from morph.layout.web import Run, Web, arc_mm, is_parallel, line_through, measure_length_mm, merge_along
 
 AIM_SPREAD = 0.2
-"""Lines that miss their common point by more than this many radii (rms) do not aim at one point."""
+"""Lines that miss their common point by more than this many of their half-widths (rms) do not aim at one point."""
 AIM_REACH = 1.6
 """A junction moves at most this many radii: where channels meet at a slant, thinning joins them late."""
 AIM_SHARE = 0.4
 """... and at most this share of the shortest run that meets it."""
-LINE_STRETCH, BENT_STRETCH = 1.5, 3.0
-"""A line is fitted to this many radii of free samples, a parabola to that many."""
+LINE_STRETCH, BENT_STRETCH = 1.8, 3.5
+"""A line is fitted to this many half-widths of free samples, a parabola to that many."""
 BENT_GAIN = 4.0
 """A parabola counts when it leaves this many times less than the line."""
+MOST_TURN = 0.35
+"""A parabola that turns more than this (slope) between its last sample and the joint tells nothing there."""
 MERGE_SPREAD = 0.3
 """The same for the channels of two junctions that may be one."""
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Line:
+    """The line along which a run reaches its joint: a place on it, its direction, the run's half-width."""
+
+    place_mm: Floats
+    direction: Floats
+    half_mm: float
 
 
 def merge_aimed(web: Web, ratio: float = 2.6) -> int:
@@ -42,12 +55,12 @@ def merge_aimed(web: Web, ratio: float = 2.6) -> int:
             line
             for joint in (run.start, run.end)
             for other, leaving in web.leaving(joint)
-            if other != key and (line := _line_near(leaving, radius)) is not None
+            if other != key and (line := _line_near(leaving)) is not None
         ]
         n_others = web.degree(run.start) + web.degree(run.end) - 2
         aim = _aim(lines) if len(lines) == n_others else None
         middle = 0.5 * (web.joints[run.start].place_mm + web.joints[run.end].place_mm)
-        if aim is not None and aim[1] < MERGE_SPREAD * radius and np.hypot(*(aim[0] - middle)) < radius:
+        if aim is not None and aim[1] < MERGE_SPREAD and np.hypot(*(aim[0] - middle)) < radius:
             merge_along(web, key)
             n_merged += 1
     return n_merged
@@ -56,21 +69,21 @@ def merge_aimed(web: Web, ratio: float = 2.6) -> int:
 def place_junctions(web: Web) -> None:
     """Moves each junction to the point nearest, in the least-squares sense, to the lines its free runs make near it.
 
-    A line is fitted to the free samples within one and a half half-widths of the zone's end. The
+    A line is fitted to the free samples within two half-widths of the zone's end. The
     junction stays where it is when the lines are near parallel, miss each other by more than a fifth
-    of its radius, or meet further off than 1.6 radii.
+    of their half-widths, or meet further off than 1.6 radii.
     """
     for key in sorted(web.joints):
         if web.degree(key) < 3:
             continue
         joint = web.joints[key]
-        lines = [line for _, run in web.leaving(key) if (line := _line_near(run, joint.radius_mm)) is not None]
+        lines = [line for _, run in web.leaving(key) if (line := _line_near(run)) is not None]
         aim = _aim(lines)
         if aim is None:
             continue
         place, spread = aim
         reach = min(AIM_REACH * joint.radius_mm, AIM_SHARE * min(run.length_mm for _, run in web.leaving(key)))
-        if np.hypot(*(place - joint.place_mm)) < reach and spread < AIM_SPREAD * joint.radius_mm:
+        if np.hypot(*(place - joint.place_mm)) < reach and spread < AIM_SPREAD:
             move_joint(web, key, place)
             _pass_over(web, key)
 
@@ -97,23 +110,32 @@ def _pass_over(web: Web, key: int) -> None:
         run.length_mm = measure_length_mm(run.place_mm)
 
 
-def _aim(lines: list[tuple[Floats, Floats]]) -> tuple[Floats, float] | None:
-    """Returns the point nearest to all lines and its rms distance from them; None when they are near parallel."""
+def _aim(lines: list[Line]) -> tuple[Floats, float] | None:
+    """Returns the point nearest to all lines and its rms distance from them in their half-widths.
+
+    A line counts with the inverse square of its channel's half-width: a narrow channel tells its
+    junction more exactly than a wide one. None when the lines are near parallel.
+    """
+    if not lines:
+        return None
+    finest = min(line.half_mm for line in lines)
     matrix, vector, square = np.zeros((2, 2)), np.zeros(2), 0.0
-    for middle, direction in lines:
-        across = np.eye(2) - np.outer(direction, direction)
+    for line in lines:
+        weight = (finest / line.half_mm) ** 2
+        across = weight * (np.eye(2) - np.outer(line.direction, line.direction))
         matrix += across
-        vector += across @ middle
-        square += float(middle @ across @ middle)
+        vector += across @ line.place_mm
+        square += float(line.place_mm @ across @ line.place_mm)
     (a, b), (_, d) = matrix
-    if 0.5 * (a + d) - float(np.hypot(0.5 * (a - d), b)) < 0.15:
+    smallest = 0.5 * (a + d) - float(np.hypot(0.5 * (a - d), b))
+    if smallest < 0.15 * (finest / max(line.half_mm for line in lines)) ** 2:
         return None
     place = np.array([d * vector[0] - b * vector[1], a * vector[1] - b * vector[0]]) / (a * d - b * b)
     rest = square - 2.0 * float(vector @ place) + float(place @ matrix @ place)
-    return place, float(np.sqrt(max(0.0, rest) / len(lines)))
+    return place, float(np.sqrt(max(0.0, rest) / len(lines))) / finest
 
 
-def _line_near(run: Run, radius_mm: float) -> tuple[Floats, Floats] | None:
+def _line_near(run: Run) -> Line | None:
     """Returns a point on, and the direction of, the line along which `run` reaches its first joint.
 
     A straight line is fitted to the first free samples. Where a parabola over a longer stretch fits much
@@ -125,12 +147,14 @@ def _line_near(run: Run, radius_mm: float) -> tuple[Floats, Floats] | None:
     if not len(free):
         return None
     usable = run.free & (arc >= arc[free[0]]) & (arc < 0.6 * arc[-1])
-    chosen = run.place_mm[usable & (arc <= arc[free[0]] + LINE_STRETCH * radius_mm)]
+    half_mm = float(np.median(run.half_mm[usable])) if usable.any() else 0.0
+    chosen = run.place_mm[usable & (arc <= arc[free[0]] + LINE_STRETCH * half_mm)]
     if len(chosen) < 3:
         return None
-    line = line_through(chosen)
-    bent = run.place_mm[usable & (arc <= arc[free[0]] + BENT_STRETCH * radius_mm)]
-    return (_bent_line(bent, run.place_mm[0]) if len(bent) >= 6 else None) or line
+    bent = run.place_mm[usable & (arc <= arc[free[0]] + BENT_STRETCH * half_mm)]
+    found = _bent_line(bent, run.place_mm[0]) if len(bent) >= 6 else None
+    place, direction = found or line_through(chosen)
+    return Line(place, direction, half_mm)
 
 
 def _bent_line(place_mm: Floats, joint_mm: Floats) -> tuple[Floats, Floats] | None:
@@ -147,6 +171,9 @@ def _bent_line(place_mm: Floats, joint_mm: Floats) -> tuple[Floats, Floats] | No
     at = float((joint_mm - middle) @ direction)
     point = middle + at * direction + (factor[0] + factor[1] * at + factor[2] * at**2) * across
     slope = factor[1] + 2.0 * factor[2] * at
+    nearest = float(np.clip(at, u.min(), u.max()))
+    if abs(2.0 * factor[2] * (at - nearest)) > MOST_TURN or abs(slope) > 1.0:
+        return None
     return point, (direction + slope * across) / float(np.hypot(1.0, slope))
 
 
