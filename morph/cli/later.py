@@ -12,7 +12,6 @@ _LATER = {
     "page": "the local page",
     "vary": "a study of many variants",
     "quote": "a quotation sheet",
-    "profiles": "listing and editing process profiles",
 }
 
 
@@ -34,5 +33,5 @@ def _refuse(arguments: argparse.Namespace) -> NoReturn:
         expected="a command that exists in this version",
         found=f"morph {name}",
         where="command line",
-        do=f"{_LATER[name][0].upper()}{_LATER[name][1:]} is not available yet; use build, start or explain.",
+        do=f"{_LATER[name][0].upper()}{_LATER[name][1:]} is not available yet; use build, start, profiles or explain.",
     )

@@ -18,7 +18,7 @@ from types import FrameType
 from typing import NoReturn
 
 from morph import __version__
-from morph.cli import build, explain, later, start
+from morph.cli import build, explain, later, profiles, start
 from morph.cli.supervise import can_supervise, run_supervised
 from morph.core.errors import Cancelled, MorphError
 
@@ -38,6 +38,7 @@ def make_parser() -> argparse.ArgumentParser:
     commands = parser.add_subparsers(dest="command", metavar="COMMAND", required=True)
     build.add_to(commands)
     start.add_to(commands)
+    profiles.add_to(commands)
     explain.add_to(commands)
     later.add_to(commands)
     return parser

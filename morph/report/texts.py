@@ -93,7 +93,8 @@ def profile_rows(profile: dict[str, Any]) -> list[tuple[str, str, str]]:
         for index, one in enumerate(items):
             if isinstance(one, dict):
                 label = f"{name}[{index + 1}]" if len(items) > 1 else name
-                rows.append((label, f"{one['value']:g} {one['unit']}", one["source"]))
+                figure = f"{one['value']:g}" if "value" in one else f"{one['low']:g} to {one['high']:g}"
+                rows.append((label, f"{figure} {one['unit']}", one["source"]))
     return rows
 
 

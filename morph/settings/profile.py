@@ -27,6 +27,21 @@ class Sourced:
 
 
 @dataclass(frozen=True, slots=True)
+class SourcedRange:
+    """A quantity that is known as a range only, with its unit and where it comes from; `low` may equal `high`."""
+
+    low: float
+    high: float
+    unit: str
+    source: str
+
+    @property
+    def middle(self) -> float:
+        """The middle of the range, for a figure that needs one number."""
+        return 0.5 * (self.low + self.high)
+
+
+@dataclass(frozen=True, slots=True)
 class Profile:
     """One printing process with one material.
 
@@ -44,6 +59,9 @@ class Profile:
         bend_radius_bores: least centreline bend radius in bores.
         machine_mm: build volume x, y, z, each Sourced.
         density_kg_m3: of the printed, heat-treated alloy.
+        conductivity_as_printed_w_mk: thermal conductivity before heat treatment, 20 C.
+        conductivity_heat_treated_w_mk: after the heat treatment that `material` names, 20 C.
+        roughness_ra_um: arithmetic roughness of faces as built.
     """
 
     name: str
@@ -60,6 +78,9 @@ class Profile:
     bend_radius_bores: Sourced
     machine_mm: tuple[Sourced, Sourced, Sourced]
     density_kg_m3: Sourced
+    conductivity_as_printed_w_mk: SourcedRange
+    conductivity_heat_treated_w_mk: SourcedRange
+    roughness_ra_um: SourcedRange
 
 
 @dataclass(frozen=True, slots=True)
@@ -84,6 +105,12 @@ _LIMITS = {
     "bend_radius_bores": _Limits("bores", None, 20.0),
     "machine_mm": _Limits("mm", 0.0, 5000.0),
     "density_kg_m3": _Limits("kg/m3", 500.0, 25000.0),
+}
+
+_RANGE_LIMITS = {
+    "conductivity_as_printed_w_mk": _Limits("W/mK", 0.0, 1000.0),
+    "conductivity_heat_treated_w_mk": _Limits("W/mK", 0.0, 1000.0),
+    "roughness_ra_um": _Limits("um", None, 500.0),
 }
 
 
@@ -127,6 +154,7 @@ def _make_profile(content: bytes, file: str) -> Profile:
         for key, limits in _LIMITS.items()
         if key != "machine_mm"
     }
+    ranges = {key: _range(table.require(key), file, f"[{key}]", limits) for key, limits in _RANGE_LIMITS.items()}
     axes = table.tables("machine_mm", 3)
     if len(axes) != 3:
         table.refuse(
@@ -144,6 +172,7 @@ def _make_profile(content: bytes, file: str) -> Profile:
         material=table.text("material"),
         machine_mm=(sides[0], sides[1], sides[2]),
         **numbers,
+        **ranges,
     )
     if profile.smallest_bore_mm.value > profile.largest_bore_mm.value:
         table.refuse(
@@ -161,3 +190,16 @@ def _sourced(values: Any, file: str, label: str, limits: _Limits) -> Sourced:
     least = 0.0 if limits.above is None else None
     value = table.number("value", above=limits.above, least=least, most=limits.most, unit=limits.unit)
     return Sourced(value, table.word("unit", [limits.unit]), table.text("source"))
+
+
+def _range(values: Any, file: str, label: str, limits: _Limits) -> SourcedRange:
+    """Returns a range given as `low` and `high`, or as one `value`."""
+    table = Table(values, file, label, ("value", "low", "high", "unit", "source"))
+    least = 0.0 if limits.above is None else None
+    if table.has("value"):
+        table.not_used(["low", "high"], "beside value")
+    keys = ("value", "value") if table.has("value") else ("low", "high")
+    low, high = (table.number(key, above=limits.above, least=least, most=limits.most, unit=limits.unit) for key in keys)
+    if low > high:
+        table.refuse("setting-order", "low", expected="at most high", do="Write the lower number first.")
+    return SourcedRange(low, high, table.word("unit", [limits.unit]), table.text("source"))

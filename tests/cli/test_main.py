@@ -129,7 +129,7 @@ def test_wrong_usage_exits_2(arguments, capsys):
     assert said.out == "" and "usage:" in said.err
 
 
-@pytest.mark.parametrize("command", ["check", "page", "vary", "quote", "profiles"])
+@pytest.mark.parametrize("command", ["check", "page", "vary", "quote"])
 def test_a_command_that_does_not_exist_yet_is_named(command, capsys):
     assert main([command, "x.stl", "--json"]) == 1
     said = capsys.readouterr()

@@ -31,7 +31,7 @@ from morph.settings.job import (
     Seam,
     SeenFrom,
 )
-from morph.settings.profile import Profile, Sourced
+from morph.settings.profile import Profile, Sourced, SourcedRange
 from morph.solid.result import ChannelSolid, Insert, Opening
 from morph.surface.cylinder import make_cylinder
 from morph.surface.wrap import wrap_graph
@@ -82,6 +82,9 @@ def profile() -> Profile:
         sourced(1.5, "bores"),
         (sourced(250, mm), sourced(250, mm), sourced(300, mm)),
         sourced(8000, "kg/m3"),
+        SourcedRange(14.0, 15.0, "W/mK", "from memory"),
+        SourcedRange(19.0, 21.0, "W/mK", "from memory"),
+        SourcedRange(5.0, 20.0, "um", "common practice, no source"),
     )
 
 

@@ -7,7 +7,7 @@ from scipy.interpolate import make_interp_spline
 
 from morph.geometry.curve import Curve, curve_at, curve_length_mm
 from morph.layout.graph import Branch, ChannelGraph, Node, NodeKind
-from morph.settings.profile import Profile, Sourced
+from morph.settings.profile import Profile, Sourced, SourcedRange
 
 TEST = "made for the test"
 
@@ -29,7 +29,13 @@ def make_profile(**changed: float) -> Profile:
     } | changed
     rows = {name: Sourced(value, "", TEST) for name, value in figures.items()}
     side = Sourced(250.0, "mm", TEST)
-    return Profile(name="test-process", material="test alloy", machine_mm=(side, side, side), **rows)
+    conducts, rough = SourcedRange(14.0, 15.0, "W/mK", TEST), SourcedRange(5.0, 20.0, "um", TEST)
+    ranges = {
+        "conductivity_as_printed_w_mk": conducts,
+        "conductivity_heat_treated_w_mk": conducts,
+        "roughness_ra_um": rough,
+    }
+    return Profile(name="test-process", material="test alloy", machine_mm=(side, side, side), **rows, **ranges)
 
 
 def line_curve(points: np.ndarray) -> Curve:
