@@ -171,8 +171,10 @@ def _make_profile(content: bytes, file: str) -> Profile:
         name=table.text("name"),
         material=table.text("material"),
         machine_mm=(sides[0], sides[1], sides[2]),
+        conductivity_as_printed_w_mk=ranges["conductivity_as_printed_w_mk"],
+        conductivity_heat_treated_w_mk=ranges["conductivity_heat_treated_w_mk"],
+        roughness_ra_um=ranges["roughness_ra_um"],
         **numbers,
-        **ranges,
     )
     if profile.smallest_bore_mm.value > profile.largest_bore_mm.value:
         table.refuse(
