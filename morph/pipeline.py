@@ -128,7 +128,8 @@ def make_records(job: Job, clock: _Clock) -> BuildRecords:
         wrapped = wrap_graph(graph, carrier, depth_mm)
     with clock.stage("body"):
         blank = make_blank(job.blank, job.holes, carrier, graph.size_mm, job.service)
-        plan = make_plan(wrapped, blank, job.ports, job.section, job.service, profile, progress)
+        up = job.printing.build_direction
+        plan = make_plan(wrapped, blank, job.ports, job.section, job.service, profile, progress, up)
 
     from morph.check import CheckSubject, check_insert, measure_fields, measure_insert
     from morph.solid.channel import make_channel_solid

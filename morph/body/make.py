@@ -9,7 +9,7 @@ sheet point still maps to its 3D point.
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -20,6 +20,7 @@ from morph.body.lead import Ground, PortStart, lay_leads
 from morph.body.neighbour import Network, Strand, make_network, polyline_arc_mm
 from morph.body.plan import ChannelPlan
 from morph.body.room import Limits, make_limits, measure_room
+from morph.body.section import make_section_rule
 from morph.core.arrays import Floats
 from morph.core.progress import SILENT, Progress
 from morph.geometry.curve import curve_at
@@ -47,6 +48,7 @@ def make_plan(
     service: ServiceSettings,
     profile: Profile,
     progress: Progress = SILENT,
+    build_direction: tuple[float, float, float] = (0.0, 0.0, 1.0),
 ) -> ChannelPlan:
     """Returns every channel and lead with its final bore and the room it has.
 
@@ -54,10 +56,11 @@ def make_plan(
         wrapped: the graph at depth.
         blank: the finished body.
         job_ports: the job's ports; each is the port node of that name.
-        section: bore scale, range and blend.
+        section: shape, bore scale, range and blend.
         service: walls that must survive.
         profile: what the process can do.
         progress: told between channels, leads and room.
+        build_direction: from the plate into the part; roofs point that way.
 
     Raises:
         SettingError: `bore-range-empty`, `leave-into-metal`, `leave-without-direction`.
@@ -84,7 +87,8 @@ def make_plan(
         allowed,
     )
     parts = Parts(wrapped, blank, limits, tuple(one.sheet_mm for one in laid), wanted, fitted, leads)
-    return assemble_plan(parts, section.blend_mm, notices)
+    plan = assemble_plan(parts, section.blend_mm, notices)
+    return replace(plan, section=make_section_rule(section, profile, build_direction))
 
 
 def _refine(branch: Branch, wrapped: WrappedGraph, scale: float, limits: Limits) -> _Laid:

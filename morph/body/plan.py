@@ -5,11 +5,12 @@ This is what the solid is swept from, what the checks measure against, and what 
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from enum import StrEnum
 
 import numpy as np
 
+from morph.body.section import SectionRule
 from morph.core.arrays import Bools, Floats, frozen_bools, frozen_floats
 from morph.core.tolerance import COINCIDE_MM
 from morph.core.verdict import Notice
@@ -143,6 +144,7 @@ class ChannelPlan:
         merges: pairs of branches that could not be kept apart.
         blend_mm: fillet radius at junctions.
         notices: degraded or surprising paths.
+        section: how the channels are shaped.
     """
 
     nodes: tuple[PlanNode, ...]
@@ -153,6 +155,7 @@ class ChannelPlan:
     merges: tuple[Merge, ...]
     blend_mm: float
     notices: tuple[Notice, ...] = ()
+    section: SectionRule = field(default_factory=SectionRule)
 
     def __post_init__(self) -> None:
         place = {node.id: node.xyz_mm for node in self.nodes}

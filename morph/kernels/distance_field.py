@@ -1,16 +1,9 @@
-"""The channel field: distance to balls swept along straight pieces, blended where channels meet.
+"""The channel field: the least distance to swept balls, blended where channels meet.
 
-A piece of centreline between two samples is a tapered capsule: the union of all balls whose centre
-runs along the piece while the radius runs linearly. Its distance is a closed form. Pieces of one
-half branch form a *run*; runs that end on the same node are blended there, all others simply
-united (least distance wins). Everything that knows the shape of the swept ball is in
-`piece_distance` and `piece_direction`; a ball of another shape (a roofed one) is added there and in
-the box of `blocks_of_piece`.
-
-Arrays used throughout: `pieces (n, 10)` = start x y z, unit tangent x y z, length, start radius,
-taper t = dr/dl, t / sqrt(1 - t^2); `owner (n, 2)` = run and node of each piece, sorted by run;
-`nodes (k, 4)` = place and the distance at which blending has faded out. Blocks are 8 x 8 x 8 cells;
-a block's key is (x * ny + y) * nz + z.
+Pieces (swept_ball.py) of one half branch form a *run*; runs that end on the same node are blended there, all
+others simply united (least distance wins). Arrays used throughout: `pieces (n, 17)`; `owner (n, 2)` = run and node
+of each piece, sorted by run; `nodes (k, 4)` = place and the distance at which blending has faded out. Blocks are
+8 x 8 x 8 cells; a block's key is (x * ny + y) * nz + z.
 
 All functions return the same numbers whatever list of pieces they are given, as long as it holds
 every piece that matters there: neighbouring blocks agree on shared samples to the last bit.
@@ -23,6 +16,7 @@ from numba import njit
 from numpy.typing import NDArray
 
 from morph.core.arrays import Floats, Ints
+from morph.kernels.swept_ball import piece_direction, piece_distance, piece_gradient
 
 BLOCK = 8
 """Cells per block edge."""
@@ -33,41 +27,10 @@ NO_VALUE = np.float32(1e9)
 SMALLEST = 1e-6
 """Samples nearer to the surface than this (mm) count as outside, so that no sample is exactly zero."""
 
+RISE_FULL, RISE_NONE = 0.2, 0.9
+"""Blends of roofs are full up to, and gone from, these shares of the elevation at which a wall is a ceiling."""
+
 SQRT3 = 1.7320508075688772
-
-
-@njit(cache=True, nogil=True, error_model="numpy")
-def piece_distance(px: float, py: float, pz: float, pieces: Floats, i: int) -> float:
-    """Returns the signed distance in mm of a point from piece i, negative inside.
-
-    The nearest ball sits at u = x + y t / sqrt(1 - t^2) along the piece, x the axial and y the radial
-    coordinate of the point, t the taper; clamped to the piece.
-    """
-    vx = px - pieces[i, 0]
-    vy = py - pieces[i, 1]
-    vz = pz - pieces[i, 2]
-    x = vx * pieces[i, 3] + vy * pieces[i, 4] + vz * pieces[i, 5]
-    y2 = vx * vx + vy * vy + vz * vz - x * x
-    y = np.sqrt(max(y2, 0.0))
-    u = min(max(x + y * pieces[i, 9], 0.0), pieces[i, 6])
-    along = x - u
-    return np.sqrt(along * along + max(y2, 0.0)) - pieces[i, 7] - pieces[i, 8] * u
-
-
-@njit(cache=True, nogil=True, error_model="numpy")
-def piece_direction(px: float, py: float, pz: float, pieces: Floats, i: int) -> tuple[float, float, float]:
-    """Returns the unit vector from the centre of piece i's nearest ball to the point: the gradient of its distance."""
-    vx = px - pieces[i, 0]
-    vy = py - pieces[i, 1]
-    vz = pz - pieces[i, 2]
-    x = vx * pieces[i, 3] + vy * pieces[i, 4] + vz * pieces[i, 5]
-    y2 = vx * vx + vy * vy + vz * vz - x * x
-    u = min(max(x + np.sqrt(max(y2, 0.0)) * pieces[i, 9], 0.0), pieces[i, 6])
-    vx -= u * pieces[i, 3]
-    vy -= u * pieces[i, 4]
-    vz -= u * pieces[i, 5]
-    scale = 1.0 / (np.sqrt(vx * vx + vy * vy + vz * vz) + 1e-12)
-    return vx * scale, vy * scale, vz * scale
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
@@ -75,8 +38,10 @@ def blend_weight(px: float, py: float, pz: float, pieces: Floats, nodes: Floats,
     """Returns how much pieces a and b of one node blend here, 0..1.
 
     (1 - cosine of the angle between the two ball directions) squared: nothing where both balls look the same way (a
-    channel that runs straight on must not bulge), fully where they look at right angles or against each other; fading with the distance from the node, so that branches which share
-    a node but approach elsewhere are not blended there.
+    channel that runs straight on must not bulge), fully where they look at right angles or against each other; fading
+    with the distance from the node, so that branches which share a node but approach elsewhere are not blended there.
+    Between roofs it also fades as the mean of the two directions rises, and is gone where a fillet would be flatter
+    than the roofs it joins.
     """
     dx = px - nodes[node, 0]
     dy = py - nodes[node, 1]
@@ -91,6 +56,16 @@ def blend_weight(px: float, py: float, pz: float, pieces: Floats, nodes: Floats,
     if away > 0.5:
         fade = 2.0 * (1.0 - away)
         weight *= fade * fade * (3.0 - 2.0 * fade)
+    share = max(pieces[a, 16], pieces[b, 16])
+    if share > 0.0:
+        limit = min(pieces[a, 13], pieces[b, 13])
+        ax += bx
+        ay += by
+        az += bz
+        rise = ax * pieces[a, 10] + ay * pieces[a, 11] + az * pieces[a, 12]
+        rise /= limit * (np.sqrt(ax * ax + ay * ay + az * az) + 1e-9)
+        fade = min(max((RISE_NONE - rise) / (RISE_NONE - RISE_FULL), 0.0), 1.0)
+        weight *= 1.0 - share * (1.0 - fade * fade * (3.0 - 2.0 * fade))
     return weight
 
 
@@ -138,7 +113,7 @@ def field_at(
             best = i
     wanted = gradient.shape[0] == 3
     if wanted:
-        gradient[0], gradient[1], gradient[2] = piece_direction(px, py, pz, pieces, best)
+        gradient[0], gradient[1], gradient[2], _ = piece_gradient(px, py, pz, pieces, best)
     most = 0.0
     for a in range(n_runs):
         qa = 1.0 - (run_distance[a] - least) / blend_mm if blend_mm > 0.0 else 0.0
@@ -154,9 +129,9 @@ def field_at(
             if amount > most:
                 most = amount
                 if wanted:
-                    gx, gy, gz = piece_direction(px, py, pz, pieces, best)
-                    ax, ay, az = piece_direction(px, py, pz, pieces, run_piece[a])
-                    bx, by, bz = piece_direction(px, py, pz, pieces, run_piece[b])
+                    gx, gy, gz, _ = piece_gradient(px, py, pz, pieces, best)
+                    ax, ay, az, _ = piece_gradient(px, py, pz, pieces, run_piece[a])
+                    bx, by, bz, _ = piece_gradient(px, py, pz, pieces, run_piece[b])
                     ca = 0.5 * weight * qa * qb * qb
                     cb = 0.5 * weight * qa * qa * qb
                     gradient[0] = gx + ca * (ax - gx) + cb * (bx - gx)
@@ -225,11 +200,20 @@ def blocks_of_piece(
     radius = max(pieces[i, 7], pieces[i, 7] + pieces[i, 8] * pieces[i, 6]) + pad_mm
     low = np.empty(3, np.int64)
     high = np.empty(3, np.int64)
+    rise = 0.0
+    if pieces[i, 15] > 0.0:
+        widest = radius - pad_mm
+        k = pieces[i, 15]
+        rise = np.sqrt((k * widest + pad_mm) ** 2 - ((k - 1.0) * widest) ** 2) - radius
+    elif pieces[i, 13] < 1.0:
+        rise = (1.0 / pieces[i, 13] - 1.0) * radius
     for a in range(3):
         p = pieces[i, a]
         q = p + pieces[i, 3 + a] * pieces[i, 6]
-        low[a] = max(0, int(np.floor((min(p, q) - radius - origin[a]) / block_mm)))
-        high[a] = min(shape[a] - 1, int(np.floor((max(p, q) + radius - origin[a]) / block_mm)))
+        below = min(p, q) - radius + min(rise * pieces[i, 10 + a], 0.0)
+        above = max(p, q) + radius + max(rise * pieces[i, 10 + a], 0.0)
+        low[a] = max(0, int(np.floor((below - origin[a]) / block_mm)))
+        high[a] = min(shape[a] - 1, int(np.floor((above - origin[a]) / block_mm)))
     count = 0
     for x in range(low[0], high[0] + 1):
         for y in range(low[1], high[1] + 1):

@@ -19,6 +19,7 @@ from numpy.typing import NDArray
 
 from morph.core.arrays import Floats, Ints
 from morph.kernels.distance_field import BLOCK, SQRT3, field_at, keep_near
+from morph.kernels.swept_ball import piece_gradient
 
 N_CASES = 256
 
@@ -173,7 +174,7 @@ def place_vertices(
     """Places the vertices of the blocks first..last - 1.
 
     A vertex starts at the mean of its loop's edge crossings and is moved `steps` times along the gradient to the
-    level bias h^2 / r (r the local radius, none where blended), which makes up for the chords; it never leaves its cell.
+    level bias h^2 / r (r the local radius; none on roofs, which are flat, and where blended), which makes up for the chords; it never leaves its cell.
 
     The blocks and the field are given as to `sample_blocks`, which filled `values`; `cases` comes from `count_cells`;
     `offset (n,)` is the first vertex of each block. `first_vertex (n, 8, 8, 8)` receives the number of each cell's
@@ -232,7 +233,8 @@ def settle(
         pieces, owner, nodes, blend_mm, near, n_near, run_distance, run_piece, gradient,
     )  # fmt: skip
     size = gradient[0] ** 2 + gradient[1] ** 2 + gradient[2] ** 2 + 1e-12
-    level = bias * h_mm * h_mm / nearest_radius(pieces, run_piece, run_distance, n_near, owner, near)
+    best = nearest_piece(run_piece, run_distance, n_near, owner, near)
+    level = bias * h_mm * h_mm * piece_gradient(point[0], point[1], point[2], pieces, best)[3]
     if blended > 0.0:
         level *= max(0.0, 1.0 - 16.0 * blended / blend_mm)
     for a in range(3):
@@ -241,10 +243,8 @@ def settle(
 
 
 @njit(cache=True, nogil=True)
-def nearest_radius(
-    pieces: Floats, run_piece: Ints, run_distance: Floats, n_near: int, owner: Ints, near: Ints
-) -> float:
-    """Returns the start radius in mm of the nearest piece, read from the work space `field_at` left."""
+def nearest_piece(run_piece: Ints, run_distance: Floats, n_near: int, owner: Ints, near: Ints) -> int:
+    """Returns the nearest piece, read from the work space `field_at` left."""
     best = 0
     n_runs = 0
     last = -1
@@ -254,7 +254,7 @@ def nearest_radius(
             if run_distance[n_runs] < run_distance[best]:
                 best = n_runs
             n_runs += 1
-    return pieces[run_piece[best], 7]
+    return int(run_piece[best])
 
 
 @njit(cache=True, nogil=True, error_model="numpy")

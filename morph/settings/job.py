@@ -125,10 +125,20 @@ class CarrierSettings:
     true_at: TrueAt = TrueAt.DEPTH
 
 
+class SectionShape(StrEnum):
+    """The cross-section of a channel; auto is round where a round ceiling prints freely, else roofed."""
+
+    ROUND = "round"
+    ROOFED = "roofed"
+    ARCHED = "arched"
+    AUTO = "auto"
+
+
 @dataclass(frozen=True, slots=True)
 class SectionSettings:
     """The [section] table; `bore_range_mm` None means from service and process."""
 
+    shape: SectionShape = SectionShape.ROUND
     bore_scale: float = 1.0
     bore_range_mm: tuple[float, float] | None = None
     blend_mm: float = 0.6

@@ -13,6 +13,7 @@ from morph.settings.job import (
     HoleSettings,
     Metal,
     SectionSettings,
+    SectionShape,
     TrueAt,
 )
 from morph.settings.parse_layout import FARTHEST_MM, direction
@@ -41,11 +42,6 @@ _CARRIER_KINDS_LATER = {
     "freeform": "The free-form carrier",
 }
 _SECTION_KEYS = ("shape", "bore_scale", "bore_range_mm", "blend_mm")
-_SECTION_LATER = {
-    "roofed": "The roofed section",
-    "arched": "The arched section",
-    "auto": "Choosing the section by itself",
-}
 _BLANK_OF_KIND = {
     "carrier": ("margin_mm", "thickness_mm"),
     "cylinder": ("radius_mm", "z_mm"),
@@ -84,18 +80,17 @@ def parse_carrier(values: Any, file: str) -> CarrierSettings:
 
 
 def parse_section(values: Any, file: str) -> SectionSettings:
-    """Returns the [section] settings of a round section.
+    """Returns the [section] settings.
 
     Raises:
-        SettingError: a setting is unknown, wrong, or not available yet.
+        SettingError: a setting is unknown or wrong.
     """
     table = Table(values, file, "[section]", _SECTION_KEYS)
-    if table.has("shape"):
-        table.word("shape", ["round"], _SECTION_LATER)
     bore_range_mm = None
     if table.has("bore_range_mm"):
         bore_range_mm = ordered_pair(table, "bore_range_mm", above=0.0, most=LARGEST_BORE_MM, equal=True)
     return SectionSettings(
+        shape=table.choice("shape", SectionShape, SectionSettings().shape),
         bore_scale=table.number("bore_scale", 1.0, above=0.0, most=10.0, unit=""),
         bore_range_mm=bore_range_mm,
         blend_mm=table.number("blend_mm", 0.6, least=0.0, most=10.0),

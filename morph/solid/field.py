@@ -16,10 +16,11 @@ import numpy as np
 from numpy.typing import NDArray
 
 from morph.body.plan import ChannelPlan
+from morph.body.section import SectionRule, hydraulic_diameter_mm, section_area_mm2
 from morph.core.arrays import Floats, Ints
 from morph.core.errors import GeometryError
 from morph.core.progress import Progress
-from morph.settings.job import QualitySettings
+from morph.settings.job import QualitySettings, SectionShape
 from morph.solid.slabs import run_slabs
 from morph.solid.sweep import Sweep
 
@@ -38,13 +39,26 @@ BLOCKS_PER_SLAB = 512
 
 
 def predict_triangles(plan: ChannelPlan, h_mm: float) -> float:
-    """Returns about how many triangles the extracted wall of `plan` has at resolution `h_mm`: 3 area / h^2."""
+    """Returns about how many triangles the extracted wall of `plan` has at resolution `h_mm`: 3 area / h^2.
+
+    Roofs count as on a channel that lies flat.
+    """
     area = 0.0
     for branch in plan.branches:
         step = np.linalg.norm(np.diff(branch.xyz_mm, axis=0), axis=1)
-        area += float(np.pi * 0.5 * ((branch.bore_mm[:-1] + branch.bore_mm[1:]) * step).sum())
-    area += float(sum(np.pi * exit_.bore_mm * exit_.overshoot_mm for exit_ in plan.exits))
+        area += float((_perimeter_mm(0.5 * (branch.bore_mm[:-1] + branch.bore_mm[1:]), plan.section) * step).sum())
+    area += float(sum(_perimeter_mm(np.array([x.bore_mm]), plan.section)[0] * x.overshoot_mm for x in plan.exits))
     return 3.0 * area / h_mm**2
+
+
+def _perimeter_mm(bore_mm: Floats, rule: SectionRule) -> Floats:
+    """Returns the perimeters (k,) of channels that lie flat."""
+    level = np.cross(rule.up, np.eye(3)[np.abs(rule.up).argmin()])[None, :]
+    if rule.shape is SectionShape.ARCHED:  # the perimeter goes with the bore
+        one = np.array([1.0])
+        return bore_mm * (4.0 * section_area_mm2(one, level, rule) / hydraulic_diameter_mm(one, level, rule))
+    level = np.repeat(level, len(bore_mm), axis=0)
+    return 4.0 * section_area_mm2(bore_mm, level, rule) / hydraulic_diameter_mm(bore_mm, level, rule)
 
 
 def choose_h_mm(plan: ChannelPlan, quality: QualitySettings) -> float:
@@ -170,7 +184,9 @@ def _frame(sweep: Sweep, h_mm: float, block_mm: float) -> tuple[Floats, Ints]:
     start = sweep.pieces[:, :3]
     end = start + sweep.pieces[:, 3:6] * sweep.pieces[:, 6:7]
     radius = np.maximum(sweep.pieces[:, 7], sweep.pieces[:, 7] + sweep.pieces[:, 8] * sweep.pieces[:, 6])
-    pad = float(radius.max()) + 1.25 * sweep.blend_mm + 2.0 * h_mm
+    arch = float(sweep.pieces[:, 15].max())
+    rise = math.sqrt(2.0 * arch - 1.0) if arch > 0.0 else 1.0 / float(sweep.pieces[:, 13].min())
+    pad = (float(radius.max()) + 1.25 * sweep.blend_mm + 2.0 * h_mm) * rise
     low, high = np.minimum(start, end).min(axis=0) - pad, np.maximum(start, end).max(axis=0) + pad
     origin = (np.floor(low / block_mm) - 1.0) * block_mm - 0.137 * h_mm
     return origin, np.ceil((high - origin) / block_mm).astype(np.int64) + 1

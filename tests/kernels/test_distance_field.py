@@ -8,9 +8,8 @@ from morph.kernels.distance_field import (
     code_cells,
     field_at,
     keep_near,
-    piece_direction,
-    piece_distance,
 )
+from morph.kernels.swept_ball import piece_direction, piece_distance
 from morph.solid.sweep import STEEPEST_TAPER, blend_width_mm, make_sweep
 from tests.solid import plans
 
