@@ -32,7 +32,7 @@ from morph.check.subject import CheckSubject
 from morph.core.arrays import Bools, Floats, Ints
 from morph.core.verdict import Outcome, Verdict
 from morph.geometry.gap import Gap, measure_gap
-from morph.geometry.tree import cast_rays, make_tree
+from morph.geometry.tree import closest_points, make_tree
 
 RIB_CLOSES = 2.0 * np.sin(np.radians(1.5))
 """Two runs that part at less than 3 degrees enclose a rib; wider, the crotch of a junction (own choice)."""
@@ -178,10 +178,10 @@ def _patch(wall: ChannelWall, middle: Floats, toward: Floats, centre: Floats, re
 
 
 def _gap_on_mesh(finding: BetweenFinding, lines: Centrelines, wall: ChannelWall) -> Gap | None:
-    """Returns the smallest gap on the mesh around the finding, or the metal straight across where it only slides away.
+    """Returns the smallest gap on the mesh around the finding, or the metal between the balls where it slides off.
 
     Beside a crotch the smallest gap of two patches lies on their rim towards the junction, wherever the rim is
-    drawn: that is the crotch's taper and no wall, so the metal on the line between the centrelines is taken.
+    drawn: that is the crotch's taper and no wall, so the metal between the channels' largest balls is taken.
     """
     _, p, q, radius_p, radius_q = _segments_gap(lines, *finding.samples)
     toward = (q - p) / max(float(np.linalg.norm(q - p)), 1e-12)
@@ -198,10 +198,9 @@ def _gap_on_mesh(finding: BetweenFinding, lines: Centrelines, wall: ChannelWall)
         )
         if inner:
             return gap
-    reach, hit = cast_rays(wall.tree, np.array([p, q]), np.array([toward, -toward]))
-    if (hit < 0).any():
-        return None
-    start, end = p + reach[0] * toward, q - reach[1] * toward
+    # Each side as far as its own largest ball in the written channel reaches, never less than planned.
+    ball, _, _ = closest_points(wall.tree, np.array([p, q]))
+    start, end = p + max(float(ball[0]), radius_p) * toward, q - max(float(ball[1]), radius_q) * toward
     return Gap(float((end - start) @ toward), place(start), place(end))
 
 
