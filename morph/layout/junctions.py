@@ -21,7 +21,7 @@ BENT_GAIN = 4.0
 """A parabola counts when it leaves this many times less than the line."""
 MOST_TURN = 0.35
 """A parabola that turns more than this (slope) between its last sample and the joint tells nothing there."""
-MERGE_SPREAD = 0.3
+MERGE_SPREAD = 0.4
 """The same for the channels of two junctions that may be one."""
 
 
