@@ -115,7 +115,7 @@ def make_records(job: Job, clock: _Clock) -> BuildRecords:
     from morph.layout.density import make_density
     from morph.layout.extract import make_graph
     from morph.report.records import BuildRecords
-    from morph.surface.cylinder import make_cylinder
+    from morph.surface.make import make_carrier
     from morph.surface.wrap import choose_depth_mm, wrap_graph
 
     progress, profile = clock.progress, job.printing.profile
@@ -124,7 +124,7 @@ def make_records(job: Job, clock: _Clock) -> BuildRecords:
         graph = make_graph(density, job.layout, job.ports, progress)
     with clock.stage("surface"):
         depth_mm = choose_depth_mm(job.carrier, graph, job.section, job.service, profile)
-        carrier = make_cylinder(job.carrier, graph.size_mm, job.layout.seen_from, depth_mm)
+        carrier = make_carrier(job.carrier, graph.size_mm, job.layout.seen_from, depth_mm)
         wrapped = wrap_graph(graph, carrier, depth_mm)
     with clock.stage("body"):
         blank = make_blank(job.blank, job.holes, carrier, graph.size_mm, job.service)

@@ -11,7 +11,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from morph.body.blank import Blank
-from morph.body.face import CylinderFace, FaceRole, PlaneFace
+from morph.body.face import BlankFace, ConeFace, CylinderFace, FaceRole, PlaneFace
 from morph.body.hole import line_crossings
 from morph.body.room import Limits, measure_room
 from morph.core.arrays import Floats, unit_rows
@@ -38,18 +38,18 @@ SQUAREST_COSINE = 0.5
 class Sites:
     """Places (n, 3) on one face and the unit directions (n, 3) out of the metal there."""
 
-    face: PlaneFace | CylinderFace
+    face: BlankFace
     xyz_mm: Floats
     leave: Floats
 
 
-def port_faces(blank: Blank) -> list[PlaneFace | CylinderFace]:
+def port_faces(blank: Blank) -> list[BlankFace]:
     """Returns the faces where ports may come out."""
     return [face for face in blank.faces if face.role is FaceRole.PORT]
 
 
 def list_sites(
-    blank: Blank, face: PlaneFace | CylinderFace, port_mm: Floats, bore_mm: float, leave: Floats | None, limits: Limits
+    blank: Blank, face: BlankFace, port_mm: Floats, bore_mm: float, leave: Floats | None, limits: Limits
 ) -> Sites:
     """Returns the places on `face` where a bore comes out with its walls to all other faces and holes.
 
@@ -64,6 +64,8 @@ def list_sites(
     step = min(max(bore_mm, 2.5), 5.0)
     if isinstance(face, CylinderFace):
         places = _round_grid(blank, face, port_mm, step)
+    elif isinstance(face, ConeFace):
+        places = _cone_grid(blank, face, port_mm, step)
     elif abs(face.normal[2]) > 0.5:
         places = _polar_grid(face, port_mm, step)
     else:
@@ -77,7 +79,7 @@ def list_sites(
 
 def keep_legal(
     blank: Blank,
-    face: PlaneFace | CylinderFace,
+    face: BlankFace,
     places_mm: Floats,
     bore_mm: float,
     leave: Floats | None,
@@ -131,12 +133,23 @@ def _round_grid(blank: Blank, face: CylinderFace, port_mm: Floats, step: float) 
     return np.column_stack([face.radius_mm * np.cos(angle), face.radius_mm * np.sin(angle), heights.ravel()])
 
 
-def project_to_face(face: PlaneFace | CylinderFace, xyz_mm: Floats) -> Floats:
+def _cone_grid(blank: Blank, face: ConeFace, port_mm: Floats, step: float) -> Floats:
+    """Returns places at heights a step of the meridian apart, in rings from the port's own angle."""
+    rings = []
+    for z in _spread(port_mm[2], *blank.z_mm, step * float(np.cos(face.cone.half_angle_rad))):
+        radius = face.cone.radius_at_mm(float(z))
+        if radius > 0.0:
+            angle = _around(port_mm, radius, step)
+            rings.append(np.column_stack([radius * np.cos(angle), radius * np.sin(angle), np.full(len(angle), z)]))
+    return np.concatenate(rings) if rings else np.empty((0, 3))
+
+
+def project_to_face(face: BlankFace, xyz_mm: Floats) -> Floats:
     """Returns the nearest points (k, 3) of the endless `face` to points (k, 3)."""
     return np.asarray(xyz_mm + face.distance_mm(xyz_mm)[:, None] * face.outward(xyz_mm), dtype=np.float64)
 
 
-def project_along(face: PlaneFace | CylinderFace, xyz_mm: Floats, leave: Floats) -> Floats:
+def project_along(face: BlankFace, xyz_mm: Floats, leave: Floats) -> Floats:
     """Returns where rays from points (k, 3) along `leave (3,)` meet the endless `face`; the point itself if never."""
     result = xyz_mm.copy()
     for k, point in enumerate(xyz_mm):

@@ -1,8 +1,10 @@
-"""Faces of a finished blank: planes and cylinders with a name, a role and exact signed distances.
+"""Faces of a finished blank: planes, cylinders and cones with a name, a role and exact signed distances.
 
 Inside a convex body the least distance over its faces is the distance to its surface; for a bore
-cut through it the nearest point lies at the same height, so the same holds. Later bodies (mesh,
-free-form) bring their own kind of face with the same methods.
+cut through it the nearest point lies at the same height, so the same holds. For a conical bore the
+nearest point of the endless cone may lie past the end of the body: the least distance is then below
+the true one, never above. Later bodies (mesh, free-form) bring their own kind of face with the same
+methods.
 """
 
 from __future__ import annotations
@@ -14,6 +16,7 @@ from typing import Protocol
 import numpy as np
 
 from morph.core.arrays import Floats, frozen_floats
+from morph.geometry.cone import Cone
 
 
 class FaceRole(StrEnum):
@@ -91,3 +94,28 @@ class CylinderFace:
         radial[length == 0.0] = (1.0, 0.0, 0.0)
         radial /= np.where(length > 0.0, length, 1.0)[:, None]
         return radial if self.metal_inside else -radial
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class ConeFace:
+    """A conical face about the z axis; `metal_inside` tells on which side the metal lies."""
+
+    name: str
+    role: FaceRole
+    stock_mm: float
+    cone: Cone
+    metal_inside: bool
+
+    def distance_mm(self, xyz_mm: Floats) -> Floats:
+        """Returns the distance (k,) of points (k, 3), positive in the metal."""
+        outside = self.cone.outside_mm(xyz_mm)
+        return np.asarray(-outside if self.metal_inside else outside, dtype=np.float64)
+
+    def outward(self, xyz_mm: Floats) -> Floats:
+        """Returns the unit normals (k, 3) out of the metal at the nearest points of the cone."""
+        away = self.cone.outward(xyz_mm)
+        return away if self.metal_inside else -away
+
+
+BlankFace = PlaneFace | CylinderFace | ConeFace
+"""Every kind of face a blank has."""

@@ -15,7 +15,7 @@ import numpy as np
 
 from morph.body.blank import Blank
 from morph.body.exit import Sites, keep_legal, port_faces, project_along, project_to_face
-from morph.body.face import CylinderFace, PlaneFace
+from morph.body.face import BlankFace
 from morph.body.lead_path import (
     SHARPEST_TURN_RAD,
     Paths,
@@ -64,7 +64,7 @@ class Bundle:
 
     paths: Paths
     developed: bool
-    face: PlaneFace | CylinderFace
+    face: BlankFace
     leave: Floats
 
     def points(self, carrier: Carrier, count: int) -> Floats:
@@ -172,7 +172,7 @@ def one_bend(
     return found
 
 
-def _out_at(face: PlaneFace | CylinderFace, corners: Floats, leave: Floats | None, carrier: Carrier | None) -> Floats:
+def _out_at(face: BlankFace, corners: Floats, leave: Floats | None, carrier: Carrier | None) -> Floats:
     """Returns the direction out of the metal above each corner, in the frame of the corners (n, 3)."""
     if carrier is None:
         return face.outward(corners) if leave is None else np.broadcast_to(leave, corners.shape)
@@ -185,7 +185,7 @@ def _out_at(face: PlaneFace | CylinderFace, corners: Floats, leave: Floats | Non
 def _bent_once(
     start: Start,
     blank: Blank,
-    face: PlaneFace | CylinderFace,
+    face: BlankFace,
     corners: Floats,
     radius_mm: float,
     bend: Bend,
@@ -255,25 +255,16 @@ def _in_frame(start: Start, sites: Sites, carrier: Carrier | None) -> tuple[Floa
     nudge = 1e-3
     places = carrier.develop(sites.xyz_mm)
     inside = carrier.develop(sites.xyz_mm - nudge * sites.leave)
-    turn = _turn_mm(carrier, start)
-    places[:, 0] -= turn * np.round((places[:, 0] - start.developed[0]) / turn)
-    inside[:, 0] -= turn * np.round((inside[:, 0] - places[:, 0]) / turn)
+    if np.isfinite(turn := carrier.turn_mm):
+        places[:, 0] -= turn * np.round((places[:, 0] - start.developed[0]) / turn)
+        inside[:, 0] -= turn * np.round((inside[:, 0] - places[:, 0]) / turn)
     return start.developed, start.developed_heading, places, unit_rows(places - inside)
 
 
 def _leaves_along_frame(sites: Sites) -> bool:
-    """Returns whether the exits leave along z or along the radius, which stay straight when mapped."""
-    along_z = bool((np.abs(sites.leave[:, 2]) > 1.0 - 1e-9).all())
-    radial = isinstance(sites.face, CylinderFace) and bool((np.abs(sites.leave[:, 2]) < 1e-9).all())
-    return along_z or (radial and bool(np.allclose(sites.leave, sites.face.outward(sites.xyz_mm), atol=1e-9)))
-
-
-def _turn_mm(carrier: Carrier, start: Start) -> float:
-    """Returns the sheet width of one full turn, from the developed places of two opposite points."""
-    radius = float(np.hypot(start.xyz_mm[0], start.xyz_mm[1]))
-    quarter = np.array([[radius, 0.0, 0.0], [0.0, radius, 0.0]])
-    x = carrier.develop(quarter)[:, 0]
-    return 4.0 * abs(float(x[1] - x[0]))
+    """Returns whether the exits leave in planes through the z axis, where straight lines stay straight when mapped."""
+    x, y, leave_x, leave_y = (*sites.xyz_mm[:, :2].T, *sites.leave[:, :2].T)
+    return bool((np.abs(x * leave_y - y * leave_x) <= 1e-9 * np.hypot(x, y)).all())
 
 
 def sort_bundles(bundles: Sequence[Bundle]) -> list[tuple[int, int]]:

@@ -23,6 +23,8 @@ from morph.geometry.mesh import Mesh, measure_condition, mesh_area_mm2, mesh_vol
 from morph.layout.graph import ChannelGraph, NodeKind, count_loops
 from morph.report.headline import five_figures, sorted_verdicts, worst_outcome
 from morph.report.records import BuildRecords
+from morph.settings.job import ConeSettings
+from morph.surface.cone import ConeCarrier
 
 SCHEMA = 1
 LIBRARIES = ("numpy", "scipy", "scikit-image", "shapely", "manifold3d", "numba", "plotly", "jinja2")
@@ -77,9 +79,19 @@ def _layout(graph: ChannelGraph) -> Block:
 
 def _carrier(records: BuildRecords) -> Block:
     wrapped, settings = records.wrapped, records.job.carrier
+    cone: Block = {}
+    if isinstance(settings, ConeSettings) and isinstance(wrapped.carrier, ConeCarrier):
+        lower, upper = wrapped.carrier.edge_sag_mm()
+        cone = {
+            "half_angle_deg": settings.half_angle_deg,
+            "map": settings.map,
+            "edge_sag_lower_mm": lower,
+            "edge_sag_upper_mm": upper,
+        }
     return {
         **dataclasses.asdict(wrapped.distortion),
-        "kind": "cylinder",
+        **cone,
+        "kind": "cone" if cone else "cylinder",
         "metal": settings.metal,
         "true_at": settings.true_at,
         "radius_mm": settings.radius_mm,

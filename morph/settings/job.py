@@ -162,6 +162,26 @@ class ServiceSettings:
     wall_outer_mm: float = 3.0
     wall_hole_mm: float = 3.0
     smallest_bore_mm: float = 3.0
+class ConeMap(StrEnum):
+    """How the sheet lies on a cone: flat keeps its lengths, polar closes a full wrap."""
+
+    FLAT = "flat"
+    POLAR = "polar"
+
+
+@dataclass(frozen=True, slots=True)
+class ConeSettings:
+    """The [carrier] table of a cone: `radius_mm` at the sheet's centre, `half_angle_deg` > 0 when it widens upwards."""
+
+    radius_mm: float
+    half_angle_deg: float
+    metal: Metal
+    depth_mm: float | None = None
+    wall_to_face_mm: float | None = None
+    true_at: TrueAt = TrueAt.DEPTH
+    map: ConeMap = ConeMap.FLAT
+
+
 
 
 @dataclass(frozen=True, slots=True)
@@ -224,7 +244,7 @@ class Job:
     file: Path
     layout: LayoutSettings
     ports: tuple[PortSettings, ...]
-    carrier: CarrierSettings
+    carrier: CarrierSettings | ConeSettings
     printing: PrintSettings
     section: SectionSettings = field(default_factory=SectionSettings)
     service: ServiceSettings = field(default_factory=ServiceSettings)

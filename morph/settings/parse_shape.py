@@ -1,4 +1,4 @@
-"""The [carrier], [section], [blank] and [[hole]] tables of a job: the shapes the channels live in."""
+"""The [section], [blank] and [[hole]] tables of a job: the shapes the channels live in."""
 
 from __future__ import annotations
 
@@ -8,39 +8,21 @@ from morph.settings.job import (
     BlankSettings,
     BoxBlankSettings,
     CarrierBlankSettings,
-    CarrierSettings,
     CylinderBlankSettings,
     HoleSettings,
-    Metal,
     SectionSettings,
     SectionShape,
-    TrueAt,
 )
+from morph.settings.parse_carrier import LARGEST_RADIUS_MM
 from morph.settings.parse_layout import FARTHEST_MM, direction
 from morph.settings.table import Table
 
-LARGEST_RADIUS_MM = 5000.0
 LARGEST_BORE_MM = 100.0
 LARGEST_WALL_MM = 500.0
 MOST_HOLES = 500
 FACES = ("carrier", "foot", "top", "back", "outer", "inner", "-x", "+x", "-y", "+y", "-z", "+z")
 """Every name a face of some blank can have; which of them this job's blank has is settled when it is made."""
 
-_CARRIER_KEYS = ("kind", "radius_mm", "metal", "depth_mm", "wall_to_face_mm", "true_at")
-_CARRIER_LATER = {
-    "half_angle_deg": "The cone carrier",
-    "map": "The cone carrier",
-    "profile_mm": "The revolved carrier",
-    "file": "The free-form carrier",
-    "anchor_mm": "The free-form carrier",
-    "up": "The free-form carrier",
-    "metal_at_mm": "The free-form carrier",
-}
-_CARRIER_KINDS_LATER = {
-    "cone": "The cone carrier",
-    "revolved": "The revolved carrier",
-    "freeform": "The free-form carrier",
-}
 _SECTION_KEYS = ("shape", "bore_scale", "bore_range_mm", "blend_mm")
 _BLANK_OF_KIND = {
     "carrier": ("margin_mm", "thickness_mm"),
@@ -48,35 +30,6 @@ _BLANK_OF_KIND = {
     "box": ("min_mm", "max_mm"),
 }
 _BLANK_LATER = {"flange": "A flange on the blank", "file": "A blank from a file"}
-
-
-def parse_carrier(values: Any, file: str) -> CarrierSettings:
-    """Returns the [carrier] settings of a cylinder.
-
-    Raises:
-        SettingError: a setting is missing, unknown, wrong, or not available yet.
-    """
-    kind = values.get("kind") if isinstance(values, dict) else None
-    if isinstance(kind, str) and kind in _CARRIER_KINDS_LATER:
-        Table({"kind": kind}, file, "[carrier]", ["kind"]).not_available("kind", _CARRIER_KINDS_LATER[kind])
-    table = Table(values, file, "[carrier]", _CARRIER_KEYS, _CARRIER_LATER)
-    table.word("kind", ["cylinder"])
-    if table.has("depth_mm") == table.has("wall_to_face_mm"):
-        both = table.has("depth_mm")
-        table.refuse(
-            "depth-choice",
-            "depth_mm",
-            expected="exactly one of depth_mm and wall_to_face_mm",
-            found="both" if both else "neither",
-            do="Remove one of the two." if both else "Give the depth of the centreline or the wall to the face.",
-        )
-    return CarrierSettings(
-        radius_mm=table.number("radius_mm", above=0.0, most=LARGEST_RADIUS_MM),
-        metal=table.choice("metal", Metal),
-        depth_mm=table.optional_number("depth_mm", above=0.0, most=LARGEST_RADIUS_MM),
-        wall_to_face_mm=table.optional_number("wall_to_face_mm", above=0.0, most=LARGEST_RADIUS_MM),
-        true_at=table.choice("true_at", TrueAt, TrueAt.DEPTH),
-    )
 
 
 def parse_section(values: Any, file: str) -> SectionSettings:

@@ -12,13 +12,13 @@ from typing import Any
 
 from morph.core.errors import SettingError
 from morph.settings.job import Job, PrintSettings, QualitySettings, ServiceSettings
+from morph.settings.parse_carrier import parse_carrier
 from morph.settings.parse_layout import MOST_PORTS, direction, parse_layout, parse_ports
 from morph.settings.parse_shape import (
     LARGEST_BORE_MM,
     LARGEST_WALL_MM,
     MOST_HOLES,
     parse_blank,
-    parse_carrier,
     parse_holes,
     parse_section,
 )

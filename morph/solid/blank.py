@@ -1,8 +1,8 @@
 """The blank as a closed mesh, finished or with its machining stock.
 
-Round faces become prisms with so many sides that the sagitta stays below FACET_MM; the corners are
-moved out so that the prism has the cylinder's cross-section area. The radius is thus kept on average:
-volumes are exact, and no wall is off by more than two thirds of FACET_MM.
+Round faces become prisms (cones pyramids) with so many sides that the sagitta stays below FACET_MM; the
+corners are moved out so that the prism has the cylinder's cross-section area. The radius is thus kept on
+average: volumes are exact, and no wall is off by more than two thirds of FACET_MM.
 """
 
 from __future__ import annotations
@@ -13,7 +13,7 @@ from typing import Any
 import numpy as np
 
 from morph.body.blank import Blank
-from morph.body.face import CylinderFace, PlaneFace
+from morph.body.face import ConeFace, CylinderFace, Face, PlaneFace
 from morph.core.arrays import Floats
 from morph.core.tolerance import COINCIDE_MM, FACET_MM
 from morph.geometry.mesh import Mesh
@@ -50,13 +50,10 @@ def blank_body(blank: Blank, *, printed: bool) -> Any:
     low, high = _extent(blank, printed)
     box = manifold3d.Manifold.cube((high - low).tolist()).translate(low.tolist())
     for face in blank.faces:
-        if isinstance(face, CylinderFace):
-            stock = face.stock_mm if printed else 0.0
-            radius = face.radius_mm + (stock if face.metal_inside else -stock)
-            if radius <= COINCIDE_MM and not face.metal_inside:
-                continue
-            round_body = _cylinder(radius, low[2] - 1.0, high[2] + 1.0)
-            box = box ^ round_body if face.metal_inside else box - round_body
+        if isinstance(face, CylinderFace | ConeFace):
+            round_body = _round_body(face, printed, low[2] - 1.0, high[2] + 1.0)
+            if round_body is not None:
+                box = box ^ round_body if face.metal_inside else box - round_body
         elif isinstance(face, PlaneFace) and _axis(face) is None:
             stock = face.stock_mm if printed else 0.0
             box = box.trim_by_plane((-face.normal).tolist(), -float(face.origin_mm @ face.normal) - stock)
@@ -86,7 +83,8 @@ def _axis(face: PlaneFace) -> int | None:
 
 def _extent(blank: Blank, printed: bool) -> tuple[Floats, Floats]:
     """Returns the lowest and highest corner of the box around the metal, set by the axis-parallel planes."""
-    widest = max([face.radius_mm + face.stock_mm for face in blank.faces if isinstance(face, CylinderFace)] or [0.0])
+    stock = max(face.stock_mm for face in blank.faces)
+    widest = max(_widest_mm(face, (blank.z_mm[0] - stock, blank.z_mm[1] + stock)) for face in blank.faces)
     if blank.box_mm is not None:
         low, high = blank.box_mm[0].copy(), blank.box_mm[1].copy()
     else:
@@ -105,11 +103,45 @@ def _extent(blank: Blank, printed: bool) -> tuple[Floats, Floats]:
     return low, high
 
 
-def _cylinder(radius_mm: float, low_mm: float, high_mm: float) -> Any:
+def _widest_mm(face: Face, z_mm: tuple[float, float]) -> float:
+    """Returns the largest radius of a round face with its stock over the body's height; 0 for other faces."""
+    if isinstance(face, CylinderFace):
+        return face.radius_mm + face.stock_mm
+    if isinstance(face, ConeFace):
+        printed = face.cone.offset(face.stock_mm)
+        return max(printed.radius_at_mm(z) for z in z_mm)
+    return 0.0
+
+
+def _round_body(face: CylinderFace | ConeFace, printed: bool, low_mm: float, high_mm: float) -> Any:
+    """Returns the body inside a round face between two heights, or None when a bore is closed by its stock."""
+    stock = face.stock_mm if printed else 0.0
+    outward = stock if face.metal_inside else -stock
+    if isinstance(face, CylinderFace):
+        radius = face.radius_mm + outward
+        return _frustum(low_mm, high_mm, radius, radius) if radius > COINCIDE_MM else None
+    cone = face.cone.offset(outward)
+    apex = cone.apex_mm
+    low_mm, high_mm = (max(low_mm, apex), high_mm) if cone.half_angle_rad > 0.0 else (low_mm, min(high_mm, apex))
+    if high_mm - low_mm <= COINCIDE_MM:
+        return None
+    ends = (cone.radius_at_mm(low_mm), cone.radius_at_mm(high_mm))
+    return _frustum(low_mm, high_mm, *(0.0 if radius < COINCIDE_MM else radius for radius in ends))
+
+
+def _frustum(low_mm: float, high_mm: float, radius_low_mm: float, radius_high_mm: float) -> Any:
+    """Returns a body of many flat sides, each cross-section of the area of its circle; one radius may be 0."""
     import manifold3d
 
-    sides = n_sides(radius_mm)
-    corner = same_area_radius_mm(radius_mm, sides)
+    sides = n_sides(max(radius_low_mm, radius_high_mm))
+    area = same_area_radius_mm(1.0, sides)
+    low_corner, high_corner = area * radius_low_mm, area * radius_high_mm
     angle = 2.0 * math.pi * np.arange(sides) / sides
-    outline = manifold3d.CrossSection([np.column_stack([corner * np.cos(angle), corner * np.sin(angle)])])
-    return manifold3d.Manifold.extrude(outline, high_mm - low_mm).translate([0.0, 0.0, low_mm])
+    wide = max(low_corner, high_corner)
+    outline = manifold3d.CrossSection([np.column_stack([wide * np.cos(angle), wide * np.sin(angle)])])
+    flipped = low_corner < high_corner
+    scale = (min(low_corner, high_corner) / wide,) * 2
+    body = manifold3d.Manifold.extrude(outline, high_mm - low_mm, scale_top=scale)
+    if flipped:
+        return body.mirror([0.0, 0.0, 1.0]).translate([0.0, 0.0, high_mm])
+    return body.translate([0.0, 0.0, low_mm])

@@ -14,6 +14,10 @@ from morph.core.arrays import Floats
 class Carrier(Protocol):
     """What every guide surface offers."""
 
+    @property
+    def turn_mm(self) -> float:
+        """The sheet width after which the map repeats along x; infinite when it does not."""
+
     def point_mm(self, sheet_mm: Floats, depth_mm: float | Floats) -> Floats:
         """Returns the points (k, 3) that lie `depth_mm` (one or (k,)) into the metal below the sheet points (k, 2)."""
 

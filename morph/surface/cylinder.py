@@ -15,14 +15,9 @@ from dataclasses import dataclass
 import numpy as np
 
 from morph.core.arrays import Floats
-from morph.core.errors import GeometryError, SettingError
+from morph.core.errors import GeometryError
 from morph.settings.job import CarrierSettings, Metal, SeenFrom, TrueAt
-
-LEAST_RADIUS_MM = 2.0
-"""Least centreline radius: below it opposite sides of the sheet meet at the axis (common practice, no source)."""
-
-TURN_SLACK = 1e-6
-"""Relative slack on a sheet that is exactly one turn wide."""
+from morph.surface.limits import LEAST_RADIUS_MM, TURN_SLACK, require_positive
 
 
 @dataclass(frozen=True, slots=True)
@@ -49,6 +44,15 @@ class CylinderCarrier:
     def side(self) -> float:
         """Returns +1 when a point deeper in the metal is nearer to the axis, else -1."""
         return 1.0 if self.metal is Metal.TOWARD_AXIS else -1.0
+
+    @property
+    def turn_mm(self) -> float:
+        """Returns the sheet width of one turn."""
+        return 2.0 * math.pi * self.true_radius_mm
+
+    def sheet_z_mm(self) -> tuple[float, float]:
+        """Returns the lowest and the highest z the sheet reaches."""
+        return -0.5 * self.size_mm[1], 0.5 * self.size_mm[1]
 
     def radius_at_mm(self, depth_mm: float | Floats) -> float | Floats:
         """Returns the radius of the surface `depth_mm` into the metal."""
@@ -117,7 +121,7 @@ def make_cylinder(
     >>> make_cylinder(core, (60.0, 40.0), SeenFrom.PART, 8.0).true_radius_mm
     22.0
     """
-    _require_positive(settings.radius_mm, size_mm, depth_mm)
+    require_positive(settings.radius_mm, size_mm, depth_mm)
     toward = settings.metal is Metal.TOWARD_AXIS
     at_depth_mm = settings.radius_mm - depth_mm if toward else settings.radius_mm + depth_mm
     if at_depth_mm < LEAST_RADIUS_MM:
@@ -143,21 +147,3 @@ def make_cylinder(
     return CylinderCarrier(
         settings.radius_mm, settings.metal, true_mm, size_mm, 1.0 if from_outside else -1.0, depth_mm
     )
-
-
-def _require_positive(radius_mm: float, size_mm: tuple[float, float], depth_mm: float) -> None:
-    named = (
-        ("[carrier] radius_mm", radius_mm),
-        ("[layout] size_mm, width", size_mm[0]),
-        ("[layout] size_mm, height", size_mm[1]),
-        ("[carrier] depth", depth_mm),
-    )
-    for where, value in named:
-        if not (math.isfinite(value) and value > 0.0):
-            raise SettingError(
-                "carrier-not-positive",
-                expected="a length above 0 mm",
-                found=f"{value} mm",
-                where=where,
-                do="Give the size of the real part in mm.",
-            )

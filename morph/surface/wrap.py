@@ -15,7 +15,7 @@ from morph.core.errors import SettingError
 from morph.core.tolerance import BUILD_MM
 from morph.geometry.curve import curve_at, gauss_on_spans
 from morph.layout.graph import Branch, ChannelGraph
-from morph.settings.job import CarrierSettings, SectionSettings, ServiceSettings
+from morph.settings.job import CarrierSettings, ConeSettings, SectionSettings, ServiceSettings
 from morph.settings.profile import Profile
 from morph.surface.carrier import Carrier
 
@@ -111,7 +111,11 @@ def wanted_bore_mm(layout_mm: Floats, scale: float, allowed_mm: tuple[float, flo
 
 
 def choose_depth_mm(
-    carrier: CarrierSettings, graph: ChannelGraph, section: SectionSettings, service: ServiceSettings, profile: Profile
+    carrier: CarrierSettings | ConeSettings,
+    graph: ChannelGraph,
+    section: SectionSettings,
+    service: ServiceSettings,
+    profile: Profile,
 ) -> float:
     """Returns the depth of the centrelines below the face, in mm.
 

@@ -25,6 +25,10 @@ def face_walls(blank, plan, branch):
     for face in blank.faces:
         if hasattr(face, "radius_mm"):
             distance = face.radius_mm - radius if face.metal_inside else radius - face.radius_mm
+        elif hasattr(face, "cone"):
+            angle = face.cone.half_angle_rad
+            outside = np.cos(angle) * (radius - face.cone.radius_mm - points[:, 2] * np.tan(angle))
+            distance = -outside if face.metal_inside else outside
         else:
             distance = (face.origin_mm - points) @ face.normal
         counts = np.ones(len(points), dtype=bool)

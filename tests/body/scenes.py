@@ -13,6 +13,8 @@ from morph.settings.job import (
     BlankSettings,
     CarrierBlankSettings,
     CarrierSettings,
+    ConeMap,
+    ConeSettings,
     HoleSettings,
     Metal,
     PortSettings,
@@ -22,7 +24,7 @@ from morph.settings.job import (
     ServiceSettings,
 )
 from morph.settings.profile import Profile
-from morph.surface.cylinder import CylinderCarrier, make_cylinder
+from morph.surface.make import RoundCarrier, make_carrier
 from morph.surface.wrap import WrappedGraph, wrap_graph
 from tests.surface.graphs import make_profile
 
@@ -36,6 +38,8 @@ class Scene:
     depth_mm: float = 8.0
     metal: Metal = Metal.TOWARD_AXIS
     seen_from: SeenFrom = SeenFrom.PART
+    half_angle_deg: float = 0.0
+    map: ConeMap = ConeMap.FLAT
     shape: object = None
     part_faces: tuple[str, ...] = ("carrier",)
     port_faces: tuple[str, ...] = ("foot",)
@@ -52,9 +56,13 @@ class Scene:
         return self.profile or make_profile()
 
     @property
-    def carrier(self) -> CylinderCarrier:
+    def carrier(self) -> RoundCarrier:
         settings = CarrierSettings(self.radius_mm, self.metal, depth_mm=self.depth_mm)
-        return make_cylinder(settings, self.graph.size_mm, self.seen_from, self.depth_mm)
+        if self.half_angle_deg:
+            settings = ConeSettings(
+                self.radius_mm, self.half_angle_deg, self.metal, depth_mm=self.depth_mm, map=self.map
+            )
+        return make_carrier(settings, self.graph.size_mm, self.seen_from, self.depth_mm)
 
     @property
     def blank(self) -> Blank:

@@ -8,7 +8,7 @@ import pytest
 from morph.body.plan import BranchKind
 from morph.core.errors import MorphError
 from morph.core.fingerprint import fingerprint
-from morph.settings.job import BoxBlankSettings, CarrierBlankSettings, HoleSettings, Metal, ServiceSettings
+from morph.settings.job import BoxBlankSettings, CarrierBlankSettings, ConeMap, HoleSettings, Metal, ServiceSettings
 from tests.body import measure
 from tests.body.scenes import Scene
 from tests.surface.graphs import cross, ladder, letter_f, make_graph, straight_line
@@ -36,6 +36,19 @@ SCENES = {
     "pin": Scene(cross(), holes=(PIN,)),
     "tip shapes the part": Scene(cross(), part_faces=("carrier", "top")),
     "default margin": Scene(cross(), shape=CarrierBlankSettings()),
+    "cone": Scene(cross(), radius_mm=40.0, half_angle_deg=12.0),
+    "cone down": Scene(cross(), radius_mm=40.0, half_angle_deg=-12.0, map=ConeMap.POLAR),
+    "cone top": Scene(cross(), radius_mm=44.0, half_angle_deg=-9.0, port_faces=("top",)),
+    "cone shell": Scene(cross(), radius_mm=44.0, half_angle_deg=10.0, shape=CarrierBlankSettings((15.0, 15.0), 18.0)),
+    "cone jacket": Scene(cross(), half_angle_deg=15.0, shape=CarrierBlankSettings((15.0, 15.0), 28.0), **JACKET),
+    "cone outer": Scene(
+        cross(),
+        half_angle_deg=-10.0,
+        map=ConeMap.POLAR,
+        shape=CarrierBlankSettings((15.0, 15.0), 28.0),
+        port_faces=("outer",),
+        **JACKET,
+    ),
     "given exits": Scene(
         cross(),
         exits={"left": {"exit_mm": (-20.0, 0.0, -51.0)}, "top": {"exit_mm": (0.0, 12.0, -51.0), "leave": (0, 0, -3)}},

@@ -7,6 +7,8 @@ from morph.core.errors import InputError, MorphError, SettingError
 from morph.settings.job import (
     BoxBlankSettings,
     CarrierBlankSettings,
+    ConeMap,
+    ConeSettings,
     CoolantEnd,
     CylinderBlankSettings,
     LevelRule,
@@ -121,6 +123,12 @@ def test_every_setting_arrives(read_text, tmp_path):
     assert job.quality.h_mm == 0.2
 
 
+def test_a_cone_arrives(read_changed):
+    carrier = read_changed((CYLINDER, 'kind = "cone"\nhalf_angle_deg = -7.5\nmap = "polar"')).carrier
+    assert carrier == ConeSettings(30.0, -7.5, Metal.TOWARD_AXIS, depth_mm=8.0, map=ConeMap.POLAR)
+    assert read_changed((CYLINDER, 'kind = "cone"\nhalf_angle_deg = 12')).carrier.map is ConeMap.FLAT
+
+
 def test_every_optional_setting_has_its_default(read_text, valid_text):
     job = read_text(valid_text)
     assert (job.layout.rows, job.layout.samples, job.layout.level) == (Rows.TOP_DOWN, Samples.CELLS, LevelRule.HALF)
@@ -154,6 +162,7 @@ def test_a_relative_profile_starts_from_the_job(read_changed, tmp_path):
     assert read_changed(("[carrier]", '[print]\nprocess = "own.toml"\n[carrier]')).printing.profile.name == "own"
 
 
+CYLINDER = 'kind = "cylinder"'
 LAYOUT, PORT, CARRIER = "size_mm = [96.0, 64.0]", 'name = "feed"', "radius_mm = 30.0"
 BAD = [
     # code, line as it stands, lines instead, what the message must name
@@ -199,6 +208,12 @@ BAD = [
     ("setting-not-finite", LAYOUT, LAYOUT + "\nlevel = nan", "level"),
     ("setting-range", CARRIER, "radius_mm = 0.0", "more than 0"),
     ("setting-range", CARRIER, "radius_mm = -30.0", "-30"),
+    ("setting-range", CYLINDER, 'kind = "cone"\nhalf_angle_deg = 0', "at least 0.01 degrees off 0"),
+    ("setting-range", CYLINDER, 'kind = "cone"\nhalf_angle_deg = -80.0', "less than 80"),
+    ("setting-missing", CYLINDER, 'kind = "cone"', "half_angle_deg"),
+    ("setting-choice", CYLINDER, 'kind = "cone"\nhalf_angle_deg = 9\nmap = "mercator"', "flat, polar"),
+    ("setting-conflict", CARRIER, CARRIER + "\nhalf_angle_deg = 5", "half_angle_deg"),
+    ("setting-conflict", CARRIER, CARRIER + '\nmap = "flat"', "map"),
     ("setting-range", LAYOUT, "size_mm = [96.0, 0.0]", "size_mm"),
     ("setting-range", LAYOUT, "size_mm = [96.0, 2000.5]", "2000"),
     ("setting-range", LAYOUT, LAYOUT + "\nlevel = 0.0", "between 0 and 1"),
@@ -276,11 +291,8 @@ def test_a_thousand_ports_are_too_many(read_text, valid_text):
 
 
 LATER = [
-    ('kind = "cylinder"', 'kind = "cone"\nhalf_angle_deg = 5'),
     ('kind = "cylinder"', 'kind = "revolved"\nprofile_mm = [[1, 2], [3, 4]]'),
     ('kind = "cylinder"', 'kind = "freeform"\nfile = "core.stl"'),
-    (CARRIER, CARRIER + "\nhalf_angle_deg = 5"),
-    (CARRIER, CARRIER + '\nmap = "flat"'),
     (LAYOUT, LAYOUT + '\nseam = "joined"'),
     (LAYOUT, LAYOUT + '\nmirror_at = "left"'),
     (PORT, PORT + '\nend = "thread"'),

@@ -85,3 +85,62 @@ def test_faces_without_metal_are_refused():
     with pytest.raises(GeometryError) as caught:
         blank_mesh(with_carrier(5.0, True, (20.0, 20.0, 0.0), (30.0, 30.0, 10.0)), printed=False)
     assert caught.value.code == "solid-empty"
+
+
+def cone_blank(half_angle_deg, z_mm, thickness_mm=None, stock=None):
+    """A frustum of radius 30 at z = 0, solid or a shell of a thickness square to its face."""
+    import dataclasses
+
+    from morph.body.face import ConeFace, FaceRole
+    from morph.geometry.cone import Cone
+
+    base = plans.cylinder_blank(z_mm=z_mm, stock=stock)
+    cone = Cone(30.0, np.radians(half_angle_deg))
+    faces = [ConeFace("carrier", FaceRole.PART, 0.0, cone, True), *base.faces[1:]]
+    if thickness_mm is not None:
+        bore = (stock or {}).get("bore", 0.0)
+        faces.append(ConeFace("bore", FaceRole.OUTER, bore, cone.offset(-thickness_mm), False))
+    return dataclasses.replace(base, faces=tuple(faces), outer_radius_mm=None)
+
+
+def frustum(low, high, height):
+    """Volume of a frustum of a cone (handbook of geometry)."""
+    return np.pi * height * (low * low + low * high + high * high) / 3
+
+
+@pytest.mark.parametrize("angle", [12.0, -12.0, 60.0])
+def test_frustum_volume_is_that_of_the_round_body(angle):
+    z = (-10.0, 25.0) if angle != 60.0 else (-10.0, 60.0)
+    slope = np.tan(np.radians(angle))
+    ends = [30.0 + slope * at for at in z]
+    mesh = blank_mesh(cone_blank(angle, z), printed=False)
+    assert mesh_volume_mm3(mesh) == pytest.approx(frustum(*ends, z[1] - z[0]), rel=2e-6)
+    assert measure_condition(mesh).closed and measure_condition(mesh).genus == 0
+    # Every vertex of the round face lies within the facet rule, square to it.
+    at = mesh.vertices_mm
+    away = (np.hypot(at[:, 0], at[:, 1]) - 30.0 - slope * at[:, 2]) * np.cos(np.radians(angle))
+    assert away.max() <= FACET_MM and away.min() > -1e-4
+
+
+def test_conical_shell_and_its_stock():
+    blank = cone_blank(12.0, (-10.0, 25.0), 8.0, {"foot": 2.0, "bore": 0.5})
+    slope, cosine = np.tan(np.radians(12.0)), np.cos(np.radians(12.0))
+
+    def shell(low, high, thickness):
+        outer = [30.0 + slope * z for z in (low, high)]
+        inner = [r - thickness / cosine for r in outer]
+        return frustum(*outer, high - low) - frustum(*inner, high - low)
+
+    finished, printed = blank_mesh(blank, printed=False), blank_mesh(blank, printed=True)
+    assert mesh_volume_mm3(finished) == pytest.approx(shell(-10.0, 25.0, 8.0), rel=4e-6)
+    assert mesh_volume_mm3(printed) == pytest.approx(shell(-12.0, 25.0, 8.5), rel=4e-6)
+    assert measure_condition(printed).genus == 1
+
+
+def test_a_conical_bore_may_end_in_its_apex():
+    # A bore of apex angle 2 x 45 degrees, radius 15 at the top: its volume is that of a cone 15 mm high.
+    blank = cone_blank(45.0, (-20.0, 5.0), 20.0 * np.cos(np.radians(45.0)))
+    outer = frustum(10.0, 35.0, 25.0)
+    mesh = blank_mesh(blank, printed=False)
+    assert mesh_volume_mm3(mesh) == pytest.approx(outer - np.pi * 15**3 / 3, rel=4e-6)
+    assert measure_condition(mesh).genus == 0
