@@ -27,6 +27,9 @@ NO_VALUE = np.float32(1e9)
 SMALLEST = 1e-6
 """Samples nearer to the surface than this (mm) count as outside, so that no sample is exactly zero."""
 
+LIST_REACH_BLOCKS = 0.3
+"""A block's list also serves points up to this many blocks outside it: crease vertices look there."""
+
 RISE_FULL, RISE_NONE = 0.2, 0.9
 """Blends of roofs are full up to, and gone from, these shares of the elevation at which a wall is a ceiling."""
 
@@ -277,6 +280,9 @@ def prune_blocks(
         reach = 0.5 * SQRT3 * block_mm * 1.0001
         own = near[start[b] : start[b + 1]]
         length[b] = keep_near(cx, cy, cz, reach, pieces, owner, blend_mm, own, n, kept, distance)
+        if length[b] > 0:
+            reach += LIST_REACH_BLOCKS * block_mm
+            length[b] = keep_near(cx, cy, cz, reach, pieces, owner, blend_mm, own, n, kept, distance)
         for q in range(length[b]):
             own[q] = kept[q]
 

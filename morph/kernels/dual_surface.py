@@ -170,6 +170,7 @@ def place_vertices(
     steps: int,
     first_vertex: NDArray[np.int32],
     vertices: Floats,
+    normals: NDArray[np.float32],
 ) -> None:
     """Places the vertices of the blocks first..last - 1.
 
@@ -178,7 +179,7 @@ def place_vertices(
 
     The blocks and the field are given as to `sample_blocks`, which filled `values`; `cases` comes from `count_cells`;
     `offset (n,)` is the first vertex of each block. `first_vertex (n, 8, 8, 8)` receives the number of each cell's
-    first vertex, `vertices (nv, 3)` the places in mm.
+    first vertex, `vertices (nv, 3)` the places in mm, `normals (nv, 3)` the field's direction there (with `steps` > 0).
     """
     longest = 1
     for b in range(first, last):
@@ -216,8 +217,10 @@ def place_vertices(
                         point, low, margin, h_mm, bias,
                         pieces, owner, nodes, blend_mm, kept, n, distance, run_piece, gradient,
                     )  # fmt: skip
+                size = np.sqrt(gradient[0] ** 2 + gradient[1] ** 2 + gradient[2] ** 2) + 1e-12
                 for a in range(3):
                     vertices[at, a] = point[a]
+                    normals[at, a] = gradient[a] / size
                 at += 1
 
 

@@ -1,8 +1,8 @@
 """The channels as one closed solid: swept, extracted, simplified, tested for crossings, trimmed.
 
-The extracted surface is simplified once by edge collapses that move it by at most SIMPLIFY_MM. If
-that, or the extraction itself, makes triangles pass through each other or pinches a neck, it is taken
-back: vertices of crossing triangles return to the middle of their cells, and the tolerance is lowered.
+The extracted surface gets its creases (crease.py) and is simplified once by edge collapses that move it by at
+most SIMPLIFY_MM. If that makes triangles pass through each other or pinches a neck the tolerance is lowered;
+as a last resort the creases are given up and vertices of crossing triangles return to the middle of their cells.
 """
 
 from __future__ import annotations
@@ -18,6 +18,7 @@ from morph.core.tolerance import SIMPLIFY_MM
 from morph.geometry.mesh import Mesh
 from morph.solid.blank import blank_body
 from morph.solid.body import arrays_of, body_from, body_of, require_valid
+from morph.solid.crease import sharpen
 from morph.solid.crossings import Crossings, measure_crossings
 from morph.solid.extract import extract_surface
 from morph.solid.field import SampledField, sample_field
@@ -45,19 +46,15 @@ def make_channel_solid(plan: ChannelPlan, blank: Blank, h_mm: float, progress: P
         GeometryError: ``solid-not-closed``, ``solid-self-crosses`` or ``solid-empty``.
     """
     field = sample_field(make_sweep(plan), h_mm, progress)
-    vertices, triangles = extract_surface(field, progress)
-    vertices = round_to_file(vertices)
-    euler = len(vertices) - len(triangles) // 2
-    swept, found = _simplified(vertices, triangles, SIMPLIFY_MM, progress)
-    sound = _is_sound(swept, found, euler)
-    if not sound:
-        before, vertices = vertices, _untangled(field, vertices, triangles, progress)
-        for tolerance in TOLERANCES_MM[int(vertices is before) :]:
-            swept, found = _simplified(vertices, triangles, tolerance, progress)
-            sound = _is_sound(swept, found, euler)
-            if sound:
-                break
-    if not sound:
+    surface = extract_surface(field, progress)
+    vertices, triangles = sharpen(field, surface, progress)
+    swept, found = _sound_mesh(vertices, triangles, progress)
+    if swept is None:
+        vertices, triangles = round_to_file(surface.vertices), surface.triangles
+        vertices = _untangled(field, vertices, triangles, progress)
+        swept, found = _sound_mesh(vertices, triangles, progress)
+    if swept is None:
+        swept, found = _simplified(vertices, triangles, 0.0, progress)
         require_closed(swept, WHAT)
         require_uncrossed(swept, found)
     return ChannelSolid(
@@ -81,6 +78,16 @@ def require_uncrossed(mesh: Mesh, found: Crossings) -> None:
         where=f"the channel solid, first at ({x:.2f}, {y:.2f}, {z:.2f}) mm",
         do="Set another [quality] h_mm (some hundredths of a mm away); if it stays, report the job.",
     )
+
+
+def _sound_mesh(vertices: Floats, triangles: Ints, progress: Progress) -> tuple[Mesh | None, Crossings]:
+    """Returns the surface simplified with the largest tolerance that leaves it sound, None if none does."""
+    euler = len(vertices) - len(triangles) // 2
+    for tolerance in TOLERANCES_MM:
+        swept, found = _simplified(vertices, triangles, tolerance, progress)
+        if _is_sound(swept, found, euler):
+            return swept, found
+    return None, found
 
 
 def _is_sound(mesh: Mesh, found: Crossings, euler: int) -> bool:
@@ -112,7 +119,7 @@ def _untangled(field: SampledField, vertices: Floats, triangles: Ints, progress:
         if not crossed.any():
             break
         if middle is None:
-            middle = round_to_file(extract_surface(field, progress, steps=0)[0])
+            middle = round_to_file(extract_surface(field, progress, steps=0).vertices)
         bad = np.zeros(len(vertices), np.bool_)
         bad[triangles[crossed]] = True
         bad[triangles[bad[triangles].any(axis=1)]] = True

@@ -2,9 +2,11 @@
 
 from __future__ import annotations
 
+from dataclasses import dataclass
 from functools import cache
 
 import numpy as np
+from numpy.typing import NDArray
 
 from morph.core.arrays import Floats, Ints
 from morph.core.progress import Progress
@@ -17,6 +19,26 @@ CHORD_BIAS = 0.07
 NEWTON_STEPS = 2
 
 
+@dataclass(frozen=True, slots=True, eq=False)
+class Surface:
+    """The surface of a field, with what tells which cell each vertex is from; work arrays, not copied.
+
+    Args:
+        vertices: (nv, 3) in mm, one per loop of each cell. normals: (nv, 3) float32 directions of the field there.
+        triangles: (2 nq, 3); rows 2 q and 2 q + 1 make quad q.
+        cases: (n, 8, 8, 8) uint16 case of each cell. first_vertex: (n, 8, 8, 8) int32 first vertex of each cell.
+        vertex_offset: (n,) first vertex of each block. n_loops: (512,) loops of each case.
+    """
+
+    vertices: Floats
+    normals: NDArray[np.float32]
+    triangles: Ints
+    cases: NDArray[np.uint16]
+    first_vertex: NDArray[np.int32]
+    vertex_offset: Ints
+    n_loops: Ints
+
+
 @cache
 def _tables() -> tuple[Ints, Ints, Ints]:
     from morph.kernels.dual_surface import make_loop_tables
@@ -24,14 +46,14 @@ def _tables() -> tuple[Ints, Ints, Ints]:
     return make_loop_tables()
 
 
-def extract_surface(field: SampledField, progress: Progress, steps: int = NEWTON_STEPS) -> tuple[Floats, Ints]:
-    """Returns vertices (n, 3) in mm and triangles (m, 3) of the surface of `field`.
+def extract_surface(field: SampledField, progress: Progress, steps: int = NEWTON_STEPS) -> Surface:
+    """Returns the surface of `field`; every vertex lies in its own cell.
 
     Args:
         field: the sampled field.
         progress: told after each slab of blocks.
         steps: Newton steps of each vertex towards the field's zero; 0 leaves it at the mean of its edge
-            crossings, a coarser place that never folds.
+            crossings, a coarser place that never folds, without normals.
     """
     from morph.kernels.dual_surface import count_cells, join_quads, place_vertices
 
@@ -48,6 +70,7 @@ def extract_surface(field: SampledField, progress: Progress, steps: int = NEWTON
     )
     first_vertex = np.empty(field.codes.shape, np.int32)
     vertices = np.empty((int(n_vertices.sum()), 3))
+    normals = np.zeros((len(vertices), 3), np.float32)
     vertex_offset = np.cumsum(n_vertices) - n_vertices
     arguments = field.kernel_arguments()
     tables = (field.values, cases, loop_of, n_loops, vertex_offset, CHORD_BIAS, steps)
@@ -55,7 +78,7 @@ def extract_surface(field: SampledField, progress: Progress, steps: int = NEWTON
         "solid: vertices",
         n,
         BLOCKS_PER_SLAB,
-        lambda a, b: place_vertices(a, b, *arguments, *tables, first_vertex, vertices),
+        lambda a, b: place_vertices(a, b, *arguments, *tables, first_vertex, vertices, normals),
         progress,
     )
     triangles = np.empty((2 * int(n_quads.sum()), 3), np.int32)
@@ -64,4 +87,4 @@ def extract_surface(field: SampledField, progress: Progress, steps: int = NEWTON
     run_slabs("solid: triangles", n, 2 * BLOCKS_PER_SLAB, lambda a, b: join_quads(a, b, *joined), progress)
     if triangles.size and triangles.min() < 0:
         raise RuntimeError("the sampled field is not closed: a cell beside a crossed edge was skipped")
-    return vertices, triangles.astype(np.int64)
+    return Surface(vertices, normals, triangles.astype(np.int64), cases, first_vertex, vertex_offset, n_loops)

@@ -108,7 +108,8 @@ class SampledField:
         sweep: the pieces. origin_mm: (3,) place of sample (0, 0, 0). h_mm: cell size.
         corner: (n, 3) lowest cell of each block, in key order.
         start, length: (n,) where each block's list of pieces stands in `near`. near: piece numbers.
-        neighbours: (n, 27) block numbers around each block, -1 for none.
+        neighbours: (n, 27) block numbers around each block, -1 for none. keys: (n,) of the blocks, rising.
+        shape: (3,) blocks of the whole box.
         values: (n, 9, 9, 9) float32 samples in mm. codes: (n, 8, 8, 8) uint8 inside bits of the corners.
     """
 
@@ -120,14 +121,26 @@ class SampledField:
     length: Ints
     near: Ints
     neighbours: Ints
+    keys: Ints
+    shape: Ints
     values: NDArray[np.float32]
     codes: NDArray[np.uint8]
 
     def kernel_arguments(self) -> tuple[Any, ...]:
         """Returns what every kernel on blocks takes between its range and its own arrays."""
+        return (self.corner, *self.list_arguments(), self.origin_mm, self.h_mm)
+
+    def list_arguments(self) -> tuple[Any, ...]:
+        """Returns the lists of the blocks and what they point into."""
         s = self.sweep
-        lists = (self.corner, self.start, self.length, self.near)
-        return (*lists, s.pieces, s.owner, s.nodes, s.blend_mm, self.origin_mm, self.h_mm)
+        return (self.start, self.length, self.near, s.pieces, s.owner, s.nodes, s.blend_mm)
+
+    def block_at(self, xyz_mm: Floats, otherwise: Ints) -> Ints:
+        """Returns the block (k,) that holds each point (k, 3), `otherwise (k,)` where it is not an active one."""
+        cell = np.floor((xyz_mm - self.origin_mm) / (8.0 * self.h_mm)).astype(np.int64)
+        key = (cell[:, 0] * self.shape[1] + cell[:, 1]) * self.shape[2] + cell[:, 2]
+        at = np.minimum(np.searchsorted(self.keys, key), len(self.keys) - 1)
+        return np.where(self.keys[at] == key, at, otherwise)
 
 
 def sample_field(sweep: Sweep, h_mm: float, progress: Progress) -> SampledField:
@@ -161,6 +174,8 @@ def sample_field(sweep: Sweep, h_mm: float, progress: Progress) -> SampledField:
         length=length,
         near=near,
         neighbours=_neighbours(keys, shape),
+        keys=keys,
+        shape=shape,
         values=np.empty((len(keys), BLOCK + 1, BLOCK + 1, BLOCK + 1), np.float32),
         codes=np.empty((len(keys), BLOCK, BLOCK, BLOCK), np.uint8),
     )

@@ -125,9 +125,8 @@ def test_volume_error_falls_with_the_square_of_h():
     path = plans.arc((30.0, 20.0, 15.0), big, 0.0, 360.0, 0.4)
     path[-1] = path[0]
     sweep = make_sweep(plans.plan_of([plans.branch("B1", "N1", "N1", path, bore)], blend_mm=0.0))
-    volume = [
-        mesh_volume_mm3(Mesh(*extract_surface(sample_field(sweep, h, SILENT), SILENT))) for h in (0.5, 0.25, 0.125)
-    ]
+    surfaces = [extract_surface(sample_field(sweep, h, SILENT), SILENT) for h in (0.5, 0.25, 0.125)]
+    volume = [mesh_volume_mm3(Mesh(surface.vertices, surface.triangles)) for surface in surfaces]
     order = np.log2((volume[0] - volume[1]) / (volume[1] - volume[2]))
     assert 1.6 < order < 2.4
     assert volume[2] == pytest.approx(2.0 * np.pi**2 * big * (bore / 2) ** 2, rel=3e-4)
