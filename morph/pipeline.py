@@ -111,6 +111,7 @@ def make_records(job: Job, clock: _Clock) -> BuildRecords:
         MorphError: an input or a request that cannot be met, with its code.
     """
     from morph.body.blank import make_blank
+    from morph.body.end import require_ends
     from morph.body.make import make_plan
     from morph.layout.density import make_density
     from morph.layout.extract import make_graph
@@ -119,6 +120,7 @@ def make_records(job: Job, clock: _Clock) -> BuildRecords:
     from morph.surface.wrap import choose_depth_mm, wrap_graph
 
     progress, profile = clock.progress, job.printing.profile
+    require_ends(job.ports)
     with clock.stage("layout"):
         density = make_density(job.layout)
         graph = make_graph(density, job.layout, job.ports, progress)

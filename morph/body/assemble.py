@@ -8,10 +8,19 @@ from dataclasses import dataclass
 import numpy as np
 
 from morph.body.blank import Blank
-from morph.body.cap import BORE_SLACK_MM, find_merges, list_caps
+from morph.body.cap import BORE_SLACK_MM, TAPER, find_merges, list_caps
+from morph.body.finish import Finish
 from morph.body.flow_path import connected_pieces, through_flow
 from morph.body.lead import Lead, lead_strand
-from morph.body.neighbour import Network, Strand, count_as_wall, make_network, near_pairs, room_beside
+from morph.body.neighbour import (
+    Network,
+    Strand,
+    count_as_wall,
+    make_network,
+    near_pairs,
+    polyline_arc_mm,
+    room_beside,
+)
 from morph.body.plan import BranchKind, ChannelPlan, Exit, PlanBranch, PlanNode
 from morph.body.room import Limits, Room, measure_room, way_out, with_neighbours
 from morph.core.arrays import Bools, Floats, Ints
@@ -62,7 +71,7 @@ def assemble_plan(parts: Parts, blend_mm: float, notices: Sequence[Notice]) -> C
     channels = with_bores(parts.fitted)
     n_nodes = len(parts.wrapped.graph.nodes)
     strands = (*channels, *(lead_strand(lead, n_nodes + k) for k, lead in enumerate(parts.leads)))
-    network = make_network(strands, n_nodes + len(parts.leads))
+    network = make_network(strands, n_nodes + len(parts.leads), parts.limits.section)
     wall = parts.limits.between_mm + parts.limits.band_mm
     near = near_pairs(network, float(network.bore_mm.max()) + wall + 1.0)
     pairs = near.only(count_as_wall(network, near, wall))
@@ -164,6 +173,7 @@ def _exit(lead: Lead, blank: Blank) -> Exit:
         face=lead.face,
         bore_mm=bore,
         overshoot_mm=blank.face(lead.face).stock_mm + bore,
+        finish=lead.port.finish_on(lead.face),
     )
 
 
@@ -193,6 +203,14 @@ def _room_notices(parts: Parts, branches: Sequence[PlanBranch]) -> list[Notice]:
     ]
 
 
+def _narrowest_mm(lead: Lead, finish: Finish) -> float:
+    """Returns the least bore of a lead before its pilot and the taper to it."""
+    arc = polyline_arc_mm(lead.path.xyz_mm)
+    before = arc <= arc[-1] - finish.straight_mm(lead.port.bore_mm, TAPER)
+    before[0] = True
+    return float(lead.path.bore_mm[before].min())
+
+
 def _lead_notices(leads: Sequence[Lead]) -> list[Notice]:
     found = []
     for lead in leads:
@@ -200,7 +218,14 @@ def _lead_notices(leads: Sequence[Lead]) -> list[Notice]:
         if lead.kink_rad > 1e-6:
             text = f"{name} starts with a kink of {np.degrees(lead.kink_rad):.0f} deg: no smooth start keeps its walls."
             found.append(Notice("lead-kinked", text, (name,)))
-        narrowest = float(lead.path.bore_mm.min())
+        finish = lead.port.finish_on(lead.face)
+        if 0.0 < finish.pilot_mm < THINNED_SHARE * lead.port.bore_mm:
+            text = (
+                f"{name} narrows from {lead.port.bore_mm:.3f} mm at its port to {finish.pilot_mm:.3f} mm, the pilot "
+                f"of its {finish.words}."
+            )
+            found.append(Notice("thread-narrows", text, (name,)))
+        narrowest = _narrowest_mm(lead, finish)
         if narrowest < THINNED_SHARE * lead.port.bore_mm:
             text = (
                 f"{name} narrows from {lead.port.bore_mm:.3f} mm at its port to {narrowest:.3f} mm "

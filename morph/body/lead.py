@@ -7,10 +7,14 @@ Nothing is random.
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, replace
 
 import numpy as np
 
+from morph.body.end_room import Land
+from morph.body.exit import given_exit
+from morph.body.hole import Hole
 from morph.body.lead_check import Judged, Surroundings
 from morph.body.lead_search import Blocked, Ground, Lead, PortStart, find_lead
 from morph.body.neighbour import Strand, make_network, polyline_arc_mm
@@ -34,6 +38,7 @@ def lay_leads(ground: Ground, ports: Sequence[PortStart], progress: Progress) ->
             `exit-without-wall`, `exits-too-near`. SettingError: `leave-into-metal`, `leave-without-direction`.
     """
     _require_exits_apart(ground, ports)
+    given = {k: taken for k, port in enumerate(ports) if (taken := _take_given(ground, port)) is not None}
     order = list(range(len(ports)))
     tried: set[tuple[int, ...]] = set()
     while True:
@@ -41,15 +46,58 @@ def lay_leads(ground: Ground, ports: Sequence[PortStart], progress: Progress) ->
         laid: dict[int, Lead] = {}
         for k in order:
             try:
-                laid[k] = find_lead(_surround(ground, ports[k], laid, ports), ground, ports[k], progress)
+                own = _with_ends(ground, k, given | {j: _take(lead, ground) for j, lead in laid.items()}, ports)
+                around = _surround(own, ports[k], laid, ports)
+                laid[k] = find_lead(around, own, ports[k], progress)
             except Blocked as blocked:
                 again = [k, *(other for other in order if other != k)]
                 if order[0] == k or tuple(again) in tried:
-                    raise _blocked_error(ports[k], blocked.best, ground.limits) from None
+                    raise _stuck(around, own, ports[k], blocked, progress) from None
                 order = again
                 break
         else:
             return tuple(laid[k] for k in range(len(ports)))
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class _Taken:
+    """What the end of one port takes: the circle of its face, and what is cut there as holes."""
+
+    land: Land
+    cuts: tuple[Hole, ...]
+
+
+def _take(lead: Lead, ground: Ground) -> _Taken:
+    name, place = lead.port.settings.name, lead.path.xyz_mm[-1]
+    finish = lead.port.finish_on(lead.face)
+    size = max(finish.land_mm, float(lead.path.bore_mm[-1]))
+    cuts = finish.cut(name, place, lead.leave, ground.limits.between_mm)
+    return _Taken(Land(name, lead.face, place, size), cuts)
+
+
+def _take_given(ground: Ground, port: PortStart) -> _Taken | None:
+    """Returns what the end of a port takes whose job gives its exit; None when morph chooses it."""
+    if port.settings.exit_mm is None:
+        return None
+    site = given_exit(ground.blank, port.settings, ground.limits.least_bore_mm, ground.limits)
+    name, place = port.settings.name, site.xyz_mm[0]
+    finish = port.finish_on(site.face.name)
+    size = max(finish.land_mm, port.bore_mm)
+    return _Taken(
+        Land(name, site.face.name, place, size), finish.cut(name, place, site.leave[0], ground.limits.between_mm)
+    )
+
+
+def _with_ends(ground: Ground, own: int, taken: Mapping[int, _Taken], ports: Sequence[PortStart]) -> Ground:
+    """Returns the ground for port number `own`: what the ends of the others cut are holes in it, their lands are taken.
+
+    Two plain ends need no land: their leads keep clear of each other by themselves.
+    """
+    others = [taken[k] for k in sorted(taken) if k != own]
+    cuts = tuple(hole for one in others for hole in one.cuts)
+    blank = replace(ground.blank, holes=(*ground.blank.holes, *cuts)) if cuts else ground.blank
+    lands = tuple(taken[k].land for k in sorted(taken) if k != own and (ports[own].finishes or ports[k].finishes))
+    return replace(ground, blank=blank, lands=lands)
 
 
 def _require_exits_apart(ground: Ground, ports: Sequence[PortStart]) -> None:
@@ -75,7 +123,7 @@ def _surround(ground: Ground, port: PortStart, laid: dict[int, Lead], ports: Seq
     strands = list(ground.strands)
     for k in sorted(laid):
         strands.append(lead_strand(laid[k], ground.n_nodes + k))
-    network = make_network(strands, ground.n_nodes + len(ports))
+    network = make_network(strands, ground.n_nodes + len(ports), ground.limits.section)
     return Surroundings(ground.blank, ground.limits, network, cKDTree(network.xyz_mm), port.node)
 
 
@@ -84,6 +132,38 @@ def lead_strand(lead: Lead, end: int) -> Strand:
     path = lead.path
     name = f"L-{lead.port.settings.name}"
     return Strand(name, lead.port.node, end, path.xyz_mm, polyline_arc_mm(path.xyz_mm), path.bore_mm)
+
+
+def _stuck(
+    around: Surroundings, ground: Ground, port: PortStart, blocked: Blocked, progress: Progress
+) -> GeometryError:
+    """Returns the error for a port without a way: of its end when that is what does not fit, else of its way."""
+    if not port.finishes:
+        return _blocked_error(port, blocked.best, ground.limits)
+    finish = port.finishes[0][1]
+    x, y, z = port.xyz_mm
+    where = f"[[port]] '{port.settings.name}' at ({x:.2f}, {y:.2f}, {z:.2f}) mm"
+    if not blocked.fits.any_fits:
+        return GeometryError(
+            "end-no-place",
+            expected=f"a place on a flat port face for the {finish.words}: a land {finish.land_mm:.2f} mm across and a "
+            f"cut {finish.cut_mm:.2f} mm across and {finish.cut_depth_mm:.2f} mm deep, with its walls",
+            found=blocked.fits.nearest_words(),
+            where=where,
+            do="Make the face or the margin larger, choose a smaller thread, or give land_mm or thread_depth_mm.",
+        )
+    try:
+        find_lead(around, ground, replace(port, finishes=()), progress)
+    except Blocked:
+        return _blocked_error(port, blocked.best, ground.limits)
+    return GeometryError(
+        "end-no-straight",
+        expected=f"a straight run of {port.straight_mm(port.bore_mm):.2f} mm behind the exit for the {finish.words} "
+        f"({finish.cut_depth_mm:.2f} mm deep, and the taper from pilot to channel), with its walls",
+        found="no way from the port that ends so; a plain end would have one",
+        where=where,
+        do="Give the blank more margin below the sheet, a port face farther off, a smaller thread, or thread_depth_mm.",
+    )
 
 
 def _blocked_error(port: PortStart, best: tuple[Judged, str] | None, limits: Limits) -> GeometryError:

@@ -87,18 +87,27 @@ class Bundle:
         """Returns the bundle with the paths `keep` (a mask or numbers)."""
         return Bundle(self.paths.only(keep), self.developed, self.face, self.leave[keep])
 
-    def only_valid(self) -> Bundle:
-        """Returns the bundle without the paths whose legs are too short for their arcs."""
-        return self.only(self.paths.valid)
+    def exits(self, carrier: Carrier) -> Floats:
+        """Returns where each path comes out (n, 3) in the part frame."""
+        last = self.paths.vertices[:, -1]
+        return carrier.point_mm(last[:, :2], last[:, 2]) if self.developed else last
+
+    def runs_straight(self, bend: Bend) -> Bools:
+        """Returns which paths (n,) have the straight run behind the exit that an end needs."""
+        return np.asarray(self.paths.pieces[:, -1] >= bend.whole_mm, dtype=np.bool_)
 
 
 @dataclass(frozen=True, slots=True)
 class Bend:
-    """What shapes a candidate: bend radius, straight end before the face, and bore, all in mm."""
+    """What shapes a candidate: bend radius, straight end before the face, bore, and the straight run of an end, in mm.
+
+    `straight_mm` is kept where the last turn is a right angle; `whole_mm` always, 0 for a plain end.
+    """
 
     radius_mm: float
     straight_mm: float
     bore_mm: float
+    whole_mm: float = 0.0
 
 
 def make_start(carrier: Carrier, xyz_mm: Floats, heading: Floats) -> Start:
@@ -139,7 +148,7 @@ def two_bends(start: Start, sites: Sites, bend: Bend, carrier: Carrier | None) -
                 bundle = Bundle(make_paths(vertices, radii), carrier is not None, sites.face, sites.leave)
                 # Where there is no height to choose from, all levels are the same path.
                 same = (share > 0.0) & (height - lowest < LEAST_LEVEL_MM)
-                found.append(bundle.only(bundle.paths.valid & ~same))
+                found.append(bundle.only(bundle.paths.valid & ~same & bundle.runs_straight(bend)))
     return found
 
 
@@ -208,6 +217,7 @@ def _bent_once(
     vertices = np.stack([np.broadcast_to(origin, exits.shape), corners[chosen], exits], axis=1)
     paths = make_paths(vertices, np.full(len(chosen), radius_mm))
     straight_on = paths.turn_rad[:, 0] <= 1e-6
+    straight_on &= paths.lengths() >= bend.whole_mm
     keep = paths.valid & (straight_on | (paths.pieces[:, -1] >= bend.straight_mm))
     return Bundle(paths.only(keep), carrier is not None, face, sites.leave[keep])
 
@@ -242,7 +252,8 @@ def detours(start: Start, sites: Sites, bend: Bend, carrier: Carrier | None, mos
         first = start_corner(origin, heading, via, radii, np.zeros(len(via)))
         vertices = np.stack([np.broadcast_to(origin, via.shape), first, via, lasts, ends], axis=1)
         out = np.tile(sites.leave, (len(grid), 1))
-        found.append(Bundle(make_paths(vertices, radii), carrier is not None, sites.face, out).only_valid())
+        bundle = Bundle(make_paths(vertices, radii), carrier is not None, sites.face, out)
+        found.append(bundle.only(bundle.paths.valid & bundle.runs_straight(bend)))
     return found
 
 

@@ -10,9 +10,11 @@ import numpy as np
 from morph.body.blank import Blank
 from morph.body.cap import TAPER, lower_to_taper
 from morph.body.face import Face
+from morph.body.finish import PLAIN, Finish
 from morph.body.neighbour import WALL_WAY, Network, distance_to_strand_mm, polyline_arc_mm, way_from_node_mm
 from morph.body.room import STEEPNESS, Limits, Room, measure_room, way_out, with_neighbours
-from morph.core.arrays import Bools, Floats, Ints
+from morph.body.section import bore_of_reach_mm, reach_mm
+from morph.core.arrays import Bools, Floats, Ints, unit_rows
 
 NECK = 0.95
 """A lead may be narrower than its bore by this factor where its room is just short."""
@@ -121,7 +123,9 @@ def room_between(around: Surroundings, xyz_mm: Floats, arc_mm: Floats, bore_mm: 
         bore_mm: (k,) bore wanted.
     """
     network = around.network
-    reach = 0.5 * float(bore_mm.max() + network.bore_mm.max()) + around.wall_mm + 1.0
+    widest = np.array([bore_mm.max(), network.bore_mm.max()])
+    highest = reach_mm(widest, network.section.up, network.section)
+    reach = float(highest.sum()) + around.wall_mm + 1.0
     lists = around.finder.query_ball_point(xyz_mm, reach, return_sorted=True)
     mine = np.repeat(np.arange(len(xyz_mm)), [len(found) for found in lists])
     room = np.full(len(xyz_mm), np.inf)
@@ -130,17 +134,21 @@ def room_between(around: Surroundings, xyz_mm: Floats, arc_mm: Floats, bore_mm: 
         return room, by
     at = np.concatenate([np.asarray(found, dtype=np.int64) for found in lists])
     distance = distance_to_strand_mm(network, xyz_mm[mine], at)
-    needed = 0.5 * (bore_mm[mine] + network.bore_mm[at]) + around.wall_mm
+    toward, rule = unit_rows(network.xyz_mm[at] - xyz_mm[mine]), network.section
+    beside = reach_mm(network.bore_mm[at], -toward, rule)
+    needed = reach_mm(bore_mm[mine], toward, rule) + beside + around.wall_mm
     counts = arc_mm[mine] + way_from_node_mm(network, around.node, at) > WALL_WAY * needed
     mine, at, distance = mine[counts], at[counts], distance[counts]
-    left = 2.0 * (distance - around.wall_mm) - network.bore_mm[at]
+    left = bore_of_reach_mm(distance - around.wall_mm - beside[counts], toward[counts], rule)
     order = np.lexsort((at, left, mine))
     first = order[np.unique(mine[order], return_index=True)[1]]
     room[mine[first]], by[mine[first]] = left[first], network.owner[at[first]]
     return room, by
 
 
-def judge_path(around: Surroundings, xyz_mm: Floats, face: Face, port_bore_mm: float, bore_mm: float) -> Judged:
+def judge_path(
+    around: Surroundings, xyz_mm: Floats, face: Face, port_bore_mm: float, bore_mm: float, finish: Finish = PLAIN
+) -> Judged:
     """Returns the bore that fits along a finely sampled path and how short it falls of the one wanted.
 
     Args:
@@ -149,9 +157,11 @@ def judge_path(around: Surroundings, xyz_mm: Floats, face: Face, port_bore_mm: f
         face: the face it comes out of.
         port_bore_mm: bore of the channel at the port.
         bore_mm: bore wanted; from the port's bore it is reached at the taper.
+        finish: of the exit; a pilot is reached at the taper too.
     """
     arc = polyline_arc_mm(xyz_mm)
     wanted = np.maximum(port_bore_mm - TAPER * arc, min(bore_mm, port_bore_mm))
+    wanted = finish.bore_mm(wanted, arc[-1] - arc, TAPER)
     opening = way_out(face, xyz_mm)
     faces = measure_room(around.blank, around.limits, xyz_mm, face.name, opening)
     beside, by = room_between(around, xyz_mm, arc, wanted)

@@ -15,7 +15,11 @@ from typing import TypeGuard
 import numpy as np
 
 from morph.body.blank import Blank
+from morph.body.end import straight_run_mm
+from morph.body.end_fit import EndFits
+from morph.body.end_room import Land
 from morph.body.exit import given_exit, given_leave, list_sites, port_faces
+from morph.body.finish import PLAIN, Finish
 from morph.body.lead_candidate import Bend, Bundle, detours, make_start, one_bend, sort_bundles, two_bends
 from morph.body.lead_check import COARSE_SLACK_MM, NECK, Judged, Surroundings, coarse_channels, coarse_faces, judge_path
 from morph.body.lead_path import least_bend_radius_mm
@@ -70,6 +74,7 @@ class PortStart:
         settings: the job's port. node: index of its node. xyz_mm: (3,).
         heading: (3,) unit, the channel's direction carried on, or None for a port amid a channel.
         into_metal: (3,) unit. bore_mm: bore of the channel there.
+        finishes: the faces where an end that is not plain can be made, each with its finish.
     """
 
     settings: PortSettings
@@ -78,6 +83,15 @@ class PortStart:
     heading: Floats | None
     into_metal: Floats
     bore_mm: float
+    finishes: tuple[tuple[str, Finish], ...] = ()
+
+    def finish_on(self, face: str) -> Finish:
+        """Returns the finish of an exit on `face`."""
+        return dict(self.finishes).get(face, PLAIN)
+
+    def straight_mm(self, bore_mm: float) -> float:
+        """Returns the longest straight run that a finish needs behind the exit of a lead of `bore_mm`."""
+        return max((straight_run_mm(finish, bore_mm) for _, finish in self.finishes), default=0.0)
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -97,7 +111,10 @@ class Lead:
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Ground:
-    """What all leads share: body, carrier, limits, the laid channels, and the profile's bend radius in bores."""
+    """What all leads share: body, carrier, limits, the laid channels, the profile's bend radius in bores.
+
+    For one lead the blank also holds what other ends will cut, as holes, and `lands` the circles they take.
+    """
 
     blank: Blank
     carrier: Carrier
@@ -105,13 +122,15 @@ class Ground:
     strands: tuple[Strand, ...]
     n_nodes: int
     bend_bores: float
+    lands: tuple[Land, ...] = ()
 
 
 class Blocked(Exception):
-    """No legal way for one port: the best path tried and its face, for the message."""
+    """No legal way for one port: the best path tried and its face, and how its end fitted, for the message."""
 
-    def __init__(self, best: tuple[Judged, str] | None) -> None:
+    def __init__(self, best: tuple[Judged, str] | None, fits: EndFits) -> None:
         self.best = best
+        self.fits = fits
         super().__init__()
 
 
@@ -128,6 +147,8 @@ def find_lead(around: Surroundings, ground: Ground, port: PortStart, progress: P
         Blocked: no way was found. SettingError, GeometryError: a given exit or direction is impossible.
     """
     best: tuple[Judged, str] | None = None
+    opening = Finish(PLAIN.detail, land_mm=port.bore_mm)
+    fits = EndFits(around, ground.limits, ground.lands, port.settings.name, port.finishes, opening)
     tried: set[tuple[bool, bool, float]] = set()
     for done, (kinked, detour, share) in enumerate(SEARCHES):
         progress.step(f"lead of {port.settings.name}", done, len(SEARCHES))
@@ -136,10 +157,10 @@ def find_lead(around: Surroundings, ground: Ground, port: PortStart, progress: P
         if not headings or (kinked, detour, bore) in tried:
             continue
         tried.add((kinked, detour, bore))
-        bend = _bend(ground, bore)
+        bend = _bend(ground, port, bore)
         bundles, kinks = [], []
         for kink, heading in headings:
-            found = _candidates(ground, port, heading, bend, detour)
+            found = _candidates(ground, port, heading, bend, detour, fits)
             bundles += found
             kinks += [kink] * len(found)
         lead, close = _first_legal(around, ground, port, bundles, kinks, bend)
@@ -147,7 +168,7 @@ def find_lead(around: Surroundings, ground: Ground, port: PortStart, progress: P
             return lead
         if close is not None and (best is None or close[0].share > best[0].share):
             best = close
-    raise Blocked(best)
+    raise Blocked(best, fits)
 
 
 def _headings(port: PortStart, kinked: bool) -> list[tuple[float, Floats]]:
@@ -161,22 +182,27 @@ def _headings(port: PortStart, kinked: bool) -> list[tuple[float, Floats]]:
     return [(float(turn), np.cos(turn) * ahead + np.sin(turn) * across) for turn in KINKS_RAD]
 
 
-def _bend(ground: Ground, bore_mm: float) -> Bend:
+def _bend(ground: Ground, port: PortStart, bore_mm: float) -> Bend:
     radius = max(LEAST_BEND_BORES, ground.bend_bores) * bore_mm
-    return Bend(radius * BEND_MARGIN, STRAIGHT_BORES * bore_mm, bore_mm)
+    whole = port.straight_mm(bore_mm)
+    return Bend(radius * BEND_MARGIN, max(STRAIGHT_BORES * bore_mm, whole), bore_mm, whole)
 
 
-def _candidates(ground: Ground, port: PortStart, heading: Floats, bend: Bend, detour: bool) -> list[Bundle]:
+def _candidates(
+    ground: Ground, port: PortStart, heading: Floats, bend: Bend, detour: bool, fits: EndFits
+) -> list[Bundle]:
     start = make_start(ground.carrier, port.xyz_mm, heading)
     leave = given_leave(port.settings)
     if port.settings.exit_mm is not None:
         places = [given_exit(ground.blank, port.settings, ground.limits.least_bore_mm, ground.limits)]
+        fits.require(places[0].face, places[0].xyz_mm[0], port.straight_mm(bend.bore_mm))
         found: list[Bundle] = []
     else:
         places = [
             list_sites(ground.blank, face, port.xyz_mm, bend.bore_mm, leave, ground.limits)
             for face in port_faces(ground.blank)
         ]
+        places = [fits.only(sites) for sites in places]
         frames = () if detour else (None, ground.carrier)
         found = [
             bundle for frame in frames for bundle in one_bend(start, ground.blank, bend, leave, ground.limits, frame)
@@ -184,7 +210,7 @@ def _candidates(ground: Ground, port: PortStart, heading: Floats, bend: Bend, de
     make = detours if detour else two_bends
     for sites in places:
         found += make(start, sites, bend, None) + make(start, sites, bend, ground.carrier)
-    return [bundle for bundle in found if len(bundle.leave)]
+    return [bundle for bundle in (fits.only_fitting(one, ground.carrier) for one in found) if len(bundle.leave)]
 
 
 def _first_legal(
@@ -264,6 +290,6 @@ def _judge(
     length = float(np.linalg.norm(np.diff(rough, axis=1), axis=2).sum())
     fine = one.points(ground.carrier, max(8, int(np.ceil(1.05 * length / spacing)) + 1))[0]
     fine[0] = port.xyz_mm
-    path = judge_path(around, fine, bundle.face, port.bore_mm, bend.bore_mm)
+    path = judge_path(around, fine, bundle.face, port.bore_mm, bend.bore_mm, port.finish_on(bundle.face.name))
     size = float(polyline_arc_mm(fine)[-1])
     return Lead(port, path, bundle.face.name, bundle.leave[k], size, kink)

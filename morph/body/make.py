@@ -16,6 +16,7 @@ import numpy as np
 from morph.body.assemble import Parts, assemble_plan, with_bores
 from morph.body.blank import Blank
 from morph.body.cap import clamp_notices, fit_bores, require_least_bore_fits
+from morph.body.end import list_finishes, require_groove_clear
 from morph.body.lead import Ground, PortStart, lay_leads
 from morph.body.neighbour import Network, Strand, make_network, polyline_arc_mm
 from morph.body.plan import ChannelPlan
@@ -63,21 +64,30 @@ def make_plan(
         build_direction: from the plate into the part; roofs point that way.
 
     Raises:
-        SettingError: `bore-range-empty`, `leave-into-metal`, `leave-without-direction`.
+        SettingError: `bore-range-empty`, `leave-into-metal`, `leave-without-direction`; of an end `thread-unknown`,
+            `thread-too-small`, `land-too-small`.
         GeometryError: `no-room-for-smallest-bore`, `lead-blocked`, `exit-off-port-face`, `exit-without-wall`,
-            `exits-too-near`.
+            `exits-too-near`; of an end `land-not-flat`, `end-not-square`, `land-off-face`, `lands-overlap`,
+            `end-without-wall`, `end-no-place`, `end-no-straight`, `groove-too-near-bore`.
     """
-    limits = make_limits(section, service, profile)
+    limits = make_limits(section, service, profile, build_direction)
     allowed = (limits.least_bore_mm, limits.greatest_bore_mm)
     laid = [_refine(branch, wrapped, section.bore_scale, limits) for branch in wrapped.graph.branches]
     index = {node.id: k for k, node in enumerate(wrapped.graph.nodes)}
-    wanted = _channel_network(laid, index, allowed)
+    wanted = replace(_channel_network(laid, index, allowed), section=limits.section)
     progress.step("bores", 0, 3)
     require_least_bore_fits(blank, wanted, limits)
     fitted, _ = fit_bores(wanted, measure_room(blank, limits, wanted.xyz_mm), limits)
     progress.step("bores", 1, 3)
     ground = Ground(blank, wrapped.carrier, limits, with_bores(fitted), len(index), profile.bend_radius_bores.value)
-    starts = [_port_start(port, wrapped, laid, fitted, index) for port in job_ports]
+    rule = make_section_rule(section, profile, build_direction)
+    finishes = [list_finishes(port, blank, rule, service, profile) for port in job_ports]
+    starts = [
+        replace(_port_start(port, wrapped, laid, fitted, index), finishes=finish)
+        for port, finish in zip(job_ports, finishes, strict=True)
+    ]
+    for start in starts:
+        require_groove_clear(start.settings, start.bore_mm, limits)
     leads = lay_leads(ground, starts, progress)
     progress.step("bores", 2, 3)
     notices = clamp_notices(
@@ -88,7 +98,7 @@ def make_plan(
     )
     parts = Parts(wrapped, blank, limits, tuple(one.sheet_mm for one in laid), wanted, fitted, leads)
     plan = assemble_plan(parts, section.blend_mm, notices)
-    return replace(plan, section=make_section_rule(section, profile, build_direction))
+    return replace(plan, section=rule)
 
 
 def _refine(branch: Branch, wrapped: WrappedGraph, scale: float, limits: Limits) -> _Laid:

@@ -10,6 +10,7 @@ from enum import StrEnum
 
 import numpy as np
 
+from morph.body.finish import PLAIN, Finish
 from morph.body.section import SectionRule
 from morph.core.arrays import Bools, Floats, frozen_bools, frozen_floats
 from morph.core.tolerance import COINCIDE_MM
@@ -96,6 +97,7 @@ class Exit:
         xyz_mm: (3,) centre of the opening on the finished face. leave: (3,) unit, out of the metal.
         face: the face's name. bore_mm: bore at the exit.
         overshoot_mm: how far the field is swept past `xyz_mm` (stock plus one bore).
+        finish: what is cut there after printing.
     """
 
     port: str
@@ -107,6 +109,7 @@ class Exit:
     face: str
     bore_mm: float
     overshoot_mm: float
+    finish: Finish = PLAIN
 
     def __post_init__(self) -> None:
         object.__setattr__(self, "xyz_mm", frozen_floats("xyz_mm", self.xyz_mm, (3,)))

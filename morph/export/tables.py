@@ -13,11 +13,13 @@ from collections.abc import Iterable, Sequence
 import numpy as np
 
 from morph.body.blank import Blank
-from morph.body.plan import ChannelPlan, PlanBranch
+from morph.body.finish import ThreadHole
+from morph.body.plan import ChannelPlan, Exit, PlanBranch
 from morph.core.arrays import Floats
 from morph.core.verdict import HEADLINE_ORDER, Notice, Verdict
 from morph.export.exit_wall import least_wall_around, straight_run_mm
 from morph.export.numbers import json_bytes, rounded
+from morph.settings.job import FaceSealEnd
 
 __all__ = ["graph_json", "json_bytes", "ports_csv", "verdicts_csv"]
 
@@ -51,9 +53,19 @@ PORT_COLUMNS = (
     "leave_y",
     "leave_z",
     "end",
+    "designation",
     "bore_mm",
     "drill_mm",
     "drill_depth_mm",
+    "drill_stock_mm",
+    "major_mm",
+    "minor_mm",
+    "thread_depth_mm",
+    "run_out_mm",
+    "land_mm",
+    "groove_inner_mm",
+    "groove_outer_mm",
+    "groove_depth_mm",
     "stock_mm",
     "wall_around_mm",
     "wall_around_to",
@@ -118,10 +130,14 @@ def graph_json(plan: ChannelPlan) -> bytes:
 def ports_csv(plan: ChannelPlan, blank: Blank) -> bytes:
     """Returns ports.csv: where each port comes out, how its end is made and the metal around it.
 
-    `leave` points out of the metal. A plain end is used as printed; `drill_mm` is the bore that a
-    drill may follow there and `drill_depth_mm` how far the lead stays straight behind the finished
-    face. `wall_around_mm` is the least metal between the rim of the opening and the next face,
-    hole or exit, named in `wall_around_to`. Places are on the finished face; `stock_mm` lies on it.
+    `leave` points out of the metal. `bore_mm` is the bore printed at the exit: the channel's own, or the pilot
+    of a thread. A plain end is used as printed; `drill_mm` is the bore that a drill may follow there and
+    `drill_depth_mm` how far the lead stays straight behind the finished face. For a thread they are the tapping
+    drill and its depth (`thread_depth_mm` plus `run_out_mm`), and `drill_stock_mm` what it takes per side. A seal
+    groove is cut later and not drilled. `land_mm` is the circle of the face that stays flat. `wall_around_mm` is the
+    least metal between the rim of the opening (from the major diameter over the drill's depth; from the groove) and
+    the next face, hole or exit, named in `wall_around_to`. Places and depths are from the finished face; `stock_mm`
+    lies on it.
     """
     lead = {branch.id: branch for branch in plan.branches}
     rows: list[list[Cell]] = []
@@ -138,16 +154,36 @@ def ports_csv(plan: ChannelPlan, blank: Blank) -> bytes:
                 exit_.face,
                 *place,
                 *(rounded(float(v)) for v in exit_.leave),
-                "plain",
-                rounded(exit_.bore_mm, True),
-                rounded(exit_.bore_mm, True),
-                rounded(straight_mm, True),
+                *_end_cells(exit_, straight_mm),
                 rounded(blank.face(exit_.face).stock_mm, True),
                 rounded(wall_mm, True),
                 neighbour,
             ]
         )
     return _csv_bytes(PORT_COLUMNS, rows)
+
+
+def _end_cells(exit_: Exit, straight_mm: float) -> list[Cell]:
+    """Returns the cells from `end` to `groove_depth_mm`."""
+    bore, land = rounded(exit_.bore_mm, True), rounded(exit_.finish.land_mm, True)
+    detail = exit_.finish.detail
+    if isinstance(detail, ThreadHole):
+        thread = detail.thread
+        numbers = [
+            exit_.bore_mm,
+            thread.drill_mm,
+            detail.drill_depth_mm,
+            detail.drill_stock_mm,
+            thread.major_mm,
+            thread.minor_mm,
+            detail.thread_depth_mm,
+            detail.run_out_mm,
+        ]
+        return ["thread", thread.designation, *(rounded(v, True) for v in numbers), land, None, None, None]
+    if isinstance(detail, FaceSealEnd):
+        groove = [rounded(v, True) for v in (detail.groove_inner_mm, detail.groove_outer_mm, detail.groove_depth_mm)]
+        return ["face-seal", None, bore, *[None] * 7, land, *groove]
+    return ["plain", None, bore, bore, rounded(straight_mm, True), *[None] * 9]
 
 
 def _place_text(place: Floats | tuple[float, ...] | None) -> str | None:

@@ -33,6 +33,7 @@ from morph.report.sheet_view import SheetScene, draw_sheet
 from morph.report.texts import (
     CAUTIONS,
     amount,
+    end_words,
     flat_settings,
     limit_words,
     outcome_class,
@@ -95,7 +96,7 @@ def _port_rows(records: BuildRecords) -> list[dict[str, str]]:
             "bore": amount(exit_.bore_mm, "mm"),
             "lead": f"{exit_.lead}, {amount(lead[exit_.lead].length_mm, 'mm')}",
             "stock": amount(records.blank.face(exit_.face).stock_mm, "mm"),
-            "end": "plain, as printed",
+            "end": end_words(exit_),
         }
         for exit_ in records.plan.exits
     ]

@@ -4,7 +4,10 @@ from __future__ import annotations
 
 from typing import Any
 
+from morph.body.finish import ThreadHole
+from morph.body.plan import Exit
 from morph.core.verdict import Outcome, Verdict
+from morph.settings.job import FaceSealEnd
 
 DECIMALS = {"mm": 2, "mm2": 1, "mm3": 0, "deg": 1, "count": 0, "ratio": 3, "bores": 2}
 UNIT_WORDS = {"mm2": "mm²", "mm3": "mm³", "deg": "°", "count": "", "ratio": ""}
@@ -64,6 +67,24 @@ def place_words(sheet_mm: tuple[float, float] | None, xyz_mm: tuple[float, float
     if xyz_mm is not None:
         lines.append("part " + ", ".join(f"{value:.1f}" for value in xyz_mm) + " mm")
     return lines
+
+
+def end_words(exit_: Exit) -> str:
+    """Returns how an exit is finished, with what the shop needs to machine it."""
+    detail, land = exit_.finish.detail, amount(exit_.finish.land_mm, "mm")
+    if isinstance(detail, ThreadHole):
+        return (
+            f"thread {detail.thread.designation}: pilot as printed {amount(exit_.bore_mm, 'mm')}, drill "
+            f"{amount(detail.thread.drill_mm, 'mm')} to {amount(detail.drill_depth_mm, 'mm')}, thread "
+            f"{amount(detail.thread_depth_mm, 'mm')} deep, flat land {land}"
+        )
+    if isinstance(detail, FaceSealEnd):
+        return (
+            f"face seal: groove {amount(detail.groove_inner_mm, 'mm')} to {amount(detail.groove_outer_mm, 'mm')}, "
+            f"{amount(detail.groove_depth_mm, 'mm')} deep, flat land {land}; machined later, sizes as given, not "
+            "checked against a standard"
+        )
+    return "plain, as printed"
 
 
 def flat_settings(value: Any, name: str = "") -> list[tuple[str, str]]:

@@ -90,14 +90,51 @@ class Role(StrEnum):
 
 
 @dataclass(frozen=True, slots=True)
+class PlainEnd:
+    """An end that is used as printed."""
+
+
+@dataclass(frozen=True, slots=True)
+class ThreadEnd:
+    """A thread cut after printing; lengths that are None follow from the thread (body/end.py).
+
+    Args:
+        designation: such as "G1/4" or "M10x1".
+        thread_depth_mm: full thread below the finished face. run_out_mm: what the drill goes deeper.
+        drill_stock_mm: metal the drill takes per side of the printed pilot (0.3: common practice, no source).
+        land_mm: diameter of the flat seal land around the thread.
+    """
+
+    designation: str
+    thread_depth_mm: float | None = None
+    run_out_mm: float | None = None
+    drill_stock_mm: float = 0.3
+    land_mm: float | None = None
+
+
+@dataclass(frozen=True, slots=True)
+class FaceSealEnd:
+    """A seal ring in a groove in the face, machined after printing; all sizes are the user's."""
+
+    groove_inner_mm: float
+    groove_outer_mm: float
+    groove_depth_mm: float
+    land_mm: float
+
+
+EndSettings = PlainEnd | ThreadEnd | FaceSealEnd
+
+
+@dataclass(frozen=True, slots=True)
 class PortSettings:
-    """One [[port]]: `exit_mm` and `leave` are None when morph chooses the exit."""
+    """One [[port]]: `exit_mm` and `leave` are None when morph chooses the exit; `end` is how it is finished."""
 
     name: str
     role: Role
     at_mm: tuple[float, float]
     exit_mm: tuple[float, float, float] | None = None
     leave: tuple[float, float, float] | None = None
+    end: EndSettings = field(default_factory=PlainEnd)
 
 
 class Metal(StrEnum):
@@ -162,6 +199,8 @@ class ServiceSettings:
     wall_outer_mm: float = 3.0
     wall_hole_mm: float = 3.0
     smallest_bore_mm: float = 3.0
+
+
 class ConeMap(StrEnum):
     """How the sheet lies on a cone: flat keeps its lengths, polar closes a full wrap."""
 
@@ -180,8 +219,6 @@ class ConeSettings:
     wall_to_face_mm: float | None = None
     true_at: TrueAt = TrueAt.DEPTH
     map: ConeMap = ConeMap.FLAT
-
-
 
 
 @dataclass(frozen=True, slots=True)

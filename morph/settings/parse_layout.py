@@ -20,6 +20,7 @@ from morph.settings.job import (
     Seam,
     SeenFrom,
 )
+from morph.settings.parse_end import END_KEYS, parse_end
 from morph.settings.table import Choice, Table, show
 
 LARGEST_SHEET_MM = 2000.0
@@ -40,9 +41,7 @@ _LAYOUT_KEYS = (
     "seam",
     "mirror_at",
 )
-_PORT_KEYS = ("name", "role", "at_mm", "exit_mm", "leave", "end")
-_PORT_LATER = {"thread": "End preparation other than plain (threads, face seals)"}
-_END_LATER = {"thread": "Threaded ends", "face-seal": "Face-seal ends"}
+_PORT_KEYS = ("name", "role", "at_mm", "exit_mm", "leave", *END_KEYS)
 
 
 def parse_layout(values: Any, file: str, folder: Path) -> LayoutSettings:
@@ -172,7 +171,7 @@ def _require_distinct(port: PortSettings, other: PortSettings, where: str) -> No
 
 
 def _port(values: Any, file: str, index: int, size_mm: tuple[float, float]) -> PortSettings:
-    table = Table(values, file, f"[[port]] {index}", _PORT_KEYS, _PORT_LATER)
+    table = Table(values, file, f"[[port]] {index}", _PORT_KEYS)
     name = table.text("name")
     if not _PORT_NAME.fullmatch(name):
         table.refuse(
@@ -189,6 +188,7 @@ def _port(values: Any, file: str, index: int, size_mm: tuple[float, float]) -> P
         at_mm=_place(table, size_mm),
         exit_mm=_triple(table, "exit_mm") if table.has("exit_mm") else None,
         leave=direction(table, "leave") if table.has("leave") else None,
+        end=parse_end(table),
     )
 
 

@@ -293,11 +293,7 @@ def test_a_thousand_ports_are_too_many(read_text, valid_text):
 LATER = [
     ('kind = "cylinder"', 'kind = "revolved"\nprofile_mm = [[1, 2], [3, 4]]'),
     ('kind = "cylinder"', 'kind = "freeform"\nfile = "core.stl"'),
-    (LAYOUT, LAYOUT + '\nseam = "joined"'),
     (LAYOUT, LAYOUT + '\nmirror_at = "left"'),
-    (PORT, PORT + '\nend = "thread"'),
-    (PORT, PORT + '\nend = "face-seal"'),
-    (PORT, PORT + '\nthread = "G1/4"'),
     ("[carrier]", '[blank]\nkind = "mesh"\n[carrier]'),
     ("[carrier]", '[blank]\nfile = "blank.stl"\n[carrier]'),
     ("[carrier]", "[blank]\nflange = { radius_mm = 45, height_mm = 12 }\n[carrier]"),
