@@ -180,8 +180,6 @@ def _port(values: Any, file: str, index: int, size_mm: tuple[float, float]) -> P
             expected="at most 40 letters, digits, points, hyphens and underscores, a letter or digit first",
             do="The name becomes part of ids in the result files; choose a plain one.",
         )
-    if table.has("end"):
-        table.word("end", ["plain"], _END_LATER)
     return PortSettings(
         name=name,
         role=table.choice("role", Role),
