@@ -15,7 +15,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 from morph.core.progress import SILENT, Progress
-from morph.core.verdict import HEADLINE_ORDER, Notice, Outcome, Verdict
+from morph.core.verdict import HEADLINE_ORDER, Notice, Outcome, Verdict, worst_outcome
 from morph.settings.job import Job
 
 if TYPE_CHECKING:
@@ -56,9 +56,8 @@ class Result:
 
     @property
     def headline(self) -> Outcome:
-        """The worst outcome over all verdicts, not-checked rows aside."""
-        checked = [v.outcome for v in self.verdicts if v.outcome is not Outcome.NOT_CHECKED]
-        return min(checked, key=HEADLINE_ORDER.__getitem__, default=Outcome.PASS)
+        """The worst outcome over all verdicts: fail, not checked, watch, pass."""
+        return worst_outcome(self.verdicts)
 
 
 def _peak_mib() -> float:
@@ -152,6 +151,8 @@ def make_records(job: Job, clock: _Clock) -> BuildRecords:
             profile=profile,
             service=job.service,
             build_direction=job.printing.build_direction,
+            graph=graph,
+            bore_scale=job.section.bore_scale,
         )
         measured = measure_insert(subject, progress)
         verdicts = sort_verdicts(check_insert(subject, progress, measured) + _not_checked())

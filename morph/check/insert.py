@@ -6,6 +6,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from morph.check.as_drawn import check_as_drawn, measure_departure
 from morph.check.bend import check_bends
 from morph.check.between import check_between
 from morph.check.bore import check_bores, measure_bores
@@ -15,8 +16,10 @@ from morph.check.centreline import Centrelines, make_centrelines
 from morph.check.channel_wall import ChannelWall, make_channel_wall
 from morph.check.condition import check_condition
 from morph.check.fields import ChannelFields, make_fields
+from morph.check.lead_narrow import check_leads
 from morph.check.machine import check_machine
 from morph.check.opening import check_openings
+from morph.check.overhang import check_overhang
 from morph.check.powder import check_powder
 from morph.check.subject import CheckSubject
 from morph.check.wall import check_faces, check_holes
@@ -76,8 +79,10 @@ def check_insert(
     progress.step(STAGE, 3, STEPS)
     rows += check_openings(subject.insert, subject.plan, subject.blank, lines)
     rows += check_bores(subject, lines, shared.bore_mm)
-    rows += check_capped(subject.plan)
+    rows += _check_likeness(subject)
+    rows += check_leads(lines)
     rows += check_ceiling(wall.mesh, subject.profile, direction, lines)
+    rows += check_overhang(subject.insert, subject.blank, subject.profile, direction)
     progress.step(STAGE, 4, STEPS)
     rows += check_bends(lines, subject.profile)
     rows += check_powder(lines, subject.blank, direction)
@@ -86,6 +91,14 @@ def check_insert(
     rows += check_machine(subject.insert.mesh, subject.profile, direction)
     progress.step(STAGE, 6, STEPS)
     return tuple(rows)
+
+
+def _check_likeness(subject: CheckSubject) -> list[Verdict]:
+    """Returns the `as-drawn` row, left out without a drawing to compare with, and the `capped` row."""
+    if subject.graph is None:
+        return check_capped(subject.plan)
+    found = measure_departure(subject.plan, subject.graph, subject.bore_scale)
+    return check_as_drawn(found) + check_capped(subject.plan, found.lowered_mm2)
 
 
 def measure_fields(subject: CheckSubject, measured: Measured | None = None) -> ChannelFields:

@@ -8,6 +8,7 @@ import numpy as np
 
 from morph.body.blank import Blank
 from morph.body.plan import ChannelPlan
+from morph.layout.graph import ChannelGraph
 from morph.settings.job import ServiceSettings
 from morph.settings.profile import Profile
 from morph.solid.result import ChannelSolid, Insert
@@ -22,6 +23,7 @@ class CheckSubject:
         blank: the finished body. plan: branches, leads and exits.
         profile: limits of the printing process. service: limits of use.
         build_direction: from the plate into the part, part frame; any length, made unit here.
+        graph: the layout as drawn, None when there is none to compare with. bore_scale: by which the job scales it.
     """
 
     insert: Insert
@@ -31,6 +33,8 @@ class CheckSubject:
     profile: Profile
     service: ServiceSettings
     build_direction: tuple[float, float, float] = (0.0, 0.0, 1.0)
+    graph: ChannelGraph | None = None
+    bore_scale: float = 1.0
 
     def __post_init__(self) -> None:
         length = float(np.linalg.norm(self.build_direction))

@@ -6,6 +6,7 @@ so that the same row serves the report, the CSV and the summary.
 
 from __future__ import annotations
 
+from collections.abc import Iterable
 from dataclasses import dataclass
 from enum import StrEnum
 
@@ -57,6 +58,15 @@ class Verdict:
     sheet_mm: tuple[float, float] | None = None
     xyz_mm: tuple[float, float, float] | None = None
     hint: str = ""
+
+
+def worst_outcome(verdicts: Iterable[Verdict]) -> Outcome:
+    """Returns the worst outcome in headline order; without a verdict nothing was checked.
+
+    >>> worst_outcome([Verdict("flow", Outcome.NOT_CHECKED, ""), Verdict("bend", Outcome.WATCH, "")]).value
+    'not checked'
+    """
+    return min((v.outcome for v in verdicts), key=HEADLINE_ORDER.__getitem__, default=Outcome.NOT_CHECKED)
 
 
 @dataclass(frozen=True, slots=True)

@@ -39,12 +39,6 @@ def sorted_verdicts(verdicts: tuple[Verdict, ...]) -> list[Verdict]:
     return sorted(verdicts, key=lambda verdict: HEADLINE_ORDER[verdict.outcome])
 
 
-def worst_outcome(verdicts: tuple[Verdict, ...]) -> Outcome:
-    """Returns the worst outcome of what was checked; a pass when nothing was."""
-    checked = [v.outcome for v in verdicts if v.outcome is not Outcome.NOT_CHECKED]
-    return min(checked, key=HEADLINE_ORDER.__getitem__, default=Outcome.PASS)
-
-
 def _missing(key: str, title: str, unit: str) -> Figure:
     return Figure(key, title, Outcome.NOT_CHECKED, None, unit, "not checked", "no verdict gave this figure")
 
@@ -117,6 +111,6 @@ def five_figures(verdicts: tuple[Verdict, ...], plan: ChannelPlan) -> tuple[Figu
         _thinnest_wall(verdicts),
         _length(verdicts, "ball-through", "ball_through_mm", "Largest ball through every branch", "at least"),
         _without_flow(verdicts, plan),
-        _length(verdicts, "span", "span_mm", "Largest unsupported span", "at most"),
+        _length(verdicts, "span", "span_mm", "Largest unsupported span in channels", "at most"),
         _openings(verdicts),
     )

@@ -12,7 +12,7 @@ from importlib import resources
 from typing import Any
 
 from morph.body.plan import BranchKind, ChannelPlan
-from morph.core.verdict import Outcome
+from morph.core.verdict import Outcome, worst_outcome
 from morph.report.along import sheet_branches
 from morph.report.colour import OUTCOME_COLOUR, OUTCOME_SIGN, OUTCOME_WORD
 from morph.report.density_view import draw_density
@@ -24,7 +24,7 @@ from morph.report.figures import (
     make_scene,
     plotly_script,
 )
-from morph.report.headline import Figure, five_figures, sorted_verdicts, worst_outcome
+from morph.report.headline import Figure, five_figures, sorted_verdicts
 from morph.report.projection_view import VIEWS, draw_view
 from morph.report.records import BuildRecords
 from morph.report.section import WallSection, make_section, wall_verdicts

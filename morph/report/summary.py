@@ -18,10 +18,10 @@ import numpy as np
 from morph.body.plan import BranchKind
 from morph.core.fingerprint import fingerprint
 from morph.core.units import mass_g
-from morph.core.verdict import Notice, Outcome, Verdict
+from morph.core.verdict import Notice, Outcome, Verdict, worst_outcome
 from morph.geometry.mesh import Mesh, measure_condition, mesh_area_mm2, mesh_volume_mm3
 from morph.layout.graph import ChannelGraph, NodeKind, count_loops
-from morph.report.headline import five_figures, sorted_verdicts, worst_outcome
+from morph.report.headline import five_figures, sorted_verdicts
 from morph.report.records import BuildRecords
 from morph.settings.job import ConeSettings
 from morph.surface.cone import ConeCarrier

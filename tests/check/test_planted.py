@@ -34,7 +34,8 @@ def test_a_sound_insert_passes_everything(sound):
     assert {v.outcome for v in verdicts} == {Outcome.PASS}, [v.text for v in verdicts if v.outcome is not Outcome.PASS]
     expected = {
         "wall-face", "wall-outer", "wall-between", "openings", "bore-smallest", "ball-through", "capped", "ceiling",
-        "span", "bend", "powder", "powder-on-plate", "dead-ends", "closed", "crossings", "bodies", "genus", "machine",
+        "span", "bend", "lead-narrow", "overhang-outside", "powder", "powder-on-plate", "dead-ends",
+        "closed", "crossings", "bodies", "genus", "machine",
     }  # fmt: skip
     assert {v.code for v in verdicts} == expected
     for v in verdicts:
