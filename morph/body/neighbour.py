@@ -10,11 +10,12 @@ at most 6 times (19 degrees). Distances are from each sample to the other branch
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 
-from morph.core.arrays import Bools, Floats, Ints
+from morph.body.section import SectionRule, bore_of_reach_mm, reach_mm
+from morph.core.arrays import Bools, Floats, Ints, unit_rows
 
 WALL_WAY = 3.0
 """A pair counts when the way along the channels is more than this many times the distance to keep."""
@@ -47,7 +48,7 @@ class Network:
     Args:
         strands: the branches. owner: (n,) strand of each sample. first: (m + 1,) offset of each strand.
         xyz_mm: (n, 3). arc_mm, bore_mm: (n,).
-        way_mm: (nodes, nodes) shortest way along the strands, inf when there is none.
+        way_mm: (nodes, nodes) shortest way along the strands, inf when there is none. section: how channels are shaped.
     """
 
     strands: tuple[Strand, ...]
@@ -57,14 +58,15 @@ class Network:
     arc_mm: Floats
     bore_mm: Floats
     way_mm: Floats
+    section: SectionRule = field(default_factory=SectionRule)
 
     def with_bores(self, bore_mm: Floats) -> Network:
         """Returns the same network with the bores (n,)."""
-        return Network(self.strands, self.owner, self.first, self.xyz_mm, self.arc_mm, bore_mm, self.way_mm)
+        return replace(self, bore_mm=bore_mm)
 
 
-def make_network(strands: Sequence[Strand], n_nodes: int) -> Network:
-    """Returns the network of `strands` over `n_nodes` nodes."""
+def make_network(strands: Sequence[Strand], n_nodes: int, section: SectionRule | None = None) -> Network:
+    """Returns the network of `strands` over `n_nodes` nodes; `section` None is round."""
     from scipy.sparse.csgraph import shortest_path
 
     way = np.full((n_nodes, n_nodes), np.inf)
@@ -81,6 +83,7 @@ def make_network(strands: Sequence[Strand], n_nodes: int) -> Network:
         arc_mm=np.concatenate([s.arc_mm for s in strands]) if strands else np.empty(0),
         bore_mm=np.concatenate([s.bore_mm for s in strands]) if strands else np.empty(0),
         way_mm=np.asarray(shortest_path(way, directed=False), dtype=np.float64),
+        section=section or SectionRule(),
     )
 
 
@@ -163,8 +166,10 @@ def way_between_mm(network: Network, i: Ints, j: Ints) -> Floats:
 
 
 def keep_apart_mm(network: Network, pairs: Pairs, wall_mm: float) -> Floats:
-    """Returns the distance (p,) the pairs must keep: half of both bores plus `wall_mm` (bands included)."""
-    return 0.5 * (network.bore_mm[pairs.i] + network.bore_mm[pairs.j]) + wall_mm
+    """Returns the distance (p,) the pairs must keep: what both reach towards each other plus `wall_mm` (with bands)."""
+    toward = unit_rows(network.xyz_mm[pairs.j] - network.xyz_mm[pairs.i])
+    one = reach_mm(network.bore_mm[pairs.i], toward, network.section)
+    return one + reach_mm(network.bore_mm[pairs.j], -toward, network.section) + wall_mm
 
 
 def count_as_wall(network: Network, pairs: Pairs, wall_mm: float) -> Bools:
@@ -206,7 +211,9 @@ def room_beside(network: Network, pairs: Pairs, wall_mm: float) -> tuple[Floats,
     by = np.zeros(len(network.owner), dtype=np.int64)
     here = np.concatenate([pairs.i, pairs.j])
     there = np.concatenate([pairs.j, pairs.i])
-    left = 2.0 * (np.tile(pairs.distance_mm, 2) - wall_mm) - network.bore_mm[there]
+    toward = unit_rows(network.xyz_mm[there] - network.xyz_mm[here])
+    kept = np.tile(pairs.distance_mm, 2) - wall_mm - reach_mm(network.bore_mm[there], -toward, network.section)
+    left = bore_of_reach_mm(kept, toward, network.section)
     order = np.lexsort((there, left, here))
     here, there, left = here[order], there[order], left[order]
     first = np.concatenate([[True], here[1:] != here[:-1]]) if len(here) else np.zeros(0, dtype=bool)

@@ -4,6 +4,8 @@ A wall is what is left between a channel and a neighbour after the bands have be
 plus half the bore band. Every limit is the worse of service and process. For a bore b at distance d
 from a face the wall is d - b/2, so the room follows in closed form:
 
+(with b/2 the reach of a round section; a roof that looks at the neighbour reaches further, see section.py)
+
     part face   b <= min(2 (d - band - wall), (d - band) / (1/2 + wall in bores))
     outer face  b <= 2 (d - band - wall)
     hole        the same with the distance to the hole's wall
@@ -13,14 +15,15 @@ from a face the wall is d - b/2, so the room follows in closed form:
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 import numpy as np
 
 from morph.body.blank import Blank
 from morph.body.face import Face, FaceRole
-from morph.body.hole import distance_to_hole_mm
-from morph.core.arrays import Bools, Floats, Ints
+from morph.body.hole import Hole, distance_to_hole_mm
+from morph.body.section import SectionRule, bore_of_reach_mm, make_section_rule
+from morph.core.arrays import Bools, Floats, Ints, unit_rows
 from morph.core.tolerance import BUILD_MM
 from morph.settings.job import SectionSettings, ServiceSettings
 from morph.settings.profile import Profile
@@ -40,6 +43,7 @@ class Limits:
         process_mm: thinnest wall the process prints; every wall is at least this.
         band_mm: position band, half the bore band, and what meshing may take (BUILD_MM).
         least_bore_mm: no bore is lowered below it. greatest_bore_mm: none is raised above it.
+        section: how the channels are shaped.
     """
 
     face_mm: float
@@ -50,6 +54,7 @@ class Limits:
     band_mm: float
     least_bore_mm: float
     greatest_bore_mm: float
+    section: SectionRule = field(default_factory=SectionRule)
 
 
 def wall_band_mm(profile: Profile) -> float:
@@ -57,8 +62,13 @@ def wall_band_mm(profile: Profile) -> float:
     return profile.position_band_mm.value + 0.5 * profile.bore_band_mm.value
 
 
-def make_limits(section: SectionSettings, service: ServiceSettings, profile: Profile) -> Limits:
-    """Returns the limits of a job, each the worse of service and process.
+def make_limits(
+    section: SectionSettings,
+    service: ServiceSettings,
+    profile: Profile,
+    up: tuple[float, float, float] = (0.0, 0.0, 1.0),
+) -> Limits:
+    """Returns the limits of a job, each the worse of service and process; roofs point `up`.
 
     Raises:
         SettingError: `bore-range-empty`.
@@ -74,6 +84,7 @@ def make_limits(section: SectionSettings, service: ServiceSettings, profile: Pro
         band_mm=wall_band_mm(profile) + BUILD_MM,
         least_bore_mm=least,
         greatest_bore_mm=greatest,
+        section=make_section_rule(section, profile, up),
     )
 
 
@@ -100,9 +111,22 @@ def face_wall_mm(face: Face, bore_mm: Floats, limits: Limits) -> Floats:
 def room_to_face_mm(face: Face, xyz_mm: Floats, limits: Limits) -> Floats:
     """Returns the largest bores (k,) at points (k, 3) that leave the wall to `face`."""
     after = face.distance_mm(xyz_mm) - limits.band_mm
+    toward, rule = face.outward(xyz_mm), limits.section
     if face.role is not FaceRole.PART:
-        return 2.0 * (after - limits.outer_mm)
-    return np.minimum(2.0 * (after - limits.face_mm), after / (0.5 + limits.face_bores))
+        return bore_of_reach_mm(after - limits.outer_mm, toward, rule)
+    return np.minimum(
+        bore_of_reach_mm(after - limits.face_mm, toward, rule),
+        bore_of_reach_mm(after, toward, rule, limits.face_bores),
+    )
+
+
+def room_to_hole_mm(hole: Hole, xyz_mm: Floats, limits: Limits) -> Floats:
+    """Returns the largest bores (k,) at points (k, 3) that leave the wall to `hole`."""
+    after = distance_to_hole_mm(hole, xyz_mm) - limits.band_mm - max(hole.wall_mm, limits.process_mm)
+    steps = 1e-4 * np.eye(3)
+    rise = [distance_to_hole_mm(hole, xyz_mm + s) - distance_to_hole_mm(hole, xyz_mm - s) for s in steps]
+    toward = unit_rows(-np.column_stack(rise))  # the way the distance falls
+    return bore_of_reach_mm(after, toward, limits.section)
 
 
 def measure_room(
@@ -126,8 +150,7 @@ def measure_room(
         rows.append(room)
         names.append(f"face:{face.name}")
     for hole in blank.holes:
-        wall = max(hole.wall_mm, limits.process_mm)
-        rows.append(2.0 * (distance_to_hole_mm(hole, xyz_mm) - limits.band_mm - wall))
+        rows.append(room_to_hole_mm(hole, xyz_mm, limits))
         names.append(f"hole:{hole.id}")
     table = np.array(rows)
     by = table.argmin(axis=0)

@@ -143,24 +143,25 @@ def apex_mm(bore_mm: Floats, tangent: Floats, rule: SectionRule) -> Floats:
     return _support(0.5 * np.asarray(bore_mm, dtype=np.float64), sine, rule, roof_share(bore_mm, rule))
 
 
-def reach_mm(bore_mm: Floats, direction: Floats, rule: SectionRule) -> Floats:
+def reach_mm(bore_mm: Floats, direction: Floats, rule: SectionRule, span_ratio: float = 1.0) -> Floats:
     """Returns how far (k,) channels of bore (k,) reach from their centreline towards unit directions (k, 3).
 
-    This is the ball's support: bore / 2 sideways and down, bore / (2 cos b) for a roof that looks that way. Auto is
-    taken as at a junction, where its roof starts at smaller bores.
+    This is the ball's support: bore / 2 sideways and down, bore / (2 cos b) for a roof that looks that way;
+    `span_ratio` as in `roof_share`.
 
     >>> rule = SectionRule(SectionShape.ROOFED, 45.0)
     >>> reach_mm(np.array([4.0, 4.0]), np.array([[0.0, 0.0, 1.0], [1.0, 0.0, 0.0]]), rule).round(4).tolist()
     [2.8284, 2.0]
     """
     rise = np.asarray(direction, dtype=np.float64) @ rule.up
-    return _support(0.5 * np.asarray(bore_mm, dtype=np.float64), rise, rule, roof_share(bore_mm, rule, JUNCTION_SPAN))
+    return _support(0.5 * np.asarray(bore_mm, dtype=np.float64), rise, rule, roof_share(bore_mm, rule, span_ratio))
 
 
-def bore_of_reach_mm(reach: Floats, direction: Floats, rule: SectionRule) -> Floats:
+def bore_of_reach_mm(reach: Floats, direction: Floats, rule: SectionRule, wall_bores: float = 0.0) -> Floats:
     """Returns the largest bore (k,) that reaches at most `reach` (k,) mm towards unit directions (k, 3).
 
-    The reach grows with the bore; by bisection to 1e-9 of the answer where the roof fades, else closed.
+    With `wall_bores` its reach plus that many bores. The reach grows with the bore; by bisection to 1e-9 of the answer
+    where the roof fades, else closed. Auto is taken as at a junction, where its roof starts at smaller bores.
 
     >>> rule = SectionRule(SectionShape.ROOFED, 45.0)
     >>> bore_of_reach_mm(np.array([2.0, -1.0]), np.array([[0.0, 0.0, 1.0]] * 2), rule).round(4).tolist()
@@ -169,17 +170,17 @@ def bore_of_reach_mm(reach: Floats, direction: Floats, rule: SectionRule) -> Flo
     reach = np.asarray(reach, dtype=np.float64)
     unit = np.broadcast_to(np.asarray(direction, dtype=np.float64), (*reach.shape, 3))
     if rule.shape is SectionShape.ROUND:
-        return 2.0 * reach
+        return reach / (0.5 + wall_bores)
     full = _support(np.ones(reach.shape), unit @ rule.up, rule, np.ones(reach.shape))
-    low, high = 2.0 * reach / full, 2.0 * reach
+    low, high = reach / (0.5 * full + wall_bores), reach / (0.5 + wall_bores)
     if rule.shape is not SectionShape.AUTO:
         return low
     low, high = np.minimum(low, high), np.maximum(low, high)
     for _ in range(40):
         middle = 0.5 * (low + high)
-        fits = reach_mm(np.maximum(middle, 0.0), unit, rule) <= reach
+        fits = reach_mm(np.maximum(middle, 0.0), unit, rule, JUNCTION_SPAN) + wall_bores * middle <= reach
         low, high = np.where(fits, middle, low), np.where(fits, high, middle)
-    return np.where(reach > 0.0, low, 2.0 * reach)
+    return np.where(reach > 0.0, low, reach / (0.5 + wall_bores))
 
 
 def section_area_mm2(bore_mm: Floats, tangent: Floats, rule: SectionRule) -> Floats:

@@ -25,11 +25,12 @@ from morph.body.neighbour import (
     polyline_arc_mm,
 )
 from morph.body.room import wall_band_mm
+from morph.body.section import reach_mm
 from morph.check.centreline import Centrelines, Place, measure_ways
 from morph.check.channel_wall import ChannelWall, sub_mesh
 from morph.check.rows import MEASURE_MM, MOST_NAMED, Limit, judge_length, name_list, place, worse_limit
 from morph.check.subject import CheckSubject
-from morph.core.arrays import Bools, Floats, Ints
+from morph.core.arrays import Bools, Floats, Ints, unit_rows
 from morph.core.verdict import Outcome, Verdict
 from morph.geometry.gap import Gap, measure_gap
 from morph.geometry.tree import closest_points, make_tree
@@ -74,7 +75,7 @@ def _network(lines: Centrelines) -> Network:
         Strand(b.id, number[b.start], number[b.end], b.xyz_mm, polyline_arc_mm(b.xyz_mm), b.bore_mm)
         for b in lines.plan.branches
     ]
-    return make_network(strands, len(lines.plan.nodes))
+    return make_network(strands, len(lines.plan.nodes), lines.plan.section)
 
 
 def _ribs(lines: Centrelines, pairs: Pairs, gap_mm: Floats) -> Bools:
@@ -137,15 +138,28 @@ def _segments_gap(
             s, t = _closest_on_segments(*lines.xyz_mm[[i, i + 1, k, k + 1]])
             p = (1.0 - s) * lines.xyz_mm[i] + s * lines.xyz_mm[i + 1]
             q = (1.0 - t) * lines.xyz_mm[k] + t * lines.xyz_mm[k + 1]
-            radius_p = 0.5 * float((1.0 - s) * lines.bore_mm[i] + s * lines.bore_mm[i + 1])
-            radius_q = 0.5 * float((1.0 - t) * lines.bore_mm[k] + t * lines.bore_mm[k + 1])
+            bores = np.array(
+                [
+                    (1.0 - s) * lines.bore_mm[i] + s * lines.bore_mm[i + 1],
+                    (1.0 - t) * lines.bore_mm[k] + t * lines.bore_mm[k + 1],
+                ]
+            )
+            radius_p, radius_q = _reaches(lines, bores, q - p)
             found = (float(np.linalg.norm(p - q)), p, q, radius_p, radius_q)
             if best is None or found[0] - radius_p - radius_q < best[0] - best[3] - best[4]:
                 best = found
     if best is None:
         gap = float(np.linalg.norm(lines.xyz_mm[a] - lines.xyz_mm[b]))
-        best = (gap, lines.xyz_mm[a], lines.xyz_mm[b], 0.5 * float(lines.bore_mm[a]), 0.5 * float(lines.bore_mm[b]))
+        radii = _reaches(lines, lines.bore_mm[[a, b]], lines.xyz_mm[b] - lines.xyz_mm[a])
+        best = (gap, lines.xyz_mm[a], lines.xyz_mm[b], *radii)
     return best
+
+
+def _reaches(lines: Centrelines, bores_mm: Floats, toward: Floats) -> tuple[float, float]:
+    """Returns how far channels of two bores (2,) reach towards each other along `toward (3,)` and back."""
+    way = unit_rows(np.array([toward, -toward]))
+    one, two = reach_mm(bores_mm, way, lines.plan.section)
+    return float(one), float(two)
 
 
 def _pieces(lines: Centrelines, sample: int) -> list[int]:

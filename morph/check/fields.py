@@ -8,6 +8,7 @@ import numpy as np
 
 from morph.body.blank import Blank
 from morph.body.face import FaceRole
+from morph.body.section import reach_mm
 from morph.check.centreline import Centrelines
 from morph.check.channel_wall import nearest_samples
 from morph.check.flat_patch import ceiling_angles_deg
@@ -79,7 +80,12 @@ def make_fields(lines: Centrelines, bore_mm: Floats, channels: Mesh, blank: Blan
         blank: the finished body.
         direction: (3,) unit build direction.
     """
-    wall = part_distance_mm(blank, lines.xyz_mm) - 0.5 * bore_mm
+    faces = [face for face in blank.faces if face.role is FaceRole.PART] or list(blank.faces)
+    walls = [
+        face.distance_mm(lines.xyz_mm) - reach_mm(bore_mm, face.outward(lines.xyz_mm), lines.plan.section)
+        for face in faces
+    ]
+    wall = np.asarray(np.min(walls, axis=0), dtype=np.float64)
     spans = zip(lines.plan.branches, lines.first[:-1], lines.first[1:], strict=True)
     branches = tuple(BranchField(branch.id, wall[low:high], bore_mm[low:high]) for branch, low, high in spans)
     vertices = channels.vertices_mm

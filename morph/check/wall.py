@@ -1,6 +1,6 @@
 """Walls between a channel and a part face, an outer face or a hole, judged at the finished faces.
 
-Every wall is found twice: from the centrelines (exact distance less half the bore) and on the
+Every wall is found twice: from the centrelines (exact distance less the reach of the section) and on the
 written mesh (exact distance of the channel wall's triangles); the smaller one counts. What is
 judged is the margin to the limit at that place, because the service limit may grow with the bore.
 """
@@ -14,13 +14,14 @@ import numpy as np
 
 from morph.body.face import Face, FaceRole
 from morph.body.room import wall_band_mm
+from morph.body.section import reach_mm
 from morph.check.centreline import Centrelines, Place
 from morph.check.channel_wall import ChannelWall
 from morph.check.exits import own_exit_samples
 from morph.check.obstacle import FaceObstacle, HoleObstacle, Obstacle
 from morph.check.rows import MEASURE_MM, Limit, judge_length, place, worse_limit
 from morph.check.subject import CheckSubject
-from morph.core.arrays import Bools, Floats, Ints
+from morph.core.arrays import Bools, Floats, Ints, unit_rows
 from morph.core.verdict import Outcome, Verdict
 from morph.settings.job import ServiceSettings
 from morph.settings.profile import Profile
@@ -67,12 +68,15 @@ def measure_wall(
     """
     if not counted.any():
         return None
-    gap = obstacle.distance_mm(lines.xyz_mm) - 0.5 * lines.bore_mm
+    reach_there = reach_mm(
+        lines.bore_mm, unit_rows(obstacle.nearest_mm(lines.xyz_mm) - lines.xyz_mm), lines.plan.section
+    )
+    gap = obstacle.distance_mm(lines.xyz_mm) - reach_there
     margin = np.where(counted, gap - limit_at(lines.bore_mm), np.inf)
     best = int(np.argmin(margin))
     toward = obstacle.nearest_mm(lines.xyz_mm[best : best + 1])[0] - lines.xyz_mm[best]
     reach = max(float(np.linalg.norm(toward)), 1e-12)
-    middle = lines.xyz_mm[best] + toward * (0.5 * (reach + 0.5 * float(lines.bore_mm[best])) / reach)
+    middle = lines.xyz_mm[best] + toward * (0.5 * (reach + float(reach_there[best])) / reach)
     found = (float(gap[best]), best, middle)
     centreline_mm, mesh_mm = float(gap[best]), np.inf
     written = None if wall is None else _on_mesh(obstacle, lines, wall, counted, limit_at)
