@@ -125,7 +125,7 @@ def make_records(job: Job, clock: _Clock) -> BuildRecords:
         graph = make_graph(density, job.layout, job.ports, progress)
     with clock.stage("surface"):
         depth_mm = choose_depth_mm(job.carrier, graph, job.section, job.service, profile)
-        carrier = make_carrier(job.carrier, graph.size_mm, job.layout.seen_from, depth_mm)
+        carrier = make_carrier(job.carrier, graph.size_mm, job.layout.seen_from, depth_mm, job.layout.seam)
         wrapped = wrap_graph(graph, carrier, depth_mm)
     with clock.stage("body"):
         blank = make_blank(job.blank, job.holes, carrier, graph.size_mm, job.service)

@@ -8,6 +8,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from morph.core.arrays import Floats
+from morph.core.tolerance import COINCIDE_MM
 from morph.core.verdict import Notice
 from morph.geometry.curve import Curve, curve_at, curve_length_mm
 from morph.layout import notices as say
@@ -16,14 +17,17 @@ from morph.layout.centre import smoothed_along
 from morph.layout.fit import DEVIATION_SHARE
 from morph.layout.graph import Branch, Bridge, ChannelGraph, Dropped, DropReason, LevelCount, Node, NodeKind
 from morph.layout.smooth import fit_web
-from morph.layout.web import Run, Web, arc_mm
+from morph.layout.web import Run, Web, arc_mm, moved_along
 
 LONGEST_STEP_MM = 1.0
 
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Parts:
-    """What the record holds besides nodes, branches and bridges, and the fine grid's pixel."""
+    """What the record holds besides nodes, branches and bridges, and the fine grid's pixel.
+
+    `turn_mm`: the width after which sheet x repeats, None on an open sheet.
+    """
 
     size_mm: tuple[float, float]
     level: float
@@ -32,6 +36,7 @@ class Parts:
     levels: tuple[LevelCount, ...]
     notices: tuple[Notice, ...]
     pixel_mm: float
+    turn_mm: float | None = None
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -70,10 +75,11 @@ def assemble(
     piece = web.pieces()
     fed = {piece[key] for key, joint in web.joints.items() if joint.port is not None}
     joint_id = _numbered("N", {key: joint.place_mm for key, joint in web.joints.items()}, piece, fed)
-    middles = {key: item.sheet_mm[len(item.sheet_mm) // 2] for key, item in drawn.items()}
+    middles = {key: _within(item.sheet_mm[len(item.sheet_mm) // 2], parts.turn_mm) for key, item in drawn.items()}
     run_id = _numbered("B", middles, {key: piece[web.runs[key].start] for key in web.runs}, fed)
-    nodes = _nodes(web, joint_id)
-    branches = [_branch(item, web.runs[item.key], run_id, joint_id) for item in drawn.values()]
+    place = {joint_id[key]: _within(joint.place_mm, parts.turn_mm) for key, joint in web.joints.items()}
+    nodes = _nodes(web, joint_id, place)
+    branches = [_branch(item, web.runs[item.key], run_id, joint_id, place) for item in drawn.values()]
     branches.sort(key=lambda branch: int(branch.id[1:]))
     built = {joint_id[key] for key in web.joints if piece[key] in fed}
     bridges = _bridges(suggestions, joint_id, run_id)
@@ -94,7 +100,15 @@ def assemble(
         tuple(found),
         tuple(node for node in nodes if node.id not in built),
         tuple(branch for branch in branches if branch.start not in built),
+        parts.turn_mm,
     )
+
+
+def _within(place_mm: Floats, turn_mm: float | None) -> Floats:
+    """Returns the place (2,) with x between 0 and `turn_mm`, if the sheet repeats."""
+    if turn_mm is None:
+        return place_mm
+    return moved_along(place_mm, -turn_mm * math.floor(float(place_mm[0]) / turn_mm))
 
 
 def _numbered(letter: str, places: dict[int, Floats], piece: dict[int, int], fed: set[int]) -> dict[int, str]:
@@ -107,14 +121,14 @@ def _numbered(letter: str, places: dict[int, Floats], piece: dict[int, int], fed
     return {key: f"{letter}{number}" for number, key in enumerate(sorted(places, key=rank), start=1)}
 
 
-def _nodes(web: Web, joint_id: dict[int, str]) -> list[Node]:
+def _nodes(web: Web, joint_id: dict[int, str], place: dict[str, Floats]) -> list[Node]:
     nodes = []
     for key, joint in web.joints.items():
         if joint.port is not None:
             kind = NodeKind.PORT
         else:
             kind = NodeKind.DEAD_END if web.degree(key) == 1 else NodeKind.JUNCTION
-        nodes.append(Node(joint_id[key], kind, joint.port, joint.place_mm))
+        nodes.append(Node(joint_id[key], kind, joint.port, place[joint_id[key]]))
     return sorted(nodes, key=lambda node: int(node.id[1:]))
 
 
@@ -174,15 +188,21 @@ def _distance_to(line_mm: Floats, place_mm: Floats) -> Floats:
     return np.asarray(distance, dtype=np.float64)
 
 
-def _branch(item: _Drawn, run: Run, run_id: dict[int, str], joint_id: dict[int, str]) -> Branch:
+def _branch(
+    item: _Drawn, run: Run, run_id: dict[int, str], joint_id: dict[int, str], node_mm: dict[str, Floats]
+) -> Branch:
     """Returns the branch, walked from the node of the lower number."""
     start, end = joint_id[run.start], joint_id[run.end]
     curve, parameter, place, bore = item.curve, item.parameter, item.sheet_mm, item.bore_mm
     if int(start[1:]) > int(end[1:]):
         start, end = end, start
         last = curve.knots[-1]
-        curve = Curve(last - curve.knots[::-1], curve.control_mm[::-1])
-        parameter, place, bore = last - parameter[::-1], place[::-1], bore[::-1]
+        curve = Curve(last - curve.knots[::-1], moved_along(curve.control_mm[::-1], -run.shift_mm))
+        parameter, bore = last - parameter[::-1], bore[::-1]
+        place = moved_along(place[::-1], -run.shift_mm)
+    turns_mm = float(node_mm[start][0] - place[0, 0])
+    if abs(turns_mm) > COINCIDE_MM:
+        curve, place = Curve(curve.knots, moved_along(curve.control_mm, turns_mm)), moved_along(place, turns_mm)
     return Branch(run_id[item.key], start, end, curve, parameter, place, bore, item.length_mm, item.deviation_mm)
 
 

@@ -100,6 +100,7 @@ class Fit:
 
     def __init__(self, samples: Samples, knot_step_mm: float, seam_weight: float = SEAM_WEIGHT) -> None:
         self.samples = samples
+        self.origin_mm = samples.place_mm[0]  # solved about it: the result moves with the samples
         length = float(samples.at[-1])
         n_spans = int(min(max(2, math.ceil(length / knot_step_mm)), max(2, len(samples.at) - 2)))
         self.span_mm = length / n_spans
@@ -117,9 +118,10 @@ class Fit:
         cubic, first = self.basis.cubic, self.basis.span - DEGREE
         self.normal = np.zeros((DEGREE + 1, n))
         self.right = np.zeros((n, 2))
+        place = self.samples.place_mm - self.origin_mm
         for q in range(DEGREE + 1):
             for axis in (0, 1):
-                self.right[:, axis] += np.bincount(first + q, weight * cubic[:, q] * self.samples.place_mm[:, axis], n)
+                self.right[:, axis] += np.bincount(first + q, weight * cubic[:, q] * place[:, axis], n)
             for p in range(q + 1):
                 self.normal[DEGREE - (q - p)] += np.bincount(first + q, weight * cubic[:, p] * cubic[:, q], n)
 
@@ -159,7 +161,8 @@ class Fit:
         spacing = float(self.samples.at[-1]) / (len(self.samples.at) - 1)
         bands = self.normal + self._penalty((wavelength_mm / (2.0 * math.pi)) ** 4 / spacing)
         bands[DEGREE] += 1e-12 * bands[DEGREE].max()
-        return np.asarray(solveh_banded(bands, self.right, check_finite=False), dtype=np.float64)
+        moved = solveh_banded(bands, self.right, check_finite=False)
+        return np.asarray(moved + self.origin_mm, dtype=np.float64)
 
     def judge(self, control: Floats) -> tuple[Floats, Floats]:
         """Returns per sample deviation over what is allowed (0 where not free), and curvature times width."""

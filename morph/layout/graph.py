@@ -139,6 +139,8 @@ class ChannelGraph:
         notices: degraded or surprising paths.
         loose_nodes, loose_branches: pieces without a port (each also in `dropped`); not built, kept
             because a suggested bridge may join them.
+        turn_mm: on a joined seam the width after which sheet x repeats: nodes lie within it, and a branch
+            across the seam runs on past it, or below 0, so that it stays one curve. None: an open sheet.
     """
 
     size_mm: tuple[float, float]
@@ -152,12 +154,16 @@ class ChannelGraph:
     notices: tuple[Notice, ...] = ()
     loose_nodes: tuple[Node, ...] = ()
     loose_branches: tuple[Branch, ...] = ()
+    turn_mm: float | None = None
 
     def __post_init__(self) -> None:
         place = {node.id: node.sheet_mm for node in self.nodes + self.loose_nodes}
         for branch in self.branches + self.loose_branches:
             for node_id, point in ((branch.start, branch.sheet_mm[0]), (branch.end, branch.sheet_mm[-1])):
-                if np.abs(place[node_id] - point).max() > COINCIDE_MM:
+                away = place[node_id] - point
+                if self.turn_mm is not None:
+                    away = away - np.array([self.turn_mm * np.round(away[0] / self.turn_mm), 0.0])
+                if np.abs(away).max() > COINCIDE_MM:
                     raise ValueError(f"branch {branch.id} does not end on node {node_id}")
 
 

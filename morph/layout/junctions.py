@@ -7,7 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from morph.core.arrays import Floats
-from morph.layout.web import Run, Web, arc_mm, is_parallel, line_through, measure_length_mm, merge_along
+from morph.layout.web import Run, Web, arc_mm, is_parallel, line_through, measure_length_mm, merge_along, moved_along
 
 AIM_SPREAD = 0.2
 """Lines that miss their common point by more than this many of their half-widths (rms) do not aim at one point."""
@@ -185,5 +185,5 @@ def move_joint(web: Web, key: int, place_mm: Floats) -> None:
         if run.start == key:
             run.place_mm[0] = place_mm
         if run.end == key:
-            run.place_mm[-1] = place_mm
+            run.place_mm[-1] = moved_along(place_mm, run.shift_mm)
         run.length_mm = measure_length_mm(run.place_mm)

@@ -15,7 +15,7 @@ from morph.core.arrays import Bools, Floats
 from morph.core.errors import InputError, SettingError
 from morph.layout.density import Density
 from morph.layout.graph import Dropped, DropReason, LevelCount
-from morph.settings.job import LayoutSettings, LevelRule, Samples
+from morph.settings.job import LayoutSettings, LevelRule, Samples, Seam
 
 PIXELS_PER_WIDTH = 8.0
 MOST_REFINEMENT = 6
@@ -70,9 +70,13 @@ class Picture:
     dropped: tuple[Dropped, ...]
 
 
-def smoothed(value: Floats) -> Floats:
-    """Returns `value (rows, columns)` after one binomial [1 2 1] / 4 smooth along each axis, edges repeated."""
-    padded = np.pad(value, 1, mode="edge")
+def smoothed(value: Floats, *, joined: bool = False) -> Floats:
+    """Returns `value (rows, columns)` after one binomial [1 2 1] / 4 smooth along each axis.
+
+    Edges are repeated; `joined`: the first and the last column are neighbours.
+    """
+    padded = np.pad(value, ((1, 1), (0, 0)), mode="edge")
+    padded = np.pad(padded, ((0, 0), (1, 1)), mode="wrap" if joined else "edge")
     rows = 0.25 * (padded[:-2] + padded[2:]) + 0.5 * padded[1:-1]
     return np.asarray(0.25 * (rows[:, :-2] + rows[:, 2:]) + 0.5 * rows[:, 1:-1], dtype=np.float64)
 
@@ -103,7 +107,7 @@ def find_level(density: Density, settings: LayoutSettings) -> float:
         return 0.5
     weight = _cell_weight(density.value.shape, density.samples).ravel()
     wanted = settings.area_ratio if settings.area_ratio is not None else float(weight @ density.value.ravel())
-    value = smoothed(density.value).ravel()
+    value = smoothed(density.value, joined=density.seam is Seam.JOINED).ravel()
     order = np.argsort(-value, kind="stable")
     covered = np.cumsum(weight[order])
     last = min(int(np.searchsorted(covered, wanted)), len(order) - 2)

@@ -242,5 +242,6 @@ def split_run(web: Web, key: int, sample: int) -> int:
     head, tail = slice(0, sample + 1), slice(sample, None)
     free = run.free
     web.add_run(Run(run.start, joint, run.place_mm[head], run.half_mm[head], None if free is None else free[head]))
-    web.add_run(Run(joint, run.end, run.place_mm[tail], run.half_mm[tail], None if free is None else free[tail]))
+    rest = None if free is None else free[tail]
+    web.add_run(Run(joint, run.end, run.place_mm[tail], run.half_mm[tail], rest, run.shift_mm))
     return joint

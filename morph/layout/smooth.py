@@ -15,7 +15,7 @@ from morph.geometry.curve import DEGREE, Curve
 from morph.layout.centre import smoothed_along
 from morph.layout.fit import SEAM_WEIGHT, Samples, fit_chain
 from morph.layout.junctions import move_joint
-from morph.layout.web import Run, Web, arc_mm
+from morph.layout.web import Run, Web, arc_mm, moved_along
 
 STRAIGHT_COSINE = -0.7
 SETTLED_WEIGHT = 50.0
@@ -91,12 +91,13 @@ def make_chains(web: Web, following: dict[tuple[int, int], int]) -> list[list[Li
 
 
 def _gather(web: Web, chain: list[Link]) -> Samples:
-    places, halves, frees, seams, n = [], [], [], [0], 0
+    places, halves, frees, seams, n, shift_mm = [], [], [], [0], 0, 0.0
     for index, link in enumerate(chain):
         run = web.runs[link.run] if link.forward else web.runs[link.run].reversed()
         assert run.free is not None
         skip = 1 if index else 0
-        places.append(run.place_mm[skip:])
+        places.append(moved_along(run.place_mm[skip:], shift_mm))
+        shift_mm += run.shift_mm
         halves.append(run.half_mm[skip:])
         frees.append(run.free[skip:])
         n += len(run.place_mm) - skip
@@ -179,7 +180,8 @@ def fit_web(web: Web, kept: frozenset[int] = frozenset()) -> tuple[dict[int, Cur
     for pieces in fitted:
         for key, curve, at in pieces:
             run = web.runs[key]
-            curves[key] = moved_ends(curve, web.joints[run.start].place_mm, web.joints[run.end].place_mm)
+            end_mm = moved_along(web.joints[run.end].place_mm, run.shift_mm)
+            curves[key] = moved_ends(curve, web.joints[run.start].place_mm, end_mm)
             parameters[key] = at
     _align(web, curves, following)
     return curves, parameters
@@ -190,14 +192,18 @@ def _fit_links(web: Web, chain: list[Link], seam_weight: float = SEAM_WEIGHT) ->
     samples = _gather(web, chain)
     inner = tuple(float(samples.at[seam]) for seam in samples.seams[1:-1])
     pieces = cut_curve(fit_chain(samples, seam_weight), inner)
-    fitted = []
+    fitted, shift_mm = [], 0.0
     for index, (link, piece) in enumerate(zip(chain, pieces, strict=True)):
         at = samples.at[samples.seams[index] : samples.seams[index + 1] + 1]
-        curve = Curve(piece.knots - piece.knots[0], piece.control_mm)
+        own_mm = web.runs[link.run].shift_mm
         if link.forward:
+            curve = Curve(piece.knots - piece.knots[0], moved_along(piece.control_mm, -shift_mm))
             fitted.append((link.run, curve, at - at[0]))
+            shift_mm += own_mm
         else:
+            curve = Curve(piece.knots - piece.knots[0], moved_along(piece.control_mm, own_mm - shift_mm))
             fitted.append((link.run, reversed_curve(curve), at[-1] - at[::-1]))
+            shift_mm -= own_mm
     return fitted
 
 
@@ -209,7 +215,9 @@ def _move_passed_joints(
     for chain, pieces in zip(chains, fitted, strict=True):
         for link, (_, curve, _) in zip(chain[1:], pieces[1:], strict=True):
             run = web.runs[link.run]
-            joint, place = (run.start, curve.control_mm[0]) if link.forward else (run.end, curve.control_mm[-1])
+            joint, place = run.start, curve.control_mm[0]
+            if not link.forward:
+                joint, place = run.end, moved_along(curve.control_mm[-1], -run.shift_mm)
             passing.setdefault(joint, []).append(place)
     for joint in sorted(passing.keys() - fixed):
         move_joint(web, joint, np.mean(passing[joint], axis=0))

@@ -34,6 +34,8 @@ class Run:
         place_mm: (k, 2) samples, ends on the joints.
         half_mm: (k,) half-width at the samples.
         free: (k,) both walls at the sample are the channel's own; None before centring.
+        shift_mm: on a sheet whose left and right edge are one line, how far along x the last sample lies
+            from joint `end`: whole widths of the sheet.
     """
 
     start: int
@@ -41,6 +43,7 @@ class Run:
     place_mm: Floats
     half_mm: Floats
     free: Bools | None = None
+    shift_mm: float = 0.0
     length_mm: float = 0.0
 
     def __post_init__(self) -> None:
@@ -49,7 +52,13 @@ class Run:
     def reversed(self) -> Run:
         """Returns the same run walked from its end."""
         free = None if self.free is None else self.free[::-1]
-        return Run(self.end, self.start, self.place_mm[::-1], self.half_mm[::-1], free)
+        place = moved_along(self.place_mm[::-1], -self.shift_mm)
+        return Run(self.end, self.start, place, self.half_mm[::-1], free, -self.shift_mm)
+
+
+def moved_along(place_mm: Floats, shift_mm: float) -> Floats:
+    """Returns the places (k, 2), or one (2,), moved by `shift_mm` along x."""
+    return place_mm + np.array([shift_mm, 0.0]) if shift_mm else place_mm
 
 
 def measure_length_mm(place_mm: Floats) -> float:
@@ -96,7 +105,7 @@ class Web:
         key = self.new_key()
         run.place_mm = run.place_mm.copy()
         run.place_mm[0] = self.joints[run.start].place_mm
-        run.place_mm[-1] = self.joints[run.end].place_mm
+        run.place_mm[-1] = moved_along(self.joints[run.end].place_mm, run.shift_mm)
         run.length_mm = measure_length_mm(run.place_mm)
         self.runs[key] = run
         self.at[run.start].append(key)
@@ -172,9 +181,10 @@ def join_through(web: Web, joint: int) -> int | None:
     joined = Run(
         run_a.end,
         run_b.end,
-        np.concatenate([run_a.place_mm[::-1], run_b.place_mm[1:]]),
+        moved_along(np.concatenate([run_a.place_mm[::-1], run_b.place_mm[1:]]), -run_a.shift_mm),
         np.concatenate([run_a.half_mm[::-1], run_b.half_mm[1:]]),
         free,
+        run_b.shift_mm - run_a.shift_mm,
     )
     web.remove_run(key_a)
     web.remove_run(key_b)

@@ -14,6 +14,7 @@ from morph.report.along import middle_index
 from morph.report.drawing import FAINT, INK, PAPER, Drawing, number
 from morph.report.legend import PORT_COLOUR
 from morph.report.png import png_address
+from morph.report.seam import clipped, copies_mm, on_sheet_mm
 from morph.settings.job import Samples
 
 WIDTH_PX, HEIGHT_PX = 820.0, 720.0
@@ -74,10 +75,12 @@ def draw_density(density: Density, graph: ChannelGraph) -> str:
     wide = min(WIDTH_PX, HEIGHT_PX * (high[0] - low[0]) / (high[1] - low[1]))
     drawing = Drawing(low, high, wide, "density", "The density as read, with the channel graph over it")
     _picture(drawing, density)
-    for branch in graph.branches:
-        data = drawing.path_data(branch.sheet_mm)
-        drawing.shape(data, fill="none", stroke=PAPER, stroke_width="4.5", stroke_linecap="round")
-        drawing.shape(data, fill="none", stroke=LINE, stroke_width="2.2", stroke_linecap="round")
+    with clipped(drawing, graph.size_mm, graph.turn_mm):
+        for branch in graph.branches:
+            for points in copies_mm(branch.sheet_mm, graph.turn_mm):
+                data = drawing.path_data(points)
+                drawing.shape(data, fill="none", stroke=PAPER, stroke_width="4.5", stroke_linecap="round")
+                drawing.shape(data, fill="none", stroke=LINE, stroke_width="2.2", stroke_linecap="round")
     for item in graph.dropped:
         x, y = drawing.xy(item.sheet_mm)
         drawing.raw(
@@ -91,7 +94,7 @@ def draw_density(density: Density, graph: ChannelGraph) -> str:
     for node in graph.nodes:
         _node(drawing, node.sheet_mm, node.kind, node.id)
     for branch in graph.branches:
-        x, y = branch.sheet_mm[middle_index(branch.sheet_mm)].tolist()
+        x, y = on_sheet_mm(branch.sheet_mm[middle_index(branch.sheet_mm)], graph.turn_mm).tolist()
         drawing.label((x, y), branch.id, size_px=11.0, colour=LINE, bold=True)
     drawing.scale_bar((0.0, -0.7 * margin), 0.2)
     return drawing.svg()

@@ -80,6 +80,7 @@ def sheet_scene(records: BuildRecords) -> SheetScene:
         {item.id: item.wall_mm for item in records.fields.branches if item.id in on_sheet},
         {port.name: port.role for port in records.job.ports},
         worst,
+        records.graph.turn_mm,
     )
 
 

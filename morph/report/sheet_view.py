@@ -19,6 +19,7 @@ from morph.report.along import band_edges_mm, middle_index, sheet_branches, shee
 from morph.report.colour import COLOUR_STEPS, map_hex
 from morph.report.drawing import FAINT, INK, PAPER, Drawing, Point, number
 from morph.report.legend import PORT_COLOUR, draw_port, draw_sheet_legend
+from morph.report.seam import clipped, copies_mm, on_sheet_mm
 from morph.settings.job import Role, SeenFrom
 
 WIDTH_PX, LEGEND_PX = 400.0, 92.0
@@ -34,6 +35,7 @@ class SheetScene:
         wall_mm: the wall to the part face along each channel, by branch id.
         roles: role of each port by name.
         worst: branch id and place (x, y) of the worst wall, or None.
+        turn_mm: width after which the sheet repeats, None on an open sheet.
     """
 
     plan: ChannelPlan
@@ -42,6 +44,7 @@ class SheetScene:
     wall_mm: dict[str, Floats]
     roles: dict[str, Role]
     worst: tuple[str, tuple[float, float] | None] | None
+    turn_mm: float | None = None
 
     @property
     def mirrored(self) -> bool:
@@ -105,7 +108,7 @@ def draw_ports(drawing: Drawing, scene: SheetScene) -> None:
     for node in scene.plan.nodes:
         if node.kind is not NodeKind.PORT or node.sheet_mm is None or node.port is None:
             continue
-        x, y = scene.seen(node.sheet_mm)[0].tolist()
+        x, y = on_sheet_mm(scene.seen(node.sheet_mm)[0], scene.turn_mm).tolist()
         role = scene.roles.get(node.port, Role.ACCESS)
         draw_port(drawing, (x, y), role)
         share = (x - drawing.low_mm[0]) / wide
@@ -123,7 +126,7 @@ def _names(drawing: Drawing, scene: SheetScene, branches: list[PlanBranch]) -> N
     for branch in branches:
         if branch.id in named:
             points = scene.seen(sheet_of(branch))
-            x, y = points[middle_index(points)].tolist()
+            x, y = on_sheet_mm(points[middle_index(points)], scene.turn_mm).tolist()
             drawing.label((x, y), branch.id, size_px=12.0, bold=True)
 
 
@@ -131,7 +134,8 @@ def _worst(drawing: Drawing, scene: SheetScene) -> None:
     """Rings the place of the worst wall."""
     if scene.worst is None or scene.worst[1] is None:
         return
-    x, y = drawing.xy(tuple(scene.seen(np.array(scene.worst[1]))[0].tolist()))
+    place = on_sheet_mm(scene.seen(np.array(scene.worst[1]))[0], scene.turn_mm)
+    x, y = drawing.xy(tuple(place.tolist()))
     for colour, width in ((PAPER, "5.5"), (INK, "2.4")):
         drawing.raw(f'<circle cx="{x}" cy="{y}" r="12" fill="none" stroke="{colour}" stroke-width="{width}"/>')
 
@@ -162,15 +166,19 @@ def draw_sheet(scene: SheetScene) -> str:
     hatch = drawing.hatch("no-flow", INK, 6.0, 45.0, 0.6)
     branches = sheet_branches(scene.plan)
     wall_low, wall_high = scene.wall_range_mm()
-    for branch in branches:
-        _rim(drawing, scene.seen(sheet_of(branch)), branch.bore_mm)
-    for branch in branches:
-        ratio = (scene.wall_mm[branch.id] - wall_low) / (wall_high - wall_low)
-        step = np.clip(np.rint(ratio * (COLOUR_STEPS - 1)), 0, COLOUR_STEPS - 1).astype(np.int64)
-        _band(drawing, scene.seen(sheet_of(branch)), branch.bore_mm, step)
-    for branch in branches:
-        if not branch.through_flow:
-            _no_flow(drawing, scene.seen(sheet_of(branch)), branch.bore_mm, hatch)
+    copies = [
+        (branch, points) for branch in branches for points in copies_mm(scene.seen(sheet_of(branch)), scene.turn_mm)
+    ]
+    with clipped(drawing, scene.size_mm, scene.turn_mm):
+        for branch, points in copies:
+            _rim(drawing, points, branch.bore_mm)
+        for branch, points in copies:
+            ratio = (scene.wall_mm[branch.id] - wall_low) / (wall_high - wall_low)
+            step = np.clip(np.rint(ratio * (COLOUR_STEPS - 1)), 0, COLOUR_STEPS - 1).astype(np.int64)
+            _band(drawing, points, branch.bore_mm, step)
+        for branch, points in copies:
+            if not branch.through_flow:
+                _no_flow(drawing, points, branch.bore_mm, hatch)
     _worst(drawing, scene)
     draw_ports(drawing, scene)
     _names(drawing, scene, branches)

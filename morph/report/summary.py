@@ -97,6 +97,7 @@ def _carrier(records: BuildRecords) -> Block:
         "radius_mm": settings.radius_mm,
         "depth_mm": wrapped.depth_mm,
         "seen_from": records.job.layout.seen_from,
+        "seam": records.job.layout.seam,
     }
 
 

@@ -162,6 +162,26 @@ class CarrierSettings:
     true_at: TrueAt = TrueAt.DEPTH
 
 
+class ConeMap(StrEnum):
+    """How the sheet lies on a cone: flat keeps its lengths, polar closes a full wrap."""
+
+    FLAT = "flat"
+    POLAR = "polar"
+
+
+@dataclass(frozen=True, slots=True)
+class ConeSettings:
+    """The [carrier] table of a cone: `radius_mm` at the sheet's centre, `half_angle_deg` > 0 when it widens upwards."""
+
+    radius_mm: float
+    half_angle_deg: float
+    metal: Metal
+    depth_mm: float | None = None
+    wall_to_face_mm: float | None = None
+    true_at: TrueAt = TrueAt.DEPTH
+    map: ConeMap = ConeMap.FLAT
+
+
 class SectionShape(StrEnum):
     """The cross-section of a channel; auto is round where a round ceiling prints freely, else roofed."""
 
@@ -199,26 +219,6 @@ class ServiceSettings:
     wall_outer_mm: float = 3.0
     wall_hole_mm: float = 3.0
     smallest_bore_mm: float = 3.0
-
-
-class ConeMap(StrEnum):
-    """How the sheet lies on a cone: flat keeps its lengths, polar closes a full wrap."""
-
-    FLAT = "flat"
-    POLAR = "polar"
-
-
-@dataclass(frozen=True, slots=True)
-class ConeSettings:
-    """The [carrier] table of a cone: `radius_mm` at the sheet's centre, `half_angle_deg` > 0 when it widens upwards."""
-
-    radius_mm: float
-    half_angle_deg: float
-    metal: Metal
-    depth_mm: float | None = None
-    wall_to_face_mm: float | None = None
-    true_at: TrueAt = TrueAt.DEPTH
-    map: ConeMap = ConeMap.FLAT
 
 
 @dataclass(frozen=True, slots=True)

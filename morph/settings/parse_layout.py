@@ -67,7 +67,7 @@ def parse_layout(values: Any, file: str, folder: Path) -> LayoutSettings:
         channel=table.choice("channel", CoolantEnd, CoolantEnd.HIGH),
         level=level,
         area_ratio=_area_ratio(table, level),
-        seam=_only(table, "seam", Seam, Seam.OPEN, "The joined seam (a full wrap)"),
+        seam=table.choice("seam", Seam, Seam.OPEN),
         mirror_at=_only(table, "mirror_at", MirrorAt, MirrorAt.NONE, "Mirroring half of a symmetric layout"),
     )
 

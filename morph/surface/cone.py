@@ -15,15 +15,15 @@ Limits: one turn, and a sheet that stays clear of the apex and the axis.
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
 from morph.core.arrays import Floats
-from morph.core.errors import GeometryError
+from morph.core.errors import GeometryError, SettingError
 from morph.geometry.cone import Cone
-from morph.settings.job import ConeMap, ConeSettings, Metal, SeenFrom, TrueAt
-from morph.surface.limits import LEAST_RADIUS_MM, TURN_SLACK, require_positive
+from morph.settings.job import ConeMap, ConeSettings, Metal, Seam, SeenFrom, TrueAt
+from morph.surface.limits import LEAST_RADIUS_MM, TURN_SLACK, closed_radius_mm, require_positive
 
 
 @dataclass(frozen=True, slots=True)
@@ -38,6 +38,7 @@ class ConeCarrier:
         size_mm: width and height of the sheet.
         turn: +1 when sheet x grows with the angle about z, -1 when it falls.
         depth_mm: depth of the centrelines the sheet is laid for.
+        closed_mm: radius at which a full wrap closes exactly, None for an open sheet.
     """
 
     face: Cone
@@ -47,6 +48,7 @@ class ConeCarrier:
     size_mm: tuple[float, float]
     turn: float
     depth_mm: float
+    closed_mm: float | None = None
 
     @property
     def side(self) -> float:
@@ -66,6 +68,8 @@ class ConeCarrier:
     @property
     def true_radius_mm(self) -> float:
         """Returns the radius of the true surface at the sheet's centre."""
+        if self.closed_mm is not None:
+            return self.closed_mm
         return self.face.radius_mm - self.side * self.true_depth_mm * self.cosine
 
     @property
@@ -191,7 +195,11 @@ class ConeCarrier:
 
 
 def make_cone(
-    settings: ConeSettings, size_mm: tuple[float, float], seen_from: SeenFrom, depth_mm: float
+    settings: ConeSettings,
+    size_mm: tuple[float, float],
+    seen_from: SeenFrom,
+    depth_mm: float,
+    seam: Seam = Seam.OPEN,
 ) -> ConeCarrier:
     """Returns the cone carrier of a job.
 
@@ -200,11 +208,13 @@ def make_cone(
         size_mm: width and height of the sheet.
         seen_from: from which side the drawing reads.
         depth_mm: depth of the centrelines below the face.
+        seam: joined: the sheet goes all the way round on the polar map and is stretched to close exactly.
 
     Raises:
-        SettingError: `carrier-not-positive` when radius, depth or sheet size is not a positive number.
+        SettingError: `carrier-not-positive` when radius, depth or sheet size is not a positive number;
+            `seam-needs-polar` when a flat map is to close.
         GeometryError: `sheet-past-apex` when the face's narrow edge comes too near to the apex;
-            `depth-past-axis` when the centreline there reaches the axis; `sheet-wraps-past-itself`.
+            `depth-past-axis` when the centreline there reaches the axis; `sheet-wraps-past-itself`; `seam-width`.
 
     >>> cone = ConeSettings(radius_mm=30.0, half_angle_deg=10.0, metal=Metal.TOWARD_AXIS)
     >>> round(make_cone(cone, (60.0, 40.0), SeenFrom.PART, 8.0).true_radius_mm, 6)
@@ -223,8 +233,24 @@ def make_cone(
         depth_mm=depth_mm,
     )
     _require_clear(carrier)
+    if seam is Seam.JOINED:
+        carrier = _closed(carrier)
     _require_one_turn(carrier)
     return carrier
+
+
+def _closed(carrier: ConeCarrier) -> ConeCarrier:
+    """Returns the carrier stretched around the axis so that its sheet closes exactly."""
+    if carrier.map is ConeMap.FLAT:
+        raise SettingError(
+            "seam-needs-polar",
+            expected='map = "polar" on a cone, where both edges of the sheet are the same meridian',
+            found='map = "flat"',
+            where='[layout] seam = "joined" on [carrier]',
+            do='Set [carrier] map = "polar", or [layout] seam = "open".',
+        )
+    radius_mm = closed_radius_mm(carrier.size_mm[0], carrier.true_radius_mm, "at the sheet's centre")
+    return replace(carrier, closed_mm=radius_mm)
 
 
 def _require_clear(carrier: ConeCarrier) -> None:

@@ -16,8 +16,8 @@ import numpy as np
 
 from morph.core.arrays import Floats
 from morph.core.errors import GeometryError
-from morph.settings.job import CarrierSettings, Metal, SeenFrom, TrueAt
-from morph.surface.limits import LEAST_RADIUS_MM, TURN_SLACK, require_positive
+from morph.settings.job import CarrierSettings, Metal, Seam, SeenFrom, TrueAt
+from morph.surface.limits import LEAST_RADIUS_MM, TURN_SLACK, closed_radius_mm, require_positive
 
 
 @dataclass(frozen=True, slots=True)
@@ -102,7 +102,11 @@ class CylinderCarrier:
 
 
 def make_cylinder(
-    settings: CarrierSettings, size_mm: tuple[float, float], seen_from: SeenFrom, depth_mm: float
+    settings: CarrierSettings,
+    size_mm: tuple[float, float],
+    seen_from: SeenFrom,
+    depth_mm: float,
+    seam: Seam = Seam.OPEN,
 ) -> CylinderCarrier:
     """Returns the cylinder carrier of a job.
 
@@ -111,11 +115,13 @@ def make_cylinder(
         size_mm: width and height of the sheet.
         seen_from: from which side the drawing reads.
         depth_mm: depth of the centrelines below the face.
+        seam: joined: the sheet goes all the way round and is stretched to close exactly.
 
     Raises:
         SettingError: `carrier-not-positive` when radius, depth or sheet size is not a positive number.
         GeometryError: `depth-past-axis` when the centreline reaches the axis of a core;
-            `sheet-wraps-past-itself` when the sheet is wider than one turn.
+            `sheet-wraps-past-itself` when the sheet is wider than one turn; `seam-width` when a joined sheet
+            is not one turn wide.
 
     >>> core = CarrierSettings(radius_mm=30.0, metal=Metal.TOWARD_AXIS)
     >>> make_cylinder(core, (60.0, 40.0), SeenFrom.PART, 8.0).true_radius_mm
@@ -134,6 +140,8 @@ def make_cylinder(
             do="Lower depth_mm or wall_to_face_mm, or raise radius_mm.",
         )
     true_mm = at_depth_mm if settings.true_at is TrueAt.DEPTH else settings.radius_mm
+    if seam is Seam.JOINED:
+        true_mm = closed_radius_mm(size_mm[0], true_mm, "where lengths are true")
     turn_mm = 2.0 * math.pi * true_mm
     if size_mm[0] > turn_mm * (1.0 + TURN_SLACK):
         raise GeometryError(
