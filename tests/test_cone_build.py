@@ -1,6 +1,5 @@
 """Cone jobs through every stage: the insert has the handles its circuit asks for, and opens where it should."""
 
-
 import numpy as np
 import pytest
 
