@@ -134,7 +134,7 @@ def make_records(job: Job, clock: _Clock) -> BuildRecords:
 
     from morph.check import CheckSubject, check_insert, measure_fields, measure_insert
     from morph.solid.channel import make_channel_solid
-    from morph.solid.cut import make_insert
+    from morph.solid.cut import make_finished, make_insert
     from morph.solid.field import choose_h_mm
 
     with clock.stage("solid"):
@@ -142,6 +142,7 @@ def make_records(job: Job, clock: _Clock) -> BuildRecords:
         solid = make_channel_solid(plan, blank, h_mm, progress)
     with clock.stage("insert"):
         insert = make_insert(solid, blank, plan, progress)
+        finished = make_finished(insert, blank)
     with clock.stage("check"):
         subject = CheckSubject(
             insert=insert,
@@ -169,6 +170,7 @@ def make_records(job: Job, clock: _Clock) -> BuildRecords:
         verdicts=verdicts,
         notices=graph.notices + plan.notices,
         fields=fields,
+        finished=finished,
     )
 
 
@@ -191,8 +193,10 @@ def make_files(records: BuildRecords, clock: _Clock) -> tuple[dict[str, Any], di
         direction = records.job.printing.build_direction
         files["channels.stl"] = stl_bytes(records.solid.trimmed)
         files["insert.stl"] = stl_bytes(records.insert.mesh)
-        objects = (("insert as printed", records.insert.mesh), ("channels", records.solid.trimmed))
-        files["insert.3mf"] = threemf_bytes(objects, direction)
+        objects = [("insert as printed", records.insert.mesh), ("channels", records.solid.trimmed)]
+        if records.finished is not None:
+            objects.insert(1, ("finished", records.finished))
+        files["insert.3mf"] = threemf_bytes(tuple(objects), direction)
         files["centrelines.step"] = step_bytes(records.plan, records.job.name)
         files["graph.json"] = graph_json(records.plan)
         files["ports.csv"] = ports_csv(records.plan, records.blank)

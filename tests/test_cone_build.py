@@ -100,3 +100,21 @@ def test_the_summary_tells_sag_and_stretch(build):
     # The channels lie between y = 10 and 30 mm of a sheet 40 mm high.
     assert polar["length_error_max"] == pytest.approx(10.0 * SINE / (38.0 - 9.0 * COSINE), rel=0.02)
     assert polar["edge_sag_lower_mm"] == polar["edge_sag_upper_mm"] == 0.0
+
+
+def test_stock_at_the_foot_makes_a_second_object(build):
+    import io
+
+    import trimesh
+
+    plain, stocked = build(), build(("margin_mm = [14.0, 12.0]", "margin_mm = [14.0, 12.0]\nstock_mm = { foot = 0.8 }"))
+    scenes = [trimesh.load(io.BytesIO(r.files["insert.3mf"]), file_type="3mf") for r in (plain, stocked)]
+    assert sorted(scenes[0].geometry) == ["channels", "insert as printed"]
+    assert sorted(scenes[1].geometry) == ["channels", "finished", "insert as printed"]
+    finished = scenes[1].geometry["finished"]
+    assert finished.is_watertight
+    # In the pose to print the plate is z = 0: the finished foot stands 0.8 mm above it.
+    assert finished.bounds[0, 2] == pytest.approx(0.8, abs=1e-5)
+    wanted = plain.summary["insert"]["volume_mm3"]
+    assert stocked.summary["insert"]["finished_volume_mm3"] == pytest.approx(wanted, rel=1e-5)
+    assert finished.volume == pytest.approx(wanted, rel=1e-4) and plain.summary["insert"]["finished_volume_mm3"] is None

@@ -8,6 +8,7 @@ from morph.body.blank import Blank
 from morph.body.plan import ChannelPlan
 from morph.check.fields import ChannelFields
 from morph.core.verdict import Notice, Verdict
+from morph.geometry.mesh import Mesh
 from morph.layout.density import Density
 from morph.layout.graph import ChannelGraph
 from morph.settings.job import Job
@@ -24,6 +25,7 @@ class BuildRecords:
         density, graph, wrapped, blank, plan, solid, insert: what each stage made.
         verdicts: what the checks say. notices: degraded or surprising paths of any stage.
         fields: figures along the channels and over their wall, for pictures; None when not measured.
+        finished: the insert after its stock is machined off; None when there is no stock.
     """
 
     job: Job
@@ -37,3 +39,4 @@ class BuildRecords:
     verdicts: tuple[Verdict, ...]
     notices: tuple[Notice, ...] = ()
     fields: ChannelFields | None = None
+    finished: Mesh | None = None

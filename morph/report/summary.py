@@ -159,6 +159,7 @@ def _insert(records: BuildRecords) -> Block:
         "mass_g": mass_g(block["volume_mm3"], density),
         "density_kg_m3": density,
         "blank_volume_mm3": insert.blank_volume_mm3,
+        "finished_volume_mm3": None if records.finished is None else mesh_volume_mm3(records.finished),
         "size_mm": high - low,
         "openings": len(insert.openings),
         "openings_declared": len(records.plan.exits),

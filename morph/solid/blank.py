@@ -75,6 +75,29 @@ def blank_mesh(blank: Blank, *, printed: bool) -> Mesh:
     return make_file_mesh(vertices, triangles, np.zeros(len(triangles), np.int64), "the blank")[0]
 
 
+def cut_stock(body: Any, blank: Blank, z_mm: tuple[float, float]) -> Any:
+    """Returns a printed manifold3d body cut at each finished face that carries stock; others are not touched.
+
+    Args:
+        body: the body as printed.
+        blank: its faces and their stock.
+        z_mm: lowest and highest z of the body.
+
+    Raises:
+        GeometryError: ``solid-empty`` when nothing is left.
+    """
+    for face in blank.faces:
+        if face.stock_mm <= 0.0:
+            continue
+        if isinstance(face, PlaneFace):
+            body = body.trim_by_plane((-face.normal).tolist(), -float(face.origin_mm @ face.normal))
+        else:
+            round_body = _round_body(face, False, z_mm[0] - 1.0, z_mm[1] + 1.0)
+            body = body ^ round_body if face.metal_inside else body - round_body
+    require_valid(body, "the finished insert")
+    return body
+
+
 def _axis(face: PlaneFace) -> int | None:
     """Returns the axis a plane is square to, or None for an oblique plane."""
     along = np.flatnonzero(np.abs(face.normal) > 1.0 - 1e-12)

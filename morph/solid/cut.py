@@ -9,15 +9,15 @@ import numpy as np
 from morph.body.blank import Blank
 from morph.body.plan import ChannelPlan
 from morph.core.progress import SILENT, Progress
-from morph.geometry.mesh import measure_condition, mesh_volume_mm3
-from morph.solid.blank import blank_mesh
-from morph.solid.body import arrays_of, body_of, require_valid
+from morph.geometry.mesh import Mesh, measure_condition, mesh_volume_mm3
+from morph.solid.blank import blank_mesh, cut_stock
+from morph.solid.body import arrays_of, body_from, body_of, require_valid
 from morph.solid.channel import WHAT
 from morph.solid.openings import find_openings
 from morph.solid.result import ChannelSolid, Insert
 from morph.solid.tidy import make_file_mesh
 
-__all__ = ["blank_mesh", "expected_channel_genus", "expected_genus", "make_insert"]
+__all__ = ["blank_mesh", "expected_channel_genus", "expected_genus", "make_finished", "make_insert"]
 
 
 def make_insert(solid: ChannelSolid, blank: Blank, plan: ChannelPlan, progress: Progress = SILENT) -> Insert:
@@ -52,6 +52,22 @@ def make_insert(solid: ChannelSolid, blank: Blank, plan: ChannelPlan, progress: 
     )
     progress.step("insert: cut", 3, 3)
     return insert
+
+
+def make_finished(insert: Insert, blank: Blank) -> Mesh | None:
+    """Returns the insert after its stock is machined off, or None when no face carries stock.
+
+    Only faces are finished: holes and threads are made later and are not cut.
+
+    Raises:
+        GeometryError: ``solid-empty`` when no metal is left, ``solid-not-closed``.
+    """
+    if not any(face.stock_mm > 0.0 for face in blank.faces):
+        return None
+    body, _ = body_from(insert.mesh.vertices_mm, insert.mesh.triangles, "the insert")
+    low, high = insert.mesh.vertices_mm[:, 2].min(), insert.mesh.vertices_mm[:, 2].max()
+    vertices, triangles, _ = arrays_of(cut_stock(body, blank, (float(low), float(high))))
+    return make_file_mesh(vertices, triangles, np.zeros(len(triangles), np.int64), "the finished insert")[0]
 
 
 def expected_genus(blank_genus: int, circuits: Iterable[tuple[int, int]]) -> int:
