@@ -39,7 +39,8 @@ class ChannelFields:
     Args:
         branches: one per plan branch, in plan order.
         bore_mm: (n,) bore as written at the sample each vertex of the trimmed channels belongs to.
-        wall_mm: (n,) from each vertex to the nearest finished part face (negative: outside it).
+        wall_mm: (n,) wall to the nearest finished part face at that sample: all around a channel the same, as the
+            far side of a channel is no wall.
         ceiling_deg: (n,) 0 level ceiling, 90 upright, 180 floor.
     """
 
@@ -52,12 +53,6 @@ class ChannelFields:
         object.__setattr__(self, "bore_mm", frozen_floats("bore_mm", self.bore_mm, (None,)))
         for name in ("wall_mm", "ceiling_deg"):
             object.__setattr__(self, name, frozen_floats(name, getattr(self, name), (len(self.bore_mm),)))
-
-
-def part_distance_mm(blank: Blank, xyz_mm: Floats) -> Floats:
-    """Returns the distance (k,) of points (k, 3) from the nearest finished part face (any face when none is one)."""
-    faces = [face for face in blank.faces if face.role is FaceRole.PART] or list(blank.faces)
-    return np.asarray(np.min([face.distance_mm(xyz_mm) for face in faces], axis=0), dtype=np.float64)
 
 
 def vertex_normals(mesh: Mesh) -> Floats:
@@ -88,10 +83,10 @@ def make_fields(lines: Centrelines, bore_mm: Floats, channels: Mesh, blank: Blan
     wall = np.asarray(np.min(walls, axis=0), dtype=np.float64)
     spans = zip(lines.plan.branches, lines.first[:-1], lines.first[1:], strict=True)
     branches = tuple(BranchField(branch.id, wall[low:high], bore_mm[low:high]) for branch, low, high in spans)
-    vertices = channels.vertices_mm
+    sample = nearest_samples(lines, channels.vertices_mm)
     return ChannelFields(
         branches,
-        bore_mm[nearest_samples(lines, vertices)],
-        part_distance_mm(blank, vertices),
+        bore_mm[sample],
+        wall[sample],
         ceiling_angles_deg(-vertex_normals(channels), direction),
     )

@@ -13,11 +13,11 @@ from collections.abc import Iterable, Sequence
 import numpy as np
 
 from morph.body.blank import Blank
+from morph.body.exit_wall import least_wall_around, straight_run_mm
 from morph.body.finish import ThreadHole
 from morph.body.plan import ChannelPlan, Exit, PlanBranch
 from morph.core.arrays import Floats
 from morph.core.verdict import HEADLINE_ORDER, Notice, Verdict
-from morph.export.exit_wall import least_wall_around, straight_run_mm
 from morph.export.numbers import json_bytes, rounded
 from morph.settings.job import FaceSealEnd
 

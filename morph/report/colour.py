@@ -44,6 +44,30 @@ OUTCOME_WORD = {
 }
 
 
+def round_scale(low: float, high: float, step: float = 0.5) -> tuple[float, float]:
+    """Returns the ends of a scale around `low` to `high`, multiples of `step`, never the same.
+
+    >>> round_scale(5.4, 6.5), round_scale(4.0, 4.0)
+    ((5.0, 6.5), (4.0, 4.5))
+    """
+    ends = np.floor(np.round(low / step, 6)) * step, np.ceil(np.round(high / step, 6)) * step
+    return (float(ends[0]), float(ends[1]) if ends[1] > ends[0] else float(ends[0]) + step)
+
+
+def round_ticks(low: float, high: float, most: int = 6) -> list[float]:
+    """Returns at most `most` ticks from `low` to `high`, all multiples of 1, 2, 2.5 or 5 times a power of ten.
+
+    >>> round_ticks(6.0, 7.5), round_ticks(5.0, 30.0)
+    ([6.0, 6.5, 7.0, 7.5], [5.0, 10.0, 15.0, 20.0, 25.0, 30.0])
+    """
+    base = 10.0 ** np.floor(np.log10((high - low) / most))
+    for step in (base * k for k in (1.0, 2.0, 2.5, 5.0, 10.0, 20.0)):
+        first, last = int(np.ceil(low / step - 1e-9)), int(np.floor(high / step + 1e-9))
+        if last - first < most:
+            return [round(float(k * step), 9) for k in range(first, last + 1)]
+    return [low, high]
+
+
 def _linear_from_oklab(lab: Floats) -> Floats:
     cone = np.einsum("ij,kj->ki", _TO_CONE, lab) ** 3
     return np.asarray(np.einsum("ij,kj->ki", _TO_LINEAR, cone), dtype=np.float64)

@@ -13,9 +13,11 @@ import numpy as np
 
 from morph.check.centreline import make_centrelines
 from morph.check.channel_wall import nearest_samples, sub_mesh
+from morph.check.fields import ChannelFields
 from morph.core.arrays import Floats
 from morph.geometry.mesh import Mesh
-from morph.report.colour import map_scale
+from morph.report.along import sheet_branches
+from morph.report.colour import map_scale, round_scale
 from morph.report.decimate import make_screen_mesh
 from morph.report.legend import PORT_COLOUR
 from morph.report.records import BuildRecords
@@ -62,6 +64,13 @@ def _quantity(name: str, title: str, unit: str, values: Floats) -> Quantity:
     return Quantity(name, title, unit, values, low, high if high > low else low + 1.0)
 
 
+def _wall_scale_mm(records: BuildRecords, fields: ChannelFields) -> tuple[float, float]:
+    """Returns the ends of the sheet picture's colour scale, so that a colour means the same wall in both."""
+    on_sheet = {branch.id for branch in sheet_branches(records.plan)}
+    walls = np.concatenate([item.wall_mm for item in fields.branches if item.id in on_sheet])
+    return round_scale(float(walls.min()), float(walls.max()))
+
+
 def make_scene(records: BuildRecords) -> ChannelScene:
     """Returns the meshes, decimated for the screen, and the figures over the channels.
 
@@ -81,7 +90,13 @@ def make_scene(records: BuildRecords) -> ChannelScene:
         make_screen_mesh(skin, MOST_SKIN_TRIANGLES).mesh,
         names,
         (
-            _quantity("wall", "Wall to the finished part face", "mm", small.mean_of(fields.wall_mm)),
+            Quantity(
+                "wall",
+                "Wall to the finished part face (colours as on the sheet; a lead beyond the scale has its end colour)",
+                "mm",
+                small.mean_of(fields.wall_mm),
+                *_wall_scale_mm(records, fields),
+            ),
             _quantity("bore", "Bore as written", "mm", small.mean_of(fields.bore_mm)),
             Quantity(
                 "ceiling",

@@ -6,7 +6,7 @@ from dataclasses import dataclass, replace
 
 from morph.body.plan import ChannelPlan
 from morph.core.verdict import HEADLINE_ORDER, Outcome, Verdict
-from morph.report.section import wall_after_band_mm, wall_verdicts
+from morph.report.section import MERGE, wall_after_band_mm, wall_verdicts
 
 
 @dataclass(frozen=True, slots=True)
@@ -64,17 +64,21 @@ def _from_verdict(key: str, title: str, verdict: Verdict, shown: str, limit: str
 
 
 def _thinnest_wall(verdicts: tuple[Verdict, ...]) -> Figure:
-    key, title = "wall_after_band_mm", "Thinnest wall after its band"
+    """Returns the wall with the least share of its limit left; channels that run together are the worst wall of all."""
+    key, title = "wall_after_band_mm", "Worst wall after its band"
     walls = wall_verdicts(verdicts)
     if not walls:
         return _missing(key, title, "mm")
     worst, thinnest = walls[0], min(walls, key=wall_after_band_mm)
     after = wall_after_band_mm(worst)
-    limit = "" if worst.limit is None else f"at least {worst.limit:.2f} mm"
+    shown, limit = f"{after:.2f} mm", "" if worst.limit is None else f"at least {worst.limit:.2f} mm"
     note = f"{worst.code}, measured {worst.value:.2f} mm less a band of {worst.band:.2f} mm"
-    if wall_after_band_mm(thinnest) < after:
-        note += f"; thinner but judged milder: {thinnest.code} {wall_after_band_mm(thinnest):.2f} mm"
-    return replace(_from_verdict(key, title, worst, f"{after:.2f} mm", limit, note), value=after)
+    if worst.code == MERGE:
+        limit, note = "must stay apart", "two channels run together; see branches-merge"
+        shown = f"{-after:.2f} mm overlap" if after <= 0.0 else shown
+    elif wall_after_band_mm(thinnest) < after:
+        note += f"; thinner, but farther above its own limit: {thinnest.code} {wall_after_band_mm(thinnest):.2f} mm"
+    return replace(_from_verdict(key, title, worst, shown, limit, note), value=after)
 
 
 def _length(verdicts: tuple[Verdict, ...], code: str, key: str, title: str, word: str) -> Figure:

@@ -4,12 +4,12 @@ from __future__ import annotations
 
 import numpy as np
 
-from morph.report.colour import COLOUR_STEPS, map_hex
+from morph.report.colour import COLOUR_STEPS, map_hex, round_ticks
 from morph.report.drawing import INK, PAPER, Drawing, Point, number
 from morph.settings.job import Role
 
 PORT_COLOUR = "#7a1fa2"
-TICKS = 5
+TICKS = 6
 
 
 def port_mark(x: float, y: float, role: Role) -> str:
@@ -40,11 +40,10 @@ def _colour_bar(drawing: Drawing, ends_mm: tuple[float, float], top: float) -> N
     for index, colour in enumerate(map_hex(np.arange(COLOUR_STEPS) / (COLOUR_STEPS - 1))):
         x = number(left + index * step)
         drawing.raw(f'<rect x="{x}" y="{top + 12:g}" width="{number(step + 0.5)}" height="{high:g}" fill="{colour}"/>')
-    for place in np.linspace(0.0, 1.0, TICKS).tolist():
-        x = left + place * wide
-        drawing.raw(f'<path d="M{number(x)} {top + 24:g}v5" stroke="{INK}"/>')
-        value = ends_mm[0] + place * (ends_mm[1] - ends_mm[0])
-        drawing.raw(_words(float(number(x)), top + 37.0, f"{value:.2f}".rstrip("0").rstrip("."), "middle"))
+    for value in round_ticks(*ends_mm, TICKS):
+        at = round(left + (value - ends_mm[0]) / (ends_mm[1] - ends_mm[0]) * wide, 2)
+        drawing.raw(f'<path d="M{number(at)} {top + 24:g}v5" stroke="{INK}"/>')
+        drawing.raw(_words(at, top + 37.0, f"{value:g}", "middle"))
 
 
 def draw_sheet_legend(drawing: Drawing, ends_mm: tuple[float, float], hatch: str, high_px: float) -> None:

@@ -11,6 +11,7 @@ from functools import cache
 from importlib import resources
 from typing import Any
 
+from morph.body.exit_wall import least_wall_around, straight_run_mm
 from morph.body.plan import BranchKind, ChannelPlan
 from morph.core.verdict import Outcome, worst_outcome
 from morph.report.along import sheet_branches
@@ -25,6 +26,7 @@ from morph.report.figures import (
     plotly_script,
 )
 from morph.report.headline import Figure, five_figures, sorted_verdicts
+from morph.report.job_text import job_text
 from morph.report.projection_view import VIEWS, draw_view
 from morph.report.records import BuildRecords
 from morph.report.section import WallSection, make_section, wall_verdicts
@@ -33,8 +35,8 @@ from morph.report.sheet_view import SheetScene, draw_sheet
 from morph.report.texts import (
     CAUTIONS,
     amount,
+    drill_words,
     end_words,
-    flat_settings,
     limit_words,
     outcome_class,
     place_words,
@@ -85,22 +87,28 @@ def sheet_scene(records: BuildRecords) -> SheetScene:
 
 
 def _port_rows(records: BuildRecords) -> list[dict[str, str]]:
-    """Returns the ports as words: where they come out and which way."""
-    lead = {branch.id: branch for branch in records.plan.branches}
-    return [
-        {
-            "port": exit_.port,
-            "role": exit_.role.value,
-            "exit": ", ".join(f"{value:.2f}" for value in exit_.xyz_mm) + " mm",
-            "leave": ", ".join(f"{value + 0.0:.3f}" for value in exit_.leave),
-            "face": exit_.face,
-            "bore": amount(exit_.bore_mm, "mm"),
-            "lead": f"{exit_.lead}, {amount(lead[exit_.lead].length_mm, 'mm')}",
-            "stock": amount(records.blank.face(exit_.face).stock_mm, "mm"),
-            "end": end_words(exit_),
-        }
-        for exit_ in records.plan.exits
-    ]
+    """Returns the ports as words: where they come out, which way, how they are finished and the metal around."""
+    plan, blank = records.plan, records.blank
+    lead = {branch.id: branch for branch in plan.branches}
+    rows = []
+    for exit_ in plan.exits:
+        wall_mm, neighbour = least_wall_around(exit_, plan.exits, blank)
+        stock_mm = blank.face(exit_.face).stock_mm
+        rows.append(
+            {
+                "port": exit_.port,
+                "role": exit_.role.value,
+                "exit": ", ".join(f"{value + 0.0:.2f}" for value in exit_.xyz_mm) + " mm",
+                "leave": ", ".join(f"{value + 0.0:.3f}" for value in exit_.leave),
+                "face": exit_.face + (f", under {amount(stock_mm, 'mm')} of stock" if stock_mm > 0.0 else ""),
+                "bore": amount(exit_.bore_mm, "mm"),
+                "drill_depth": drill_words(exit_, straight_run_mm(lead[exit_.lead], exit_)),
+                "wall_around": f"{amount(wall_mm, 'mm')} to {neighbour}" if neighbour else "nothing near",
+                "lead": f"{exit_.lead}, {amount(lead[exit_.lead].length_mm, 'mm')}",
+                "end": end_words(exit_),
+            }
+        )
+    return rows
 
 
 def _branch_rows(plan: ChannelPlan) -> list[dict[str, Any]]:
@@ -173,7 +181,7 @@ def _tables(records: BuildRecords, summary: dict[str, Any]) -> dict[str, Any]:
         "branches": _branch_rows(records.plan),
         "n_channels": sum(branch.kind is BranchKind.CHANNEL for branch in records.plan.branches),
         "notices": records.notices,
-        "settings": flat_settings(summary["settings"]),
+        "job_text": job_text(records.job),
         "profile": profile_rows(summary["settings"]["printing"]["profile"]),
         "mirrored": layout.seen_from is SeenFrom.METAL,
         "seen_from": layout.seen_from.value,

@@ -1,9 +1,9 @@
 """The section through the worst wall: which wall that is, the plane that shows it, and its cut.
 
-The worst wall is the first in headline order (a fail before a watch before a pass), then the
-thinnest after its band. Its verdict gives the middle of the metal; the plane goes through that
-point, contains the direction of the wall and stands as square to the channel as that allows, so
-that the thickness is seen in its true length.
+The worst wall is the first in headline order (a fail before a watch before a pass), then channels
+that run together, then the one with the least share of its limit left after its band. Its verdict
+gives the middle of the metal; the plane goes through that point, contains the direction of the wall
+and stands as square to the channel as that allows, so that the thickness is seen in its true length.
 """
 
 from __future__ import annotations
@@ -17,6 +17,9 @@ from morph.core.arrays import Floats, frozen_floats
 from morph.core.verdict import HEADLINE_ORDER, Outcome, Verdict
 from morph.report.cut import Loop, Plane, cut_mesh
 from morph.solid.result import Insert
+
+MERGE = "branches-merge"
+"""The verdict of channels that run together: a wall of nothing."""
 
 CHANNEL = 1
 """The label of channel wall on the insert's triangles."""
@@ -44,6 +47,7 @@ class WallSection:
         verdict: the wall's verdict. plane: where the cut was made; its origin is the middle of the metal.
         loops: the outlines of the written insert, label 1 where they are channel wall.
         crossings: where branches pass through the plane, in plan order.
+        named: the branches the verdict names, at their cut beside the wall; the first is the one dimensioned.
         channel_side_mm, far_side_mm: (2,) the ends of the wall in drawing coordinates.
         bore_mm: bore of the channel beside it.
         build_is_up: the build direction is drawn upwards; else the cut is seen along it.
@@ -57,6 +61,7 @@ class WallSection:
     far_side_mm: Floats
     bore_mm: float
     build_is_up: bool
+    named: tuple[Crossing, ...] = ()
 
     def __post_init__(self) -> None:
         for name in ("channel_side_mm", "far_side_mm"):
@@ -67,10 +72,20 @@ class WallSection:
         """The length of the wall as drawn."""
         return float(np.linalg.norm(self.far_side_mm - self.channel_side_mm))
 
+    @property
+    def overlaps(self) -> bool:
+        """Whether the channels run into each other, so that there is no wall to draw."""
+        return self.verdict.value is not None and self.verdict.value <= 0.0
+
 
 def wall_after_band_mm(verdict: Verdict) -> float:
     """Returns the wall of a verdict less its band, in mm; infinite when it has no figure."""
     return np.inf if verdict.value is None else verdict.value - verdict.band
+
+
+def margin_ratio(verdict: Verdict) -> float:
+    """Returns the wall after its band over its limit; where there is no limit, the wall itself in mm."""
+    return wall_after_band_mm(verdict) / (verdict.limit or 1.0)
 
 
 def wall_verdicts(verdicts: tuple[Verdict, ...]) -> list[Verdict]:
@@ -78,13 +93,13 @@ def wall_verdicts(verdicts: tuple[Verdict, ...]) -> list[Verdict]:
     walls = [
         v
         for v in verdicts
-        if v.code.startswith("wall-")
+        if (v.code.startswith("wall-") or v.code == MERGE)
         and v.unit == "mm"
         and v.value is not None
         and v.xyz_mm is not None
         and v.outcome is not Outcome.NOT_CHECKED
     ]
-    return sorted(walls, key=lambda v: (HEADLINE_ORDER[v.outcome], wall_after_band_mm(v)))
+    return sorted(walls, key=lambda v: (HEADLINE_ORDER[v.outcome], v.code != MERGE, margin_ratio(v)))
 
 
 def _nearest_sample(plan: ChannelPlan, branch_ids: tuple[str, ...], point: Floats) -> tuple[Floats, Floats, float]:
@@ -165,6 +180,18 @@ def plane_crossings(plan: ChannelPlan, plane: Plane) -> tuple[Crossing, ...]:
     return tuple(found)
 
 
+def _named(plan: ChannelPlan, plane: Plane, branch_ids: tuple[str, ...]) -> tuple[Crossing, ...]:
+    """Returns where the first two branches named are cut beside the origin of `plane`, if it meets them there."""
+    found = []
+    for name in branch_ids[:2]:
+        for branch in plan.branches:
+            if branch.id == name:
+                centre, _, bore_mm = _nearest_sample(plan, (name,), plane.origin_mm)
+                if abs(float((centre - plane.origin_mm) @ plane.normal)) < 0.5 * bore_mm:
+                    found.append(Crossing(name, plane.flat_mm(centre)[0]))
+    return tuple(found)
+
+
 def make_section(
     insert: Insert, plan: ChannelPlan, verdict: Verdict, build_direction: tuple[float, float, float]
 ) -> WallSection | None:
@@ -184,4 +211,5 @@ def make_section(
     near = _nearest_on_loops(loops, CHANNEL)
     if near is None or verdict.value is None:
         return None
-    return WallSection(verdict, plane, loops, plane_crossings(plan, plane), near, -near, bore_mm, is_up)
+    crossings, named = plane_crossings(plan, plane), _named(plan, plane, verdict.branch_ids)
+    return WallSection(verdict, plane, loops, crossings, near, -near, bore_mm, is_up, named)

@@ -10,7 +10,7 @@ from morph.core.verdict import Verdict
 from morph.report.colour import OUTCOME_COLOUR, OUTCOME_SIGN, OUTCOME_WORD
 from morph.report.cut import Loop, cut_mesh, rod_mesh
 from morph.report.drawing import INK, PAPER, Drawing
-from morph.report.section import CHANNEL, WallSection
+from morph.report.section import CHANNEL, MERGE, WallSection
 
 WINDOW_PX, STRIP_PX = 400.0, 92.0
 METAL = "#c9d0d8"
@@ -19,6 +19,7 @@ CHANNEL_LINE = "#0b5394"
 STOCK_LINE = "#6b4c9a"
 LINES = {"channel": (CHANNEL_LINE, ""), "stock": (STOCK_LINE, "7 4"), "hole": (INK, "6 3")}
 LEAST_HALF_WINDOW_MM = 5.0
+PLATE_REACHES_PX = (50.0, 70.0, 90.0, 110.0, 130.0, 150.0)
 FINISHED_NEAR = 0.02
 
 
@@ -78,8 +79,16 @@ def _arrow(drawing: Drawing, tip: Floats, away: Floats, colour: str) -> None:
 
 
 def _dimension(drawing: Drawing, section: WallSection) -> None:
-    """Draws the wall between two arrows from outside, and its value with sign and limit beside it."""
+    """Draws the wall between two arrows from outside, and its value with sign and limit on a plate nearby.
+
+    Channels that overlap have no wall: a ring marks the place.
+    """
     colour = OUTCOME_COLOUR[section.verdict.outcome]
+    if section.overlaps:
+        x, y = drawing.xy((0.0, 0.0))
+        drawing.raw(f'<circle cx="{x}" cy="{y}" r="11" fill="none" stroke="{colour}" stroke-width="2.6"/>')
+        _plate(drawing, section, colour, np.zeros((1, 2)))
+        return
     a, b = section.channel_side_mm, section.far_side_mm
     length = section.drawn_mm
     along = (b - a) / length if length > 0.0 else np.array([1.0, 0.0])
@@ -87,18 +96,38 @@ def _dimension(drawing: Drawing, section: WallSection) -> None:
     for tip, away in ((a, -along), (b, along)):
         _arrow(drawing, tip, away, colour)
         drawing.line(tuple(tip), tuple(tip + drawing.mm(24.0) * away), colour, 1.3)
-    _dimension_words(drawing, section.verdict, colour, along)
+    tail = drawing.mm(24.0) * along
+    _plate(drawing, section, colour, np.linspace(a - tail, b + tail, 40))
 
 
-def _dimension_words(drawing: Drawing, verdict: Verdict, colour: str, along: Floats) -> None:
-    """Writes value and limit on a plate beside the middle of the dimension line."""
-    value = f"{verdict.value:.2f} mm {OUTCOME_SIGN[verdict.outcome]}"
+def _plate_words(verdict: Verdict) -> tuple[str, str]:
+    """Returns the value with its sign, and what it is held against."""
+    sign, value = OUTCOME_SIGN[verdict.outcome], verdict.value or 0.0
+    if verdict.code == MERGE:
+        words = f"overlap {-value:.2f} mm {sign}" if value <= 0.0 else f"{value:.2f} mm {sign}"
+        return words, "the layout keeps them apart"
     limit = "" if verdict.limit is None else f"at least {verdict.limit:.2f} + {verdict.band:.2f} band"
+    return f"{value:.2f} mm {sign}", limit
+
+
+def _plate(drawing: Drawing, section: WallSection, colour: str, dimension_mm: Floats) -> None:
+    """Writes value and limit on a plate where it hides least, tied to the middle of the wall by a thin line.
+
+    Args:
+        drawing: the window, with the wall's middle at its origin.
+        section: the cut.
+        colour: of the outcome.
+        dimension_mm: (k, 2) points along the drawn dimension, which stays free.
+    """
+    value, limit = _plate_words(section.verdict)
     wide, high = max(10.0 * len(value), 6.4 * len(limit)) + 14.0, 42.0
-    square = np.array([-along[1], along[0]]) * (1.0 if along[0] >= 0.0 else -1.0)
-    reach = 0.5 * (abs(square[0]) * wide + abs(square[1]) * high) + 14.0
-    middle = drawing.mm(reach) * square
-    x, y = drawing.xy(tuple(middle))
+    half = np.array([drawing.mm(0.5 * wide), drawing.mm(0.5 * high)])
+    outline = np.concatenate([loop.points_mm for loop in section.loops])
+    names = np.array([item.at_mm for item in (*section.named, *section.crossings)]).reshape(-1, 2)
+    middle = _freest(drawing, half, dimension_mm, outline, names)
+    if float(np.linalg.norm(middle)) > 0.0:
+        drawing.line((0.0, 0.0), (float(middle[0]), float(middle[1])), colour, 1.0)
+    x, y = drawing.xy((float(middle[0]), float(middle[1])))
     left, top = float(x) - 0.5 * wide, float(y) - 0.5 * high
     drawing.raw(
         f'<rect x="{left:.1f}" y="{top:.1f}" width="{wide:.1f}" height="{high:g}" rx="4" fill="{PAPER}" '
@@ -106,6 +135,26 @@ def _dimension_words(drawing: Drawing, verdict: Verdict, colour: str, along: Flo
     )
     drawing.label((middle[0], middle[1] + drawing.mm(8.0)), value, size_px=18.0, colour=colour, bold=True)
     drawing.label((middle[0], middle[1] - drawing.mm(11.0)), limit, size_px=11.5)
+
+
+def _freest(drawing: Drawing, half_mm: Floats, dimension_mm: Floats, outline_mm: Floats, names_mm: Floats) -> Floats:
+    """Returns the middle (2,) of a plate of half sizes `half_mm (2,)` that hides least: never the dimension."""
+    limit = 0.5 * (drawing.high_mm[0] - drawing.low_mm[0]) - half_mm - drawing.mm(6.0)
+    best, found = np.inf, np.zeros(2)
+    for reach_px in PLATE_REACHES_PX:
+        for angle in np.radians(np.arange(0.0, 360.0, 15.0)):
+            place = drawing.mm(reach_px) * np.array([np.cos(angle), np.sin(angle)])
+            if (np.abs(place) > limit).any():
+                continue
+
+            def hidden(points: Floats, rim_px: float, place: Floats = place) -> int:
+                return int((np.abs(points - place) < half_mm + drawing.mm(rim_px)).all(axis=1).sum())
+
+            cost = 1e3 * hidden(dimension_mm, 8.0) + 20.0 * hidden(names_mm, 10.0) + hidden(outline_mm, 3.0)
+            cost += 0.02 * reach_px
+            if cost < best:
+                best, found = cost, place
+    return found
 
 
 def _holes(drawing: Drawing, section: WallSection, blank: Blank, half_mm: float) -> bool:
@@ -125,12 +174,16 @@ def _holes(drawing: Drawing, section: WallSection, blank: Blank, half_mm: float)
 
 
 def _channel_names(drawing: Drawing, section: WallSection, half_mm: float) -> None:
-    """Names the channels in the window where their centrelines pass; a name that would cover another is left out."""
-    taken = [0.5 * (section.channel_side_mm + section.far_side_mm)]
-    for crossing in section.crossings:
+    """Names the channels in the window: first those the verdict names, then the others where their centrelines pass.
+
+    Beside a junction several centrelines pass through one opening; it carries the name the verdict uses.
+    """
+    taken = [0.5 * (section.channel_side_mm + section.far_side_mm)] if not section.overlaps else []
+    for crossing in (*section.named, *section.crossings):
         at = crossing.at_mm
         inside = bool(np.abs(at).max() < half_mm - drawing.mm(16.0))
-        if inside and min(float(np.linalg.norm(at - other)) for other in taken) > drawing.mm(26.0):
+        apart = drawing.mm(26.0) if crossing in section.named else max(drawing.mm(26.0), 0.6 * section.bore_mm)
+        if inside and all(float(np.linalg.norm(at - other)) > apart for other in taken):
             taken.append(at)
             drawing.label((float(at[0]), float(at[1])), crossing.branch, size_px=13.0, colour=CHANNEL_LINE, bold=True)
 

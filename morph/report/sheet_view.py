@@ -16,7 +16,7 @@ from morph.body.plan import ChannelPlan, PlanBranch
 from morph.core.arrays import Floats, Ints
 from morph.layout.graph import NodeKind
 from morph.report.along import band_edges_mm, middle_index, sheet_branches, sheet_of
-from morph.report.colour import COLOUR_STEPS, map_hex
+from morph.report.colour import COLOUR_STEPS, map_hex, round_scale
 from morph.report.drawing import FAINT, INK, PAPER, Drawing, Point, number
 from morph.report.legend import PORT_COLOUR, draw_port, draw_sheet_legend
 from morph.report.seam import clipped, copies_mm, on_sheet_mm
@@ -60,9 +60,8 @@ class SheetScene:
 
     def wall_range_mm(self) -> tuple[float, float]:
         """Returns the ends of the colour scale, in steps of half a millimetre around the walls shown."""
-        walls = np.round(np.concatenate(list(self.wall_mm.values())), 6)
-        low, high = np.floor(2.0 * walls.min()) / 2.0, np.ceil(2.0 * walls.max()) / 2.0
-        return (float(low), float(high)) if high > low else (float(low), float(low) + 0.5)
+        walls = np.concatenate(list(self.wall_mm.values()))
+        return round_scale(float(walls.min()), float(walls.max()))
 
 
 def _band(drawing: Drawing, points: Floats, bore_mm: Floats, step: Ints) -> None:

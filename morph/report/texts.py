@@ -69,6 +69,21 @@ def place_words(sheet_mm: tuple[float, float] | None, xyz_mm: tuple[float, float
     return lines
 
 
+def drill_words(exit_: Exit, straight_mm: float) -> str:
+    """Returns how deep a drill goes, or may follow a plain bore, from the finished face; empty for a seal groove.
+
+    Args:
+        exit_: the exit.
+        straight_mm: how far its lead keeps straight behind the face.
+    """
+    detail = exit_.finish.detail
+    if isinstance(detail, ThreadHole):
+        return f"{amount(detail.drill_depth_mm, 'mm')}, drill {amount(detail.thread.drill_mm, 'mm')}"
+    if isinstance(detail, FaceSealEnd):
+        return ""
+    return f"{amount(straight_mm, 'mm')} straight"
+
+
 def end_words(exit_: Exit) -> str:
     """Returns how an exit is finished, with what the shop needs to machine it."""
     detail, land = exit_.finish.detail, amount(exit_.finish.land_mm, "mm")
@@ -85,25 +100,6 @@ def end_words(exit_: Exit) -> str:
             "checked against a standard"
         )
     return "plain, as printed"
-
-
-def flat_settings(value: Any, name: str = "") -> list[tuple[str, str]]:
-    """Returns nested settings as rows of dotted name and text; what is sourced is left to its own table."""
-    if isinstance(value, dict):
-        rows: list[tuple[str, str]] = []
-        for key in value:
-            if key != "profile":
-                rows += flat_settings(value[key], f"{name}.{key}" if name else key)
-        return rows
-    if isinstance(value, list) and any(isinstance(item, dict) for item in value):
-        return [row for index, item in enumerate(value) for row in flat_settings(item, f"{name}[{index + 1}]")]
-    return [(name, "not set" if value is None else _listed(value))]
-
-
-def _listed(value: Any) -> str:
-    if isinstance(value, list):
-        return "none" if not value else ", ".join(_listed(item) for item in value)
-    return f"{value:g}" if isinstance(value, float) else str(value)
 
 
 def profile_rows(profile: dict[str, Any]) -> list[tuple[str, str, str]]:

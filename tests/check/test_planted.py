@@ -278,6 +278,6 @@ def test_fields_of_a_cylinder_core():
         assert field.bore_mm == pytest.approx(4.0, abs=FOUND_MM) and field.wall_mm == pytest.approx(4.0, abs=FOUND_MM)
     n = len(subject.solid.trimmed.vertices_mm)
     assert len(fields.bore_mm) == len(fields.wall_mm) == len(fields.ceiling_deg) == n
-    # On the wall of a 4 mm bore 6 mm below a face of radius 30 the metal runs from 4 to about 8 mm.
-    assert fields.wall_mm.min() == pytest.approx(4.0, abs=0.05) and 7.5 < fields.wall_mm.max() < 8.5
+    # A 4 mm bore 6 mm below the face leaves 4 mm, on the far side of the bore too.
+    assert fields.wall_mm == pytest.approx(4.0, abs=FOUND_MM)
     assert fields.ceiling_deg.min() < 15.0 and fields.ceiling_deg.max() > 165.0

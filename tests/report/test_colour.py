@@ -4,7 +4,7 @@ import numpy as np
 import pytest
 
 from morph.core.verdict import Outcome
-from morph.report.colour import OUTCOME_COLOUR, OUTCOME_SIGN, map_colours, map_hex, map_scale
+from morph.report.colour import OUTCOME_COLOUR, OUTCOME_SIGN, map_colours, map_hex, map_scale, round_scale, round_ticks
 
 pytestmark = pytest.mark.quick
 
@@ -83,3 +83,15 @@ def test_outcome_colours_read_on_white_and_have_their_own_sign():
 def test_out_of_range_is_clipped_and_the_scale_has_its_ends():
     assert map_hex(np.array([-1.0, 2.0])) == [map_scale()[0][1], map_scale()[-1][1]]
     assert [map_scale()[0][0], map_scale()[-1][0]] == [0.0, 1.0]
+
+
+@pytest.mark.parametrize(("low", "high"), [(6.0, 7.5), (5.0, 6.5), (0.0, 0.5), (3.5, 21.0), (-2.5, 13.0), (10.0, 11.5)])
+def test_ticks_are_round_true_and_inside(low, high):
+    ticks = round_ticks(low, high)
+    assert 2 <= len(ticks) <= 6 and low <= ticks[0] and ticks[-1] <= high
+    assert all(float(f"{tick:g}") == tick for tick in ticks) and np.ptp(np.diff(ticks)) < 1e-9
+
+
+def test_scale_ends_hold_the_figures():
+    assert round_scale(5.4, 6.5) == (5.0, 6.5) and round_scale(4.0, 4.0) == (4.0, 4.5)
+    assert round_scale(-0.1, 0.0) == (-0.5, 0.0)

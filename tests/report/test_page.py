@@ -3,10 +3,12 @@
 import dataclasses
 import re
 
+import numpy as np
 import pytest
 from lxml import html
 
 from morph.core.verdict import Notice, Outcome, Verdict
+from morph.report.job_text import job_text
 from morph.report.page import make_report
 from morph.report.summary import make_summary
 
@@ -141,7 +143,8 @@ def test_fields_are_needed(make_records, summary):
 def test_settings_profile_versions_and_cautions_are_there(tree):
     text = re.sub(r"\s+", " ", tree.text_content())
     for wanted in (
-        "carrier.depth_mm",
+        "[carrier]",
+        "depth_mm = 8.0",
         "roof_angle_deg",
         "45 deg",
         "common practice, no source",
@@ -152,3 +155,19 @@ def test_settings_profile_versions_and_cautions_are_there(tree):
     caution = tree.xpath("//section[@id='cautions']")[0].text_content()
     for wanted in ("pressure", "crack", "powder", "Local codes", "licensed"):
         assert wanted in caution
+
+
+def test_ports_say_how_deep_to_drill_and_what_metal_is_around(records, tree):
+    table = tree.xpath("//section[@id='ports']//table")[0]
+    heads = [th.text_content() for th in table.xpath(".//thead//th")]
+    rows = [dict(zip(heads, (c.text_content() for c in row), strict=True)) for row in table.xpath(".//tbody/tr")]
+    assert [row["Port"] for row in rows] == ["feed", "return"]
+    for row, exit_ in zip(rows, records.plan.exits, strict=True):
+        assert re.fullmatch(r"\d+\.\d\d mm straight", row["Drill depth"])
+        # nothing but the carrier at radius 30 is near
+        wall = 30.0 - float(np.hypot(*exit_.xyz_mm[:2])) - 0.5 * exit_.bore_mm
+        assert row["Metal around"] == f"{wall:.2f} mm to face:carrier" and row["Bore"] == f"{exit_.bore_mm:.2f} mm"
+
+
+def test_settings_are_a_job_file(records, tree):
+    assert tree.xpath("//section[@id='settings']//pre")[0].text_content() == job_text(records.job)

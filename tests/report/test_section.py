@@ -1,5 +1,7 @@
 """Cuts against closed forms and trimesh, and the worst wall against a wall worked out by hand."""
 
+import re
+
 import numpy as np
 import pytest
 import trimesh
@@ -120,6 +122,49 @@ def test_worst_is_a_fail_before_a_thinner_watch():
         ("watch", 3.1),
         ("pass", 1.0),
     ]
+
+
+def test_worst_is_the_least_margin_and_a_merge_before_all():
+    """3.3 mm of 3.0 has less margin than 2.2 mm of 1.0; channels that run together have none."""
+    thick = Verdict("wall-face", Outcome.WATCH, "", 3.3, "mm", 3.0, xyz_mm=(0, 0, 0))
+    thin = Verdict("wall-outer", Outcome.WATCH, "", 2.2, "mm", 1.0, xyz_mm=(0, 0, 0))
+    assert wall_verdicts((thin, thick)) == [thick, thin]
+    gone = Verdict("wall-face", Outcome.FAIL, "", 0.05, "mm", 3.0, band=0.2, xyz_mm=(0, 0, 0))
+    merge = Verdict("branches-merge", Outcome.FAIL, "", 0.3, "mm", 0.0, xyz_mm=(0, 0, 0))
+    assert wall_verdicts((gone, merge, thin)) == [merge, gone, thin]
+
+
+def test_overlap_is_ringed_not_dimensioned(records):
+    row = Verdict(
+        "branches-merge", Outcome.FAIL, "x", -0.5, "mm", 0.0, branch_ids=("B9", "B8"), xyz_mm=(22.0, 0.0, 4.0)
+    )
+    section = make_section(records.insert, records.plan, row, (0, 0, 1))
+    svg = draw_section(section, records.blank)
+    assert section.overlaps and "overlap 0.50 mm" in svg and "at least" not in svg and 'r="11"' in svg
+
+
+def test_label_is_the_branch_the_verdict_names_even_beside_a_junction(records):
+    """At the end of B9 in N7 the centreline of B8 passes nearby; the opening is called B9 all the same."""
+    worst = wall_verdicts(records.verdicts)[0]
+    section = make_section(records.insert, records.plan, worst, (0, 0, 1))
+    assert worst.branch_ids[0] == "B9" and [item.branch for item in section.named] == ["B9"]
+    svg = draw_section(section, records.blank)
+    assert ">B9<" in svg and ">B8<" not in svg
+
+
+def test_plate_leaves_the_dimension_free(records):
+    svg = draw_section(
+        make_section(records.insert, records.plan, wall_verdicts(records.verdicts)[0], (0, 0, 1)), records.blank
+    )
+    left, top, wide, high = map(
+        float, re.search(r'<rect x="([\d.-]+)" y="([\d.-]+)" width="([\d.]+)" height="(42)" rx="4"', svg).groups()
+    )
+    number = r'"([\d.-]+)"'
+    line = re.search(rf"<line x1={number} y1={number} x2={number} y2={number}[^>]*width=\"2.6\"", svg)
+    x1, y1, x2, y2 = map(float, line.groups())
+    for t in np.linspace(0.0, 1.0, 50):
+        x, y = x1 + t * (x2 - x1), y1 + t * (y2 - y1)
+        assert not (left <= x <= left + wide and top <= y <= top + high)
 
 
 def test_drawing_shows_value_limit_hatch_and_scale(records):
