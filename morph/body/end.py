@@ -105,7 +105,7 @@ def make_finish(
         return PLAIN
     hole = _thread_hole(port.end, make_thread(port.end.designation, f"[[port]] '{port.name}' thread"))
     pilot = pilot_mm(hole, leave, rule, profile)
-    least = max(service.smallest_bore_mm, profile.smallest_bore_mm.value) + profile.bore_band_mm.value + BUILD_MM
+    least = max(service.smallest_bore_mm, profile.smallest_bore_mm.value) + profile.bore_band_mm.value + 2.0 * BUILD_MM
     if pilot < least:
         raise SettingError(
             "thread-too-small",
@@ -116,7 +116,9 @@ def make_finish(
             do="Choose a larger thread, less drill_stock_mm, or an exit along the build direction.",
         )
     land = _land_mm(port, hole.thread)
-    return Finish(hole, pilot, hole.thread.major_mm, hole.drill_depth_mm, land)
+    level = np.cross(rule.up, np.eye(3)[int(np.abs(rule.up).argmin())])
+    reach = 0.5 * pilot * roof_ratio(level / np.linalg.norm(level), rule)
+    return Finish(hole, pilot, hole.thread.major_mm, hole.drill_depth_mm, land, reach)
 
 
 def _thread_hole(end: ThreadEnd, thread: Thread) -> ThreadHole:

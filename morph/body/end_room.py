@@ -20,7 +20,8 @@ from morph.body.hole import Hole, distance_to_hole_mm
 from morph.body.lead_check import Surroundings
 from morph.body.neighbour import WALL_WAY, way_from_node_mm
 from morph.body.room import Limits
-from morph.core.arrays import Floats, Ints
+from morph.body.section import reach_mm
+from morph.core.arrays import Floats, Ints, unit_rows
 
 CIRCLE, RINGS, MOST_LEVELS = 48, 6, 40
 """Points around a circle, rings of a land, and levels of a cut."""
@@ -148,6 +149,20 @@ def _cut_rows(
     return rows, names
 
 
+def _toward(cut: Hole, xyz_mm: Floats) -> Floats:
+    """Returns unit directions (k, 3) from points (k, 3) to the nearest points of a cut; its axis where on it."""
+    offset = xyz_mm - cut.start_mm
+    along = offset @ cut.axis
+    radial = offset - along[:, None] * cut.axis
+    out = np.linalg.norm(radial, axis=1)
+    shrink = np.minimum(1.0, 0.5 * cut.diameter_mm / np.where(out > 0.0, out, 1.0))
+    kept = np.clip(along, 0.0, cut.length_mm)
+    way = cut.start_mm + kept[:, None] * cut.axis + radial * shrink[:, None] - xyz_mm
+    on_it = np.linalg.norm(way, axis=1) < SLACK_MM
+    way[on_it] = cut.axis
+    return unit_rows(way)
+
+
 @dataclass(frozen=True, slots=True, eq=False)
 class ChannelReach:
     """Up to which length a lead may be so that no laid channel is too near to its cut, and the nearest channel's id."""
@@ -172,7 +187,7 @@ def measure_channel_reach(around: Surroundings, exit_mm: Floats, leave: Floats, 
     network = around.network
     found = np.inf, "", 0.0
     for cut in finish.cut("", exit_mm, leave, 0.0):
-        half = 0.5 * network.bore_mm
+        half = reach_mm(network.bore_mm, _toward(cut, network.xyz_mm), network.section)
         gap = distance_to_hole_mm(cut, network.xyz_mm) - half
         lack = around.wall_mm - gap
         close = np.flatnonzero(lack > SLACK_MM)

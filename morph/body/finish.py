@@ -46,6 +46,7 @@ class Finish:
         pilot_mm: bore printed at the exit, over `cut_depth_mm`; 0: the lead's own bore.
         cut_mm, cut_depth_mm: diameter and depth of what is cut later around the axis.
         land_mm: diameter of the flat circle of the face the seal needs.
+        pilot_reach_mm: how far the ball that sweeps the pilot, with its roof, reaches from its centre.
     """
 
     detail: PlainEnd | ThreadHole | FaceSealEnd
@@ -53,24 +54,37 @@ class Finish:
     cut_mm: float = 0.0
     cut_depth_mm: float = 0.0
     land_mm: float = 0.0
+    pilot_reach_mm: float = 0.0
 
     @property
     def is_plain(self) -> bool:
         """Whether the exit is used as printed."""
         return isinstance(self.detail, PlainEnd)
 
+    @property
+    def _reach_back_mm(self) -> float:
+        return max(0.5 * self.pilot_mm, self.pilot_reach_mm)
+
     def straight_mm(self, bore_mm: float, taper: float) -> float:
         """Returns the straight run behind the exit: the cut, and the taper from the pilot to a lead of `bore_mm`."""
-        change = abs(self.pilot_mm - bore_mm) if self.pilot_mm > 0.0 else 0.0
-        return self.cut_depth_mm + change / taper
+        if self.pilot_mm == 0.0:
+            return self.cut_depth_mm
+        wait = self._reach_back_mm if self.pilot_mm < bore_mm else 0.0
+        return self.cut_depth_mm + wait + abs(self.pilot_mm - bore_mm) / taper
 
     def bore_mm(self, lead_mm: Floats, from_exit_mm: Floats, taper: float) -> Floats:
-        """Returns the bores (k,) of a lead whose own are `lead_mm (k,)`, `from_exit_mm (k,)` before its exit."""
+        """Returns the bores (k,) of a lead whose own are `lead_mm (k,)`, `from_exit_mm (k,)` before its exit.
+
+        A channel that widens is swept by balls that reach back over its narrow part, with their roofs, so from a
+        narrow pilot the taper starts that far behind the cut.
+        """
         if self.pilot_mm == 0.0:
             return lead_mm
-        change = taper * np.maximum(from_exit_mm - self.cut_depth_mm, 0.0)
-        narrow, wide = self.pilot_mm + change, self.pilot_mm - change
-        return np.minimum(np.maximum(lead_mm, wide), np.where(from_exit_mm <= self.cut_depth_mm, self.pilot_mm, narrow))
+        behind = from_exit_mm - self.cut_depth_mm
+        wide = np.maximum(lead_mm, self.pilot_mm - taper * np.maximum(behind, 0.0))
+        narrow = np.minimum(lead_mm, self.pilot_mm + taper * np.maximum(behind - self._reach_back_mm, 0.0))
+        widened = np.where(lead_mm > self.pilot_mm, narrow, wide)
+        return np.where(behind <= 0.0, self.pilot_mm, widened)
 
     def cut(self, port: str, xyz_mm: Floats, leave: Floats, wall_mm: float) -> tuple[Hole, ...]:
         """Returns what is cut later at an exit as a hole kept clear by `wall_mm`; nothing for a plain exit.

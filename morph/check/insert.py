@@ -15,6 +15,7 @@ from morph.check.ceiling import check_ceiling
 from morph.check.centreline import Centrelines, make_centrelines
 from morph.check.channel_wall import ChannelWall, make_channel_wall
 from morph.check.condition import check_condition
+from morph.check.end import check_ends
 from morph.check.fields import ChannelFields, make_fields
 from morph.check.lead_narrow import check_leads
 from morph.check.machine import check_machine
@@ -76,6 +77,7 @@ def check_insert(
     rows = check_faces(subject, lines, wall)
     rows += check_between(subject, lines, wall)
     rows += check_holes(subject, lines, wall)
+    rows += check_ends(subject, lines, wall)
     progress.step(STAGE, 3, STEPS)
     rows += check_openings(subject.insert, subject.plan, subject.blank, lines)
     rows += check_bores(subject, lines, shared.bore_mm)

@@ -146,8 +146,15 @@ def test_the_taper_between_pilot_and_channel():
     finish = Finish(hole_of("G1/8"), 8.0, 9.728, 13.0, 15.6)
     from_exit = np.array([0.0, 13.0, 15.0, 21.0, 30.0])
     assert finish.bore_mm(np.full(5, 4.0), from_exit, 0.5).tolist() == [8.0, 8.0, 7.0, 4.0, 4.0]
-    assert finish.bore_mm(np.full(5, 9.0), from_exit, 0.5).tolist() == [8.0, 8.0, 9.0, 9.0, 9.0]
-    assert finish.straight_mm(4.0, 0.5) == 21.0
+    # a pilot that is narrower runs on for its own radius of 4 mm, then widens
+    assert finish.bore_mm(np.full(5, 9.0), np.array([0.0, 13.0, 17.0, 18.0, 30.0]), 0.5).tolist() == [
+        8.0,
+        8.0,
+        8.0,
+        8.5,
+        9.0,
+    ]
+    assert finish.straight_mm(4.0, 0.5) == 21.0 and finish.straight_mm(9.0, 0.5) == 19.0
     assert Finish(PlainEnd()).bore_mm(np.full(5, 4.0), from_exit, 0.5).tolist() == [4.0] * 5
 
 
