@@ -1,8 +1,9 @@
 """The channels as one closed solid: swept, extracted, simplified, tested for crossings, trimmed.
 
 The extracted surface gets its creases (crease.py) and is simplified once by edge collapses that move it by at
-most SIMPLIFY_MM. If that makes triangles pass through each other or pinches a neck the tolerance is lowered;
-as a last resort the creases are given up and vertices of crossing triangles return to the middle of their cells.
+most SIMPLIFY_MM. Where that makes triangles pass through each other it is left alone; if it still does, or pinches
+a neck, the tolerance is lowered; as a last resort the creases are given up and vertices of crossing triangles
+return to the middle of their cells.
 """
 
 from __future__ import annotations
@@ -17,18 +18,22 @@ from morph.core.progress import SILENT, Progress
 from morph.core.tolerance import SIMPLIFY_MM
 from morph.geometry.mesh import Mesh
 from morph.solid.blank import blank_body
-from morph.solid.body import arrays_of, body_from, body_of, require_valid
+from morph.solid.body import arrays_of, body_of, require_valid
 from morph.solid.crease import sharpen
 from morph.solid.crossings import Crossings, measure_crossings
 from morph.solid.extract import extract_surface
 from morph.solid.field import SampledField, sample_field
 from morph.solid.result import ChannelSolid
+from morph.solid.simplify import simplify
 from morph.solid.sweep import make_sweep
 from morph.solid.tidy import is_closed, make_file_mesh, require_closed, round_to_file, tidy_mesh
 
 WHAT = "the channel solid"
 
 MOST_TAKE_BACKS = 4
+
+MOST_ROUNDS = 4
+"""Times the surface is simplified anew, each time leaving more of it alone."""
 
 TOLERANCES_MM = (SIMPLIFY_MM, 0.25 * SIMPLIFY_MM, 0.0)
 
@@ -96,16 +101,34 @@ def _is_sound(mesh: Mesh, found: Crossings, euler: int) -> bool:
 
 
 def _simplified(vertices: Floats, triangles: Ints, tolerance_mm: float, progress: Progress) -> tuple[Mesh, Crossings]:
-    """Returns the surface moved by at most `tolerance_mm` with fewer triangles, and its crossings."""
-    progress.step("solid: simplify", 0, 2)
-    body, _ = body_from(vertices, triangles, WHAT)
-    progress.step("solid: simplify", 1, 2)
-    if tolerance_mm > 0.0:
-        body = body.simplify(tolerance_mm)
-    vertices, triangles, _ = arrays_of(body)
-    progress.step("solid: simplify", 2, 2)
-    mesh, _ = tidy_mesh(vertices, triangles, np.zeros(len(triangles), np.int64))
+    """Returns the surface moved by at most `tolerance_mm` with fewer triangles, and its crossings.
+
+    Where triangles cross afterwards the surface is left as it was there, and the rest simplified anew.
+    """
+    keep = np.zeros(len(vertices), np.bool_)
+    left = triangles
+    for _ in range(MOST_ROUNDS):
+        left = simplify(vertices, triangles, keep, tolerance_mm, progress)
+        found = measure_crossings(Mesh(vertices, left), progress)
+        if not found.pairs or tolerance_mm <= 0.0:
+            break
+        keep |= _inside_boxes(vertices, vertices[left[found.crossed]])
+    mesh, _ = tidy_mesh(vertices, left, np.zeros(len(left), np.int64))
+    if len(mesh.triangles) == len(left) and not found.pairs:
+        return mesh, Crossings(0, np.zeros(len(left), np.bool_))
     return mesh, measure_crossings(mesh, progress)
+
+
+def _inside_boxes(points: Floats, corners: Floats) -> Bools:
+    """Returns which points (n, 3) lie in the box of one of the triangles (k, 3, 3), grown by its own longest side."""
+    low, high = corners.min(axis=1), corners.max(axis=1)
+    margin = (high - low).max(axis=1, keepdims=True)
+    low, high = low - margin, high + margin
+    inside = np.zeros(len(points), np.bool_)
+    for one, two in zip(low, high, strict=True):
+        near = np.flatnonzero((points[:, 0] >= one[0]) & (points[:, 0] <= two[0]))
+        inside[near[((points[near] >= one) & (points[near] <= two)).all(axis=1)]] = True
+    return inside
 
 
 def _untangled(field: SampledField, vertices: Floats, triangles: Ints, progress: Progress) -> Floats:
