@@ -15,7 +15,8 @@ from typing import Any
 
 import numpy as np
 
-from morph.body.plan import BranchKind
+from morph.body.finish import ThreadHole
+from morph.body.plan import BranchKind, Exit
 from morph.core.fingerprint import fingerprint
 from morph.core.units import mass_g
 from morph.core.verdict import Notice, Outcome, Verdict, worst_outcome
@@ -23,7 +24,7 @@ from morph.geometry.mesh import Mesh, measure_condition, mesh_area_mm2, mesh_vol
 from morph.layout.graph import ChannelGraph, NodeKind, count_loops
 from morph.report.headline import five_figures, sorted_verdicts
 from morph.report.records import BuildRecords
-from morph.settings.job import ConeSettings
+from morph.settings.job import ConeSettings, FaceSealEnd
 from morph.surface.cone import ConeCarrier
 
 SCHEMA = 1
@@ -121,10 +122,34 @@ def _body(records: BuildRecords) -> Block:
         "capped_ratio": capped / length if length > 0.0 else 0.0,
         "capped_area_mm2": sum(cap.area_mm2 for cap in plan.caps),
         "caps": [dataclasses.asdict(cap) for cap in plan.caps],
+        "ends": [_end(exit_) for exit_ in plan.exits],
         "merges": [
             {"branches": merge.branch_ids, "xyz_mm": merge.xyz_mm, "wall_mm": merge.wall_mm} for merge in plan.merges
         ],
     }
+
+
+def _end(exit_: Exit) -> Block:
+    """Returns how an exit is finished: what is printed, and what is cut later."""
+    finish, detail = exit_.finish, exit_.finish.detail
+    block: Block = {"port": exit_.port, "end": "plain", "bore_mm": exit_.bore_mm}
+    if isinstance(detail, ThreadHole):
+        thread = detail.thread
+        return block | {
+            "end": "thread",
+            "designation": thread.designation,
+            "standard": thread.standard,
+            "major_mm": thread.major_mm,
+            "minor_mm": thread.minor_mm,
+            "drill_mm": thread.drill_mm,
+            "drill_source": thread.drill_source,
+            "drill_depth_mm": detail.drill_depth_mm,
+            "thread_depth_mm": detail.thread_depth_mm,
+            "land_mm": finish.land_mm,
+        }
+    if isinstance(detail, FaceSealEnd):
+        return block | {"end": "face-seal", **dataclasses.asdict(detail)}
+    return block
 
 
 def _mesh(mesh: Mesh) -> Block:

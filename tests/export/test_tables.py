@@ -9,9 +9,12 @@ import numpy as np
 import pytest
 
 from morph.body.blank import Hole
+from morph.body.finish import PLAIN, Finish, ThreadHole
+from morph.body.thread import make_thread
 from morph.core.verdict import Notice, Outcome, Verdict
 from morph.export.numbers import json_bytes, plain, rounded
 from morph.export.tables import graph_json, ports_csv, verdicts_csv
+from morph.settings.job import FaceSealEnd
 
 pytestmark = pytest.mark.quick
 
@@ -100,6 +103,53 @@ def test_wall_around_sees_other_exits_and_holes(plans):
     rows = rows_of(ports_csv(plans.ladder(), replace(wide, holes=(pin,))))
     assert float(rows[0]["wall_around_mm"]) == pytest.approx(5.0, abs=1e-6)
     assert rows[0]["wall_around_to"] == "hole:H1"
+
+
+def with_ends(plan, *finishes):
+    from dataclasses import replace
+
+    exits = tuple(replace(exit_, finish=finish) for exit_, finish in zip(plan.exits, finishes, strict=True))
+    return replace(plan, exits=exits)
+
+
+def test_a_thread_and_a_seal_groove_can_be_machined_from_the_table(plans):
+    """G1/8 in the middle of a face 40 x 30 mm (ISO 228-1: major 9.728, minor 8.566): 15 - 4.864 mm to the part face."""
+    thread = ThreadHole(make_thread("G1/8"), 17.5, 3.5, 0.3)
+    seal = FaceSealEnd(12.0, 16.0, 1.5, 22.0)
+    plan = with_ends(
+        plans.straight_pipe(6.0), Finish(thread, 6.0, 9.728, 21.0, 15.6), Finish(seal, 0.0, 16.0, 1.5, 22.0)
+    )
+    first, second = rows_of(ports_csv(plan, plans.box_blank()))
+    numbers = {
+        "bore_mm": 6.0,
+        "drill_mm": 8.8,
+        "drill_depth_mm": 21.0,
+        "drill_stock_mm": 0.3,
+        "major_mm": 9.728,
+        "minor_mm": 8.566,
+        "thread_depth_mm": 17.5,
+        "run_out_mm": 3.5,
+        "land_mm": 15.6,
+    }
+    assert first["end"] == "thread" and first["designation"] == "G1/8"
+    assert {key: float(first[key]) for key in numbers} == numbers
+    assert first["groove_inner_mm"] == first["groove_depth_mm"] == ""
+    assert float(first["wall_around_mm"]) == pytest.approx(15.0 - 4.864) and first["wall_around_to"] == "face:+z"
+    groove = {"groove_inner_mm": 12.0, "groove_outer_mm": 16.0, "groove_depth_mm": 1.5, "land_mm": 22.0, "bore_mm": 6.0}
+    assert second["end"] == "face-seal" and {key: float(second[key]) for key in groove} == groove
+    assert second["drill_mm"] == second["designation"] == second["thread_depth_mm"] == ""
+    assert float(second["wall_around_mm"]) == pytest.approx(15.0 - 8.0)
+
+
+def test_the_wall_around_a_thread_counts_over_its_whole_depth(plans):
+    """A pin across the exit's axis, 15 mm deep and 9 mm above it: 9 - 2 - 4.864 = 2.136 mm, although the rim is farther."""
+    from dataclasses import replace
+
+    thread = ThreadHole(make_thread("G1/8"), 17.5, 3.5, 0.3)
+    plan = with_ends(plans.straight_pipe(6.0), Finish(thread, 6.0, 9.728, 21.0, 15.6), PLAIN)
+    pin = Hole("H1", np.array([15.0, 0.0, 24.0]), np.array([0.0, 1.0, 0.0]), 40.0, 4.0, 3.0)
+    first, _ = rows_of(ports_csv(plan, replace(plans.box_blank(), holes=(pin,))))
+    assert float(first["wall_around_mm"]) == pytest.approx(2.136, abs=0.02) and first["wall_around_to"] == "hole:H1"
 
 
 def test_drill_depth_stops_at_the_bend(plans):
