@@ -14,6 +14,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from morph.body.face import BlankFace, ConeFace, CylinderFace, FaceRole, PlaneFace
+from morph.body.flange import FlangedFace, with_flange
 from morph.body.hole import Hole, make_hole
 from morph.body.shape import Round, Shape, make_shape, widest_mm
 from morph.core.arrays import Floats, frozen_floats
@@ -22,6 +23,9 @@ from morph.core.tolerance import COINCIDE_MM
 from morph.geometry.cone import Cone
 from morph.settings.job import BlankSettings, HoleSettings, ServiceSettings
 from morph.surface.make import RoundCarrier
+
+AnyFace = BlankFace | FlangedFace
+"""Every kind of face a blank has, with a flange or without."""
 
 __all__ = ["Blank", "Hole", "make_blank"]
 
@@ -42,7 +46,7 @@ class Blank:
         holes: kept clear by channels and leads. Holes are made later and are not cut.
     """
 
-    faces: tuple[BlankFace, ...]
+    faces: tuple[AnyFace, ...]
     z_mm: tuple[float, float]
     outer_radius_mm: float | None
     inner_radius_mm: float | None
@@ -53,7 +57,7 @@ class Blank:
         if self.box_mm is not None:
             object.__setattr__(self, "box_mm", frozen_floats("box_mm", self.box_mm, (2, 3)))
 
-    def face(self, name: str) -> BlankFace:
+    def face(self, name: str) -> AnyFace:
         """Returns the face called `name`; KeyError when there is none."""
         for face in self.faces:
             if face.name == name:
@@ -79,11 +83,15 @@ def make_blank(
 
     Raises:
         SettingError: `blank-not-a-body`, `blank-too-large`, `blank-thickness-missing`,
-            `blank-face-unknown`, `blank-face-twice`, `blank-no-port-face`, `blank-stock-refused`, `hole-not-a-hole`.
+            `blank-face-unknown`, `blank-face-twice`, `blank-no-port-face`, `blank-stock-refused`,
+            `flange-misfit`, `hole-not-a-hole`.
         GeometryError: `blank-inside-carrier`, `blank-past-apex`, `blank-misses-carrier`, `hole-misses-body`.
     """
     shape = make_shape(settings.shape, carrier)
-    faces = _assign_roles(_name_faces(shape), settings)
+    named: list[AnyFace] = [*_name_faces(shape)]
+    if settings.flange is not None:
+        named = [*with_flange(_name_faces(shape), shape, settings.flange, carrier.sheet_z_mm()[0])]
+    faces = _assign_roles(named, settings)
     _require_sheet_inside(faces, carrier, size_mm)
     clipped = tuple(make_hole(i + 1, hole, faces, service) for i, hole in enumerate(holes))
     outer, inner = shape.radius_mm(metal_inside=True), shape.radius_mm(metal_inside=False)
@@ -128,7 +136,7 @@ def _face_name(name: str, known: Sequence[str], where: str) -> str:
     return name
 
 
-def _assign_roles(faces: Sequence[BlankFace], settings: BlankSettings) -> tuple[BlankFace, ...]:
+def _assign_roles(faces: Sequence[AnyFace], settings: BlankSettings) -> tuple[AnyFace, ...]:
     known = [face.name for face in faces]
     part = [_face_name(name, known, "[blank] part_faces") for name in settings.part_faces]
     port = [_face_name(name, known, "[blank] port_faces") for name in settings.port_faces]
@@ -173,7 +181,7 @@ def _require_stock(stock: dict[str, float], part: Sequence[str]) -> None:
             )
 
 
-def _require_sheet_inside(faces: Sequence[BlankFace], carrier: RoundCarrier, size_mm: tuple[float, float]) -> None:
+def _require_sheet_inside(faces: Sequence[AnyFace], carrier: RoundCarrier, size_mm: tuple[float, float]) -> None:
     """Raises `blank-misses-carrier` unless the whole sheet, on the face and at depth, lies in the body."""
     x, y = np.meshgrid(np.linspace(0.0, size_mm[0], 97), np.linspace(0.0, size_mm[1], 5))
     sheet = np.column_stack([x.ravel(), y.ravel()])

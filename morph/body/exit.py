@@ -10,8 +10,9 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from morph.body.blank import Blank
-from morph.body.face import BlankFace, ConeFace, CylinderFace, FaceRole, PlaneFace
+from morph.body.blank import AnyFace, Blank
+from morph.body.face import ConeFace, CylinderFace, FaceRole, PlaneFace
+from morph.body.flange import FlangedFace
 from morph.body.hole import line_crossings
 from morph.body.room import Limits, measure_room
 from morph.core.arrays import Floats, unit_rows
@@ -38,18 +39,18 @@ SQUAREST_COSINE = 0.5
 class Sites:
     """Places (n, 3) on one face and the unit directions (n, 3) out of the metal there."""
 
-    face: BlankFace
+    face: AnyFace
     xyz_mm: Floats
     leave: Floats
 
 
-def port_faces(blank: Blank) -> list[BlankFace]:
+def port_faces(blank: Blank) -> list[AnyFace]:
     """Returns the faces where ports may come out."""
     return [face for face in blank.faces if face.role is FaceRole.PORT]
 
 
 def list_sites(
-    blank: Blank, face: BlankFace, port_mm: Floats, bore_mm: float, leave: Floats | None, limits: Limits
+    blank: Blank, face: AnyFace, port_mm: Floats, bore_mm: float, leave: Floats | None, limits: Limits
 ) -> Sites:
     """Returns the places on `face` where a bore comes out with its walls to all other faces and holes.
 
@@ -66,6 +67,8 @@ def list_sites(
         places = _round_grid(blank, face, port_mm, step)
     elif isinstance(face, ConeFace):
         places = _cone_grid(blank, face, port_mm, step)
+    elif isinstance(face, FlangedFace):
+        places = _edged_grid(face, port_mm, step)
     elif abs(face.normal[2]) > 0.5:
         places = _polar_grid(face, port_mm, step)
     else:
@@ -79,7 +82,7 @@ def list_sites(
 
 def keep_legal(
     blank: Blank,
-    face: BlankFace,
+    face: AnyFace,
     places_mm: Floats,
     bore_mm: float,
     leave: Floats | None,
@@ -144,12 +147,23 @@ def _cone_grid(blank: Blank, face: ConeFace, port_mm: Floats, step: float) -> Fl
     return np.concatenate(rings) if rings else np.empty((0, 3))
 
 
-def project_to_face(face: BlankFace, xyz_mm: Floats) -> Floats:
+def _edged_grid(face: FlangedFace, port_mm: Floats, step: float) -> Floats:
+    """Returns places in rings a step apart between the edges of the face, in rings from the port's own angle."""
+    start, end = np.array(face.start), np.array(face.end)
+    n = max(1, min(int(np.linalg.norm(end - start) / step), 4 * WINDOW))
+    rings = []
+    for radius, z in start + (np.arange(n)[:, None] + 0.5) / n * (end - start):
+        angle = _around(port_mm, float(radius), step)
+        rings.append(np.column_stack([radius * np.cos(angle), radius * np.sin(angle), np.full(len(angle), z)]))
+    return np.concatenate(rings)
+
+
+def project_to_face(face: AnyFace, xyz_mm: Floats) -> Floats:
     """Returns the nearest points (k, 3) of the endless `face` to points (k, 3)."""
     return np.asarray(xyz_mm + face.distance_mm(xyz_mm)[:, None] * face.outward(xyz_mm), dtype=np.float64)
 
 
-def project_along(face: BlankFace, xyz_mm: Floats, leave: Floats) -> Floats:
+def project_along(face: AnyFace, xyz_mm: Floats, leave: Floats) -> Floats:
     """Returns where rays from points (k, 3) along `leave (3,)` meet the endless `face`; the point itself if never."""
     result = xyz_mm.copy()
     for k, point in enumerate(xyz_mm):

@@ -50,6 +50,7 @@ def line_crossings(face: Face, start_mm: Floats, axis: Floats) -> list[float]:
     if isinstance(face, PlaneFace):
         slope = float(face.normal @ axis)
         return [] if abs(slope) < 1e-12 else [float((face.origin_mm - start_mm) @ face.normal) / slope]
+    face = getattr(face, "endless", face)
     if isinstance(face, ConeFace):
         return face.cone.line_crossings_mm(start_mm, axis)
     if isinstance(face, CylinderFace):

@@ -13,9 +13,8 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from morph.body.blank import Blank
+from morph.body.blank import AnyFace, Blank
 from morph.body.exit import Sites, keep_legal, port_faces, project_along, project_to_face
-from morph.body.face import BlankFace
 from morph.body.lead_path import (
     SHARPEST_TURN_RAD,
     Paths,
@@ -64,7 +63,7 @@ class Bundle:
 
     paths: Paths
     developed: bool
-    face: BlankFace
+    face: AnyFace
     leave: Floats
 
     def points(self, carrier: Carrier, count: int) -> Floats:
@@ -181,7 +180,7 @@ def one_bend(
     return found
 
 
-def _out_at(face: BlankFace, corners: Floats, leave: Floats | None, carrier: Carrier | None) -> Floats:
+def _out_at(face: AnyFace, corners: Floats, leave: Floats | None, carrier: Carrier | None) -> Floats:
     """Returns the direction out of the metal above each corner, in the frame of the corners (n, 3)."""
     if carrier is None:
         return face.outward(corners) if leave is None else np.broadcast_to(leave, corners.shape)
@@ -194,7 +193,7 @@ def _out_at(face: BlankFace, corners: Floats, leave: Floats | None, carrier: Car
 def _bent_once(
     start: Start,
     blank: Blank,
-    face: BlankFace,
+    face: AnyFace,
     corners: Floats,
     radius_mm: float,
     bend: Bend,

@@ -246,13 +246,22 @@ class BoxBlankSettings:
 
 
 @dataclass(frozen=True, slots=True)
+class FlangeSettings:
+    """A disc about z at the foot, `height_mm` high from the foot, wider than the body."""
+
+    radius_mm: float
+    height_mm: float
+
+
+@dataclass(frozen=True, slots=True)
 class BlankSettings:
-    """The [blank] table: its shape, which faces touch the part, where ports may come out, stock per face."""
+    """The [blank] table: its shape, which faces touch the part, where ports may come out, stock per face, flange."""
 
     shape: CarrierBlankSettings | CylinderBlankSettings | BoxBlankSettings = field(default_factory=CarrierBlankSettings)
     part_faces: tuple[str, ...] = ("carrier",)
     port_faces: tuple[str, ...] = ("foot",)
     stock_mm: tuple[tuple[str, float], ...] = ()
+    flange: FlangeSettings | None = None
 
 
 @dataclass(frozen=True, slots=True)

@@ -9,6 +9,7 @@ from morph.settings.job import (
     BoxBlankSettings,
     CarrierBlankSettings,
     CylinderBlankSettings,
+    FlangeSettings,
     HoleSettings,
     SectionSettings,
     SectionShape,
@@ -20,7 +21,7 @@ from morph.settings.table import Table
 LARGEST_BORE_MM = 100.0
 LARGEST_WALL_MM = 500.0
 MOST_HOLES = 500
-FACES = ("carrier", "foot", "top", "back", "outer", "inner", "-x", "+x", "-y", "+y", "-z", "+z")
+FACES = ("carrier", "foot", "top", "back", "outer", "inner", "flange", "rim", "-x", "+x", "-y", "+y", "-z", "+z")
 """Every name a face of some blank can have; which of them this job's blank has is settled when it is made."""
 
 _SECTION_KEYS = ("shape", "bore_scale", "bore_range_mm", "blend_mm")
@@ -29,7 +30,7 @@ _BLANK_OF_KIND = {
     "cylinder": ("radius_mm", "z_mm"),
     "box": ("min_mm", "max_mm"),
 }
-_BLANK_LATER = {"flange": "A flange on the blank", "file": "A blank from a file"}
+_BLANK_LATER = {"file": "A blank from a file"}
 
 
 def parse_section(values: Any, file: str) -> SectionSettings:
@@ -57,11 +58,15 @@ def parse_blank(values: Any, file: str) -> BlankSettings:
         SettingError: a setting is unknown, wrong, belongs to another kind of blank, or is not available yet.
     """
     own = [key for keys in _BLANK_OF_KIND.values() for key in keys]
-    table = Table(values, file, "[blank]", ["kind", "part_faces", "port_faces", "stock_mm", *own], _BLANK_LATER)
+    table = Table(
+        values, file, "[blank]", ["kind", "part_faces", "port_faces", "stock_mm", "flange", *own], _BLANK_LATER
+    )
     kind = "carrier"
     if table.has("kind"):
         kind = table.word("kind", list(_BLANK_OF_KIND), {"mesh": "A blank from a mesh file"})
     table.not_used(set(own) - set(_BLANK_OF_KIND[kind]), f'when kind is "{kind}"')
+    if kind == "box":
+        table.not_used(["flange"], 'when kind is "box"')
     part_faces = table.names("part_faces", FACES) if table.has("part_faces") else ("carrier",)
     port_faces = table.names("port_faces", FACES) if table.has("port_faces") else ("foot",)
     if "carrier" not in part_faces:
@@ -80,7 +85,7 @@ def parse_blank(values: Any, file: str) -> BlankSettings:
             found=", ".join(shared),
             do="A port in a part face would leak into the part; remove the face from one of the two lists.",
         )
-    return BlankSettings(_blank_shape(table, kind), part_faces, port_faces, _stock(table, file))
+    return BlankSettings(_blank_shape(table, kind), part_faces, port_faces, _stock(table, file), _flange(table, file))
 
 
 def _blank_shape(table: Table, kind: str) -> CarrierBlankSettings | CylinderBlankSettings | BoxBlankSettings:
@@ -111,6 +116,16 @@ def _stock(table: Table, file: str) -> tuple[tuple[str, float], ...]:
     stock = Table(table.raw("stock_mm"), file, "[blank] stock_mm", FACES)
     return tuple(
         (face, stock.number(face, least=0.0, most=LARGEST_WALL_MM)) for face in sorted(FACES) if stock.has(face)
+    )
+
+
+def _flange(table: Table, file: str) -> FlangeSettings | None:
+    if not table.has("flange"):
+        return None
+    flange = Table(table.raw("flange"), file, "[blank] flange", ("radius_mm", "height_mm"))
+    return FlangeSettings(
+        flange.number("radius_mm", above=0.0, most=LARGEST_RADIUS_MM),
+        flange.number("height_mm", above=0.0, most=FARTHEST_MM),
     )
 
 

@@ -14,6 +14,7 @@ import numpy as np
 
 from morph.body.blank import Blank
 from morph.body.face import ConeFace, CylinderFace, Face, PlaneFace
+from morph.body.flange import FLANGE_FACES, FlangedFace
 from morph.core.arrays import Floats
 from morph.core.tolerance import COINCIDE_MM, FACET_MM
 from morph.geometry.mesh import Mesh
@@ -57,6 +58,9 @@ def blank_body(blank: Blank, *, printed: bool) -> Any:
         elif isinstance(face, PlaneFace) and _axis(face) is None:
             stock = face.stock_mm if printed else 0.0
             box = box.trim_by_plane((-face.normal).tolist(), -float(face.origin_mm @ face.normal) - stock)
+    flanged = [face for face in blank.faces if isinstance(face, FlangedFace)]
+    if flanged:
+        box = box ^ _flanged_body(flanged, printed, low[2] - 1.0, high[2] + 1.0)
     require_valid(box, "the blank")
     return box
 
@@ -86,8 +90,12 @@ def cut_stock(body: Any, blank: Blank, z_mm: tuple[float, float]) -> Any:
     Raises:
         GeometryError: ``solid-empty`` when nothing is left.
     """
+    flanged = [face for face in blank.faces if isinstance(face, FlangedFace)]
+    if flanged:
+        low, high = _extent(blank, printed=True)
+        body = _cut_flange(body, flanged, low[2] - 1.0, high[2] + 1.0)
     for face in blank.faces:
-        if face.stock_mm <= 0.0:
+        if face.stock_mm <= 0.0 or isinstance(face, FlangedFace):
             continue
         if isinstance(face, PlaneFace):
             body = body.trim_by_plane((-face.normal).tolist(), -float(face.origin_mm @ face.normal))
@@ -128,6 +136,8 @@ def _extent(blank: Blank, printed: bool) -> tuple[Floats, Floats]:
 
 def _widest_mm(face: Face, z_mm: tuple[float, float]) -> float:
     """Returns the largest radius of a round face with its stock over the body's height; 0 for other faces."""
+    if isinstance(face, FlangedFace):
+        return max(face.outline.radius_mm + face.stock_mm, _widest_mm(face.outline.core_face(face.stock_mm), z_mm))
     if isinstance(face, CylinderFace):
         return face.radius_mm + face.stock_mm
     if isinstance(face, ConeFace):
@@ -150,6 +160,33 @@ def _round_body(face: CylinderFace | ConeFace, printed: bool, low_mm: float, hig
         return None
     ends = (cone.radius_at_mm(low_mm), cone.radius_at_mm(high_mm))
     return _frustum(low_mm, high_mm, *(0.0 if radius < COINCIDE_MM else radius for radius in ends))
+
+
+def _cut_flange(body: Any, faces: list[FlangedFace], low_mm: float, high_mm: float) -> Any:
+    """Returns a printed body, made between two heights, cut at those of its flanged faces that carry stock."""
+    outline, stock = faces[0].outline, {face.name: face.stock_mm for face in faces}
+    core = next(face for face in faces if face.name not in FLANGE_FACES)
+    printed_top, beyond = outline.top_mm + stock["flange"], outline.radius_mm + stock["rim"] + 1.0
+    if stock["rim"] > 0.0:
+        kept = _frustum(low_mm, printed_top, outline.radius_mm, outline.radius_mm)
+        body = body - (_frustum(low_mm, printed_top, beyond, beyond) - kept)
+    if stock["flange"] > 0.0:
+        kept = _round_body(outline.core_face(core.stock_mm), True, low_mm, high_mm)
+        body = body - (_frustum(outline.top_mm, printed_top, beyond, beyond) - kept)
+    if core.stock_mm > 0.0:
+        finished = _round_body(outline.core_face(0.0), False, low_mm, high_mm)
+        body = body ^ (finished + _frustum(low_mm, outline.top_mm, beyond, beyond))
+    return body
+
+
+def _flanged_body(faces: list[FlangedFace], printed: bool, low_mm: float, high_mm: float) -> Any:
+    """Returns core and flange in one, between two heights."""
+    outline = faces[0].outline
+    stock = {face.name: face.stock_mm if printed else 0.0 for face in faces}
+    core = next(face for face in faces if face.name not in FLANGE_FACES)
+    radius = outline.radius_mm + stock["rim"]
+    disc = _frustum(low_mm, outline.top_mm + stock["flange"], radius, radius)
+    return disc + _round_body(outline.core_face(core.stock_mm), printed, low_mm, high_mm)
 
 
 def _frustum(low_mm: float, high_mm: float, radius_low_mm: float, radius_high_mm: float) -> Any:

@@ -11,6 +11,7 @@ from morph.settings.job import (
     ConeSettings,
     CoolantEnd,
     CylinderBlankSettings,
+    FlangeSettings,
     LevelRule,
     Metal,
     Role,
@@ -129,6 +130,11 @@ def test_a_cone_arrives(read_changed):
     assert read_changed((CYLINDER, 'kind = "cone"\nhalf_angle_deg = 12')).carrier.map is ConeMap.FLAT
 
 
+def test_a_flange_arrives(read_changed):
+    flange = "[blank]\nflange = { radius_mm = 45, height_mm = 12 }\n[carrier]"
+    assert read_changed(("[carrier]", flange)).blank.flange == FlangeSettings(45.0, 12.0)
+
+
 def test_every_optional_setting_has_its_default(read_text, valid_text):
     job = read_text(valid_text)
     assert (job.layout.rows, job.layout.samples, job.layout.level) == (Rows.TOP_DOWN, Samples.CELLS, LevelRule.HALF)
@@ -233,6 +239,8 @@ BAD = [
     ("setting-conflict", LAYOUT, LAYOUT + "\narea_ratio = 0.3", "keep-area"),
     ("setting-conflict", "[carrier]", "[blank]\nradius_mm = 50\n[carrier]", "radius_mm"),
     ("setting-conflict", "[carrier]", '[blank]\nport_faces = ["foot", "foot"]\n[carrier]', "each name once"),
+    ("setting-unknown", "[carrier]", "[blank]\nflange = { radius_mm = 45, hight_mm = 12 }\n[carrier]", "height_mm"),
+    ("setting-missing", "[carrier]", "[blank]\nflange = { radius_mm = 45 }\n[carrier]", "height_mm"),
     ("setting-zero-direction", "[carrier]", "[print]\nbuild_direction = [0, 0, 0]\n[carrier]", "build_direction"),
     ("setting-zero-direction", PORT, PORT + "\nleave = [0.0, 0.0, -0.0]", "leave"),
     ("job-name", 'name = "lamp-core"', 'name = "../lamp"', "letters"),
@@ -296,7 +304,6 @@ LATER = [
     (LAYOUT, LAYOUT + '\nmirror_at = "left"'),
     ("[carrier]", '[blank]\nkind = "mesh"\n[carrier]'),
     ("[carrier]", '[blank]\nfile = "blank.stl"\n[carrier]'),
-    ("[carrier]", "[blank]\nflange = { radius_mm = 45, height_mm = 12 }\n[carrier]"),
     ("[carrier]", '[coolant]\nfluid = "water"\n[carrier]'),
     ("[carrier]", '[moulding]\npolymer = "PP"\n[carrier]'),
 ]
