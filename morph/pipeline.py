@@ -19,7 +19,12 @@ from morph.core.verdict import HEADLINE_ORDER, Notice, Outcome, Verdict, worst_o
 from morph.settings.job import Job
 
 if TYPE_CHECKING:
+    from morph.body.blank import Blank
+    from morph.body.plan import ChannelPlan
+    from morph.layout.density import Density
+    from morph.layout.graph import ChannelGraph
     from morph.report.records import BuildRecords
+    from morph.surface.wrap import WrappedGraph
 
 STAGES = ("layout", "surface", "body", "solid", "insert", "check", "export", "report")
 
@@ -103,8 +108,19 @@ def _not_checked() -> tuple[Verdict, ...]:
     )
 
 
-def make_records(job: Job, clock: _Clock) -> BuildRecords:
-    """Returns the records of every stage from the density to the verdicts.
+@dataclass(frozen=True, slots=True, eq=False)
+class Planned:
+    """Everything that is settled before a solid is made: cheap, and refused here when it cannot be."""
+
+    density: Density
+    graph: ChannelGraph
+    wrapped: WrappedGraph
+    blank: Blank
+    plan: ChannelPlan
+
+
+def plan_channels(job: Job, clock: _Clock) -> Planned:
+    """Returns the records from the density to the channel plan.
 
     Raises:
         MorphError: an input or a request that cannot be met, with its code.
@@ -114,7 +130,6 @@ def make_records(job: Job, clock: _Clock) -> BuildRecords:
     from morph.body.make import make_plan
     from morph.layout.density import make_density
     from morph.layout.extract import make_graph
-    from morph.report.records import BuildRecords
     from morph.surface.make import make_carrier
     from morph.surface.wrap import choose_depth_mm, wrap_graph
 
@@ -131,15 +146,25 @@ def make_records(job: Job, clock: _Clock) -> BuildRecords:
         blank = make_blank(job.blank, job.holes, carrier, graph.size_mm, job.service)
         up = job.printing.build_direction
         plan = make_plan(wrapped, blank, job.ports, job.section, job.service, profile, progress, up)
+    return Planned(density, graph, wrapped, blank, plan)
 
+
+def make_records(job: Job, clock: _Clock) -> BuildRecords:
+    """Returns the records of every stage from the density to the verdicts.
+
+    Raises:
+        MorphError: an input or a request that cannot be met, with its code.
+    """
     from morph.check import CheckSubject, check_insert, measure_fields, measure_insert
+    from morph.report.records import BuildRecords
     from morph.solid.channel import make_channel_solid
     from morph.solid.cut import make_finished, make_insert
     from morph.solid.field import choose_h_mm
 
+    planned, progress = plan_channels(job, clock), clock.progress
+    blank, plan = planned.blank, planned.plan
     with clock.stage("solid"):
-        h_mm = choose_h_mm(plan, job.quality)
-        solid = make_channel_solid(plan, blank, h_mm, progress)
+        solid = make_channel_solid(plan, blank, choose_h_mm(plan, job.quality), progress)
     with clock.stage("insert"):
         insert = make_insert(solid, blank, plan, progress)
         finished = make_finished(insert, blank)
@@ -149,10 +174,10 @@ def make_records(job: Job, clock: _Clock) -> BuildRecords:
             solid=solid,
             blank=blank,
             plan=plan,
-            profile=profile,
+            profile=job.printing.profile,
             service=job.service,
             build_direction=job.printing.build_direction,
-            graph=graph,
+            graph=planned.graph,
             bore_scale=job.section.bore_scale,
         )
         measured = measure_insert(subject, progress)
@@ -160,15 +185,15 @@ def make_records(job: Job, clock: _Clock) -> BuildRecords:
         fields = measure_fields(subject, measured)
     return BuildRecords(
         job=job,
-        density=density,
-        graph=graph,
-        wrapped=wrapped,
+        density=planned.density,
+        graph=planned.graph,
+        wrapped=planned.wrapped,
         blank=blank,
         plan=plan,
         solid=solid,
         insert=insert,
         verdicts=verdicts,
-        notices=graph.notices + plan.notices,
+        notices=planned.graph.notices + plan.notices,
         fields=fields,
         finished=finished,
     )
