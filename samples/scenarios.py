@@ -33,6 +33,11 @@ def _sleeve_heat(_x: Floats, y: Floats) -> Floats:
     return 1.0 + 0.5 * np.exp(-(((y - 0.9) / 0.2) ** 2))
 
 
+def _funnel_heat(x: Floats, y: Floats) -> Floats:
+    """The funnel's thick upper rim and the root of its hanging lug, at the right, take more heat than the wall."""
+    return 0.5 + 0.5 * np.exp(-(((y - 0.85) / 0.2) ** 2)) + 0.6 * _spot(x, y, (1.15, 0.5), 0.22)
+
+
 SCENARIOS = {
     "tealight-cup": Scenario(
         name="tealight-cup",
@@ -66,5 +71,21 @@ SCENARIOS = {
         steps=120,
         top_down=False,
         power=6.0,
+    ),
+    "funnel-core": Scenario(
+        name="funnel-core",
+        grid=Grid(56, 84),
+        openings=(Opening("bottom", 0.14, 0.21, 1.0), Opening("bottom", 0.79, 0.86, 0.0)),
+        heat=_funnel_heat,
+        start=_sleeve_start,
+        solid=None,
+        rim=4,
+        capacity=2e6,
+        filter_radius=3.8,
+        disc_radius=9.0,
+        coolant_share=0.29,
+        local_share=0.46,
+        steps=100,
+        top_down=True,
     ),
 }
