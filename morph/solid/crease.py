@@ -39,6 +39,14 @@ FOLDED = -0.1
 
 
 @dataclass(frozen=True, slots=True, eq=False)
+class _Turns:
+    """Where normals turn: beyond this cosine, and only at the triangles of the vertices `near (nv,)`."""
+
+    least_cosine: float
+    near: Bools
+
+
+@dataclass(frozen=True, slots=True, eq=False)
 class _Split:
     """Edges (k, 2) of the mesh with a new vertex (k, 3) each."""
 
@@ -57,7 +65,7 @@ def sharpen(field: SampledField, surface: Surface, progress: Progress = SILENT) 
     smallest = float(np.minimum(field.sweep.pieces[:, 7], _end_radius(field)).min())
     least_cosine = min(SMOOTHEST_COSINE, float(np.cos(min(CELLS_OF_TURN * field.h_mm / smallest, 1.2))))
     plain = round_to_file(surface.vertices)
-    chosen, placed = _crease_vertices(field, surface, least_cosine, progress)
+    chosen, placed, turns = _crease_vertices(field, surface, least_cosine, progress)
     sharp = np.zeros(len(plain), np.bool_)
     sharp[chosen] = True
     target = plain.copy()
@@ -67,8 +75,8 @@ def sharpen(field: SampledField, surface: Surface, progress: Progress = SILENT) 
     for turn in range(MOST_ROUNDS):
         vertices = np.where(sharp[:, None], target, plain)
         triangles = _turn_quads(field, surface, vertices, sharp, progress)
-        triangles = _flip_edges(field, surface, vertices, triangles, sharp, least_cosine, progress)
-        split = _find_splits(field, surface, vertices, triangles, sharp, least_cosine, given_up, progress)
+        triangles = _flip_edges(field, surface, vertices, triangles, sharp, turns, progress)
+        split = _find_splits(field, surface, vertices, triangles, sharp, turns, given_up, progress)
         n_plain = len(vertices)
         vertices, triangles = _with_splits(vertices, triangles, split)
         touched = np.ones(len(vertices), np.bool_)
@@ -90,8 +98,8 @@ def _end_radius(field: SampledField) -> Floats:
 
 def _crease_vertices(
     field: SampledField, surface: Surface, least_cosine: float, progress: Progress
-) -> tuple[Ints, Floats]:
-    """Returns the vertices (k,) that have a crease in their cell, and their places (k, 3) on it."""
+) -> tuple[Ints, Floats, _Turns]:
+    """Returns the vertices (k,) that have a crease in their cell, their places (k, 3) on it, and where to look on."""
     from morph.kernels.crease import mark_creases, place_on_creases
 
     marked = np.zeros(len(surface.vertices), np.uint8)
@@ -117,7 +125,9 @@ def _crease_vertices(
         lambda a, b: place_on_creases(a, b, *around, placed, found),
         progress,
     )
-    return chosen[found > 0], placed[found > 0]
+    near = marked > 0
+    near[surface.triangles[near[surface.triangles].any(axis=1)]] = True
+    return chosen[found > 0], placed[found > 0], _Turns(least_cosine, near)
 
 
 def _field_at(field: SampledField, points: Floats, block: Ints, progress: Progress) -> tuple[Floats, Floats]:
@@ -170,23 +180,25 @@ def _turn_quads(field: SampledField, surface: Surface, vertices: Floats, sharp: 
     return triangles
 
 
-def _cutting_edges(surface: Surface, triangles: Ints, sharp: Bools, least_cosine: float) -> tuple[Ints, Ints, Ints]:
+def _cutting_edges(surface: Surface, triangles: Ints, sharp: Bools, turns: _Turns) -> tuple[Ints, Ints, Ints]:
     """Returns edges (k, 2) whose ends lie off the crease with differing normals, each once; its triangle and corner."""
-    edges = np.concatenate([triangles[:, [0, 1]], triangles[:, [1, 2]], triangles[:, [2, 0]]])
+    rows = np.flatnonzero(turns.near[triangles].any(axis=1))
+    few = triangles[rows]
+    edges = np.concatenate([few[:, [0, 1]], few[:, [1, 2]], few[:, [2, 0]]])
     kept = np.flatnonzero(
         (edges[:, 0] < edges[:, 1])
         & ~(sharp[edges[:, 0]] | sharp[edges[:, 1]])
-        & ((surface.normals[edges[:, 0]] * surface.normals[edges[:, 1]]).sum(axis=1) < least_cosine)
+        & ((surface.normals[edges[:, 0]] * surface.normals[edges[:, 1]]).sum(axis=1) < turns.least_cosine)
     )
-    return edges[kept], kept % len(triangles), kept // len(triangles)
+    return edges[kept], rows[kept % max(len(rows), 1)], kept // max(len(rows), 1)
 
 
 def _flip_edges(
-    field: SampledField, surface: Surface, vertices: Floats, triangles: Ints, sharp: Bools, least_cosine: float,
+    field: SampledField, surface: Surface, vertices: Floats, triangles: Ints, sharp: Bools, turns: _Turns,
     progress: Progress,
 ) -> Ints:  # fmt: skip
     """Returns the triangles with edges that cut across a crease flipped where the other two corners lie on it."""
-    edges, row, corner = _cutting_edges(surface, triangles, sharp, least_cosine)
+    edges, row, corner = _cutting_edges(surface, triangles, sharp, turns)
     c = triangles[row, (corner + 2) % 3]
     keep = sharp[c]
     edges, row, c = edges[keep], row[keep], c[keep]
@@ -225,14 +237,14 @@ def _flip_edges(
 
 
 def _find_splits(
-    field: SampledField, surface: Surface, vertices: Floats, triangles: Ints, sharp: Bools, least_cosine: float,
+    field: SampledField, surface: Surface, vertices: Floats, triangles: Ints, sharp: Bools, turns: _Turns,
     given_up: Ints, progress: Progress,
 ) -> _Split:  # fmt: skip
     """Returns the edges that cut across a crease between two vertices that are not on it, with the crease's places."""
     from morph.kernels.crease import split_edges
 
     n = len(vertices)
-    edges, _, _ = _cutting_edges(surface, triangles, sharp, least_cosine)
+    edges, _, _ = _cutting_edges(surface, triangles, sharp, turns)
     edges = edges[~np.isin(edges[:, 0] * n + edges[:, 1], given_up)]
     placed, found = np.empty((len(edges), 3)), np.zeros(len(edges), np.uint8)
     middle = 0.5 * (vertices[edges[:, 0]] + vertices[edges[:, 1]])
@@ -255,13 +267,17 @@ def _with_splits(vertices: Floats, triangles: Ints, split: _Split) -> tuple[Floa
         return vertices, triangles
     key = split.edges[:, 0] * n + split.edges[:, 1]
     order = np.argsort(key)
+    at_split = np.zeros(n, np.bool_)
+    at_split[split.edges] = True
+    beside = at_split[triangles].sum(axis=1) >= 2
+    untouched, triangles = triangles[~beside], triangles[beside]
     ends = np.sort(np.stack([triangles, np.roll(triangles, -1, axis=1)]), axis=0)
     wanted = ends[0] * n + ends[1]  # (m, 3): the edge from corner k to the next
     at = np.minimum(np.searchsorted(key[order], wanted), len(key) - 1)
     new = np.where(key[order][at] == wanted, n + order[at], -1)
     vertices = np.concatenate([vertices, split.placed])
     count = (new >= 0).sum(axis=1)
-    parts = [triangles[count == 0]]
+    parts = [untouched, triangles[count == 0]]
     for k in range(3):
         rows = (count == 1) & (new[:, k] >= 0)
         a, b, c = (triangles[rows, (k + j) % 3] for j in range(3))
