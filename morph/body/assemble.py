@@ -12,6 +12,7 @@ from morph.body.cap import BORE_SLACK_MM, TAPER, find_merges, list_caps
 from morph.body.finish import Finish
 from morph.body.flow_path import connected_pieces, through_flow
 from morph.body.lead import Lead, lead_strand
+from morph.body.lead_search import LEAST_BEND_BORES
 from morph.body.neighbour import (
     Network,
     Strand,
@@ -203,12 +204,26 @@ def _room_notices(parts: Parts, branches: Sequence[PlanBranch]) -> list[Notice]:
     ]
 
 
-def _narrowest_mm(lead: Lead, finish: Finish) -> float:
-    """Returns the least bore of a lead before its pilot and the taper to it."""
+def _before_pilot(lead: Lead, finish: Finish) -> Bools:
+    """Returns the samples (k,) of a lead before its pilot and the taper to it."""
     arc = polyline_arc_mm(lead.path.xyz_mm)
     before = arc <= arc[-1] - finish.straight_mm(lead.port.bore_mm, TAPER)
     before[0] = True
-    return float(lead.path.bore_mm[before].min())
+    return np.asarray(before, dtype=np.bool_)
+
+
+def _thinned_words(lead: Lead, before: Bools) -> str:
+    """Returns what keeps a lead from its full bore: what leaves too little room, or the bends a full bore needs."""
+    room = np.where(before, lead.path.room.room_mm, np.inf)
+    tightest = int(np.argmin(room))
+    if room[tightest] < THINNED_SHARE * lead.port.bore_mm:
+        x, y, z = lead.path.xyz_mm[tightest]
+        by = lead.path.room.by_names()[tightest].replace(":", " ")
+        return f"{by} leaves room for {room[tightest]:.3f} mm at ({x:.2f}, {y:.2f}, {z:.2f}) mm."
+    return (
+        f"no way has room for the bends of the full bore ({LEAST_BEND_BORES:g} bores and a straight end); "
+        f"this one has, and walls for {room[tightest]:.3f} mm."
+    )
 
 
 def _lead_notices(leads: Sequence[Lead]) -> list[Notice]:
@@ -225,11 +240,12 @@ def _lead_notices(leads: Sequence[Lead]) -> list[Notice]:
                 f"of its {finish.words}."
             )
             found.append(Notice("thread-narrows", text, (name,)))
-        narrowest = _narrowest_mm(lead, finish)
+        before = _before_pilot(lead, finish)
+        narrowest = float(lead.path.bore_mm[before].min())
         if narrowest < THINNED_SHARE * lead.port.bore_mm:
             text = (
-                f"{name} narrows from {lead.port.bore_mm:.3f} mm at its port to {narrowest:.3f} mm "
-                "so that it keeps its walls."
+                f"{name} narrows from {lead.port.bore_mm:.3f} mm at its port to {narrowest:.3f} mm: "
+                + _thinned_words(lead, before)
             )
             found.append(Notice("lead-thinned", text, (name,)))
     return found

@@ -21,6 +21,7 @@ from morph.body.room import Limits, Room, face_wall_mm, room_to_face_mm
 from morph.core.arrays import Floats
 from morph.core.errors import GeometryError
 from morph.core.verdict import Notice
+from morph.core.words import counted
 
 TAPER = 0.5
 """Greatest change of bore per mm of branch: a wall angle of 14 degrees, which prints and flows as smoothly as
@@ -163,14 +164,22 @@ def require_least_bore_fits(blank: Blank, network: Network, limits: Limits) -> N
             x, y, z = network.xyz_mm[worst]
             raise GeometryError(
                 "no-room-for-smallest-bore",
-                expected=f"a wall of at least {needed[worst]:.3f} mm to face '{face.name}' for the least bore of "
-                f"{limits.least_bore_mm:.3f} mm",
-                found=f"{wall[worst]:.3f} mm after a band of {limits.band_mm:.3f} mm, at {int((lack > 0.0).sum())} "
-                f"of {len(lack)} places",
+                expected=(
+                    f"a wall of at least {needed[worst]:.3f} mm to face '{face.name}' for the least bore of "
+                    f"{limits.least_bore_mm:.3f} mm"
+                    if part
+                    else f"the least bore of {limits.least_bore_mm:.3f} mm to stay inside face '{face.name}'"
+                ),
+                found=f"{_wall_words(float(wall[worst]))} after a band of {limits.band_mm:.3f} mm, at "
+                f"{int((lack > 0.0).sum())} of {len(lack)} places",
                 where=f"branch {network.strands[network.owner[worst]].id} at ({x:.2f}, {y:.2f}, {z:.2f}) mm",
                 do=f"Move the channels {lack[worst]:.3f} mm further from '{face.name}' (depth, margin or blank size), "
                 "or allow a smaller bore or wall.",
             )
+
+
+def _wall_words(wall_mm: float) -> str:
+    return f"a wall of {wall_mm:.3f} mm" if wall_mm >= 0.0 else f"a channel that stands out by {-wall_mm:.3f} mm"
 
 
 def list_caps(branches: Sequence[PlanBranch]) -> tuple[Cap, ...]:
@@ -213,7 +222,8 @@ def clamp_notices(
             name, raw_worst, _ = max(by_branch, key=lambda row: sign * (limit - row[1]))
             total = sum(row[2] for row in by_branch)
             text = (
-                f"{len(by_branch)} branches {verb} to the allowed bore of {limit:.3f} mm over {total:.1f} mm in all; "
+                f"{counted(len(by_branch), 'branch', 'branches')} {verb} to the allowed bore of {limit:.3f} mm over "
+                f"{total:.1f} mm in all; "
                 f"the furthest is {name}, {raw_worst:.3f} mm in the layout."
             )
             notices.append(Notice("bore-clamped", text, tuple(row[0] for row in by_branch)))

@@ -14,6 +14,7 @@ from morph.check.centreline import Centrelines, chord_lengths_mm
 from morph.check.rows import name_list, place
 from morph.core.arrays import Floats
 from morph.core.verdict import COMMON_PRACTICE, Outcome, Verdict, judge
+from morph.core.words import told_apart
 from morph.settings.profile import Profile
 
 FOLDED_BORES = 0.5
@@ -67,7 +68,8 @@ def check_bends(lines: Centrelines, profile: Profile) -> list[Verdict]:
         Verdict(
             "bend",
             outcome,
-            f"The tightest bend has a centreline radius of {value:.2f} bores, in {lines.branch_of(sample).id}; "
+            f"The tightest bend has a centreline radius of {told_apart(value, (limit.value, FOLDED_BORES))} bores, in "
+            f"{lines.branch_of(sample).id}; "
             f"{limit.value:.2f} bores are wanted, below {FOLDED_BORES:.1f} the inner wall folds. "
             f"{len(below)} of {len(radii)} branches are below{': ' + name_list(below) if below else ''}.",
             value=value,

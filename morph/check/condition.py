@@ -8,6 +8,7 @@ from __future__ import annotations
 
 from morph.body.plan import ChannelPlan
 from morph.core.verdict import Outcome, Verdict
+from morph.core.words import counted
 from morph.geometry.mesh import Mesh, MeshCondition, measure_condition
 from morph.layout.graph import count_loops
 from morph.solid.result import ChannelSolid, Insert
@@ -70,15 +71,27 @@ def check_condition(insert: Insert, solid: ChannelSolid, plan: ChannelPlan) -> l
         check_closed(solid.trimmed, "channels", channels),
         _count_row(
             "crossings",
-            f"{solid.crossings} pairs of channel triangles cross each other.",
+            f"{counted(solid.crossings, 'pair')} of channel triangles cross each other.",
             solid.crossings,
             0,
             COUNTED,
             "Set [quality] h_mm a little smaller and build again.",
         ),
-        _count_row("bodies", f"The insert is {whole.bodies} body (1 expected).", whole.bodies, 1, COUNTED, split),
         _count_row(
-            "bodies", f"The channels are {channels.bodies} bodies for {n} circuits.", channels.bodies, n, COUNTED, split
+            "bodies",
+            f"The insert is {counted(whole.bodies, 'body', 'bodies')} (1 expected).",
+            whole.bodies,
+            1,
+            COUNTED,
+            split,
+        ),
+        _count_row(
+            "bodies",
+            f"The channels are {counted(channels.bodies, 'body', 'bodies')} for {counted(n, 'circuit')}.",
+            channels.bodies,
+            n,
+            COUNTED,
+            split,
         ),
     ]
     if plan.merges or not (whole.closed and channels.closed):
@@ -92,7 +105,7 @@ def check_condition(insert: Insert, solid: ChannelSolid, plan: ChannelPlan) -> l
     rows.append(
         _count_row(
             "genus",
-            f"The channels have genus {channels.genus}; the plan has {loops} loops.",
+            f"The channels have genus {channels.genus}; the plan has {counted(loops, 'loop')}.",
             channels.genus,
             loops,
             "Euler's formula: the genus of a circuit is its loops",

@@ -73,7 +73,7 @@ def check_machine(mesh: Mesh, profile: Profile, direction: Floats) -> list[Verdi
             "machine",
             outcome,
             f"Posed to print the insert measures {width:.1f} x {depth:.1f} x {height:.1f} mm; the machine holds "
-            f"{x.value:.0f} x {y.value:.0f} x {z.value:.0f} mm.",
+            f"{x.value:.0f} x {y.value:.0f} x {z.value:.0f} mm: the least clearance along a side is {slack:.1f} mm.",
             value=slack,
             unit="mm",
             limit=0.0,

@@ -12,6 +12,7 @@ from morph.check.channel_wall import nearest_samples
 from morph.check.rows import name_list, place
 from morph.core.tolerance import EXIT_RIM_MM
 from morph.core.verdict import Outcome, Verdict
+from morph.core.words import counted
 from morph.solid.result import Insert, Opening
 
 
@@ -45,7 +46,7 @@ def check_openings(insert: Insert, plan: ChannelPlan, blank: Blank, lines: Centr
     found, stray = match_openings(insert.openings, plan.exits)
     missing = [exit_.port for exit_ in plan.exits if exit_.port not in found]
     right = not stray and not missing
-    text = f"{len(insert.openings)} openings found on the insert, {len(plan.exits)} declared"
+    text = f"{counted(len(insert.openings), 'opening')} found on the insert, {len(plan.exits)} declared"
     if missing:
         text += f"; none at {name_list(missing)}"
     if stray:

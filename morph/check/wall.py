@@ -197,15 +197,15 @@ def check_faces(subject: CheckSubject, lines: Centrelines, wall: ChannelWall | N
     rows, band = [], wall_band_mm(subject.profile)
     for face in subject.blank.faces:
         if face.role is FaceRole.PART:
-            found, code, kind = _part_finding(subject, face, lines, wall), "wall-face", "part"
+            found, code, kind = _part_finding(subject, face, lines, wall), "wall-face", "part face"
             hint = "Lay the channels deeper (depth_mm), or lower bore_scale or the bore there."
         else:
-            found, code, kind = _outer_finding(subject, face, lines, wall), "wall-outer", "outer"
+            found, code, kind = _outer_finding(subject, face, lines, wall), "wall-outer", "face"
             hint = f"Move the branch or lead away from {face.name}, or make the blank larger ([blank] margin_mm)."
         if found is None:
             continue
         finding, limit = found
-        rows.append(_wall_verdict(code, f"{kind} face {face.name}", finding, limit, band, lines, hint))
+        rows.append(_wall_verdict(code, f"{kind} '{face.name}'", finding, limit, band, lines, hint))
         if face.stock_mm > 0.0:
             rows.append(_stock_verdict(face, finding, limit, band, lines))
     return rows
@@ -217,7 +217,7 @@ def _stock_verdict(face: Face, finding: WallFinding, limit: Limit, band_mm: floa
     return Verdict(
         "wall-stock",
         outcome,
-        f"The wall from {branch} to {face.name} is {finding.wall_mm + face.stock_mm:.2f} mm as printed and "
+        f"The wall from {branch} to face '{face.name}' is {finding.wall_mm + face.stock_mm:.2f} mm as printed and "
         f"{finding.wall_mm:.2f} mm after {face.stock_mm:.2f} mm of stock is removed; it must hold {limit.words}.",
         value=finding.wall_mm,
         unit="mm",

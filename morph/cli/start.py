@@ -10,6 +10,7 @@ from pathlib import Path
 from typing import Any
 
 from morph.core.errors import InputError
+from morph.core.words import counted
 
 
 def add_to(commands: Any) -> None:
@@ -50,7 +51,7 @@ def run(arguments: argparse.Namespace) -> int:
         edits = [{"line": line, "why": why} for line, why in first.edits]
         print(json.dumps({"job": str(out), "ports": ports, "edit": edits}, indent=1, sort_keys=True))
         return 0
-    print(f"wrote {out} with {len(first.ports)} ports")
+    print(f"wrote {out} with {counted(len(first.ports), 'port')}")
     for line, why in first.edits:
         print(f"  line {line:>3}: {why}")
     print(f"next: morph build {out}")

@@ -163,13 +163,13 @@ def _no_parent(target: Path, missing: str) -> ExportError:
     )
 
 
-def _unwritable(target: Path, found: str) -> ExportError:
+def _unwritable(target: Path, found: str, *, denied: bool = False) -> ExportError:
     return ExportError(
         "output-unwritable",
         expected="a folder that can be written",
         found=found,
         where=str(target),
-        do="Change its permissions, or choose another folder with --out.",
+        do=("Change its permissions, or choose" if denied else "Choose") + " another folder with --out, on a disk.",
     )
 
 
@@ -182,7 +182,8 @@ def _refuse(error: OSError, target: Path) -> NoReturn:
             where=str(target),
             do="Free some space, or choose a folder on another disk with --out; nothing was left behind.",
         ) from error
-    raise _unwritable(target, error.strerror or type(error).__name__) from error
+    denied = error.errno in (errno.EACCES, errno.EPERM)
+    raise _unwritable(target, error.strerror or type(error).__name__, denied=denied) from error
 
 
 @contextmanager

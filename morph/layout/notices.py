@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from morph.core.verdict import Notice
+from morph.core.words import counted
 from morph.layout.graph import Bridge, Dropped, LevelCount
 
 Place = tuple[float, float]
@@ -16,7 +17,8 @@ def topology_differs(picture: tuple[int, int], graph: tuple[int, int]) -> Notice
     """Says that pieces or loops of the graph are not those of the picture, on any grid tried."""
     return Notice(
         "topology-differs",
-        f"The graph has {graph[0]} pieces and {graph[1]} loops, the image {picture[0]} pieces and {picture[1]} holes; "
+        f"The graph has {counted(graph[0], 'piece')} and {counted(graph[1], 'loop')}, the image "
+        f"{counted(picture[0], 'piece')} and {counted(picture[1], 'hole')}; "
         "look at the layout before building on it.",
     )
 
@@ -27,7 +29,7 @@ def level_decides(levels: tuple[LevelCount, ...], level: float) -> list[Notice]:
     others = [c for c in levels if (c.pieces, c.holes) != (here.pieces, here.holes)]
     if not others:
         return []
-    listed = "; ".join(f"{c.pieces} pieces and {c.holes} holes at {c.level:.2f}" for c in levels)
+    listed = "; ".join(f"{counted(c.pieces, 'piece')} and {counted(c.holes, 'hole')} at {c.level:.2f}" for c in levels)
     return [Notice("level-decides", f"The level decides what is connected: {listed}. Used: {level:.3f}.")]
 
 

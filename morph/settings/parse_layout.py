@@ -23,7 +23,7 @@ from morph.settings.job import (
 from morph.settings.parse_end import END_KEYS, parse_end
 from morph.settings.table import Choice, Table, show
 
-LARGEST_SHEET_MM = 2000.0
+SMALLEST_SHEET_MM, LARGEST_SHEET_MM = 1.0, 2000.0
 FARTHEST_MM = 10_000.0
 MOST_PORTS = 200
 LONGEST_NAME_BYTES = 255
@@ -57,6 +57,14 @@ def parse_layout(values: Any, file: str, folder: Path) -> LayoutSettings:
     """
     table = Table(values, file, "[layout]", _LAYOUT_KEYS)
     width_mm, height_mm = table.numbers("size_mm", 2, above=0.0, most=LARGEST_SHEET_MM)
+    if min(width_mm, height_mm) < SMALLEST_SHEET_MM:
+        table.refuse(
+            "setting-range",
+            "size_mm",
+            expected=f"width and height of at least {SMALLEST_SHEET_MM:g} mm; no channel fits on less",
+            found=f"[{width_mm:g}, {height_mm:g}] mm",
+            do="Is size_mm in metres? All lengths are mm.",
+        )
     level = _level(table)
     return LayoutSettings(
         image=folder / _image(table),
@@ -194,12 +202,14 @@ def _place(table: Table, size_mm: tuple[float, float]) -> tuple[float, float]:
     x_mm, y_mm = table.numbers("at_mm", 2)
     inside = all(-COINCIDE_MM <= at <= size + COINCIDE_MM for at, size in zip((x_mm, y_mm), size_mm, strict=True))
     if not inside:
+        turned = -COINCIDE_MM <= x_mm <= size_mm[1] + COINCIDE_MM and -COINCIDE_MM <= y_mm <= size_mm[0] + COINCIDE_MM
+        swapped = " With width and height swapped it would lie on the sheet: check size_mm." if turned else ""
         table.refuse(
             "port-outside",
             "at_mm",
             expected=f"a place on the sheet, x 0 to {size_mm[0]:g} mm and y 0 to {size_mm[1]:g} mm",
             found=f"[{x_mm:g}, {y_mm:g}] mm",
-            do="The sheet's origin is its lower left corner, x to the right, y up.",
+            do=f"The sheet's origin is its lower left corner, x to the right, y up.{swapped}",
         )
     return min(max(x_mm, 0.0), size_mm[0]), min(max(y_mm, 0.0), size_mm[1])
 

@@ -214,7 +214,7 @@ def test_wall_that_is_thin_after_stock_is_removed():
     assert [v.outcome for v in stock] == [Outcome.FAIL] and stock[0].value == pytest.approx(2.0, abs=FOUND_MM)
     assert "6.00 mm as printed" in stock[0].text and "2.00 mm after" in stock[0].text and "-y" in stock[0].text
     assert off_line(stock[0].xyz_mm, (0, 1, 15), (1, 0, 0)) < FOUND_MM
-    outer = {v.text.split("outer face ")[1].split()[0]: v for v in rows(subject, "wall-outer")}
+    outer = {v.text.split("face '")[1].split("'")[0]: v for v in rows(subject, "wall-outer")}
     assert outer["-y"].outcome is Outcome.FAIL and outer["-y"].value == pytest.approx(2.0, abs=FOUND_MM)
 
 
@@ -227,7 +227,7 @@ def test_stock_on_a_port_face_leaves_the_openings_right():
 def test_thin_outer_wall_away_from_the_exit():
     """A channel 4 mm above the foot that leaves through a side: 1.5 mm to the foot, its own exit on -x is no fault."""
     found = {
-        v.text.split("outer face ")[1].split()[0]: v
+        v.text.split("face '")[1].split("'")[0]: v
         for v in rows(subject_of(straight_pipe(5.0, z=4.0), box_blank()), "wall-outer")
     }
     assert found["-z"].outcome is Outcome.FAIL and found["-z"].value == pytest.approx(1.5, abs=FOUND_MM)
