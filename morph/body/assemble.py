@@ -16,11 +16,10 @@ from morph.body.lead_search import LEAST_BEND_BORES
 from morph.body.neighbour import (
     Network,
     Strand,
-    count_as_wall,
     make_network,
-    near_pairs,
     polyline_arc_mm,
     room_beside,
+    wall_pairs,
 )
 from morph.body.plan import BranchKind, ChannelPlan, Exit, PlanBranch, PlanNode
 from morph.body.room import Limits, Room, measure_room, way_out, with_neighbours
@@ -74,8 +73,7 @@ def assemble_plan(parts: Parts, blend_mm: float, notices: Sequence[Notice]) -> C
     strands = (*channels, *(lead_strand(lead, n_nodes + k) for k, lead in enumerate(parts.leads)))
     network = make_network(strands, n_nodes + len(parts.leads), parts.limits.section)
     wall = parts.limits.between_mm + parts.limits.band_mm
-    near = near_pairs(network, float(network.bore_mm.max()) + wall + 1.0)
-    pairs = near.only(count_as_wall(network, near, wall))
+    pairs = wall_pairs(network, wall)
     rooms = _rooms(parts, network, *room_beside(network, pairs, wall))
     nodes = _nodes(parts)
     branches = _branches(parts, strands, nodes, rooms, _through(parts, strands))
@@ -87,7 +85,7 @@ def assemble_plan(parts: Parts, blend_mm: float, notices: Sequence[Notice]) -> C
         exits=tuple(_exit(lead, parts.blank) for lead in parts.leads),
         circuits=tuple(tuple(ids[edge] for edge in piece) for piece in connected_pieces(len(nodes), ends)),
         caps=list_caps(branches),
-        merges=find_merges(network, pairs, parts.limits),
+        merges=find_merges(network, parts.limits),
         blend_mm=blend_mm,
         notices=(*notices, *_room_notices(parts, branches), *_lead_notices(parts.leads)),
     )

@@ -14,12 +14,13 @@ import numpy as np
 
 from morph.body.blank import Blank
 from morph.body.face import FaceRole
-from morph.body.island import Island, island_samples, measure_island, small_loops
-from morph.body.neighbour import WALL_WAY, Network, Pairs, count_as_wall, keep_apart_mm, near_pairs
+from morph.body.island import Island, island_samples, list_islands
+from morph.body.neighbour import Network, Pairs, close_pairs, count_as_wall, keep_apart_mm, ribs
 from morph.body.plan import Cap, Merge, PlanBranch
 from morph.body.room import Limits, Room, face_wall_mm, room_to_face_mm
 from morph.core.arrays import Floats
 from morph.core.errors import GeometryError
+from morph.core.tolerance import BUILD_MM
 from morph.core.verdict import Notice
 from morph.core.words import counted
 
@@ -56,8 +57,8 @@ def taper_network(network: Network, bore_mm: Floats) -> Floats:
     return result
 
 
-def fit_bores(network: Network, room: Room, limits: Limits) -> tuple[Network, Pairs]:
-    """Returns the network with bores that fit, and the pairs that count as walls with them.
+def fit_bores(network: Network, room: Room, limits: Limits) -> Network:
+    """Returns the network with bores that fit.
 
     Args:
         network: strands with the bores wanted.
@@ -67,40 +68,49 @@ def fit_bores(network: Network, room: Room, limits: Limits) -> tuple[Network, Pa
     wall = limits.between_mm + limits.band_mm
     bore = np.maximum(np.minimum(network.bore_mm, room.room_mm), limits.least_bore_mm)
     network = _keep_islands(network.with_bores(taper_network(network, bore)), limits)
-    near = near_pairs(network, float(network.bore_mm.max()) + wall + 1.0)
+    near = close_pairs(network, wall + 1.0)
     for _ in range(ROUNDS):
-        pairs = near.only(count_as_wall(network, near, wall))
-        lowered = _share_out(network, pairs, wall, limits.least_bore_mm)
+        lowered = _share_out(network, *_to_keep(network, near, limits), limits.least_bore_mm)
         if (network.bore_mm - lowered).max(initial=0.0) <= BORE_SLACK_MM:
             break
         network = network.with_bores(taper_network(network, lowered))
-    return network, near.only(count_as_wall(network, near, wall))
+    return network
 
 
-def thin_islands(network: Network, limits: Limits) -> list[Island]:
-    """Returns the islands of small loops that are thinner than the process prints, bands included."""
-    wall = limits.process_mm + limits.band_mm
-    longest = 2.0 * WALL_WAY * (float(network.bore_mm.max(initial=0.0)) + limits.between_mm + limits.band_mm)
-    islands = [measure_island(network, loop) for loop in small_loops(network, longest)]
-    return [island for island in islands if island.width_mm < wall - BORE_SLACK_MM]
+def _to_keep(network: Network, near: Pairs, limits: Limits) -> tuple[Pairs, Floats]:
+    """Returns the pairs of `near` that are walls or ribs, and the metal (p,) each must keep, bands included."""
+    wall = limits.between_mm + limits.band_mm
+    counted = count_as_wall(network, near, wall)
+    kept = counted | ribs(network, near, counted)
+    return near.only(kept), np.where(counted[kept], wall, limits.process_mm + limits.band_mm)
+
+
+def thin_islands(network: Network, wall_mm: float) -> list[Island]:
+    """Returns the islands of small loops whose widest place is thinner than a wall between channels.
+
+    Args:
+        network: strands with their bores.
+        wall_mm: the wall to keep, bands included.
+    """
+    return [island for island in list_islands(network, wall_mm) if island.width_mm < wall_mm - BORE_SLACK_MM]
 
 
 def _keep_islands(network: Network, limits: Limits) -> Network:
     """Returns the network with the bores around thin islands lowered by what the island lacks."""
+    wall = limits.between_mm + limits.band_mm
     for _ in range(ROUNDS):
         bore = network.bore_mm.copy()
-        for island in thin_islands(network, limits):
+        for island in thin_islands(network, wall):
             around = island_samples(network, island)
-            lack = limits.process_mm + limits.band_mm - island.width_mm
-            bore[around] = np.minimum(bore[around], np.maximum(network.bore_mm[around] - lack, limits.least_bore_mm))
-        bore = np.minimum(network.bore_mm, bore)
+            lowered = np.maximum(network.bore_mm[around] - (wall - island.width_mm), limits.least_bore_mm)
+            bore[around] = np.minimum(bore[around], lowered)
         if (network.bore_mm - bore).max(initial=0.0) <= BORE_SLACK_MM:
             break
         network = network.with_bores(taper_network(network, bore))
     return network
 
 
-def _share_out(network: Network, pairs: Pairs, wall_mm: float, least_mm: float) -> Floats:
+def _share_out(network: Network, pairs: Pairs, wall_mm: Floats, least_mm: float) -> Floats:
     """Returns the bores (n,) after every pair gives up what it lacks, in proportion to bore above the least."""
     excess = 2.0 * (keep_apart_mm(network, pairs, wall_mm) - pairs.distance_mm)
     short = excess > BORE_SLACK_MM
@@ -113,20 +123,22 @@ def _share_out(network: Network, pairs: Pairs, wall_mm: float, least_mm: float) 
     return np.maximum(bore, np.minimum(network.bore_mm, least_mm))
 
 
-def find_merges(network: Network, pairs: Pairs, limits: Limits) -> tuple[Merge, ...]:
-    """Returns each pair of branches still nearer than their wall, at its worst place, thinnest wall first.
+def find_merges(network: Network, limits: Limits) -> tuple[Merge, ...]:
+    """Returns each pair of branches nearer than their wall and its band, at its worst place, thinnest wall first.
 
-    A small loop whose island is too thin to print is named by two of the branches around it.
+    A rib that does not print counts too. A small loop whose island is thinner than a wall is named by two
+    of the branches around it.
 
     Args:
         network: strands with final bores.
-        pairs: the pairs that count as walls.
         limits: walls and bands.
     """
-    wall_mm = limits.between_mm + limits.band_mm
+    pairs, keep = _to_keep(network, close_pairs(network, limits.between_mm + limits.band_mm), limits)
     left = pairs.distance_mm - keep_apart_mm(network, pairs, 0.0)
+    # BUILD_MM is planned on top for the written mesh; a wall that holds without it holds.
+    lack = left < keep - BUILD_MM - 1e-6
     worst: dict[tuple[int, int], int] = {}
-    for p in map(int, np.flatnonzero(left < wall_mm - 1e-6)):
+    for p in map(int, np.flatnonzero(lack)):
         a, b = network.owner[pairs.i[p]], network.owner[pairs.j[p]]
         key = (int(min(a, b)), int(max(a, b)))
         if key not in worst or left[p] < left[worst[key]]:
@@ -136,7 +148,7 @@ def find_merges(network: Network, pairs: Pairs, limits: Limits) -> tuple[Merge, 
         x, y, z = (float(v) for v in 0.5 * (network.xyz_mm[pairs.i[p]] + network.xyz_mm[pairs.j[p]]))
         found.append(Merge((network.strands[one].id, network.strands[two].id), (x, y, z), float(left[p])))
     named = {frozenset(merge.branch_ids) for merge in found}
-    for island in thin_islands(network, limits):
+    for island in thin_islands(network, limits.between_mm + limits.band_mm - BUILD_MM - 1e-6):
         ids = (network.strands[island.strands[0]].id, network.strands[island.strands[-1]].id)
         if frozenset(ids) not in named:
             x, y, z = (float(value) for value in island.centre_mm)

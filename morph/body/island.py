@@ -1,9 +1,11 @@
-"""Small loops of channel and the metal island inside them, which must neither vanish nor be too thin to print.
+"""Small loops of channel and the metal island inside them, judged at its widest place like a wall.
 
 The rule that leaves junctions out of the walls (neighbour.py) also leaves out loops hardly longer
-than their own bores: two branches between the same junctions, or a small triangle. Their island is
-measured by itself: its width is twice the largest clearance to the channels found inside the loop,
-on a grid in the loop's mean plane. Loops come from the shortest way back around each branch.
+than their own bores: two branches between the same junctions, or a small triangle. Every corner of
+an island tapers to nothing, so it is judged at its widest place: twice the largest clearance to the
+channels around it, of all points inside the loop. They are looked for in the loop's mean plane, lifted
+to the channels' own curved sheet, on a grid refined as long as a cell may still hold a wider place.
+Loops come from the shortest way back around each branch.
 """
 
 from __future__ import annotations
@@ -13,11 +15,18 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from morph.body.neighbour import Network
-from morph.core.arrays import Bools, Floats, Ints
+from morph.body.neighbour import WEB_WAY, Network, widest_reach_mm
+from morph.body.section import reach_mm
+from morph.core.arrays import Bools, Floats, Ints, unit_rows
 
 GRID = 25
-"""Points across a loop: the width is found to about 1/25 of the loop's size, always from below."""
+"""Points across a loop to begin with."""
+
+FOUND_MM = 0.01
+"""The width is found to twice this, always from below."""
+
+MOST_CELLS = 400
+"""Of the cells that may hold a wider place the most promising are refined."""
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -77,24 +86,66 @@ def loop_points_mm(network: Network, loop: tuple[int, ...]) -> Floats:
     return np.concatenate(parts)
 
 
+def list_islands(network: Network, wall_mm: float) -> list[Island]:
+    """Returns the islands of all loops so small that the wall rule may take them for webs.
+
+    Args:
+        network: strands with their bores.
+        wall_mm: the wall to keep, bands included.
+    """
+    longest = 2.0 * WEB_WAY * (2.0 * widest_reach_mm(network) + wall_mm)
+    return [measure_island(network, loop) for loop in small_loops(network, longest)]
+
+
 def measure_island(network: Network, loop: tuple[int, ...]) -> Island:
     """Returns the island inside `loop`, measured against the bores of the strands around it."""
     outline = loop_points_mm(network, loop)
     middle = outline.mean(axis=0)
-    axes = np.linalg.svd(outline - middle, full_matrices=False)[2][:2]
+    axes = np.linalg.svd(outline - middle, full_matrices=False)[2]
     flat = (outline - middle) @ axes.T
-    low, high = flat.min(axis=0), flat.max(axis=0)
+    low, high = flat[:, :2].min(axis=0), flat[:, :2].max(axis=0)
     u, v = np.meshgrid(np.linspace(low[0], high[0], GRID), np.linspace(low[1], high[1], GRID))
     grid = np.column_stack([u.ravel(), v.ravel()])
     grid = np.concatenate([grid[_inside(flat, grid)], np.zeros((1, 2))])
-    places = middle + grid @ axes
+    half = 0.5 * (high - low) / (GRID - 1)
     around = np.concatenate([np.arange(network.first[k], network.first[k + 1]) for k in loop])
-    gap = (
-        np.linalg.norm(places[:, None, :] - network.xyz_mm[around][None, :, :], axis=2) - 0.5 * network.bore_mm[around]
-    )
-    clearance = gap.min(axis=1)
-    best = int(clearance.argmax())
-    return Island(loop, places[best], 2.0 * float(clearance[best]))
+    best, place = -np.inf, middle
+    while True:
+        places = middle + np.column_stack([grid, _lift(flat, grid)]) @ axes
+        clearance = _clearance_mm(network, around, places)
+        top = int(clearance.argmax())
+        if clearance[top] > best:
+            best, place = float(clearance[top]), places[top]
+        reach = float(np.linalg.norm(half))
+        wider = np.flatnonzero(clearance + reach > best)
+        if reach <= FOUND_MM or not len(wider):
+            return Island(loop, place, 2.0 * best)
+        wider = wider[np.argsort(-clearance[wider], kind="stable")[:MOST_CELLS]]
+        half = 0.5 * half
+        corners = np.array([(-1.0, -1.0), (-1.0, 1.0), (1.0, -1.0), (1.0, 1.0)]) * half
+        grid = (grid[wider][:, None, :] + corners).reshape(-1, 2)
+        grid = grid[_inside(flat, grid)]
+        if not len(grid):
+            return Island(loop, place, 2.0 * best)
+
+
+def _lift(flat: Floats, points: Floats) -> Floats:
+    """Returns the height (n,) of the loop's sheet over points (n, 2): that of the loop (k, 3), nearest samples first.
+
+    Shepard's inverse distance weighting (1968, Proceedings of the 23rd ACM National Conference) with exponent 3.
+    """
+    squared = ((points[:, None, :] - flat[None, :, :2]) ** 2).sum(axis=2)
+    weight = np.maximum(squared, 1e-12) ** -1.5
+    return np.asarray(weight @ flat[:, 2] / weight.sum(axis=1), dtype=np.float64)
+
+
+def _clearance_mm(network: Network, around: Ints, places: Floats) -> Floats:
+    """Returns the distance (n,) from places (n, 3) to the nearest channel wall of the samples `around (k,)`."""
+    offset = places[:, None, :] - network.xyz_mm[around][None, :, :]
+    distance = np.linalg.norm(offset, axis=2)
+    bore = np.broadcast_to(network.bore_mm[around], distance.shape)
+    reach = reach_mm(bore.ravel(), unit_rows(offset.reshape(-1, 3)), network.section).reshape(distance.shape)
+    return np.asarray((distance - reach).min(axis=1), dtype=np.float64)
 
 
 def _inside(outline: Floats, points: Floats) -> Bools:

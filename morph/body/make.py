@@ -77,7 +77,7 @@ def make_plan(
     wanted = replace(_channel_network(laid, index, allowed), section=limits.section)
     progress.step("bores", 0, 3)
     require_least_bore_fits(blank, wanted, limits)
-    fitted, _ = fit_bores(wanted, measure_room(blank, limits, wanted.xyz_mm), limits)
+    fitted = fit_bores(wanted, measure_room(blank, limits, wanted.xyz_mm), limits)
     progress.step("bores", 1, 3)
     ground = Ground(blank, wrapped.carrier, limits, with_bores(fitted), len(index), profile.bend_radius_bores.value)
     rule = make_section_rule(section, profile, build_direction)

@@ -1,10 +1,13 @@
-"""How far channels are from each other: exact distances between branches, junctions left out.
+"""How far channels are from each other, and the one rule for which pairs of places are a wall.
 
 Where two branches meet, the metal between them tapers to nothing; that is a web tip, not a wall. A
 pair of places counts as a wall when the way between them along the channels is long against the
 distance they must keep (3 times: straight branches that meet at more than 39 degrees never count).
 Branches that share a node and open slowly stay a web until they have once been far enough apart,
 at most 6 times (19 degrees). Distances are from each sample to the other branch's polyline.
+Beside a junction a run too short for a wall may still lie side by side (parting at less than 3 degrees):
+a rib, which must print. What thins the bores and what checks them afterwards ask this file with the same wall (limit,
+band and BUILD_MM), so the same pairs count in both. The metal inside small loops: island.py.
 """
 
 from __future__ import annotations
@@ -22,6 +25,12 @@ WALL_WAY = 3.0
 
 WEB_WAY = 6.0
 """Branches that share a node and have not yet parted stay one web up to this many times that distance."""
+
+RIB_CLOSES = 2.0 * np.sin(np.radians(1.5))
+"""Two runs that part at less than 3 degrees enclose a rib; wider, the crotch of a junction (own choice)."""
+
+TIE_RATIO = 1e-6
+"""Ways that differ by less than this of their length are equal."""
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -165,7 +174,58 @@ def way_between_mm(network: Network, i: Ints, j: Ints) -> Floats:
     return best
 
 
-def keep_apart_mm(network: Network, pairs: Pairs, wall_mm: float) -> Floats:
+def side_by_side(network: Network, pairs: Pairs) -> Bools:
+    """Returns which pairs (p,) run side by side: their gap hardly closes along the shortest way between them."""
+    way = measure_ways(network, pairs.i, pairs.j)
+    toward = unit_rows(network.xyz_mm[pairs.j] - network.xyz_mm[pairs.i])
+    closes = np.einsum("ij,ij->i", way.leave_first, toward) - np.einsum("ij,ij->i", way.leave_second, toward)
+    return np.asarray(closes <= RIB_CLOSES, dtype=np.bool_)
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Way:
+    """The shortest way through the channels between pairs of samples.
+
+    Args:
+        length_mm: (p,) its length, inf between circuits.
+        leave_first, leave_second: (p, 3) unit directions in which it leaves the first and the second sample.
+    """
+
+    length_mm: Floats
+    leave_first: Floats
+    leave_second: Floats
+
+
+def measure_ways(network: Network, first: Ints, second: Ints) -> Way:
+    """Returns the shortest way between samples `first (p,)` and `second (p,)` with its directions."""
+    start, end, length = _ends(network)
+    between, tangent = network.way_mm, tangents(network)
+    a, b = network.owner[first], network.owner[second]
+    back_a, back_b = network.arc_mm[first], network.arc_mm[second]
+    ahead_a, ahead_b = length[a] - back_a, length[b] - back_b
+    along = np.where(a == b, np.abs(back_a - back_b), np.inf)
+    own = np.stack([along, back_a + back_b, back_a + ahead_b, ahead_a + back_b, ahead_a + ahead_b])
+    nodes = [(start[a], start[b]), (start[a], end[b]), (end[a], start[b]), (end[a], end[b])]
+    options = own.copy()
+    options[1:] += np.stack([between[one, two] for one, two in nodes])
+    # From a node a way along the branch itself ties with one that leaves it at once: the former is meant.
+    best = np.argmin(options - TIE_RATIO * np.where(np.isfinite(own), own, 0.0), axis=0)
+    onward = np.where(back_b > back_a, 1.0, -1.0)
+    sign_a = np.choose(best, [onward, -1.0, -1.0, 1.0, 1.0])
+    sign_b = np.choose(best, [-onward, -1.0, 1.0, -1.0, 1.0])
+    length_mm = np.take_along_axis(options, best[None], axis=0)[0]
+    return Way(length_mm, tangent[first] * sign_a[:, None], tangent[second] * sign_b[:, None])
+
+
+def tangents(network: Network) -> Floats:
+    """Returns the unit tangents (n, 3) by central differences within each strand, one-sided at its ends."""
+    at = np.arange(len(network.owner))
+    before = np.maximum(at - 1, network.first[network.owner])
+    after = np.minimum(at + 1, network.first[network.owner + 1] - 1)
+    return unit_rows(network.xyz_mm[after] - network.xyz_mm[before])
+
+
+def keep_apart_mm(network: Network, pairs: Pairs, wall_mm: Floats | float) -> Floats:
     """Returns the distance (p,) the pairs must keep: what both reach towards each other plus `wall_mm` (with bands)."""
     toward = unit_rows(network.xyz_mm[pairs.j] - network.xyz_mm[pairs.i])
     one = reach_mm(network.bore_mm[pairs.i], toward, network.section)
@@ -194,6 +254,43 @@ def count_as_wall(network: Network, pairs: Pairs, wall_mm: float) -> Bools:
         for web in webs:
             counted[doubtful] &= ~(here[doubtful] & np.isin(mine[doubtful], web))
     return counted
+
+
+def wall_pairs(network: Network, wall_mm: float, within_mm: float = 1.0) -> Pairs:
+    """Returns the pairs that are walls, found up to `within_mm` beyond the wall to keep.
+
+    Args:
+        network: strands with their bores.
+        wall_mm: the wall to keep, its band and BUILD_MM included.
+        within_mm: walls up to this much thicker are listed too.
+    """
+    near = close_pairs(network, wall_mm + within_mm)
+    return near.only(count_as_wall(network, near, wall_mm))
+
+
+def ribs(network: Network, pairs: Pairs, counted: Bools) -> Bools:
+    """Returns which pairs (p,) lie across a rib: no wall, not run together, side by side.
+
+    Args:
+        network: strands with their bores.
+        pairs: pairs of samples.
+        counted: (p,) which of them are walls.
+    """
+    apart = pairs.distance_mm > keep_apart_mm(network, pairs, 0.0)
+    found = ~counted & apart
+    found[found] = side_by_side(network, pairs.only(found))
+    return found
+
+
+def close_pairs(network: Network, gap_mm: float) -> Pairs:
+    """Returns all pairs of samples with at most `gap_mm` of metal between them, walls or not (and some beyond)."""
+    return near_pairs(network, 2.0 * widest_reach_mm(network) + gap_mm)
+
+
+def widest_reach_mm(network: Network) -> float:
+    """Returns how far the widest channel reaches at most in any direction."""
+    widest = np.full(1, network.bore_mm.max(initial=0.0))
+    return float(reach_mm(widest, network.section.up[None, :], network.section)[0])
 
 
 def _web_samples(network: Network, strand: int, node: int, close: Ints) -> Ints:

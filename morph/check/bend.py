@@ -9,8 +9,9 @@ from __future__ import annotations
 
 import numpy as np
 
+from morph.body.neighbour import polyline_arc_mm
 from morph.body.plan import BranchKind, PlanBranch
-from morph.check.centreline import Centrelines, chord_lengths_mm
+from morph.check.centreline import Centrelines
 from morph.check.rows import name_list, place
 from morph.core.arrays import Floats
 from morph.core.verdict import COMMON_PRACTICE, Outcome, Verdict, judge
@@ -23,7 +24,7 @@ FOLDED_BORES = 0.5
 
 def bend_radii_bores(branch: PlanBranch) -> Floats:
     """Returns the centreline radius over the bore (k,) along `branch`, inf within half a bore of its ends."""
-    along = chord_lengths_mm(branch.xyz_mm)
+    along = polyline_arc_mm(branch.xyz_mm)
     reach = 0.5 * branch.bore_mm
     inside = (along - reach >= 0.0) & (along + reach <= along[-1])
     here = branch.xyz_mm

@@ -1,48 +1,45 @@
 """Walls between channels: every pair of places that lie near each other but far apart through the channels.
 
-Which pairs bound a wall is asked of body/neighbour.py, the same rule the bores were thinned by; the
-rest belongs to a junction, whose crotch tapers to nothing. There a pair may still run side by side
-across a thin rib: following the channels towards each other closes its gap by 2 sin(a / 2) per mm
-where they part at angle a, so below 3 degrees it is a rib and named as a watch. Centrelines find
-the pairs, the tightest are then measured on the written mesh, triangle against triangle, because
-roofs and fillets thin walls.
+Which pairs bound a wall is asked of body/neighbour.py with the very wall the bores were thinned by; the
+rest belongs to a junction, whose crotch tapers to nothing. A place is refined between samples only where
+all the samples around it count, so no figure slides from a wall into a crotch. Ribs (same rule) need only print.
+Islands inside small loops: island.py. Centrelines find the pairs; the tightest are then measured straight
+across on the written mesh, because roofs and fillets thin walls.
 """
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
 from morph.body.neighbour import (
-    Network,
     Pairs,
-    Strand,
+    close_pairs,
     count_as_wall,
     keep_apart_mm,
-    make_network,
-    near_pairs,
-    polyline_arc_mm,
+    ribs,
 )
 from morph.body.room import wall_band_mm
 from morph.body.section import reach_mm
-from morph.check.centreline import Centrelines, Place, measure_ways
-from morph.check.channel_wall import ChannelWall, sub_mesh
+from morph.check.across import measure_across
+from morph.check.centreline import Centrelines, Place, network_of
+from morph.check.channel_wall import ChannelWall
+from morph.check.island import IslandFinding, find_islands, island_row
 from morph.check.rows import MEASURE_MM, MOST_NAMED, Limit, judge_length, name_list, place, worse_limit
 from morph.check.subject import CheckSubject
 from morph.core.arrays import Bools, Floats, Ints, unit_rows
+from morph.core.tolerance import BUILD_MM
 from morph.core.verdict import Outcome, Verdict
-from morph.geometry.gap import Gap, measure_gap
-from morph.geometry.tree import closest_points, make_tree
-
-RIB_CLOSES = 2.0 * np.sin(np.radians(1.5))
-"""Two runs that part at less than 3 degrees enclose a rib; wider, the crotch of a junction (own choice)."""
 
 CONFIRMED = 6
 """This many of the tightest pairs of branches are measured on the written mesh."""
 
-PATCH_BORES = 0.4
-"""The mesh is searched this many bores around the points where the walls face each other."""
+PLACES = 8
+"""Each at this many places, spread over those within NEARLY_MM of its thinnest."""
+
+NEARLY_MM = 0.25
+"""Places this much thicker by the centrelines are measured on the mesh too."""
 
 SEARCH_RATIO = 2.0
 """Walls up to this many limits are looked for; wider ones are reported as wider."""
@@ -50,13 +47,14 @@ SEARCH_RATIO = 2.0
 
 @dataclass(frozen=True, slots=True)
 class BetweenFinding:
-    """The thinnest wall between two branches (or two runs of one).
+    """The thinnest wall between two branches (or two runs of one), or rib.
 
     Args:
         branch_ids: the two branches. samples: one on each.
         wall_mm: the smaller of both routes; centreline_mm, mesh_mm: each (inf where not measured).
         xyz_mm: the middle of the metal.
-        rib: not a wall by the rule, only the thin metal beside a junction.
+        rib: not a wall by the rule, only the metal of a short run beside a junction.
+        places: samples of the same pair that are nearly as near.
     """
 
     branch_ids: tuple[str, str]
@@ -66,100 +64,119 @@ class BetweenFinding:
     mesh_mm: float
     xyz_mm: Place
     rib: bool
+    places: tuple[tuple[int, int], ...] = ()
 
 
-def _network(lines: Centrelines) -> Network:
-    """Returns the centrelines as body/neighbour.py sees them; samples keep their numbers."""
-    number = {node.id: index for index, node in enumerate(lines.plan.nodes)}
-    strands = [
-        Strand(b.id, number[b.start], number[b.end], b.xyz_mm, polyline_arc_mm(b.xyz_mm), b.bore_mm)
-        for b in lines.plan.branches
-    ]
-    return make_network(strands, len(lines.plan.nodes), lines.plan.section)
+@dataclass(frozen=True, slots=True, eq=False)
+class _Across:
+    """Two places that face each other: points (3,) on the centrelines, how far each reaches, and the metal between."""
 
+    p: Floats
+    q: Floats
+    reach_p: float
+    reach_q: float
 
-def _ribs(lines: Centrelines, pairs: Pairs, gap_mm: Floats) -> Bools:
-    """Returns which pairs (k,) face each other across a rib: clear of the crotch, hardly closing along the way."""
-    way = measure_ways(lines, pairs.i, pairs.j)
-    offset = lines.xyz_mm[pairs.j] - lines.xyz_mm[pairs.i]
-    distance = np.linalg.norm(offset, axis=1)
-    toward = offset / np.where(distance > 0.0, distance, 1.0)[:, None]
-    closes = np.einsum("ij,ij->i", way.leave_first, toward) - np.einsum("ij,ij->i", way.leave_second, toward)
-    return np.asarray((closes <= RIB_CLOSES) & (gap_mm > 0.0), dtype=np.bool_)
+    @property
+    def wall_mm(self) -> float:
+        return float(np.linalg.norm(self.q - self.p)) - self.reach_p - self.reach_q
+
+    @property
+    def middle_mm(self) -> Floats:
+        toward = (self.q - self.p) / max(float(np.linalg.norm(self.q - self.p)), 1e-12)
+        return np.asarray(self.p + toward * (self.reach_p + 0.5 * self.wall_mm), dtype=np.float64)
 
 
 def find_walls(lines: Centrelines, limit_mm: float, band_mm: float) -> list[BetweenFinding]:
-    """Returns for every two branches near each other their thinnest wall (and rib) by centrelines, thinnest first.
+    """Returns for every two branches near each other their thinnest wall, and their rib.
 
     Args:
         lines: the centrelines.
         limit_mm: the wall to hold; walls up to SEARCH_RATIO limits are found.
         band_mm: its band.
     """
-    network = _network(lines)
-    pairs = near_pairs(network, float(lines.bore_mm.max()) + SEARCH_RATIO * limit_mm)
+    network = network_of(lines)
+    pairs = close_pairs(network, SEARCH_RATIO * limit_mm + band_mm)
     gap = pairs.distance_mm - keep_apart_mm(network, pairs, 0.0)
-    counted = count_as_wall(network, pairs, limit_mm + band_mm)
-    near = gap <= SEARCH_RATIO * limit_mm
+    counted = count_as_wall(network, pairs, limit_mm + band_mm + BUILD_MM)
+    known = np.sort(_key(lines, pairs.i[counted], pairs.j[counted]))
+    straight = _straight(lines, pairs, gap)
     found = []
-    for mask, is_rib in ((counted, False), (~counted & _ribs(lines, pairs, gap), True)):
-        index = np.flatnonzero(mask & near)
-        a, b = lines.branch[pairs.i[index]], lines.branch[pairs.j[index]]
-        order = np.lexsort((pairs.j[index], pairs.i[index], gap[index], np.maximum(a, b), np.minimum(a, b)))
-        seen: set[tuple[int, int]] = set()
-        for p in index[order]:
-            one, two = sorted((int(lines.branch[pairs.i[p]]), int(lines.branch[pairs.j[p]])))
-            if (one, two) not in seen:
-                seen.add((one, two))
-                found.append(_finding(lines, int(pairs.i[p]), int(pairs.j[p]), is_rib))
+    for one in _by_branches(lines, pairs, np.flatnonzero(counted & (gap <= SEARCH_RATIO * limit_mm))):
+        best = one[np.lexsort((pairs.j[one], pairs.i[one], gap[one]))][0]
+        close = one[straight[one] & (gap[one] <= gap[best] + NEARLY_MM)]
+        spread = (
+            close[np.unique(np.linspace(0, len(close) - 1, PLACES).round().astype(np.int64))] if len(close) else close
+        )
+        places = tuple((int(pairs.i[p]), int(pairs.j[p])) for p in spread)
+        item = _finding(lines, known, int(pairs.i[best]), int(pairs.j[best]), float(gap[best]))
+        found.append(replace(item, places=places))
+    side = np.flatnonzero(ribs(network, pairs, counted) & (gap <= SEARCH_RATIO * limit_mm))
+    for one in _by_branches(lines, pairs, side):
+        best = one[np.lexsort((pairs.j[one], pairs.i[one], gap[one]))][0]
+        item = _finding(lines, known[:0], int(pairs.i[best]), int(pairs.j[best]), float(gap[best]))
+        found.append(replace(item, rib=True))
     return sorted(found, key=lambda item: (item.rib, item.wall_mm, item.samples))
 
 
-def _finding(lines: Centrelines, a: int, b: int, rib: bool) -> BetweenFinding:
-    """Returns the finding at samples a, b, refined between the samples."""
-    distance, p, q, radius_p, radius_q = _segments_gap(lines, a, b, pieces=not rib)
-    wall = distance - radius_p - radius_q
-    toward = (q - p) / max(distance, 1e-12)
-    middle = p + toward * (radius_p + 0.5 * wall)
+def _straight(lines: Centrelines, pairs: Pairs, gap_mm: Floats) -> Bools:
+    """Returns which pairs (p,) are the nearest on the other branch for both samples: straight across, not slanted."""
+    keep = np.ones(len(gap_mm), dtype=np.bool_)
+    for sample, other in ((pairs.i, pairs.j), (pairs.j, pairs.i)):
+        _, group = np.unique(sample * len(lines.plan.branches) + lines.branch[other], return_inverse=True)
+        least = np.full(int(group.max(initial=-1)) + 1, np.inf)
+        np.minimum.at(least, group, gap_mm)
+        keep &= gap_mm <= least[group]
+    return keep
+
+
+def _key(lines: Centrelines, one: Ints, two: Ints) -> Ints:
+    """Returns one number (k,) for each pair of samples, in either order."""
+    return np.asarray(np.minimum(one, two) * len(lines.branch) + np.maximum(one, two), dtype=np.int64)
+
+
+def _by_branches(lines: Centrelines, pairs: Pairs, index: Ints) -> list[Ints]:
+    """Returns the pairs `index (k,)` in groups of the same two branches, branches in order, pairs in their own."""
+    a, b = lines.branch[pairs.i[index]], lines.branch[pairs.j[index]]
+    group = np.minimum(a, b) * len(lines.plan.branches) + np.maximum(a, b)
+    order = np.argsort(group, kind="stable")
+    starts = np.flatnonzero(np.diff(group[order], prepend=-1))
+    return [np.asarray(part, dtype=np.int64) for part in np.split(index[order], starts[1:])] if len(index) else []
+
+
+def _finding(lines: Centrelines, known: Ints, a: int, b: int, gap_mm: float) -> BetweenFinding:
+    """Returns the finding at samples a, b, refined between the samples where all around are in `known`."""
+    across = _refined(lines, known, a, b)
+    wall = min(across.wall_mm, gap_mm)
     ids = (lines.branch_of(a).id, lines.branch_of(b).id)
-    return BetweenFinding(ids, (a, b), wall, wall, np.inf, place(middle), rib)
+    return BetweenFinding(ids, (a, b), wall, wall, np.inf, place(across.middle_mm), False)
 
 
-def _segments_gap(
-    lines: Centrelines, a: int, b: int, *, pieces: bool = True
-) -> tuple[float, Floats, Floats, float, float]:
-    """Returns the smallest distance between the pieces of centreline next to samples a and b, the points and radii.
+def _refined(lines: Centrelines, known: Ints, a: int, b: int) -> _Across:
+    """Returns the two nearest places on the pieces of centreline next to samples a and b.
 
-    Without `pieces` the samples themselves are taken.
+    Of two pieces only those count whose four pairs of samples are all in `known`, sorted keys; else the samples.
     """
-    best: tuple[float, Floats, Floats, float, float] | None = None
-    for i in _pieces(lines, a) if pieces else ():
+    best = _at(lines, (a, a, 0.0), (b, b, 0.0))
+    for i in _pieces(lines, a):
         for k in _pieces(lines, b):
-            s, t = _closest_on_segments(*lines.xyz_mm[[i, i + 1, k, k + 1]])
-            p = (1.0 - s) * lines.xyz_mm[i] + s * lines.xyz_mm[i + 1]
-            q = (1.0 - t) * lines.xyz_mm[k] + t * lines.xyz_mm[k + 1]
-            bores = np.array(
-                [
-                    (1.0 - s) * lines.bore_mm[i] + s * lines.bore_mm[i + 1],
-                    (1.0 - t) * lines.bore_mm[k] + t * lines.bore_mm[k + 1],
-                ]
-            )
-            radius_p, radius_q = _reaches(lines, bores, q - p)
-            found = (float(np.linalg.norm(p - q)), p, q, radius_p, radius_q)
-            if best is None or found[0] - radius_p - radius_q < best[0] - best[3] - best[4]:
-                best = found
-    if best is None:
-        gap = float(np.linalg.norm(lines.xyz_mm[a] - lines.xyz_mm[b]))
-        radii = _reaches(lines, lines.bore_mm[[a, b]], lines.xyz_mm[b] - lines.xyz_mm[a])
-        best = (gap, lines.xyz_mm[a], lines.xyz_mm[b], *radii)
+            keys = _key(lines, np.array([i, i, i + 1, i + 1]), np.array([k, k + 1, k, k + 1]))
+            at = np.searchsorted(known, keys)
+            if (at < len(known)).all() and (known[at] == keys).all():
+                s, t = _closest_on_segments(*lines.xyz_mm[[i, i + 1, k, k + 1]])
+                found = _at(lines, (i, i + 1, s), (k, k + 1, t))
+                best = min(best, found, key=lambda across: across.wall_mm)
     return best
 
 
-def _reaches(lines: Centrelines, bores_mm: Floats, toward: Floats) -> tuple[float, float]:
-    """Returns how far channels of two bores (2,) reach towards each other along `toward (3,)` and back."""
-    way = unit_rows(np.array([toward, -toward]))
-    one, two = reach_mm(bores_mm, way, lines.plan.section)
-    return float(one), float(two)
+def _at(lines: Centrelines, one: tuple[int, int, float], two: tuple[int, int, float]) -> _Across:
+    """Returns the places a share of the way from one sample to the next, on either branch."""
+    places, bores = [], []
+    for first, second, share in (one, two):
+        places.append((1.0 - share) * lines.xyz_mm[first] + share * lines.xyz_mm[second])
+        bores.append((1.0 - share) * lines.bore_mm[first] + share * lines.bore_mm[second])
+    toward = unit_rows(np.array([places[1] - places[0], places[0] - places[1]]))
+    reach_p, reach_q = reach_mm(np.array(bores), toward, lines.plan.section)
+    return _Across(places[0], places[1], float(reach_p), float(reach_q))
 
 
 def _pieces(lines: Centrelines, sample: int) -> list[int]:
@@ -179,89 +196,78 @@ def _closest_on_segments(a: Floats, b: Floats, c: Floats, d: Floats) -> tuple[fl
     return s, t
 
 
-def _patch(wall: ChannelWall, middle: Floats, toward: Floats, centre: Floats, reach_mm: float) -> Ints:
-    """Returns the wall triangles within `reach_mm` of `centre (3,)` that lie beyond the plane through `middle (3,)`.
-
-    The plane lies across `toward (3,)`; triangles that reach through it are left out: there the channels are not apart.
-    """
-    offset = wall.mesh.vertices_mm - centre
-    near = np.einsum("ij,ij->i", offset, offset) <= reach_mm**2
-    index = np.flatnonzero(near[wall.mesh.triangles].any(axis=1))
-    side = (wall.mesh.vertices_mm[wall.mesh.triangles[index]] - middle) @ toward
-    return np.asarray(index[(side > 0.0).all(axis=1)], dtype=np.int64)
-
-
-def _gap_on_mesh(finding: BetweenFinding, lines: Centrelines, wall: ChannelWall) -> Gap | None:
-    """Returns the smallest gap on the mesh around the finding, or the metal between the balls where it slides off.
-
-    Beside a crotch the smallest gap of two patches lies on their rim towards the junction, wherever the rim is
-    drawn: that is the crotch's taper and no wall, so the metal between the channels' largest balls is taken.
-    """
-    _, p, q, radius_p, radius_q = _segments_gap(lines, *finding.samples)
-    toward = (q - p) / max(float(np.linalg.norm(q - p)), 1e-12)
-    middle = np.array(finding.xyz_mm)
-    from_p, from_q = p + radius_p * toward, q - radius_q * toward
-    reach_p, reach_q = PATCH_BORES * 2.0 * radius_p, PATCH_BORES * 2.0 * radius_q
-    one = _patch(wall, middle, -toward, from_p, reach_p)
-    two = _patch(wall, middle, toward, from_q, reach_q)
-    if len(one) and len(two):
-        gap = measure_gap(sub_mesh(wall.mesh, one), make_tree(sub_mesh(wall.mesh, two)))
-        inner = gap is not None and (
-            float(np.linalg.norm(np.subtract(gap.from_mm, from_p))) <= 0.8 * reach_p
-            and float(np.linalg.norm(np.subtract(gap.to_mm, from_q))) <= 0.8 * reach_q
-        )
-        if inner:
-            return gap
-    # Each side as far as its own largest ball in the written channel reaches, never less than planned.
-    ball, _, _ = closest_points(wall.tree, np.array([p, q]))
-    start, end = p + max(float(ball[0]), radius_p) * toward, q - max(float(ball[1]), radius_q) * toward
-    return Gap(float((end - start) @ toward), place(start), place(end))
-
-
 def confirm(finding: BetweenFinding, lines: Centrelines, wall: ChannelWall) -> BetweenFinding:
-    """Returns `finding` measured on the written mesh too; the smaller wall and its place are kept."""
+    """Returns `finding` measured straight across on the written mesh too; the smaller wall and its place are kept."""
     if finding.centreline_mm <= 0.0:
         return finding
-    gap = _gap_on_mesh(finding, lines, wall)
-    if gap is None:
+    gaps = []
+    for a, b in finding.places:
+        # Straight across: from a sample to the nearest place on the other branch.
+        there = min((_at(lines, (a, a, 0.0), foot) for foot in _feet(lines, a, b)), key=lambda across: across.wall_mm)
+        tangents = lines.tangent[[a, b]]
+        gap = measure_across(wall, np.array([there.p, there.q]), tangents, there.middle_mm)
+        if gap is not None:
+            gaps.append(gap)
+    if not gaps:
         return finding
+    gap = min(gaps, key=lambda one: one.distance_mm)
     # Where both routes agree the centreline knows the place, the mesh only a facet near it.
     tighter = gap.distance_mm < finding.centreline_mm - MEASURE_MM
-    return BetweenFinding(
-        finding.branch_ids,
-        finding.samples,
-        min(gap.distance_mm, finding.centreline_mm),
-        finding.centreline_mm,
-        gap.distance_mm,
-        gap.middle_mm if tighter else finding.xyz_mm,
-        finding.rib,
+    return replace(
+        finding,
+        wall_mm=min(gap.distance_mm, finding.centreline_mm),
+        mesh_mm=gap.distance_mm,
+        xyz_mm=gap.middle_mm if tighter else finding.xyz_mm,
     )
 
 
+def _feet(lines: Centrelines, a: int, b: int) -> list[tuple[int, int, float]]:
+    """Returns the places nearest to sample a on the pieces of centreline next to sample b."""
+    feet = [(b, b, 0.0)]
+    for k in _pieces(lines, b):
+        along = lines.xyz_mm[k + 1] - lines.xyz_mm[k]
+        share = float((lines.xyz_mm[a] - lines.xyz_mm[k]) @ along) / max(float(along @ along), 1e-12)
+        feet.append((k, k + 1, min(max(share, 0.0), 1.0)))
+    return feet
+
+
 def check_between(subject: CheckSubject, lines: Centrelines, wall: ChannelWall | None) -> list[Verdict]:
-    """Returns `branches-merge` and `wall-between` rows (each thin pair, else the thinnest) and a `thin-rib` row."""
+    """Returns `branches-merge`, `wall-between`, `island` and `thin-rib` rows: one per thin pair, else the thinnest."""
     profile, service = subject.profile, subject.service
     limit = worse_limit(service.wall_between_mm, "wall_between_mm", profile.wall_mm.value, profile.wall_mm.source)
     band = wall_band_mm(profile)
     found = find_walls(lines, limit.value, band)
     walls = [item for item in found if not item.rib]
     if wall is not None:
-        confirmed = [confirm(item, lines, wall) for item in walls[:CONFIRMED]]
-        walls = confirmed + walls[CONFIRMED:]
+        walls = [confirm(item, lines, wall) for item in walls[:CONFIRMED]] + walls[CONFIRMED:]
     walls = _without_repeats(walls, lines)
-    rows = _merge_rows(subject, walls, lines)
+    islands = find_islands(network_of(lines), lines, limit.value, band)
+    measured = [(item.branch_ids, item.wall_mm) for item in walls] + [(one.branch_ids, one.width_mm) for one in islands]
+    thin_ids = [set(ids) for ids, mm in measured if judge_length(mm, limit.value, band) is Outcome.FAIL]
+    thin_ids += [set(item.branch_ids) for item in found if item.rib]
+    rows = _merge_rows(subject, walls, thin_ids, lines)
     walls = [item for item in walls if item.wall_mm > 0.0]
     thin = [item for item in walls if judge_length(item.wall_mm, limit.value, band) is Outcome.FAIL]
-    for item in (thin or walls[:1])[:MOST_NAMED]:
-        rows.append(_between_row(item, len(thin), limit, band, lines))
-    if not walls and not rows:
-        rows.append(_wide_row(limit, band))
-    named = {frozenset(row.branch_ids) for row in rows if row.outcome is Outcome.FAIL}
-    ribs = [item for item in found if item.rib and item.wall_mm < limit.value]
-    ribs = [item for item in ribs if frozenset(item.branch_ids) not in named]
-    if ribs:
-        rows.append(_rib_row(ribs, limit, band, lines))
-    return rows
+    rows += [_between_row(item, len(thin), limit, band, lines) for item in (thin or walls[:1])[:MOST_NAMED]]
+    rows += _island_rows(islands, _failed(rows), limit, band)
+    side = [item for item in found if item.rib and item.wall_mm < limit.value + band]
+    side = [item for item in side if not any(set(item.branch_ids) <= ids for ids in _failed(rows))]
+    if side:
+        rows.append(_rib_row(side, limit, subject, lines))
+    return rows if rows else [_wide_row(limit, band)]
+
+
+def _failed(rows: list[Verdict]) -> list[set[str]]:
+    """Returns the branches of each row that fails."""
+    return [set(row.branch_ids) for row in rows if row.outcome is Outcome.FAIL]
+
+
+def _island_rows(islands: list[IslandFinding], named: list[set[str]], limit: Limit, band_mm: float) -> list[Verdict]:
+    """Returns a row per thin island whose branches are not `named` yet, else one for the thinnest that is near."""
+    thin = [item for item in islands if judge_length(item.width_mm, limit.value, band_mm) is Outcome.FAIL]
+    new = [item for item in thin if not any(ids <= set(item.branch_ids) for ids in named)]
+    near = [item for item in islands[:1] if not thin and item.width_mm < SEARCH_RATIO * limit.value]
+    return [island_row(item, len(new), limit, band_mm) for item in (new or near)[:MOST_NAMED]]
 
 
 def _without_repeats(walls: list[BetweenFinding], lines: Centrelines) -> list[BetweenFinding]:
@@ -288,39 +294,41 @@ def _without_repeats(walls: list[BetweenFinding], lines: Centrelines) -> list[Be
     return kept
 
 
-def _merge_rows(subject: CheckSubject, walls: list[BetweenFinding], lines: Centrelines) -> list[Verdict]:
-    """Returns one failing row per pair that runs together: no metal left, or by the plan too little to print.
+def _merge_rows(
+    subject: CheckSubject, walls: list[BetweenFinding], measured: list[set[str]], lines: Centrelines
+) -> list[Verdict]:
+    """Returns one failing row per pair without metal between, or that the plan alone found too near.
 
-    Pairs of the plan that print, only miss the service wall and are among `walls` are left to `wall-between`.
+    Pairs of the plan among the branches of a thin wall, island or rib (`measured`) are judged there.
     """
-    process_mm, band_mm = subject.profile.wall_mm.value, wall_band_mm(subject.profile)
     found = [
         (item.branch_ids, item.wall_mm, item.xyz_mm, lines.sheet_of(item.samples[0]))
         for item in walls
         if item.wall_mm <= 0.0
     ]
-    seen = {frozenset(item[0]) for item in found}
-    measured = {frozenset(item.branch_ids) for item in walls}
     for merge in subject.plan.merges:
-        pair = frozenset(merge.branch_ids)
-        prints = judge_length(merge.wall_mm, process_mm, band_mm) is not Outcome.FAIL
-        if pair not in seen and not (prints and pair in measured):
+        if not any(set(merge.branch_ids) <= ids for ids in measured):
             sheet = lines.sheet_of(int(np.argmin(((lines.xyz_mm - merge.xyz_mm) ** 2).sum(axis=1))))
             found.append((merge.branch_ids, merge.wall_mm, merge.xyz_mm, sheet))
-    return [_merge_row(*item) for item in sorted(found, key=lambda item: (item[1], item[0]))]
+    return [_merge_row(subject, *item) for item in sorted(found, key=lambda item: (item[1], item[0]))]
 
 
-def _merge_row(ids: tuple[str, str], wall_mm: float, xyz_mm: Place, sheet_mm: tuple[float, float] | None) -> Verdict:
+def _merge_row(
+    subject: CheckSubject, ids: tuple[str, str], wall_mm: float, xyz_mm: Place, sheet_mm: tuple[float, float] | None
+) -> Verdict:
+    process, band_mm = subject.profile.wall_mm, wall_band_mm(subject.profile)
     how = f"overlap by {-wall_mm:.2f} mm" if wall_mm <= 0.0 else f"keep only {wall_mm:.2f} mm of metal"
     pair = f"{ids[0]} and {ids[1]}" if ids[0] != ids[1] else f"Two runs of {ids[0]}"
     return Verdict(
         "branches-merge",
         Outcome.FAIL,
-        f"{pair} {how} although the layout keeps them apart; the bores could not be lowered further.",
+        f"{pair} {how} although the layout keeps them apart; the bores could not be lowered further. "
+        f"A wall prints from {process.value:.2f} mm on, after a band of {band_mm:.2f} mm.",
         value=wall_mm,
         unit="mm",
-        limit=0.0,
-        source="the layout: what it keeps apart must stay apart",
+        limit=process.value,
+        band=band_mm,
+        source=f"process profile wall_mm: {process.source}",
         branch_ids=ids if ids[0] != ids[1] else ids[:1],
         sheet_mm=sheet_mm,
         xyz_mm=xyz_mm,
@@ -332,7 +340,11 @@ def _between_row(item: BetweenFinding, n_thin: int, limit: Limit, band_mm: float
     outcome = judge_length(item.wall_mm, limit.value, band_mm)
     a, b = item.branch_ids
     pair = f"between two runs of {a}" if a == b else f"between {a} and {b}"
-    mesh = f"written mesh {item.mesh_mm:.2f} mm" if np.isfinite(item.mesh_mm) else "not measured on the mesh"
+    mesh = (
+        f"straight across on the written mesh {item.mesh_mm:.2f} mm"
+        if np.isfinite(item.mesh_mm)
+        else "not measured on the mesh"
+    )
     others = f" {n_thin} pairs of branches are too near each other." if n_thin > 1 else ""
     return Verdict(
         "wall-between",
@@ -364,21 +376,24 @@ def _wide_row(limit: Limit, band_mm: float) -> Verdict:
     )
 
 
-def _rib_row(ribs: list[BetweenFinding], limit: Limit, band_mm: float, lines: Centrelines) -> Verdict:
-    worst = ribs[0]
-    pairs = name_list([f"{a} and {b}" if a != b else a for a, b in (item.branch_ids for item in ribs)])
+def _rib_row(side: list[BetweenFinding], limit: Limit, subject: CheckSubject, lines: Centrelines) -> Verdict:
+    """Returns the row of the ribs, thinnest first: fail when one does not print, watch below the service wall."""
+    worst, process, band_mm = side[0], subject.profile.wall_mm, wall_band_mm(subject.profile)
+    prints = judge_length(worst.wall_mm, process.value, band_mm) is not Outcome.FAIL
+    pairs = name_list([f"{a} and {b}" if a != b else a for a, b in (item.branch_ids for item in side)])
     return Verdict(
         "thin-rib",
-        Outcome.WATCH,
-        f"Beside a junction the metal between {pairs} runs down to {worst.wall_mm:.2f} mm: a rib with coolant on both "
-        f"sides, below the {limit.value:.2f} mm a wall must hold.",
+        Outcome.WATCH if prints else Outcome.FAIL,
+        f"Beside a junction the metal between {pairs} runs down to {worst.wall_mm:.2f} mm: a rib with the same coolant "
+        f"on both sides, too short for a wall. It prints from {process.value:.2f} mm on; a wall must hold "
+        f"{limit.value:.2f} mm; both after a band of {band_mm:.2f} mm.",
         value=worst.wall_mm,
         unit="mm",
-        limit=limit.value,
+        limit=limit.value if prints else process.value,
         band=band_mm,
-        source=limit.source,
-        branch_ids=tuple(dict.fromkeys(name for item in ribs for name in item.branch_ids)),
+        source=limit.source if prints else f"process profile wall_mm: {process.source}",
+        branch_ids=tuple(dict.fromkeys(name for item in side for name in item.branch_ids)),
         sheet_mm=lines.sheet_of(worst.samples[0]) or lines.sheet_of(worst.samples[1]),
         xyz_mm=worst.xyz_mm,
-        hint="Let the branches part at a wider angle, or accept the rib.",
+        hint="Let the branches part at a wider angle, or accept the rib." if prints else "Lower the bores there.",
     )

@@ -94,8 +94,10 @@ def check_condition(insert: Insert, solid: ChannelSolid, plan: ChannelPlan) -> l
             split,
         ),
     ]
-    if plan.merges or not (whole.closed and channels.closed):
-        why = "branches run together" if plan.merges else "a mesh is not closed"
+    # A fillet may bridge less metal than its radius.
+    merged = any(merge.wall_mm <= plan.blend_mm for merge in plan.merges)
+    if merged or not (whole.closed and channels.closed):
+        why = "branches run together" if merged else "a mesh is not closed"
         rows.append(Verdict("genus", Outcome.NOT_CHECKED, f"The genus says nothing while {why}.", source=COUNTED))
         return rows
     circuits = circuit_loops(plan)

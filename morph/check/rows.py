@@ -11,8 +11,9 @@ from morph.core.arrays import Floats
 from morph.core.verdict import COMMON_PRACTICE, Outcome, judge
 
 MEASURE_MM = 0.02
-"""A figure that misses its limit by no more than this is a watch, not a fail: the written surface lies
-within 0.011 mm of the field on 99.9 % of its points, facets and simplifying included (own measurement)."""
+"""Two routes that differ by no more than this agree: the written surface lies within 0.011 mm of the field on
+99.9 % of its points, facets and simplifying included (own measurement). No limit is softened by it; the plan
+pays for it with BUILD_MM."""
 
 MOST_NAMED = 8
 """A check names at most this many places one by one; the rest are counted."""
@@ -36,12 +37,8 @@ def worse_limit(service_mm: float, service_words: str, process_mm: float, proces
 
 
 def judge_length(value_mm: float, limit_mm: float, band_mm: float, limit_is: str = "least") -> Outcome:
-    """Returns the outcome of a measured length after its band; within MEASURE_MM of the limit it is a watch."""
-    outcome = judge(value_mm, limit_mm, band_mm, limit_is)
-    slack = MEASURE_MM if limit_is == "least" else -MEASURE_MM
-    if outcome is Outcome.FAIL and judge(value_mm + slack, limit_mm, band_mm, limit_is) is not Outcome.FAIL:
-        return Outcome.WATCH
-    return outcome
+    """Returns the outcome of a measured length after its band."""
+    return judge(value_mm, limit_mm, band_mm, limit_is)
 
 
 def place(xyz_mm: Floats) -> Place:

@@ -6,6 +6,7 @@ so that the same row serves the report, the CSV and the summary.
 
 from __future__ import annotations
 
+import math
 from collections.abc import Iterable
 from dataclasses import dataclass
 from enum import StrEnum
@@ -97,6 +98,8 @@ def judge(value: float, limit: float, band: float, limit_is: str, watch_ratio: f
         watch_ratio: the figure after its band must clear the limit by this factor to pass;
             between 1 and this factor it is a watch. "equal" knows no watch.
     """
+    if math.isnan(value):
+        return Outcome.FAIL  # a figure that could not be formed holds no limit
     if limit_is == "equal":
         return Outcome.PASS if abs(value - limit) <= band else Outcome.FAIL
     if limit_is == "least":

@@ -82,8 +82,8 @@ class WrappedGraph:
 def bore_range_mm(section: SectionSettings, service: ServiceSettings, profile: Profile) -> tuple[float, float]:
     """Returns the least and greatest bore allowed: the job's own, or what service and process leave.
 
-    The process leaves its bore band (and what meshing may take) above the smallest bore, so that a bore built at
-    the least one still passes after its band.
+    The process leaves its bore band (and what meshing may take on both sides) above the smallest bore, so that a
+    bore built at the least one still passes after its band.
 
     Raises:
         SettingError: `bore-range-empty` when the least is below LEAST_BORE_MM or exceeds the greatest.
@@ -91,7 +91,8 @@ def bore_range_mm(section: SectionSettings, service: ServiceSettings, profile: P
     if section.bore_range_mm is not None:
         low, high, where = *section.bore_range_mm, "[section] bore_range_mm"
     else:
-        low = max(service.smallest_bore_mm, profile.smallest_bore_mm.value) + profile.bore_band_mm.value + BUILD_MM
+        smallest = max(service.smallest_bore_mm, profile.smallest_bore_mm.value)
+        low = smallest + profile.bore_band_mm.value + 2.0 * BUILD_MM
         high = profile.largest_bore_mm.value
         where = f"[service] smallest_bore_mm and the process profile {profile.name}"
     if not LEAST_BORE_MM <= low <= high < np.inf:

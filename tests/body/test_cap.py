@@ -150,7 +150,7 @@ def test_thinning_leaves_the_wall_or_names_the_pair():
 
 
 def test_a_small_loop_keeps_its_island():
-    """Two branches between the same nodes, 6.4 mm apart at most: their island is kept at what the process prints."""
+    """Two branches between the same nodes, 6.4 mm apart at most: their island keeps the wall at its widest place."""
     places = {"N1": (30, 0, "in"), "A": (30, 14), "Z": (30, 24), "N2": (30, 40, "out")}
     arms = [[(30 + s * 2.2, 16), (30 + s * 3.2, 19), (30 + s * 2.2, 22)] for s in (-1, 1)]
     links = [("N1", "A", 4.0), ("A", "Z", 5.5, arms[0]), ("A", "Z", 5.5, arms[1]), ("Z", "N2", 4.0)]
@@ -159,7 +159,7 @@ def test_a_small_loop_keeps_its_island():
     k, m = (int(np.abs(arm.sheet_mm[:, 1] - 19).argmin()) for arm in (left, right))
     width = np.linalg.norm(left.xyz_mm[k] - right.xyz_mm[m]) - left.bore_mm[k] / 2 - right.bore_mm[m] / 2
     # The straight distance between the arms; around the carrier it is 0.04 mm more.
-    assert width == pytest.approx(1.0 + BAND, abs=0.05)
+    assert width == pytest.approx(3.0 + BAND, abs=0.05)
     assert left.capped.any() and left.bore_mm.max() < 5.5
 
 

@@ -261,10 +261,21 @@ def test_leads_are_straight_and_of_pilot_bore_over_the_drill(built):
         assert aside[within].max() < 1e-6 and within.sum() >= 3
         if exit_.finish.pilot_mm:
             assert branch.bore_mm[within].max() <= exit_.finish.pilot_mm + 1e-9
-            assert exit_.bore_mm == pytest.approx(exit_.finish.pilot_mm, rel=0.051)
+            # a pilot wider than its channel may be printed narrower where its walls ask for that
+            assert branch.bore_mm[within].min() >= min(exit_.finish.pilot_mm, branch.bore_mm[0]) * 0.95 - 1e-9
         assert (np.abs(np.diff(branch.bore_mm)) <= 0.5 * np.diff(arc) + 1e-9).all()
         if exit_.port in {"in", "out"}:
             assert measure.sharpest_bend_bores(branch) >= 1.5
+
+
+def test_a_pilot_is_printed_narrower_rather_than_too_near_a_part_face():
+    """G1/4, 20 mm off the axis of a core of radius 34: room for (14 - 0.23) / 1.5 = 9.18 mm of bore, pilot 11.2 mm."""
+    exits = {"in": {"end": ThreadEnd("G1/4", thread_depth_mm=12.0), "exit_mm": (20.0, 0.0, -65.0)}}
+    plan = Scene(straight_line(), shape=DEEP, exits=exits).plan()
+    assert plan.exits[0].finish.pilot_mm == pytest.approx(11.2)
+    assert plan.exits[0].bore_mm == pytest.approx((14.0 - BAND_MM) / 1.5, abs=1e-6)
+    lead = next(branch for branch in plan.branches if branch.id == "L-in")
+    assert (lead.bore_mm <= lead.room_mm + 1e-6).all()
 
 
 def refused(code, exits, graph=None, **more):
@@ -292,7 +303,7 @@ def test_an_unknown_thread_and_a_small_land():
 def test_a_thread_too_small_for_a_pilot():
     """M5: 4.2 - 2 x 0.8 = 2.6 mm, below the smallest bore of 3 mm with its band."""
     error = refused("thread-too-small", {"in": {"end": ThreadEnd("M5", drill_stock_mm=0.8)}})
-    assert "2.600 mm" in error.found and "3.230 mm" in error.expected
+    assert "2.600 mm" in error.found and "3.260 mm" in error.expected
 
 
 def test_only_round_faces():

@@ -338,10 +338,11 @@ def test_capped_share():
 
 
 def test_lengths_near_their_limit_are_watched():
-    assert judge_length(3.0, 3.0, 0.0) is Outcome.WATCH and judge_length(2.985, 3.0, 0.0) is Outcome.WATCH
-    assert judge_length(2.97, 3.0, 0.0) is Outcome.FAIL and judge_length(3.1, 3.0, 0.2) is Outcome.FAIL
+    assert judge_length(3.0, 3.0, 0.0) is Outcome.WATCH and judge_length(2.999, 3.0, 0.0) is Outcome.FAIL
+    assert judge_length(float("nan"), 3.0, 0.0) is Outcome.FAIL and judge_length(3.1, 3.0, 0.2) is Outcome.FAIL
     assert judge_length(3.6, 3.0, 0.2) is Outcome.PASS
-    assert judge_length(6.01, 6.0, 0.0, "most") is Outcome.WATCH and judge_length(6.1, 6.0, 0.0, "most") is Outcome.FAIL
+    assert judge_length(6.0, 6.0, 0.0, "most") is Outcome.WATCH and judge_length(6.01, 6.0, 0.0, "most") is Outcome.FAIL
+    assert judge_length(float("nan"), 6.0, 0.0, "most") is Outcome.FAIL
 
 
 def test_long_lists_are_cut():
