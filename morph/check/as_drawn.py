@@ -16,7 +16,8 @@ from morph.body.plan import BranchKind, ChannelPlan, PlanBranch
 from morph.check.rows import name_list
 from morph.core.arrays import Floats
 from morph.core.verdict import COMMON_PRACTICE, Outcome, Verdict
-from morph.layout.graph import Branch, ChannelGraph, DropReason
+from morph.core.words import counted
+from morph.layout.graph import Branch, ChannelGraph, Dropped, DropReason
 
 MOST_DEPARTED = 0.05
 """Up to this share of the drawn area the channels count as drawn (common practice, no source)."""
@@ -60,14 +61,14 @@ class Departure:
     Args:
         drawn_mm2: coolant area of the drawing. branches: worst first.
         left_out_mm2: pieces without a port, and dropped coolant larger than one bore squared.
-        large_pieces: how many of those are larger than one bore squared.
+        large_pieces: those larger than one bore squared, largest first.
         small_mm2: the rest of the dropped coolant, noise of the image.
     """
 
     drawn_mm2: float
     branches: tuple[BranchDeparture, ...]
     left_out_mm2: float
-    large_pieces: int
+    large_pieces: tuple[Dropped, ...]
     small_mm2: float
 
     @property
@@ -151,13 +152,13 @@ def measure_departure(plan: ChannelPlan, graph: ChannelGraph, bore_scale: float 
     length = sum(branch.length_mm for branch in graph.branches)
     mean_mm = sum(b.length_mm * float(b.bore_mm.mean()) for b in graph.branches) / max(length, 1e-12)
     dropped = [item for item in graph.dropped if item.reason in COOLANT]
-    large = [item.area_mm2 for item in dropped if item.area_mm2 > mean_mm**2]
+    large = sorted((item for item in dropped if item.area_mm2 > mean_mm**2), key=lambda i: (-i.area_mm2, i.sheet_mm))
     left_out = [i.area_mm2 for i in dropped if i.reason is DropReason.NO_PORT or i.area_mm2 > mean_mm**2]
     return Departure(
         graph.area_ratio * graph.size_mm[0] * graph.size_mm[1],
         tuple(sorted(found, key=lambda item: (-round(item.total_mm2, 6), item.id))),
         sum(left_out),
-        len(large),
+        tuple(large),
         sum(item.area_mm2 for item in dropped) - sum(left_out),
     )
 
@@ -171,6 +172,10 @@ def _words(found: Departure) -> str:
         f"coolant: {part(found.lowered_mm2)} lowered and {part(found.raised_mm2)} raised to the allowed bore range, "
         f"{part(found.capped_mm2)} capped to the room there is, {part(found.left_out_mm2)} in pieces left out."
     )
+    if found.large_pieces:
+        x, y = found.large_pieces[0].sheet_mm
+        text += f" Left out: {counted(len(found.large_pieces), 'piece')} larger than one bore squared"
+        text += f", the largest {found.large_pieces[0].area_mm2:.1f} mm2 around [{x:.1f}, {y:.1f}] mm."
     worst = [item for item in found.branches if item.total_mm2 > 0.005 * found.drawn_mm2][:MOST_BRANCHES]
     if worst:
         text += f" Most in {name_list([f'{item.id} ({item.total_mm2:.1f} mm2)' for item in worst])}."

@@ -12,6 +12,7 @@ from morph.layout.density import Density
 from morph.layout.graph import ChannelGraph, NodeKind
 from morph.report.along import middle_index
 from morph.report.drawing import FAINT, INK, PAPER, Drawing, number
+from morph.report.label_places import LabelPlaces
 from morph.report.legend import PORT_COLOUR
 from morph.report.png import png_address
 from morph.report.seam import clipped, copies_mm, on_sheet_mm
@@ -56,15 +57,15 @@ def _picture(drawing: Drawing, density: Density) -> None:
     drawing.raw(f'<rect x="{left}" y="{top}" {inside} fill="none" stroke="{FAINT}"/>')
 
 
-def _node(drawing: Drawing, at: Floats, kind: NodeKind, name: str) -> None:
+def _node(drawing: Drawing, at: Floats, kind: NodeKind) -> str:
+    """Draws the sign of a node and returns its colour."""
     x, y = drawing.xy((float(at[0]), float(at[1])))
     colour = {NodeKind.PORT: PORT_COLOUR, NodeKind.DEAD_END: DEAD}.get(kind, INK)
     if kind is NodeKind.DEAD_END:
         drawing.raw(f'<path d="M{x} {y}m-5 -5l10 10m0 -10l-10 10" stroke="{colour}" stroke-width="2.4"/>')
     else:
         drawing.raw(f'<circle cx="{x}" cy="{y}" r="4.5" fill="{colour}" stroke="{PAPER}" stroke-width="1.4"/>')
-    above = (float(at[0]) + drawing.mm(8.0), float(at[1]) + drawing.mm(9.0))
-    drawing.label(above, name, size_px=11.0, colour=colour, anchor="start", bold=True)
+    return colour
 
 
 def draw_density(density: Density, graph: ChannelGraph) -> str:
@@ -91,10 +92,14 @@ def draw_density(density: Density, graph: ChannelGraph) -> str:
         drawing.shape(data, fill="none", stroke=DROPPED, stroke_width="2.4", stroke_dasharray="2 4")
         x, y = bridge.path_mm[middle_index(bridge.path_mm)].tolist()
         drawing.label((x, y + drawing.mm(9.0)), bridge.id, size_px=11.0, colour=DROPPED, bold=True)
-    for node in graph.nodes:
-        _node(drawing, node.sheet_mm, node.kind, node.id)
+    labels = LabelPlaces(drawing)
+    nodes = [(node, on_sheet_mm(node.sheet_mm, graph.turn_mm)) for node in graph.nodes]
+    for _, at in nodes:
+        labels.keep_clear(at, 5.0)
+    for node, at in nodes:
+        labels.write(at, node.id, _node(drawing, at, node.kind), beside=True)
     for branch in graph.branches:
-        x, y = on_sheet_mm(branch.sheet_mm[middle_index(branch.sheet_mm)], graph.turn_mm).tolist()
-        drawing.label((x, y), branch.id, size_px=11.0, colour=LINE, bold=True)
+        middle = on_sheet_mm(branch.sheet_mm[middle_index(branch.sheet_mm)], graph.turn_mm)
+        labels.write(middle, branch.id, LINE, beside=False)
     drawing.scale_bar((0.0, -0.7 * margin), 0.2)
     return drawing.svg()

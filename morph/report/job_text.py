@@ -37,6 +37,8 @@ def toml_value(value: Any) -> str:
         return "true" if value else "false"
     if isinstance(value, int | float):
         return repr(value)
+    if dataclasses.is_dataclass(value) and not isinstance(value, type):
+        return "{ " + ", ".join(f"{key} = {toml_value(item)}" for key, item in _rows(value)) + " }"
     if isinstance(value, tuple | list):
         return "[" + ", ".join(toml_value(item) for item in value) + "]"
     return '"' + "".join(_escaped(letter) for letter in str(value)) + '"'

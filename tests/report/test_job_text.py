@@ -81,6 +81,7 @@ bore_range_mm = [3.25, 6.0]
 kind = "cylinder"
 radius_mm = 60.0
 z_mm = [-40.0, 40.0]
+flange = { radius_mm = 70.0, height_mm = 8.0 }
 """
 
 

@@ -141,3 +141,23 @@ def test_figure_shows_the_insert_see_through_and_the_first_quantity(records):
     assert skin.opacity < 0.5 and channels.opacity is None
     assert channels.cmin == pytest.approx(make_scene(records).quantities[0].low)
     assert list(exits.text) == ["feed (in)", "return (out)"]
+
+
+def test_names_in_a_crowd_cover_neither_each_other_nor_the_signs():
+    """Nine names for one place: all are written, apart, inside the drawing, and the far ones tied by a line."""
+    from morph.report.drawing import Drawing
+    from morph.report.label_places import LETTER_PX, SIZE_PX, LabelPlaces
+
+    drawing = Drawing((0.0, 0.0), (100.0, 100.0), 400.0, "crowd", "t")
+    labels = LabelPlaces(drawing)
+    labels.keep_clear(np.array([3.0, 3.0]), 5.0)
+    for index in range(9):
+        labels.write(np.array([3.0, 3.0]), f"N{index}", "#000000", beside=True)
+    found = re.findall(r'<text x="([\d.]+)" y="([\d.]+)"', drawing.svg())
+    places = np.array(found, dtype=float)
+    assert len(places) == 9
+    apart = np.abs(places[:, None] - places[None, :]) + np.eye(9)[:, :, None] * 1e3
+    assert ((apart[..., 0] >= 2 * LETTER_PX) | (apart[..., 1] >= SIZE_PX)).all()
+    assert places.min() >= 5.0 and places.max() <= 395.0 and "<line" in drawing.svg()
+    sign = np.abs(places - [12.0, 388.0])
+    assert ((sign[:, 0] >= LETTER_PX + 5.0) | (sign[:, 1] >= 0.5 * SIZE_PX + 5.0)).all()
