@@ -96,6 +96,8 @@ def draw_density(density: Density, graph: ChannelGraph) -> str:
     nodes = [(node, on_sheet_mm(node.sheet_mm, graph.turn_mm)) for node in graph.nodes]
     for _, at in nodes:
         labels.keep_clear(at, 5.0)
+    for share in np.linspace(0.0, 0.25, 12).tolist():  # the scale bar
+        labels.keep_clear(np.array([share * width, -0.7 * margin + drawing.mm(6.0)]), 13.0)
     for node, at in nodes:
         labels.write(at, node.id, _node(drawing, at, node.kind), beside=True)
     for branch in graph.branches:

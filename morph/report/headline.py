@@ -72,12 +72,12 @@ def _thinnest_wall(verdicts: tuple[Verdict, ...]) -> Figure:
     worst, thinnest = walls[0], min(walls, key=wall_after_band_mm)
     after = wall_after_band_mm(worst)
     shown, limit = f"{after:.2f} mm", "" if worst.limit is None else f"at least {worst.limit:.2f} mm"
-    note = f"{worst.code}, measured {worst.value:.2f} mm less a band of {worst.band:.2f} mm"
+    note = f"{worst.code}, {worst.value:.2f} mm less a band of {worst.band:.2f} mm"
     if worst.code == MERGE:
         limit, note = "must stay apart", "two channels run together; see branches-merge"
         shown = f"{-after:.2f} mm overlap" if after <= 0.0 else shown
     elif wall_after_band_mm(thinnest) < after:
-        note += f"; thinner, but farther above its own limit: {thinnest.code} {wall_after_band_mm(thinnest):.2f} mm"
+        note += f"; thinner, with more margin: {thinnest.code} {wall_after_band_mm(thinnest):.2f} mm"
     return replace(_from_verdict(key, title, worst, shown, limit, note), value=after)
 
 

@@ -6,7 +6,7 @@ from types import SimpleNamespace
 import numpy as np
 import pytest
 
-from morph.core.verdict import Notice, Outcome
+from morph.core.verdict import Notice, Outcome, worst_outcome
 from tests.cli.scene import JOB, straight_channel
 
 DEAD_END = Notice("dead-end", "Branch B2 ends blind.")
@@ -29,8 +29,6 @@ def answer(monkeypatch):
     def install(*verdicts, notices=(DEAD_END,)):
         summary = {"layout": {"branches": 3}, "flow": None}
         files = {"summary.json": json.dumps(summary).encode(), "report.html": b"<html></html>"}
-        checked = [row.outcome for row in verdicts if row.outcome is not Outcome.NOT_CHECKED]
-        headline = Outcome.FAIL if Outcome.FAIL in checked else Outcome.PASS
 
         def build(job, progress):
             progress.step("layout", 0, 1)
@@ -43,7 +41,7 @@ def answer(monkeypatch):
                 verdicts=verdicts,
                 notices=notices,
                 files=files,
-                headline=headline,
+                headline=worst_outcome(verdicts),
             )
 
         monkeypatch.setattr(morph.pipeline, "build", build)

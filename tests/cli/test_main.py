@@ -31,9 +31,9 @@ def test_a_pass_leaves_the_files_and_a_table(job_folder, answer, capsys):
     assert main(["build", "job.toml"]) == 0
     said = capsys.readouterr()
     assert sorted(p.name for p in (job_folder / "out" / "lamp").iterdir()) == ["report.html", "summary.json"]
-    assert said.out.splitlines()[0] == "lamp: pass   (0 fail, 1 not checked, 0 watch, 1 pass)"
+    assert said.out.splitlines()[0] == "lamp: not checked   (0 fail, 1 not checked, 0 watch, 1 pass)"
     assert (
-        "pass         Thinnest wall after its band      4.05 mm      at least 3.00 mm  B1 at [29.0, 1.2, -3.0] mm"
+        "pass         Worst wall after its band            4.05 mm      at least 3.00 mm  B1 at [29.0, 1.2, -3.0] mm"
         in said.out
     )
     assert "not checked  Openings found / declared" in said.out
