@@ -23,7 +23,7 @@ class ThreadHole:
 
     Args:
         thread: sizes. thread_depth_mm: full thread. run_out_mm: what the drill goes deeper.
-        drill_stock_mm: metal per side that the drill takes from the printed pilot.
+        drill_stock_mm: least metal per side that the drill takes from the printed pilot.
     """
 
     thread: Thread
@@ -43,7 +43,7 @@ class Finish:
 
     Args:
         detail: plain, the thread, or the seal groove.
-        pilot_mm: bore printed at the exit, over `cut_depth_mm`; 0: the lead's own bore.
+        pilot_mm: widest bore printed at the exit, over `cut_depth_mm`; 0: the lead's own bore.
         cut_mm, cut_depth_mm: diameter and depth of what is cut later around the axis.
         land_mm: diameter of the flat circle of the face the seal needs.
         pilot_reach_mm: how far the ball that sweeps the pilot, with its roof, reaches from its centre.

@@ -157,16 +157,18 @@ def judge_path(
         face: the face it comes out of.
         port_bore_mm: bore of the channel at the port.
         bore_mm: bore wanted; from the port's bore it is reached at the taper.
-        finish: of the exit; a pilot is reached at the taper too.
+        finish: of the exit; a pilot is reached at the taper too, and is only as wide as its walls allow: the drill
+            takes the rest.
     """
     arc = polyline_arc_mm(xyz_mm)
-    wanted = np.maximum(port_bore_mm - TAPER * arc, min(bore_mm, port_bore_mm))
-    wanted = finish.bore_mm(wanted, arc[-1] - arc, TAPER)
+    own = np.maximum(port_bore_mm - TAPER * arc, min(bore_mm, port_bore_mm))
+    wanted = finish.bore_mm(own, arc[-1] - arc, TAPER)
+    needed = np.minimum(wanted, own)
     opening = way_out(face, xyz_mm)
     faces = measure_room(around.blank, around.limits, xyz_mm, face.name, opening)
     beside, by = room_between(around, xyz_mm, arc, wanted)
     room = with_neighbours(faces, beside, by, [strand.id for strand in around.network.strands])
-    share = room.room_mm / np.maximum(_due(faces.room_mm, wanted, arc, bore_mm), 1e-9)
+    share = room.room_mm / np.maximum(_due(faces.room_mm, needed, arc, bore_mm), 1e-9)
     worst = int(share.argmin())
     bore = np.minimum(wanted, np.maximum(room.room_mm, around.limits.least_bore_mm))
-    return Judged(xyz_mm, wanted, lower_to_taper(bore, arc), room, float(share[worst]), worst)
+    return Judged(xyz_mm, needed, lower_to_taper(bore, arc), room, float(share[worst]), worst)
