@@ -14,7 +14,7 @@ from numba import njit
 from numpy.typing import NDArray
 
 from morph.core.arrays import Floats, Ints
-from morph.kernels.distance_field import BLOCK, field_at
+from morph.kernels.distance_field import BLOCK, field_at, keep_near
 from morph.kernels.dual_surface import neighbour_cell
 
 ROUNDS = 4
@@ -29,6 +29,9 @@ NO_CREASE = 0.97
 
 MOST_OFF = 0.02
 """A crease vertex must lie this near to the surface, in cells."""
+
+LOOKS_AROUND = 3.0
+"""Farthest a crease vertex and its planes lie from the cell's own vertex, in cells."""
 
 MOST_PLANES = 27
 
@@ -209,9 +212,13 @@ def place_on_creases(
         z = cells[w] & 7
         own = first_vertex[b, x, y, z]
         n_near = length[b]
-        list_ = near[start[b] : start[b] + n_near]
         run_distance = np.empty(n_near)
         run_piece = np.empty(n_near, np.int64)
+        list_ = np.empty(n_near, np.int64)
+        n_near = keep_near(
+            vertices[own, 0], vertices[own, 1], vertices[own, 2], LOOKS_AROUND * h_mm, pieces, owner, blend_mm,
+            near[start[b] : start[b] + n_near], n_near, list_, run_distance,
+        )  # fmt: skip
         for attempt in range(3):
             reach = h_mm * (1.75 if attempt == 0 else (1.15 if attempt == 1 else 2.4))
             n = gather_planes(
