@@ -20,8 +20,9 @@ from morph.body.shape import Round, Shape, make_shape, widest_mm
 from morph.core.arrays import Floats, frozen_floats
 from morph.core.errors import GeometryError, SettingError
 from morph.core.tolerance import COINCIDE_MM
+from morph.core.verdict import Notice
 from morph.geometry.cone import Cone
-from morph.settings.job import BlankSettings, HoleSettings, ServiceSettings
+from morph.settings.job import BlankSettings, CylinderBlankSettings, HoleSettings, ServiceSettings
 from morph.surface.make import RoundCarrier
 
 AnyFace = BlankFace | FlangedFace
@@ -44,6 +45,7 @@ class Blank:
         box_mm: (2, 3) lowest and highest corner of the box, or None. A box may be cut by
             `outer_radius_mm` (metal toward the axis) or by `inner_radius_mm` (away from it).
         holes: kept clear by channels and leads. Holes are made later and are not cut.
+        notices: what the job may not expect of its blank.
     """
 
     faces: tuple[AnyFace, ...]
@@ -52,6 +54,7 @@ class Blank:
     inner_radius_mm: float | None
     box_mm: Floats | None
     holes: tuple[Hole, ...] = ()
+    notices: tuple[Notice, ...] = ()
 
     def __post_init__(self) -> None:
         if self.box_mm is not None:
@@ -95,7 +98,21 @@ def make_blank(
     _require_sheet_inside(faces, carrier, size_mm)
     clipped = tuple(make_hole(i + 1, hole, faces, service) for i, hole in enumerate(holes))
     outer, inner = shape.radius_mm(metal_inside=True), shape.radius_mm(metal_inside=False)
-    return Blank(faces, shape.z_mm, outer, inner, shape.box_mm, clipped)
+    return Blank(faces, shape.z_mm, outer, inner, shape.box_mm, clipped, _cut_notices(settings, shape))
+
+
+def _cut_notices(settings: BlankSettings, shape: Shape) -> tuple[Notice, ...]:
+    """Returns a `blank-cut-to-carrier` notice when a blank cylinder is larger than the core and so cut to it."""
+    if not isinstance(settings.shape, CylinderBlankSettings) or not shape.rounds[0].metal_inside:
+        return ()
+    core, asked = widest_mm(shape.rounds[0].surface, shape.z_mm), settings.shape.radius_mm
+    if asked <= core + COINCIDE_MM:
+        return ()
+    text = (
+        f"The blank cylinder of radius {asked:.3f} mm is cut to the core: the carrier is the finished face, and the "
+        f"body's largest radius is {core:.3f} mm."
+    )
+    return (Notice("blank-cut-to-carrier", text),)
 
 
 def _name_faces(shape: Shape) -> list[BlankFace]:

@@ -27,7 +27,7 @@ from morph.body.section import SectionRule, apex_mm, climb_sine
 from morph.body.thread import Thread, make_thread
 from morph.core.arrays import Floats
 from morph.core.errors import GeometryError, SettingError
-from morph.core.tolerance import BUILD_MM
+from morph.core.tolerance import BUILD_BORE_MM, BUILD_MM
 from morph.settings.job import FaceSealEnd, PlainEnd, PortSettings, SectionShape, ServiceSettings, ThreadEnd
 from morph.settings.profile import Profile
 
@@ -105,7 +105,7 @@ def make_finish(
         return PLAIN
     hole = _thread_hole(port.end, make_thread(port.end.designation, f"[[port]] '{port.name}' thread"))
     pilot = pilot_mm(hole, leave, rule, profile)
-    least = max(service.smallest_bore_mm, profile.smallest_bore_mm.value) + profile.bore_band_mm.value + 2.0 * BUILD_MM
+    least = max(service.smallest_bore_mm, profile.smallest_bore_mm.value) + profile.bore_band_mm.value + BUILD_BORE_MM
     if pilot < least:
         raise SettingError(
             "thread-too-small",

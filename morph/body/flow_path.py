@@ -15,6 +15,7 @@ from collections.abc import Sequence
 import numpy as np
 
 from morph.core.arrays import Bools, Ints
+from morph.core.pieces import Pieces
 
 
 def edge_blocks(n_nodes: int, ends: Sequence[tuple[int, int]]) -> Ints:
@@ -119,17 +120,10 @@ def connected_pieces(n_nodes: int, ends: Sequence[tuple[int, int]]) -> list[list
     >>> connected_pieces(4, [(0, 1), (2, 3), (1, 0)])
     [[0, 2], [1]]
     """
-    parent = list(range(n_nodes))
-
-    def root(i: int) -> int:
-        while parent[i] != i:
-            parent[i] = parent[parent[i]]
-            i = parent[i]
-        return i
-
+    joined = Pieces(n_nodes)
     for a, b in ends:
-        parent[root(a)] = root(b)
+        joined.join(a, b)
     pieces: dict[int, list[int]] = {}
     for edge, (a, _) in enumerate(ends):
-        pieces.setdefault(root(a), []).append(edge)
+        pieces.setdefault(joined.root(a), []).append(edge)
     return sorted(pieces.values())

@@ -23,6 +23,7 @@ from morph.body.plan import ChannelPlan
 from morph.body.room import Limits, make_limits, measure_room
 from morph.body.section import make_section_rule
 from morph.core.arrays import Floats
+from morph.core.errors import GeometryError
 from morph.core.progress import SILENT, Progress
 from morph.geometry.curve import curve_at
 from morph.layout.graph import Branch
@@ -66,9 +67,9 @@ def make_plan(
     Raises:
         SettingError: `bore-range-empty`, `leave-into-metal`, `leave-without-direction`; of an end `thread-unknown`,
             `thread-too-small`, `land-too-small`.
-        GeometryError: `no-room-for-smallest-bore`, `lead-blocked`, `exit-off-port-face`, `exit-without-wall`,
-            `exits-too-near`; of an end `land-not-flat`, `end-not-square`, `land-off-face`, `lands-overlap`,
-            `end-without-wall`, `end-no-place`, `end-no-straight`, `groove-too-near-bore`.
+        GeometryError: `no-room-for-smallest-bore`, `ports-meet`, `lead-blocked`, `exit-off-port-face`,
+            `exit-without-wall`, `exits-too-near`; of an end `land-not-flat`, `end-not-square`, `land-off-face`,
+            `lands-overlap`, `end-without-wall`, `end-no-place`, `end-no-straight`, `groove-too-near-bore`.
     """
     limits = make_limits(section, service, profile, build_direction)
     allowed = (limits.least_bore_mm, limits.greatest_bore_mm)
@@ -88,6 +89,7 @@ def make_plan(
     ]
     for start in starts:
         require_groove_clear(start.settings, start.bore_mm, limits)
+    _require_ports_apart(starts)
     leads = lay_leads(ground, starts, progress)
     progress.step("bores", 2, 3)
     notices = clamp_notices(
@@ -96,6 +98,7 @@ def make_plan(
         [strand.arc_mm for strand in wanted.strands],
         allowed,
     )
+    notices = (*blank.notices, *notices)
     parts = Parts(wrapped, blank, limits, tuple(one.sheet_mm for one in laid), wanted, fitted, leads)
     plan = assemble_plan(parts, section.blend_mm, notices)
     return replace(plan, section=rule)
@@ -129,6 +132,26 @@ def _channel_network(laid: Sequence[_Laid], index: dict[str, int], allowed: tupl
         for one in laid
     ]
     return make_network(strands, len(index))
+
+
+def _require_ports_apart(starts: Sequence[PortStart]) -> None:
+    """Raises `ports-meet` when two ports lie within half a bore of each other in the part.
+
+    Apart on the sheet they may still meet where the sheet's edges do, after a full turn of the carrier.
+    """
+    for k, one in enumerate(starts):
+        for two in starts[:k]:
+            away = float(np.linalg.norm(one.xyz_mm - two.xyz_mm))
+            if away < 0.5 * max(one.bore_mm, two.bore_mm):
+                x, y, z = one.xyz_mm
+                names = f"'{two.settings.name}' and '{one.settings.name}'"
+                raise GeometryError(
+                    "ports-meet",
+                    expected="ports apart from each other in the part",
+                    found=f"{away:.3f} mm between {names}, because the sheet's edges meet there",
+                    where=f"[[port]] {names} at ({x:.2f}, {y:.2f}, {z:.2f}) mm",
+                    do="Make the sheet narrower than a full turn, move one of the ports, or join the seam.",
+                )
 
 
 def _port_start(

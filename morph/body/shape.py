@@ -183,4 +183,14 @@ def _box_shape(settings: BoxBlankSettings, carrier: RoundCarrier) -> Shape:
     if not (box[0] < box[1]).all():
         found = f"min_mm {list(settings.min_mm)} and max_mm {list(settings.max_mm)}"
         raise _not_a_body("[blank] kind box", "min_mm below max_mm in x, y and z", found)
-    return Shape((float(box[0, 2]), float(box[1, 2])), box, (_face_of(carrier),))
+    face, z_mm = _face_of(carrier), (float(box[0, 2]), float(box[1, 2]))
+    away = float(np.linalg.norm(np.maximum(0.0, np.maximum(box[0, :2], -box[1, :2]))))
+    if face.metal_inside and away >= widest_mm(face.surface, z_mm) - COINCIDE_MM:
+        raise GeometryError(
+            "blank-misses-carrier",
+            expected=f"a box that meets the core of radius {widest_mm(face.surface, z_mm):.3f} mm about z",
+            found=f"a box that comes no nearer to the axis than {away:.3f} mm",
+            where="[blank] min_mm, max_mm",
+            do="Move the box over the carrier: its axis is z, and the sheet's centre lies at the +x side.",
+        )
+    return Shape(z_mm, box, (face,))

@@ -41,6 +41,9 @@ PLACES = 8
 NEARLY_MM = 0.25
 """Places this much thicker by the centrelines are measured on the mesh too."""
 
+STRAIGHT_MM = 0.02
+"""Two places face each other straight across when neither is nearer to a neighbour of the other by more than this."""
+
 SEARCH_RATIO = 2.0
 """Walls up to this many limits are looked for; wider ones are reported as wider."""
 
@@ -125,7 +128,7 @@ def _straight(lines: Centrelines, pairs: Pairs, gap_mm: Floats) -> Bools:
         _, group = np.unique(sample * len(lines.plan.branches) + lines.branch[other], return_inverse=True)
         least = np.full(int(group.max(initial=-1)) + 1, np.inf)
         np.minimum.at(least, group, gap_mm)
-        keep &= gap_mm <= least[group]
+        keep &= gap_mm <= least[group] + STRAIGHT_MM
     return keep
 
 

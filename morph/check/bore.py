@@ -19,6 +19,7 @@ from morph.check.channel_wall import ChannelWall
 from morph.check.rows import judge_length, name_list, place
 from morph.check.subject import CheckSubject
 from morph.core.arrays import Bools, Floats, Ints
+from morph.core.pieces import Pieces
 from morph.core.verdict import COMMON_PRACTICE, Outcome, Verdict
 from morph.geometry.tree import closest_points
 from morph.settings.job import Role
@@ -117,18 +118,11 @@ def _widest_way_mm(plan: ChannelPlan, number: dict[str, int], ends: list[tuple[i
     """Returns the largest ball that passes from any in port to any out port, 0 for none."""
     inlets = [number[e.node] for e in plan.exits if e.role is Role.IN]
     outlets = [number[e.node] for e in plan.exits if e.role is Role.OUT]
-    parent = list(range(len(plan.nodes)))
-
-    def root(i: int) -> int:
-        while parent[i] != i:
-            parent[i] = parent[parent[i]]
-            i = parent[i]
-        return i
-
+    pieces = Pieces(len(plan.nodes))
     for edge in np.argsort(-narrowest, kind="stable"):
         a, b = ends[int(edge)]
-        parent[root(a)] = root(b)
-        if {root(i) for i in inlets} & {root(i) for i in outlets}:
+        pieces.join(a, b)
+        if {pieces.root(i) for i in inlets} & {pieces.root(i) for i in outlets}:
             return float(narrowest[edge])
     return 0.0
 

@@ -11,6 +11,8 @@ from morph.core.verdict import Outcome, Verdict
 from morph.core.words import counted
 from morph.geometry.mesh import Mesh, MeshCondition, measure_condition
 from morph.layout.graph import count_loops
+from morph.solid.crossings import measure_crossings
+from morph.solid.cut import expected_channel_genus, expected_genus
 from morph.solid.result import ChannelSolid, Insert
 
 COUNTED = "counted on the written triangles"
@@ -64,6 +66,7 @@ def _count_row(code: str, text: str, value: int, limit: int, source: str, hint: 
 def check_condition(insert: Insert, solid: ChannelSolid, plan: ChannelPlan) -> list[Verdict]:
     """Returns the `closed`, `crossings`, `bodies` and `genus` rows of insert and channels."""
     whole, channels = measure_condition(insert.mesh), measure_condition(solid.trimmed)
+    crossings = measure_crossings(insert.mesh).pairs
     n = len(plan.circuits)
     split = "Look for branches whose bore vanishes, or circuits that touch; see wall-between."
     rows = [
@@ -71,8 +74,8 @@ def check_condition(insert: Insert, solid: ChannelSolid, plan: ChannelPlan) -> l
         check_closed(solid.trimmed, "channels", channels),
         _count_row(
             "crossings",
-            f"{counted(solid.crossings, 'pair')} of channel triangles cross each other.",
-            solid.crossings,
+            f"{counted(crossings, 'pair')} of the written insert's triangles cross each other.",
+            crossings,
             0,
             COUNTED,
             "Set [quality] h_mm a little smaller and build again.",
@@ -101,8 +104,8 @@ def check_condition(insert: Insert, solid: ChannelSolid, plan: ChannelPlan) -> l
         rows.append(Verdict("genus", Outcome.NOT_CHECKED, f"The genus says nothing while {why}.", source=COUNTED))
         return rows
     circuits = circuit_loops(plan)
-    loops = sum(item[0] for item in circuits)
-    expected = insert.blank_genus + sum(item[0] + item[1] - 1 for item in circuits)
+    loops = expected_channel_genus(circuits)
+    expected = expected_genus(insert.blank_genus, circuits)
     hint = "A loop was closed or opened that the layout does not have; look at wall-between and the openings."
     rows.append(
         _count_row(

@@ -5,11 +5,9 @@ from __future__ import annotations
 import numpy as np
 
 from morph.body.face import Face
+from morph.body.room import STEEPNESS
 from morph.check.centreline import Centrelines
 from morph.core.arrays import Bools, Floats
-
-STEEPNESS = 0.5
-"""A branch counts as on its way out while it nears the face by at least this per mm (30 degrees to the face)."""
 
 
 def own_exit_samples(lines: Centrelines, face: Face) -> Bools:

@@ -79,7 +79,7 @@ def check_insert(
     rows += check_holes(subject, lines, wall)
     rows += check_ends(subject, lines, wall)
     progress.step(STAGE, 3, STEPS)
-    rows += check_openings(subject.insert, subject.plan, subject.blank, lines)
+    rows += check_openings(subject.insert, subject.plan, subject.blank, lines, subject.solid.h_mm)
     rows += check_bores(subject, lines, shared.bore_mm)
     rows += _check_likeness(subject)
     rows += check_leads(lines)

@@ -22,6 +22,7 @@ from morph.check.obstacle import FaceObstacle, HoleObstacle, Obstacle
 from morph.check.rows import MEASURE_MM, Limit, judge_length, place, worse_limit
 from morph.check.subject import CheckSubject
 from morph.core.arrays import Bools, Floats, Ints, unit_rows
+from morph.core.tolerance import WELD_MM
 from morph.core.verdict import Outcome, Verdict
 from morph.settings.job import ServiceSettings
 from morph.settings.profile import Profile
@@ -55,7 +56,12 @@ class WallFinding:
 
 
 def measure_wall(
-    obstacle: Obstacle, lines: Centrelines, wall: ChannelWall | None, counted: Bools, limit_at: LimitAt
+    obstacle: Obstacle,
+    lines: Centrelines,
+    wall: ChannelWall | None,
+    counted: Bools,
+    limit_at: LimitAt,
+    within: Bools | None = None,
 ) -> WallFinding | None:
     """Returns the wall with the least margin between the channels and `obstacle`, None when nothing is counted.
 
@@ -65,6 +71,7 @@ def measure_wall(
         wall: the channel wall as written (None: centrelines only).
         counted: (n,) samples that count; a wall vertex counts with its sample.
         limit_at: the limit in mm for bores (k,).
+        within: (m,) wall vertices that count, those in the finished part; None for all.
     """
     if not counted.any():
         return None
@@ -79,7 +86,7 @@ def measure_wall(
     middle = lines.xyz_mm[best] + toward * (0.5 * (reach + float(reach_there[best])) / reach)
     found = (float(gap[best]), best, middle)
     centreline_mm, mesh_mm = float(gap[best]), np.inf
-    written = None if wall is None else _on_mesh(obstacle, lines, wall, counted, limit_at)
+    written = None if wall is None else _on_mesh(obstacle, lines, wall, counted, limit_at, within)
     if written is not None:
         mesh_mm = written[0]
         if mesh_mm - _limit(limit_at, lines, written[1]) < centreline_mm - _limit(limit_at, lines, best):
@@ -97,12 +104,19 @@ def _limit(limit_at: LimitAt, lines: Centrelines, sample: int) -> float:
 
 
 def _on_mesh(
-    obstacle: Obstacle, lines: Centrelines, wall: ChannelWall, counted: Bools, limit_at: LimitAt
+    obstacle: Obstacle,
+    lines: Centrelines,
+    wall: ChannelWall,
+    counted: Bools,
+    limit_at: LimitAt,
+    within: Bools | None,
 ) -> tuple[float, int, Floats] | None:
     """Returns wall, sample and middle of the metal where the written channel wall has the least margin."""
     vertices = wall.mesh.vertices_mm
     margin = obstacle.distance_mm(vertices) - limit_at(lines.bore_mm[wall.sample])
     margin[~counted[wall.sample]] = np.inf
+    if within is not None:
+        margin[~within] = np.inf
     if not np.isfinite(margin).any():
         return None
     best = int(np.argmin(margin))
@@ -160,6 +174,21 @@ def _face_limit(finding: WallFinding, service: ServiceSettings, profile: Profile
     return worse_limit(max(service.wall_face_mm, by_bore), words, profile.wall_mm.value, profile.wall_mm.source)
 
 
+def within_finished(subject: CheckSubject, wall: ChannelWall | None, but: str = "") -> Bools | None:
+    """Returns the wall vertices (m,) behind every finished face (`but` one): what lies in stock is no wall of the part.
+
+    A face ends where others cut it, but its distance is to the face carried on: in the stock before another
+    face that would find walls where the part has ended.
+    """
+    if wall is None:
+        return None
+    inside = np.ones(len(wall.sample), dtype=np.bool_)
+    for face in subject.blank.faces:
+        if face.name != but:
+            inside &= face.distance_mm(wall.mesh.vertices_mm) >= -WELD_MM
+    return inside
+
+
 def _part_finding(
     subject: CheckSubject, face: Face, lines: Centrelines, wall: ChannelWall | None
 ) -> tuple[WallFinding, Limit] | None:
@@ -170,7 +199,8 @@ def _part_finding(
         return np.maximum(least, service.wall_face_bores * bore_mm)
 
     everything = np.ones(len(lines.branch), dtype=bool)
-    finding = measure_wall(FaceObstacle(face), lines, wall, everything, limit_at)
+    within = within_finished(subject, wall, face.name)
+    finding = measure_wall(FaceObstacle(face), lines, wall, everything, limit_at, within)
     return None if finding is None else (finding, _face_limit(finding, service, profile))
 
 
@@ -184,7 +214,8 @@ def _outer_finding(
     profile = subject.profile
     limit = worse_limit(subject.service.wall_outer_mm, "wall_outer_mm", profile.wall_mm.value, profile.wall_mm.source)
     counted = ~own_exit_samples(lines, face)
-    finding = measure_wall(FaceObstacle(face), lines, wall, counted, _same_everywhere(limit))
+    within = within_finished(subject, wall, face.name)
+    finding = measure_wall(FaceObstacle(face), lines, wall, counted, _same_everywhere(limit), within)
     return None if finding is None else (finding, limit)
 
 
@@ -235,9 +266,10 @@ def check_holes(subject: CheckSubject, lines: Centrelines, wall: ChannelWall | N
     """Returns one `wall-hole` row per hole."""
     rows, profile = [], subject.profile
     everything = np.ones(len(lines.branch), dtype=bool)
+    within = within_finished(subject, wall)
     for hole in subject.blank.holes:
         limit = worse_limit(hole.wall_mm, f"wall of hole {hole.id}", profile.wall_mm.value, profile.wall_mm.source)
-        finding = measure_wall(HoleObstacle(hole), lines, wall, everything, _same_everywhere(limit))
+        finding = measure_wall(HoleObstacle(hole), lines, wall, everything, _same_everywhere(limit), within)
         if finding is not None:
             hint = f"Move the hole {hole.id} or the branch, or lower the bore there."
             rows.append(

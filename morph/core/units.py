@@ -2,20 +2,6 @@
 
 from __future__ import annotations
 
-import math
-
-MM3_PER_CM3 = 1000.0
-
-
-def rad_from_deg(angle_deg: float) -> float:
-    """Returns `angle_deg` in radians."""
-    return math.radians(angle_deg)
-
-
-def deg_from_rad(angle_rad: float) -> float:
-    """Returns `angle_rad` in degrees."""
-    return math.degrees(angle_rad)
-
 
 def mass_g(volume_mm3: float, density_kg_m3: float) -> float:
     """Returns the mass in g of `volume_mm3` of a material of `density_kg_m3`.

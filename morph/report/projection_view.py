@@ -10,7 +10,7 @@ from morph.body.plan import ChannelPlan
 from morph.core.arrays import Floats
 from morph.geometry.mesh import Mesh
 from morph.report.along import band_edges_mm
-from morph.report.drawing import FAINT, INK, PAPER, Drawing
+from morph.report.drawing import FAINT, INK, Drawing
 from morph.report.legend import draw_port
 
 WIDTH_PX, HEIGHT_PX = 260.0, 300.0
@@ -73,5 +73,4 @@ def draw_view(view: View, plan: ChannelPlan, insert: Mesh) -> str:
         f"{size[0]:.1f} mm wide, {size[1]:.1f} mm high",
         size_px=12.0,
     )
-    _ = PAPER
     return drawing.svg()

@@ -12,7 +12,7 @@ import numpy as np
 
 from morph.core.arrays import Floats, frozen_floats, unit_rows
 from morph.core.errors import SettingError
-from morph.core.tolerance import BUILD_MM
+from morph.core.tolerance import BUILD_BORE_MM
 from morph.geometry.curve import curve_at, gauss_on_spans
 from morph.layout.graph import Branch, ChannelGraph
 from morph.settings.job import CarrierSettings, ConeSettings, SectionSettings, ServiceSettings
@@ -92,7 +92,7 @@ def bore_range_mm(section: SectionSettings, service: ServiceSettings, profile: P
         low, high, where = *section.bore_range_mm, "[section] bore_range_mm"
     else:
         smallest = max(service.smallest_bore_mm, profile.smallest_bore_mm.value)
-        low = smallest + profile.bore_band_mm.value + 2.0 * BUILD_MM
+        low = smallest + profile.bore_band_mm.value + BUILD_BORE_MM
         high = profile.largest_bore_mm.value
         where = f"[service] smallest_bore_mm and the process profile {profile.name}"
     if not LEAST_BORE_MM <= low <= high < np.inf:

@@ -177,6 +177,16 @@ def test_a_blank_that_misses_the_sheet_says_by_how_much():
     assert "0.500 mm outside face 'inner'" in error.found
     # A box side that cuts the face under the sheet: the half-sheet spans 60/2/22 rad on the face.
     refused("blank-misses-carrier", BoxBlankSettings((10, -80, -40), (80, 80, 40)))
+    # A box beside the core never meets it: 40 mm from the axis, the core has 30.
+    error = refused("blank-misses-carrier", BoxBlankSettings((40, -40, -40), (80, 40, 40)))
+    assert "40.000 mm" in error.found and "30.000 mm" in error.expected
+
+
+def test_a_cylinder_larger_than_the_core_is_cut_and_said():
+    (notice,) = blank(CylinderBlankSettings(44.0, (-40.0, 35.0))).notices
+    assert notice.code == "blank-cut-to-carrier" and "44.000 mm" in notice.text and "30.000 mm" in notice.text
+    assert blank(CylinderBlankSettings(30.0, (-40.0, 40.0))).notices == ()
+    assert blank(CylinderBlankSettings(44.0, (-40.0, 35.0)), JACKET).notices == ()
 
 
 @pytest.mark.parametrize(

@@ -289,3 +289,12 @@ def test_a_start_without_room_is_kinked_and_named():
     plan = SCENES["default margin"].plan()
     (notice,) = [notice for notice in plan.notices if notice.code == "lead-kinked"]
     assert notice.branch_ids == ("L-top",) and "deg" in notice.text
+
+
+def test_ports_that_meet_behind_the_carrier_are_refused():
+    """At 22 mm from the axis a full turn is 2 pi 22 mm: the ends of a line as long lie at one place."""
+    turn = 2.0 * np.pi * 22.0
+    graph = make_graph((turn, 40.0), {"N1": (0.0, 20.0, "in"), "N2": (turn, 20.0, "out")}, [("N1", "N2", 4.0)])
+    with pytest.raises(MorphError) as caught:
+        Scene(graph, radius_mm=30.0).plan()
+    assert caught.value.code == "ports-meet" and "0.000 mm between 'in' and 'out'" in caught.value.found

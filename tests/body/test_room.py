@@ -6,7 +6,7 @@ import pytest
 from morph.body.face import FaceRole
 from morph.body.hole import distance_to_hole_mm
 from morph.body.room import make_limits, measure_room, wall_band_mm, way_out, with_neighbours
-from morph.core.tolerance import BUILD_MM
+from morph.core.tolerance import BUILD_BORE_MM, BUILD_MM
 from morph.settings.job import CarrierBlankSettings, HoleSettings, Metal, SectionSettings, ServiceSettings
 from tests.body.scenes import Scene
 from tests.surface.graphs import make_profile, straight_line
@@ -31,7 +31,7 @@ def test_every_limit_is_the_worse_of_service_and_process():
     limits = make_limits(SectionSettings(), service, make_profile(wall_mm=3.0, smallest_bore_mm=4.0))
     assert (limits.face_mm, limits.outer_mm, limits.between_mm) == (3.0, 4.0, 3.0)
     # The least bore must still pass after its band of 0.2 mm and what meshing takes.
-    assert limits.least_bore_mm == pytest.approx(4.0 + 0.2 + 2 * BUILD_MM)
+    assert limits.least_bore_mm == pytest.approx(4.0 + 0.2 + BUILD_BORE_MM)
     assert limits.greatest_bore_mm == 12.0
 
 

@@ -300,6 +300,15 @@ def test_an_opening_matches_one_exit_only():
     assert found == {"feed": 0} and stray == [1]
 
 
+def test_the_place_of_an_opening_may_be_off_by_a_share_of_the_resolution():
+    """0.4 of h, at least 0.05 mm: an opening 0.09 mm off its axis belongs to the exit at h = 0.25 mm, not at 0.2."""
+    lines = make_centrelines(straight_pipe())
+    insert = insert_with(opening((0, 20.09, 15)), opening((60, 20, 15)))
+    for h_mm, outcome in ((0.25, Outcome.PASS), (0.2, Outcome.FAIL), (0.0, Outcome.FAIL)):
+        row = check_openings(insert, straight_pipe(), box_blank(), lines, h_mm)[0]
+        assert row.outcome is outcome, row.text
+
+
 def test_only_part_faces_are_broken_into():
     plan = straight_pipe()
     lines = make_centrelines(plan)
