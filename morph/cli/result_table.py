@@ -35,5 +35,5 @@ def result_lines(result: Result, paths: Sequence[Path]) -> list[str]:
 def _figure_line(figure: Figure) -> str:
     where = ", ".join(figure.branch_ids[:3]) + (" ..." if len(figure.branch_ids) > 3 else "")
     if figure.xyz_mm is not None:
-        where += " at [" + ", ".join(f"{at:.1f}" for at in figure.xyz_mm) + "] mm"
+        where += " at [" + ", ".join(f"{round(at, 1) + 0.0:.1f}" for at in figure.xyz_mm) + "] mm"
     return f"  {figure.outcome.value:<12} {figure.title:<36} {figure.shown:<12} {figure.limit}  {where}".rstrip()

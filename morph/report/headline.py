@@ -75,7 +75,7 @@ def _thinnest_wall(verdicts: tuple[Verdict, ...]) -> Figure:
     note = f"{worst.code}, {worst.value:.2f} mm less a band of {worst.band:.2f} mm"
     if worst.code == MERGE:
         limit, note = "must stay apart", "two channels run together; see branches-merge"
-        shown = f"{-after:.2f} mm overlap" if after <= 0.0 else shown
+        shown = f"{-worst.value:.2f} mm overlap" if worst.value is not None and worst.value <= 0.0 else shown
     elif wall_after_band_mm(thinnest) < after:
         note += f"; thinner, with more margin: {thinnest.code} {wall_after_band_mm(thinnest):.2f} mm"
     return replace(_from_verdict(key, title, worst, shown, limit, note), value=after)

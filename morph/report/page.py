@@ -14,6 +14,7 @@ from typing import Any
 from morph.body.exit_wall import least_wall_around, straight_run_mm
 from morph.body.plan import BranchKind, ChannelPlan
 from morph.core.verdict import Outcome, worst_outcome
+from morph.core.words import counted
 from morph.report.along import sheet_branches
 from morph.report.colour import OUTCOME_COLOUR, OUTCOME_SIGN, OUTCOME_WORD
 from morph.report.density_view import draw_density
@@ -214,6 +215,7 @@ def make_report(records: BuildRecords, summary: dict[str, Any]) -> str:
         colour=OUTCOME_COLOUR,
         css_class=outcome_class,
         amount=amount,
+        counted=counted,
         place_words=place_words,
         div_id=DIV_ID,
     )

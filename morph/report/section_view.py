@@ -120,7 +120,7 @@ def _plate(drawing: Drawing, section: WallSection, colour: str, dimension_mm: Fl
         dimension_mm: (k, 2) points along the drawn dimension, which stays free.
     """
     value, limit = _plate_words(section.verdict)
-    wide, high = max(10.0 * len(value), 6.4 * len(limit)) + 14.0, 42.0
+    wide, high = max(11.6 * len(value), 6.4 * len(limit)) + 14.0, 42.0
     half = np.array([drawing.mm(0.5 * wide), drawing.mm(0.5 * high)])
     outline = np.concatenate([loop.points_mm for loop in section.loops])
     names = np.array([item.at_mm for item in (*section.named, *section.crossings)]).reshape(-1, 2)
@@ -178,7 +178,11 @@ def _channel_names(drawing: Drawing, section: WallSection, half_mm: float) -> No
 
     Beside a junction several centrelines pass through one opening; it carries the name the verdict uses.
     """
-    taken = [0.5 * (section.channel_side_mm + section.far_side_mm)] if not section.overlaps else []
+    if section.overlaps:
+        words = " and ".join(section.verdict.branch_ids[:2])
+        drawing.label((0.0, -drawing.mm(24.0)), words, size_px=13.0, colour=CHANNEL_LINE, bold=True)
+        return
+    taken = [0.5 * (section.channel_side_mm + section.far_side_mm)]
     for crossing in (*section.named, *section.crossings):
         at = crossing.at_mm
         inside = bool(np.abs(at).max() < half_mm - drawing.mm(16.0))

@@ -63,9 +63,9 @@ def place_words(sheet_mm: tuple[float, float] | None, xyz_mm: tuple[float, float
     """Returns where something is, on the sheet and in the part, one line each."""
     lines = []
     if sheet_mm is not None:
-        lines.append(f"sheet {sheet_mm[0]:.1f}, {sheet_mm[1]:.1f} mm")
+        lines.append("sheet " + ", ".join(f"{round(value, 1) + 0.0:.1f}" for value in sheet_mm) + " mm")
     if xyz_mm is not None:
-        lines.append("part " + ", ".join(f"{value:.1f}" for value in xyz_mm) + " mm")
+        lines.append("part " + ", ".join(f"{round(value, 1) + 0.0:.1f}" for value in xyz_mm) + " mm")
     return lines
 
 

@@ -6,7 +6,7 @@ from types import SimpleNamespace
 import numpy as np
 import pytest
 
-from morph.core.verdict import Notice, Outcome, worst_outcome
+from morph.core.verdict import Notice, worst_outcome
 from tests.cli.scene import JOB, straight_channel
 
 DEAD_END = Notice("dead-end", "Branch B2 ends blind.")

@@ -140,7 +140,13 @@ def test_overlap_is_ringed_not_dimensioned(records):
     )
     section = make_section(records.insert, records.plan, row, (0, 0, 1))
     svg = draw_section(section, records.blank)
-    assert section.overlaps and "overlap 0.50 mm" in svg and "at least" not in svg and 'r="11"' in svg
+    assert (
+        section.overlaps
+        and "overlap 0.50 mm" in svg
+        and ">B9 and B8<" in svg
+        and "at least" not in svg
+        and 'r="11"' in svg
+    )
 
 
 def test_label_is_the_branch_the_verdict_names_even_beside_a_junction(records):
