@@ -106,7 +106,8 @@ def find_walls(lines: Centrelines, limit_mm: float, band_mm: float) -> list[Betw
     found = []
     for one in _by_branches(lines, pairs, np.flatnonzero(counted & (gap <= SEARCH_RATIO * limit_mm))):
         best = one[np.lexsort((pairs.j[one], pairs.i[one], gap[one]))][0]
-        close = one[straight[one] & (gap[one] <= gap[best] + NEARLY_MM)]
+        across = one[straight[one]]
+        close = across[gap[across] <= gap[across].min(initial=np.inf) + NEARLY_MM]
         spread = (
             close[np.unique(np.linspace(0, len(close) - 1, PLACES).round().astype(np.int64))] if len(close) else close
         )

@@ -9,6 +9,7 @@ from __future__ import annotations
 import numpy as np
 
 from morph.core.errors import GeometryError
+from morph.core.pieces import Pieces
 from morph.core.progress import SILENT, Progress
 from morph.core.verdict import Notice
 from morph.layout import notices as say
@@ -111,18 +112,13 @@ def require_circuits(graph: ChannelGraph, ports: tuple[PortSettings, ...]) -> No
 
 def graph_pieces(graph: ChannelGraph) -> list[list[str]]:
     """Returns the port names on each connected piece of `graph`, pieces by their first node."""
-    piece = {node.id: node.id for node in graph.nodes}
-
-    def root(key: str) -> str:
-        while piece[key] != key:
-            key = piece[key]
-        return key
-
+    number = {node.id: k for k, node in enumerate(graph.nodes)}
+    pieces = Pieces(len(number))
     for branch in graph.branches:
-        piece[root(branch.start)] = root(branch.end)
-    names: dict[str, list[str]] = {}
-    for node in graph.nodes:
-        names.setdefault(root(node.id), [])
+        pieces.join(number[branch.start], number[branch.end])
+    names: dict[int, list[str]] = {}
+    for k, node in enumerate(graph.nodes):
+        names.setdefault(pieces.root(k), [])
         if node.port is not None:
-            names[root(node.id)].append(node.port)
+            names[pieces.root(k)].append(node.port)
     return list(names.values())

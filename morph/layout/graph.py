@@ -13,6 +13,7 @@ from enum import StrEnum
 import numpy as np
 
 from morph.core.arrays import Floats, frozen_floats
+from morph.core.pieces import Pieces
 from morph.core.tolerance import COINCIDE_MM
 from morph.core.verdict import Notice
 from morph.geometry.curve import Curve
@@ -173,15 +174,8 @@ def count_loops(n_nodes: int, ends: list[tuple[int, int]]) -> tuple[int, int]:
     >>> count_loops(2, [(0, 1), (0, 1)])
     (1, 1)
     """
-    parent = list(range(n_nodes))
-
-    def root(i: int) -> int:
-        while parent[i] != i:
-            parent[i] = parent[parent[i]]
-            i = parent[i]
-        return i
-
+    joined = Pieces(n_nodes)
     for a, b in ends:
-        parent[root(a)] = root(b)
-    pieces = len({root(i) for i in range(n_nodes)})
+        joined.join(a, b)
+    pieces = len({joined.root(i) for i in range(n_nodes)})
     return pieces, len(ends) - n_nodes + pieces
