@@ -70,6 +70,11 @@ def worst_outcome(verdicts: Iterable[Verdict]) -> Outcome:
     return min((v.outcome for v in verdicts), key=HEADLINE_ORDER.__getitem__, default=Outcome.NOT_CHECKED)
 
 
+def sort_verdicts(verdicts: Iterable[Verdict]) -> tuple[Verdict, ...]:
+    """Returns the verdicts in headline order: fail, not checked, watch, pass; else in their own."""
+    return tuple(sorted(verdicts, key=lambda verdict: HEADLINE_ORDER[verdict.outcome]))
+
+
 @dataclass(frozen=True, slots=True)
 class Notice:
     """A degraded or surprising path that the report must show.

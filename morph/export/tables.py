@@ -17,7 +17,7 @@ from morph.body.exit_wall import least_wall_around, straight_run_mm
 from morph.body.finish import ThreadHole
 from morph.body.plan import ChannelPlan, Exit, PlanBranch
 from morph.core.arrays import Floats
-from morph.core.verdict import HEADLINE_ORDER, Notice, Verdict
+from morph.core.verdict import Notice, Verdict, sort_verdicts
 from morph.export.numbers import json_bytes, rounded
 from morph.settings.job import FaceSealEnd
 
@@ -200,7 +200,7 @@ def verdicts_csv(verdicts: Sequence[Verdict], notices: Sequence[Notice]) -> byte
     `branch_ids` and the places hold several values in one cell, parted by spaces.
     """
     rows: list[list[Cell]] = []
-    for v in sorted(verdicts, key=lambda verdict: HEADLINE_ORDER[verdict.outcome]):
+    for v in sort_verdicts(verdicts):
         value, limit, band = _number(v.value, v.unit), _number(v.limit, v.unit), _number(v.band, v.unit)
         places = [_place_text(v.sheet_mm), _place_text(v.xyz_mm)]
         limits: list[Cell] = [limit, v.limit_is if v.limit is not None else None, band]

@@ -5,7 +5,7 @@ from __future__ import annotations
 from dataclasses import dataclass, replace
 
 from morph.body.plan import ChannelPlan
-from morph.core.verdict import HEADLINE_ORDER, Outcome, Verdict
+from morph.core.verdict import Outcome, Verdict, sort_verdicts
 from morph.report.section import MERGE, wall_after_band_mm, wall_verdicts
 
 
@@ -36,7 +36,7 @@ class Figure:
 
 def sorted_verdicts(verdicts: tuple[Verdict, ...]) -> list[Verdict]:
     """Returns the verdicts as fail, not checked, watch, pass; else in their order."""
-    return sorted(verdicts, key=lambda verdict: HEADLINE_ORDER[verdict.outcome])
+    return list(sort_verdicts(verdicts))
 
 
 def _missing(key: str, title: str, unit: str) -> Figure:
