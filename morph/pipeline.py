@@ -15,7 +15,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 from morph.core.progress import SILENT, Progress
-from morph.core.verdict import HEADLINE_ORDER, Notice, Outcome, Verdict, worst_outcome
+from morph.core.verdict import Notice, Outcome, Verdict, sort_verdicts, worst_outcome
 from morph.settings.job import Job
 
 if TYPE_CHECKING:
@@ -167,7 +167,7 @@ def make_records(job: Job, clock: _Clock) -> BuildRecords:
         solid = make_channel_solid(plan, blank, choose_h_mm(plan, job.quality), progress)
     with clock.stage("insert"):
         insert = make_insert(solid, blank, plan, progress)
-        finished = make_finished(insert, blank)
+        finished = make_finished(solid, blank)
     with clock.stage("check"):
         subject = CheckSubject(
             insert=insert,
@@ -197,11 +197,6 @@ def make_records(job: Job, clock: _Clock) -> BuildRecords:
         fields=fields,
         finished=finished,
     )
-
-
-def sort_verdicts(verdicts: tuple[Verdict, ...]) -> tuple[Verdict, ...]:
-    """Returns the verdicts in headline order: fail, not checked, watch, pass; else as the checks gave them."""
-    return tuple(sorted(verdicts, key=lambda verdict: HEADLINE_ORDER[verdict.outcome]))
 
 
 def make_files(records: BuildRecords, clock: _Clock) -> tuple[dict[str, Any], dict[str, bytes]]:

@@ -118,3 +118,35 @@ def test_stock_at_the_foot_makes_a_second_object(build):
     wanted = plain.summary["insert"]["volume_mm3"]
     assert stocked.summary["insert"]["finished_volume_mm3"] == pytest.approx(wanted, rel=1e-5)
     assert finished.volume == pytest.approx(wanted, rel=1e-4) and plain.summary["insert"]["finished_volume_mm3"] is None
+
+
+MARGIN = "margin_mm = [14.0, 12.0]"
+FLANGES = {
+    "core, foot": (
+        (MARGIN, "margin_mm = [20.0, 12.0]\nflange = { radius_mm = 48, height_mm = 12 }"),
+        ("[blank]", "[blank]\nstock_mm = { foot = 0.5, rim = 1.0, flange = 0.4 }"),
+    ),
+    "core, rim": (
+        (MARGIN, 'margin_mm = [24.0, 12.0]\nport_faces = ["rim"]\nflange = { radius_mm = 48, height_mm = 18 }'),
+        ("[blank]", "[blank]\nstock_mm = { rim = 1.0 }"),
+    ),
+}
+
+
+@pytest.mark.parametrize("case", sorted(FLANGES))
+def test_a_flanged_core_with_stock_goes_all_the_way(build, case):
+    from morph.geometry.mesh import measure_condition
+
+    result = build(*FLANGES[case])
+    assert [v for v in result.verdicts if v.outcome is Outcome.FAIL] == []
+    insert = result.summary["insert"]
+    assert insert["genus"] == 2 and insert["openings"] == 2 and insert["watertight"]
+    assert {item.face for item in result.records.insert.openings} == {case.split(", ")[1]}
+    finished = result.records.finished
+    condition = measure_condition(finished)
+    assert condition.closed and condition.genus == 2 and condition.bodies == 1
+    radius = np.hypot(finished.vertices_mm[:, 0], finished.vertices_mm[:, 1])
+    low = finished.vertices_mm[:, 2] < finished.vertices_mm[:, 2].min() + 1.0
+    assert radius[low].max() == pytest.approx(48.0, abs=0.002)
+    printed = result.records.insert.mesh.vertices_mm
+    assert np.hypot(printed[:, 0], printed[:, 1])[printed[:, 2] < printed[:, 2].min() + 1.0].max() > 48.99

@@ -79,33 +79,6 @@ def blank_mesh(blank: Blank, *, printed: bool) -> Mesh:
     return make_file_mesh(vertices, triangles, np.zeros(len(triangles), np.int64), "the blank")[0]
 
 
-def cut_stock(body: Any, blank: Blank, z_mm: tuple[float, float]) -> Any:
-    """Returns a printed manifold3d body cut at each finished face that carries stock; others are not touched.
-
-    Args:
-        body: the body as printed.
-        blank: its faces and their stock.
-        z_mm: lowest and highest z of the body.
-
-    Raises:
-        GeometryError: ``solid-empty`` when nothing is left.
-    """
-    flanged = [face for face in blank.faces if isinstance(face, FlangedFace)]
-    if flanged:
-        low, high = _extent(blank, printed=True)
-        body = _cut_flange(body, flanged, low[2] - 1.0, high[2] + 1.0)
-    for face in blank.faces:
-        if face.stock_mm <= 0.0 or isinstance(face, FlangedFace):
-            continue
-        if isinstance(face, PlaneFace):
-            body = body.trim_by_plane((-face.normal).tolist(), -float(face.origin_mm @ face.normal))
-        else:
-            round_body = _round_body(face, False, z_mm[0] - 1.0, z_mm[1] + 1.0)
-            body = body ^ round_body if face.metal_inside else body - round_body
-    require_valid(body, "the finished insert")
-    return body
-
-
 def _axis(face: PlaneFace) -> int | None:
     """Returns the axis a plane is square to, or None for an oblique plane."""
     along = np.flatnonzero(np.abs(face.normal) > 1.0 - 1e-12)
@@ -160,23 +133,6 @@ def _round_body(face: CylinderFace | ConeFace, printed: bool, low_mm: float, hig
         return None
     ends = (cone.radius_at_mm(low_mm), cone.radius_at_mm(high_mm))
     return _frustum(low_mm, high_mm, *(0.0 if radius < COINCIDE_MM else radius for radius in ends))
-
-
-def _cut_flange(body: Any, faces: list[FlangedFace], low_mm: float, high_mm: float) -> Any:
-    """Returns a printed body, made between two heights, cut at those of its flanged faces that carry stock."""
-    outline, stock = faces[0].outline, {face.name: face.stock_mm for face in faces}
-    core = next(face for face in faces if face.name not in FLANGE_FACES)
-    printed_top, beyond = outline.top_mm + stock["flange"], outline.radius_mm + stock["rim"] + 1.0
-    if stock["rim"] > 0.0:
-        kept = _frustum(low_mm, printed_top, outline.radius_mm, outline.radius_mm)
-        body = body - (_frustum(low_mm, printed_top, beyond, beyond) - kept)
-    if stock["flange"] > 0.0:
-        kept = _round_body(outline.core_face(core.stock_mm), True, low_mm, high_mm)
-        body = body - (_frustum(outline.top_mm, printed_top, beyond, beyond) - kept)
-    if core.stock_mm > 0.0:
-        finished = _round_body(outline.core_face(0.0), False, low_mm, high_mm)
-        body = body ^ (finished + _frustum(low_mm, outline.top_mm, beyond, beyond))
-    return body
 
 
 def _flanged_body(faces: list[FlangedFace], printed: bool, low_mm: float, high_mm: float) -> Any:

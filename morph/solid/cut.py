@@ -10,7 +10,7 @@ from morph.body.blank import Blank
 from morph.body.plan import ChannelPlan
 from morph.core.progress import SILENT, Progress
 from morph.geometry.mesh import Mesh, measure_condition, mesh_volume_mm3
-from morph.solid.blank import blank_mesh, cut_stock
+from morph.solid.blank import blank_mesh
 from morph.solid.body import arrays_of, body_from, body_of, require_valid
 from morph.solid.channel import WHAT
 from morph.solid.openings import find_openings
@@ -54,19 +54,22 @@ def make_insert(solid: ChannelSolid, blank: Blank, plan: ChannelPlan, progress: 
     return insert
 
 
-def make_finished(insert: Insert, blank: Blank) -> Mesh | None:
+def make_finished(solid: ChannelSolid, blank: Blank) -> Mesh | None:
     """Returns the insert after its stock is machined off, or None when no face carries stock.
 
-    Only faces are finished: holes and threads are made later and are not cut.
+    It is the finished blank minus the swept channels, not the printed insert cut again: so no cut runs along
+    a face that is there already. Holes and threads are made later and are not cut.
 
     Raises:
         GeometryError: ``solid-empty`` when no metal is left, ``solid-not-closed``.
     """
     if not any(face.stock_mm > 0.0 for face in blank.faces):
         return None
-    body, _ = body_from(insert.mesh.vertices_mm, insert.mesh.triangles, "the insert")
-    low, high = insert.mesh.vertices_mm[:, 2].min(), insert.mesh.vertices_mm[:, 2].max()
-    vertices, triangles, _ = arrays_of(cut_stock(body, blank, (float(low), float(high))))
+    channels, _ = body_of(solid.swept, WHAT)
+    bare = blank_mesh(blank, printed=False)
+    body = body_from(bare.vertices_mm, bare.triangles, "the finished blank")[0] - channels
+    require_valid(body, "the finished insert")
+    vertices, triangles, _ = arrays_of(body)
     return make_file_mesh(vertices, triangles, np.zeros(len(triangles), np.int64), "the finished insert")[0]
 
 

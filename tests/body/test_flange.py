@@ -120,19 +120,6 @@ def test_volume_and_stock_by_closed_form(settings, genus):
         assert condition.closed and condition.genus == genus and condition.bodies == 1
 
 
-@pytest.mark.parametrize("settings", [CYLINDER, CONE, JACKET])
-def test_cutting_the_stock_gives_the_finished_body(settings):
-    from morph.solid.blank import blank_body, cut_stock
-    from morph.solid.body import arrays_of
-
-    names = ("rim", "flange", "foot") + (("outer",) if settings is JACKET else ())
-    it = blank(settings, stock_mm=tuple((name, 1.0) for name in names))
-    vertices, triangles, _ = arrays_of(cut_stock(blank_body(it, printed=True), it, (it.z_mm[0] - 1.0, it.z_mm[1])))
-    corners = vertices[triangles]
-    volume = np.einsum("ij,ij->i", corners[:, 0], np.cross(corners[:, 1], corners[:, 2])).sum() / 6
-    assert volume == pytest.approx(mesh_volume_mm3(blank_mesh(it, printed=False)), rel=4e-6)
-
-
 @pytest.mark.parametrize("name", ["rim", "flange"])
 def test_ports_may_come_out_of_the_flange(name):
     it = blank(port_faces=(name,))
