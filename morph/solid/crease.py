@@ -132,7 +132,7 @@ def _crease_vertices(
 
 def _field_at(field: SampledField, points: Floats, block: Ints, progress: Progress) -> tuple[Floats, Floats]:
     """Returns field (k,) and directions (k, 3) at points (k, 3); `block` counts where a point lies in no active one."""
-    from morph.kernels.crease import field_at_points
+    from morph.kernels.crease_edge import field_at_points
 
     values, directions = np.empty(len(points)), np.empty((len(points), 3))
     arguments = (*field.list_arguments(), field.block_at(points, block), points)
@@ -241,7 +241,7 @@ def _find_splits(
     given_up: Ints, progress: Progress,
 ) -> _Split:  # fmt: skip
     """Returns the edges that cut across a crease between two vertices that are not on it, with the crease's places."""
-    from morph.kernels.crease import split_edges
+    from morph.kernels.crease_edge import split_edges
 
     n = len(vertices)
     edges, _, _ = _cutting_edges(surface, triangles, sharp, turns)
