@@ -52,7 +52,11 @@ def check_leads(lines: Centrelines) -> list[Verdict]:
     narrow = [lines.branch_of(at).id for value, at in shares if value < LEAST_SHARE]
     lead = lines.branch_of(sample)
     text = f"The narrowest lead, {lead.id}, is {share:.2f} of its port's bore ({lines.bore_mm[sample]:.2f} mm)"
-    text += f"; {len(narrow)} of {len(shares)} leads are below {LEAST_SHARE:.2f}." if narrow else "."
+    text += (
+        f"; {len(narrow)} of {len(shares)} leads {'is' if len(narrow) == 1 else 'are'} below {LEAST_SHARE:.2f}."
+        if narrow
+        else "."
+    )
     return [
         Verdict(
             "lead-narrow",
