@@ -168,7 +168,11 @@ def judge_path(
     faces = measure_room(around.blank, around.limits, xyz_mm, face.name, opening)
     beside, by = room_between(around, xyz_mm, arc, wanted)
     room = with_neighbours(faces, beside, by, [strand.id for strand in around.network.strands])
-    share = room.room_mm / np.maximum(_due(faces.room_mm, needed, arc, bore_mm), 1e-9)
+    # The neck is room given up by the bore; where the least bore itself has none, a wall would be short.
+    least = around.limits.least_bore_mm
+    due = _due(faces.room_mm, needed, arc, bore_mm)
+    share = room.room_mm / np.maximum(due, 1e-9)
+    share = np.where(room.room_mm < np.minimum(due, least) - 1e-6, NECK * share, share)
     worst = int(share.argmin())
-    bore = np.minimum(wanted, np.maximum(room.room_mm, around.limits.least_bore_mm))
+    bore = np.minimum(wanted, np.maximum(room.room_mm, least))
     return Judged(xyz_mm, needed, lower_to_taper(bore, arc), room, float(share[worst]), worst)
