@@ -59,7 +59,7 @@ LEAST_BEND_BORES = 1.5
 STRAIGHT_BORES = 0.5
 """Least straight end square to the face, in bores, so that an end can be machined (common practice, no source)."""
 
-BEND_MARGIN = 1.12
+BEND_MARGIN = 1.105
 """Bends are built this much wider than asked: a bend that clears its limit by less than a tenth is watched, and
 it is judged on samples up to 1 mm apart."""
 
