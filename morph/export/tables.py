@@ -134,10 +134,10 @@ def ports_csv(plan: ChannelPlan, blank: Blank) -> bytes:
     of a thread. A plain end is used as printed; `drill_mm` is the bore that a drill may follow there and
     `drill_depth_mm` how far the lead stays straight behind the finished face. For a thread they are the tapping
     drill and its depth (`thread_depth_mm` plus `run_out_mm`), and `drill_stock_mm` what it takes per side at least.
-    A seal groove is cut later and not drilled. `land_mm` is the circle of the face that stays flat. `wall_around_mm` is the
-    least metal between the rim of the opening (from the major diameter over the drill's depth; from the groove) and
-    the next face, hole or exit, named in `wall_around_to`. Places and depths are from the finished face; `stock_mm`
-    lies on it.
+    A seal groove is cut later and not drilled. `land_mm` is the circle of the face that stays flat.
+    `wall_around_mm` is the least metal between the rim of the opening (from the major diameter over the drill's
+    depth; from the groove) and the next face, hole or exit, named in `wall_around_to`. Places and depths are from
+    the finished face; `stock_mm` lies on it.
     """
     lead = {branch.id: branch for branch in plan.branches}
     rows: list[list[Cell]] = []

@@ -168,29 +168,48 @@ def gather_planes(
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
+def settle_on_planes(
+    b: int, x: int, y: int, z: int, point: Floats, places: Floats, planes: Floats, weights: Floats, n: int, h_mm: float,
+    neighbours: Ints, cases: NDArray[np.uint16], n_loops: Ints, low: Floats, high: Floats, step: Floats,
+    pieces: Floats, owner: Ints, nodes: Floats, blend_mm: float, near: Ints, n_near: int,
+    run_distance: Floats, run_piece: Ints, gradient: Floats,
+) -> float:  # fmt: skip
+    """Moves `point (3,)` to where its n planes meet, taking them anew from closer by; returns the planes' cosine.
+
+    A cosine above NO_CREASE means that the planes are one: there is no crease, and `point` is not settled.
+    """
+    cosine = 1.0
+    share = 1.0
+    for turn in range(ROUNDS):
+        if turn > 0:
+            for i in range(n):
+                for a in range(3):
+                    step[a] = point[a] + share * (places[i, a] - point[a])
+                retake_plane(
+                    step, planes[i], pieces, owner, nodes, blend_mm, near, n_near,
+                    run_distance, run_piece, gradient,
+                )  # fmt: skip
+        cosine = step_to_planes(point, planes, weights, n, 0.01 if turn == 0 else 0.003, step)
+        if cosine > NO_CREASE:
+            break
+        for a in range(3):
+            point[a] += step[a]
+        if turn == 0:
+            open_one_face(b, x, y, z, point, h_mm, neighbours, cases, n_loops, low, high)
+        for a in range(3):
+            point[a] = min(max(point[a], low[a]), high[a])
+        share *= CLOSER
+    return cosine
+
+
+@njit(cache=True, nogil=True, error_model="numpy")
 def place_on_creases(
-    first: int,
-    last: int,
-    corner: Ints,
-    start: Ints,
-    length: Ints,
-    near: Ints,
-    pieces: Floats,
-    owner: Ints,
-    nodes: Floats,
-    blend_mm: float,
-    origin: Floats,
-    h_mm: float,
-    cells: Ints,
-    cases: NDArray[np.uint16],
-    neighbours: Ints,
-    n_loops: Ints,
-    first_vertex: NDArray[np.int32],
-    vertices: Floats,
-    normals: NDArray[np.float32],
-    placed: Floats,
-    found: NDArray[np.uint8],
-) -> None:
+    first: int, last: int, corner: Ints, start: Ints, length: Ints, near: Ints,
+    pieces: Floats, owner: Ints, nodes: Floats, blend_mm: float, origin: Floats, h_mm: float,
+    cells: Ints, cases: NDArray[np.uint16], neighbours: Ints, n_loops: Ints,
+    first_vertex: NDArray[np.int32], vertices: Floats, normals: NDArray[np.float32],
+    placed: Floats, found: NDArray[np.uint8],
+) -> None:  # fmt: skip
     """Finds the crease vertices of the cells `cells[first:last]`, each block * 512 + cell.
 
     The vertex may leave its cell through one face if no surface passes the cell behind it. `placed (k, 3)`
@@ -229,26 +248,10 @@ def place_on_creases(
                 point[a] = vertices[own, a]
                 low[a] = origin[a] + (corner[b, a] + (x, y, z)[a] + 0.001) * h_mm
                 high[a] = low[a] + 0.998 * h_mm
-            share = 1.0
-            for turn in range(ROUNDS):
-                if turn > 0:
-                    for i in range(n):
-                        for a in range(3):
-                            step[a] = point[a] + share * (places[i, a] - point[a])
-                        retake_plane(
-                            step, planes[i], pieces, owner, nodes, blend_mm, list_, n_near,
-                            run_distance, run_piece, gradient,
-                        )  # fmt: skip
-                cosine = step_to_planes(point, planes, weights, n, 0.01 if turn == 0 else 0.003, step)
-                if cosine > NO_CREASE:
-                    break
-                for a in range(3):
-                    point[a] += step[a]
-                if turn == 0:
-                    open_one_face(b, x, y, z, point, h_mm, neighbours, cases, n_loops, low, high)
-                for a in range(3):
-                    point[a] = min(max(point[a], low[a]), high[a])
-                share *= CLOSER
+            cosine = settle_on_planes(
+                b, x, y, z, point, places, planes, weights, n, h_mm, neighbours, cases, n_loops, low, high, step,
+                pieces, owner, nodes, blend_mm, list_, n_near, run_distance, run_piece, gradient,
+            )  # fmt: skip
             if cosine > NO_CREASE:
                 break
             f, _ = field_at(

@@ -42,24 +42,36 @@ def field_at_points(
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
+def meet_planes(edge: Ints, vertices: Floats, normals: NDArray[np.float32], planes: Floats, middle: Floats) -> float:
+    """Returns the squared length (mm2) of an edge; `planes (2, 4)` receives its ends' planes (normal, offset).
+
+    `middle (3,)` receives the place on the edge that is equally far from both planes, the midpoint where there is none.
+    """
+    for end in range(2):
+        planes[end, 3] = 0.0
+        for a in range(3):
+            planes[end, a] = normals[edge[end], a]
+            planes[end, 3] += planes[end, a] * vertices[edge[end], a]
+    one = -planes[1, 3]
+    two = -planes[0, 3]
+    for a in range(3):
+        one += planes[1, a] * vertices[edge[0], a]
+        two += planes[0, a] * vertices[edge[1], a]
+    along = one / (one + two) if one * two > 0.0 else 0.5
+    size = 0.0
+    for a in range(3):
+        middle[a] = (1.0 - along) * vertices[edge[0], a] + along * vertices[edge[1], a]
+        size += (vertices[edge[0], a] - vertices[edge[1], a]) ** 2
+    return size
+
+
+@njit(cache=True, nogil=True, error_model="numpy")
 def split_edges(
-    first: int,
-    last: int,
-    start: Ints,
-    length: Ints,
-    near: Ints,
-    pieces: Floats,
-    owner: Ints,
-    nodes: Floats,
-    blend_mm: float,
-    h_mm: float,
-    block: Ints,
-    edges: Ints,
-    vertices: Floats,
-    normals: NDArray[np.float32],
-    placed: Floats,
-    found: NDArray[np.uint8],
-) -> None:
+    first: int, last: int, start: Ints, length: Ints, near: Ints,
+    pieces: Floats, owner: Ints, nodes: Floats, blend_mm: float, h_mm: float,
+    block: Ints, edges: Ints, vertices: Floats, normals: NDArray[np.float32],
+    placed: Floats, found: NDArray[np.uint8],
+) -> None:  # fmt: skip
     """Finds the crease between the ends of `edges[first:last]` (k, 2), whose normals differ.
 
     Least squares over the two planes at the ends, nearest to where the edge is equally far from both, so that new
@@ -79,22 +91,9 @@ def split_edges(
         list_ = near[start[b] : start[b] + n_near]
         run_distance = np.empty(n_near)
         run_piece = np.empty(n_near, np.int64)
-        size = 0.0
-        for end in range(2):
-            planes[end, 3] = 0.0
-            for a in range(3):
-                planes[end, a] = normals[edges[w, end], a]
-                planes[end, 3] += planes[end, a] * vertices[edges[w, end], a]
-        one = -planes[1, 3]
-        two = -planes[0, 3]
+        size = meet_planes(edges[w], vertices, normals, planes, middle)
         for a in range(3):
-            one += planes[1, a] * vertices[edges[w, 0], a]
-            two += planes[0, a] * vertices[edges[w, 1], a]
-        along = one / (one + two) if one * two > 0.0 else 0.5
-        for a in range(3):
-            middle[a] = (1.0 - along) * vertices[edges[w, 0], a] + along * vertices[edges[w, 1], a]
             point[a] = middle[a]
-            size += (vertices[edges[w, 0], a] - vertices[edges[w, 1], a]) ** 2
         f, _ = field_at(
             point[0], point[1], point[2],
             pieces, owner, nodes, blend_mm, list_, n_near, run_distance, run_piece, gradient,

@@ -149,29 +149,12 @@ def count_cells(
 
 @njit(cache=True, nogil=True, error_model="numpy")
 def place_vertices(
-    first: int,
-    last: int,
-    corner: Ints,
-    start: Ints,
-    length: Ints,
-    near: Ints,
-    pieces: Floats,
-    owner: Ints,
-    nodes: Floats,
-    blend_mm: float,
-    origin: Floats,
-    h_mm: float,
-    values: NDArray[np.float32],
-    cases: NDArray[np.uint16],
-    loop_of: Ints,
-    n_loops: Ints,
-    offset: Ints,
-    bias: float,
-    steps: int,
-    first_vertex: NDArray[np.int32],
-    vertices: Floats,
-    normals: NDArray[np.float32],
-) -> None:
+    first: int, last: int, corner: Ints, start: Ints, length: Ints, near: Ints,
+    pieces: Floats, owner: Ints, nodes: Floats, blend_mm: float, origin: Floats, h_mm: float,
+    values: NDArray[np.float32], cases: NDArray[np.uint16], loop_of: Ints, n_loops: Ints, offset: Ints,
+    bias: float, steps: int,
+    first_vertex: NDArray[np.int32], vertices: Floats, normals: NDArray[np.float32],
+) -> None:  # fmt: skip
     """Places the vertices of the blocks first..last - 1.
 
     A vertex starts at the mean of its loop's edge crossings and is moved `steps` times along the gradient to the
