@@ -23,10 +23,11 @@ from morph.body.neighbour import (
 from morph.body.room import wall_band_mm
 from morph.body.section import reach_mm
 from morph.check.across import measure_across
-from morph.check.centreline import Centrelines, Place, network_of
+from morph.check.between_rows import SEARCH_RATIO, BetweenFinding, between_row, merge_row, rib_row, wide_row
+from morph.check.centreline import Centrelines, network_of
 from morph.check.channel_wall import ChannelWall
 from morph.check.island import IslandFinding, find_islands, island_row
-from morph.check.rows import MEASURE_MM, MOST_NAMED, Limit, judge_length, name_list, place, worse_limit
+from morph.check.rows import MEASURE_MM, MOST_NAMED, Limit, judge_length, place, worse_limit
 from morph.check.subject import CheckSubject
 from morph.core.arrays import Bools, Floats, Ints, unit_rows
 from morph.core.tolerance import BUILD_MM
@@ -43,31 +44,6 @@ NEARLY_MM = 0.25
 
 STRAIGHT_MM = 0.02
 """Two places face each other straight across when neither is nearer to a neighbour of the other by more than this."""
-
-SEARCH_RATIO = 2.0
-"""Walls up to this many limits are looked for; wider ones are reported as wider."""
-
-
-@dataclass(frozen=True, slots=True)
-class BetweenFinding:
-    """The thinnest wall between two branches (or two runs of one), or rib.
-
-    Args:
-        branch_ids: the two branches. samples: one on each.
-        wall_mm: the smaller of both routes; centreline_mm, mesh_mm: each (inf where not measured).
-        xyz_mm: the middle of the metal.
-        rib: not a wall by the rule, only the metal of a short run beside a junction.
-        places: samples of the same pair that are nearly as near.
-    """
-
-    branch_ids: tuple[str, str]
-    samples: tuple[int, int]
-    wall_mm: float
-    centreline_mm: float
-    mesh_mm: float
-    xyz_mm: Place
-    rib: bool
-    places: tuple[tuple[int, int], ...] = ()
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -252,13 +228,13 @@ def check_between(subject: CheckSubject, lines: Centrelines, wall: ChannelWall |
     rows = _merge_rows(subject, walls, thin_ids, lines)
     walls = [item for item in walls if item.wall_mm > 0.0]
     thin = [item for item in walls if judge_length(item.wall_mm, limit.value, band) is Outcome.FAIL]
-    rows += [_between_row(item, len(thin), limit, band, lines) for item in (thin or walls[:1])[:MOST_NAMED]]
+    rows += [between_row(item, len(thin), limit, band, lines) for item in (thin or walls[:1])[:MOST_NAMED]]
     rows += _island_rows(islands, _failed(rows), limit, band)
     side = [item for item in found if item.rib and item.wall_mm < limit.value + band]
     side = [item for item in side if not any(set(item.branch_ids) <= ids for ids in _failed(rows))]
     if side:
-        rows.append(_rib_row(side, limit, subject, lines))
-    return rows if rows else [_wide_row(limit, band)]
+        rows.append(rib_row(side, limit, subject, lines))
+    return rows if rows else [wide_row(limit, band)]
 
 
 def _failed(rows: list[Verdict]) -> list[set[str]]:
@@ -314,90 +290,4 @@ def _merge_rows(
         if not any(set(merge.branch_ids) <= ids for ids in measured):
             sheet = lines.sheet_of(int(np.argmin(((lines.xyz_mm - merge.xyz_mm) ** 2).sum(axis=1))))
             found.append((merge.branch_ids, merge.wall_mm, merge.xyz_mm, sheet))
-    return [_merge_row(subject, *item) for item in sorted(found, key=lambda item: (item[1], item[0]))]
-
-
-def _merge_row(
-    subject: CheckSubject, ids: tuple[str, str], wall_mm: float, xyz_mm: Place, sheet_mm: tuple[float, float] | None
-) -> Verdict:
-    process, band_mm = subject.profile.wall_mm, wall_band_mm(subject.profile)
-    how = f"overlap by {-wall_mm:.2f} mm" if wall_mm <= 0.0 else f"keep only {wall_mm:.2f} mm of metal"
-    pair = f"{ids[0]} and {ids[1]}" if ids[0] != ids[1] else f"Two runs of {ids[0]}"
-    return Verdict(
-        "branches-merge",
-        Outcome.FAIL,
-        f"{pair} {how} although the layout keeps them apart; the bores could not be lowered further. "
-        f"A wall prints from {process.value:.2f} mm on, after a band of {band_mm:.2f} mm.",
-        value=wall_mm,
-        unit="mm",
-        limit=process.value,
-        band=band_mm,
-        source=f"process profile wall_mm: {process.source}",
-        branch_ids=ids if ids[0] != ids[1] else ids[:1],
-        sheet_mm=sheet_mm,
-        xyz_mm=xyz_mm,
-        hint="Lower bore_scale, enlarge size_mm, or set level = keep-area with a smaller area_ratio.",
-    )
-
-
-def _between_row(item: BetweenFinding, n_thin: int, limit: Limit, band_mm: float, lines: Centrelines) -> Verdict:
-    outcome = judge_length(item.wall_mm, limit.value, band_mm)
-    a, b = item.branch_ids
-    pair = f"between two runs of {a}" if a == b else f"between {a} and {b}"
-    mesh = (
-        f"straight across on the written mesh {item.mesh_mm:.2f} mm"
-        if np.isfinite(item.mesh_mm)
-        else "not measured on the mesh"
-    )
-    others = f" {n_thin} pairs of branches are too near each other." if n_thin > 1 else ""
-    return Verdict(
-        "wall-between",
-        outcome,
-        f"The wall {pair} is {item.wall_mm:.2f} mm (centreline {item.centreline_mm:.2f} mm, {mesh}); "
-        f"it must hold {limit.words} after a band of {band_mm:.2f} mm.{others}",
-        value=item.wall_mm,
-        unit="mm",
-        limit=limit.value,
-        band=band_mm,
-        source=limit.source,
-        branch_ids=(a,) if a == b else (a, b),
-        sheet_mm=lines.sheet_of(item.samples[0]) or lines.sheet_of(item.samples[1]),
-        xyz_mm=item.xyz_mm,
-        hint="" if outcome is Outcome.PASS else "Lower the bores there (bore_scale, bore_range_mm) or enlarge size_mm.",
-    )
-
-
-def _wide_row(limit: Limit, band_mm: float) -> Verdict:
-    return Verdict(
-        "wall-between",
-        Outcome.PASS,
-        f"No two channels come within {SEARCH_RATIO * limit.value:.2f} mm of each other away from their junctions; "
-        f"the wall must hold {limit.words} after a band of {band_mm:.2f} mm.",
-        unit="mm",
-        limit=limit.value,
-        band=band_mm,
-        source=limit.source,
-    )
-
-
-def _rib_row(side: list[BetweenFinding], limit: Limit, subject: CheckSubject, lines: Centrelines) -> Verdict:
-    """Returns the row of the ribs, thinnest first: fail when one does not print, watch below the service wall."""
-    worst, process, band_mm = side[0], subject.profile.wall_mm, wall_band_mm(subject.profile)
-    prints = judge_length(worst.wall_mm, process.value, band_mm) is not Outcome.FAIL
-    pairs = name_list([f"{a} and {b}" if a != b else a for a, b in (item.branch_ids for item in side)])
-    return Verdict(
-        "thin-rib",
-        Outcome.WATCH if prints else Outcome.FAIL,
-        f"Beside a junction the metal between {pairs} runs down to {worst.wall_mm:.2f} mm: a rib with the same coolant "
-        f"on both sides, too short for a wall. It prints from {process.value:.2f} mm on; a wall must hold "
-        f"{limit.value:.2f} mm; both after a band of {band_mm:.2f} mm.",
-        value=worst.wall_mm,
-        unit="mm",
-        limit=limit.value if prints else process.value,
-        band=band_mm,
-        source=limit.source if prints else f"process profile wall_mm: {process.source}",
-        branch_ids=tuple(dict.fromkeys(name for item in side for name in item.branch_ids)),
-        sheet_mm=lines.sheet_of(worst.samples[0]) or lines.sheet_of(worst.samples[1]),
-        xyz_mm=worst.xyz_mm,
-        hint="Let the branches part at a wider angle, or accept the rib." if prints else "Lower the bores there.",
-    )
+    return [merge_row(subject, *item) for item in sorted(found, key=lambda item: (item[1], item[0]))]

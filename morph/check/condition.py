@@ -97,17 +97,21 @@ def check_condition(insert: Insert, solid: ChannelSolid, plan: ChannelPlan) -> l
             split,
         ),
     ]
+    return rows + _genus_rows(insert, plan, whole, channels)
+
+
+def _genus_rows(insert: Insert, plan: ChannelPlan, whole: MeshCondition, channels: MeshCondition) -> list[Verdict]:
+    """Returns the `genus` rows of channels and insert, or one row that says why the genus tells nothing."""
     # A fillet may bridge less metal than its radius.
     merged = any(merge.wall_mm <= plan.blend_mm for merge in plan.merges)
     if merged or not (whole.closed and channels.closed):
         why = "branches run together" if merged else "a mesh is not closed"
-        rows.append(Verdict("genus", Outcome.NOT_CHECKED, f"The genus says nothing while {why}.", source=COUNTED))
-        return rows
+        return [Verdict("genus", Outcome.NOT_CHECKED, f"The genus says nothing while {why}.", source=COUNTED)]
     circuits = circuit_loops(plan)
     loops = expected_channel_genus(circuits)
     expected = expected_genus(insert.blank_genus, circuits)
     hint = "A loop was closed or opened that the layout does not have; look at wall-between and the openings."
-    rows.append(
+    return [
         _count_row(
             "genus",
             f"The channels have genus {channels.genus}; the plan has {counted(loops, 'loop')}.",
@@ -115,9 +119,7 @@ def check_condition(insert: Insert, solid: ChannelSolid, plan: ChannelPlan) -> l
             loops,
             "Euler's formula: the genus of a circuit is its loops",
             hint,
-        )
-    )
-    rows.append(
+        ),
         _count_row(
             "genus",
             f"The insert has genus {whole.genus}; {expected} by its loops and openings.",
@@ -125,6 +127,5 @@ def check_condition(insert: Insert, solid: ChannelSolid, plan: ChannelPlan) -> l
             expected,
             "Euler's formula: blank + sum over circuits of (loops + openings - 1)",
             hint,
-        )
-    )
-    return rows
+        ),
+    ]
