@@ -12,8 +12,6 @@ from morph.settings.job import SectionSettings, ServiceSettings
 from tests.body.scenes import Scene
 from tests.surface.graphs import make_graph, make_profile
 
-pytestmark = pytest.mark.quick
-
 SIZE = (70.0, 60.0)
 LIMIT = 3.0
 BAND = wall_band_mm(make_profile())

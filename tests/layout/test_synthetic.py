@@ -16,7 +16,6 @@ LEAST_RIGHT_CUT = 108
 MEDIAN_ERROR_PX = 0.05
 
 
-@pytest.mark.quick
 @pytest.mark.parametrize("mode", MODES)
 def test_the_graph_is_right_on_a_few_of_each_mode(mode):
     outcomes = [run_case(make_case(seed, mode)) for seed in QUICK_SEEDS]

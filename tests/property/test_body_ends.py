@@ -11,8 +11,6 @@ from morph.core.errors import MorphError
 from morph.settings.job import FaceSealEnd, PlainEnd, ThreadEnd
 from tests.property.test_body_leads import random_scene
 
-pytestmark = pytest.mark.quick
-
 SEEDS = range(20)
 WALL_MM = 3.0 + 0.2
 """The service wall and the bands of the test profile: 0.1 mm position, half of 0.2 mm bore."""

@@ -9,8 +9,6 @@ from morph.layout.extract import find_graph
 from morph.layout.graph import count_loops
 from morph.settings.job import LayoutSettings, PortSettings, Role, Samples, Seam
 
-pytestmark = pytest.mark.quick
-
 SEEDS = [0, 2, 3, 11, 25, 34]
 PITCH_MM = 0.5
 

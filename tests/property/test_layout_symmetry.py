@@ -14,8 +14,6 @@ from tests.layout.cases import inputs
 from tests.layout.drawing import drawn, ports, settings
 from tests.layout.synthetic import make_case
 
-pytestmark = pytest.mark.quick
-
 MOVES = {
     "left-right": (lambda v: v[:, ::-1], lambda p, w, h: (w - p[0], p[1])),
     "up-down": (lambda v: v[::-1], lambda p, w, h: (p[0], h - p[1])),
