@@ -30,8 +30,6 @@ from tests.body import measure
 from tests.body.scenes import Scene
 from tests.surface.graphs import cross, make_profile, straight_line
 
-pytestmark = pytest.mark.quick
-
 DEEP = CarrierBlankSettings((45.0, 15.0))
 JACKET = {"metal": Metal.AWAY_FROM_AXIS, "radius_mm": 30.0}
 BOX = {"shape": BoxBlankSettings((-60, -55, -52), (60, 55, 52)), "port_faces": ("-x", "+y", "foot"), **JACKET}

@@ -11,7 +11,7 @@ import pytest
 
 from tests.cli.scene import tree
 
-pytestmark = [pytest.mark.quick, pytest.mark.skipif(os.name != "posix", reason="needs fork and signals")]
+pytestmark = pytest.mark.skipif(os.name != "posix", reason="needs fork and signals")
 
 DEAF = "sum(range(10**12))"  # one call, hours long, that never looks at signals
 PRELUDE = """
