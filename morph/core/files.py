@@ -9,6 +9,7 @@ being put back when a move fails. Whatever happens, the hidden folder is removed
 from __future__ import annotations
 
 import errno
+import itertools
 import os
 import shutil
 from collections.abc import Iterator, Mapping
@@ -19,6 +20,7 @@ from typing import NoReturn
 from morph.core.errors import ExportError
 
 _NO_SPACE = {errno.ENOSPC, getattr(errno, "EDQUOT", errno.ENOSPC), errno.EFBIG}
+_STAGE_NUMBER = itertools.count()
 
 
 def write_folder(target: Path, files: Mapping[str, bytes], *, force: bool = False) -> list[Path]:
@@ -220,15 +222,13 @@ def _stage_prefix(folder: Path) -> str:
 
 def _new_folder(folder: Path) -> Path:
     base = folder if folder.is_dir() else folder.parent
-    number = 0
-    while True:
-        stage = base / f"{_stage_prefix(folder)}{os.getpid()}-{number}"
+    while True:  # a number is never used twice: a published stage's name must not be taken by another thread
+        stage = base / f"{_stage_prefix(folder)}{os.getpid()}-{next(_STAGE_NUMBER)}"
         try:
             stage.mkdir()
         except FileExistsError:
-            number += 1
-        else:
-            return stage
+            continue
+        return stage
 
 
 def remove_partial(target: Path, process: int) -> None:
