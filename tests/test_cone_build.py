@@ -28,7 +28,6 @@ metal = "toward-axis"
 depth_mm = 9.0
 map = "flat"
 [section]
-shape = "round"
 bore_range_mm = [3.5, 5.0]
 [blank]
 margin_mm = [14.0, 12.0]

@@ -28,7 +28,6 @@ at_mm = [{back!r}, 0.0]
 depth_mm = 9.0
 {carrier}
 [section]
-shape = "round"
 bore_range_mm = [3.5, 4.5]
 [blank]
 margin_mm = [14.0, 12.0]

@@ -179,6 +179,7 @@ def _job_text(guess: _Guess, relative: str, name: str) -> str:
         f"depth_mm = {depth_mm:g}  # face to channel centreline; holds bores up to {2.0 * depth_mm / 3.0:.1f} mm",
         "",
         "[section]",
+        'shape = "auto"  # round where a round ceiling prints freely, else roofed; or round, roofed, arched',
         f"bore_range_mm = [{BORE_RANGE_MM[0]:g}, {BORE_RANGE_MM[1]:g}]  # the drawing's own bores, kept within this",
         "",
         "[print]",

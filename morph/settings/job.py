@@ -195,7 +195,7 @@ class SectionShape(StrEnum):
 class SectionSettings:
     """The [section] table; `bore_range_mm` None means from service and process."""
 
-    shape: SectionShape = SectionShape.ROUND
+    shape: SectionShape = SectionShape.AUTO
     bore_scale: float = 1.0
     bore_range_mm: tuple[float, float] | None = None
     blend_mm: float = 0.6

@@ -22,7 +22,7 @@ def job_text(end=END, margin="[46.0, 10.0]"):
         ('role = "in"\n', f'role = "in"\n{end}'),
         ('role = "out"\n', f'role = "out"\n{end}'),
         ("margin_mm = [12.0, 10.0]", f"margin_mm = {margin}\nstock_mm = {{ foot = 1.0 }}"),
-        ('shape = "round"', 'shape = "roofed"'),
+        ("[section]\n", '[section]\nshape = "roofed"\n'),
     ):
         assert old in text
         text = text.replace(old, new, 1)
