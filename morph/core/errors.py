@@ -43,6 +43,10 @@ class GeometryError(MorphError):
     """The shapes asked for cannot exist together."""
 
 
+class FlowError(MorphError):
+    """The coolant cannot flow as asked."""
+
+
 class ExportError(MorphError):
     """A result could not be written."""
 

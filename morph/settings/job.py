@@ -282,6 +282,84 @@ class QualitySettings:
     h_mm: float | None = None
 
 
+class Balance(StrEnum):
+    """What the bores are changed for: nothing, equal velocities, equal flows, or flow in proportion to heat."""
+
+    NONE = "none"
+    EQUAL_VELOCITY = "equal-velocity"
+    EQUAL_FLOW = "equal-flow"
+    BY_HEAT = "by-heat"
+
+
+class Supply(StrEnum):
+    """Whether all circuits hang in parallel on one supply, or each has the same supply for itself."""
+
+    SHARED = "shared"
+    PER_CIRCUIT = "per-circuit"
+
+
+class FluidKind(StrEnum):
+    """What the coolant is; own means that the job gives its properties."""
+
+    WATER = "water"
+    ETHYLENE_GLYCOL = "ethylene-glycol"
+    PROPYLENE_GLYCOL = "propylene-glycol"
+    OWN = "own"
+
+
+@dataclass(frozen=True, slots=True)
+class OwnFluid:
+    """Properties of the user's own coolant at its inlet temperature; freezing and boiling None: not checked."""
+
+    density_kg_m3: float
+    viscosity_mpa_s: float
+    conductivity_w_mk: float
+    heat_capacity_j_kgk: float
+    freezes_c: float | None = None
+    boils_c: float | None = None
+
+
+@dataclass(frozen=True, slots=True)
+class FluidSettings:
+    """The coolant: its kind, glycol in per cent of mass (0 for others), the user's own properties or None."""
+
+    kind: FluidKind = FluidKind.WATER
+    glycol_percent: float = 0.0
+    own: OwnFluid | None = None
+
+
+@dataclass(frozen=True, slots=True)
+class CoolantSettings:
+    """The [coolant] table; exactly one of flow_l_min, drop_bar and pump is given.
+
+    Args:
+        fluid: what flows. inlet_c: its temperature where it enters.
+        flow_l_min: whole flow through the supply. drop_bar: between feed and return, hoses included. pump: path of its
+            curve, flow in L/min and head in bar.
+        supply: one supply for all circuits in parallel, or the same one for each.
+        balance: what the bores are changed for. reversible: both flow directions count as one.
+        flux: for by-heat, the path of an image of the heat flux on the sheet; None: uniform.
+        check_3d: compare with a laminar 3D solution on the solid.
+        hose_mm: bore and length of the hoses in series with each in port, feed and return counted together.
+        pressure_bar: gauge pressure where coolant enters; None: it leaves at atmospheric pressure.
+        roughness_um: sand-grain roughness everywhere; None: from the process profile.
+    """
+
+    fluid: FluidSettings = field(default_factory=FluidSettings)
+    inlet_c: float = 20.0
+    flow_l_min: float | None = None
+    drop_bar: float | None = None
+    pump: Path | None = None
+    supply: Supply = Supply.SHARED
+    balance: Balance = Balance.NONE
+    reversible: bool = False
+    flux: Path | None = None
+    check_3d: bool = False
+    hose_mm: tuple[float, float] | None = None
+    pressure_bar: float | None = None
+    roughness_um: float | None = None
+
+
 @dataclass(frozen=True, slots=True)
 class Job:
     """A whole valid job; `file` is the job's path (its base name alone ever reaches an output)."""
@@ -297,3 +375,4 @@ class Job:
     blank: BlankSettings = field(default_factory=BlankSettings)
     holes: tuple[HoleSettings, ...] = ()
     quality: QualitySettings = field(default_factory=QualitySettings)
+    coolant: CoolantSettings | None = None
