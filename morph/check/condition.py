@@ -9,9 +9,9 @@ from __future__ import annotations
 from morph.body.plan import ChannelPlan
 from morph.core.verdict import Outcome, Verdict
 from morph.core.words import counted
+from morph.geometry.crossings import measure_crossings
 from morph.geometry.mesh import Mesh, MeshCondition, measure_condition
 from morph.layout.graph import count_loops
-from morph.solid.crossings import measure_crossings
 from morph.solid.cut import expected_channel_genus, expected_genus
 from morph.solid.result import ChannelSolid, Insert
 

@@ -16,11 +16,11 @@ from morph.core.arrays import Bools, Floats, Ints
 from morph.core.errors import GeometryError
 from morph.core.progress import SILENT, Progress
 from morph.core.tolerance import SIMPLIFY_MM
+from morph.geometry.crossings import Crossings, measure_crossings
 from morph.geometry.mesh import Mesh
 from morph.solid.blank import blank_body
 from morph.solid.body import arrays_of, body_of, require_valid
 from morph.solid.crease import sharpen
-from morph.solid.crossings import Crossings, measure_crossings
 from morph.solid.extract import extract_surface
 from morph.solid.field import SampledField, sample_field
 from morph.solid.result import ChannelSolid

@@ -13,11 +13,11 @@ import numpy as np
 
 from morph.core.arrays import Bools, Floats, Ints
 from morph.core.progress import SILENT, Progress
+from morph.geometry.crossings import measure_crossings
 from morph.geometry.mesh import Mesh
-from morph.solid.crossings import measure_crossings
+from morph.geometry.slabs import run_slabs
 from morph.solid.extract import Surface
 from morph.solid.field import BLOCKS_PER_SLAB, SampledField
-from morph.solid.slabs import run_slabs
 from morph.solid.tidy import round_to_file
 
 SMOOTHEST_COSINE = 0.93

@@ -10,8 +10,8 @@ from numpy.typing import NDArray
 
 from morph.core.arrays import Floats, Ints
 from morph.core.progress import Progress
+from morph.geometry.slabs import run_slabs
 from morph.solid.field import BLOCKS_PER_SLAB, SampledField
-from morph.solid.slabs import run_slabs
 
 CHORD_BIAS = 0.07
 """Vertices on a round wall of radius r are placed at the level 0.07 h^2 / r: makes up for the chords (measured)."""

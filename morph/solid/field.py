@@ -20,8 +20,8 @@ from morph.body.section import SectionRule, hydraulic_diameter_mm, section_area_
 from morph.core.arrays import Floats, Ints
 from morph.core.errors import GeometryError
 from morph.core.progress import Progress
+from morph.geometry.slabs import run_slabs
 from morph.settings.job import QualitySettings, SectionShape
-from morph.solid.slabs import run_slabs
 from morph.solid.sweep import Sweep
 
 CELLS_PER_BORE = 12.0

@@ -3,9 +3,9 @@
 import numpy as np
 import pytest
 
+from morph.geometry.crossings import measure_crossings
 from morph.geometry.mesh import Mesh
 from morph.kernels.crossing import triangles_cross
-from morph.solid.crossings import measure_crossings
 
 
 def twin(mesh):

@@ -7,10 +7,10 @@ import pytest
 
 from morph.core.errors import Cancelled, GeometryError
 from morph.core.fingerprint import fingerprint
+from morph.geometry.crossings import measure_crossings
 from morph.geometry.mesh import Mesh, measure_condition, mesh_volume_mm3
 from morph.settings.job import QualitySettings
 from morph.solid.channel import make_channel_solid, require_uncrossed
-from morph.solid.crossings import measure_crossings
 from morph.solid.cut import expected_channel_genus, expected_genus, make_insert
 from morph.solid.field import choose_h_mm
 from tests.solid import plans

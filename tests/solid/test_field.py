@@ -8,9 +8,9 @@ import pytest
 
 from morph.core.errors import GeometryError
 from morph.core.progress import SILENT
+from morph.geometry.slabs import run_slabs
 from morph.settings.job import QualitySettings
 from morph.solid.field import BYTES_PER_TRIANGLE, MOST_BYTES, MOST_TRIANGLES, choose_h_mm, predict_triangles
-from morph.solid.slabs import run_slabs
 from morph.solid.sweep import make_sweep
 from tests.solid import plans
 

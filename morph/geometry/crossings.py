@@ -9,7 +9,7 @@ import numpy as np
 from morph.core.arrays import Bools, Floats, Ints
 from morph.core.progress import SILENT, Progress
 from morph.geometry.mesh import Mesh
-from morph.solid.slabs import run_slabs
+from morph.geometry.slabs import run_slabs
 
 LEAVES_PER_SLAB = 4096
 GRID_BITS = 20
