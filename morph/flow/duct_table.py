@@ -27,8 +27,7 @@ from morph.flow.duct_constants import ARCHED, ROOFED
 from morph.flow.duct_outline import arched_outline, roofed_outline
 from morph.settings.job import SectionShape
 
-ANGLES_DEG = (0.0, 8.0, 16.0, 24.0, 32.0, 40.0, 48.0, 56.0, 62.0, 68.0, 72.0, 75.0, 78.0, 80.0, 82.0, 84.0, 85.5)
-ANGLES_DEG += (87.0, 88.0, 89.0)
+ANGLES_DEG: tuple[float, ...] = (0, 8, 16, 24, 32, 40, 48, 56, 62, 68, 72, 75, 78, 80, 82, 84, 85.5, 87, 88, 89)
 """Knots in the lean of the roof line and in the roof angle; steeper ones are read at the last."""
 
 RIDGES = tuple(i / 12.0 for i in range(13))
