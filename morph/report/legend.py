@@ -1,4 +1,4 @@
-"""The signs of the sheet pictures and their legend: colour scale in mm, hatching, one shape per port role."""
+"""The signs of the sheet pictures and their legend: colour scale, hatching, one shape per port role."""
 
 from __future__ import annotations
 
@@ -32,44 +32,50 @@ def _words(x: float, y: float, words: str, anchor: str = "start") -> str:
     return f'<text x="{x:g}" y="{y:g}" dy="0.35em" font-size="12" fill="{INK}" text-anchor="{anchor}">{words}</text>'
 
 
-def _colour_bar(drawing: Drawing, ends_mm: tuple[float, float], top: float) -> None:
-    """Draws the colour scale with its ticks in mm."""
+def _colour_bar(drawing: Drawing, words: str, ends: tuple[float, float], top: float) -> None:
+    """Draws the colour scale with its ticks; `words` say figure and unit."""
     left, wide, high = 12.0, 196.0, 12.0
-    drawing.raw(_words(left, top, "wall to the finished part face, mm"))
+    drawing.raw(_words(left, top, words))
     step = wide / COLOUR_STEPS
     for index, colour in enumerate(map_hex(np.arange(COLOUR_STEPS) / (COLOUR_STEPS - 1))):
         x = number(left + index * step)
         drawing.raw(f'<rect x="{x}" y="{top + 12:g}" width="{number(step + 0.5)}" height="{high:g}" fill="{colour}"/>')
-    for value in round_ticks(*ends_mm, TICKS):
-        at = round(left + (value - ends_mm[0]) / (ends_mm[1] - ends_mm[0]) * wide, 2)
+    for value in round_ticks(*ends, TICKS):
+        at = round(left + (value - ends[0]) / (ends[1] - ends[0]) * wide, 2)
         drawing.raw(f'<path d="M{number(at)} {top + 24:g}v5" stroke="{INK}"/>')
         drawing.raw(_words(at, top + 37.0, f"{value:g}", "middle"))
 
 
-def draw_sheet_legend(drawing: Drawing, ends_mm: tuple[float, float], hatch: str, high_px: float) -> None:
+def draw_sheet_legend(
+    drawing: Drawing, words: str, ends: tuple[float, float], hatch: str, high_px: float, mark: str
+) -> None:
     """Draws the legend in the lowest `high_px` of the drawing.
 
     Args:
         drawing: the sheet.
-        ends_mm: ends of the colour scale.
+        words: what the colours stand for, with its unit.
+        ends: ends of the colour scale.
         hatch: paint of branches without through-flow.
         high_px: height kept free for it.
+        mark: what the ring means; empty: there is none.
     """
     top = drawing.height_px - high_px
     drawing.scale_bar((drawing.low_mm[0] + drawing.mm(12.0), drawing.low_mm[1] + drawing.mm(8.0)), 0.2)
-    _colour_bar(drawing, ends_mm, top + 14.0)
+    _colour_bar(drawing, words, ends, top + 14.0)
     x, y = 244.0, top + 14.0
-    for role, words in ((Role.IN, "in"), (Role.OUT, "out"), (Role.ACCESS, "access")):
-        drawing.raw(port_mark(x, y, role) + _words(x + 13.0, y, words))
-        x += 38.0 + 4.5 * len(words)
+    for role in (Role.IN, Role.OUT, Role.ACCESS):
+        drawing.raw(port_mark(x, y, role) + _words(x + 13.0, y, role.value))
+        x += 38.0 + 4.5 * len(role.value)
     x = 236.0
     fills = f'fill="#b9b58c" stroke="{INK}"'
     drawing.raw(f'<rect x="{x:g}" y="{top + 33:g}" width="26" height="12" {fills}/>')
     edge = f'stroke="{PAPER}" stroke-width="1.6" stroke-dasharray="4 3"'
     drawing.raw(f'<rect x="{x:g}" y="{top + 33:g}" width="26" height="12" fill="{hatch}" {edge}/>')
     drawing.raw(_words(x + 32.0, top + 39.0, "no through-flow"))
+    if not mark:
+        return
     drawing.raw(f'<circle cx="{x + 13:g}" cy="{top + 64:g}" r="9" fill="none" stroke="{INK}" stroke-width="2.4"/>')
-    drawing.raw(_words(x + 32.0, top + 64.0, "worst wall"))
+    drawing.raw(_words(x + 32.0, top + 64.0, mark))
 
 
 def draw_port(drawing: Drawing, at: Point, role: Role) -> None:

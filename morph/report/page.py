@@ -32,7 +32,7 @@ from morph.report.projection_view import VIEWS, draw_view
 from morph.report.records import BuildRecords
 from morph.report.section import WallSection, make_section, wall_verdicts
 from morph.report.section_view import draw_section
-from morph.report.sheet_view import SheetScene, draw_sheet
+from morph.report.sheet_view import SheetScene, draw_sheet, make_colours
 from morph.report.texts import (
     CAUTIONS,
     amount,
@@ -76,13 +76,15 @@ def sheet_scene(records: BuildRecords) -> SheetScene:
     worst = None
     if walls and walls[0].branch_ids and walls[0].branch_ids[0] in on_sheet:
         worst = (walls[0].branch_ids[0], walls[0].sheet_mm)
+    walls_mm = {item.id: item.wall_mm for item in records.fields.branches if item.id in on_sheet}
     return SheetScene(
         records.plan,
         records.graph.size_mm,
         records.job.layout.seen_from,
-        {item.id: item.wall_mm for item in records.fields.branches if item.id in on_sheet},
+        make_colours("sheet", "wall to the finished part face, mm", walls_mm, 0.5),
         {port.name: port.role for port in records.job.ports},
         worst,
+        "worst wall",
         records.graph.turn_mm,
     )
 

@@ -1,4 +1,4 @@
-"""The sheet seen from the part side: every channel as a band of its bore, coloured by the wall to the part face.
+"""The sheet seen from the part side: every channel as a band of its bore, coloured by a figure along it.
 
 A drawing that reads from the metal side is mirrored here, and the caption says so; places are given
 in the drawing's own coordinates all the same. Branches without through-flow are hatched and dashed,
@@ -8,7 +8,7 @@ ports have a shape per role: nothing is told by colour alone.
 from __future__ import annotations
 
 import itertools
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 import numpy as np
 
@@ -22,29 +22,52 @@ from morph.report.legend import PORT_COLOUR, draw_port, draw_sheet_legend
 from morph.report.seam import clipped, copies_mm, on_sheet_mm
 from morph.settings.job import Role, SeenFrom
 
-WIDTH_PX, LEGEND_PX = 400.0, 92.0
+WIDTH_PX, LEGEND_PX, ARROW_EVERY_PX = 400.0, 92.0, 42.0
 SHEET = "#f7f8fa"
 
 
 @dataclass(frozen=True, slots=True, eq=False)
+class SheetColours:
+    """The figure a sheet picture is coloured by.
+
+    Args:
+        key: short name, unique on the page. words: the figure with its unit, as it stands at the scale.
+        values: (k,) along each channel, by branch id. ends: of the colour scale.
+    """
+
+    key: str
+    words: str
+    values: dict[str, Floats]
+    ends: tuple[float, float]
+
+    def steps(self, branch: str) -> Ints:
+        """Returns the steps (k,) of the colour map along a channel."""
+        ratio = (self.values[branch] - self.ends[0]) / (self.ends[1] - self.ends[0])
+        return np.clip(np.rint(ratio * (COLOUR_STEPS - 1)), 0, COLOUR_STEPS - 1).astype(np.int64)
+
+
+@dataclass(frozen=True, slots=True, eq=False)
 class SheetScene:
-    """What the sheet picture shows.
+    """What a sheet picture shows.
 
     Args:
         plan: the channels. size_mm: of the sheet. seen_from: which way the drawing reads.
-        wall_mm: the wall to the part face along each channel, by branch id.
+        colours: what the channels are coloured by.
         roles: role of each port by name.
-        worst: branch id and place (x, y) of the worst wall, or None.
+        marked: branch id and place (x, y) that is ringed, or None. mark_words: what the ring means.
         turn_mm: width after which the sheet repeats, None on an open sheet.
+        flow: by branch id, above 0 where coolant runs from its start to its end; empty: no arrows.
     """
 
     plan: ChannelPlan
     size_mm: tuple[float, float]
     seen_from: SeenFrom
-    wall_mm: dict[str, Floats]
+    colours: SheetColours
     roles: dict[str, Role]
-    worst: tuple[str, tuple[float, float] | None] | None
+    marked: tuple[str, tuple[float, float] | None] | None
+    mark_words: str
     turn_mm: float | None = None
+    flow: dict[str, float] = field(default_factory=dict)
 
     @property
     def mirrored(self) -> bool:
@@ -58,10 +81,11 @@ class SheetScene:
             points[:, 0] = self.size_mm[0] - points[:, 0]
         return points
 
-    def wall_range_mm(self) -> tuple[float, float]:
-        """Returns the ends of the colour scale, in steps of half a millimetre around the walls shown."""
-        walls = np.concatenate(list(self.wall_mm.values()))
-        return round_scale(float(walls.min()), float(walls.max()))
+
+def make_colours(key: str, words: str, values: dict[str, Floats], step: float) -> SheetColours:
+    """Returns what a picture is coloured by; its scale ends on multiples of `step`."""
+    shown = np.concatenate(list(values.values()))
+    return SheetColours(key, words, values, round_scale(float(shown.min()), float(shown.max()), step))
 
 
 def _band(drawing: Drawing, points: Floats, bore_mm: Floats, step: Ints) -> None:
@@ -101,6 +125,27 @@ def _no_flow(drawing: Drawing, points: Floats, bore_mm: Floats, hatch: str) -> N
     drawing.shape(outline, fill=hatch, stroke=PAPER, stroke_width="1.6", stroke_dasharray="4 3")
 
 
+def _arrows(drawing: Drawing, points: Floats, bore_mm: Floats, flow: float) -> None:
+    """Draws arrow heads along a band, the way its coolant runs; none where `flow` is 0."""
+    if flow == 0.0 or len(points) < 3:
+        return
+    line = points if flow > 0.0 else points[::-1]
+    width = bore_mm if flow > 0.0 else bore_mm[::-1]
+    along = np.concatenate([[0.0], np.cumsum(np.linalg.norm(np.diff(line, axis=0), axis=1))])
+    count = max(1, int(along[-1] / drawing.mm(ARROW_EVERY_PX)))
+    for share in (np.arange(count) + 0.3) / count:
+        at = int(np.searchsorted(along, share * along[-1]))
+        at = min(max(at, 1), len(line) - 2)
+        ahead = line[at + 1] - line[at - 1]
+        ahead = ahead / max(float(np.linalg.norm(ahead)), 1e-9)
+        half = min(0.32 * float(width[at]), drawing.mm(7.0))
+        side = np.array([-ahead[1], ahead[0]])
+        head = np.array([line[at] - half * (ahead - side), line[at] + half * ahead, line[at] - half * (ahead + side)])
+        data = drawing.path_data(head, closed=False)
+        for colour, stroke in ((INK, "4"), (PAPER, "2")):
+            drawing.shape(data, fill="none", stroke=colour, stroke_width=stroke, stroke_linecap="round")
+
+
 def draw_ports(drawing: Drawing, scene: SheetScene) -> None:
     """Draws the symbol and the name of every port on the sheet; names stay inside the drawing."""
     wide = drawing.high_mm[0] - drawing.low_mm[0]
@@ -118,10 +163,10 @@ def draw_ports(drawing: Drawing, scene: SheetScene) -> None:
 
 
 def _names(drawing: Drawing, scene: SheetScene, branches: list[PlanBranch]) -> None:
-    """Names the branches without through-flow and the one with the worst wall."""
-    named = {b.id for b in branches if not b.through_flow}
-    if scene.worst is not None:
-        named.add(scene.worst[0])
+    """Names the branches without through-flow and the marked one; all of them where the flow is shown."""
+    named = {b.id for b in branches if not b.through_flow or scene.flow}
+    if scene.marked is not None:
+        named.add(scene.marked[0])
     for branch in branches:
         if branch.id in named:
             points = scene.seen(sheet_of(branch))
@@ -129,11 +174,11 @@ def _names(drawing: Drawing, scene: SheetScene, branches: list[PlanBranch]) -> N
             drawing.label((x, y), branch.id, size_px=12.0, bold=True)
 
 
-def _worst(drawing: Drawing, scene: SheetScene) -> None:
-    """Rings the place of the worst wall."""
-    if scene.worst is None or scene.worst[1] is None:
+def _mark(drawing: Drawing, scene: SheetScene) -> None:
+    """Rings the marked place."""
+    if scene.marked is None or scene.marked[1] is None:
         return
-    place = on_sheet_mm(scene.seen(np.array(scene.worst[1]))[0], scene.turn_mm)
+    place = on_sheet_mm(scene.seen(np.array(scene.marked[1]))[0], scene.turn_mm)
     x, y = drawing.xy(tuple(place.tolist()))
     for colour, width in ((PAPER, "5.5"), (INK, "2.4")):
         drawing.raw(f'<circle cx="{x}" cy="{y}" r="12" fill="none" stroke="{colour}" stroke-width="{width}"/>')
@@ -157,14 +202,13 @@ def draw_sheet(scene: SheetScene) -> str:
     """Returns the sheet from the part side as SVG, with its legend in mm below it."""
     low, high, width_px = sheet_window(scene.size_mm, WIDTH_PX)
     below = (high[0] - low[0]) * LEGEND_PX / width_px
-    title = "The sheet seen from the part side, coloured by the wall to the finished part face"
-    drawing = Drawing((low[0], low[1] - below), high, width_px, "sheet", title)
+    title = f"The sheet seen from the part side, coloured by {scene.colours.words}"
+    drawing = Drawing((low[0], low[1] - below), high, width_px, scene.colours.key, title)
     width, height = scene.size_mm
     frame = np.array([[0, 0], [width, 0], [width, height], [0, height]], dtype=float)
     drawing.shape(drawing.path_data(frame, closed=True), fill=SHEET, stroke=FAINT, stroke_width="1")
     hatch = drawing.hatch("no-flow", INK, 6.0, 45.0, 0.6)
     branches = sheet_branches(scene.plan)
-    wall_low, wall_high = scene.wall_range_mm()
     copies = [
         (branch, points) for branch in branches for points in copies_mm(scene.seen(sheet_of(branch)), scene.turn_mm)
     ]
@@ -172,14 +216,15 @@ def draw_sheet(scene: SheetScene) -> str:
         for branch, points in copies:
             _rim(drawing, points, branch.bore_mm)
         for branch, points in copies:
-            ratio = (scene.wall_mm[branch.id] - wall_low) / (wall_high - wall_low)
-            step = np.clip(np.rint(ratio * (COLOUR_STEPS - 1)), 0, COLOUR_STEPS - 1).astype(np.int64)
-            _band(drawing, points, branch.bore_mm, step)
+            _band(drawing, points, branch.bore_mm, scene.colours.steps(branch.id))
         for branch, points in copies:
             if not branch.through_flow:
                 _no_flow(drawing, points, branch.bore_mm, hatch)
-    _worst(drawing, scene)
+        for branch, points in copies:
+            _arrows(drawing, points, branch.bore_mm, scene.flow.get(branch.id, 0.0))
+    _mark(drawing, scene)
     draw_ports(drawing, scene)
     _names(drawing, scene, branches)
-    draw_sheet_legend(drawing, (wall_low, wall_high), hatch, LEGEND_PX)
+    mark = scene.mark_words if scene.marked is not None and scene.marked[1] is not None else ""
+    draw_sheet_legend(drawing, scene.colours.words, scene.colours.ends, hatch, LEGEND_PX, mark)
     return drawing.svg()

@@ -26,11 +26,11 @@ pytestmark = pytest.mark.quick
 def test_sheet_walls_are_those_to_the_part_face(records):
     shown = sheet_scene(records)
     # bore 3.0 at depth 8: 6.5 mm all along B6; B9 falls from bore 5.2 (5.4 mm) to 4.0 (6.0 mm)
-    assert shown.wall_mm["B6"] == pytest.approx(6.5, abs=1e-9)
-    assert shown.wall_mm["B9"][[0, -1]] == pytest.approx([5.4, 6.0], abs=1e-9)
-    assert "L-feed" not in shown.wall_mm
-    assert shown.wall_range_mm() == (5.0, 6.5)
-    assert shown.worst == ("B9", (45.0, 50.0))
+    assert shown.colours.values["B6"] == pytest.approx(6.5, abs=1e-9)
+    assert shown.colours.values["B9"][[0, -1]] == pytest.approx([5.4, 6.0], abs=1e-9)
+    assert "L-feed" not in shown.colours.values
+    assert shown.colours.ends == (5.0, 6.5)
+    assert shown.marked == ("B9", (45.0, 50.0))
 
 
 def test_sheet_is_mirrored_only_when_the_drawing_reads_from_the_metal(records, make_records, scene):
