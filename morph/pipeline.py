@@ -137,7 +137,8 @@ def plan_channels(job: Job, clock: _Clock) -> Planned:
     require_ends(job.ports)
     with clock.stage("layout"):
         density = make_density(job.layout)
-        graph = make_graph(density, job.layout, job.ports, progress)
+        least_mm = max(job.service.smallest_bore_mm, profile.smallest_bore_mm.value) / job.section.bore_scale
+        graph = make_graph(density, job.layout, job.ports, progress, job.accepts, least_mm)
     with clock.stage("surface"):
         depth_mm = choose_depth_mm(job.carrier, graph, job.section, job.service, profile)
         carrier = make_carrier(job.carrier, graph.size_mm, job.layout.seen_from, depth_mm, job.layout.seam)

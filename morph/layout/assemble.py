@@ -2,8 +2,9 @@
 
 from __future__ import annotations
 
+import itertools
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 import numpy as np
 
@@ -14,8 +15,19 @@ from morph.geometry.curve import Curve, curve_at, curve_length_mm
 from morph.layout import notices as say
 from morph.layout.bridges import Suggestion
 from morph.layout.centre import smoothed_along
+from morph.layout.dead_ends import Known, name_dead_ends
 from morph.layout.fit import DEVIATION_SHARE
-from morph.layout.graph import Branch, Bridge, ChannelGraph, Dropped, DropReason, LevelCount, Node, NodeKind
+from morph.layout.graph import (
+    Accepted,
+    Branch,
+    Bridge,
+    ChannelGraph,
+    Dropped,
+    DropReason,
+    LevelCount,
+    Node,
+    NodeKind,
+)
 from morph.layout.smooth import fit_web
 from morph.layout.web import Run, Web, arc_mm, moved_along
 
@@ -26,7 +38,8 @@ LONGEST_STEP_MM = 1.0
 class Parts:
     """What the record holds besides nodes, branches and bridges, and the fine grid's pixel.
 
-    `turn_mm`: the width after which sheet x repeats, None on an open sheet.
+    `turn_mm`: the width after which sheet x repeats, None on an open sheet. `ends`: what is known of
+    dead ends, by joint. `accepted`: suggestions carried out.
     """
 
     size_mm: tuple[float, float]
@@ -37,6 +50,8 @@ class Parts:
     notices: tuple[Notice, ...]
     pixel_mm: float
     turn_mm: float | None = None
+    ends: dict[int, Known] = field(default_factory=dict)
+    accepted: tuple[Accepted, ...] = ()
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -101,6 +116,16 @@ def assemble(
         tuple(node for node in nodes if node.id not in built),
         tuple(branch for branch in branches if branch.start not in built),
         parts.turn_mm,
+        name_dead_ends(
+            web,
+            {node.id: node for node in nodes},
+            {branch.id: branch for branch in branches},
+            joint_id,
+            run_id,
+            bridges,
+            parts.ends,
+        ),
+        parts.accepted,
     )
 
 
@@ -246,10 +271,12 @@ def _bridges(suggestions: list[Suggestion], joint_id: dict[int, str], run_id: di
         x, y = (float(value) for value in item.path_mm[len(item.path_mm) // 2])
         return round(y, 1) + 0.0, round(x, 1) + 0.0, y, x
 
+    taken = {item.id for item in suggestions}
+    free = (name for number in itertools.count(1) if (name := f"G{number}") not in taken)
     found = []
-    for number, item in enumerate(sorted(suggestions, key=rank), start=1):
+    for item in sorted(suggestions, key=rank):
         onto = joint_id[item.onto_joint] if item.onto_joint is not None else run_id[item.onto_run]
-        found.append(
-            Bridge(f"G{number}", joint_id[item.tip], onto, item.path_mm, item.gap_mm, item.lowest_density, item.likely)
-        )
+        name = item.id or next(free)
+        figures = (item.path_mm, item.gap_mm, item.lowest_density, item.likely, item.width_mm, item.grey)
+        found.append(Bridge(name, joint_id[item.tip], onto, *figures, item.grey_mm, item.middle_mm))
     return tuple(found)

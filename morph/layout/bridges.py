@@ -26,6 +26,8 @@ LOWEST_DENSITY = 0.22
 ABOVE_BACKGROUND = 0.10
 ABOVE_FLANKS = 0.12
 FLANK_WIDTHS = (1.0, 1.3, 1.6)
+GREY_REACH = 1.5
+"""The width of a grey way is looked for within this many channel widths to both sides."""
 DETOUR = 1.35
 NEAR_END = 1.2
 BLIND_END = 2.5
@@ -34,7 +36,7 @@ BLIND_END = 2.5
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Suggestion:
-    """A way on from joint `tip` onto a joint or a run of the web, in sheet mm."""
+    """A way on from joint `tip` onto a joint or a run of the web, in sheet mm; `id` when it has one already."""
 
     tip: int
     onto_joint: int | None
@@ -43,6 +45,11 @@ class Suggestion:
     gap_mm: float
     lowest_density: float
     likely: bool
+    width_mm: float = math.inf
+    grey: bool = False
+    grey_mm: float = 0.0
+    middle_mm: tuple[float, float] = (0.0, 0.0)
+    id: str = ""
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -144,7 +151,9 @@ def _way_on(web: Web, tip: int, ground: _Field, place: Floats, owner: Ints, samp
     )
     onto_run = int(owner[best])
     onto_joint = _end_near(web, onto_run, int(sample[best]), tip)
-    return Suggestion(tip, onto_joint, onto_run, path, measure_length_mm(path), lowest, likely)
+    width_mm, grey = _grey_width_mm(ground, path), lowest - ground.background > ABOVE_BACKGROUND
+    figures = (measure_length_mm(path), lowest, likely, width_mm, grey, *_grey_stretch(ground, path))
+    return Suggestion(tip, onto_joint, onto_run, path, *figures)
 
 
 def _heading(run: Run, width_mm: float) -> tuple[Floats, Floats]:
@@ -213,15 +222,54 @@ def _flank_contrast(ground: _Field, path_mm: Floats) -> float:
     """
     n = len(path_mm)
     middle = slice(n // 4, max(n // 4 + 1, 3 * n // 4))
-    tangent = np.gradient(path_mm, axis=0)
-    tangent /= np.maximum(np.hypot(*tangent.T), 1e-12)[:, None]
-    normal = np.column_stack([-tangent[:, 1], tangent[:, 0]]) * ground.width_mm
+    normal = _normal(path_mm) * ground.width_mm
     here = float(ground.at(path_mm[middle]).mean())
     flanks = [
         float(np.median(np.concatenate([ground.at(path_mm + sign * widths * normal) for widths in FLANK_WIDTHS])))
         for sign in (1.0, -1.0)
     ]
     return here - max(flanks)
+
+
+def _grey_stretch(ground: _Field, path_mm: Floats) -> tuple[float, tuple[float, float]]:
+    """Returns the length of the way at or below the level, and the middle of that stretch."""
+    arc = arc_mm(path_mm)
+    at = np.linspace(0.0, arc[-1], max(2, math.ceil(8.0 * float(arc[-1]) / ground.grid.pixel_mm)))
+    place = np.column_stack([np.interp(at, arc, path_mm[:, axis]) for axis in (0, 1)])
+    below = np.flatnonzero(ground.at(place) <= ground.level)
+    first, last = (int(below[0]), int(below[-1])) if len(below) else (0, len(at) - 1)
+    middle = place[(first + last) // 2]
+    return float(at[last] - at[first]), (float(middle[0]), float(middle[1]))
+
+
+def _normal(path_mm: Floats) -> Floats:
+    """Returns (k, 2) unit normals of the way."""
+    tangent = np.gradient(path_mm, axis=0)
+    tangent /= np.maximum(np.hypot(*tangent.T), 1e-12)[:, None]
+    return np.column_stack([-tangent[:, 1], tangent[:, 0]])
+
+
+def _grey_width_mm(ground: _Field, path_mm: Floats) -> float:
+    """Returns the width of the way's middle half at half its height above the background (median), at most 3 widths.
+
+    A neck keeps its width there however pale it is; a way without a ridge of its own reads 3 widths.
+    """
+    arc = arc_mm(path_mm)
+    at = np.linspace(0.25, 0.75, 9) * arc[-1]
+    middle = np.column_stack([np.interp(at, arc, path_mm[:, axis]) for axis in (0, 1)])
+    way = np.column_stack([np.interp(at, arc, _normal(path_mm)[:, axis]) for axis in (0, 1)])
+    n = math.ceil(8.0 * GREY_REACH * ground.width_mm / ground.grid.pixel_mm)
+    across = np.arange(-n, n + 1) * 0.125 * ground.grid.pixel_mm
+    near = np.abs(across) <= 0.5 * ground.width_mm
+    widths = []
+    for place, normal in zip(middle, way, strict=True):
+        profile = ground.at(place + across[:, None] * normal)
+        ridge = int(np.argmax(np.where(near, profile, -1.0)))
+        below = np.flatnonzero(profile <= 0.5 * (profile[ridge] + ground.background))
+        left = below[below < ridge].max(initial=0)
+        right = below[below > ridge].min(initial=len(profile) - 1)
+        widths.append(float(across[right] - across[left]))
+    return float(np.median(widths))
 
 
 def _end_near(web: Web, run_key: int, sample: int, tip: int) -> int | None:

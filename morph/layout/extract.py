@@ -13,8 +13,10 @@ from morph.core.pieces import Pieces
 from morph.core.progress import SILENT, Progress
 from morph.core.verdict import Notice
 from morph.layout import notices as say
+from morph.layout.accept import accept
 from morph.layout.assemble import Parts, assemble
 from morph.layout.bridges import suggest_bridges
+from morph.layout.dead_ends import find_end_walls
 from morph.layout.density import Density
 from morph.layout.graph import ChannelGraph
 from morph.layout.joined import find_joined_graph
@@ -22,11 +24,16 @@ from morph.layout.level import count_at_levels, find_level, measure_area_ratio, 
 from morph.layout.ports import attach_ports, list_candidates, require_ports
 from morph.layout.trace import N_STEPS, STAGE, trace_faithfully
 from morph.layout.web import join_all
-from morph.settings.job import LayoutSettings, PortSettings, Role, Seam
+from morph.settings.job import AcceptSettings, LayoutSettings, PortSettings, Role, Seam
 
 
 def make_graph(
-    density: Density, settings: LayoutSettings, ports: tuple[PortSettings, ...], progress: Progress = SILENT
+    density: Density,
+    settings: LayoutSettings,
+    ports: tuple[PortSettings, ...],
+    progress: Progress = SILENT,
+    accepts: tuple[AcceptSettings, ...] = (),
+    least_bore_mm: float = 0.0,
 ) -> ChannelGraph:
     """Returns the channel graph of `density` with the declared `ports` on it, every piece a circuit.
 
@@ -35,13 +42,16 @@ def make_graph(
         settings: the [layout] table.
         ports: declared ports, places in sheet mm.
         progress: told after each step; may cancel.
+        accepts: suggestions to be carried out.
+        least_bore_mm: least bore of an accepted bridge.
 
     Raises:
         InputError: nothing or everything is coolant at the level.
-        SettingError: a port is missing, doubled or off the sheet; a level cannot keep the area.
+        SettingError: a port is missing, doubled or off the sheet; a level cannot keep the area; something accepted
+            is not offered.
         GeometryError: a port is off every channel, two share an end, or a piece has no way in or out.
     """
-    graph = find_graph(density, settings, ports, progress)
+    graph = accept(find_graph(density, settings, ports, progress), accepts, least_bore_mm)
     require_circuits(graph, ports)
     return graph
 
@@ -78,6 +88,7 @@ def find_graph(
         levels,
         tuple(found),
         picture.grid.pixel_mm,
+        ends=find_end_walls(web, picture.field, picture.grid, level),
     )
     graph = assemble(web, parts, suggestions)
     progress.step(STAGE, N_STEPS, N_STEPS)

@@ -7,6 +7,7 @@ is a cubic B-spline with its bore along it; its ends coincide with its nodes.
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 from enum import StrEnum
 
@@ -84,6 +85,7 @@ class DropReason(StrEnum):
     PINHOLE = "pinhole"
     SPUR = "spur"
     NO_PORT = "piece without a port"
+    TRIMMED = "dead end trimmed as accepted"
 
 
 @dataclass(frozen=True, slots=True)
@@ -104,6 +106,9 @@ class Bridge:
         node: the dead end it starts from. onto: branch or node id it would meet.
         path_mm: (k, 2) way on the sheet. gap_mm: its length.
         lowest_density: the lowest density on the way. likely: it looks like a blocked channel.
+        width_mm: how wide the grey way is where it stands halfway between background and its own ridge.
+        grey: the way stands clear of the background all along.
+        grey_mm: length of its stretch at or below the level. middle_mm: middle of that stretch.
     """
 
     id: str
@@ -113,9 +118,57 @@ class Bridge:
     gap_mm: float
     lowest_density: float
     likely: bool
+    width_mm: float = math.inf
+    grey: bool = False
+    grey_mm: float = 0.0
+    middle_mm: tuple[float, float] = (0.0, 0.0)
 
     def __post_init__(self) -> None:
         object.__setattr__(self, "path_mm", frozen_floats("path_mm", self.path_mm, (None, 2)))
+
+
+class Ahead(StrEnum):
+    """What lies ahead of a dead end."""
+
+    GREY = "grey"
+    SOLID = "solid"
+    FRAME = "frame"
+
+
+@dataclass(frozen=True, slots=True)
+class DeadEnd:
+    """An end branch that ends blind, and what lies ahead of it.
+
+    Args:
+        id: "D1" ..., numbered by (y, x). node: its node. branch: the branch that ends there.
+        sheet_mm: where its coolant ends, on its line. length_mm: of the branch. bore_mm: its bore at the end.
+        ahead: a grey way to another channel, solid metal, or the frame of the image.
+        bridge: id of the suggestion that leads on, or None when no channel lies within reach ahead.
+        onto: node or branch that way meets. gap_mm: length of its grey stretch. lowest_density: on it.
+    """
+
+    id: str
+    node: str
+    branch: str
+    sheet_mm: tuple[float, float]
+    length_mm: float
+    bore_mm: float
+    ahead: Ahead
+    bridge: str | None = None
+    onto: str | None = None
+    gap_mm: float | None = None
+    lowest_density: float | None = None
+
+
+@dataclass(frozen=True, slots=True)
+class Accepted:
+    """A suggestion that was carried out: its id, "bridge" or "trim", place, length and mean bore of what it changed."""
+
+    id: str
+    what: str
+    sheet_mm: tuple[float, float]
+    length_mm: float
+    bore_mm: float
 
 
 @dataclass(frozen=True, slots=True)
@@ -142,6 +195,8 @@ class ChannelGraph:
             because a suggested bridge may join them.
         turn_mm: on a joined seam the width after which sheet x repeats: nodes lie within it, and a branch
             across the seam runs on past it, or below 0, so that it stays one curve. None: an open sheet.
+        dead_ends: every dead end, those of loose pieces included, by id number.
+        accepted: the suggestions that were carried out.
     """
 
     size_mm: tuple[float, float]
@@ -156,6 +211,8 @@ class ChannelGraph:
     loose_nodes: tuple[Node, ...] = ()
     loose_branches: tuple[Branch, ...] = ()
     turn_mm: float | None = None
+    dead_ends: tuple[DeadEnd, ...] = ()
+    accepted: tuple[Accepted, ...] = ()
 
     def __post_init__(self) -> None:
         place = {node.id: node.sheet_mm for node in self.nodes + self.loose_nodes}

@@ -1,4 +1,4 @@
-"""Accepted bridges: the suggested ways on from dead ends made part of the graph."""
+"""Accepted suggestions: ways on from dead ends made part of the graph, dead ends taken off."""
 
 from __future__ import annotations
 
@@ -8,58 +8,105 @@ import numpy as np
 
 from morph.core.arrays import Floats
 from morph.core.errors import SettingError
+from morph.layout import notices as say
 from morph.layout.assemble import Parts, assemble
 from morph.layout.bridges import Suggestion
-from morph.layout.graph import Branch, Bridge, ChannelGraph, DropReason
+from morph.layout.dead_ends import Known
+from morph.layout.graph import Accepted, Branch, Bridge, ChannelGraph, DeadEnd, Dropped, DropReason
 from morph.layout.ports import split_run
 from morph.layout.web import Joint, Run, Web, arc_mm, join_through
 
-STANDING_NOTICES = ("topology-differs", "level-decides")
+STANDING_NOTICES = ("topology-differs", "level-decides", "bridge-built", "dead-end-trimmed")
 """Notices about the image; the others are about nodes and branches and are made anew."""
+TAPER_SHARE = 0.25
+"""A bridge changes from the bore at its ends to that of its grey way within this share of its length."""
 NEAR_JOINT = 1.2
 """A bridge that lands within this many half-widths of a junction lands on it."""
 
 
-def apply_bridges(graph: ChannelGraph, ids: Iterable[str]) -> ChannelGraph:
-    """Returns `graph` with the suggested bridges `ids` built; loose pieces they reach become part of it.
-
-    The bridge is as wide as the dead end it starts from, or tapers to the dead end it meets. Branches
-    that no bridge touches stay as they are; ids are numbered anew by position.
-
-    Args:
-        graph: a channel graph with suggestions.
-        ids: ids of suggestions ("G1" ...), applied in order of their number.
+def apply_bridges(graph: ChannelGraph, ids: Iterable[str], least_bore_mm: float = 0.0) -> ChannelGraph:
+    """Returns `graph` with the suggested bridges `ids` built, as `apply_choices` does.
 
     Raises:
         SettingError: `bridge-unknown`.
     """
-    by_id = {bridge.id: bridge for bridge in graph.bridges}
-    wanted = set(ids)
-    unknown = sorted(wanted - by_id.keys())
-    if unknown:
-        raise SettingError(
-            "bridge-unknown",
-            expected=f"one of {', '.join(by_id) or 'no suggestion at all'}",
-            found=", ".join(unknown),
-            where="accepted bridges",
-            do="Use the ids that the layout lists.",
-        )
+    return apply_choices(graph, ids, (), least_bore_mm)
+
+
+def apply_choices(
+    graph: ChannelGraph, bridges: Iterable[str], trims: Iterable[str], least_bore_mm: float = 0.0
+) -> ChannelGraph:
+    """Returns `graph` with suggested bridges built and dead ends trimmed; loose pieces reached become part of it.
+
+    A bridge is as wide as its grey way, at least `least_bore_mm`, at most as the wider of the two channels it
+    joins, and tapers to the dead ends at its ends. Branches that no choice touches stay as they are; nodes and
+    branches are numbered anew by position, suggestions and dead ends that are left keep their ids.
+
+    Args:
+        graph: a channel graph with suggestions.
+        bridges: ids of suggestions ("G1" ...), applied in order of their number.
+        trims: ids of dead ends ("D1" ...), taken off after the bridges are built.
+        least_bore_mm: least bore of a bridge.
+
+    Raises:
+        SettingError: `bridge-unknown`, `trim-unknown`, `accept-conflict` or `trim-takes-port`.
+    """
+    wanted, cut = set(bridges), set(trims)
+    _require_known(graph, wanted, cut)
     web, joint_of, kept = _web_of(graph)
+    done = []
     for bridge in graph.bridges:
         if bridge.id in wanted:
-            _build(web, joint_of, bridge)
+            done.append(_build(web, joint_of, bridge, least_bore_mm))
+    dropped = [item for item in graph.dropped if item.reason is not DropReason.NO_PORT]
+    for blind in graph.dead_ends:
+        if blind.id in cut:
+            done.append(_trim(web, joint_of[blind.node], blind))
+            dropped.append(Dropped(DropReason.TRIMMED, blind.sheet_mm, done[-1].length_mm * done[-1].bore_mm))
     left = [bridge for bridge in graph.bridges if bridge.id not in wanted]
     parts = Parts(
         graph.size_mm,
         graph.level,
         graph.area_ratio,
-        tuple(item for item in graph.dropped if item.reason is not DropReason.NO_PORT),
+        tuple(dropped),
         graph.levels,
-        tuple(notice for notice in graph.notices if notice.code in STANDING_NOTICES),
+        tuple(notice for notice in graph.notices if notice.code in STANDING_NOTICES) + tuple(map(say.accepted, done)),
         0.0,
+        graph.turn_mm,
+        {joint_of[end.node]: Known(end.sheet_mm, end.id) for end in graph.dead_ends},
+        graph.accepted + tuple(done),
     )
     suggestions = [item for bridge in left if (item := _suggestion(web, joint_of, bridge)) is not None]
     return assemble(web, parts, suggestions, {key: branch for key, branch in kept.items() if key in web.runs})
+
+
+def _require_known(graph: ChannelGraph, wanted: set[str], cut: set[str]) -> None:
+    """Raises unless all ids exist and no end is both bridged and trimmed."""
+    bridges, ends = [bridge.id for bridge in graph.bridges], [end.id for end in graph.dead_ends]
+    for code, chosen, known, what in (
+        ("bridge-unknown", wanted, bridges, "suggestion"),
+        ("trim-unknown", cut, ends, "dead end"),
+    ):
+        unknown = sorted(chosen - set(known))
+        if unknown:
+            raise SettingError(
+                code,
+                expected=f"one of {', '.join(known) or f'no {what} at all'}",
+                found=", ".join(unknown),
+                where="[[accept]]",
+                do="Use the ids that the layout lists.",
+            )
+    trimmed = {end.node: end.id for end in graph.dead_ends if end.id in cut}
+    for bridge in graph.bridges:
+        both = [trimmed[node] for node in (bridge.node, bridge.onto) if bridge.id in wanted and node in trimmed]
+        if both:
+            raise SettingError(
+                "accept-conflict",
+                expected="each dead end bridged or trimmed, not both",
+                found=f"bridge {bridge.id} and trim {both[0]} at the same end",
+                where="[[accept]]",
+                do="Remove one of the two.",
+            )
 
 
 def _web_of(graph: ChannelGraph) -> tuple[Web, dict[str, int], dict[int, Branch]]:
@@ -78,7 +125,11 @@ def _web_of(graph: ChannelGraph) -> tuple[Web, dict[str, int], dict[int, Branch]
     for branch in branches:
         half = 0.5 * branch.bore_mm
         free = np.ones(len(half), dtype=bool)
-        key = web.add_run(Run(joint_of[branch.start], joint_of[branch.end], branch.sheet_mm, half, free))
+        first, last, shift_mm = joint_of[branch.start], joint_of[branch.end], 0.0
+        if graph.turn_mm is not None:
+            past_mm = float(branch.sheet_mm[-1, 0] - web.joints[last].place_mm[0])
+            shift_mm = graph.turn_mm * round(past_mm / graph.turn_mm)
+        key = web.add_run(Run(first, last, branch.sheet_mm, half, free, shift_mm))
         kept[key] = branch
     return web, joint_of, kept
 
@@ -105,29 +156,59 @@ def _landing(web: Web, joint_of: dict[str, int], bridge: Bridge) -> int:
     return split_run(web, key, sample)
 
 
-def _build(web: Web, joint_of: dict[str, int], bridge: Bridge) -> None:
+def _build(web: Web, joint_of: dict[str, int], bridge: Bridge, least_bore_mm: float) -> Accepted:
     tip = joint_of[bridge.node]
+    at = (float(bridge.path_mm[0, 0]), float(bridge.path_mm[0, 1]))
     if tip not in web.joints or web.degree(tip) != 1:
-        return
+        return Accepted(bridge.id, "bridge", at, 0.0, 0.0)  # its end was bridged from the other side
     run = web.runs[web.at[tip][0]]
     half = float(run.half_mm[0] if run.start == tip else run.half_mm[-1])
     landing = _landing(web, joint_of, bridge)
     if landing == tip:
-        return
+        return Accepted(bridge.id, "bridge", at, 0.0, 0.0)
     blind = web.degree(landing) == 1 and web.joints[landing].port is None
     far_half = half
     if blind:
         other = web.runs[web.at[landing][0]]
         far_half = float(other.half_mm[0] if other.start == landing else other.half_mm[-1])
+    grey_half = max(0.5 * least_bore_mm, min(0.5 * bridge.width_mm, max(half, far_half)))
     path = bridge.path_mm.copy()
     path[0], path[-1] = web.joints[tip].place_mm, web.joints[landing].place_mm
     arc = arc_mm(path)
-    n = max(5, round(float(arc[-1]) / (0.25 * min(half, far_half))) + 1)
-    at = np.linspace(0.0, arc[-1], n)
-    place = np.column_stack([np.interp(at, arc, path[:, axis]) for axis in (0, 1)])
-    web.add_run(Run(tip, landing, place, np.linspace(half, far_half, n), np.zeros(n, dtype=bool)))
+    n = max(5, round(float(arc[-1]) / (0.25 * min(half, far_half, grey_half))) + 1)
+    at_arc = np.linspace(0.0, arc[-1], n)
+    place = np.column_stack([np.interp(at_arc, arc, path[:, axis]) for axis in (0, 1)])
+    ends = [half, grey_half, grey_half, far_half if blind else grey_half]
+    halves = np.interp(at_arc, np.array([0.0, TAPER_SHARE, 1.0 - TAPER_SHARE, 1.0]) * arc[-1], ends)
+    web.add_run(Run(tip, landing, place, halves, np.zeros(n, dtype=bool)))
     join_through(web, tip)
     join_through(web, landing)
+    return Accepted(bridge.id, "bridge", at, float(arc[-1]), 2.0 * float(halves.mean()))
+
+
+def _trim(web: Web, tip: int, end: DeadEnd) -> Accepted:
+    """Takes the branch of a dead end off, up to the junction it hangs on.
+
+    Raises:
+        SettingError: `trim-takes-port` when no junction but a port, or another dead end, lies at its other end.
+    """
+    key = web.at[tip][0] if tip in web.joints and web.degree(tip) == 1 else None
+    run = web.runs[key] if key is not None else None
+    root = None if run is None else run.end if run.start == tip else run.start
+    if key is None or run is None or root is None or web.degree(root) < 2:
+        raise SettingError(
+            "trim-takes-port",
+            expected="a dead end that hangs on a junction",
+            found=f"{end.id} at [{end.sheet_mm[0]:.1f}, {end.sheet_mm[1]:.1f}] mm, whose branch {end.branch} is all "
+            "there is between it and its other end",
+            where="[[accept]]",
+            do="Trimming it would take the whole piece off; bridge it, or leave it.",
+        )
+    done = Accepted(end.id, "trim", end.sheet_mm, run.length_mm, 2.0 * float(run.half_mm.mean()))
+    web.remove_run(key)
+    web.remove_joint(tip)
+    join_through(web, root)
+    return done
 
 
 def _suggestion(web: Web, joint_of: dict[str, int], bridge: Bridge) -> Suggestion | None:
@@ -145,4 +226,9 @@ def _suggestion(web: Web, joint_of: dict[str, int], bridge: Bridge) -> Suggestio
         bridge.gap_mm,
         bridge.lowest_density,
         bridge.likely,
+        bridge.width_mm,
+        bridge.grey,
+        bridge.grey_mm,
+        bridge.middle_mm,
+        bridge.id,
     )

@@ -19,11 +19,13 @@ from morph.core.progress import Progress
 from morph.core.verdict import Notice
 from morph.layout import notices as say
 from morph.layout.assemble import Parts, assemble
+from morph.layout.dead_ends import find_end_walls
 from morph.layout.density import Density
 from morph.layout.fold import fold, normalise
 from morph.layout.graph import ChannelGraph, Dropped, LevelCount
 from morph.layout.level import (
     EIGHT,
+    Grid,
     Picture,
     clean,
     find_level,
@@ -192,6 +194,13 @@ def find_joined_graph(
         tuple(found),
         traced.picture.grid.pixel_mm,
         strip.turn_mm,
+        ends=find_end_walls(
+            web,
+            smoothed(one_turn(density), joined=True),
+            Grid(density.first_mm, density.pitch_mm),
+            level,
+            strip.turn_mm,
+        ),
     )
     graph = assemble(web, parts, [])
     progress.step(STAGE, N_STEPS, N_STEPS)

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from morph.core.verdict import Notice
 from morph.core.words import counted
-from morph.layout.graph import Bridge, Dropped, LevelCount
+from morph.layout.graph import Accepted, Bridge, Dropped, LevelCount
 
 Place = tuple[float, float]
 
@@ -93,4 +93,23 @@ def likely_bridge(bridge: Bridge) -> Notice:
         "It is not built unless accepted.",
         (),
         place,
+    )
+
+
+def accepted(done: Accepted) -> Notice:
+    """Says what was built or taken off because the job accepts it."""
+    if done.what == "bridge":
+        return Notice(
+            "bridge-built",
+            f"Suggestion {done.id} is built as accepted: from {_at(done.sheet_mm)}, {done.length_mm:.1f} mm long, mean "
+            f"bore {done.bore_mm:.1f} mm.",
+            (),
+            done.sheet_mm,
+        )
+    return Notice(
+        "dead-end-trimmed",
+        f"Dead end {done.id} at {_at(done.sheet_mm)} is taken off as accepted: {done.length_mm:.1f} mm, mean bore "
+        f"{done.bore_mm:.1f} mm.",
+        (),
+        done.sheet_mm,
     )

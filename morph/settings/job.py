@@ -182,6 +182,39 @@ class ConeSettings:
     map: ConeMap = ConeMap.FLAT
 
 
+@dataclass(frozen=True, slots=True)
+class AcceptSettings:
+    """One [[accept]]: a suggestion of the layout stage that is to be carried out.
+
+    Args:
+        bridge: id of a suggested way on ("G2"), or True for the one at `at_mm`.
+        trim: id of a dead end to be taken off ("D1"), or True for the one at `at_mm`. Exactly one of both is given.
+        at_mm: its place on the sheet; beside an id it says where that id must still be.
+    """
+
+    bridge: str | bool | None = None
+    trim: str | bool | None = None
+    at_mm: tuple[float, float] | None = None
+
+
+@dataclass(frozen=True, slots=True)
+class KeepOutSettings:
+    """One [[keep_out]]: a disc (`at_mm`, `diameter_mm`) or a polygon on the sheet that channels stay clear of.
+
+    Args:
+        name: how messages call it.
+        at_mm: centre of the disc. diameter_mm: of the disc.
+        polygon_mm: corners of the polygon in order, not closed.
+        clearance_mm: least metal between it and a channel's wall, measured on the sheet.
+    """
+
+    name: str
+    at_mm: tuple[float, float] | None = None
+    diameter_mm: float | None = None
+    polygon_mm: tuple[tuple[float, float], ...] | None = None
+    clearance_mm: float = 0.0
+
+
 class SectionShape(StrEnum):
     """The cross-section of a channel; auto is round where a round ceiling prints freely, else roofed."""
 
@@ -375,4 +408,6 @@ class Job:
     blank: BlankSettings = field(default_factory=BlankSettings)
     holes: tuple[HoleSettings, ...] = ()
     quality: QualitySettings = field(default_factory=QualitySettings)
+    accepts: tuple[AcceptSettings, ...] = ()
+    keep_outs: tuple[KeepOutSettings, ...] = ()
     coolant: CoolantSettings | None = None

@@ -22,6 +22,7 @@ from morph.settings.parse_shape import (
     parse_holes,
     parse_section,
 )
+from morph.settings.parse_sheet import MOST_ACCEPTS, MOST_KEEP_OUTS, parse_accepts, parse_keep_outs
 from morph.settings.profile import read_profile
 from morph.settings.table import Table
 from morph.settings.toml_file import parse_toml, read_bounded
@@ -30,7 +31,7 @@ DEFAULT_PROCESS = "steel-40um"
 FINEST_H_MM, COARSEST_H_MM = 0.05, 1.0
 
 _NAME = re.compile(r"[A-Za-z0-9_-][A-Za-z0-9._-]{0,63}")
-_TABLES = ("layout", "port", "carrier", "section", "print", "service", "blank", "hole", "quality")
+_TABLES = ("layout", "port", "carrier", "section", "print", "service", "blank", "hole", "quality", "accept", "keep_out")
 _LATER = {"coolant": "The flow stage", "moulding": "The thermal stage"}
 _WALLS = ("wall_face_mm", "wall_between_mm", "wall_outer_mm", "wall_hole_mm")
 
@@ -72,6 +73,8 @@ def parse_job(content: bytes, path: Path) -> Job:
         blank=parse_blank(top.raw("blank") if top.has("blank") else {}, file),
         holes=parse_holes(top.tables("hole", MOST_HOLES), file),
         quality=_quality(top.raw("quality") if top.has("quality") else {}, file),
+        accepts=parse_accepts(top.tables("accept", MOST_ACCEPTS), file),
+        keep_outs=parse_keep_outs(top.tables("keep_out", MOST_KEEP_OUTS), file),
     )
 
 
