@@ -59,7 +59,7 @@ def not_its_format(name: str, expected: str, found: str) -> InputError:
 def without_triangles(name: str) -> InputError:
     """Returns the error for a file without a single triangle."""
     return InputError(
-        "mesh-empty",
+        "mesh-no-triangles",
         expected="triangles of a closed body",
         found="no triangle",
         where=name,

@@ -41,7 +41,7 @@ def read_step(content: bytes, name: str) -> Soup:
 
     Raises:
         InputError: `step-reader-missing` without the extra, `mesh-not-its-format`, `mesh-truncated`, `mesh-damaged`,
-            `mesh-empty`, `mesh-too-many-triangles`, `mesh-file-too-large`.
+            `mesh-no-triangles`, `mesh-too-many-triangles`, `mesh-file-too-large`.
     """
     if not content[:4096].lstrip().startswith(OPENS):
         raise not_its_format(name, f"a STEP file that starts with {OPENS.decode()}", "another beginning")
@@ -85,7 +85,7 @@ def _work(content: bytes, folder: Path, name: str) -> Soup:
         raise damaged(name, f"a file the kernel reads within {LONGEST_SECONDS:.0f} s", "a longer time") from None
     if done.returncode == NO_SOLID:
         raise InputError(
-            "mesh-empty",
+            "mesh-no-triangles",
             expected="a solid in the STEP file",
             found="none (surfaces, curves or an empty product)",
             where=name,

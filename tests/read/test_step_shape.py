@@ -66,7 +66,7 @@ def test_a_face_alone_is_no_solid(tmp_path):
     face = BRepBuilderAPI_MakeFace(gp_Pln(), 0.0, 20.0, 0.0, 20.0).Shape()
     with pytest.raises(MorphError) as caught:
         read_mesh(write_step(tmp_path / "a.step", face))
-    assert caught.value.code == "mesh-empty"
+    assert caught.value.code == "mesh-no-triangles"
 
 
 def test_nonsense_between_the_right_ends_is_damaged(tmp_path):
