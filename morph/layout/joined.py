@@ -173,8 +173,8 @@ def find_joined_graph(
     """
     strip = make_strip(density)
     level = find_level(density, settings)
-    laid = _lay_ports(strip, ports)
-    web, traced, betti = _trace_turn(strip, level, laid, ports, progress)
+    laid = lay_ports(strip, ports)
+    web, traced, betti = trace_turn(strip, level, laid, ports, progress)
     turned = strip.turn_of(traced.picture)
     normalise(web, strip.turn_mm, strip.shift_mm)
     progress.step(STAGE, 4, N_STEPS)
@@ -207,7 +207,7 @@ def find_joined_graph(
     return graph
 
 
-def _lay_ports(strip: Strip, ports: tuple[PortSettings, ...]) -> tuple[PortSettings, ...]:
+def lay_ports(strip: Strip, ports: tuple[PortSettings, ...]) -> tuple[PortSettings, ...]:
     """Returns every copy of every port on the part of the strip that the fold may keep."""
     low, high = 0.45 * strip.margin_mm, strip.turn_mm + 1.55 * strip.margin_mm
     laid = []
@@ -219,7 +219,7 @@ def _lay_ports(strip: Strip, ports: tuple[PortSettings, ...]) -> tuple[PortSetti
     return tuple(laid)
 
 
-def _trace_turn(
+def trace_turn(
     strip: Strip, level: float, laid: tuple[PortSettings, ...], ports: tuple[PortSettings, ...], progress: Progress
 ) -> tuple[Web, Traced, tuple[int, int]]:
     """Returns the folded web with its ports, the strip's trace, and pieces and loops of the picture around the turn.

@@ -81,7 +81,7 @@ def smoothed(value: Floats, *, joined: bool = False) -> Floats:
     return np.asarray(0.25 * (rows[:, :-2] + rows[:, 2:]) + 0.5 * rows[:, 1:-1], dtype=np.float64)
 
 
-def _cell_weight(shape: tuple[int, ...], samples: Samples) -> Floats:
+def cell_weight(shape: tuple[int, ...], samples: Samples) -> Floats:
     """Returns the share of the sheet each sample stands for: edge nodes count half."""
     weight = np.ones(shape)
     if samples is Samples.NODES:
@@ -105,7 +105,7 @@ def find_level(density: Density, settings: LayoutSettings) -> float:
         return float(settings.level)
     if settings.level is LevelRule.HALF:
         return 0.5
-    weight = _cell_weight(density.value.shape, density.samples).ravel()
+    weight = cell_weight(density.value.shape, density.samples).ravel()
     wanted = settings.area_ratio if settings.area_ratio is not None else float(weight @ density.value.ravel())
     value = smoothed(density.value, joined=density.seam is Seam.JOINED).ravel()
     order = np.argsort(-value, kind="stable")
@@ -190,7 +190,7 @@ def measure_area_ratio(picture: Picture, samples: Samples) -> float:
     """Returns coolant area over sheet area; a sample cut by the contour counts with the share the contour leaves it."""
     slope = np.hypot(*np.gradient(picture.field))
     share = np.clip(0.5 + (picture.field - picture.level) / np.maximum(slope, 1e-9), 0.0, 1.0)
-    return float((share * _cell_weight(share.shape, samples)).sum())
+    return float((share * cell_weight(share.shape, samples)).sum())
 
 
 def clean(mask: Bools, width_px: float, keep_px: Floats) -> Cleaned:
