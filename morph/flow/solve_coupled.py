@@ -9,7 +9,7 @@ convexity that makes the plain one safe.
 from __future__ import annotations
 
 from dataclasses import dataclass, field
-from typing import Any, Protocol
+from typing import Any, NamedTuple, Protocol
 
 import numpy as np
 
@@ -76,15 +76,13 @@ class CoupledSystem:
         key = np.concatenate(columns) * self._n + np.concatenate(rows)
         self._keep, self._place = np.unique(key, return_inverse=True)
 
-    def step(self, slope: Floats, share: float, flow: Floats, unbalanced: Floats, excess: Floats) -> Floats:
-        """Returns the change of flows and pressures (m + u,) of one round, not finite where there is none.
+    def factored(self, slope: Floats, share: float, flow: Floats) -> RoundFactor | None:
+        """Returns the factored system of a round, or None when it is singular.
 
         Args:
             slope: (m,) of the pipes' own drop.
             share: of the coupling.
-            flow: (m,) flows it starts from.
-            unbalanced: (m,) pressure left over along each pipe.
-            excess: (u,) flow left over at each free node.
+            flow: (m,) flows it stands at.
         """
         from scipy.sparse import csc_matrix
         from scipy.sparse.linalg import splu
@@ -93,18 +91,46 @@ class CoupledSystem:
         flow_unit = max(float(np.abs(flow).max(initial=0.0)), 1e-300)
         pressure_unit = max(float(np.max(slope[live], initial=0.0)) * flow_unit, 1e-300)
         row, column = self.coupling.pattern()
-        own = np.where(live, slope, pressure_unit / flow_unit) * flow_unit / pressure_unit
-        added = np.where(live[row] & live[column], share * self.coupling.slopes(flow), 0.0) * flow_unit / pressure_unit
+        scale = flow_unit / pressure_unit
+        own = np.where(live, slope * scale, 1.0)
+        added = np.where(live[row] & live[column], share * self.coupling.slopes(flow), 0.0) * scale
         value = np.bincount(self._place, np.concatenate([own, added, self._fixed_part]), len(self._keep))
         starts = np.searchsorted(self._keep // self._n, np.arange(self._n + 1))
         matrix = csc_matrix((value, self._keep % self._n, starts), shape=(self._n, self._n))
-        right = np.concatenate([-np.where(live, unbalanced, 0.0) / pressure_unit, -excess / flow_unit])
         try:
-            found = splu(matrix).solve(right)
-        except RuntimeError:  # singular: the caller shortens its step
-            return np.full(self._n, np.nan)
-        m = len(slope)
-        return np.concatenate([found[:m] * flow_unit, found[m:] * pressure_unit])
+            return RoundFactor(splu(matrix), flow_unit, pressure_unit)
+        except RuntimeError:  # singular: the caller takes smaller steps
+            return None
+
+
+class RoundFactor(NamedTuple):
+    """A factored round in scaled units: flows over `flow_unit`, pressures over `pressure_unit`."""
+
+    factor: Any
+    flow_unit: float
+    pressure_unit: float
+
+    def step(self, unbalanced: Floats, excess: Floats) -> tuple[Floats, Floats]:
+        """Returns the changes of flows (m,) and pressures (u,) that take away what is left over.
+
+        Args:
+            unbalanced: (m,) pressure left over along each pipe.
+            excess: (u,) flow left over at each free node.
+        """
+        found = self.factor.solve(np.concatenate([-unbalanced / self.pressure_unit, -excess / self.flow_unit]))
+        m = len(unbalanced)
+        return found[:m] * self.flow_unit, found[m:] * self.pressure_unit
+
+    def adjoint(self, by_flow: Floats, by_pressure: Floats) -> Floats:
+        """Returns how a figure changes per pressure (m,) added to the drop of each pipe, with the sign turned.
+
+        Args:
+            by_flow: (m,) slopes of the figure in the flows.
+            by_pressure: (u,) slopes in the pressures of the free nodes.
+        """
+        right = np.concatenate([by_flow * self.flow_unit, by_pressure * self.pressure_unit])
+        found = self.factor.solve(right, trans="T")
+        return np.asarray(found[: len(by_flow)] / self.pressure_unit, dtype=np.float64)
 
 
 def solve_coupled(
@@ -150,19 +176,22 @@ def solve_coupled(
 def _newton(coupled: CoupledSystem, law: Law, fed: Floats, start: GridState, share: float) -> GridState | None:
     """Returns the solution at a share of the coupling, or None when the rounds do not settle."""
     system, grid = coupled.system, coupled.system.grid
-    m, live, free = grid.n_pipes, system.live, system.free
+    live, free = system.live, system.free
     flow, pressure = start.flow.copy(), start.pressure.copy()
     drop, slope = law.drop(flow)
     left = _unbalanced(grid, live, pressure, drop + share * coupled.coupling.drop(flow))
     for rounds in range(1, MOST_ROUNDS + 1):
-        move = coupled.step(slope, share, flow, left, (grid.leaving(flow) - fed)[free])
-        if not np.isfinite(move).all():
+        factor = coupled.factored(slope, share, flow)
+        if factor is None:
+            return None
+        move, lift = factor.step(left, (grid.leaving(flow) - fed)[free])
+        if not (np.isfinite(move).all() and np.isfinite(lift).all()):
             return None
         size, part = float(np.abs(left).max(initial=0.0)), 1.0
         for _ in range(MOST_HALVINGS):
-            next_flow = flow + part * np.where(live, move[:m], 0.0)
+            next_flow = flow + part * np.where(live, move, 0.0)
             next_pressure = pressure.copy()
-            next_pressure[free] += part * move[m:]
+            next_pressure[free] += part * lift
             drop, slope = law.drop(next_flow)
             next_left = _unbalanced(grid, live, next_pressure, drop + share * coupled.coupling.drop(next_flow))
             if float(np.abs(next_left).max(initial=0.0)) <= (1.0 - 0.1 * part) * size or size == 0.0:

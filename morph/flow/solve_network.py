@@ -38,6 +38,7 @@ class NetworkState:
         reached: (n,) hangs together with a supply.
         supply_flow_m3_s, supply_drop_pa: (k,) flow and drop between feed and return of each supply.
         rounds: Newton rounds of the last solve.
+        pipe_flow_m3_s: (m + hoses,) the same flows and those of the hoses.
     """
 
     flow_m3_s: Floats
@@ -46,6 +47,7 @@ class NetworkState:
     supply_flow_m3_s: Floats
     supply_drop_pa: Floats
     rounds: int
+    pipe_flow_m3_s: Floats
 
 
 @dataclass(slots=True, eq=False)
@@ -144,6 +146,38 @@ class NetworkSolver:
             flow[supply] = last * brentq(short_of, 0.0, 1.0, xtol=PUMP_TOLERANCE, rtol=1e-12)
         return self._solve_given(liquid, flow, None, None)
 
+    def slopes_by_log_bore(
+        self, liquid: Liquid, state: NetworkState, by_flow: Floats, by_drop: Floats, drop_given: bool = False
+    ) -> Floats:
+        """Returns how a figure changes (m,) with ln of the bores of each branch, lengths and bends held (adjoint).
+
+        Args:
+            liquid: the coolant.
+            state: a solution of this network.
+            by_flow: (m,) slopes of the figure in the flows of branches.
+            by_drop: (k,) slopes in the drops of the supplies; they do not count when those are given.
+            drop_given: the drops of the supplies are given, else their flows.
+
+        Raises:
+            ValueError: the network cannot be told from one that stands still at this state.
+        """
+        system, flow, m = self._system(drop_given), state.pipe_flow_m3_s, self.network.n_branches
+        law = self.pipe_law(liquid)
+        junctions = JunctionLaw(self.network.junctions, liquid.density_kg_m3, len(flow))
+        factor = CoupledSystem(system, junctions).factored(law.drop(flow)[1], 1.0, flow)
+        if factor is None:
+            raise ValueError("state: expected a solution whose flows hang together")
+        pressure = np.zeros(self._n_nodes)
+        pressure[self._feed], pressure[self._return] = by_drop, -np.asarray(by_drop)
+        own = np.concatenate([by_flow, np.zeros(len(flow) - m)])
+        weight = np.where(system.live, factor.adjoint(np.where(system.live, own, 0.0), pressure[system.free]), 0.0)
+        size, cost = law.cost(flow)
+        by_bore = law.segments.summed(2.0 * cost.by_log_area + cost.by_log_diameter) * flow / size
+        row, segment, slope = junctions.by_log_area(flow)
+        branch = law.segments.pipe[segment]
+        total = -weight * by_bore - np.bincount(branch, 2.0 * weight[row] * slope, len(flow))
+        return np.asarray(total[:m], dtype=np.float64)
+
     def _system(self, drop_given: bool) -> PressureSystem:
         if drop_given not in self._systems:
             fixed = np.concatenate([self._return, self._feed]) if drop_given else self._return
@@ -165,10 +199,7 @@ class NetworkSolver:
         junctions = JunctionLaw(network.junctions, liquid.density_kg_m3, len(self._start))
         coupled = self._coupled.setdefault(drop is not None, CoupledSystem(system, junctions))
         coupled.coupling = junctions
-        started = None
-        if warm is not None and len(self._start) == network.n_branches:
-            started = warm.flow_m3_s
-        state = solve_coupled(coupled, law, fixed, fed, started)
+        state = solve_coupled(coupled, law, fixed, fed, None if warm is None else warm.pipe_flow_m3_s)
         leaving = system.grid.leaving(state.flow)
         return NetworkState(
             flow_m3_s=state.flow[: network.n_branches],
@@ -177,4 +208,5 @@ class NetworkSolver:
             supply_flow_m3_s=leaving[self._feed],
             supply_drop_pa=state.pressure[self._feed] - state.pressure[self._return],
             rounds=state.rounds,
+            pipe_flow_m3_s=state.flow,
         )
