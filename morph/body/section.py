@@ -12,7 +12,9 @@ up is the build direction. A channel whose tangent makes an angle with sine s to
 its tangent: the apex stands s r / cos b above the centre, and once s < cos b it is inside the circle, so a
 channel that climbs is round without any rule. The auto section also fades by bore: the cone gets the smaller
 radius q r with q from cos b (its apex just touches the ball: round) to 1 (full roof). Faces of the cone keep the
-roof angle all the way.
+roof angle all the way. The bore itself is held against the free span, all along the channel: a round ceiling
+flatter than b spans 2 r sin b in a straight channel, and up to sqrt 2 of that where channels cross (the circle
+through the corners of a cross), which at b = 45 degrees is the bore.
 """
 
 from __future__ import annotations
@@ -30,14 +32,10 @@ ROOF_MARGIN_DEG = 2.0
 """Roofs are built this much steeper than the limit: one built at the limit is judged by the noise of its facets."""
 
 FADE_FROM = 0.85
-"""Auto: the roof starts to grow where the round ceiling spans this share of the free span, and is full at all of it."""
+"""Auto: the roof starts to grow at bores of this share of the free span, and is full at all of it."""
 
 QUADRATURE = 7200
 """Directions of the quadrature over support functions; areas are good to 1e-6."""
-
-
-JUNCTION_SPAN = math.sqrt(2.0)
-"""Where channels meet a ceiling spans up to this times the width of one: the circle through the corners of a cross."""
 
 
 def _up() -> Floats:
@@ -52,7 +50,7 @@ class SectionRule:
         shape: round, roofed, arched or auto.
         roof_angle_deg: angle to the build plate at which roofs are built.
         up: (3,) unit build direction.
-        free_span_mm: widest ceiling flatter than the roof angle that auto leaves round.
+        free_span_mm: auto is roofed from this bore on.
     """
 
     shape: SectionShape = SectionShape.ROUND
@@ -90,26 +88,19 @@ def make_section_rule(section: SectionSettings, profile: Profile, up: tuple[floa
     return SectionRule(section.shape, angle, np.asarray(up, dtype=np.float64), span)
 
 
-def roof_share(bore_mm: Floats, rule: SectionRule, span_ratio: Floats | float = 1.0) -> Floats:
+def roof_share(bore_mm: Floats, rule: SectionRule) -> Floats:
     """Returns how much roof (k,) channels of bore (k,) get, 0 round to 1 full, smooth in the bore.
 
-    A round ceiling flatter than the roof angle b spans bore sin b. Auto leaves it round below FADE_FROM of the free
-    span.
-
-    Args:
-        bore_mm: (k,) bores.
-        rule: the section.
-        span_ratio: (k,) how much wider than in a straight channel a ceiling spans here (junctions).
+    Auto leaves bores below FADE_FROM of the free span round; see the head of the file for why the bore is asked.
 
     >>> rule = SectionRule(SectionShape.AUTO, 47.0, free_span_mm=6.0)
-    >>> roof_share(np.array([5.0, 8.0, 9.0]), rule).round(3).tolist()
-    [0.0, 0.927, 1.0]
+    >>> roof_share(np.array([5.0, 5.55, 6.0]), rule).round(3).tolist()
+    [0.0, 0.5, 1.0]
     """
     bore = np.asarray(bore_mm, dtype=np.float64)
     if rule.shape is not SectionShape.AUTO:
         return np.full(bore.shape, float(rule.shape is not SectionShape.ROUND))
-    span = span_ratio * bore * math.sin(math.radians(rule.roof_angle_deg))
-    share = np.clip((span / max(rule.free_span_mm, 1e-9) - FADE_FROM) / (1.0 - FADE_FROM), 0.0, 1.0)
+    share = np.clip((bore / max(rule.free_span_mm, 1e-9) - FADE_FROM) / (1.0 - FADE_FROM), 0.0, 1.0)
     return np.asarray(share * share * (3.0 - 2.0 * share))
 
 
@@ -143,25 +134,24 @@ def apex_mm(bore_mm: Floats, tangent: Floats, rule: SectionRule) -> Floats:
     return _support(0.5 * np.asarray(bore_mm, dtype=np.float64), sine, rule, roof_share(bore_mm, rule))
 
 
-def reach_mm(bore_mm: Floats, direction: Floats, rule: SectionRule, span_ratio: float = 1.0) -> Floats:
+def reach_mm(bore_mm: Floats, direction: Floats, rule: SectionRule) -> Floats:
     """Returns how far (k,) channels of bore (k,) reach from their centreline towards unit directions (k, 3).
 
-    This is the ball's support: bore / 2 sideways and down, bore / (2 cos b) for a roof that looks that way;
-    `span_ratio` as in `roof_share`.
+    This is the ball's support: bore / 2 sideways and down, bore / (2 cos b) for a roof that looks that way.
 
     >>> rule = SectionRule(SectionShape.ROOFED, 45.0)
     >>> reach_mm(np.array([4.0, 4.0]), np.array([[0.0, 0.0, 1.0], [1.0, 0.0, 0.0]]), rule).round(4).tolist()
     [2.8284, 2.0]
     """
     rise = np.asarray(direction, dtype=np.float64) @ rule.up
-    return _support(0.5 * np.asarray(bore_mm, dtype=np.float64), rise, rule, roof_share(bore_mm, rule, span_ratio))
+    return _support(0.5 * np.asarray(bore_mm, dtype=np.float64), rise, rule, roof_share(bore_mm, rule))
 
 
 def bore_of_reach_mm(reach: Floats, direction: Floats, rule: SectionRule, wall_bores: float = 0.0) -> Floats:
     """Returns the largest bore (k,) that reaches at most `reach` (k,) mm towards unit directions (k, 3).
 
     With `wall_bores` its reach plus that many bores. The reach grows with the bore; by bisection to 1e-9 of the answer
-    where the roof fades, else closed. Auto is taken as at a junction, where its roof starts at smaller bores.
+    where the roof fades, else closed.
 
     >>> rule = SectionRule(SectionShape.ROOFED, 45.0)
     >>> bore_of_reach_mm(np.array([2.0, -1.0]), np.array([[0.0, 0.0, 1.0]] * 2), rule).round(4).tolist()
@@ -178,7 +168,7 @@ def bore_of_reach_mm(reach: Floats, direction: Floats, rule: SectionRule, wall_b
     low, high = np.minimum(low, high), np.maximum(low, high)
     for _ in range(40):
         middle = 0.5 * (low + high)
-        fits = reach_mm(np.maximum(middle, 0.0), unit, rule, JUNCTION_SPAN) + wall_bores * middle <= reach
+        fits = reach_mm(np.maximum(middle, 0.0), unit, rule) + wall_bores * middle <= reach
         low, high = np.where(fits, middle, low), np.where(fits, high, middle)
     return np.where(reach > 0.0, low, reach / (0.5 + wall_bores))
 

@@ -17,16 +17,13 @@ from dataclasses import dataclass
 import numpy as np
 
 from morph.body.plan import ChannelPlan, PlanBranch
-from morph.body.section import JUNCTION_SPAN, SectionRule, roof_radius_ratio, roof_share
+from morph.body.section import SectionRule, roof_radius_ratio, roof_share
 from morph.core.arrays import Floats, Ints, frozen_floats, frozen_ints
 from morph.core.tolerance import COINCIDE_MM
 from morph.settings.job import SectionShape
 
 STEEPEST_TAPER = 0.95
 """Change of radius per length above which a tapered piece is replaced by its two end balls: one nearly holds both."""
-
-JUNCTION_FULL_BORES, JUNCTION_NONE_BORES = 1.0, 2.5
-"""A ceiling counts as that of a junction up to so many bores from its node, and no longer from so many on."""
 
 BLEND_REACH_BORES = 4.0
 """Blending has faded out at this many bores from the node; full up to half of it."""
@@ -79,9 +76,8 @@ def make_sweep(plan: ChannelPlan) -> Sweep:
     widest = np.zeros(len(plan.nodes))
     pieces: list[Floats] = []
     owner: list[tuple[int, int, int]] = []
-    meeting = _junctions(plan)
     for branch in plan.branches:
-        share = _share_along(branch, plan.section, meeting)
+        share = roof_share(branch.bore_mm, plan.section)
         for half, (node_id, points, bores, shares) in enumerate(_halves(branch, share)):
             xyz, bore, share = points, bores, shares
             number = node_number[node_id]
@@ -105,26 +101,8 @@ def make_sweep(plan: ChannelPlan) -> Sweep:
     )
 
 
-def _junctions(plan: ChannelPlan) -> frozenset[str]:
-    """Returns the ids of the nodes where three or more channels meet."""
-    ends = [node for branch in plan.branches for node in (branch.start, branch.end)]
-    return frozenset(node for node in ends if ends.count(node) >= 3)
-
-
 def _along_mm(xyz_mm: Floats) -> Floats:
     return np.concatenate([[0.0], np.cumsum(np.linalg.norm(np.diff(xyz_mm, axis=0), axis=1))])
-
-
-def _share_along(branch: PlanBranch, rule: SectionRule, meeting: frozenset[str]) -> Floats:
-    """Returns the share of roof (k,) at the samples of a branch; near junctions an auto ceiling spans more."""
-    along = _along_mm(branch.xyz_mm)
-    near = np.zeros(len(along))
-    for node, away in ((branch.start, along), (branch.end, along[-1] - along)):
-        if node in meeting:
-            bores = away / branch.bore_mm
-            ramp = np.clip((JUNCTION_NONE_BORES - bores) / (JUNCTION_NONE_BORES - JUNCTION_FULL_BORES), 0.0, 1.0)
-            near = np.maximum(near, ramp * ramp * (3.0 - 2.0 * ramp))
-    return roof_share(branch.bore_mm, rule, 1.0 + (JUNCTION_SPAN - 1.0) * near)
 
 
 def _halves(branch: PlanBranch, share: Floats) -> list[tuple[str, Floats, Floats, Floats]]:

@@ -116,10 +116,10 @@ def test_openings_of_a_roofed_channel_have_its_area():
 
 
 def test_auto_is_round_below_the_free_span_and_roofed_above_without_a_step():
-    """A bore from 4 to 12 mm along x: the top of the section rises smoothly from r to r / cos b."""
+    """A bore from 4 to 8 mm along x: the top of the section rises smoothly from r to r / cos b."""
     x = np.linspace(8.0, 52.0, 89)
     path = np.column_stack([x, np.full(89, 20.0), np.full(89, 13.0)])
-    bore = np.linspace(4.0, 12.0, 89)
+    bore = np.linspace(4.0, 8.0, 89)
     plan = plans.plan_of([plans.branch("B1", "N1", "N2", path, bore)], dead_ends=("N1", "N2"))
     mesh = make_channel_solid(shaped(plan, "auto", 47.0, free_span_mm=5.85), plans.box_blank(), 0.3).trimmed
     rise = []
