@@ -9,7 +9,7 @@ import numpy as np
 
 from morph.core.arrays import Bools, Floats, Ints
 from morph.core.units import l_min_from_m3_s
-from morph.flow.drive import Drive, GivenDrop, GivenFlow, PumpCurve, require_meeting
+from morph.flow.drive import Drive, GivenDrop, PumpCurve, require_meeting
 from morph.flow.grid import Grid, PressureSystem
 from morph.flow.junction import JunctionLaw
 from morph.flow.network import FlowNetwork, join_segments
@@ -39,6 +39,7 @@ class NetworkState:
         supply_flow_m3_s, supply_drop_pa: (k,) flow and drop between feed and return of each supply.
         rounds: Newton rounds of the last solve.
         pipe_flow_m3_s: (m + hoses,) the same flows and those of the hoses.
+        pipe_start_pa, pipe_end_pa: (m + hoses,) total pressures of the nodes at both ends.
     """
 
     flow_m3_s: Floats
@@ -48,6 +49,8 @@ class NetworkState:
     supply_drop_pa: Floats
     rounds: int
     pipe_flow_m3_s: Floats
+    pipe_start_pa: Floats
+    pipe_end_pa: Floats
 
 
 @dataclass(slots=True, eq=False)
@@ -57,6 +60,7 @@ class NetworkSolver:
     Args:
         network: the channels.
         reverse: coolant enters by the out ports and leaves by the in ports.
+        hose_supply: the supply of each hose; hoses come after the branches.
     """
 
     network: FlowNetwork
@@ -67,6 +71,7 @@ class NetworkSolver:
     _start: Ints = field(init=False)
     _end: Ints = field(init=False)
     _n_nodes: int = field(init=False)
+    hose_supply: Ints = field(init=False)
     _systems: dict[bool, PressureSystem] = field(init=False, default_factory=dict)
     _coupled: dict[bool, CoupledSystem] = field(init=False, default_factory=dict)
 
@@ -78,14 +83,17 @@ class NetworkSolver:
         self._node = np.arange(n, dtype=np.int64)
         hose_start: list[int] = []
         hose_end: list[int] = []
+        supplies: list[int] = []
         for port in network.ports:
             feeds = (port.role is Role.IN) != self.reverse
             manifold = int((self._feed if feeds else self._return)[port.supply])
             if network.hose is not None and port.role is Role.IN:
                 hose_start.append(manifold)
                 hose_end.append(port.node)
+                supplies.append(port.supply)
             else:
                 self._node[port.node] = manifold
+        self.hose_supply = np.array(supplies, dtype=np.int64)
         self._start = np.concatenate([self._node[network.start], np.array(hose_start, dtype=np.int64)])
         self._end = np.concatenate([self._node[network.end], np.array(hose_end, dtype=np.int64)])
 
@@ -117,14 +125,20 @@ class NetworkSolver:
         k = self.network.n_supplies
         if isinstance(drive, PumpCurve):
             return self._solve_pump(liquid, drive)
-        flow = drive.flow_m3_s if isinstance(drive, GivenFlow) else None
-        drop = drive.drop_pa if isinstance(drive, GivenDrop) else None
-        return self._solve_given(
-            liquid,
-            None if flow is None else np.full(k, flow),
-            None if drop is None else np.full(k, drop),
-            warm,
-        )
+        if isinstance(drive, GivenDrop):
+            return self.solve_drops(liquid, np.full(k, drive.drop_pa), warm)
+        return self.solve_flows(liquid, np.full(k, drive.flow_m3_s), warm)
+
+    def solve_flows(self, liquid: Liquid, flow_m3_s: Floats, warm: NetworkState | None = None) -> NetworkState:
+        """Returns the state at given flows (k,) of the supplies."""
+        fed = np.zeros(self._n_nodes)
+        fed[self._feed] = flow_m3_s
+        return self._solve_given(liquid, False, np.zeros(len(flow_m3_s)), fed, warm)
+
+    def solve_drops(self, liquid: Liquid, drop_pa: Floats, warm: NetworkState | None = None) -> NetworkState:
+        """Returns the state at given drops (k,) of the supplies."""
+        fixed = np.concatenate([np.zeros(len(drop_pa)), drop_pa])
+        return self._solve_given(liquid, True, fixed, np.zeros(self._n_nodes), warm)
 
     def _solve_pump(self, liquid: Liquid, curve: PumpCurve) -> NetworkState:
         """Returns the state where each supply's pump meets its part of the network; supplies do not touch."""
@@ -132,7 +146,7 @@ class NetworkSolver:
 
         k = self.network.n_supplies
         last = float(curve.flow_m3_s[-1])
-        at_last = self._solve_given(liquid, np.full(k, last), None, None)
+        at_last = self.solve_flows(liquid, np.full(k, last))
         flow = np.empty(k)
         for supply in range(k):
             require_meeting(curve, float(at_last.supply_drop_pa[supply]), l_min_from_m3_s(last))
@@ -140,11 +154,11 @@ class NetworkSolver:
             def short_of(share: float, supply: int = supply) -> float:
                 if share == 0.0:
                     return float(curve.head_pa[0])
-                fed = np.full(k, share * last)
-                return curve.at(share * last) - float(self._solve_given(liquid, fed, None, None).supply_drop_pa[supply])
+                found = self.solve_flows(liquid, np.full(k, share * last), at_last)
+                return curve.at(share * last) - float(found.supply_drop_pa[supply])
 
             flow[supply] = last * brentq(short_of, 0.0, 1.0, xtol=PUMP_TOLERANCE, rtol=1e-12)
-        return self._solve_given(liquid, flow, None, None)
+        return self.solve_flows(liquid, flow, at_last)
 
     def slopes_by_log_bore(
         self, liquid: Liquid, state: NetworkState, by_flow: Floats, by_drop: Floats, drop_given: bool = False
@@ -185,19 +199,12 @@ class NetworkSolver:
         return self._systems[drop_given]
 
     def _solve_given(
-        self, liquid: Liquid, flow: Floats | None, drop: Floats | None, warm: NetworkState | None
+        self, liquid: Liquid, drop_given: bool, fixed: Floats, fed: Floats, warm: NetworkState | None
     ) -> NetworkState:
-        """Returns the state for flows (k,) or drops (k,) of the supplies."""
-        network, k = self.network, self.network.n_supplies
-        system = self._system(drop is not None)
-        law = self.pipe_law(liquid)
-        fixed, fed = np.zeros(k), np.zeros(self._n_nodes)
-        if drop is not None:
-            fixed = np.concatenate([fixed, drop])
-        elif flow is not None:
-            fed[self._feed] = flow
+        """Returns the state for pressures of the fixed nodes and flows (n,) fed into nodes."""
+        network, system, law = self.network, self._system(drop_given), self.pipe_law(liquid)
         junctions = JunctionLaw(network.junctions, liquid.density_kg_m3, len(self._start))
-        coupled = self._coupled.setdefault(drop is not None, CoupledSystem(system, junctions))
+        coupled = self._coupled.setdefault(drop_given, CoupledSystem(system, junctions))
         coupled.coupling = junctions
         state = solve_coupled(coupled, law, fixed, fed, None if warm is None else warm.pipe_flow_m3_s)
         leaving = system.grid.leaving(state.flow)
@@ -209,4 +216,6 @@ class NetworkSolver:
             supply_drop_pa=state.pressure[self._feed] - state.pressure[self._return],
             rounds=state.rounds,
             pipe_flow_m3_s=state.flow,
+            pipe_start_pa=state.pressure[self._start],
+            pipe_end_pa=state.pressure[self._end],
         )
