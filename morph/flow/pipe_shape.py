@@ -16,9 +16,9 @@ from morph.body.plan import PlanBranch
 from morph.body.section import SectionRule, climb_sine, hydraulic_diameter_mm, section_area_mm2
 from morph.core.arrays import Floats
 from morph.core.errors import FlowError
+from morph.flow.duct_table import friction_factor_re
 from morph.flow.friction import ROUND_FRICTION_RE
 from morph.flow.pipe_law import Segments
-from morph.flow.section_factor import friction_re
 from morph.settings.profile import Profile
 
 JUNCTION_DIAMETERS = 0.4
@@ -98,7 +98,7 @@ def branch_segments(
     tangent = step / np.maximum(chord, 1e-12)[:, None]
     middle = 0.5 * (bore[1:] + bore[:-1])
     area, diameter = section_area_mm2(middle, tangent, rule), hydraulic_diameter_mm(middle, tangent, rule)
-    laminar = friction_re(middle, tangent, rule)
+    laminar = friction_factor_re(middle, tangent, rule)
     forward, backward = np.zeros(len(middle)), np.zeros(len(middle))
     if ends.finish is not None:
         _cut_end(ends.finish, chord, area, diameter, laminar)
