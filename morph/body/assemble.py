@@ -12,7 +12,7 @@ from morph.body.cap import BORE_SLACK_MM, TAPER, find_merges, list_caps
 from morph.body.finish import Finish
 from morph.body.flow_path import connected_pieces, through_flow
 from morph.body.lead import Lead, lead_strand
-from morph.body.lead_search import LEAST_BEND_BORES
+from morph.body.lead_ground import LEAST_BEND_BORES
 from morph.body.neighbour import (
     Network,
     Strand,

@@ -13,6 +13,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from morph.body.face import ConeFace, CylinderFace, Face, PlaneFace
+from morph.body.skin_face import SkinFace
 from morph.core.arrays import Floats, frozen_floats
 from morph.core.errors import GeometryError, SettingError
 from morph.core.tolerance import COINCIDE_MM
@@ -47,12 +48,14 @@ def distance_to_hole_mm(hole: Hole, xyz_mm: Floats) -> Floats:
 
 def line_crossings(face: Face, start_mm: Floats, axis: Floats) -> list[float]:
     """Returns where the line from `start_mm (3,)` along unit `axis (3,)` meets `face`, in mm along it."""
+    face = getattr(face, "endless", face)
     if isinstance(face, PlaneFace):
         slope = float(face.normal @ axis)
         return [] if abs(slope) < 1e-12 else [float((face.origin_mm - start_mm) @ face.normal) / slope]
-    face = getattr(face, "endless", face)
     if isinstance(face, ConeFace):
         return face.cone.line_crossings_mm(start_mm, axis)
+    if isinstance(face, SkinFace):
+        return face.line_crossings_mm(start_mm, axis)
     if isinstance(face, CylinderFace):
         # (p + t a)^2 = r^2 in the xy plane: A t^2 + 2 B t + C = 0.
         a = float(axis[:2] @ axis[:2])

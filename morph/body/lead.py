@@ -16,7 +16,8 @@ from morph.body.end_room import Land
 from morph.body.exit import given_exit
 from morph.body.hole import Hole
 from morph.body.lead_check import Judged, Surroundings
-from morph.body.lead_search import Blocked, Ground, Lead, PortStart, find_lead
+from morph.body.lead_ground import Blocked, Ground, Lead, PortStart
+from morph.body.lead_search import find_lead
 from morph.body.neighbour import Strand, make_network, polyline_arc_mm
 from morph.body.room import Limits
 from morph.core.errors import GeometryError

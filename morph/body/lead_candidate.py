@@ -43,9 +43,6 @@ REACH_BENDS = (0.0, 0.5, 1.0, 2.0, 4.0)
 DEVELOPED_WIDER = (1.1, 1.6)
 """Arcs in the developed frame are this much wider, because wrapping adds curvature."""
 
-VIA_BENDS = (-4.5, -2.2, 0.0, 2.2, 4.5)
-"""Offsets of detour points from the port, in bend radii."""
-
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Start:
@@ -219,41 +216,6 @@ def _bent_once(
     straight_on &= paths.lengths() >= bend.whole_mm
     keep = paths.valid & (straight_on | (paths.pieces[:, -1] >= bend.straight_mm))
     return Bundle(paths.only(keep), carrier is not None, face, sites.leave[keep])
-
-
-def detours(start: Start, sites: Sites, bend: Bend, carrier: Carrier | None, most_sites: int = 40) -> list[Bundle]:
-    """Returns paths with a detour point between the first and the last bend, for the nearest sites.
-
-    Args:
-        start: the port.
-        sites: where to come out.
-        bend: radius and straight end.
-        carrier: for the developed frame, or None for the direct frame.
-        most_sites: only this many sites nearest to the port are tried.
-    """
-    near = np.argsort(np.linalg.norm(sites.xyz_mm - start.xyz_mm, axis=1), kind="stable")[:most_sites]
-    sites = Sites(sites.face, sites.xyz_mm[near], sites.leave[near])
-    frame = _in_frame(start, sites, carrier)
-    if frame is None or not len(near):
-        return []
-    origin, heading, exits, leave = frame
-    radius = (DEVELOPED_WIDER[0] if carrier is not None else 1.0) * bend.radius_mm
-    grid = np.stack(np.meshgrid(VIA_BENDS, VIA_BENDS, VIA_BENDS, indexing="ij"), axis=-1).reshape(-1, 3) * radius
-    grid = grid[np.linalg.norm(grid, axis=1) > 0.0]
-    lowest = bend.straight_mm + radius
-    span = np.maximum(((exits - origin) * leave).sum(axis=1), lowest)
-    found = []
-    for share in (0.0, 0.5):
-        last = exits - (lowest + share * (span - lowest))[:, None] * leave
-        via = np.repeat(origin + grid, len(exits), axis=0)
-        lasts, ends = np.tile(last, (len(grid), 1)), np.tile(exits, (len(grid), 1))
-        radii = np.full(len(via), radius)
-        first = start_corner(origin, heading, via, radii, np.zeros(len(via)))
-        vertices = np.stack([np.broadcast_to(origin, via.shape), first, via, lasts, ends], axis=1)
-        out = np.tile(sites.leave, (len(grid), 1))
-        bundle = Bundle(make_paths(vertices, radii), carrier is not None, sites.face, out)
-        found.append(bundle.only(bundle.paths.valid & bundle.runs_straight(bend)))
-    return found
 
 
 def _in_frame(start: Start, sites: Sites, carrier: Carrier | None) -> tuple[Floats, Floats, Floats, Floats] | None:

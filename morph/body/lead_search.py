@@ -1,34 +1,30 @@
 """The search for one lead: the shortest way from a port to a port face that keeps every wall.
 
-Candidate paths (lead_candidate.py) are sampled, those that come too near to a face, a hole or a
-channel are dropped on a coarse sampling, and the rest are judged finely in order of length; the
-first legal one is taken. When none is, the lead is thinned in steps, may start with a kink into the
-metal, and may make a detour.
+Curves with one or two bends (lead_candidate.py) are tried first: they are quick, and most ports are led out
+by one. They are sampled, those that come too near to a face, a hole or a channel are dropped on a coarse
+sampling, and the rest are judged finely in order of length; the first legal one is taken. When none is,
+ways are searched through the room grid (lead_route.py) and judged alike. A lead may be thinned in steps,
+and as a last resort starts with a kink into the metal.
 """
 
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
 from typing import TypeGuard
 
 import numpy as np
 
-from morph.body.blank import Blank
-from morph.body.end import straight_run_mm
 from morph.body.end_fit import EndFits
-from morph.body.end_room import Land
-from morph.body.exit import given_exit, given_leave, list_sites, port_faces
+from morph.body.exit import Sites, given_exit, given_leave, list_sites, port_faces
 from morph.body.finish import PLAIN, Finish
-from morph.body.lead_candidate import Bend, Bundle, detours, make_start, one_bend, sort_bundles, two_bends
+from morph.body.lead_candidate import Bend, Bundle, make_start, one_bend, sort_bundles, two_bends
 from morph.body.lead_check import COARSE_SLACK_MM, NECK, Judged, Surroundings, coarse_channels, coarse_faces, judge_path
+from morph.body.lead_ground import Blocked, Ground, Lead, PortStart, make_bend
 from morph.body.lead_path import least_bend_radius_mm
-from morph.body.neighbour import Strand, polyline_arc_mm
-from morph.body.room import Limits
+from morph.body.lead_route import searched
+from morph.body.neighbour import polyline_arc_mm
 from morph.core.arrays import Floats, unit_rows
 from morph.core.progress import Progress
-from morph.settings.job import PortSettings
-from morph.surface.carrier import Carrier
 
 CHUNK = 512
 """Paths sampled coarsely at first, shortest first; then three times as many each time."""
@@ -43,96 +39,20 @@ MOST_JUDGED = 120
 SEARCHES = (
     (False, False, 1.0),
     (False, False, 0.85),
+    (False, True, 1.0),
     (True, False, 1.0),
     (False, False, 0.7),
+    (False, True, 0.7),
     (True, False, 0.7),
-    (False, True, 1.0),
     (False, False, 0.0),
+    (False, True, 0.0),
     (True, False, 0.0),
     (True, True, 0.0),
 )
-"""Searches in order: start with a kink, make a detour, share of the port's bore (never below the least bore)."""
-
-LEAST_BEND_BORES = 1.5
-"""Least centreline bend radius of a lead in bores (common practice, no source)."""
-
-STRAIGHT_BORES = 0.5
-"""Least straight end square to the face, in bores, so that an end can be machined (common practice, no source)."""
-
-BEND_MARGIN = 1.105
-"""Bends are built this much wider than asked: a bend that clears its limit by less than a tenth is watched, and
-it is judged on samples up to 1 mm apart."""
+"""Searches in order: start with a kink, through the room grid, share of the port's bore (at least the least bore)."""
 
 KINKS_RAD = (np.radians(45.0), np.radians(90.0))
 """Starts turned from the channel's direction into the metal, when a smooth start has no way."""
-
-
-@dataclass(frozen=True, slots=True, eq=False)
-class PortStart:
-    """A port to be led out.
-
-    Args:
-        settings: the job's port. node: index of its node. xyz_mm: (3,).
-        heading: (3,) unit, the channel's direction carried on, or None for a port amid a channel.
-        into_metal: (3,) unit. bore_mm: bore of the channel there.
-        finishes: the faces where an end that is not plain can be made, each with its finish.
-    """
-
-    settings: PortSettings
-    node: int
-    xyz_mm: Floats
-    heading: Floats | None
-    into_metal: Floats
-    bore_mm: float
-    finishes: tuple[tuple[str, Finish], ...] = ()
-
-    def finish_on(self, face: str) -> Finish:
-        """Returns the finish of an exit on `face`."""
-        return dict(self.finishes).get(face, PLAIN)
-
-    def straight_mm(self, bore_mm: float) -> float:
-        """Returns the longest straight run that a finish needs behind the exit of a lead of `bore_mm`."""
-        return max((straight_run_mm(finish, bore_mm) for _, finish in self.finishes), default=0.0)
-
-
-@dataclass(frozen=True, slots=True, eq=False)
-class Lead:
-    """A lead that keeps its walls: the judged path, face and direction of its exit, and how it differs from the ideal.
-
-    `kink_rad`: turn at the port; 0 when it carries on smoothly.
-    """
-
-    port: PortStart
-    path: Judged
-    face: str
-    leave: Floats
-    length_mm: float
-    kink_rad: float
-
-
-@dataclass(frozen=True, slots=True, eq=False)
-class Ground:
-    """What all leads share: body, carrier, limits, the laid channels, the profile's bend radius in bores.
-
-    For one lead the blank also holds what other ends will cut, as holes, and `lands` the circles they take.
-    """
-
-    blank: Blank
-    carrier: Carrier
-    limits: Limits
-    strands: tuple[Strand, ...]
-    n_nodes: int
-    bend_bores: float
-    lands: tuple[Land, ...] = ()
-
-
-class Blocked(Exception):
-    """No legal way for one port: the best path tried and its face, and how its end fitted, for the message."""
-
-    def __init__(self, best: tuple[Judged, str] | None, fits: EndFits) -> None:
-        self.best = best
-        self.fits = fits
-        super().__init__()
 
 
 def find_lead(around: Surroundings, ground: Ground, port: PortStart, progress: Progress) -> Lead:
@@ -151,24 +71,25 @@ def find_lead(around: Surroundings, ground: Ground, port: PortStart, progress: P
     opening = Finish(PLAIN.detail, land_mm=port.bore_mm)
     fits = EndFits(around, ground.limits, ground.lands, port.settings.name, port.finishes, opening)
     tried: set[tuple[bool, bool, float]] = set()
-    for done, (kinked, detour, share) in enumerate(SEARCHES):
+    for done, (kinked, through_room, share) in enumerate(SEARCHES):
         progress.step(f"lead of {port.settings.name}", done, len(SEARCHES))
         bore = max(share * port.bore_mm, min(ground.limits.least_bore_mm, port.bore_mm))
         headings = _headings(port, kinked)
-        if not headings or (kinked, detour, bore) in tried:
+        if not headings or (kinked, through_room, bore) in tried:
             continue
-        tried.add((kinked, detour, bore))
-        bend = _bend(ground, port, bore)
-        bundles, kinks = [], []
-        for kink, heading in headings:
-            found = _candidates(ground, port, heading, bend, detour, fits)
-            bundles += found
-            kinks += [kink] * len(found)
-        lead, close = _first_legal(around, ground, port, bundles, kinks, bend)
-        if lead is not None:
-            return lead
-        if close is not None and (best is None or close[0].share > best[0].share):
-            best = close
+        tried.add((kinked, through_room, bore))
+        bend = make_bend(ground, port, bore)
+        places = _places(ground, port, bend, fits)
+        if through_room:
+            found = searched(around, ground, port, headings, places, bend, fits)
+        else:
+            found = iter([_candidates(ground, port, headings, places, bend, fits)])
+        for bundles, kinks in found:
+            lead, close = _first_legal(around, ground, port, bundles, kinks, bend)
+            if lead is not None:
+                return lead
+            if close is not None and (best is None or close[0].share > best[0].share):
+                best = close
     raise Blocked(best, fits)
 
 
@@ -183,35 +104,42 @@ def _headings(port: PortStart, kinked: bool) -> list[tuple[float, Floats]]:
     return [(float(turn), np.cos(turn) * ahead + np.sin(turn) * across) for turn in KINKS_RAD]
 
 
-def _bend(ground: Ground, port: PortStart, bore_mm: float) -> Bend:
-    radius = max(LEAST_BEND_BORES, ground.bend_bores) * bore_mm
-    whole = port.straight_mm(bore_mm)
-    return Bend(radius * BEND_MARGIN, max(STRAIGHT_BORES * bore_mm, whole), bore_mm, whole)
+def _places(ground: Ground, port: PortStart, bend: Bend, fits: EndFits) -> list[Sites]:
+    """Returns where the lead may come out: the exit that the job gives, else sites on every port face."""
+    if port.settings.exit_mm is not None:
+        given = given_exit(ground.blank, port.settings, ground.limits.least_bore_mm, ground.limits)
+        fits.require(given.face, given.xyz_mm[0], port.straight_mm(bend.bore_mm))
+        return [given]
+    leave = given_leave(port.settings)
+    every = [
+        list_sites(ground.blank, face, port.xyz_mm, bend.bore_mm, leave, ground.limits)
+        for face in port_faces(ground.blank)
+    ]
+    return [fits.only(sites) for sites in every]
 
 
 def _candidates(
-    ground: Ground, port: PortStart, heading: Floats, bend: Bend, detour: bool, fits: EndFits
-) -> list[Bundle]:
-    start = make_start(ground.carrier, port.xyz_mm, heading)
+    ground: Ground,
+    port: PortStart,
+    headings: Sequence[tuple[float, Floats]],
+    places: Sequence[Sites],
+    bend: Bend,
+    fits: EndFits,
+) -> tuple[list[Bundle], list[float]]:
+    """Returns curves with one or two bends whose end fits, each bundle with its kink at the port."""
     leave = given_leave(port.settings)
-    if port.settings.exit_mm is not None:
-        places = [given_exit(ground.blank, port.settings, ground.limits.least_bore_mm, ground.limits)]
-        fits.require(places[0].face, places[0].xyz_mm[0], port.straight_mm(bend.bore_mm))
-        found: list[Bundle] = []
-    else:
-        places = [
-            list_sites(ground.blank, face, port.xyz_mm, bend.bore_mm, leave, ground.limits)
-            for face in port_faces(ground.blank)
-        ]
-        places = [fits.only(sites) for sites in places]
-        frames = () if detour else (None, ground.carrier)
-        found = [
-            bundle for frame in frames for bundle in one_bend(start, ground.blank, bend, leave, ground.limits, frame)
-        ]
-    make = detours if detour else two_bends
-    for sites in places:
-        found += make(start, sites, bend, None) + make(start, sites, bend, ground.carrier)
-    return [bundle for bundle in (fits.only_fitting(one, ground.carrier) for one in found) if len(bundle.leave)]
+    bundles: list[Bundle] = []
+    kinks: list[float] = []
+    for kink, heading in headings:
+        start = make_start(ground.carrier, port.xyz_mm, heading)
+        for frame in (None, ground.carrier):
+            found = [bundle for sites in places for bundle in two_bends(start, sites, bend, frame)]
+            if port.settings.exit_mm is None:
+                found += one_bend(start, ground.blank, bend, leave, ground.limits, frame)
+            fitting = [fits.only_fitting(one, ground.carrier) for one in found]
+            bundles += [one for one in fitting if len(one.leave)]
+            kinks += [kink] * (len(bundles) - len(kinks))
+    return bundles, kinks
 
 
 def _first_legal(

@@ -15,6 +15,7 @@ from morph.settings.job import (
     CarrierSettings,
     ConeMap,
     ConeSettings,
+    FlangeSettings,
     HoleSettings,
     Metal,
     PortSettings,
@@ -50,6 +51,7 @@ class Scene:
     section: SectionSettings = field(default_factory=lambda: SectionSettings(bore_range_mm=(3.0, 12.0)))
     profile: Profile = None
     exits: dict = None
+    flange: FlangeSettings = None
 
     @property
     def made_profile(self) -> Profile:
@@ -67,7 +69,11 @@ class Scene:
     @property
     def blank(self) -> Blank:
         settings = BlankSettings(
-            self.shape or CarrierBlankSettings((15.0, 15.0)), self.part_faces, self.port_faces, self.stock_mm
+            self.shape or CarrierBlankSettings((15.0, 15.0)),
+            self.part_faces,
+            self.port_faces,
+            self.stock_mm,
+            self.flange,
         )
         return make_blank(settings, self.holes, self.carrier, self.graph.size_mm, self.service)
 

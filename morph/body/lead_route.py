@@ -1,0 +1,237 @@
+"""Leads by search: from the port through the room grid until a bend and a straight end come out of a port face.
+
+Where the lattice (lead_lattice.py) comes near enough, its way is finished by one bend onto a face whose
+exit is free, or by two onto a given exit. Such a way wanders by a step here and there; so the same exit is
+also reached with up to three of its points as corners between long straight lines. Shortest first, the
+caller judges them all.
+"""
+
+from __future__ import annotations
+
+import itertools
+from collections.abc import Iterator, Sequence
+from dataclasses import dataclass
+
+import numpy as np
+
+from morph.body.blank import AnyFace
+from morph.body.end_fit import EndFits
+from morph.body.exit import Sites, given_leave, keep_legal, project_along, project_to_face
+from morph.body.lead_candidate import Bend, Bundle, make_start, two_bends
+from morph.body.lead_check import Surroundings
+from morph.body.lead_field import RoomGrid, make_lead_field, make_room_grid
+from morph.body.lead_ground import Ground, PortStart
+from morph.body.lead_lattice import Lattice, least_way_mm
+from morph.body.lead_path import SHARPEST_TURN_RAD, Paths, make_paths, sample_paths, start_corner, turn_between_rad
+from morph.body.room import way_out
+from morph.core.arrays import Bools, Floats, Ints
+
+MOST_WAYS = 30
+"""Batches of the lattice from which ways are handed out before the search gives up."""
+
+WAYS_AT_ONCE = 6
+VIAS = 10
+"""Points of a way between which straight lines are tried."""
+
+TAIL_SAMPLES = 14
+TAIL_SLACK_MM = 0.3
+"""Spare forgiven along a tail on the grid; it is measured afterwards."""
+
+NEAR_BENDS = 8.0
+"""States nearer than this to a given exit, in bend radii, are tried to finish there."""
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class _Tails:
+    """Ways (n,) from states to a face: the state, the path from it, and the direction out (n, 3)."""
+
+    state: Ints
+    paths: Paths
+    leave: Floats
+
+    def only(self, keep: Bools | Ints) -> _Tails:
+        return _Tails(self.state[keep], self.paths.only(keep), self.leave[keep])
+
+
+def search_box_mm(around: Surroundings, port: PortStart, places: Sequence[Sites], pad_mm: float) -> Floats:
+    """Returns the box (2, 3) a lead is searched in: port, channels and sites, and `pad_mm` around them."""
+    points = np.concatenate([port.xyz_mm[None, :], around.network.xyz_mm, *(sites.xyz_mm for sites in places)])
+    return np.array([points.min(axis=0) - pad_mm, points.max(axis=0) + pad_mm])
+
+
+def searched(
+    around: Surroundings,
+    ground: Ground,
+    port: PortStart,
+    headings: Sequence[tuple[float, Floats]],
+    places: Sequence[Sites],
+    bend: Bend,
+    fits: EndFits,
+) -> Iterator[tuple[list[Bundle], list[float]]]:
+    """Yields paths found by search with the kink of each bundle at the port, likely shortest first.
+
+    Args:
+        around: what the lead must keep clear of.
+        ground: body, carrier and limits.
+        port: where it starts.
+        headings: kinks and unit headings (3,) to start along.
+        places: sites on the port faces, or the one given.
+        bend: bend radius, straight end and bore.
+        fits: where the port's end fits.
+    """
+    if not any(len(sites.xyz_mm) for sites in places):
+        return
+    grid = make_room_grid(make_lead_field(around, bend.bore_mm), search_box_mm(around, port, places, bend.radius_mm))
+    given = places[0] if port.settings.exit_mm is not None else None
+    to_go = least_way_mm(grid, _goal_nodes(grid, given))
+    start = np.array([heading for _, heading in headings])
+    lattice = Lattice(grid, to_go, port.xyz_mm, start, bend.radius_mm)
+    handed = 0
+    for batch in lattice.batches():
+        bundles: list[Bundle] = []
+        kinks: list[float] = []
+        for number, face in enumerate(grid.faces):
+            if given is not None and face.name != given.face.name:
+                continue
+            tails = _tails(ground, port, lattice, batch, face, given, bend)
+            if tails is None:
+                continue
+            tails = _shortest_clear(lattice, grid, number, tails)
+            for root, one in _whole_ways(ground, port, lattice, face, tails, bend):
+                way = fits.only_fitting(one, ground.carrier)
+                if len(way.leave):
+                    bundles.append(way)
+                    kinks.append(headings[root][0])
+        if bundles:
+            handed += 1
+            yield bundles, kinks
+        if handed >= MOST_WAYS:
+            return
+
+
+def _goal_nodes(grid: RoomGrid, given: Sites | None) -> Bools:
+    """Returns the nodes (i, j, k) where a lead may come out: beside the given exit, else beside any port face."""
+    goal = np.zeros(grid.base.shape, dtype=np.bool_)
+    if given is not None:
+        nodes = grid.node_mm(np.arange(goal.size)).reshape(*goal.shape, 3)
+        near: Bools = np.linalg.norm(nodes - given.xyz_mm[0], axis=-1) <= 1.5 * grid.step_mm
+        return near
+    for distance in grid.face_distance:
+        goal |= np.abs(distance) <= 0.75 * grid.step_mm
+    return goal
+
+
+def _root(lattice: Lattice, state: int) -> int:
+    while lattice.states.parent[state] >= 0:
+        state = int(lattice.states.parent[state])
+    return state
+
+
+def _tails(
+    ground: Ground, port: PortStart, lattice: Lattice, batch: Ints, face: AnyFace, given: Sites | None, bend: Bend
+) -> _Tails | None:
+    """Returns the ways from the states of `batch` onto `face` that are valid in shape, or None."""
+    place, heading = lattice.states.xyz_mm[batch], lattice.states.heading[batch]
+    found = (
+        _onto_given(place, heading, given, bend) if given is not None else _onto_face(port, place, heading, face, bend)
+    )
+    paths, leave, who = found
+    keep = paths.valid & (paths.pieces[:, -1] >= max(bend.straight_mm, bend.whole_mm) - 1e-9)
+    if given is None:
+        exits = np.flatnonzero(keep)
+        sites = keep_legal(
+            ground.blank, face, paths.vertices[exits, -1], bend.bore_mm, given_leave(port.settings), ground.limits
+        )
+        legal = {tuple(row) for row in sites.xyz_mm}
+        keep[exits] = [tuple(row) in legal for row in paths.vertices[exits, -1]]
+    if not keep.any():
+        return None
+    return _Tails(batch[who[keep]], paths.only(keep), leave[keep])
+
+
+def _onto_face(
+    port: PortStart, place: Floats, heading: Floats, face: AnyFace, bend: Bend
+) -> tuple[Paths, Floats, Ints]:
+    """Returns paths with one bend onto an endless `face`, their directions out (n, 3) and the states they begin at."""
+    given = given_leave(port.settings)
+    corner = place
+    for _ in range(3):
+        out = face.outward(corner) if given is None else np.broadcast_to(given, corner.shape)
+        turn = np.minimum(turn_between_rad(heading, out), SHARPEST_TURN_RAD)
+        corner = place + (bend.radius_mm * np.tan(0.5 * turn) + 1e-4)[:, None] * heading
+    who = np.flatnonzero(face.distance_mm(corner) > 0.0)
+    corner, out = corner[who], out[who]
+    exits = project_to_face(face, corner) if given is None else project_along(face, corner, given)
+    out = face.outward(exits) if given is None else out
+    paths = make_paths(np.stack([place[who], corner, exits], axis=1), np.full(len(who), bend.radius_mm))
+    return paths, out, who
+
+
+def _onto_given(place: Floats, heading: Floats, given: Sites | None, bend: Bend) -> tuple[Paths, Floats, Ints]:
+    """Returns paths with two bends onto the given exit."""
+    assert given is not None
+    exit_mm, leave = given.xyz_mm[0], given.leave[0]
+    near = np.flatnonzero(np.linalg.norm(place - exit_mm, axis=1) <= NEAR_BENDS * bend.radius_mm + bend.straight_mm)
+    vertices, who = [], []
+    for height in bend.straight_mm + np.array([1.0, 1.5, 2.5]) * bend.radius_mm:
+        last = np.broadcast_to(exit_mm - height * leave, (len(near), 3))
+        radii, nothing = np.full(len(near), bend.radius_mm), np.zeros(len(near))
+        first = start_corner(place[near], heading[near], last, radii, nothing)
+        ends = np.broadcast_to(exit_mm, last.shape)
+        vertices.append(np.stack([place[near], first, last, ends], axis=1))
+        who.append(near)
+    whole = np.concatenate(vertices)
+    paths = make_paths(whole, np.full(len(whole), bend.radius_mm))
+    return paths, np.broadcast_to(leave, (len(whole), 3)).copy(), np.concatenate(who)
+
+
+def _shortest_clear(lattice: Lattice, grid: RoomGrid, number: int, tails: _Tails) -> _Tails:
+    """Returns the few shortest of `tails` onto port face `number` that keep clear on the grid."""
+    points, _ = sample_paths(tails.paths, TAIL_SAMPLES)
+    opening = way_out(grid.faces[number], points)
+    spare = np.where(opening, grid.look_up(grid.without(number), points), grid.look_up(grid.whole(), points))
+    clear = np.flatnonzero(spare.min(axis=1) >= -TAIL_SLACK_MM)
+    length = lattice.states.way_mm[tails.state[clear]] + tails.paths.lengths()[clear]
+    return tails.only(clear[np.argsort(np.round(length, 6), kind="stable")[:WAYS_AT_ONCE]])
+
+
+def _whole_ways(
+    ground: Ground, port: PortStart, lattice: Lattice, face: AnyFace, tails: _Tails, bend: Bend
+) -> Iterator[tuple[int, Bundle]]:
+    """Yields each way from the port through the lattice and its tail, and shorter ways to the same exit.
+
+    Before each stands the number of the heading it starts along.
+    """
+    for k, state in enumerate(tails.state):
+        corners = lattice.states.corners(int(state))
+        vertices = np.concatenate([port.xyz_mm[None, :], corners, tails.paths.vertices[k, 1:]])
+        paths = make_paths(vertices[None], np.array([bend.radius_mm]))
+        leave = tails.leave[k : k + 1]
+        if not paths.valid[0]:
+            continue
+        root = _root(lattice, int(state))
+        yield root, Bundle(paths, False, face, leave)
+        site = Sites(face, vertices[-1:], leave)
+        for one in _straightened(ground, port, lattice.states.heading[root], paths, site, bend):
+            yield root, one
+
+
+def _straightened(
+    ground: Ground, port: PortStart, heading: Floats, paths: Paths, site: Sites, bend: Bend
+) -> Iterator[Bundle]:
+    """Yields paths to the exit of one way with up to three of its points as corners."""
+    start = make_start(ground.carrier, port.xyz_mm, heading)
+    yield from two_bends(start, site, bend, None)
+    vias = sample_paths(paths, VIAS + 2)[0][0, 1:-1]
+    exit_mm, leave = site.xyz_mm[0], site.leave[0]
+    for count in (1, 2, 3):
+        chosen = np.array(list(itertools.combinations(range(VIAS), count)))
+        between = vias[chosen]
+        n = len(chosen)
+        radii = np.full(n, bend.radius_mm)
+        first = start_corner(port.xyz_mm, heading, between[:, 0], radii, np.zeros(n))
+        last = start_corner(exit_mm, -leave, between[:, -1], radii, np.full(n, bend.straight_mm))
+        ends = [np.broadcast_to(point, (n, 1, 3)) for point in (port.xyz_mm, exit_mm)]
+        vertices = np.concatenate([ends[0], first[:, None], between, last[:, None], ends[1]], axis=1)
+        bundle = Bundle(make_paths(vertices, radii), False, site.face, np.broadcast_to(leave, (n, 3)).copy())
+        yield bundle.only(bundle.paths.valid & bundle.runs_straight(bend))
