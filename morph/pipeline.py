@@ -144,8 +144,8 @@ def plan_channels(job: Job, clock: _Clock) -> Planned:
         carrier = make_carrier(job.carrier, graph.size_mm, job.layout.seen_from, depth_mm, job.layout.seam)
         wrapped = wrap_graph(graph, carrier, depth_mm)
     with clock.stage("body"):
-        blank = make_blank(job.blank, job.holes, carrier, graph.size_mm, job.service)
         up = job.printing.build_direction
+        blank = make_blank(job.blank, job.holes, carrier, graph.size_mm, job.service, up, progress)
         plan = make_plan(wrapped, blank, job.ports, job.section, job.service, profile, progress, up)
     return Planned(density, graph, wrapped, blank, plan)
 

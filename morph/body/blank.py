@@ -1,32 +1,39 @@
 """The blank: the body before the channels are cut, as a list of named faces around one metal region.
 
 A blank is an outer primitive (cylinder or cone about z, or box) cut to the metal side of the carrier, with
-an optional inner bore. The faces carry roles and machining stock; solid/cut.py turns the record
-into a mesh, finished or as printed.
+an optional inner bore; or a mesh as it lies (mesh_blank.py). The faces carry roles and machining
+stock; solid/cut.py turns the record into a mesh, finished or as printed.
 """
 
 from __future__ import annotations
 
 import difflib
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
+from typing import TYPE_CHECKING
 
 import numpy as np
 
 from morph.body.face import BlankFace, ConeFace, CylinderFace, FaceRole, PlaneFace
 from morph.body.flange import FlangedFace, with_flange
 from morph.body.hole import Hole, make_hole
-from morph.body.shape import Round, Shape, make_shape, widest_mm
+from morph.body.shape import Round, Shape, face_of, make_shape, widest_mm
+from morph.body.skin import Skin
+from morph.body.skin_face import SkinFace
 from morph.core.arrays import Floats, frozen_floats
 from morph.core.errors import GeometryError, SettingError
+from morph.core.progress import SILENT, Progress
 from morph.core.tolerance import COINCIDE_MM
 from morph.core.verdict import Notice
 from morph.geometry.cone import Cone
-from morph.settings.job import BlankSettings, CylinderBlankSettings, HoleSettings, ServiceSettings
+from morph.settings.job import BlankSettings, CylinderBlankSettings, HoleSettings, MeshBlankSettings, ServiceSettings
 from morph.surface.make import RoundCarrier
 
-AnyFace = BlankFace | FlangedFace
-"""Every kind of face a blank has, with a flange or without."""
+if TYPE_CHECKING:
+    from morph.body.mesh_blank import MeshBody
+
+AnyFace = BlankFace | FlangedFace | SkinFace
+"""Every kind of face a blank has, with a flange or without, drawn or given as a mesh."""
 
 __all__ = ["Blank", "Hole", "make_blank"]
 
@@ -46,6 +53,7 @@ class Blank:
             `outer_radius_mm` (metal toward the axis) or by `inner_radius_mm` (away from it).
         holes: kept clear by channels and leads. Holes are made later and are not cut.
         notices: what the job may not expect of its blank.
+        skin: the finished body when it is given as a mesh, else None.
     """
 
     faces: tuple[AnyFace, ...]
@@ -55,6 +63,7 @@ class Blank:
     box_mm: Floats | None
     holes: tuple[Hole, ...] = ()
     notices: tuple[Notice, ...] = ()
+    skin: Skin | None = None
 
     def __post_init__(self) -> None:
         if self.box_mm is not None:
@@ -74,6 +83,8 @@ def make_blank(
     carrier: RoundCarrier,
     size_mm: tuple[float, float],
     service: ServiceSettings,
+    build_direction: tuple[float, float, float] = (0.0, 0.0, 1.0),
+    progress: Progress = SILENT,
 ) -> Blank:
     """Returns the blank of a job: its primitive on the metal side of the carrier, faces named and holes clipped.
 
@@ -83,13 +94,23 @@ def make_blank(
         carrier: the finished face, with the depth of the sheet.
         size_mm: width and height of the sheet.
         service: the wall of a hole that names none.
+        build_direction: from the plate into the part; foot and top of a mesh are its ends along it.
+        progress: told by the crossing test of a mesh.
 
     Raises:
+        InputError: of a mesh (read/mesh_file.py, read/mesh_body.py).
         SettingError: `blank-not-a-body`, `blank-too-large`, `blank-thickness-missing`,
             `blank-face-unknown`, `blank-face-twice`, `blank-no-port-face`, `blank-stock-refused`,
-            `flange-misfit`, `hole-not-a-hole`.
-        GeometryError: `blank-inside-carrier`, `blank-past-apex`, `blank-misses-carrier`, `hole-misses-body`.
+            `flange-misfit`, `hole-not-a-hole`, `mesh-side-face`, `mesh-unit-conflict`.
+        GeometryError: `blank-inside-carrier`, `blank-past-apex`, `blank-misses-carrier`, `hole-misses-body`,
+            `part-face-mismatch`, `part-face-other-side`, `mesh-face-not-flat`.
     """
+    if isinstance(settings.shape, MeshBlankSettings):
+        from morph.body.mesh_blank import make_mesh_body
+
+        endless = _round_face(face_of(carrier))
+        body = make_mesh_body(settings.shape, carrier, endless, size_mm, build_direction, progress)
+        return _mesh_blank(body, settings, holes, carrier, size_mm, service)
     shape = make_shape(settings.shape, carrier)
     named: list[AnyFace] = [*_name_faces(shape)]
     if settings.flange is not None:
@@ -99,6 +120,25 @@ def make_blank(
     clipped = tuple(make_hole(i + 1, hole, faces, service) for i, hole in enumerate(holes))
     outer, inner = shape.radius_mm(metal_inside=True), shape.radius_mm(metal_inside=False)
     return Blank(faces, shape.z_mm, outer, inner, shape.box_mm, clipped, _cut_notices(settings, shape))
+
+
+def _mesh_blank(
+    body: MeshBody,
+    settings: BlankSettings,
+    holes: Sequence[HoleSettings],
+    carrier: RoundCarrier,
+    size_mm: tuple[float, float],
+    service: ServiceSettings,
+) -> Blank:
+    """Returns the blank of a mesh: roles on its faces, the sheet at depth inside it, holes clipped."""
+    from morph.body.mesh_blank import require_mesh_faces
+
+    require_mesh_faces(body, settings)
+    faces = _assign_roles(body.faces, settings, body.synonyms)
+    _require_sheet_inside(faces, carrier, size_mm, on_face=False)
+    clipped = tuple(make_hole(i + 1, hole, faces, service) for i, hole in enumerate(holes))
+    z = body.skin.mesh.vertices_mm[:, 2]
+    return Blank(faces, (float(z.min()), float(z.max())), None, None, None, clipped, body.notices, body.skin)
 
 
 def _cut_notices(settings: BlankSettings, shape: Shape) -> tuple[Notice, ...]:
@@ -139,8 +179,8 @@ def _round_face(item: Round) -> CylinderFace | ConeFace:
     return CylinderFace(item.name, FaceRole.OUTER, 0.0, item.surface, item.metal_inside)
 
 
-def _face_name(name: str, known: Sequence[str], where: str) -> str:
-    name = SYNONYMS.get(name, name)
+def _face_name(name: str, known: Sequence[str], where: str, synonyms: Mapping[str, str]) -> str:
+    name = synonyms.get(name, name)
     if name not in known:
         near = difflib.get_close_matches(name, known, n=1)
         raise SettingError(
@@ -153,11 +193,13 @@ def _face_name(name: str, known: Sequence[str], where: str) -> str:
     return name
 
 
-def _assign_roles(faces: Sequence[AnyFace], settings: BlankSettings) -> tuple[AnyFace, ...]:
+def _assign_roles(
+    faces: Sequence[AnyFace], settings: BlankSettings, synonyms: Mapping[str, str] = SYNONYMS
+) -> tuple[AnyFace, ...]:
     known = [face.name for face in faces]
-    part = [_face_name(name, known, "[blank] part_faces") for name in settings.part_faces]
-    port = [_face_name(name, known, "[blank] port_faces") for name in settings.port_faces]
-    stock = {_face_name(name, known, "[blank] stock_mm"): value for name, value in settings.stock_mm}
+    part = [_face_name(name, known, "[blank] part_faces", synonyms) for name in settings.part_faces]
+    port = [_face_name(name, known, "[blank] port_faces", synonyms) for name in settings.port_faces]
+    stock = {_face_name(name, known, "[blank] stock_mm", synonyms): value for name, value in settings.stock_mm}
     both = sorted(set(part) & set(port))
     if both:
         raise SettingError(
@@ -198,13 +240,18 @@ def _require_stock(stock: dict[str, float], part: Sequence[str]) -> None:
             )
 
 
-def _require_sheet_inside(faces: Sequence[AnyFace], carrier: RoundCarrier, size_mm: tuple[float, float]) -> None:
-    """Raises `blank-misses-carrier` unless the whole sheet, on the face and at depth, lies in the body."""
+def _require_sheet_inside(
+    faces: Sequence[AnyFace], carrier: RoundCarrier, size_mm: tuple[float, float], *, on_face: bool = True
+) -> None:
+    """Raises `blank-misses-carrier` unless the whole sheet, at depth and `on_face`, lies in the body."""
     x, y = np.meshgrid(np.linspace(0.0, size_mm[0], 97), np.linspace(0.0, size_mm[1], 5))
     sheet = np.column_stack([x.ravel(), y.ravel()])
-    points = np.concatenate([carrier.point_mm(sheet, carrier.depth_mm), carrier.point_mm(sheet, 0.0)])
+    points = carrier.point_mm(sheet, carrier.depth_mm)
+    if on_face:
+        points = np.concatenate([points, carrier.point_mm(sheet, 0.0)])
     worst = min(
         ((float(d.min()), int(d.argmin()), face.name) for face in faces[1:] for d in (face.distance_mm(points),)),
+        default=(0.0, 0, ""),
     )
     if worst[0] < -COINCIDE_MM:
         place = sheet[worst[1] % len(sheet)]

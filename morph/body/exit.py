@@ -1,7 +1,7 @@
 """Where a lead may come out: places on the port faces whose whole opening keeps its walls.
 
 Sites lie on a polar grid about the axis (foot, top, round faces) or a square grid (sides of a box),
-aligned with the port so that the straight way down is always among them.
+aligned with the port so that the straight way down is always among them. A flat end of a mesh brings its own grid.
 """
 
 from __future__ import annotations
@@ -15,6 +15,7 @@ from morph.body.face import ConeFace, CylinderFace, FaceRole, PlaneFace
 from morph.body.flange import FlangedFace
 from morph.body.hole import line_crossings
 from morph.body.room import Limits, measure_room
+from morph.body.skin_face import FlatFace, SkinFace
 from morph.core.arrays import Floats, unit_rows
 from morph.core.errors import GeometryError, SettingError
 from morph.settings.job import PortSettings
@@ -63,7 +64,11 @@ def list_sites(
         limits: walls and bands.
     """
     step = min(max(bore_mm, 2.5), 5.0)
-    if isinstance(face, CylinderFace):
+    if isinstance(face, FlatFace):
+        places = face.grid_mm(port_mm, step)
+    elif isinstance(face, SkinFace):
+        raise TypeError(f"ports come out of flat ends of a mesh, not of '{face.name}'")
+    elif isinstance(face, CylinderFace):
         places = _round_grid(blank, face, port_mm, step)
     elif isinstance(face, ConeFace):
         places = _cone_grid(blank, face, port_mm, step)
@@ -180,8 +185,8 @@ def nearest_on_port_face(blank: Blank, xyz_mm: Floats) -> tuple[Floats, str]:
     """
     best: tuple[float, Floats, str] | None = None
     for face in port_faces(blank):
-        point = xyz_mm[None, :].copy()
-        for _ in range(60):
+        point = face.nearest_mm(xyz_mm[None, :]) if isinstance(face, FlatFace) else xyz_mm[None, :].copy()
+        for _ in range(0 if isinstance(face, FlatFace) else 60):
             point = project_to_face(face, point)
             for other in blank.faces:
                 if other is not face and float(other.distance_mm(point)[0]) < 0.0:

@@ -79,7 +79,8 @@ def _offset(surface: float | Cone, outward_mm: float) -> float | Cone:
     return surface.offset(outward_mm) if isinstance(surface, Cone) else surface + outward_mm
 
 
-def _face_of(carrier: RoundCarrier) -> Round:
+def face_of(carrier: RoundCarrier) -> Round:
+    """Returns the surface of a carrier as the face it is of the body."""
     surface = carrier.face if isinstance(carrier, ConeCarrier) else carrier.radius_mm
     return Round("carrier", surface, carrier.metal is Metal.TOWARD_AXIS)
 
@@ -132,7 +133,7 @@ def _carrier_shape(settings: CarrierBlankSettings, carrier: RoundCarrier) -> Sha
         raise _not_a_body("[blank] margin_mm", "two margins not below 0 mm", f"{low} mm and {high} mm")
     lowest, highest = carrier.sheet_z_mm()
     z_mm = (lowest - low, highest + high)
-    face, thickness = _face_of(carrier), settings.thickness_mm
+    face, thickness = face_of(carrier), settings.thickness_mm
     if thickness is None:
         if face.metal_inside:
             return Shape(z_mm, None, (face,))
@@ -159,7 +160,7 @@ def _cylinder_shape(settings: CylinderBlankSettings, carrier: RoundCarrier) -> S
     if not (settings.radius_mm > 0.0 and settings.z_mm[0] < settings.z_mm[1]):
         found = f"radius {settings.radius_mm} mm, z {settings.z_mm[0]} mm to {settings.z_mm[1]} mm"
         raise _not_a_body("[blank] kind cylinder", "radius_mm above 0 mm and z_mm from low to high", found)
-    face = _face_of(carrier)
+    face = face_of(carrier)
     widest = widest_mm(face.surface, settings.z_mm)
     # a core's cylinder may cut the wide end of its cone, but not all of it
     needed = _narrowest_mm(face.surface, settings.z_mm) if face.metal_inside else widest
@@ -183,7 +184,7 @@ def _box_shape(settings: BoxBlankSettings, carrier: RoundCarrier) -> Shape:
     if not (box[0] < box[1]).all():
         found = f"min_mm {list(settings.min_mm)} and max_mm {list(settings.max_mm)}"
         raise _not_a_body("[blank] kind box", "min_mm below max_mm in x, y and z", found)
-    face, z_mm = _face_of(carrier), (float(box[0, 2]), float(box[1, 2]))
+    face, z_mm = face_of(carrier), (float(box[0, 2]), float(box[1, 2]))
     away = float(np.linalg.norm(np.maximum(0.0, np.maximum(box[0, :2], -box[1, :2]))))
     if face.metal_inside and away >= widest_mm(face.surface, z_mm) - COINCIDE_MM:
         raise GeometryError(

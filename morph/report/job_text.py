@@ -16,6 +16,7 @@ from morph.settings.job import (
     CylinderBlankSettings,
     FaceSealEnd,
     Job,
+    MeshBlankSettings,
     PortSettings,
     ThreadEnd,
 )
@@ -70,6 +71,8 @@ def _blank(job: Job) -> Rows:
         kind = "cylinder"
     if isinstance(shape, BoxBlankSettings):
         kind = "box"
+    if isinstance(shape, MeshBlankSettings):
+        kind = "mesh"
     return [("kind", kind), *_rows(shape), *_rows(job.blank, ("shape", "stock_mm"))]
 
 

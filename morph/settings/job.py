@@ -10,6 +10,7 @@ from dataclasses import dataclass, field
 from enum import StrEnum
 from pathlib import Path
 
+from morph.read.mesh_file import LengthUnit
 from morph.settings.profile import Profile
 
 
@@ -279,6 +280,14 @@ class BoxBlankSettings:
 
 
 @dataclass(frozen=True, slots=True)
+class MeshBlankSettings:
+    """A body in a mesh file, as it lies; `unit` is what it is drawn in, None when the job does not say."""
+
+    file: Path
+    unit: LengthUnit | None = None
+
+
+@dataclass(frozen=True, slots=True)
 class FlangeSettings:
     """A disc about z at the foot, `height_mm` high from the foot, wider than the body."""
 
@@ -290,7 +299,9 @@ class FlangeSettings:
 class BlankSettings:
     """The [blank] table: its shape, which faces touch the part, where ports may come out, stock per face, flange."""
 
-    shape: CarrierBlankSettings | CylinderBlankSettings | BoxBlankSettings = field(default_factory=CarrierBlankSettings)
+    shape: CarrierBlankSettings | CylinderBlankSettings | BoxBlankSettings | MeshBlankSettings = field(
+        default_factory=CarrierBlankSettings
+    )
     part_faces: tuple[str, ...] = ("carrier",)
     port_faces: tuple[str, ...] = ("foot",)
     stock_mm: tuple[tuple[str, float], ...] = ()

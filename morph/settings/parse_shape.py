@@ -2,8 +2,10 @@
 
 from __future__ import annotations
 
+from pathlib import Path
 from typing import Any
 
+from morph.read.mesh_file import LengthUnit
 from morph.settings.job import (
     BlankSettings,
     BoxBlankSettings,
@@ -11,17 +13,21 @@ from morph.settings.job import (
     CylinderBlankSettings,
     FlangeSettings,
     HoleSettings,
+    MeshBlankSettings,
     SectionSettings,
     SectionShape,
 )
 from morph.settings.parse_carrier import LARGEST_RADIUS_MM
-from morph.settings.parse_layout import FARTHEST_MM, direction
+from morph.settings.parse_layout import FARTHEST_MM, LONGEST_NAME_BYTES, direction
 from morph.settings.table import Table
 
 LARGEST_BORE_MM = 100.0
 LARGEST_WALL_MM = 500.0
 MOST_HOLES = 500
-FACES = ("carrier", "foot", "top", "back", "outer", "inner", "flange", "rim", "-x", "+x", "-y", "+y", "-z", "+z")
+FACES = (
+    *("carrier", "foot", "top", "back", "outer", "inner", "flange", "rim", "side"),
+    *("-x", "+x", "-y", "+y", "-z", "+z"),
+)
 """Every name a face of some blank can have; which of them this job's blank has is settled when it is made."""
 
 _SECTION_KEYS = ("shape", "bore_scale", "bore_range_mm", "blend_mm")
@@ -29,8 +35,12 @@ _BLANK_OF_KIND = {
     "carrier": ("margin_mm", "thickness_mm"),
     "cylinder": ("radius_mm", "z_mm"),
     "box": ("min_mm", "max_mm"),
+    "mesh": ("file", "unit"),
 }
-_BLANK_LATER = {"file": "A blank from a file"}
+_NO_FLANGE = {
+    "box": "A flange is a disc about a round core; make the box itself larger at its foot.",
+    "mesh": "Draw the flange into the mesh itself: the blank is taken as it lies.",
+}
 
 
 def parse_section(values: Any, file: str) -> SectionSettings:
@@ -51,22 +61,25 @@ def parse_section(values: Any, file: str) -> SectionSettings:
     )
 
 
-def parse_blank(values: Any, file: str) -> BlankSettings:
+def parse_blank(values: Any, file: str, folder: Path) -> BlankSettings:
     """Returns the [blank] settings.
+
+    Args:
+        values: the parsed table.
+        file: base name of the job file, for messages.
+        folder: of the job file; a mesh file is relative to it.
 
     Raises:
         SettingError: a setting is unknown, wrong, belongs to another kind of blank, or is not available yet.
     """
     own = [key for keys in _BLANK_OF_KIND.values() for key in keys]
-    table = Table(
-        values, file, "[blank]", ["kind", "part_faces", "port_faces", "stock_mm", "flange", *own], _BLANK_LATER
-    )
+    table = Table(values, file, "[blank]", ["kind", "part_faces", "port_faces", "stock_mm", "flange", *own])
     kind = "carrier"
     if table.has("kind"):
-        kind = table.word("kind", list(_BLANK_OF_KIND), {"mesh": "A blank from a mesh file"})
+        kind = table.word("kind", list(_BLANK_OF_KIND))
     table.not_used(set(own) - set(_BLANK_OF_KIND[kind]), f'when kind is "{kind}"')
-    if kind == "box":
-        table.not_used(["flange"], 'when kind is "box"')
+    if kind in _NO_FLANGE and table.has("flange"):
+        table.refuse("setting-conflict", "flange", expected=f'no flange when kind is "{kind}"', do=_NO_FLANGE[kind])
     part_faces = table.names("part_faces", FACES) if table.has("part_faces") else ("carrier",)
     port_faces = table.names("port_faces", FACES) if table.has("port_faces") else ("foot",)
     if "carrier" not in part_faces:
@@ -85,7 +98,20 @@ def parse_blank(values: Any, file: str) -> BlankSettings:
             found=", ".join(shared),
             do="A port in a part face would leak into the part; remove the face from one of the two lists.",
         )
-    return BlankSettings(_blank_shape(table, kind), part_faces, port_faces, _stock(table, file), _flange(table, file))
+    shape = _mesh_shape(table, folder) if kind == "mesh" else _blank_shape(table, kind)
+    return BlankSettings(shape, part_faces, port_faces, _stock(table, file), _flange(table, file))
+
+
+def _mesh_shape(table: Table, folder: Path) -> MeshBlankSettings:
+    name = table.text("file")
+    if any(len(part.encode("utf-8", "replace")) > LONGEST_NAME_BYTES for part in Path(name).parts):
+        table.refuse(
+            "setting-text",
+            "file",
+            expected=f"a file name of at most {LONGEST_NAME_BYTES} bytes",
+            do="Give the file a shorter name.",
+        )
+    return MeshBlankSettings(folder / name, table.choice("unit", LengthUnit) if table.has("unit") else None)
 
 
 def _blank_shape(table: Table, kind: str) -> CarrierBlankSettings | CylinderBlankSettings | BoxBlankSettings:

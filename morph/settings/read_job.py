@@ -70,7 +70,7 @@ def parse_job(content: bytes, path: Path) -> Job:
         printing=_printing(top.raw("print") if top.has("print") else {}, file, folder),
         section=parse_section(top.raw("section") if top.has("section") else {}, file),
         service=_service(top.raw("service") if top.has("service") else {}, file),
-        blank=parse_blank(top.raw("blank") if top.has("blank") else {}, file),
+        blank=parse_blank(top.raw("blank") if top.has("blank") else {}, file, folder),
         holes=parse_holes(top.tables("hole", MOST_HOLES), file),
         quality=_quality(top.raw("quality") if top.has("quality") else {}, file),
         accepts=parse_accepts(top.tables("accept", MOST_ACCEPTS), file),

@@ -2,7 +2,7 @@
 
 Round faces become prisms (cones pyramids) with so many sides that the sagitta stays below FACET_MM; the
 corners are moved out so that the prism has the cylinder's cross-section area. The radius is thus kept on
-average: volumes are exact, and no wall is off by more than two thirds of FACET_MM.
+average: volumes are exact, and no wall is off by more than two thirds of FACET_MM. A mesh stays as it is.
 """
 
 from __future__ import annotations
@@ -18,7 +18,8 @@ from morph.body.flange import FLANGE_FACES, FlangedFace
 from morph.core.arrays import Floats
 from morph.core.tolerance import COINCIDE_MM, FACET_MM
 from morph.geometry.mesh import Mesh
-from morph.solid.body import arrays_of, require_valid
+from morph.solid.body import arrays_of, body_from, require_valid
+from morph.solid.stock import with_stock
 from morph.solid.tidy import make_file_mesh
 
 FEWEST_SIDES = 32
@@ -48,6 +49,9 @@ def blank_body(blank: Blank, *, printed: bool) -> Any:
     """
     import manifold3d
 
+    if blank.skin is not None:
+        mesh = with_stock(blank) if printed else blank.skin.mesh
+        return body_from(mesh.vertices_mm, mesh.triangles, "the blank")[0]
     low, high = _extent(blank, printed)
     box = manifold3d.Manifold.cube((high - low).tolist()).translate(low.tolist())
     for face in blank.faces:

@@ -302,8 +302,6 @@ LATER = [
     ('kind = "cylinder"', 'kind = "revolved"\nprofile_mm = [[1, 2], [3, 4]]'),
     ('kind = "cylinder"', 'kind = "freeform"\nfile = "core.stl"'),
     (LAYOUT, LAYOUT + '\nmirror_at = "left"'),
-    ("[carrier]", '[blank]\nkind = "mesh"\n[carrier]'),
-    ("[carrier]", '[blank]\nfile = "blank.stl"\n[carrier]'),
     ("[carrier]", '[coolant]\nfluid = "water"\n[carrier]'),
     ("[carrier]", '[moulding]\npolymer = "PP"\n[carrier]'),
 ]

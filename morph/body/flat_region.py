@@ -1,0 +1,112 @@
+"""Flat regions at the ends of a mesh: where the body would stand on a plate pressed against it.
+
+The plane comes from the convex hull, so the whole body lies behind it; the region is the skin in that plane.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from morph.core.arrays import Bools, Floats, Ints
+from morph.geometry.mesh import Mesh, triangle_normals
+
+WITHIN_RAD = np.radians(1.0)
+"""A face belongs to a direction when its normal is this near to it."""
+
+FLAT_MM = 0.005
+"""Skin this near to the plane is flat."""
+
+LEAST_WIDTH_MM = 3.0
+"""A region that holds no circle of this diameter is a facet or an edge, not a face where a channel comes out."""
+
+MOST_PLANES = 64
+RIM_STEP_MM = 0.25
+MOST_RIM_POINTS = 100_000
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class FlatRegion:
+    """A flat region: its triangles (k,), a point in its plane (3,), the unit normal (3,), area and width in mm.
+
+    `width_mm` is the diameter of the largest circle found in it.
+    """
+
+    triangle: Ints
+    origin_mm: Floats
+    normal: Floats
+    area_mm2: float
+    width_mm: float
+
+
+def hull_planes(mesh: Mesh) -> Floats:
+    """Returns the planes (k, 5) of the convex hull: unit normal outwards, offset (n x = offset), and area in mm2."""
+    from scipy.spatial import ConvexHull
+
+    hull = ConvexHull(mesh.vertices_mm)
+    corner = mesh.vertices_mm[hull.simplices]
+    area = 0.5 * np.linalg.norm(np.cross(corner[:, 1] - corner[:, 0], corner[:, 2] - corner[:, 0]), axis=1)
+    plane, inverse = np.unique(np.round(hull.equations, 9), axis=0, return_inverse=True)
+    total = np.bincount(inverse.reshape(-1), area)
+    return np.column_stack([plane[:, :3], -plane[:, 3], total])
+
+
+def find_flat_region(mesh: Mesh, planes: Floats, direction: Floats, free: Bools) -> FlatRegion | None:
+    """Returns the widest flat region at the end of `mesh` in a direction, or None when the skin there is nowhere flat.
+
+    Args:
+        mesh: closed, facing outwards.
+        planes: (k, 5) of `hull_planes`.
+        direction: (3,) unit.
+        free: (m,) triangles that may belong to it.
+    """
+    along = planes[planes[:, :3] @ direction >= np.cos(WITHIN_RAD)]
+    along = along[np.argsort(-along[:, 4], kind="stable")][:MOST_PLANES]
+    normals, area = triangle_normals(mesh)
+    needle = free & (least_heights_mm(mesh, area) < FLAT_MM)
+    best: FlatRegion | None = None
+    for plane in along:
+        normal = plane[:3] / np.linalg.norm(plane[:3])
+        offset = float((mesh.vertices_mm @ normal).max())
+        near = mesh.vertices_mm @ normal >= offset - FLAT_MM
+        turned = free & (normals @ normal >= np.cos(WITHIN_RAD))
+        rows = np.flatnonzero(near[mesh.triangles].all(axis=1) & (turned | needle))
+        total = float(area[rows].sum())
+        if total <= 0.0 or (best is not None and total <= best.area_mm2):
+            continue
+        centre = np.average(mesh.vertices_mm[mesh.triangles[rows]].mean(axis=1), axis=0, weights=area[rows])
+        origin = centre + (offset - float(centre @ normal)) * normal
+        best = FlatRegion(rows, origin, normal, total, region_width_mm(mesh, rows))
+    return best
+
+
+def least_heights_mm(mesh: Mesh, area_mm2: Floats) -> Floats:
+    """Returns the height (m,) of each triangle over its longest side; the normal of a needle is rounding."""
+    corner = mesh.vertices_mm[mesh.triangles]
+    longest = np.linalg.norm(corner - np.roll(corner, 1, axis=1), axis=2).max(axis=1)
+    return np.asarray(2.0 * area_mm2 / np.where(longest > 0.0, longest, 1.0), dtype=np.float64)
+
+
+def region_width_mm(mesh: Mesh, rows: Ints) -> float:
+    """Returns the diameter of the largest circle found inside a flat region of triangles `rows (k,)`.
+
+    Tried at the middles of its triangles and of their sides: never too large, exact for rectangles.
+    """
+    from scipy.spatial import cKDTree
+
+    triangles = mesh.triangles[rows]
+    corner = mesh.vertices_mm[triangles]
+    middles = [corner.mean(axis=1), *(0.5 * (corner[:, k] + corner[:, (k + 1) % 3]) for k in range(3))]
+    start, end = triangles.T.reshape(-1), np.roll(triangles, -1, axis=1).T.reshape(-1)
+    n = len(mesh.vertices_mm)
+    rim = ~np.isin(start * n + end, end * n + start)
+    one, two = mesh.vertices_mm[start[rim]], mesh.vertices_mm[end[rim]]
+    length = np.linalg.norm(two - one, axis=1)
+    step = max(RIM_STEP_MM, float(length.sum()) / MOST_RIM_POINTS)
+    parts = np.maximum(np.ceil(length / step), 1.0).astype(np.int64)
+    edge = np.repeat(np.arange(len(parts)), parts)
+    share = (np.arange(len(edge)) - np.repeat(np.cumsum(parts) - parts, parts)) / parts[edge]
+    points = one[edge] + share[:, None] * (two - one)[edge]
+    far = float(np.max(cKDTree(points).query(np.concatenate(middles))[0]))
+    return 2.0 * float(np.sqrt(max(far**2 - (0.5 * step) ** 2, 0.0)))
