@@ -6,6 +6,8 @@ centring, ports, pieces, smooth centrelines, ids. Everything left out is listed;
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 
 from morph.core.errors import GeometryError
@@ -21,10 +23,14 @@ from morph.layout.density import Density
 from morph.layout.graph import ChannelGraph
 from morph.layout.joined import find_joined_graph
 from morph.layout.level import count_at_levels, find_level, measure_area_ratio, smoothed
+from morph.layout.mirror import symmetrised
 from morph.layout.ports import attach_ports, list_candidates, require_ports
 from morph.layout.trace import N_STEPS, STAGE, trace_faithfully
 from morph.layout.web import join_all
 from morph.settings.job import AcceptSettings, LayoutSettings, PortSettings, Role, Seam
+
+CROP_SLACK_PIXELS = 0.51
+"""A port may lie this far off a sheet whose crop was rounded to pixels."""
 
 
 def make_graph(
@@ -51,7 +57,9 @@ def make_graph(
             is not offered.
         GeometryError: a port is off every channel, two share an end, or a piece has no way in or out.
     """
-    graph = accept(find_graph(density, settings, ports, progress), accepts, least_bore_mm)
+    graph = find_graph(density, settings, ports, progress)
+    if accepts:
+        graph = symmetrised(accept(graph, accepts, least_bore_mm), settings.mirror_at)
     require_circuits(graph, ports)
     return graph
 
@@ -63,9 +71,15 @@ def find_graph(
 
     For showing a layout before its suggested bridges are settled.
     """
-    require_ports(ports, density.size_mm)
-    if density.seam is Seam.JOINED:
-        return find_joined_graph(density, settings, ports, progress)
+    require_ports(ports, density.size_mm, CROP_SLACK_PIXELS * max(density.pitch_mm) if settings.crop_mm else 0.0)
+    find = find_joined_graph if density.seam is Seam.JOINED else _find_open_graph
+    graph = find(density, settings, ports, progress)
+    return symmetrised(replace(graph, notices=density.notices + graph.notices), settings.mirror_at)
+
+
+def _find_open_graph(
+    density: Density, settings: LayoutSettings, ports: tuple[PortSettings, ...], progress: Progress
+) -> ChannelGraph:
     level = find_level(density, settings)
     at_mm = np.array([port.at_mm for port in ports])
     traced = trace_faithfully(density, level, ports, at_mm, progress)

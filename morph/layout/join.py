@@ -16,7 +16,15 @@ from morph.layout.graph import Accepted, Branch, Bridge, ChannelGraph, DeadEnd, 
 from morph.layout.ports import split_run
 from morph.layout.web import Joint, Run, Web, arc_mm, join_through
 
-STANDING_NOTICES = ("topology-differs", "level-decides", "bridge-built", "dead-end-trimmed")
+STANDING_NOTICES = (
+    "topology-differs",
+    "level-decides",
+    "bridge-built",
+    "dead-end-trimmed",
+    "crop-rounded",
+    "image-overruled",
+    "image-size-differs",
+)
 """Notices about the image; the others are about nodes and branches and are made anew."""
 TAPER_SHARE = 0.25
 """A bridge changes from the bore at its ends to that of its grey way within this share of its length."""

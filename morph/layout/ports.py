@@ -55,8 +55,8 @@ def _candidate(run: FrameRun, picture: Picture, size_mm: tuple[float, float]) ->
     return PortCandidate(place, run.side, (run.last - run.first) * pitch_mm, run.kind)
 
 
-def require_ports(ports: tuple[PortSettings, ...], size_mm: tuple[float, float]) -> None:
-    """Raises unless there are ports, each of its own name, at its own place, on the sheet.
+def require_ports(ports: tuple[PortSettings, ...], size_mm: tuple[float, float], slack_mm: float = 0.0) -> None:
+    """Raises unless there are ports, each of its own name, at its own place, on the sheet or `slack_mm` off it.
 
     Raises:
         SettingError: `port-missing`, `port-duplicate` or `port-outside-sheet`.
@@ -72,7 +72,8 @@ def require_ports(ports: tuple[PortSettings, ...], size_mm: tuple[float, float])
     for index, port in enumerate(ports):
         x, y = port.at_mm
         where = f'[[port]] "{port.name}"'
-        if not (-1e-6 <= x <= size_mm[0] + 1e-6 and -1e-6 <= y <= size_mm[1] + 1e-6):
+        slack = slack_mm + 1e-6
+        if not (-slack <= x <= size_mm[0] + slack and -slack <= y <= size_mm[1] + slack):
             raise SettingError(
                 "port-outside-sheet",
                 expected=f"at_mm within 0..{size_mm[0]:g} by 0..{size_mm[1]:g} mm",

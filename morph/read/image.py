@@ -38,17 +38,27 @@ class RawImage:
     Args:
         value: (rows, columns) 0..1, first row of the file first, each side at least 8.
         source: base name of the file. content: fingerprint of the file's bytes.
+        note: format and grid as words, for the report.
+        rows: where the first row lies by the format's own convention ("top-down" or "bottom-up").
+        samples: what a value stands for ("cells" or "nodes").
+        states: the file itself says so; else the job does.
+        size_units: width and height the file gives itself, without a unit; None when it gives none.
     """
 
     value: Floats
     source: str
     content: str
+    note: str = ""
+    rows: str = "top-down"
+    samples: str = "cells"
+    states: bool = False
+    size_units: tuple[float, float] | None = None
 
     def __post_init__(self) -> None:
         object.__setattr__(self, "value", frozen_floats("value", self.value, (None, None)))
 
 
-def read_image(path: Path) -> RawImage:
+def read_image(path: Path, size_mm: tuple[float, float] | None = None, pixel_mm: float | None = None) -> RawImage:
     """Returns the density image in the file `path`.
 
     Args:

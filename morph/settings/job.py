@@ -68,18 +68,36 @@ class MirrorAt(StrEnum):
 
 @dataclass(frozen=True, slots=True)
 class LayoutSettings:
-    """The [layout] table; `level` is a LevelRule or a number in (0, 1), `image` an absolute path."""
+    """The [layout] table; `level` is a LevelRule or a number in (0, 1), `image` an absolute path.
+
+    `rows` and `samples` None: as the file says (formats that state it). `crop_mm`: left, bottom, right, top of the
+    part of the image that is the layout. `pixel_mm`: of the grid an outline drawing is filled on, None: by its widths.
+    """
 
     image: Path
     size_mm: tuple[float, float]
-    rows: Rows = Rows.TOP_DOWN
-    samples: Samples = Samples.CELLS
+    rows: Rows | None = Rows.TOP_DOWN
+    samples: Samples | None = Samples.CELLS
     seen_from: SeenFrom = SeenFrom.PART
     channel: CoolantEnd = CoolantEnd.HIGH
     level: LevelRule | float = LevelRule.HALF
     area_ratio: float | None = None
     seam: Seam = Seam.OPEN
     mirror_at: MirrorAt = MirrorAt.NONE
+    crop_mm: tuple[float, float, float, float] | None = None
+    pixel_mm: float | None = None
+
+    @property
+    def sheet_mm(self) -> tuple[float, float]:
+        """Width and height of the sheet: the crop, doubled when mirrored (a crop is rounded to pixels later)."""
+        width, height = self.size_mm
+        if self.crop_mm is not None:
+            width, height = self.crop_mm[2] - self.crop_mm[0], self.crop_mm[3] - self.crop_mm[1]
+        if self.mirror_at in {MirrorAt.LEFT, MirrorAt.RIGHT}:
+            width *= 2.0
+        if self.mirror_at in {MirrorAt.BOTTOM, MirrorAt.TOP}:
+            height *= 2.0
+        return width, height
 
 
 class Role(StrEnum):

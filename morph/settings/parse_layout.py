@@ -21,12 +21,16 @@ from morph.settings.job import (
     SeenFrom,
 )
 from morph.settings.parse_end import END_KEYS, parse_end
-from morph.settings.table import Choice, Table, show
+from morph.settings.table import Table, show
 
 SMALLEST_SHEET_MM, LARGEST_SHEET_MM = 1.0, 2000.0
 FARTHEST_MM = 10_000.0
 MOST_PORTS = 200
 LONGEST_NAME_BYTES = 255
+FINEST_PIXEL_MM = 0.01
+OUTLINES = (".dxf", ".svg")
+STATED = (".vti", *OUTLINES)
+"""Formats that say themselves where their first row lies and what a value stands for."""
 
 _PORT_NAME = re.compile(r"[A-Za-z0-9][A-Za-z0-9._-]{0,39}")
 _LAYOUT_KEYS = (
@@ -40,6 +44,8 @@ _LAYOUT_KEYS = (
     "area_ratio",
     "seam",
     "mirror_at",
+    "crop_mm",
+    "pixel_mm",
 )
 _PORT_KEYS = ("name", "role", "at_mm", "exit_mm", "leave", *END_KEYS)
 
@@ -65,18 +71,21 @@ def parse_layout(values: Any, file: str, folder: Path) -> LayoutSettings:
             found=f"[{width_mm:g}, {height_mm:g}] mm",
             do="Is size_mm in metres? All lengths are mm.",
         )
-    level = _level(table)
+    level, image = _level(table), _image(table)
+    says_itself = image.lower().endswith(STATED)
     return LayoutSettings(
-        image=folder / _image(table),
+        image=folder / image,
         size_mm=(width_mm, height_mm),
-        rows=table.choice("rows", Rows, Rows.TOP_DOWN),
-        samples=table.choice("samples", Samples, Samples.CELLS),
+        rows=None if says_itself and not table.has("rows") else table.choice("rows", Rows, Rows.TOP_DOWN),
+        samples=None if says_itself and not table.has("samples") else table.choice("samples", Samples, Samples.CELLS),
         seen_from=table.choice("seen_from", SeenFrom, SeenFrom.PART),
         channel=table.choice("channel", CoolantEnd, CoolantEnd.HIGH),
         level=level,
         area_ratio=_area_ratio(table, level),
         seam=table.choice("seam", Seam, Seam.OPEN),
-        mirror_at=_only(table, "mirror_at", MirrorAt, MirrorAt.NONE, "Mirroring half of a symmetric layout"),
+        mirror_at=table.choice("mirror_at", MirrorAt, MirrorAt.NONE),
+        crop_mm=_crop(table, (width_mm, height_mm)) if table.has("crop_mm") else None,
+        pixel_mm=_pixel(table, image),
     )
 
 
@@ -92,11 +101,36 @@ def _image(table: Table) -> str:
     return image
 
 
-def _only(table: Table, key: str, kind: type[Choice], sole: Choice, part: str) -> Choice:
-    """Returns `sole`, the one choice of `kind` that exists in this version; the others are not available."""
-    if table.choice(key, kind, sole) is not sole:
-        table.not_available(key, part)
-    return sole
+def _crop(table: Table, size_mm: tuple[float, float]) -> tuple[float, float, float, float]:
+    """Returns left, bottom, right, top of the crop, within the image and at least 1 mm wide and high."""
+    left, bottom, right, top = table.numbers("crop_mm", 4)
+    whole = min(left, bottom) >= -COINCIDE_MM
+    whole = whole and right <= size_mm[0] + COINCIDE_MM and top <= size_mm[1] + COINCIDE_MM
+    if not whole or right - left < SMALLEST_SHEET_MM or top - bottom < SMALLEST_SHEET_MM:
+        table.refuse(
+            "crop-range",
+            "crop_mm",
+            expected=f"left, bottom, right, top within 0 to {size_mm[0]:g} and 0 to {size_mm[1]:g} mm, at least "
+            f"{SMALLEST_SHEET_MM:g} mm apart",
+            found=f"[{left:g}, {bottom:g}, {right:g}, {top:g}] mm",
+            do="The image's origin is its lower left corner, x right, y up; size_mm stays that of the whole image.",
+        )
+    if table.raw("seam") == Seam.JOINED.value and max(left, size_mm[0] - right) > COINCIDE_MM:
+        table.refuse(
+            "setting-conflict",
+            "crop_mm",
+            expected='the whole width beside seam = "joined"',
+            do="Crop only below and above, or leave the seam open.",
+        )
+    return max(left, 0.0), max(bottom, 0.0), min(right, size_mm[0]), min(top, size_mm[1])
+
+
+def _pixel(table: Table, image: str) -> float | None:
+    if not image.lower().endswith(OUTLINES):
+        table.not_used(["pixel_mm"], f"beside an image; it is for outline drawings ({', '.join(OUTLINES)})")
+        return None
+    table.not_used(["samples"], "beside an outline drawing, which is filled on cells")
+    return table.optional_number("pixel_mm", least=FINEST_PIXEL_MM, most=10.0)
 
 
 def _level(table: Table) -> LevelRule | float:

@@ -65,7 +65,7 @@ def parse_job(content: bytes, path: Path) -> Job:
         name=_name(top),
         file=path,
         layout=layout,
-        ports=parse_ports(top.tables("port", MOST_PORTS), file, layout.size_mm),
+        ports=parse_ports(top.tables("port", MOST_PORTS), file, layout.sheet_mm),
         carrier=parse_carrier(_table(top, "carrier"), file),
         printing=_printing(top.raw("print") if top.has("print") else {}, file, folder),
         section=parse_section(top.raw("section") if top.has("section") else {}, file),

@@ -301,7 +301,6 @@ def test_a_thousand_ports_are_too_many(read_text, valid_text):
 LATER = [
     ('kind = "cylinder"', 'kind = "revolved"\nprofile_mm = [[1, 2], [3, 4]]'),
     ('kind = "cylinder"', 'kind = "freeform"\nfile = "core.stl"'),
-    (LAYOUT, LAYOUT + '\nmirror_at = "left"'),
     ("[carrier]", '[coolant]\nfluid = "water"\n[carrier]'),
     ("[carrier]", '[moulding]\npolymer = "PP"\n[carrier]'),
 ]
@@ -313,6 +312,31 @@ def test_what_does_not_exist_yet_is_refused_by_name(read_changed, old, new):
         read_changed((old, new))
     assert caught.value.code == "not-available"
     assert "not available yet" in str(caught.value)
+
+
+@pytest.mark.parametrize(
+    ("added", "code"),
+    [
+        ("crop_mm = [0, 0, 97, 64]", "crop-range"),
+        ("crop_mm = [50, 0, 20, 64]", "crop-range"),
+        ("crop_mm = [-1, 0, 20, 64]", "crop-range"),
+        ("crop_mm = [0, 0, 20]", "setting-type"),
+        ('crop_mm = [4, 0, 96, 64]\nseam = "joined"', "setting-conflict"),
+        ("pixel_mm = 0.5", "setting-conflict"),
+        ('mirror_at = "middle"', "setting-choice"),
+    ],
+)
+def test_crop_mirror_and_pixel_that_cannot_be(read_changed, added, code):
+    with pytest.raises(SettingError) as caught:
+        read_changed((LAYOUT, f"{LAYOUT}\n{added}"))
+    assert caught.value.code == code
+
+
+def test_ports_of_a_mirrored_layout_lie_on_the_doubled_sheet(read_changed):
+    job = read_changed((LAYOUT, LAYOUT + '\nmirror_at = "right"'), ("[96.0, 50.0]", "[192.0, 50.0]"))
+    assert job.layout.sheet_mm == (192.0, 64.0) and job.ports[1].at_mm == (192.0, 50.0)
+    job = read_changed((LAYOUT, LAYOUT + "\ncrop_mm = [0, 0, 80, 60]"), ("[96.0, 50.0]", "[80.0, 50.0]"))
+    assert job.layout.sheet_mm == (80.0, 60.0)
 
 
 def test_a_place_a_rounding_error_off_the_sheet_lies_on_its_edge(read_changed):
