@@ -65,8 +65,8 @@ class StokesFlow:
     def __init__(self, grid: Grid, openings: tuple[Opening, ...]) -> None:
         self.grid = grid
         fixed = np.zeros(grid.n_faces, dtype=bool)
-        for edge in (grid.across[:, 0], grid.across[:, -1], grid.upward[0], grid.upward[-1]):
-            fixed[edge] = True
+        for side in grid.sides:
+            fixed[grid.edge_faces(side)] = True
         self.load = np.zeros(grid.n_faces)
         for opening in openings:
             faces = opening.faces(grid)
@@ -108,15 +108,19 @@ def _solve_refined(matrix: Any, factor: Any, free: Ints, load: Floats) -> Floats
 def _viscous_exchange(grid: Grid) -> Any:
     """Returns the sparse (n_faces, n_faces) matrix of viscous forces; walls lie half a cell off (weight 2)."""
     across, upward = grid.across, grid.upward
-    half_columns = np.ones(grid.columns + 1)
-    half_columns[[0, -1]] = 0.5
+    own, beside = across[:, : grid.across_columns], grid.closed(upward)
+    half_columns = np.ones(grid.across_columns)
     half_rows = np.ones((grid.rows + 1, 1))
     half_rows[[0, -1]] = 0.5
+    walls = [own[0], own[-1]]
+    if not grid.joined:
+        half_columns[[0, -1]] = 0.5
+        walls += [upward[:, 0], upward[:, -1]]
     links = [
         (across[:, :-1], across[:, 1:], 1.0),
-        (across[:-1], across[1:], half_columns),
+        (own[:-1], own[1:], half_columns),
         (upward[:-1], upward[1:], 1.0),
-        (upward[:, :-1], upward[:, 1:], half_rows),
+        (beside[:, :-1], beside[:, 1:], half_rows),
     ]
     rows, columns, weights = [], [], []
     for one, other, weight in links:
@@ -124,7 +128,7 @@ def _viscous_exchange(grid: Grid) -> Any:
         rows += [a, b, a, b]
         columns += [a, b, b, a]
         weights += [w, w, -w, -w]
-    for wall in (across[0], across[-1], upward[:, 0], upward[:, -1]):
+    for wall in walls:
         rows.append(wall)
         columns.append(wall)
         weights.append(np.full(wall.size, 2.0))

@@ -2,7 +2,8 @@
 
 Row 0 lies at the bottom, column 0 at the left. Faces are numbered in one list: first the faces
 crossed by the horizontal velocity, (rows, columns + 1), then those crossed by the vertical one,
-(rows + 1, columns). One cell measures `step` = 1 / rows.
+(rows + 1, columns). One cell measures `step` = 1 / rows. On a joined grid the last column's right
+faces are the first column's left ones: the sheet goes all the way round and has neither left nor right edge.
 """
 
 from __future__ import annotations
@@ -21,10 +22,11 @@ Ints = NDArray[np.int64]
 
 @dataclass(frozen=True)
 class Grid:
-    """A grid of `rows` x `columns` square cells on a sheet one unit high."""
+    """A grid of `rows` x `columns` square cells on a sheet one unit high; `joined` closes it into a ring."""
 
     rows: int
     columns: int
+    joined: bool = False
 
     @property
     def step(self) -> float:
@@ -39,7 +41,17 @@ class Grid:
     @property
     def n_faces(self) -> int:
         """Number of faces of both directions."""
-        return self.rows * (self.columns + 1) + (self.rows + 1) * self.columns
+        return self.rows * self.across_columns + (self.rows + 1) * self.columns
+
+    @property
+    def across_columns(self) -> int:
+        """Number of columns of faces crossed by the horizontal velocity, each counted once."""
+        return self.columns if self.joined else self.columns + 1
+
+    @property
+    def sides(self) -> tuple[str, ...]:
+        """The edges the sheet has."""
+        return ("bottom", "top") if self.joined else ("left", "right", "bottom", "top")
 
     @cached_property
     def cell(self) -> Ints:
@@ -48,13 +60,23 @@ class Grid:
 
     @cached_property
     def across(self) -> Ints:
-        """(rows, columns + 1) number of each face crossed by the horizontal velocity."""
-        return np.arange(self.rows * (self.columns + 1)).reshape(self.rows, self.columns + 1)
+        """(rows, columns + 1) number of each face crossed by the horizontal velocity; joined: last = first."""
+        return self.closed(np.arange(self.rows * self.across_columns).reshape(self.rows, self.across_columns))
 
     @cached_property
     def upward(self) -> Ints:
         """(rows + 1, columns) number of each face crossed by the vertical velocity."""
-        return self.across.size + np.arange((self.rows + 1) * self.columns).reshape(self.rows + 1, self.columns)
+        first = self.rows * self.across_columns
+        return first + np.arange((self.rows + 1) * self.columns).reshape(self.rows + 1, self.columns)
+
+    @cached_property
+    def between(self) -> Ints:
+        """(rows, columns - 1) number of each face between a cell and its right neighbour; joined: (rows, columns)."""
+        return self.across[:, 1:] if self.joined else self.across[:, 1:-1]
+
+    def closed(self, numbers: Ints) -> Ints:
+        """Returns numbers (n, columns), on a joined grid with the first column once more at the right."""
+        return np.hstack([numbers, numbers[:, :1]]) if self.joined else numbers
 
     @cached_property
     def outflow(self) -> Any:
@@ -76,6 +98,42 @@ class Grid:
         y, x = np.meshgrid(np.arange(self.rows) + 0.5, np.arange(self.columns) + 0.5, indexing="ij")
         return x * self.step, y * self.step
 
+    def edge_faces(self, side: str) -> Ints:
+        """Returns the numbers of the faces along one edge, from the bottom or from the left.
+
+        Raises:
+            ValueError: a joined grid has no left and no right edge.
+        """
+        self._require_side(side)
+        return np.asarray(
+            {
+                "left": self.across[:, 0],
+                "right": self.across[:, -1],
+                "bottom": self.upward[0],
+                "top": self.upward[-1],
+            }[side]
+        )
+
+    def edge_cells(self, side: str, depth: int = 1) -> Ints:
+        """Returns the numbers (n, depth) of the cells along one edge, `depth` rows or columns inwards.
+
+        Raises:
+            ValueError: a joined grid has no left and no right edge.
+        """
+        self._require_side(side)
+        return np.asarray(
+            {
+                "left": self.cell[:, :depth],
+                "right": self.cell[:, -depth:],
+                "bottom": self.cell[:depth].T,
+                "top": self.cell[-depth:].T,
+            }[side]
+        )
+
+    def _require_side(self, side: str) -> None:
+        if side not in self.sides:
+            raise ValueError(f"side: expected one of {', '.join(self.sides)}, found {side}")
+
 
 @dataclass(frozen=True)
 class Opening:
@@ -94,22 +152,12 @@ class Opening:
 
     def faces(self, grid: Grid) -> Ints:
         """Returns the numbers of the boundary faces in this stretch."""
-        edge = {
-            "left": grid.across[:, 0],
-            "right": grid.across[:, -1],
-            "bottom": grid.upward[0],
-            "top": grid.upward[-1],
-        }[self.side]
+        edge = grid.edge_faces(self.side)
         return np.asarray(edge[self._span(edge.size)])
 
     def cells(self, grid: Grid, depth: int) -> Ints:
         """Returns the numbers of the cells in this stretch, `depth` rows or columns inwards."""
-        strip = {
-            "left": grid.cell[:, :depth],
-            "right": grid.cell[:, -depth:],
-            "bottom": grid.cell[:depth].T,
-            "top": grid.cell[-depth:].T,
-        }[self.side]
+        strip = grid.edge_cells(self.side, depth)
         return np.asarray(strip[self._span(len(strip))].ravel())
 
     @property

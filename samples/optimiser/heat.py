@@ -38,15 +38,16 @@ class HeatTransport:
     """
 
     def __init__(self, grid: Grid, load: Floats, capacity: float) -> None:
-        cell, across, upward = grid.cell, grid.across, grid.upward
+        cell, beside = grid.cell, grid.closed(grid.cell)
         self.grid, self.load = grid, load
         self.scale = capacity * grid.step
-        self.low = np.concatenate([cell[:, :-1].ravel(), cell[:-1].ravel()])
-        self.high = np.concatenate([cell[:, 1:].ravel(), cell[1:].ravel()])
-        self.inner = np.concatenate([across[:, 1:-1].ravel(), upward[1:-1].ravel()])
-        self.edge = np.concatenate([across[:, 0], across[:, -1], upward[0], upward[-1]])
-        self.edge_cell = np.concatenate([cell[:, 0], cell[:, -1], cell[0], cell[-1]])
-        self.edge_sign = np.repeat([-1.0, 1.0, -1.0, 1.0], [grid.rows, grid.rows, grid.columns, grid.columns])
+        self.low = np.concatenate([beside[:, :-1].ravel(), cell[:-1].ravel()])
+        self.high = np.concatenate([beside[:, 1:].ravel(), cell[1:].ravel()])
+        self.inner = np.concatenate([grid.between.ravel(), grid.upward[1:-1].ravel()])
+        self.edge = np.concatenate([grid.edge_faces(side) for side in grid.sides])
+        self.edge_cell = np.concatenate([grid.edge_cells(side).ravel() for side in grid.sides])
+        outwards = [-1.0 if side in {"left", "bottom"} else 1.0 for side in grid.sides]
+        self.edge_sign = np.repeat(outwards, [grid.edge_faces(side).size for side in grid.sides])
 
     def solve(self, conductivity: Floats, velocity: Floats) -> HeatSolution:
         """Returns the temperatures for a conductivity per cell (n_cells,) and face velocities (n_faces,)."""

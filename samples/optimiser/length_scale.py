@@ -19,14 +19,19 @@ from optimiser.grid import Floats, Grid
 
 
 def make_filter(grid: Grid, radius: float, *, flat: bool = False) -> Any:
-    """Returns the sparse (n_cells, n_cells) averaging matrix whose rows add up to 1.
+    """Returns the sparse (n_cells, n_cells) averaging matrix whose rows add up to 1; a joined grid has no seam.
 
     Args:
         grid: the cells.
         radius: reach in cells.
         flat: equal weights in the disc instead of a cone.
+
+    Raises:
+        ValueError: the disc would overlap itself round a joined grid.
     """
     reach = int(np.ceil(radius))
+    if grid.joined and 2 * reach + 1 > grid.columns:
+        raise ValueError(f"radius: expected less than half a turn of {grid.columns} cells, found {radius}")
     number = grid.cell
     rows, columns, weights = [], [], []
     for down in range(-reach, reach + 1):
@@ -34,10 +39,13 @@ def make_filter(grid: Grid, radius: float, *, flat: bool = False) -> Any:
             weight = radius - np.hypot(down, right)
             if weight <= 0.0:
                 continue
-            here = number[_shift(down, grid.rows), _shift(right, grid.columns)].ravel()
-            there = number[_shift(-down, grid.rows), _shift(-right, grid.columns)].ravel()
-            rows.append(here)
-            columns.append(there)
+            here, there = number[_shift(down, grid.rows)], number[_shift(-down, grid.rows)]
+            if grid.joined:
+                there = np.roll(there, right, axis=1)
+            else:
+                here, there = here[:, _shift(right, grid.columns)], there[:, _shift(-right, grid.columns)]
+            rows.append(here.ravel())
+            columns.append(there.ravel())
             weights.append(np.full(here.size, 1.0 if flat else weight))
     entries = (np.concatenate(weights), (np.concatenate(rows), np.concatenate(columns)))
     matrix = sp.csr_matrix(entries, shape=(grid.n_cells, grid.n_cells))

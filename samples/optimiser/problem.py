@@ -30,7 +30,7 @@ class Scenario:
         heat: heat load at x, y (rows, columns).
         start: starting density at x, y.
         solid: cells that must stay metal, or None.
-        rim: width in cells of the metal kept along the edge of the sheet, openings excepted.
+        rim: width in cells of the metal kept along the edges the sheet has, openings excepted.
         capacity: heat carried by the coolant, against a conductivity of the metal of 1.
         filter_radius: of the cone filter, in cells.
         disc_radius: of the disc for the local coolant share, in cells.
@@ -135,7 +135,7 @@ def _fixed_cells(scenario: Scenario) -> tuple[Ints, Ints]:
     """Returns the numbers of the cells that stay metal, and of those that stay coolant."""
     grid, rim = scenario.grid, scenario.rim
     edge = np.ones((grid.rows, grid.columns), dtype=bool)
-    edge[rim : grid.rows - rim, rim : grid.columns - rim] = False
+    edge[rim : grid.rows - rim, slice(None) if grid.joined else slice(rim, grid.columns - rim)] = False
     if scenario.solid is not None:
         edge |= scenario.solid(*grid.centres())
     coolant = np.concatenate([opening.cells(grid, rim + 2) for opening in scenario.openings])

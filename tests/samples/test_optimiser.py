@@ -22,8 +22,10 @@ GRADIENT_TOLERANCE = 1e-4
 GRADIENT_SEEDS = (3, 17, 92)
 
 
-def coarse(steps: int = 12):
-    """The small sample's problem on a third of its cells."""
+def coarse(steps: int = 12, *, joined: bool = False):
+    """The small sample's problem on a third of its cells; joined: as if its left and right edge were one line."""
+    if joined:
+        return replace(coarse(steps), grid=Grid(20, 30, joined=True))
     return replace(SCENARIOS["tealight-cup"], grid=Grid(20, 30), rim=2, filter_radius=2.0, disc_radius=5.0, steps=steps)
 
 
@@ -33,9 +35,10 @@ def central_difference(function, at, direction):
 
 @pytest.mark.parametrize("seed", GRADIENT_SEEDS)
 @pytest.mark.parametrize("sharpness", [0.0, 4.0])
-def test_adjoint_gradients_agree_with_central_differences(seed, sharpness):
+@pytest.mark.parametrize("joined", [False, True])
+def test_adjoint_gradients_agree_with_central_differences(seed, sharpness, joined):
     """Whole chain, design to objective and limits, along single cells and along a random direction."""
-    problem = DesignProblem(coarse())
+    problem = DesignProblem(coarse(joined=joined))
     random = np.random.default_rng(seed)
     design = random.uniform(0.2, 0.8, problem.scenario.grid.n_cells)
     density, slope = problem.density(design, sharpness)
@@ -90,8 +93,9 @@ def test_flow_through_resisting_metal_follows_darcy():
     assert velocity[grid.across].mean(axis=0) == pytest.approx(np.full(41, 1.0 / (2.0 * drag)), rel=1e-2)
 
 
-def test_flow_keeps_the_coolant_it_takes_in():
-    scenario = coarse()
+@pytest.mark.parametrize("joined", [False, True])
+def test_flow_keeps_the_coolant_it_takes_in(joined):
+    scenario = coarse(joined=joined)
     grid = scenario.grid
     flow = StokesFlow(grid, scenario.openings)
     random = np.random.default_rng(5)
@@ -104,9 +108,10 @@ def test_flow_keeps_the_coolant_it_takes_in():
     assert np.abs(grid.outflow @ velocity).max() <= 1e-6 * entering
 
 
-def test_heat_carried_out_equals_heat_put_in():
+@pytest.mark.parametrize("joined", [False, True])
+def test_heat_carried_out_equals_heat_put_in(joined):
     """Energy balance of a steady state: the stream takes out the whole load (first law)."""
-    scenario = coarse()
+    scenario = coarse(joined=joined)
     problem = DesignProblem(scenario)
     grid = scenario.grid
     found = problem.evaluate(problem.density(problem.first_design(), 4.0)[0], 0.1)
@@ -140,6 +145,48 @@ def test_filter_keeps_a_constant_and_reaches_no_further_than_its_radius():
     # Inside, a cone: (2.5 - distance) / (sum over the disc), away from the edge.
     inner = distance < 2.5
     assert spread[inner] == pytest.approx((2.5 - distance[inner]) / (2.5 - distance[inner]).sum(), rel=1e-12)
+
+
+def test_flow_round_a_joined_sheet_has_no_side_walls():
+    """Darcy, without the layers that side walls make: velocity = pressure gradient / drag in every column (exact)."""
+    grid, drag = Grid(20, 30, joined=True), 1e3
+    flow = StokesFlow(grid, (Opening("bottom", 0.0, 1.0, 1.0), Opening("top", 0.0, 1.0, 0.0)))
+    velocity = flow.solve(np.full(grid.n_cells, drag)).velocity
+    assert velocity[grid.upward] == pytest.approx(np.full((21, 30), 1.0 / drag), rel=1e-9)
+    assert np.abs(velocity[grid.across]).max() <= 1e-12
+
+
+def turned_fields(columns):
+    """Objective, limits, and fields turned back, of one random joined problem turned by whole columns."""
+    random = np.random.default_rng(8)
+    density, load = random.uniform(0.0, 1.0, (20, 30)), random.uniform(0.5, 1.5, (20, 30))
+    span = (columns / 30, (columns + 3) / 30)
+    scenario = replace(
+        coarse(joined=True),
+        openings=(Opening("bottom", *span, 1.0), Opening("top", *span, 0.0)),
+        heat=lambda _x, _y: np.roll(load, columns, axis=1),
+    )
+    found = DesignProblem(scenario).evaluate(np.roll(density, columns, axis=1).ravel(), 0.1)
+    fields = [found.temperature, found.slope, *found.limit_slopes]
+    return found.objective, found.limits, [np.roll(field.reshape(20, 30), -columns, axis=1) for field in fields]
+
+
+@pytest.mark.parametrize("columns", [1, 11, 27])
+def test_a_joined_sheet_has_no_first_column(columns):
+    """Turned by whole columns, load, density and ports give the turned temperature and gradients."""
+    plain, turned = turned_fields(0), turned_fields(columns)
+    assert turned[0] == pytest.approx(plain[0], rel=1e-9)
+    assert turned[1] == pytest.approx(plain[1], rel=1e-12)
+    for one, two in zip(plain[2], turned[2], strict=True):
+        assert two == pytest.approx(one, rel=1e-6, abs=1e-9 * np.abs(one).max())
+
+
+def test_a_joined_sheet_has_no_left_edge():
+    grid = Grid(20, 30, joined=True)
+    with pytest.raises(ValueError, match="side: expected one of bottom, top, found left"):
+        StokesFlow(grid, (Opening("left", 0.0, 1.0, 1.0),))
+    with pytest.raises(ValueError, match="half a turn of 30 cells"):
+        make_filter(grid, 15.0)
 
 
 def test_projection_sharpens_towards_a_step():
