@@ -21,12 +21,13 @@ from morph.settings.job import Job
 if TYPE_CHECKING:
     from morph.body.blank import Blank
     from morph.body.plan import ChannelPlan
+    from morph.flow.result import FlowResult
     from morph.layout.density import Density
     from morph.layout.graph import ChannelGraph
     from morph.report.records import BuildRecords
     from morph.surface.wrap import WrappedGraph
 
-STAGES = ("layout", "surface", "body", "solid", "insert", "check", "export", "report")
+STAGES = ("layout", "surface", "body", "flow", "solid", "insert", "check", "export", "report")
 
 
 @dataclass(frozen=True, slots=True)
@@ -90,24 +91,6 @@ class _Clock:
         self.progress.step(name, 1, 1)
 
 
-def _not_checked() -> tuple[Verdict, ...]:
-    """Returns the rows for what this version does not look at, so that nobody takes silence for a pass."""
-    return (
-        Verdict(
-            "flow",
-            Outcome.NOT_CHECKED,
-            "Flow, velocity and pressure drop were not calculated.",
-            hint="Measure flow against pressure on the printed insert before use.",
-        ),
-        Verdict(
-            "temperature",
-            Outcome.NOT_CHECKED,
-            "Face temperature and cooling time were not calculated.",
-            hint="Check the face temperature at the press before series production.",
-        ),
-    )
-
-
 @dataclass(frozen=True, slots=True, eq=False)
 class Planned:
     """Everything that is settled before a solid is made: cheap, and refused here when it cannot be."""
@@ -117,10 +100,11 @@ class Planned:
     wrapped: WrappedGraph
     blank: Blank
     plan: ChannelPlan
+    flow: FlowResult | None
 
 
 def plan_channels(job: Job, clock: _Clock) -> Planned:
-    """Returns the records from the density to the channel plan.
+    """Returns the records from the density to the channel plan and the flow through it.
 
     Raises:
         MorphError: an input or a request that cannot be met, with its code.
@@ -130,6 +114,7 @@ def plan_channels(job: Job, clock: _Clock) -> Planned:
     from morph.body.make import make_plan
     from morph.layout.density import make_density
     from morph.layout.extract import make_graph
+    from morph.layout.keep_out import require_keep_outs
     from morph.surface.make import make_carrier
     from morph.surface.wrap import choose_depth_mm, wrap_graph
 
@@ -139,6 +124,7 @@ def plan_channels(job: Job, clock: _Clock) -> Planned:
         density = make_density(job.layout)
         least_mm = max(job.service.smallest_bore_mm, profile.smallest_bore_mm.value) / job.section.bore_scale
         graph = make_graph(density, job.layout, job.ports, progress, job.accepts, least_mm)
+        require_keep_outs(job.keep_outs, job.ports, graph.size_mm, graph.turn_mm)
     with clock.stage("surface"):
         depth_mm = choose_depth_mm(job.carrier, graph, job.section, job.service, profile)
         carrier = make_carrier(job.carrier, graph.size_mm, job.layout.seen_from, depth_mm, job.layout.seam)
@@ -147,7 +133,17 @@ def plan_channels(job: Job, clock: _Clock) -> Planned:
         up = job.printing.build_direction
         blank = make_blank(job.blank, job.holes, carrier, graph.size_mm, job.service, up, progress)
         plan = make_plan(wrapped, blank, job.ports, job.section, job.service, profile, progress, up)
-    return Planned(density, graph, wrapped, blank, plan)
+    return Planned(density, graph, wrapped, blank, plan, _flow(job, plan, clock))
+
+
+def _flow(job: Job, plan: ChannelPlan, clock: _Clock) -> FlowResult | None:
+    """Returns the flow through the channels; None when the job does not say what flows."""
+    from morph.flow.measure import measure_flow
+
+    if job.coolant is None:
+        return None
+    with clock.stage("flow"):
+        return measure_flow(plan, job.coolant, job.printing.profile, progress=clock.progress)
 
 
 def make_records(job: Job, clock: _Clock) -> BuildRecords:
@@ -157,6 +153,9 @@ def make_records(job: Job, clock: _Clock) -> BuildRecords:
         MorphError: an input or a request that cannot be met, with its code.
     """
     from morph.check import CheckSubject, check_insert, measure_fields, measure_insert
+    from morph.check.flow import check_flow
+    from morph.check.not_run import FLOW_NOT_RUN, TEMPERATURE_NOT_RUN
+    from morph.layout.keep_out import check_keep_outs
     from morph.report.records import BuildRecords
     from morph.solid.channel import make_channel_solid
     from morph.solid.cut import make_finished, make_insert
@@ -182,7 +181,14 @@ def make_records(job: Job, clock: _Clock) -> BuildRecords:
             bore_scale=job.section.bore_scale,
         )
         measured = measure_insert(subject, progress)
-        verdicts = sort_verdicts(check_insert(subject, progress, measured) + _not_checked())
+        kept_out = check_keep_outs(
+            job.keep_outs,
+            [(branch.id, branch.sheet_mm, branch.bore_mm) for branch in plan.branches if branch.sheet_mm is not None],
+            planned.graph.turn_mm,
+        )
+        rows = check_insert(subject, progress, measured) + kept_out
+        rows += (FLOW_NOT_RUN,) if planned.flow is None else check_flow(planned.flow)
+        verdicts = sort_verdicts((*rows, TEMPERATURE_NOT_RUN))
         fields = measure_fields(subject, measured)
     return BuildRecords(
         job=job,
@@ -197,6 +203,7 @@ def make_records(job: Job, clock: _Clock) -> BuildRecords:
         notices=planned.graph.notices + plan.notices,
         fields=fields,
         finished=finished,
+        flow=planned.flow,
     )
 
 

@@ -12,6 +12,7 @@ _DOING = {
     "layout": "channel graph out of the density",
     "surface": "graph laid on the carrier at depth",
     "body": "blank, room for every bore, leads",
+    "flow": "flow and pressure in every branch",
     "solid": "channels as one closed body",
     "insert": "channels cut from the blank",
     "check": "walls, openings, ceilings, powder",

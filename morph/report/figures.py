@@ -14,11 +14,12 @@ import numpy as np
 from morph.check.centreline import make_centrelines
 from morph.check.channel_wall import nearest_samples, sub_mesh
 from morph.check.fields import ChannelFields
-from morph.core.arrays import Floats
+from morph.core.arrays import Floats, Ints
 from morph.geometry.mesh import Mesh
 from morph.report.along import sheet_branches
 from morph.report.colour import map_scale, round_scale
 from morph.report.decimate import make_screen_mesh
+from morph.report.flow_view import PRESSURE, REYNOLDS, VELOCITY, WORDS, along_branch
 from morph.report.legend import PORT_COLOUR
 from morph.report.records import BuildRecords
 
@@ -106,6 +107,7 @@ def make_scene(records: BuildRecords) -> ChannelScene:
                 0.0,
                 180.0,
             ),
+            *_flow_quantities(records, sample),
         ),
         tuple(
             (e.port, e.role.value, (float(e.xyz_mm[0]), float(e.xyz_mm[1]), float(e.xyz_mm[2])))
@@ -114,9 +116,22 @@ def make_scene(records: BuildRecords) -> ChannelScene:
     )
 
 
+def _flow_quantities(records: BuildRecords, sample: Ints) -> list[Quantity]:
+    """Returns what the flow adds, at the channels' vertices by their centreline samples; nothing without a flow."""
+    if records.flow is None:
+        return []
+    flow = records.flow
+    rows = [along_branch(flow, index) for index in range(len(records.plan.branches))]
+    units = {VELOCITY: "m/s", REYNOLDS: "", PRESSURE: "bar"}
+    return [
+        _quantity(key, words.capitalize(), units[key], np.concatenate([row[key] for row in rows])[sample])
+        for key, words in WORDS.items()
+    ]
+
+
 def hover_words(scene: ChannelScene) -> list[str]:
     """Returns what is shown under the cursor at each channel vertex."""
-    wall, bore, angle = (quantity.values for quantity in scene.quantities)
+    wall, bore, angle = (quantity.values for quantity in scene.quantities[:3])
     return [
         f"{name}: bore {b:.2f} mm, wall {w:.2f} mm, angle {a:.0f} deg"
         for name, b, w, a in zip(scene.branch, bore.tolist(), wall.tolist(), angle.tolist(), strict=True)

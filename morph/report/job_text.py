@@ -89,7 +89,17 @@ def _tables(job: Job) -> list[tuple[str, Rows]]:
         ("[blank]", _blank(job)),
         *(("[[hole]]", _rows(hole)) for hole in job.holes),
         ("[quality]", _rows(job.quality)),
+        *_coolant(job),
     ]
+
+
+def _coolant(job: Job) -> list[tuple[str, Rows]]:
+    if job.coolant is None:
+        return []
+    fluid = job.coolant.fluid
+    name = fluid.kind.value + (f"-{fluid.glycol_percent:g}" if fluid.glycol_percent else "")
+    own = [] if fluid.own is None else _rows(fluid.own)
+    return [("[coolant]", [("fluid", name), *own, *_rows(job.coolant, ("fluid",))])]
 
 
 def job_text(job: Job) -> str:

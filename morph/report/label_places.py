@@ -32,6 +32,11 @@ class LabelPlaces:
         """Keeps names off a sign of `radius_px` around `at_mm (2,)`."""
         self._taken.append((self._pixel(at_mm), np.array([radius_px, radius_px])))
 
+    def keep_below_clear(self, low_px: float) -> None:
+        """Keeps names off the lowest `low_px` of the drawing, where its legend stands."""
+        half = np.array([0.5 * self._drawing.width_px, 0.5 * low_px])
+        self._taken.append((np.array([half[0], self._drawing.height_px - half[1]]), half))
+
     def write(self, at_mm: Floats, name: str, colour: str, *, beside: bool) -> None:
         """Writes `name` near `at_mm (2,)`, on it when there is room and not `beside` it."""
         item = self._pixel(at_mm)

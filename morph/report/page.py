@@ -26,6 +26,7 @@ from morph.report.figures import (
     make_scene,
     plotly_script,
 )
+from morph.report.flow_view import WORDS, flow_numbers, flow_rows, flow_scene
 from morph.report.headline import Figure, five_figures, sorted_verdicts
 from morph.report.job_text import job_text
 from morph.report.projection_view import VIEWS, draw_view
@@ -152,6 +153,15 @@ def _figure_place(figure: Figure) -> list[str]:
     return ids + place_words(figure.sheet_mm, figure.xyz_mm)
 
 
+def _flow_pictures(records: BuildRecords) -> list[tuple[str, Any]]:
+    """Returns the sheet coloured by each figure of the flow, as (what is shown, drawing)."""
+    from markupsafe import Markup
+
+    if records.flow is None:
+        return []
+    return [(words, Markup(draw_sheet(flow_scene(records, records.flow, key)))) for key, words in WORDS.items()]
+
+
 def _pictures(records: BuildRecords) -> dict[str, Any]:
     from markupsafe import Markup
 
@@ -161,6 +171,7 @@ def _pictures(records: BuildRecords) -> dict[str, Any]:
         "section_svg": Markup(drawing),
         "section": section,
         "sheet_svg": Markup(draw_sheet(sheet_scene(records))),
+        "flow_svg": _flow_pictures(records),
         "density_svg": Markup(draw_density(records.density, records.graph)),
         "views": [(view.words, Markup(draw_view(view, records.plan, records.insert.mesh))) for view in VIEWS],
         "figure_json": Markup(figure_json(make_figure(scene))),
@@ -182,6 +193,8 @@ def _tables(records: BuildRecords, summary: dict[str, Any]) -> dict[str, Any]:
         "counts": [(outcome, sum(v.outcome is outcome for v in verdicts)) for outcome in Outcome],
         "ports": _port_rows(records),
         "branches": _branch_rows(records.plan),
+        "flow_numbers": [] if records.flow is None else flow_numbers(records.flow),
+        "flow_rows": [] if records.flow is None else flow_rows(records.flow),
         "n_channels": sum(branch.kind is BranchKind.CHANNEL for branch in records.plan.branches),
         "notices": records.notices,
         "job_text": job_text(records.job),

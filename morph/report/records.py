@@ -8,6 +8,7 @@ from morph.body.blank import Blank
 from morph.body.plan import ChannelPlan
 from morph.check.fields import ChannelFields
 from morph.core.verdict import Notice, Verdict
+from morph.flow.result import FlowResult
 from morph.geometry.mesh import Mesh
 from morph.layout.density import Density
 from morph.layout.graph import ChannelGraph
@@ -26,6 +27,7 @@ class BuildRecords:
         verdicts: what the checks say. notices: degraded or surprising paths of any stage.
         fields: figures along the channels and over their wall, for pictures; None when not measured.
         finished: the insert after its stock is machined off; None when there is no stock.
+        flow: flow and pressure in every branch; None when the job does not ask for it.
     """
 
     job: Job
@@ -40,3 +42,4 @@ class BuildRecords:
     notices: tuple[Notice, ...] = ()
     fields: ChannelFields | None = None
     finished: Mesh | None = None
+    flow: FlowResult | None = None

@@ -18,6 +18,7 @@ from morph.layout.graph import NodeKind
 from morph.report.along import band_edges_mm, middle_index, sheet_branches, sheet_of
 from morph.report.colour import COLOUR_STEPS, map_hex, round_scale
 from morph.report.drawing import FAINT, INK, PAPER, Drawing, Point, number
+from morph.report.label_places import LabelPlaces
 from morph.report.legend import PORT_COLOUR, draw_port, draw_sheet_legend
 from morph.report.seam import clipped, copies_mm, on_sheet_mm
 from morph.settings.job import Role, SeenFrom
@@ -167,11 +168,15 @@ def _names(drawing: Drawing, scene: SheetScene, branches: list[PlanBranch]) -> N
     named = {b.id for b in branches if not b.through_flow or scene.flow}
     if scene.marked is not None:
         named.add(scene.marked[0])
+    labels = LabelPlaces(drawing)
+    labels.keep_below_clear(LEGEND_PX)
+    for node in scene.plan.nodes:
+        if node.kind is NodeKind.PORT and node.sheet_mm is not None:
+            labels.keep_clear(on_sheet_mm(scene.seen(node.sheet_mm)[0], scene.turn_mm), 10.0)
     for branch in branches:
         if branch.id in named:
             points = scene.seen(sheet_of(branch))
-            x, y = on_sheet_mm(points[middle_index(points)], scene.turn_mm).tolist()
-            drawing.label((x, y), branch.id, size_px=12.0, bold=True)
+            labels.write(on_sheet_mm(points[middle_index(points)], scene.turn_mm), branch.id, INK, beside=False)
 
 
 def _mark(drawing: Drawing, scene: SheetScene) -> None:

@@ -22,6 +22,7 @@ from morph.core.units import mass_g
 from morph.core.verdict import Notice, Outcome, Verdict, worst_outcome
 from morph.geometry.mesh import Mesh, measure_condition, mesh_area_mm2, mesh_volume_mm3
 from morph.layout.graph import ChannelGraph, NodeKind, count_loops
+from morph.report.flow_summary import flow_block
 from morph.report.headline import five_figures, sorted_verdicts
 from morph.report.records import BuildRecords
 from morph.settings.job import ConeSettings, FaceSealEnd
@@ -29,10 +30,6 @@ from morph.surface.cone import ConeCarrier
 
 SCHEMA = 1
 LIBRARIES = ("numpy", "scipy", "scikit-image", "shapely", "manifold3d", "numba", "plotly", "jinja2")
-STAGES_NOT_RUN = {
-    "flow": "Flow, velocity and pressure drop were not calculated.",
-    "temperature": "Face temperature and cooling time were not calculated.",
-}
 
 Block = dict[str, Any]
 
@@ -206,11 +203,8 @@ def _notice_row(notice: Notice) -> Block:
 
 
 def not_checked_rows(verdicts: tuple[Verdict, ...]) -> list[Block]:
-    """Returns what was not checked, why, and what to do instead; stages that did not run are always among them."""
-    rows = [{"what": v.code, "reason": v.text, "hint": v.hint} for v in verdicts if v.outcome is Outcome.NOT_CHECKED]
-    named = {row["what"] for row in rows}
-    rows += [{"what": w, "reason": r, "hint": ""} for w, r in STAGES_NOT_RUN.items() if w not in named]
-    return rows
+    """Returns what was not checked, why, and what to do instead."""
+    return [{"what": v.code, "reason": v.text, "hint": v.hint} for v in verdicts if v.outcome is Outcome.NOT_CHECKED]
 
 
 def plain_values(value: Any) -> Any:
@@ -291,7 +285,7 @@ def _blocks(records: BuildRecords) -> Block:
             "build_direction": printing.build_direction,
             "verdicts": [verdict_row(verdict) for verdict in verdicts],
         },
-        "flow": None,
+        "flow": None if records.flow is None else flow_block(records.flow),
         "thermal": None,
         "not_checked": not_checked_rows(verdicts),
         "notices": [_notice_row(notice) for notice in records.notices],

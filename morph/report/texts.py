@@ -9,7 +9,7 @@ from morph.body.plan import Exit
 from morph.core.verdict import Outcome, Verdict
 from morph.settings.job import FaceSealEnd
 
-DECIMALS = {"mm": 2, "mm2": 1, "mm3": 0, "deg": 1, "count": 0, "ratio": 3, "bores": 3}
+DECIMALS = {"mm": 2, "mm2": 1, "mm3": 0, "deg": 1, "count": 0, "ratio": 3, "bores": 3, "bar": 3, "m/s": 2, "L/min": 2}
 UNIT_WORDS = {"mm2": "mm²", "mm3": "mm³", "deg": "°", "count": "", "ratio": ""}
 LIMIT_WORDS = {"least": "≥", "most": "≤", "equal": "="}
 

@@ -13,6 +13,7 @@ from typing import Any
 from morph.core.errors import SettingError
 from morph.settings.job import Job, PrintSettings, QualitySettings, ServiceSettings
 from morph.settings.parse_carrier import parse_carrier
+from morph.settings.parse_coolant import parse_coolant
 from morph.settings.parse_layout import MOST_PORTS, direction, parse_layout, parse_ports
 from morph.settings.parse_shape import (
     LARGEST_BORE_MM,
@@ -31,8 +32,21 @@ DEFAULT_PROCESS = "steel-40um"
 FINEST_H_MM, COARSEST_H_MM = 0.05, 1.0
 
 _NAME = re.compile(r"[A-Za-z0-9_-][A-Za-z0-9._-]{0,63}")
-_TABLES = ("layout", "port", "carrier", "section", "print", "service", "blank", "hole", "quality", "accept", "keep_out")
-_LATER = {"coolant": "The flow stage", "moulding": "The thermal stage"}
+_TABLES = (
+    "layout",
+    "port",
+    "carrier",
+    "section",
+    "print",
+    "service",
+    "blank",
+    "hole",
+    "quality",
+    "accept",
+    "keep_out",
+    "coolant",
+)
+_LATER = {"moulding": "The thermal stage"}
 _WALLS = ("wall_face_mm", "wall_between_mm", "wall_outer_mm", "wall_hole_mm")
 
 
@@ -74,6 +88,7 @@ def parse_job(content: bytes, path: Path) -> Job:
         holes=parse_holes(top.tables("hole", MOST_HOLES), file),
         quality=_quality(top.raw("quality") if top.has("quality") else {}, file),
         accepts=parse_accepts(top.tables("accept", MOST_ACCEPTS), file),
+        coolant=parse_coolant(top.raw("coolant"), file, folder) if top.has("coolant") else None,
         keep_outs=parse_keep_outs(top.tables("keep_out", MOST_KEEP_OUTS), file),
     )
 
