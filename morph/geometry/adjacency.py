@@ -41,10 +41,10 @@ def make_adjacency(triangles: Ints) -> Adjacency:
     m = len(triangles)
     half = np.concatenate([triangles[:, [1, 2]], triangles[:, [2, 0]], triangles[:, [0, 1]]])
     owner = np.tile(np.arange(m, dtype=np.int64), 3)
-    low, high = half.min(axis=1), half.max(axis=1)
-    order = np.lexsort((high, low))
-    low, high = low[order], high[order]
-    first = np.flatnonzero(np.r_[True, (low[1:] != low[:-1]) | (high[1:] != high[:-1])]) if m else np.zeros(0, np.int64)
+    key = half.min(axis=1) * (int(triangles.max()) + 1 if m else 1) + half.max(axis=1)
+    order = np.argsort(key, kind="stable")
+    key = key[order]
+    first = np.flatnonzero(np.r_[True, key[1:] != key[:-1]]) if m else np.zeros(0, np.int64)
     count = np.diff(np.r_[first, len(order)])
     pair = first[count == 2]
     one, two = order[pair], order[pair + 1]

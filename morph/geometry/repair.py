@@ -2,18 +2,17 @@
 
 from __future__ import annotations
 
-import itertools
-
 import numpy as np
 
-from morph.core.arrays import Floats, Ints
+from morph.core.arrays import Bools, Floats, Ints
 from morph.geometry.mesh import Mesh
 
 
 def weld(mesh: Mesh, within_mm: float) -> Mesh:
     """Returns `mesh` with vertices of equal position made one, and collapsed triangles left out.
 
-    Equal means equal after rounding to `within_mm`. Vertices keep the order of their first use; of equal triangles the first stays.
+    Equal means equal after rounding to `within_mm`. Vertices keep the order of their first use; of equal
+    triangles the first stays.
     """
     key = np.round(mesh.vertices_mm / within_mm).astype(np.int64)
     order = np.lexsort(key.T)
@@ -46,47 +45,97 @@ def loop_length_mm(mesh: Mesh, loop: Ints) -> float:
 
 
 def fill_hole(mesh: Mesh, loop: Ints, normals: Floats) -> Mesh:
-    """Returns `mesh` with the hole bounded by `loop (k,)` closed by rings of triangles that continue the surface.
+    """Returns `mesh` with the hole bounded by `loop (k,)` closed by even triangles that continue the surface.
 
-    The rings shrink towards the loop's middle. Their height over the loop's plane is a quadric through the loop
-    whose slope follows the vertex normals there, plus what the quadric misses on the loop, fading inwards.
+    Over the loop's plane, points as far apart as the rim's lie at the height of the quadric that meets rim and
+    vertex normals best, plus what it misses at the nearest rim vertex, fading inwards. The triangles are Delaunay's;
+    where these do not keep the whole rim (a rim that folds back over itself) a fan to the middle closes it.
 
     Args:
         mesh: the surface.
         normals: (n, 3) of its vertices.
         loop: border vertices in the direction of their triangles.
     """
-    rim, k = mesh.vertices_mm[loop], len(loop)
+    rim = mesh.vertices_mm[loop]
     middle = rim.mean(axis=0)
     axis = normals[loop].mean(axis=0)
     axis /= max(float(np.linalg.norm(axis)), 1e-300)
     x = np.cross(axis, [1.0, 0.0, 0.0] if abs(axis[0]) < 0.7 else [0.0, 1.0, 0.0])
     x /= np.linalg.norm(x)
-    y = np.cross(axis, x)
-    flat = np.column_stack([(rim - middle) @ x, (rim - middle) @ y])
-    height = (rim - middle) @ axis
-    quadric = _quadric_over(flat, height, normals[loop] @ np.column_stack([x, y, axis]))
-    miss = height - _quadric_at(quadric, flat)
-    edge = loop_length_mm(mesh, loop) / k
-    n_rings = int(np.clip(round(float(np.linalg.norm(flat, axis=1).mean()) / max(edge, 1e-9)), 1, 60))
-    rings = [loop]
-    points = [mesh.vertices_mm]
-    n = len(mesh.vertices_mm)
-    for ring in range(1, n_rings):
-        share = 1.0 - ring / n_rings
-        place = flat * share
-        tall = _quadric_at(quadric, place) + share * miss
-        points.append(middle + place[:, :1] * x + place[:, 1:] * y + tall[:, None] * axis)
-        rings.append(np.arange(n, n + k))
-        n += k
-    points.append((middle + _quadric_at(quadric, np.zeros((1, 2)))[0] * axis)[None])
-    new = [np.column_stack([inner, outer, np.roll(outer, -1)]) for outer, inner in itertools.pairwise(rings)]
-    new += [
-        np.column_stack([inner, np.roll(outer, -1), np.roll(inner, -1)]) for outer, inner in itertools.pairwise(rings)
-    ]
-    new.append(np.column_stack([np.full(k, n), rings[-1], np.roll(rings[-1], -1)]))
-    added = np.concatenate(new)[:, ::-1]  # a border runs with its triangles, the filling against it
-    return Mesh(np.concatenate(points), np.concatenate([mesh.triangles, added]))
+    frame = np.stack([x, np.cross(axis, x), axis])
+    local = (rim - middle) @ frame.T
+    flat = local[:, :2]
+    quadric = _quadric_over(flat, local[:, 2], normals[loop] @ frame.T)
+    inside = _points_within(flat)
+    added = _delaunay_within(flat, inside)
+    if added is None:
+        inside = np.zeros((1, 2))
+        k = len(loop)
+        added = np.column_stack([np.roll(np.arange(k), -1), np.arange(k), np.full(k, k)])
+    gap = np.linalg.norm(inside[:, None] - flat[None], axis=2)
+    nearest = gap.argmin(axis=1)
+    miss = (local[:, 2] - _quadric_at(quadric, flat))[nearest]
+    fade = np.maximum(1.0 - gap.min(axis=1) / max(float(np.linalg.norm(flat, axis=1).mean()), 1e-9), 0.0)
+    points = middle + np.column_stack([inside, _quadric_at(quadric, inside) + fade * miss]) @ frame
+    number = np.concatenate([loop, len(mesh.vertices_mm) + np.arange(len(inside))])
+    return Mesh(np.concatenate([mesh.vertices_mm, points]), np.concatenate([mesh.triangles, number[added]]))
+
+
+def _within(polygon: Floats, points: Floats) -> Bools:
+    """Returns which points (k, 2) lie within a polygon (n, 2), by counting crossings."""
+    after = np.roll(polygon, -1, axis=0)
+    above = polygon[:, 1][None] > points[:, 1][:, None]
+    crosses = above != (after[:, 1][None] > points[:, 1][:, None])
+    rise = np.where(after[:, 1] == polygon[:, 1], 1.0, after[:, 1] - polygon[:, 1])
+    x = polygon[:, 0] + (points[:, 1][:, None] - polygon[:, 1]) / rise * (after[:, 0] - polygon[:, 0])
+    return np.asarray(((crosses & (points[:, 0][:, None] < x)).sum(axis=1) % 2) == 1, dtype=np.bool_)
+
+
+def _points_within(polygon: Floats) -> Floats:
+    """Returns a triangular grid of points (k, 2) within a polygon (n, 2), spaced like its corners."""
+    step = float(np.linalg.norm(polygon - np.roll(polygon, -1, axis=0), axis=1).mean())
+    low, high = polygon.min(axis=0), polygon.max(axis=0)
+    step = max(step, float((high - low).max()) / 80.0)
+    rows = np.arange(low[1], high[1], step * np.sqrt(0.75))
+    columns = np.arange(low[0], high[0] + step, step)
+    grid = np.stack(np.meshgrid(rows, columns, indexing="ij"), axis=-1)[:, :, ::-1].copy()
+    grid[1::2, :, 0] += 0.5 * step
+    points = grid.reshape(-1, 2)
+    points = points[_within(polygon, points)]
+    if len(points) == 0:
+        return points
+    after = np.roll(polygon, -1, axis=0)
+    side = after - polygon
+    along = ((points[:, None] - polygon) * side).sum(axis=2) / np.maximum((side * side).sum(axis=1), 1e-300)
+    foot = polygon + np.clip(along, 0.0, 1.0)[:, :, None] * side
+    clear = np.linalg.norm(points[:, None] - foot, axis=2).min(axis=1) > 0.6 * step
+    return np.asarray(points[clear], dtype=np.float64)
+
+
+def _delaunay_within(polygon: Floats, inside: Floats) -> Ints | None:
+    """Returns triangles (m, 3) of rim and inner points that fill the polygon, None when they do not keep its rim.
+
+    The polygon runs with the triangles outside it, so the filling runs against it.
+    """
+    from scipy.spatial import Delaunay, QhullError
+
+    points = np.concatenate([polygon, inside])
+    try:
+        triangles = Delaunay(points).simplices.astype(np.int64)
+    except QhullError:
+        return None
+    triangles = triangles[_within(polygon, points[triangles].mean(axis=1))]
+    corner = points[triangles]
+    one, two = corner[:, 1] - corner[:, 0], corner[:, 2] - corner[:, 0]
+    wound = one[:, 0] * two[:, 1] - one[:, 1] * two[:, 0]
+    triangles[wound < 0.0] = triangles[wound < 0.0][:, ::-1]
+    half = np.concatenate([triangles[:, [0, 1]], triangles[:, [1, 2]], triangles[:, [2, 0]]])
+    n, k = len(points), len(polygon)
+    key = half[:, 0] * n + half[:, 1]
+    single = half[~np.isin(key, half[:, 1] * n + half[:, 0])]
+    rim = np.column_stack([np.roll(np.arange(k), -1), np.arange(k)])
+    same = len(single) == k and bool(np.isin(rim[:, 0] * n + rim[:, 1], single[:, 0] * n + single[:, 1]).all())
+    return triangles if same else None
 
 
 def _quadric_over(flat: Floats, height: Floats, normals: Floats) -> Floats:

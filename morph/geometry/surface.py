@@ -58,6 +58,18 @@ def make_surface(mesh: Mesh, adjacency: Adjacency | None = None) -> Surface:
     return Surface(mesh, found, normals, areas, vertex_normals(mesh))
 
 
+def turned_over(surface: Surface) -> Surface:
+    """Returns `surface` with its triangles the other way round and its normals on the other side."""
+    found = surface.adjacency
+    return Surface(
+        Mesh(surface.mesh.vertices_mm, surface.mesh.triangles[:, ::-1]),
+        Adjacency(found.neighbour[:, ::-1], found.crowded, found.same_way),
+        -surface.normals,
+        surface.areas_mm2,
+        -surface.vertex_normals,
+    )
+
+
 def corner_shares(surface: Surface, places: Places) -> Floats:
     """Returns the shares (k, 3) of the corners at the places, each in [0, 1] and of sum 1."""
     corner = surface.mesh.vertices_mm[surface.mesh.triangles[places.triangle]]
@@ -140,11 +152,11 @@ class SignedSurface:
     def inside_mm(self, xyz_mm: Floats) -> Floats:
         """Returns the signed distance (k,) of points (k, 3), positive on the side the normals point away from."""
         distance, places = self.nearest(xyz_mm)
-        away = self._side_normals(places)
+        away = self.side_normals(places)
         sign = np.where(((xyz_mm - places.xyz_mm) * away).sum(axis=1) > 0.0, -1.0, 1.0)
         return np.asarray(sign * distance, dtype=np.float64)
 
-    def _side_normals(self, places: Places) -> Floats:
+    def side_normals(self, places: Places) -> Floats:
         """Returns the normals (k, 3) that tell the sides at places: of the triangle, the edge or the vertex."""
         shares = corner_shares(self.surface, places)
         normals = self.surface.normals[places.triangle].copy()

@@ -234,6 +234,49 @@ class KeepOutSettings:
     clearance_mm: float = 0.0
 
 
+@dataclass(frozen=True, slots=True)
+class RevolvedSettings:
+    """The [carrier] table of a revolved surface: a smooth curve runs through the `profile_mm` rows (r, z), upwards."""
+
+    profile_mm: tuple[tuple[float, float], ...]
+    metal: Metal
+    depth_mm: float | None = None
+    wall_to_face_mm: float | None = None
+    true_at: TrueAt = TrueAt.DEPTH
+
+
+class Least(StrEnum):
+    """What the laying of a free-form sheet keeps least: the root mean square length error, or the worst one."""
+
+    RMS = "rms"
+    WORST = "worst"
+
+
+@dataclass(frozen=True, slots=True)
+class FreeformSettings:
+    """The [carrier] table of a free-form surface.
+
+    Args:
+        file: the part face, STL, 3MF, OBJ, PLY or STEP.
+        anchor_mm: where the sheet's centre goes; taken to the nearest point of the face.
+        up: the direction of sheet y (any length); only its part along the face counts.
+        metal_at_mm: a point in the metal, nearer to the part face under the sheet than to any other.
+        depth_mm: see CarrierSettings.
+        wall_to_face_mm: see CarrierSettings.
+        true_at: where lengths are kept.
+        least: which length error is made least.
+    """
+
+    file: Path
+    anchor_mm: tuple[float, float, float]
+    up: tuple[float, float, float]
+    metal_at_mm: tuple[float, float, float]
+    depth_mm: float | None = None
+    wall_to_face_mm: float | None = None
+    true_at: TrueAt = TrueAt.DEPTH
+    least: Least = Least.RMS
+
+
 class SectionShape(StrEnum):
     """The cross-section of a channel; auto is round where a round ceiling prints freely, else roofed."""
 

@@ -7,12 +7,13 @@ import numpy as np
 from scipy.spatial import Delaunay
 
 from morph.geometry.mesh import Mesh
+from morph.geometry.repair import weld
 
 
-def jittered(u_range, v_range, n_triangles, seed, jitter=0.3, aspect=1.0):
+def jittered(u_range, v_range, n_triangles, seed, jitter=0.3, aspect=1.0, joined=False):
     """Points of a jittered grid over a rectangle (its border kept straight) and their Delaunay triangles.
 
-    `aspect` is the length of one unit of u over that of v on the surface.
+    `aspect` is the length of one unit of u over that of v on the surface; `joined`: both ends of u get equal points.
     """
     width, height = (u_range[1] - u_range[0]) * aspect, v_range[1] - v_range[0]
     step = np.sqrt(2.0 * width * height / n_triangles)
@@ -21,6 +22,8 @@ def jittered(u_range, v_range, n_triangles, seed, jitter=0.3, aspect=1.0):
     rng = np.random.default_rng(seed)
     shift = rng.uniform(-jitter, jitter, (2, nu + 1, nv + 1))
     shift[0, [0, -1]] = shift[1, :, 0] = shift[1, :, -1] = 0.0
+    if joined:
+        shift[1, -1] = shift[1, 0]
     u = u + shift[0] * (u_range[1] - u_range[0]) / nu
     v = v + shift[1] * (v_range[1] - v_range[0]) / nv
     flat = np.column_stack([u.ravel() * aspect, v.ravel()])
@@ -33,9 +36,9 @@ def jittered(u_range, v_range, n_triangles, seed, jitter=0.3, aspect=1.0):
     return np.column_stack([u.ravel(), v.ravel()]), triangles
 
 
-def parametric(shape, u_range, v_range, n_triangles, seed, aspect=1.0, noise=0.0):
+def parametric(shape, u_range, v_range, n_triangles, seed, aspect=1.0, noise=0.0, joined=False):
     """The mesh of `shape (k, 2) -> (k, 3)`; its normals point along d/du x d/dv."""
-    uv, triangles = jittered(u_range, v_range, n_triangles, seed, aspect=aspect)
+    uv, triangles = jittered(u_range, v_range, n_triangles, seed, aspect=aspect, joined=joined)
     points = shape(uv)
     if noise:
         points = points + np.random.default_rng(seed + 1000).normal(0.0, noise, points.shape)
@@ -57,11 +60,17 @@ def bumps(x, y):
     )
 
 
-def cylinder(radius, n, seed, half_angle=2.6, half_height=60.0):
+def cylinder(radius, n, seed, half_angle=2.6, half_height=60.0, noise=0.0, joined=False):
     def shape(uv):
         return np.column_stack([radius * np.cos(uv[:, 0]), radius * np.sin(uv[:, 0]), uv[:, 1]])
 
-    return parametric(shape, (-half_angle, half_angle), (-half_height, half_height), n, seed, aspect=radius)
+    return parametric(shape, (-half_angle, half_angle), (-half_height, half_height), n, seed, radius, noise, joined)
+
+
+def closed_cylinder(radius, height, n, seed):
+    """A whole turn of a cylinder about z, its seam welded, without ends."""
+    mesh = cylinder(radius, n, seed, half_angle=np.pi, half_height=0.5 * height, joined=True)
+    return weld(mesh, 1e-6)
 
 
 def cone(radius, half_angle_deg, n, seed, half_turn=2.6, half_height=60.0):
@@ -76,16 +85,14 @@ def cone(radius, half_angle_deg, n, seed, half_turn=2.6, half_height=60.0):
 
 
 def sphere_cap(radius, n, seed, half=1.1, noise=0.0):
-    """A cap about +z: the sphere over a square of half width sin(half) radius, seen from outside."""
-    reach = np.sin(half) * radius
+    """A cap about +z, seen from outside: every parameter point lies at its own distance from the pole."""
 
     def shape(uv):
-        # rings of the square become rings of the sphere, so that triangles stay even
-        rho = np.maximum(np.abs(uv[:, 0]), np.abs(uv[:, 1]))
-        angle = np.arctan2(uv[:, 1], uv[:, 0])
-        polar = half * rho / reach
-        return radius * np.column_stack([np.sin(polar) * np.cos(angle), np.sin(polar) * np.sin(angle), np.cos(polar)])
+        rho = np.maximum(np.hypot(uv[:, 0], uv[:, 1]), 1e-12)
+        sine = np.sin(rho / radius) / rho
+        return radius * np.column_stack([uv[:, 0] * sine, uv[:, 1] * sine, np.cos(rho / radius)])
 
+    reach = half * radius
     return parametric(shape, (-reach, reach), (-reach, reach), n, seed, noise=noise)
 
 
