@@ -126,19 +126,20 @@ def _require_reached(system: PressureSystem, fed: Floats) -> None:
 def _newton_step(
     system: PressureSystem, fed: Floats, pressure: Floats, flow: Floats, drop: Floats, slope: Floats
 ) -> tuple[Floats, Floats]:
-    """Returns the pressures (n,) after a full round and the step (m,) of the flows."""
+    """Returns the pressures (n,) after a full round and the step (m,) of the flows.
+
+    Solved for the change of the pressures: flows then balance to rounding however high the pressures are.
+    """
     grid, live, free = system.grid, system.live, system.free
     conductance = np.where(live, 1.0 / slope, 0.0)
     bad = system.factor(conductance)
     if bad >= 0:
         return np.full(grid.n_nodes, np.nan), np.full(grid.n_pipes, np.nan)
-    known = pressure.copy()
-    known[free] = 0.0
-    drive = conductance * (known[grid.start] - known[grid.end] - drop)
-    pressure = known
-    pressure[free] = system.solve((fed - grid.leaving(flow + drive))[free])
-    step = conductance * (pressure[grid.start] - pressure[grid.end] - drop)
-    return pressure, np.where(live, step, 0.0)
+    drive = conductance * (pressure[grid.start] - pressure[grid.end] - drop)
+    lift = np.zeros(grid.n_nodes)
+    lift[free] = system.solve((fed - grid.leaving(flow + drive))[free])
+    step = drive + conductance * (lift[grid.start] - lift[grid.end])
+    return pressure + lift, np.where(live, step, 0.0)
 
 
 def _accept(
