@@ -199,6 +199,42 @@ def hydraulic_diameter_mm(bore_mm: Floats, tangent: Floats, rule: SectionRule) -
     return 4.0 * area / perimeter
 
 
+def section_centroid_mm(bore_mm: float, tangent: Floats, rule: SectionRule) -> Floats:
+    """Returns where (3,) the centroid of a section's area lies from its centreline, whose tangent is (3,): towards up.
+
+    From the outline in QUADRATURE points.
+
+    >>> flat, rule = np.array([1.0, 0.0, 0.0]), SectionRule(SectionShape.ROOFED, 45.0)
+    >>> section_centroid_mm(2.0, flat, rule).round(4).tolist()
+    [0.0, 0.0, 0.0702]
+    """
+    sine = float(climb_sine(tangent[None, :], rule)[0])
+    if rule.shape is SectionShape.ROUND or sine < 1e-9:
+        return np.zeros(3)
+    here = _outline(float(roof_share(np.array([bore_mm]), rule)[0]), sine, rule)
+    after = np.roll(here, -1, axis=0)
+    slices = here[:, 0] * after[:, 1] - after[:, 0] * here[:, 1]
+    height = 0.5 * bore_mm * float((slices * (here[:, 1] + after[:, 1])).sum() / (3.0 * slices.sum()))
+    across = rule.up - (rule.up @ tangent) / (tangent @ tangent) * tangent
+    return np.asarray(height * across / np.linalg.norm(across), dtype=np.float64)
+
+
+def _outline(share: float, sine: float, rule: SectionRule) -> Floats:
+    """Returns the outline (QUADRATURE, 2), sideways and up, of a section of radius 1 that is not round."""
+    angle = 2.0 * math.pi * (np.arange(QUADRATURE) + 0.5) / QUADRATURE
+    unit = np.column_stack([np.cos(angle), np.sin(angle)])
+    if rule.shape is SectionShape.ARCHED:  # convex: the point with the outward normal is h normal + h' tangent
+        h = _support(np.ones(QUADRATURE), sine * unit[:, 1], rule, np.ones(1))
+        slope = (np.roll(h, -1) - np.roll(h, 1)) / (2.0 * (angle[1] - angle[0]))
+        return np.asarray(h[:, None] * unit + slope[:, None] * np.column_stack([-unit[:, 1], unit[:, 0]]))
+    q = float(roof_radius_ratio(np.array([share]), rule)[0])
+    apex = q * sine / rule.roof_cosine
+    lean = math.acos(q / apex) if apex > 1.0 else 0.0  # angle from up to the roof line's normal
+    from_up = np.abs(0.5 * math.pi - angle)
+    roof = np.where(from_up < lean, q / np.cos(np.minimum(from_up, lean) - lean), 1.0)
+    return np.asarray(np.maximum(roof, 1.0)[:, None] * unit)
+
+
 def _area_and_perimeter(bore_mm: Floats, tangent: Floats, rule: SectionRule) -> tuple[Floats, Floats]:
     r = 0.5 * np.asarray(bore_mm, dtype=np.float64)
     sine = climb_sine(tangent, rule)

@@ -7,6 +7,7 @@ import numpy as np
 from morph.body.blank import Blank
 from morph.body.face import FaceRole
 from morph.body.plan import ChannelPlan, Exit
+from morph.body.section import SectionRule, section_centroid_mm
 from morph.check.centreline import Centrelines
 from morph.check.channel_wall import nearest_samples
 from morph.check.rows import name_list, place
@@ -20,9 +21,16 @@ EXIT_RIM_H = 0.4
 up to 0.12 resolutions off (own measurement)."""
 
 
-def axis_distance_mm(opening: Opening, exit_: Exit) -> float:
-    """Returns how far the centre of `opening` lies from the axis of `exit_`, in mm (stock moves it along the axis)."""
-    offset = opening.centre_mm - exit_.xyz_mm
+ROUND = SectionRule()
+
+
+def axis_distance_mm(opening: Opening, exit_: Exit, section: SectionRule = ROUND) -> float:
+    """Returns how far the centre of `opening` lies from where that of `exit_` belongs, in mm.
+
+    That is on the axis of the exit, above it by what the roof of its section lifts the centre of area; stock
+    moves it along the axis.
+    """
+    offset = opening.centre_mm - exit_.xyz_mm - section_centroid_mm(exit_.bore_mm, exit_.leave, section)
     along = float(offset @ exit_.leave)
     off_axis = float(np.linalg.norm(offset - along * exit_.leave))
     # Along the axis it may move by the stock only; the overshoot is stock plus one bore.
@@ -35,17 +43,21 @@ def rim_tolerance_mm(h_mm: float) -> float:
 
 
 def match_openings(
-    openings: tuple[Opening, ...], exits: tuple[Exit, ...], within_mm: float = EXIT_RIM_MM
+    openings: tuple[Opening, ...],
+    exits: tuple[Exit, ...],
+    within_mm: float = EXIT_RIM_MM,
+    section: SectionRule = ROUND,
 ) -> tuple[dict[str, int], list[int]]:
     """Returns the opening (index) of each exit by port, and the openings that belong to none.
 
     Args:
         openings: found on the mesh.
         exits: declared.
-        within_mm: an opening belongs to an exit when its centre is this near to the axis.
+        within_mm: an opening belongs to an exit when its centre is this near to where that of the exit belongs.
+        section: how the channels are shaped.
     """
     pairs = sorted(
-        (axis_distance_mm(opening, exit_), exit_.port, index)
+        (axis_distance_mm(opening, exit_, section), exit_.port, index)
         for index, opening in enumerate(openings)
         for exit_ in exits
     )
@@ -63,7 +75,7 @@ def check_openings(
 ) -> list[Verdict]:
     """Returns the `openings` row, and a `breaks-into-part` row per opening on a part face."""
     within = rim_tolerance_mm(h_mm)
-    found, stray = match_openings(insert.openings, plan.exits, within)
+    found, stray = match_openings(insert.openings, plan.exits, within, plan.section)
     missing = [exit_.port for exit_ in plan.exits if exit_.port not in found]
     right = not stray and not missing
     text = f"{counted(len(insert.openings), 'opening')} found on the insert, {len(plan.exits)} declared"
@@ -82,7 +94,7 @@ def check_openings(
             unit="count",
             limit=float(len(plan.exits)),
             limit_is="equal",
-            source=f"the declared exits; centre within {within:.2f} mm of the axis",
+            source=f"the declared exits; centre within {within:.2f} mm of where it belongs",
             xyz_mm=None if first is None else place(first),
             hint="" if right else "A channel comes out where no port is declared, or a port is closed.",
         )

@@ -47,6 +47,18 @@ def test_a_roof_below_another_channel():
     assert found[0].value == pytest.approx(9.0 - 2.0 - 2.0 * REACH, abs=FOUND_MM)
 
 
+@pytest.mark.parametrize("shape", list(SectionShape))
+def test_an_upright_face_finds_the_openings_of_channels_that_lie(shape):
+    """Bore 6 along x: the roof lifts the opening's centre of area off the axis, and it is still the declared one."""
+    plan = dataclasses.replace(straight_pipe(), section=SectionRule(shape, 47.0, free_span_mm=5.85))
+    (row,) = rows(subject_of(plan, box_blank()), "openings")
+    assert row.outcome is Outcome.PASS, row.text
+    # a port declared a quarter of a millimetre above it is another place
+    exits = tuple(dataclasses.replace(e, xyz_mm=e.xyz_mm + (0.0, 0.0, 0.25)) for e in plan.exits)
+    (row,) = rows(subject_of(dataclasses.replace(plan, exits=exits), box_blank()), "openings")
+    assert row.outcome is Outcome.FAIL
+
+
 @pytest.mark.quick
 @pytest.mark.parametrize("shape", list(SectionShape))
 def test_the_room_below_a_part_face_counts_the_roof(shape):
