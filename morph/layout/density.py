@@ -91,7 +91,7 @@ def make_density(settings: LayoutSettings) -> Density:
 
 def _overruled(raw: RawImage, settings: LayoutSettings) -> tuple[Notice, ...]:
     """Returns what the file says of itself and the job says otherwise."""
-    found = []
+    found = [Notice("image-remark", f"{raw.source}: {text}") for text in raw.remarks]
     said = (("rows", raw.rows, settings.rows), ("samples", raw.samples, settings.samples))
     for key, file_says, used in said:
         if raw.states and used is not None and used.value != file_says:

@@ -159,8 +159,8 @@ IMAGES = [
     image("image-coloured", "density.png", png(60, 40, 2, (b"\0" + b"\x10\x80\xf0" * 60) * 40)),
     image("image-png-kind", "density.png", png(60, 40, 3, (b"\0" + b"\x10" * 60) * 40)),
     image("image-transparent", "density.png", png(60, 40, 4, (b"\0" + b"\x10\x80" * 60) * 40)),
-    image("format-not-available", "density.tif", b"II*\0"),
-    image("format-not-available", "density.npz", b"PK\x03\x04"),
+    image("image-damaged", "density.tif", b"II*\0"),
+    image("image-damaged", "density.npz", b"PK\x03\x04"),
     image("image-format-unknown", "density.jpg", b"\xff\xd8\xff"),
 ]
 
