@@ -17,10 +17,10 @@ from morph.core.arrays import Floats, Ints
 from morph.kernels.distance_field import BLOCK, field_at, keep_near
 from morph.kernels.dual_surface import neighbour_cell
 
-ROUNDS = 4
+ROUNDS = 3
 """Times the planes are taken, each closer to the point by CLOSER."""
 
-CLOSER = 0.4
+CLOSER = 0.3
 SAME_SHEET = 0.93
 """Cosine between two normals of one sheet: a plane is only replaced by one of its own sheet."""
 

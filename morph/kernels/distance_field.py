@@ -16,6 +16,7 @@ from numba import njit
 from numpy.typing import NDArray
 
 from morph.core.arrays import Floats, Ints
+from morph.kernels.stretch import is_swept
 from morph.kernels.swept_ball import piece_direction, piece_distance, piece_gradient
 
 BLOCK = 8
@@ -268,8 +269,13 @@ def prune_blocks(
     origin: Floats,
     block_mm: float,
     shape: Ints,
+    end: Ints,
+    planes: Floats,
 ) -> None:
-    """Shortens each block's list `near[start[b]:start[b + 1]]` to what matters; `length[b]` 0 means no surface there."""
+    """Shortens each block's list `near[start[b]:start[b + 1]]` to what matters; `length[b]` 0 means nothing to sample.
+
+    `end` and `planes` (stretch.py) tell where rings make the wall.
+    """
     for b in range(first, last):
         n = start[b + 1] - start[b]
         kept = np.empty(n, np.int64)
@@ -280,6 +286,8 @@ def prune_blocks(
         reach = 0.5 * SQRT3 * block_mm * 1.0001
         own = near[start[b] : start[b + 1]]
         length[b] = keep_near(cx, cy, cz, reach, pieces, owner, blend_mm, own, n, kept, distance)
+        if length[b] > 0 and is_swept(cx, cy, cz, reach, kept, length[b], end, planes):
+            length[b] = 0
         if length[b] > 0:
             reach += LIST_REACH_BLOCKS * block_mm
             length[b] = keep_near(cx, cy, cz, reach, pieces, owner, blend_mm, own, n, kept, distance)
@@ -301,12 +309,15 @@ def sample_blocks(
     blend_mm: float,
     origin: Floats,
     h_mm: float,
+    end: Ints,
+    planes: Floats,
     values: NDArray[np.float32],
     codes: NDArray[np.uint8],
 ) -> None:
     """Samples the blocks first..last - 1 where a surface may pass and writes each cell's case.
 
-    Descends from the block to cubes of 4 and 2 cells with ever shorter lists; cubes that hold no surface are skipped.
+    Descends from the block to cubes of 4 and 2 cells with ever shorter lists; cubes that hold no surface, or one that
+    rings make (`end`, `planes`: stretch.py), are skipped.
 
     `corner (n, 3)` is the lowest cell of each block, `near[start : start + length]` its list; sample (0, 0, 0) lies at
     `origin`. `values (n, 9, 9, 9)` receives the samples in mm, NO_VALUE where skipped; `codes (n, 8, 8, 8)` the cases:
@@ -330,21 +341,25 @@ def sample_blocks(
             y = 4 * ((big >> 1) & 1)
             z = 4 * (big >> 2)
             if small < 0:
-                c = h_mm * np.array([corner[b, 0] + x + 2.0, corner[b, 1] + y + 2.0, corner[b, 2] + z + 2.0]) + origin
-                n_big = keep_near(
-                    c[0], c[1], c[2], 2.0001 * SQRT3 * h_mm, pieces, owner, blend_mm, own, length[b], lists[0], distance
-                )
+                px = origin[0] + (corner[b, 0] + x + 2.0) * h_mm
+                py = origin[1] + (corner[b, 1] + y + 2.0) * h_mm
+                pz = origin[2] + (corner[b, 2] + z + 2.0) * h_mm
+                reach = 2.0001 * SQRT3 * h_mm
+                n_big = keep_near(px, py, pz, reach, pieces, owner, blend_mm, own, length[b], lists[0], distance)
+                if is_swept(px, py, pz, reach, lists[0], n_big, end, planes):
+                    n_big = 0
                 continue
             if n_big == 0:
                 continue
             x += 2 * (small & 1)
             y += 2 * ((small >> 1) & 1)
             z += 2 * (small >> 2)
-            c = h_mm * np.array([corner[b, 0] + x + 1.0, corner[b, 1] + y + 1.0, corner[b, 2] + z + 1.0]) + origin
-            n = keep_near(
-                c[0], c[1], c[2], 1.0001 * SQRT3 * h_mm, pieces, owner, blend_mm, lists[0], n_big, lists[1], distance
-            )
-            if n == 0:
+            px = origin[0] + (corner[b, 0] + x + 1.0) * h_mm
+            py = origin[1] + (corner[b, 1] + y + 1.0) * h_mm
+            pz = origin[2] + (corner[b, 2] + z + 1.0) * h_mm
+            reach = 1.0001 * SQRT3 * h_mm
+            n = keep_near(px, py, pz, reach, pieces, owner, blend_mm, lists[0], n_big, lists[1], distance)
+            if n == 0 or is_swept(px, py, pz, reach, lists[1], n, end, planes):
                 continue
             for s in range(27):
                 i = x + s // 9

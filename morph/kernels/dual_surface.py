@@ -153,7 +153,7 @@ def place_vertices(
     pieces: Floats, owner: Ints, nodes: Floats, blend_mm: float, origin: Floats, h_mm: float,
     values: NDArray[np.float32], cases: NDArray[np.uint16], loop_of: Ints, n_loops: Ints, offset: Ints,
     bias: float, steps: int,
-    first_vertex: NDArray[np.int32], vertices: Floats, normals: NDArray[np.float32],
+    first_vertex: NDArray[np.int32], vertices: Floats, normals: NDArray[np.float32], piece: NDArray[np.int32],
 ) -> None:  # fmt: skip
     """Places the vertices of the blocks first..last - 1.
 
@@ -162,7 +162,8 @@ def place_vertices(
 
     The blocks and the field are given as to `sample_blocks`, which filled `values`; `cases` comes from `count_cells`;
     `offset (n,)` is the first vertex of each block. `first_vertex (n, 8, 8, 8)` receives the number of each cell's
-    first vertex, `vertices (nv, 3)` the places in mm, `normals (nv, 3)` the field's direction there (with `steps` > 0).
+    first vertex, `vertices (nv, 3)` the places in mm, `normals (nv, 3)` the field's direction there and
+    `piece (nv,)` the nearest piece (both with `steps` > 0).
     """
     longest = 1
     for b in range(first, last):
@@ -196,7 +197,7 @@ def place_vertices(
                 for a in range(3):
                     point[a] = low[a] + point[a] * h_mm
                 for _ in range(steps):
-                    settle(
+                    piece[at] = settle(
                         point, low, margin, h_mm, bias,
                         pieces, owner, nodes, blend_mm, kept, n, distance, run_piece, gradient,
                     )  # fmt: skip
@@ -212,8 +213,11 @@ def settle(
     point: Floats, low: Floats, margin: float, h_mm: float, bias: float,
     pieces: Floats, owner: Ints, nodes: Floats, blend_mm: float, near: Ints, n_near: int,
     run_distance: Floats, run_piece: Ints, gradient: Floats,
-) -> None:  # fmt: skip
-    """Moves a vertex one Newton step along the gradient to its level, held `margin` inside the cell from `low`."""
+) -> int:  # fmt: skip
+    """Moves a vertex one Newton step along the gradient to its level, held `margin` inside the cell from `low`.
+
+    Returns the nearest piece.
+    """
     f, blended = field_at(
         point[0], point[1], point[2],
         pieces, owner, nodes, blend_mm, near, n_near, run_distance, run_piece, gradient,
@@ -226,6 +230,7 @@ def settle(
     for a in range(3):
         moved = point[a] + (level - f) * gradient[a] / size
         point[a] = min(max(moved, low[a] + margin), low[a] + h_mm - margin)
+    return best
 
 
 @njit(cache=True, nogil=True)
@@ -285,7 +290,7 @@ def join_quads(
     """Writes two triangles per crossed edge of the blocks first..last - 1, split along the shorter diagonal.
 
     `offset (n,)` is the first quad of each block; quad q makes the triangles 2 q and 2 q + 1 of `triangles (2 nq, 3)`,
-    counter-clockwise from outside; -1 where a cell is missing (never on a closed field).
+    counter-clockwise from outside; -1 where a cell was skipped (never without stretches).
     """
     ring = np.empty(4, np.int64)
     for b in range(first, last):
@@ -315,9 +320,8 @@ def join_quads(
                         edge = 4 + i + 2 * k
                     else:
                         edge = 8 + i + 2 * j
-                    ring[corner if inside else 3 - corner] = (
-                        first_vertex[c, p, q, r] + loop_of[cases[c, p, q, r], edge] if c >= 0 else -1
-                    )
+                    loop = loop_of[cases[c, p, q, r], edge] if c >= 0 else -1
+                    ring[corner if inside else 3 - corner] = first_vertex[c, p, q, r] + loop if loop >= 0 else -1
                 one = 0.0
                 two = 0.0
                 for a in range(3):

@@ -8,6 +8,8 @@ return to the middle of their cells.
 
 from __future__ import annotations
 
+from dataclasses import dataclass
+
 import numpy as np
 
 from morph.body.blank import Blank
@@ -22,10 +24,12 @@ from morph.solid.blank import blank_body
 from morph.solid.body import arrays_of, body_of, require_valid
 from morph.solid.crease import sharpen
 from morph.solid.extract import extract_surface
-from morph.solid.field import SampledField, sample_field
+from morph.solid.field import SampledField, list_pieces, sample_field
 from morph.solid.result import ChannelSolid
 from morph.solid.simplify import simplify
-from morph.solid.sweep import make_sweep
+from morph.solid.stitch import stitch
+from morph.solid.stretch import find_stretches
+from morph.solid.sweep import Sweep, make_sweep
 from morph.solid.tidy import is_closed, make_file_mesh, require_closed, round_to_file, tidy_mesh
 
 WHAT = "the channel solid"
@@ -50,25 +54,63 @@ def make_channel_solid(plan: ChannelPlan, blank: Blank, h_mm: float, progress: P
     Raises:
         GeometryError: ``solid-not-closed``, ``solid-self-crosses`` or ``solid-empty``.
     """
-    field = sample_field(make_sweep(plan), h_mm, progress)
+    sweep = make_sweep(plan)
+    made = _stitched_wall(plan, sweep, h_mm, progress) or _field_wall(sweep, h_mm, progress)
+    return ChannelSolid(
+        swept=made.mesh,
+        trimmed=_trimmed(made.mesh, blank, progress),
+        h_mm=h_mm,
+        crossings=made.found.pairs,
+        triangles_before=made.triangles_before,
+    )
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class _Wall:
+    """The simplified wall, its crossings, and how many triangles it had before."""
+
+    mesh: Mesh
+    found: Crossings
+    triangles_before: int
+
+
+def _stitched_wall(plan: ChannelPlan, sweep: Sweep, h_mm: float, progress: Progress) -> _Wall | None:
+    """Returns the wall made of rings where a channel runs alone, and from the field elsewhere.
+
+    None where there are no such stretches, where a rim of the field's part fits no ring, or where it is not sound.
+    """
+    lists = list_pieces(sweep, h_mm, progress)
+    stretches = find_stretches(plan, sweep, lists, h_mm, progress)
+    if not len(stretches.sides):
+        return None
+    field = sample_field(sweep, h_mm, progress, lists, stretches.end, stretches.field_planes(h_mm))
+    surface = extract_surface(field, progress)
+    closed = stitch(*sharpen(field, surface, progress), surface.end, stretches)
+    if closed is None:
+        return None
+    mesh, found = _sound_mesh(*closed, progress)
+    return None if mesh is None else _Wall(mesh, found, len(closed[1]))
+
+
+def _field_wall(sweep: Sweep, h_mm: float, progress: Progress) -> _Wall:
+    """Returns the wall as the field has it everywhere, its creases given up where nothing else helps."""
+    field = sample_field(sweep, h_mm, progress)
     surface = extract_surface(field, progress)
     vertices, triangles = sharpen(field, surface, progress)
-    swept, found = _sound_mesh(vertices, triangles, progress)
-    if swept is None:
+    mesh, found = _sound_mesh(vertices, triangles, _none(vertices), progress)
+    if mesh is None:
         vertices, triangles = round_to_file(surface.vertices), surface.triangles
         vertices = _untangled(field, vertices, triangles, progress)
-        swept, found = _sound_mesh(vertices, triangles, progress)
-    if swept is None:
-        swept, found = _simplified(vertices, triangles, 0.0, progress)
-        require_closed(swept, WHAT)
-        require_uncrossed(swept, found)
-    return ChannelSolid(
-        swept=swept,
-        trimmed=_trimmed(swept, blank, progress),
-        h_mm=h_mm,
-        crossings=found.pairs,
-        triangles_before=len(triangles),
-    )
+        mesh, found = _sound_mesh(vertices, triangles, _none(vertices), progress)
+    if mesh is None:
+        mesh, found = _simplified(vertices, triangles, _none(vertices), 0.0, progress)
+        require_closed(mesh, WHAT)
+        require_uncrossed(mesh, found)
+    return _Wall(mesh, found, len(triangles))
+
+
+def _none(vertices: Floats) -> Bools:
+    return np.zeros(len(vertices), np.bool_)
 
 
 def require_uncrossed(mesh: Mesh, found: Crossings) -> None:
@@ -85,11 +127,14 @@ def require_uncrossed(mesh: Mesh, found: Crossings) -> None:
     )
 
 
-def _sound_mesh(vertices: Floats, triangles: Ints, progress: Progress) -> tuple[Mesh | None, Crossings]:
-    """Returns the surface simplified with the largest tolerance that leaves it sound, None if none does."""
+def _sound_mesh(vertices: Floats, triangles: Ints, keep: Bools, progress: Progress) -> tuple[Mesh | None, Crossings]:
+    """Returns the surface simplified with the largest tolerance that leaves it sound, None if none does.
+
+    Vertices marked in `keep (n,)` stay.
+    """
     euler = len(vertices) - len(triangles) // 2
     for tolerance in TOLERANCES_MM:
-        swept, found = _simplified(vertices, triangles, tolerance, progress)
+        swept, found = _simplified(vertices, triangles, keep, tolerance, progress)
         if _is_sound(swept, found, euler):
             return swept, found
     return None, found
@@ -100,12 +145,14 @@ def _is_sound(mesh: Mesh, found: Crossings, euler: int) -> bool:
     return found.pairs == 0 and is_closed(mesh) and len(mesh.vertices_mm) - len(mesh.triangles) // 2 == euler
 
 
-def _simplified(vertices: Floats, triangles: Ints, tolerance_mm: float, progress: Progress) -> tuple[Mesh, Crossings]:
+def _simplified(
+    vertices: Floats, triangles: Ints, keep: Bools, tolerance_mm: float, progress: Progress
+) -> tuple[Mesh, Crossings]:
     """Returns the surface moved by at most `tolerance_mm` with fewer triangles, and its crossings.
 
     Where triangles cross afterwards the surface is left as it was there, and the rest simplified anew.
     """
-    keep = np.zeros(len(vertices), np.bool_)
+    keep = keep.copy()
     left = triangles
     for _ in range(MOST_ROUNDS):
         left = simplify(vertices, triangles, keep, tolerance_mm, progress)

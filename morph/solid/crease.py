@@ -57,6 +57,8 @@ class _Split:
 def sharpen(field: SampledField, surface: Surface, progress: Progress = SILENT) -> tuple[Floats, Ints]:
     """Returns vertices (n, 3), rounded to float32, and triangles (m, 3) of the surface with its creases.
 
+    The vertices of `surface` come first, in their order, new ones after them.
+
     Args:
         field: what `surface` was extracted from.
         surface: with normals.

@@ -8,7 +8,7 @@ from functools import cache
 import numpy as np
 from numpy.typing import NDArray
 
-from morph.core.arrays import Floats, Ints
+from morph.core.arrays import Bools, Floats, Ints
 from morph.core.progress import Progress
 from morph.geometry.slabs import run_slabs
 from morph.solid.field import BLOCKS_PER_SLAB, SampledField
@@ -28,6 +28,7 @@ class Surface:
         triangles: (2 nq, 3); rows 2 q and 2 q + 1 make quad q.
         cases: (n, 8, 8, 8) uint16 case of each cell. first_vertex: (n, 8, 8, 8) int32 first vertex of each cell.
         vertex_offset: (n,) first vertex of each block. n_loops: (512,) loops of each case.
+        end: (nv,) the end of a stretch each vertex is near to, negative for none (kernels/stretch.py).
     """
 
     vertices: Floats
@@ -37,6 +38,7 @@ class Surface:
     first_vertex: NDArray[np.int32]
     vertex_offset: Ints
     n_loops: Ints
+    end: Ints
 
 
 @cache
@@ -71,6 +73,7 @@ def extract_surface(field: SampledField, progress: Progress, steps: int = NEWTON
     first_vertex = np.empty(field.codes.shape, np.int32)
     vertices = np.empty((int(n_vertices.sum()), 3))
     normals = np.zeros((len(vertices), 3), np.float32)
+    piece = np.zeros(len(vertices), np.int32)
     vertex_offset = np.cumsum(n_vertices) - n_vertices
     arguments = field.kernel_arguments()
     tables = (field.values, cases, loop_of, n_loops, vertex_offset, CHORD_BIAS, steps)
@@ -78,13 +81,36 @@ def extract_surface(field: SampledField, progress: Progress, steps: int = NEWTON
         "solid: vertices",
         n,
         BLOCKS_PER_SLAB,
-        lambda a, b: place_vertices(a, b, *arguments, *tables, first_vertex, vertices, normals),
+        lambda a, b: place_vertices(a, b, *arguments, *tables, first_vertex, vertices, normals, piece),
         progress,
     )
-    triangles = np.empty((2 * int(n_quads.sum()), 3), np.int32)
+    made = np.empty((2 * int(n_quads.sum()), 3), np.int32)
     quad_offset = np.cumsum(n_quads) - n_quads
-    joined = (field.codes, cases, field.neighbours, loop_of, first_vertex, vertices, quad_offset, triangles)
+    joined = (field.codes, cases, field.neighbours, loop_of, first_vertex, vertices, quad_offset, made)
     run_slabs("solid: triangles", n, 2 * BLOCKS_PER_SLAB, lambda a, b: join_quads(a, b, *joined), progress)
-    if triangles.size and triangles.min() < 0:
-        raise RuntimeError("the sampled field is not closed: a cell beside a crossed edge was skipped")
-    return Surface(vertices, normals, triangles.astype(np.int64), cases, first_vertex, vertex_offset, n_loops)
+    end = field.end[piece]
+    triangles = _without_swept(field, vertices, end, made)
+    return Surface(vertices, normals, triangles, cases, first_vertex, vertex_offset, n_loops, end)
+
+
+def _without_swept(field: SampledField, vertices: Floats, end: Ints, triangles: NDArray[np.int32]) -> Ints:
+    """Returns the triangles of the quads that are not left to rings."""
+    if len(field.planes) == 0:
+        if triangles.size and triangles.min() < 0:
+            raise RuntimeError("the sampled field is not closed: a cell beside a crossed edge was skipped")
+        return triangles.astype(np.int64)
+    gone = np.append(beyond_planes(vertices, end, field.planes), True)  # the last one answers for skipped vertices
+    by_triangle: Bools = np.any(gone[triangles], axis=1)
+    lost = np.repeat(by_triangle[0::2] | by_triangle[1::2], 2)
+    return triangles[~lost].astype(np.int64)
+
+
+def beyond_planes(vertices: Floats, end: Ints, planes: Floats) -> Bools:
+    """Returns which vertices (n, 3) lie in a stretch, beyond the plane of the end (n,) they are near to."""
+    from morph.kernels.stretch import INSIDE
+
+    near = np.flatnonzero(end >= 0)
+    plane = planes[end[near]]
+    beyond: Bools = np.asarray(end == INSIDE)
+    beyond[near] = ((vertices[near] - plane[:, :3]) * plane[:, 3:]).sum(axis=1) > 0.0
+    return beyond

@@ -112,6 +112,7 @@ class SampledField:
         neighbours: (n, 27) block numbers around each block, -1 for none. keys: (n,) of the blocks, rising.
         shape: (3,) blocks of the whole box.
         values: (n, 9, 9, 9) float32 samples in mm. codes: (n, 8, 8, 8) uint8 inside bits of the corners.
+        end, planes: where rings make the wall instead (kernels/stretch.py); no planes: nowhere.
     """
 
     sweep: Sweep
@@ -126,6 +127,8 @@ class SampledField:
     shape: Ints
     values: NDArray[np.float32]
     codes: NDArray[np.uint8]
+    end: Ints
+    planes: Floats
 
     def kernel_arguments(self) -> tuple[Any, ...]:
         """Returns what every kernel on blocks takes between its range and its own arrays."""
@@ -144,23 +147,64 @@ class SampledField:
         return np.where(self.keys[at] == key, at, otherwise)
 
 
-def sample_field(sweep: Sweep, h_mm: float, progress: Progress) -> SampledField:
-    """Returns the field of `sweep` sampled at `h_mm` on all blocks its surface can pass."""
+@dataclass(frozen=True, slots=True, eq=False)
+class BlockLists:
+    """The pieces near each block of 8 x 8 x 8 cells; work arrays.
+
+    Args:
+        origin_mm: (3,) place of sample (0, 0, 0). block_mm: edge of a block. shape: (3,) blocks of the whole box.
+        keys: (m,) blocks with a piece near them, rising.
+        start: (m + 1,) where each block's pieces stand in `near (p,)`, rising.
+        pad_mm: a piece nearer to a block than this is in its list.
+    """
+
+    origin_mm: Floats
+    block_mm: float
+    shape: Ints
+    keys: Ints
+    start: Ints
+    near: Ints
+    pad_mm: float
+
+
+def list_pieces(sweep: Sweep, h_mm: float, progress: Progress) -> BlockLists:
+    """Returns the blocks that the surface of `sweep` may pass at resolution `h_mm`, with the pieces near each."""
+    from morph.kernels.distance_field import BLOCK
+
+    block_mm, pad = BLOCK * h_mm, 1.25 * sweep.blend_mm + 2.0 * h_mm
+    origin, shape = _frame(sweep, h_mm, block_mm)
+    key, near = _list_pairs(sweep, pad, origin, block_mm, shape, progress)
+    first = np.flatnonzero(np.concatenate([[True], key[1:] != key[:-1]]))
+    return BlockLists(origin, block_mm, shape, key[first], np.concatenate([first, [len(key)]]), near, pad)
+
+
+def sample_field(
+    sweep: Sweep, h_mm: float, progress: Progress, lists: BlockLists | None = None,
+    end: Ints | None = None, planes: Floats | None = None,
+) -> SampledField:  # fmt: skip
+    """Returns the field of `sweep` sampled at `h_mm` on all blocks its surface can pass.
+
+    Args:
+        sweep: the pieces.
+        h_mm: cell size.
+        progress: told after each slab of blocks; may raise Cancelled.
+        lists: of `list_pieces`, made anew without; its lists are shortened in place.
+        end: (n,) with `planes (k, 6)` where rings make the wall (kernels/stretch.py); None: nowhere.
+        planes: see `end`.
+    """
     from morph.kernels.distance_field import BLOCK, prune_blocks, sample_blocks
 
-    block_mm = BLOCK * h_mm
-    origin, shape = _frame(sweep, h_mm, block_mm)
-    key, near = _list_pairs(sweep, h_mm, origin, block_mm, shape, progress)
-    first = np.flatnonzero(np.concatenate([[True], key[1:] != key[:-1]]))
-    keys, start = key[first], np.concatenate([first, [len(key)]])
+    lists = lists or list_pieces(sweep, h_mm, progress)
+    if end is None or planes is None:
+        end, planes = np.full(len(sweep.pieces), -1), np.zeros((0, 6))
+    keys, start, shape = lists.keys, lists.start, lists.shape
     length = np.zeros(len(keys), np.int64)
+    rows = (sweep.pieces, sweep.owner, sweep.blend_mm, lists.origin_mm, lists.block_mm, shape, end, planes)
     run_slabs(
         "solid: blocks",
         len(keys),
         8 * BLOCKS_PER_SLAB,
-        lambda a, b: prune_blocks(
-            a, b, keys, start, near, length, sweep.pieces, sweep.owner, sweep.blend_mm, origin, block_mm, shape
-        ),
+        lambda a, b: prune_blocks(a, b, keys, start, lists.near, length, *rows),
         progress,
     )
     active = np.flatnonzero(length)
@@ -168,19 +212,21 @@ def sample_field(sweep: Sweep, h_mm: float, progress: Progress) -> SampledField:
     cell = np.column_stack([keys // (shape[1] * shape[2]), (keys // shape[2]) % shape[1], keys % shape[2]])
     field = SampledField(
         sweep=sweep,
-        origin_mm=origin,
+        origin_mm=lists.origin_mm,
         h_mm=h_mm,
         corner=BLOCK * cell,
         start=start,
         length=length,
-        near=near,
+        near=lists.near,
         neighbours=_neighbours(keys, shape),
         keys=keys,
         shape=shape,
         values=np.empty((len(keys), BLOCK + 1, BLOCK + 1, BLOCK + 1), np.float32),
         codes=np.empty((len(keys), BLOCK, BLOCK, BLOCK), np.uint8),
+        end=end,
+        planes=planes,
     )
-    arguments = field.kernel_arguments()
+    arguments = (*field.kernel_arguments(), end, planes)
     run_slabs(
         "solid: field",
         len(keys),
@@ -209,12 +255,11 @@ def _frame(sweep: Sweep, h_mm: float, block_mm: float) -> tuple[Floats, Ints]:
 
 
 def _list_pairs(
-    sweep: Sweep, h_mm: float, origin: Floats, block_mm: float, shape: Ints, progress: Progress
+    sweep: Sweep, pad: float, origin: Floats, block_mm: float, shape: Ints, progress: Progress
 ) -> tuple[Ints, Ints]:
     """Returns block keys (p,) and piece numbers (p,) of all near pairs, sorted by key, then piece."""
     from morph.kernels.distance_field import list_blocks
 
-    pad = 1.25 * sweep.blend_mm + 2.0 * h_mm
     n = len(sweep.pieces)
     count = np.zeros(n, np.int64)
     none = np.empty(0, np.int64)

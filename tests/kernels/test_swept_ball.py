@@ -35,7 +35,7 @@ def random_piece(rng, rule):
         b = a + rule.up * rng.uniform(-5.0, 5.0)
     ra = rng.uniform(0.8, 2.5)
     rb = max(ra + rng.uniform(-0.5, 0.5) * np.linalg.norm(b - a), 0.4)
-    return a, b, ra, rb, _pieces(np.array([a, b]), np.array([ra, rb]), np.ones(2), rule)
+    return a, b, ra, rb, _pieces(np.array([a, b]), np.array([ra, rb]), np.ones(2), np.zeros(2), rule)
 
 
 @pytest.mark.parametrize(("shape", "angle", "up"), CASES)
@@ -74,7 +74,7 @@ def test_distance_and_gradient_are_those_of_the_balls(shape, angle, up):
 def test_a_full_roof_is_the_hull_of_ball_and_apex():
     """Support of the ball in every direction: r, or the apex at r / cos b, whichever reaches further."""
     rule = SectionRule(SectionShape.ROOFED, 47.0)
-    pieces = _pieces(np.zeros((1, 3)), np.array([2.0]), np.ones(1), rule)
+    pieces = _pieces(np.zeros((1, 3)), np.array([2.0]), np.ones(1), np.zeros(1), rule)
     apex = 2.0 / rule.roof_cosine
     assert piece_distance(0.0, 0.0, apex, pieces, 0) == pytest.approx(0.0, abs=1e-12)
     assert piece_distance(0.0, 0.0, -2.0, pieces, 0) == pytest.approx(0.0, abs=1e-12)
@@ -87,15 +87,15 @@ def test_a_full_roof_is_the_hull_of_ball_and_apex():
 def test_no_roof_is_round_to_the_last_bit():
     a = np.array([[0.0, 0.0, 0.0], [3.0, 1.0, 2.0]])
     radius, none = np.array([1.0, 1.4]), np.zeros(2)
-    bare = _pieces(a, radius, none, SectionRule())
-    auto = _pieces(a, radius, none, SectionRule(SectionShape.AUTO, free_span_mm=6.0))
+    bare = _pieces(a, radius, none, none, SectionRule())
+    auto = _pieces(a, radius, none, none, SectionRule(SectionShape.AUTO, free_span_mm=6.0))
     assert (bare == auto).all() and (bare[:, 13] == 1.0).all()
 
 
 def test_a_fading_roof_is_swept_twice():
     rule = SectionRule(SectionShape.AUTO, 45.0, free_span_mm=4.0)
     xyz = np.column_stack([np.linspace(0.0, 3.0, 4), np.zeros(4), np.zeros(4)])
-    pieces = _pieces(xyz, np.full(4, 2.0), np.array([0.0, 0.0, 0.5, 1.0]), rule)
+    pieces = _pieces(xyz, np.full(4, 2.0), np.array([0.0, 0.0, 0.5, 1.0]), np.zeros(4), rule)
     assert (pieces[:, 13] == 1.0).sum() == 3 and (pieces[:, 13] < 1.0).sum() == 2
     roof = pieces[pieces[:, 13] < 1.0]
     c = rule.roof_cosine
@@ -106,7 +106,7 @@ def test_a_fading_roof_is_swept_twice():
 @pytest.mark.parametrize(("shape", "angle", "up"), CASES)
 def test_blocks_of_a_roofed_piece_are_none_left_out(shape, angle, up):
     rule = SectionRule(shape, angle, np.array(up))
-    rows = _swept(np.array([[0.3, 0.2, 0.1], [2.0, 1.0, 0.5]]), np.array([1.0, 1.3]), np.ones(2))
+    rows = _swept(np.array([[0.3, 0.2, 0.1], [2.0, 1.0, 0.5]]), np.array([1.0, 1.3]), np.ones(2), np.zeros(2))
     arch = rule.arch_ratio if shape is SectionShape.ARCHED else 0.0
     pieces = _with_roof(rows, rule, rule.roof_cosine, arch)
     origin, block, grid = np.full(3, -6.0), 1.7, np.array([9, 9, 9])

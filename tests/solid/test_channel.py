@@ -174,22 +174,21 @@ def test_random_nets_keep_their_topology(seed):
 def test_tangled_nets_are_taken_back_until_sound(seed, monkeypatch):
     """Nets whose first simplification crosses itself or pinches a neck (found by trying a hundred).
 
-    Creases are left as extracted and the first result is refused, so that the last resort is sure to be taken.
+    Creases are left as extracted and every result before the last resort is refused, so that it is sure to be taken.
     """
     from morph.solid import channel
     from morph.solid.tidy import round_to_file
 
-    refused, sound = [], channel._sound_mesh
+    calls, original, sound = [], channel._untangled, channel._sound_mesh
 
-    def refuse_once(*given):
+    def refuse_before(*given):
         mesh, found = sound(*given)
-        return (mesh if refused else refused.append(1)), found
+        return (mesh if calls else None), found
 
-    monkeypatch.setattr(channel, "_sound_mesh", refuse_once)
+    monkeypatch.setattr(channel, "_sound_mesh", refuse_before)
     monkeypatch.setattr(
         channel, "sharpen", lambda field, surface, _: (round_to_file(surface.vertices), surface.triangles)
     )
-    calls, original = [], channel._untangled
     monkeypatch.setattr(channel, "_untangled", lambda *given: calls.append(1) or original(*given))
     plan, blank, h_mm = tangled_net(seed)
     solid = make_channel_solid(plan, blank, h_mm)
