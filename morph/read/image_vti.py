@@ -57,7 +57,7 @@ class _File:
     appended: bytes | None = None
     appended_base64: bool = False
 
-    def refuse(self, expected: str, found: str) -> NoReturn:
+    def other_kind(self, expected: str, found: str) -> NoReturn:
         """Raises the error for a file that is whole but of a kind that is not read."""
         raise InputError(
             "image-vti-kind",
@@ -116,7 +116,7 @@ def _read_elements(content: bytes, name: str) -> _File:
 
     read_xml(head, name, start, lambda _: stack.pop(), text)
     if file.root.get("type") != "ImageData":
-        file.refuse('type="ImageData"', f'type="{file.root.get("type", "")}"')
+        file.other_kind('type="ImageData"', f'type="{file.root.get("type", "")}"')
     return file
 
 
@@ -151,18 +151,18 @@ def _extent(file: _File) -> list[int]:
         InputError: the extent makes no sense, there are several pieces, or the grid is turned.
     """
     if len(file.pieces) != 1:
-        file.refuse("one piece", f"{len(file.pieces)} pieces")
+        file.other_kind("one piece", f"{len(file.pieces)} pieces")
     whole = _numbers(file, "WholeExtent", "")
     if len(whole) != 6 or max(map(abs, whole)) > LARGEST_EXTENT or any(item != int(item) for item in whole):
         raise damaged("six whole numbers in WholeExtent", f'"{file.image.get("WholeExtent", "")[:60]}"', file.name)
     if file.pieces[0].get("Extent", file.image["WholeExtent"]).split() != file.image["WholeExtent"].split():
-        file.refuse("a piece that covers the whole extent", f'Extent="{file.pieces[0]["Extent"]}"')
+        file.other_kind("a piece that covers the whole extent", f'Extent="{file.pieces[0]["Extent"]}"')
     spacing, direction = _numbers(file, "Spacing", "1 1 1"), _numbers(file, "Direction", "1 0 0 0 1 0 0 0 1")
     spacing += [1.0] * (3 - len(spacing))
     if len(spacing) != 3 or min(spacing) <= 0.0:
-        file.refuse("three positive numbers as Spacing", f'"{file.image.get("Spacing", "")}"')
+        file.other_kind("three positive numbers as Spacing", f'"{file.image.get("Spacing", "")}"')
     if len(direction) != 9 or not np.allclose(direction, np.eye(3).ravel(), atol=1e-9):
-        file.refuse("axes that are not turned", f'Direction="{file.image.get("Direction", "")}"')
+        file.other_kind("axes that are not turned", f'Direction="{file.image.get("Direction", "")}"')
     points = [int(whole[2 * axis + 1]) - int(whole[2 * axis]) + 1 for axis in range(3)]
     if min(points) < 1:
         raise damaged("an extent that holds points", f'"{file.image["WholeExtent"][:60]}"', file.name)
@@ -192,7 +192,7 @@ def _values(file: _File, array: _Array, n: int) -> NDArray[Any]:
     kind = TYPES.get(array.attributes.get("type", ""))
     order = {"LittleEndian": "<", "BigEndian": ">"}.get(file.root.get("byte_order", "LittleEndian"))
     if kind is None or order is None:
-        file.refuse(
+        file.other_kind(
             "numbers of a known type and byte order", f"{array.attributes.get('type')}, {file.root.get('byte_order')}"
         )
     how, text = array.attributes.get("format", "ascii"), "".join(array.text)
@@ -233,13 +233,13 @@ def _block(file: _File, array: _Array, text: str, how: str, n_bytes: int, order:
         source, is_base64 = file.appended[int(offset) :], file.appended_base64
         source = source.lstrip() if is_base64 else source
     else:
-        file.refuse("values as ascii, binary or appended", f'format="{how}"')
+        file.other_kind("values as ascii, binary or appended", f'format="{how}"')
     width = {"UInt32": 4, "UInt64": 8}.get(file.root.get("header_type", "UInt32"))
     if width is None:
-        file.refuse("a header_type UInt32 or UInt64", str(file.root.get("header_type")))
+        file.other_kind("a header_type UInt32 or UInt64", str(file.root.get("header_type")))
     compressor = file.root.get("compressor", "")
     if compressor not in {"", "vtkZLibDataCompressor"}:
-        file.refuse("data as they are or compressed by zlib", compressor)
+        file.other_kind("data as they are or compressed by zlib", compressor)
     take = _Source(file.name, source, is_base64, f"{order}u{width}")
     return take.compressed(n_bytes) if compressor else take.plain(n_bytes)
 
