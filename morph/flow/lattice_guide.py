@@ -31,6 +31,7 @@ class Guide:
 
     Args:
         ends: (m, 2) nodes of each stretch. length: (m,) in cells. branch: (m,) row in `plan.branches`.
+        bore: (m,) mean bore of its branch, in cells.
         held: (k,) nodes at a given pressure. pressure: (k,) their pressure, 1 at ports in, 0 at ports out.
         cell_stretch: (n,) stretch of each cell. cell_share: (n,) how far along it, 0 to 1.
     """
@@ -38,6 +39,7 @@ class Guide:
     ends: Ints
     length: Floats
     branch: Ints
+    bore: Floats
     held: Bools
     pressure: Floats
     cell_stretch: Ints
@@ -62,6 +64,7 @@ def make_guide(plan: ChannelPlan, domain: LatticeDomain) -> Guide:
     ends: list[tuple[int, int]] = []
     lengths: list[float] = []
     branch_of: list[int] = []
+    bores: list[float] = []
     samples: list[tuple[Floats, Floats, Floats]] = []
     n_nodes = len(number)
     first_stretch = []
@@ -74,6 +77,7 @@ def make_guide(plan: ChannelPlan, domain: LatticeDomain) -> Guide:
         ends += list(itertools.pairwise(chain))
         lengths += [max(float(along[-1]) / n / domain.h_mm, 1e-3)] * n
         branch_of += [row] * n
+        bores += [float(branch.bore_mm.mean()) / domain.h_mm] * n
         samples.append((branch.xyz_mm, along, np.array([float(row), float(n)])))
     held, pressure = np.zeros(n_nodes, np.bool_), np.zeros(n_nodes)
     for exit_ in plan.exits:
@@ -81,7 +85,9 @@ def make_guide(plan: ChannelPlan, domain: LatticeDomain) -> Guide:
             held[number[exit_.node]] = True
             pressure[number[exit_.node]] = float(exit_.role is Role.IN)
     stretch, share = _nearest(samples, np.array(first_stretch), domain)
-    return Guide(np.array(ends), np.array(lengths), np.array(branch_of), held, pressure, stretch, share)
+    return Guide(
+        np.array(ends), np.array(lengths), np.array(branch_of), np.array(bores), held, pressure, stretch, share
+    )
 
 
 def _nearest(samples: list[tuple[Floats, Floats, Floats]], first: Ints, domain: LatticeDomain) -> tuple[Ints, Floats]:
@@ -113,11 +119,12 @@ def _nearest(samples: list[tuple[Floats, Floats, Floats]], first: Ints, domain: 
 def conductance(guide: Guide, viscosity: float) -> Floats:
     """Returns flow over difference of density (m,) of each stretch, as of a tube of the same volume, in lattice units.
 
-    Q = A^2 / (8 pi viscosity length) dp (Hagen, Poiseuille), pressure a third of the density.
+    Q = A^2 / (8 pi viscosity length) dp (Hagen, Poiseuille), pressure a third of the density. Where channels meet, one
+    branch may stand on cells of another; no stretch counts as narrower than its bore, since too large a resistance
+    would correct too much.
     """
     area = np.bincount(guide.cell_stretch, minlength=len(guide.length)) / guide.length
-    # a stretch no cell stands on (swallowed by a wide junction) lets everything through
-    area = np.where(area > 0.0, area, area.max())
+    area = np.maximum(area, 0.25 * np.pi * guide.bore**2)
     return np.asarray(area**2 / (24.0 * np.pi * viscosity * guide.length))
 
 
