@@ -55,30 +55,46 @@ def hull_planes(mesh: Mesh) -> Floats:
     return np.column_stack([plane[:, :3], -plane[:, 3], total])
 
 
-def find_flat_region(mesh: Mesh, planes: Floats, direction: Floats, free: Bools) -> FlatRegion | None:
-    """Returns the widest flat region at the end of `mesh` in a direction, or None when the skin there is nowhere flat.
+@dataclass(frozen=True, slots=True, eq=False)
+class FlatSearch:
+    """What every search on one mesh shares: hull planes (k, 5), unit normals (m, 3), areas (m,), and two masks (m,).
 
-    Args:
-        mesh: closed, facing outwards.
-        planes: (k, 5) of `hull_planes`.
-        direction: (3,) unit.
-        free: (m,) triangles that may belong to it.
+    `free`: triangles that may belong to a region. `needle`: of these, those whose normal is rounding.
     """
-    along = planes[planes[:, :3] @ direction >= np.cos(WITHIN_RAD)]
-    along = along[np.argsort(-along[:, 4], kind="stable")][:MOST_PLANES]
+
+    mesh: Mesh
+    planes: Floats
+    normals: Floats
+    area_mm2: Floats
+    free: Bools
+    needle: Bools
+
+
+def make_flat_search(mesh: Mesh, free: Bools) -> FlatSearch:
+    """Returns the search for flat ends of a closed `mesh` among the triangles `free (m,)`."""
     normals, area = triangle_normals(mesh)
     needle = free & (least_heights_mm(mesh, area) < FLAT_MM)
+    return FlatSearch(mesh, hull_planes(mesh), normals, area, free, np.asarray(needle, dtype=np.bool_))
+
+
+def find_flat_region(search: FlatSearch, direction: Floats) -> FlatRegion | None:
+    """Returns the largest flat region at the end of a mesh in a unit `direction (3,)`; None when it is nowhere flat."""
+    mesh, planes = search.mesh, search.planes
+    along = planes[planes[:, :3] @ direction >= np.cos(WITHIN_RAD)]
+    along = along[np.argsort(-along[:, 4], kind="stable")][:MOST_PLANES]
     best: FlatRegion | None = None
     for plane in along:
         normal = plane[:3] / np.linalg.norm(plane[:3]) + 0.0
-        offset = float((mesh.vertices_mm @ normal).max())
-        near = mesh.vertices_mm @ normal >= offset - FLAT_MM
-        turned = free & (normals @ normal >= np.cos(WITHIN_RAD))
-        rows = np.flatnonzero(near[mesh.triangles].all(axis=1) & (turned | needle))
-        total = float(area[rows].sum())
+        height = mesh.vertices_mm @ normal
+        offset = float(height.max())
+        near = np.flatnonzero((height >= offset - FLAT_MM)[mesh.triangles].all(axis=1) & search.free)
+        turned = search.normals[near] @ normal >= np.cos(WITHIN_RAD)
+        rows = near[turned | search.needle[near]]
+        total = float(search.area_mm2[rows].sum())
         if total <= 0.0 or (best is not None and total <= best.area_mm2):
             continue
-        centre = np.average(mesh.vertices_mm[mesh.triangles[rows]].mean(axis=1), axis=0, weights=area[rows])
+        middles = mesh.vertices_mm[mesh.triangles[rows]].mean(axis=1)
+        centre = np.average(middles, axis=0, weights=search.area_mm2[rows])
         origin = centre + (offset - float(centre @ normal)) * normal
         best = FlatRegion(rows, origin, normal, total, region_width_mm(mesh, rows))
     return best

@@ -12,7 +12,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from morph.body.face import Face, FaceRole, PlaneFace
-from morph.body.flat_region import LEAST_WIDTH_MM, FlatRegion, find_flat_region, hull_planes, least_heights_mm
+from morph.body.flat_region import LEAST_WIDTH_MM, FlatRegion, find_flat_region, least_heights_mm, make_flat_search
 from morph.body.part_face import ON_CARRIER_MM, PartFace, require_part_face
 from morph.body.skin import Skin
 from morph.body.skin_face import FlatFace, SkinFace
@@ -120,12 +120,12 @@ def _flat_regions(
     mesh: Mesh, directions: dict[str, Floats], free: Bools
 ) -> tuple[dict[str, FlatRegion], dict[str, str]]:
     """Returns the flat ends by name, and the names that mean one already found."""
-    planes = hull_planes(mesh)
+    search = make_flat_search(mesh, free)
     found: dict[str, FlatRegion] = {}
     synonyms: dict[str, str] = {}
     owner = np.full(len(mesh.triangles), -1, dtype=np.int64)
     for name, direction in directions.items():
-        one = find_flat_region(mesh, planes, direction, free)
+        one = find_flat_region(search, direction)
         if one is None or one.width_mm < LEAST_WIDTH_MM:
             continue
         taken = owner[one.triangle].max()

@@ -4,7 +4,7 @@ import numpy as np
 import pytest
 import trimesh
 
-from morph.body.flat_region import find_flat_region, hull_planes, region_width_mm
+from morph.body.flat_region import find_flat_region, make_flat_search, region_width_mm
 from tests.body import mesh_bodies
 
 UP = np.array([0.0, 0.0, 1.0])
@@ -13,7 +13,7 @@ UP = np.array([0.0, 0.0, 1.0])
 def found(body, direction, free=None):
     mesh = mesh_bodies.mesh_of(body)
     every = np.ones(len(mesh.triangles), dtype=bool) if free is None else free
-    return find_flat_region(mesh, hull_planes(mesh), np.asarray(direction, float), every)
+    return find_flat_region(make_flat_search(mesh, every), np.asarray(direction, float))
 
 
 def test_the_sides_of_a_box():
