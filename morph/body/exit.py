@@ -14,6 +14,7 @@ from morph.body.blank import AnyFace, Blank
 from morph.body.face import ConeFace, CylinderFace, FaceRole, PlaneFace
 from morph.body.flange import FlangedFace
 from morph.body.hole import line_crossings
+from morph.body.lead_spare import least_spare_mm
 from morph.body.room import Limits, measure_room
 from morph.body.skin_face import FlatFace, SkinFace
 from morph.core.arrays import Floats, unit_rows
@@ -97,8 +98,8 @@ def keep_legal(
     outward = face.outward(places_mm)
     directions = outward if leave is None else np.broadcast_to(leave, places_mm.shape).copy()
     opening = np.ones(len(places_mm), dtype=np.bool_)
-    room = measure_room(blank, limits, places_mm, face.name, opening).room_mm
-    keep = (room >= bore_mm - ROOM_SLACK_MM) & ((outward * directions).sum(axis=1) >= SQUAREST_COSINE)
+    spare = least_spare_mm(blank, limits, places_mm, np.full(len(places_mm), bore_mm), face.name, opening)
+    keep = (spare >= -ROOM_SLACK_MM) & ((outward * directions).sum(axis=1) >= SQUAREST_COSINE)
     return Sites(face, places_mm[keep], directions[keep])
 
 

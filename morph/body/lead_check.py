@@ -11,6 +11,7 @@ from morph.body.blank import Blank
 from morph.body.cap import TAPER, lower_to_taper
 from morph.body.face import Face
 from morph.body.finish import PLAIN, Finish
+from morph.body.lead_spare import least_spare_mm
 from morph.body.neighbour import WALL_WAY, Network, distance_to_strand_mm, polyline_arc_mm, way_from_node_mm
 from morph.body.room import STEEPNESS, Limits, Room, measure_room, way_out, with_neighbours
 from morph.body.section import bore_of_reach_mm, reach_mm
@@ -20,10 +21,13 @@ NECK = 0.95
 """A lead may be narrower than its bore by this factor where its room is just short."""
 
 COARSE_SLACK_MM = 0.4
-"""Room forgiven on the coarse sampling, which judges single samples and not the pieces between them."""
+"""Bore forgiven on the coarse sampling, which judges single samples and not the pieces between them."""
 
 SHORT_BORES = 4.0
 """Within this many bores of a port that is itself short of room, its lead may be as short."""
+
+SPARSE = 6
+"""Every how many samples the first look at a path takes."""
 
 COARSE_STEEPNESS = 0.8
 """The way out is judged this much more leniently on the coarse sampling, whose pieces cut corners."""
@@ -67,21 +71,34 @@ class Judged:
     worst: int
 
 
-def coarse_faces(around: Surroundings, points_mm: Floats, face: Face, bore_mm: float) -> Floats:
+def coarse_faces(around: Surroundings, points_mm: Floats, face: Face, bore_mm: float, port_room_mm: float) -> Floats:
     """Returns by how much each path (n,) keeps clear of faces and holes on a coarse sampling; not below 0 is clear.
+
+    Paths that are clear at every SPARSE-th sample are measured at all of them.
 
     Args:
         around: what surrounds the lead.
         points_mm: (n, k, 3) samples of each path.
         face: the face they come out of.
         bore_mm: bore of the lead.
+        port_room_mm: what faces and holes leave at the port.
     """
-    opening = way_out(face, points_mm, COARSE_STEEPNESS * STEEPNESS).ravel()
-    room = measure_room(around.blank, around.limits, points_mm.reshape(-1, 3), face.name, opening).room_mm
-    room = room.reshape(points_mm.shape[:2])
     arc = np.cumsum(np.linalg.norm(np.diff(points_mm, axis=1, prepend=points_mm[:, :1]), axis=2), axis=1)
-    spare = room - (NECK * _due(room, np.full_like(room, bore_mm), arc, bore_mm) - COARSE_SLACK_MM)
-    return np.asarray(spare.min(axis=1), dtype=np.float64)
+    due = NECK * _due(np.array([port_room_mm]), np.full(arc.shape, bore_mm), arc, bore_mm)
+    opening = way_out(face, points_mm, COARSE_STEEPNESS * STEEPNESS)
+
+    def least(paths: Ints, every: int) -> Floats:
+        chosen = slice(SPARSE // 2 if every > 1 else 0, None, every)
+        bores, out = due[paths][:, chosen], opening[paths][:, chosen]
+        flat = points_mm[paths][:, chosen].reshape(-1, 3)
+        spare = least_spare_mm(around.blank, around.limits, flat, bores.ravel(), face.name, out.ravel())
+        return np.asarray(spare.reshape(bores.shape).min(axis=1) + 0.5 * COARSE_SLACK_MM, dtype=np.float64)
+
+    spare = least(np.arange(len(points_mm)), SPARSE)
+    clear = np.flatnonzero(spare >= 0.0)
+    if len(clear):
+        spare[clear] = np.minimum(spare[clear], least(clear, 1))
+    return spare
 
 
 def _due(room_mm: Floats, wanted_mm: Floats, arc_mm: Floats, bore_mm: float) -> Floats:
@@ -98,13 +115,16 @@ def coarse_channels(around: Surroundings, points_mm: Floats, bore_mm: float) -> 
     n, count, _ = points_mm.shape
     network, wall = around.network, around.wall_mm
     flat = points_mm.reshape(-1, 3)
-    reach = 0.5 * (bore_mm + float(network.bore_mm.max())) + wall
+    widest = np.array([bore_mm, float(network.bore_mm.max())])
+    reach = float(reach_mm(widest, network.section.up, network.section).sum()) + wall
     distance, at = around.finder.query(flat, distance_upper_bound=reach)
     near = np.flatnonzero(np.isfinite(distance))
     step = np.linalg.norm(np.diff(points_mm, axis=1), axis=2)
     arc = np.concatenate([np.zeros((n, 1)), np.cumsum(step, axis=1)], axis=1).ravel()
     other = at[near]
-    needed = 0.5 * (NECK * bore_mm + network.bore_mm[other]) + wall
+    toward = unit_rows(network.xyz_mm[other] - flat[near])
+    own = reach_mm(np.full(len(near), NECK * bore_mm), toward, network.section)
+    needed = own + reach_mm(network.bore_mm[other], -toward, network.section) + wall
     way = arc[near] + way_from_node_mm(network, around.node, other)
     exact = distance_to_strand_mm(network, flat[near], other)
     bad = (way > WALL_WAY * needed) & (exact < needed - 0.5 * COARSE_SLACK_MM)

@@ -15,12 +15,12 @@ import numpy as np
 
 from morph.body.blank import AnyFace
 from morph.body.face import FaceRole
-from morph.body.hole import Hole, distance_to_hole_mm
+from morph.body.hole import Hole
 from morph.body.lead_check import Surroundings
+from morph.body.lead_spare import face_spare_mm, hole_spare_mm
 from morph.body.neighbour import WALL_WAY, distance_to_strand_mm, way_from_node_mm
-from morph.body.room import face_wall_mm
 from morph.body.section import reach_mm
-from morph.core.arrays import Bools, Floats, Ints, unit_rows
+from morph.core.arrays import Floats, Ints, unit_rows
 
 MOST_NODES = 120_000
 """The step of the grid is widened until it has no more nodes than this."""
@@ -52,18 +52,11 @@ class LeadField:
 
     def face_spare(self, face: AnyFace, xyz_mm: Floats) -> Floats:
         """Returns the spare (k,) to `face` at points (k, 3)."""
-        limits = self.around.limits
-        wall = float(face_wall_mm(face, np.array([self.bore_mm]), limits)[0]) + limits.band_mm
-        return np.asarray(face.distance_mm(xyz_mm) - wall - self._reach(face.outward(xyz_mm)), dtype=np.float64)
+        return face_spare_mm(face, xyz_mm, np.full(len(xyz_mm), self.bore_mm), self.around.limits)
 
     def hole_spare(self, hole: Hole, xyz_mm: Floats) -> Floats:
         """Returns the spare (k,) to `hole` at points (k, 3)."""
-        limits = self.around.limits
-        wall = max(hole.wall_mm, limits.process_mm) + limits.band_mm
-        offset = xyz_mm - hole.start_mm
-        along = np.clip(offset @ hole.axis, 0.0, hole.length_mm)
-        toward = unit_rows(along[:, None] * hole.axis - offset)
-        return distance_to_hole_mm(hole, xyz_mm) - wall - self._reach(toward)
+        return hole_spare_mm(hole, xyz_mm, np.full(len(xyz_mm), self.bore_mm), self.around.limits)
 
     def rows(self, xyz_mm: Floats, open_face: str = "") -> tuple[Floats, tuple[str, ...]]:
         """Returns the spare (rows, k) to each neighbour but `open_face`, with their names; last to the channels."""
@@ -76,7 +69,16 @@ class LeadField:
 
     def spare(self, xyz_mm: Floats, way_mm: Floats) -> Floats:
         """Returns the least spare (k,) at points (k, 3), reached `way_mm (k,)` after the port."""
-        return np.minimum(self.rows(xyz_mm)[0].min(axis=0), self.near_spare(xyz_mm, way_mm))
+        least = np.minimum(self.rows(xyz_mm)[0].min(axis=0), self.near_spare(xyz_mm, way_mm))
+        return np.asarray(least, dtype=np.float64)
+
+    def inner_spare(self, xyz_mm: Floats, way_mm: Floats) -> Floats:
+        """Returns the least spare (k,) as `spare`, port faces aside."""
+        blank = self.around.blank
+        rows = [self.face_spare(face, xyz_mm) for face in blank.faces if face.role is not FaceRole.PORT]
+        rows += [self.hole_spare(hole, xyz_mm) for hole in blank.holes]
+        rows += [self.channel_spare(xyz_mm)[0], self.near_spare(xyz_mm, way_mm)]
+        return np.asarray(np.min(rows, axis=0), dtype=np.float64)
 
     def channel_spare(self, xyz_mm: Floats) -> tuple[Floats, Ints]:
         """Returns the spare (k,) to the channels that always count, inf where none is near, and the sample (k,)."""
@@ -160,11 +162,14 @@ class RoomGrid:
 
     def whole(self) -> Floats:
         """Returns the least spare (i, j, k) to everything."""
-        return np.minimum.reduce([self.base, *self.face_spare])
+        least: Floats = np.minimum.reduce([self.base, *self.face_spare])
+        return least
 
     def without(self, number: int) -> Floats:
         """Returns the least spare (i, j, k) to everything but port face `number`."""
-        return np.minimum.reduce([self.base, *(one for k, one in enumerate(self.face_spare) if k != number)])
+        others = [one for k, one in enumerate(self.face_spare) if k != number]
+        least: Floats = np.minimum.reduce([self.base, *others])
+        return least
 
     def node_mm(self, index: Ints) -> Floats:
         """Returns the places (k, 3) of nodes by their number (k,) or numbers along the axes (k, 3)."""
@@ -188,8 +193,7 @@ class RoomGrid:
             weight = np.where(bits == 1, part, 1.0 - part).prod(axis=-1)
             at = low + bits
             value += weight * table[at[..., 0], at[..., 1], at[..., 2]]
-        outside: Bools = ((place < 0.0) | (place > top)).any(axis=-1)
-        return np.where(outside, -1e3, value)
+        return np.where(((place < 0.0) | (place > top)).any(axis=-1), -1e3, value)
 
 
 def make_room_grid(field: LeadField, box_mm: Floats) -> RoomGrid:

@@ -14,7 +14,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from morph.body.lead_field import RoomGrid
+from morph.body.lead_field import LeadField, RoomGrid
 from morph.core.arrays import Bools, Floats, Ints, unit_rows
 
 STEP_RAD = np.pi / 8.0
@@ -29,8 +29,11 @@ SIDE_CELLS = 4
 CELL_STEPS = 0.75
 """Edge of the cells in which states are told apart, in steps."""
 
-MOST_STATES = 250_000
+MOST_STATES = 60_000
 BATCH = 3000
+OPEN_STEPS, FORGIVEN_MM = 2, 0.4
+"""Steps from a port that must be possible, and the spare forgiven over them."""
+
 FREE_STEPS = 0.9
 """A node counts as free while its spare is above this many grid steps below 0: a place between nodes may be free."""
 
@@ -70,34 +73,34 @@ class States:
         return np.array(found[::-1]).reshape(-1, 3)
 
 
-def least_way_mm(grid: RoomGrid, goal: Bools) -> Floats:
-    """Returns the least way (i, j, k) over free nodes from each node to a node of `goal`; inf where there is none.
+def least_way_mm(grid: RoomGrid, out_mm: Floats) -> Floats:
+    """Returns the least way (i, j, k) over free nodes from each node to the outside; inf where there is none.
 
-    A node is free when the lead would keep clear of all but one port face there: it may be on its way out.
+    Args:
+        grid: room of the lead.
+        out_mm: (i, j, k) straight way out from a node, inf where there is none.
     """
     from scipy.sparse import coo_matrix
     from scipy.sparse.csgraph import dijkstra
 
-    margin = -FREE_STEPS * grid.step_mm
-    free = np.zeros(grid.base.shape, dtype=np.bool_)
-    for k, distance in enumerate(grid.face_distance):
-        free |= (grid.without(k) >= margin) & (distance >= -grid.step_mm)
-    number = np.full(free.shape, -1, dtype=np.int64)
-    number[free] = np.arange(int(free.sum()))
+    free = grid.whole() >= -FREE_STEPS * grid.step_mm
+    goal = free & np.isfinite(out_mm)
     result = np.full(free.shape, np.inf)
-    goals = number[goal & free]
-    if not len(goals):
+    if not goal.any():
         return result
-    rows, columns, lengths = [], [], []
+    n = int(free.sum())
+    number = np.full(free.shape, -1, dtype=np.int64)
+    number[free] = np.arange(n)
+    # All ways out lead to one more node, the outside, from which the search starts.
+    rows, columns, lengths = [number[goal]], [np.full(int(goal.sum()), n)], [out_mm[goal]]
     for offset in _half_neighbours():
         one, two = _shifted(number, offset)
         both = (one >= 0) & (two >= 0)
         rows.append(one[both])
         columns.append(two[both])
         lengths.append(np.full(int(both.sum()), grid.step_mm * float(np.linalg.norm(offset))))
-    n = int(free.sum())
-    edges = coo_matrix((np.concatenate(lengths), (np.concatenate(rows), np.concatenate(columns))), shape=(n, n))
-    result[free] = dijkstra(edges.tocsr(), directed=False, indices=goals, min_only=True)
+    edges = coo_matrix((np.concatenate(lengths), (np.concatenate(rows), np.concatenate(columns))), shape=(n + 1, n + 1))
+    result[free] = dijkstra(edges.tocsr(), directed=False, indices=np.array([n]))[0, :n]
     return result
 
 
@@ -162,7 +165,7 @@ class Lattice:
             self._buckets.setdefault(int(value), []).append(numbers[keep[level == value]])
 
     def _expand(self, batch: Ints) -> None:
-        middle, after = self._moves(batch)
+        middle, after = _moves(self.states, batch, self._radius)
         tables = [self._grid.look_up(self._whole, points) for points in (middle, after.xyz_mm)]
         fits = np.minimum(*tables) >= -DOUBT_STEPS * self._grid.step_mm
         middle, after, tables = middle[fits], after.only(fits), [table[fits] for table in tables]
@@ -181,37 +184,6 @@ class Lattice:
         self._put(after, np.arange(self._count, self._count + len(after.way_mm)))
         self._count += len(after.way_mm)
         self._parts.append(after)
-
-    def _moves(self, batch: Ints) -> tuple[Floats, States]:
-        """Returns the middle points (m, 3) of all moves from the states of `batch`, and the states they lead to."""
-        place, heading = self.states.xyz_mm[batch], self.states.heading[batch]
-        sides = _sides(heading)
-        middles, places, headings, corners = [], [], [], []
-        half = 0.5 * self.step_mm
-        middles.append(place + half * heading)
-        places.append(place + self.step_mm * heading)
-        headings.append(heading)
-        corners.append(np.full_like(place, np.nan))
-        for turn in (STEP_RAD, 0.5 * STEP_RAD):
-            for side in sides:
-                ahead = np.cos(turn) * heading + np.sin(turn) * side
-                end = place + self._radius * (np.sin(turn) * heading + (1.0 - np.cos(turn)) * side)
-                at = 0.5 * turn
-                middle = place + self._radius * (np.sin(at) * heading + (1.0 - np.cos(at)) * side)
-                straight = self.step_mm - self._radius * turn
-                middles.append(middle if straight < 1e-9 else end)
-                places.append(end + straight * ahead)
-                headings.append(ahead)
-                corners.append(place + self._radius * np.tan(0.5 * turn) * heading)
-        n = len(places)
-        after = States(
-            np.concatenate(places),
-            np.concatenate(headings),
-            np.tile(self.states.way_mm[batch] + self.step_mm, n),
-            np.tile(batch, n),
-            np.concatenate(corners),
-        )
-        return np.concatenate(middles), after
 
     def _key(self, states: States) -> Ints:
         """Returns the number (k,) of the cell and heading of each state."""
@@ -246,3 +218,42 @@ def _heading_cell(heading: Floats) -> Ints:
         cells.append(np.minimum((place * SIDE_CELLS).astype(np.int64), SIDE_CELLS - 1))
     side = 2 * axis + (along > 0.0)
     return np.asarray((side * SIDE_CELLS + cells[0]) * SIDE_CELLS + cells[1], dtype=np.int64)
+
+
+def _moves(states: States, batch: Ints, radius_mm: float) -> tuple[Floats, States]:
+    """Returns the middle points (m, 3) of all moves from the states of `batch`, and the states they lead to."""
+    place, heading = states.xyz_mm[batch], states.heading[batch]
+    step = STEP_RAD * radius_mm
+    middles, places, headings = [place + 0.5 * step * heading], [place + step * heading], [heading]
+    corners = [np.full_like(place, np.nan)]
+    for turn in (STEP_RAD, 0.5 * STEP_RAD):
+        for side in _sides(heading):
+            ahead = np.cos(turn) * heading + np.sin(turn) * side
+            end = place + radius_mm * (np.sin(turn) * heading + (1.0 - np.cos(turn)) * side)
+            at = 0.5 * turn
+            middle = place + radius_mm * (np.sin(at) * heading + (1.0 - np.cos(at)) * side)
+            straight = step - radius_mm * turn
+            middles.append(middle if straight < 1e-9 else end)
+            places.append(end + straight * ahead)
+            headings.append(ahead)
+            corners.append(place + radius_mm * np.tan(at) * heading)
+    n = len(places)
+    way = np.tile(states.way_mm[batch] + step, n)
+    after = States(np.concatenate(places), np.concatenate(headings), way, np.tile(batch, n), np.concatenate(corners))
+    return np.concatenate(middles), after
+
+
+def opens(field: LeadField, place: Floats, heading: Floats, radius_mm: float) -> bool:
+    """Returns whether any way of OPEN_STEPS steps from the starts (n, 3) along headings (n, 3) keeps clear.
+
+    Port faces do not count, and a little is forgiven: this only tells starts that are hopeless.
+    """
+    n = len(place)
+    states = States(place.copy(), heading, np.zeros(n), np.full(n, -1), np.full((n, 3), np.nan))
+    for _ in range(OPEN_STEPS):
+        middle, after = _moves(states, np.arange(len(states.way_mm)), radius_mm)
+        clear = [field.inner_spare(points, after.way_mm) >= -FORGIVEN_MM for points in (middle, after.xyz_mm)]
+        states = after.only(clear[0] & clear[1])
+        if not len(states.way_mm):
+            return False
+    return True

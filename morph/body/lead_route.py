@@ -16,12 +16,12 @@ import numpy as np
 
 from morph.body.blank import AnyFace
 from morph.body.end_fit import EndFits
-from morph.body.exit import Sites, given_leave, keep_legal, project_along, project_to_face
+from morph.body.exit import SQUAREST_COSINE, Sites, given_leave, keep_legal, project_along, project_to_face
 from morph.body.lead_candidate import Bend, Bundle, make_start, two_bends
-from morph.body.lead_check import Surroundings
+from morph.body.lead_check import NECK, Surroundings
 from morph.body.lead_field import RoomGrid, make_lead_field, make_room_grid
 from morph.body.lead_ground import Ground, PortStart
-from morph.body.lead_lattice import Lattice, least_way_mm
+from morph.body.lead_lattice import DOUBT_STEPS, FREE_STEPS, Lattice, least_way_mm, opens
 from morph.body.lead_path import SHARPEST_TURN_RAD, Paths, make_paths, sample_paths, start_corner, turn_between_rad
 from morph.body.room import way_out
 from morph.core.arrays import Bools, Floats, Ints
@@ -53,72 +53,118 @@ class _Tails:
         return _Tails(self.state[keep], self.paths.only(keep), self.leave[keep])
 
 
-def search_box_mm(around: Surroundings, port: PortStart, places: Sequence[Sites], pad_mm: float) -> Floats:
-    """Returns the box (2, 3) a lead is searched in: port, channels and sites, and `pad_mm` around them."""
-    points = np.concatenate([port.xyz_mm[None, :], around.network.xyz_mm, *(sites.xyz_mm for sites in places)])
-    return np.array([points.min(axis=0) - pad_mm, points.max(axis=0) + pad_mm])
-
-
-def searched(
-    around: Surroundings,
-    ground: Ground,
-    port: PortStart,
-    headings: Sequence[tuple[float, Floats]],
-    places: Sequence[Sites],
-    bend: Bend,
-    fits: EndFits,
-) -> Iterator[tuple[list[Bundle], list[float]]]:
-    """Yields paths found by search with the kink of each bundle at the port, likely shortest first.
+class RoomSearch:
+    """The search for ways of one port, with the room of each bore tabulated once.
 
     Args:
         around: what the lead must keep clear of.
         ground: body, carrier and limits.
         port: where it starts.
-        headings: kinks and unit headings (3,) to start along.
-        places: sites on the port faces, or the one given.
-        bend: bend radius, straight end and bore.
         fits: where the port's end fits.
     """
-    if not any(len(sites.xyz_mm) for sites in places):
-        return
-    grid = make_room_grid(make_lead_field(around, bend.bore_mm), search_box_mm(around, port, places, bend.radius_mm))
-    given = places[0] if port.settings.exit_mm is not None else None
-    to_go = least_way_mm(grid, _goal_nodes(grid, given))
-    start = np.array([heading for _, heading in headings])
-    lattice = Lattice(grid, to_go, port.xyz_mm, start, bend.radius_mm)
-    handed = 0
-    for batch in lattice.batches():
-        bundles: list[Bundle] = []
-        kinks: list[float] = []
-        for number, face in enumerate(grid.faces):
-            if given is not None and face.name != given.face.name:
-                continue
-            tails = _tails(ground, port, lattice, batch, face, given, bend)
-            if tails is None:
-                continue
-            tails = _shortest_clear(lattice, grid, number, tails)
-            for root, one in _whole_ways(ground, port, lattice, face, tails, bend):
-                way = fits.only_fitting(one, ground.carrier)
-                if len(way.leave):
-                    bundles.append(way)
-                    kinks.append(headings[root][0])
-        if bundles:
-            handed += 1
-            yield bundles, kinks
-        if handed >= MOST_WAYS:
+
+    def __init__(self, around: Surroundings, ground: Ground, port: PortStart, fits: EndFits) -> None:
+        self._around, self._ground, self._port, self._fits = around, ground, port, fits
+        self._rooms: dict[float, tuple[RoomGrid, Floats] | None] = {}
+
+    def starts_open(self, headings: Sequence[tuple[float, Floats]], bend: Bend) -> bool:
+        """Returns whether any way with those bends can leave the port at all, port faces aside."""
+        field = make_lead_field(self._around, NECK * bend.bore_mm)
+        port = self._port
+        begin = np.array([heading for _, heading in headings])
+        return opens(field, np.broadcast_to(port.xyz_mm, begin.shape), begin, bend.radius_mm)
+
+    def reaches(self, places: Sequence[Sites], bend: Bend) -> bool:
+        """Returns whether the port is joined to a way out by free room, bends aside."""
+        room = self._room(places, bend)
+        return room is not None and bool(np.isfinite(room[1][tuple(room[0].cell(self._port.xyz_mm[None, :])[0])]))
+
+    def _room(self, places: Sequence[Sites], bend: Bend) -> tuple[RoomGrid, Floats] | None:
+        """Returns the room of the bore and the least way to go from each node, or None when no exit is left."""
+        if bend.bore_mm not in self._rooms:
+            found = None
+            if any(len(sites.xyz_mm) for sites in places):
+                field = make_lead_field(self._around, bend.bore_mm)
+                grid = make_room_grid(field, self._box_mm(places, bend.radius_mm))
+                given = places[0] if self._port.settings.exit_mm is not None else None
+                found = grid, least_way_mm(grid, _ways_out_mm(grid, self._port, given, bend))
+            self._rooms[bend.bore_mm] = found
+        return self._rooms[bend.bore_mm]
+
+    def _box_mm(self, places: Sequence[Sites], pad_mm: float) -> Floats:
+        """Returns the box (2, 3) a lead is searched in: port, channels and sites, and `pad_mm` around them."""
+        sites = [one.xyz_mm for one in places]
+        points = np.concatenate([self._port.xyz_mm[None, :], self._around.network.xyz_mm, *sites])
+        return np.array([points.min(axis=0) - pad_mm, points.max(axis=0) + pad_mm])
+
+    def ways(
+        self, headings: Sequence[tuple[float, Floats]], places: Sequence[Sites], bend: Bend
+    ) -> Iterator[tuple[list[Bundle], list[float]]]:
+        """Yields paths found by search with the kink of each bundle at the port, likely shortest first.
+
+        Args:
+            headings: kinks and unit headings (3,) to start along.
+            places: sites on the port faces, or the one given.
+            bend: bend radius, straight end and bore.
+        """
+        room = self._room(places, bend)
+        if room is None:
             return
+        grid, port = room[0], self._port
+        given = places[0] if port.settings.exit_mm is not None else None
+        start = np.array([heading for _, heading in headings])
+        lattice = Lattice(grid, room[1], port.xyz_mm, start, bend.radius_mm)
+        handed = 0
+        for batch in lattice.batches():
+            bundles: list[Bundle] = []
+            kinks: list[float] = []
+            for number, face in enumerate(grid.faces):
+                tails = _tails(self._ground, port, lattice, batch, face, given, bend)
+                if tails is None:
+                    continue
+                tails = _shortest_clear(lattice, grid, number, tails)
+                for root, one in _whole_ways(self._ground, port, lattice, face, tails, bend):
+                    way = self._fits.only_fitting(one, self._ground.carrier)
+                    if len(way.leave):
+                        bundles.append(way)
+                        kinks.append(headings[root][0])
+            if bundles:
+                handed += 1
+                yield bundles, kinks
+            if handed >= MOST_WAYS:
+                return
 
 
-def _goal_nodes(grid: RoomGrid, given: Sites | None) -> Bools:
-    """Returns the nodes (i, j, k) where a lead may come out: beside the given exit, else beside any port face."""
-    goal = np.zeros(grid.base.shape, dtype=np.bool_)
-    if given is not None:
-        nodes = grid.node_mm(np.arange(goal.size)).reshape(*goal.shape, 3)
-        near: Bools = np.linalg.norm(nodes - given.xyz_mm[0], axis=-1) <= 1.5 * grid.step_mm
-        return near
-    for distance in grid.face_distance:
-        goal |= np.abs(distance) <= 0.75 * grid.step_mm
-    return goal
+def _ways_out_mm(grid: RoomGrid, port: PortStart, given: Sites | None, bend: Bend) -> Floats:
+    """Returns the straight way out (i, j, k) from each node, inf where it is too short or not clear.
+
+    It ends at the given exit (from nodes beside its axis), else square to a port face or as `leave` says.
+    """
+    found = np.full(grid.base.shape, np.inf)
+    nodes = grid.node_mm(np.flatnonzero(grid.whole().ravel() >= -FREE_STEPS * grid.step_mm))
+    least = max(bend.straight_mm, bend.whole_mm) - grid.step_mm
+    for number, face in enumerate(grid.faces):
+        if given is not None and face.name != given.face.name:
+            continue
+        if given is not None:
+            leave = np.broadcast_to(given.leave[0], nodes.shape)
+            length = (given.xyz_mm[0] - nodes) @ given.leave[0]
+            aside = np.linalg.norm(nodes + length[:, None] * leave - given.xyz_mm[0], axis=1)
+            ahead = (aside <= grid.step_mm) & (length >= least)
+        else:
+            asked = given_leave(port.settings)
+            leave = face.outward(nodes) if asked is None else np.broadcast_to(asked, nodes.shape)
+            slope = (face.outward(nodes) * leave).sum(axis=1)
+            length = face.distance_mm(nodes) / np.maximum(slope, SQUAREST_COSINE)
+            ahead = (length >= least) & (slope >= SQUAREST_COSINE)
+        chosen = np.flatnonzero(ahead)
+        share = np.linspace(0.0, 1.0, TAIL_SAMPLES)[:, None, None]
+        line = nodes[chosen] + share * (length[chosen, None] * leave[chosen])
+        spare = grid.look_up(grid.without(number), line).min(axis=0)
+        chosen = chosen[spare >= -DOUBT_STEPS * grid.step_mm]
+        at = tuple(grid.cell(nodes[chosen]).T)
+        found[at] = np.minimum(found[at], np.maximum(length[chosen], 1e-6))
+    return found
 
 
 def _root(lattice: Lattice, state: int) -> int:
@@ -131,6 +177,8 @@ def _tails(
     ground: Ground, port: PortStart, lattice: Lattice, batch: Ints, face: AnyFace, given: Sites | None, bend: Bend
 ) -> _Tails | None:
     """Returns the ways from the states of `batch` onto `face` that are valid in shape, or None."""
+    if given is not None and face.name != given.face.name:
+        return None
     place, heading = lattice.states.xyz_mm[batch], lattice.states.heading[batch]
     found = (
         _onto_given(place, heading, given, bend) if given is not None else _onto_face(port, place, heading, face, bend)

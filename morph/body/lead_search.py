@@ -21,8 +21,9 @@ from morph.body.lead_candidate import Bend, Bundle, make_start, one_bend, sort_b
 from morph.body.lead_check import COARSE_SLACK_MM, NECK, Judged, Surroundings, coarse_channels, coarse_faces, judge_path
 from morph.body.lead_ground import Blocked, Ground, Lead, PortStart, make_bend
 from morph.body.lead_path import least_bend_radius_mm
-from morph.body.lead_route import searched
+from morph.body.lead_route import RoomSearch
 from morph.body.neighbour import polyline_arc_mm
+from morph.body.room import measure_room
 from morph.core.arrays import Floats, unit_rows
 from morph.core.progress import Progress
 
@@ -70,6 +71,7 @@ def find_lead(around: Surroundings, ground: Ground, port: PortStart, progress: P
     best: tuple[Judged, str] | None = None
     opening = Finish(PLAIN.detail, land_mm=port.bore_mm)
     fits = EndFits(around, ground.limits, ground.lands, port.settings.name, port.finishes, opening)
+    room = RoomSearch(around, ground, port, fits)
     tried: set[tuple[bool, bool, float]] = set()
     for done, (kinked, through_room, share) in enumerate(SEARCHES):
         progress.step(f"lead of {port.settings.name}", done, len(SEARCHES))
@@ -80,8 +82,10 @@ def find_lead(around: Surroundings, ground: Ground, port: PortStart, progress: P
         tried.add((kinked, through_room, bore))
         bend = make_bend(ground, port, bore)
         places = _places(ground, port, bend, fits)
+        if len(tried) > 1 and not (room.starts_open(headings, bend) and room.reaches(places, bend)):
+            continue
         if through_room:
-            found = searched(around, ground, port, headings, places, bend, fits)
+            found = room.ways(headings, places, bend)
         else:
             found = iter([_candidates(ground, port, headings, places, bend, fits)])
         for bundles, kinks in found:
@@ -152,13 +156,14 @@ def _first_legal(
 ) -> tuple[Lead | None, tuple[Judged, str] | None]:
     """Returns the shortest legal lead, or None and the path that comes closest with the name of its face."""
     order = sort_bundles(bundles)
+    at_port = float(measure_room(around.blank, around.limits, port.xyz_mm[None, :]).room_mm[0])
     best: Lead | None = None
     near_miss: tuple[float, int, int] | None = None
     judged = low = 0
     while low < len(order):
         chunk = order[low : low + CHUNK + 2 * low]
         low += len(chunk)
-        spare = _coarse(around, ground, bundles, chunk, bend)
+        spare = _coarse(around, ground, bundles, chunk, bend, at_port)
         top = int(np.argmax(spare))
         if near_miss is None or spare[top] > near_miss[0]:
             near_miss = (float(spare[top]), *chunk[top])
@@ -181,7 +186,12 @@ def _first_legal(
 
 
 def _coarse(
-    around: Surroundings, ground: Ground, bundles: Sequence[Bundle], chunk: Sequence[tuple[int, int]], bend: Bend
+    around: Surroundings,
+    ground: Ground,
+    bundles: Sequence[Bundle],
+    chunk: Sequence[tuple[int, int]],
+    bend: Bend,
+    port_room_mm: float,
 ) -> Floats:
     """Returns by how much the paths of a chunk (n,) keep clear on a coarse sampling, below 0 where they do not."""
     which = np.array(chunk, dtype=np.int64)
@@ -190,7 +200,7 @@ def _coarse(
         here = np.flatnonzero(which[:, 0] == b)
         bundle = bundles[b].only(which[here, 1])
         points = bundle.rough(ground.carrier)
-        spare[here] = coarse_faces(around, points, bundle.face, bend.bore_mm)
+        spare[here] = coarse_faces(around, points, bundle.face, bend.bore_mm, port_room_mm)
         clear = np.flatnonzero(spare[here] >= 0.0)
         free = coarse_channels(around, points[clear], bend.bore_mm)
         spare[here[clear[~free]]] = -0.5 * COARSE_SLACK_MM
