@@ -1,9 +1,9 @@
 """Flows and pressures when the drop of a pipe also depends on the flows of its neighbours (junctions).
 
 Starting from the solution without that coupling, Newton's method on all flows and pressures with every
-slope; a step is halved until the unbalanced pressure falls. Where that fails the coupling is brought in
-by shares, each from the solution of the last (continuation): the coupling can make the problem lose the
-convexity that makes the plain one safe.
+slope; a step is halved until the unbalanced pressure falls. Where that fails, because the coupling takes
+away the convexity that makes the plain problem safe, the flows are given inertia and settle as they
+would in time.
 """
 
 from __future__ import annotations
@@ -19,9 +19,10 @@ from morph.flow.grid import Grid, PressureSystem
 from morph.flow.solve import GridState, Law, solve_grid
 
 MOST_ROUNDS = 40
-MOST_HALVINGS = 12
-LEAST_SHARE = 1e-3
-"""Coupling is raised in steps no smaller than this."""
+MOST_HALVINGS = 8
+MOST_SETTLING = 400
+FIRST_INERTIA, LAST_INERTIA = 1.0, 1e-3
+"""Share of the stiffness of a pipe that damps its flow: where settling starts, and where Newton's method takes over."""
 
 TOLERANCE = 1e-10
 BALANCED = 1e-7
@@ -155,22 +156,53 @@ def solve_coupled(
         if warm is not None:
             return warm
     plain = solve_grid(system, law, fixed_pressure, fed)
-    state, share, step = plain, 0.0, 1.0
-    while share < 1.0:
-        found = _newton(coupled, law, fed, state, min(share + step, 1.0))
-        if found is not None:
-            state, share, step = found, min(share + step, 1.0), 2.0 * step
-            continue
-        step *= 0.5
-        if step < LEAST_SHARE:
-            raise FlowError(
-                "flow-not-converged",
-                expected="flows that settle with the whole loss of the junctions",
-                found=f"none beyond a share of {share:.3f} of it",
-                where="flow network",
-                do="Two solutions are likely near each other: change a bore or the flow a little.",
-            )
-    return state
+    found = _newton(coupled, law, fed, plain, 1.0) or _settle(coupled, law, fed, plain)
+    if found is None:
+        raise FlowError(
+            "flow-not-converged",
+            expected="flows that settle with the loss of the junctions",
+            found=f"none within {MOST_SETTLING} damped rounds",
+            where="flow network",
+            do="Two ways of flowing are likely near each other: change a bore or the flow a little.",
+        )
+    return found
+
+
+def _settle(coupled: CoupledSystem, law: Law, fed: Floats, start: GridState) -> GridState | None:
+    """Returns the solution the flows settle to when they have inertia, or None.
+
+    Implicit steps in time that grow as the unbalanced pressure falls (pseudo-transient continuation; C. T. Kelley,
+    D. E. Keyes, Convergence analysis of pseudo-transient continuation, SIAM J. Numer. Anal. 35 (1998) 508-523),
+    from the plain solution; Newton's method ends it.
+    """
+    system, grid = coupled.system, coupled.system.grid
+    live, free = system.live, system.free
+    flow, pressure, inertia = start.flow.copy(), start.pressure.copy(), FIRST_INERTIA
+    drop, slope = law.drop(flow)
+    left = _unbalanced(grid, live, pressure, drop + coupled.coupling.drop(flow))
+    row, _ = coupled.coupling.pattern()
+    for rounds in range(1, MOST_SETTLING + 1):
+        stiffness = slope + np.bincount(row, np.abs(coupled.coupling.slopes(flow)), len(flow))
+        factor = coupled.factored(slope + inertia * stiffness, 1.0, flow)
+        if factor is None:
+            return None
+        move, lift = factor.step(left, (grid.leaving(flow) - fed)[free])
+        flow = flow + np.where(live, move, 0.0)
+        pressure[free] += lift
+        drop, slope = law.drop(flow)
+        before = float(np.linalg.norm(left))
+        left = _unbalanced(grid, live, pressure, drop + coupled.coupling.drop(flow))
+        now = float(np.linalg.norm(left))
+        if not np.isfinite(now):
+            return None
+        inertia *= min(max(now / max(before, 1e-300), 0.3), 2.0)
+        if inertia < LAST_INERTIA or rounds % 25 == 0:
+            state = GridState(flow, pressure, start.reached, start.rounds + rounds)
+            found = _newton(coupled, law, fed, state, 1.0)
+            if found is not None:
+                return found
+            inertia = max(inertia, FIRST_INERTIA * 0.1)
+    return None
 
 
 def _newton(coupled: CoupledSystem, law: Law, fed: Floats, start: GridState, share: float) -> GridState | None:
@@ -197,6 +229,9 @@ def _newton(coupled: CoupledSystem, law: Law, fed: Floats, start: GridState, sha
             if float(np.abs(next_left).max(initial=0.0)) <= (1.0 - 0.1 * part) * size or size == 0.0:
                 break
             part *= 0.5
+        else:
+            if size > BALANCED * float(np.abs(drop).max(initial=0.0)):
+                return None
         change = float(np.abs(next_flow - flow).sum()) / max(float(np.abs(next_flow).sum()), 1e-300)
         flow, pressure, left = next_flow, next_pressure, next_left
         settled = change < TOLERANCE or (change < 1e-7 and float(np.abs(left).max(initial=0.0)) >= 0.3 * size)

@@ -10,9 +10,9 @@ import warnings
 import numpy as np
 import pytest
 
-from tests.flow.epanet import EpanetLaw, make_model, square_case
 from morph.flow.grid import PressureSystem
 from morph.flow.solve import solve_grid
+from tests.flow.epanet import EpanetLaw, make_model, square_case
 
 pytestmark = pytest.mark.bench
 

@@ -12,7 +12,7 @@ from tests.flow.epanet import EpanetLaw, random_case, solve_epanet
 pytestmark = pytest.mark.quick
 
 N2_NODES = {name: k for k, name in enumerate("ABCDEFGH")}
-N2_ENDS = [(N2_NODES[a], N2_NODES[b]) for a, b in "AB BC CD ED AE DF FG EG CH HF".split()]
+N2_ENDS = [(N2_NODES[a], N2_NODES[b]) for a, b in ["AB", "BC", "CD", "ED", "AE", "DF", "FG", "EG", "CH", "HF"]]
 N2_BORE_M = np.array([0.3, 0.2, 0.2, 0.2, 0.2, 0.15, 0.25, 0.15, 0.15, 0.25])
 N2_LENGTH_M = np.array([250.0, 100, 125, 125, 100, 100, 125, 100, 100, 125])
 N2_F = np.array([0.01879, 0.02075, 0.02075, 0.02075, 0.02075, 0.02233, 0.01964, 0.02233, 0.02233, 0.01964])
