@@ -30,6 +30,7 @@ class EndFits:
         port: the port's name.
         finishes: the faces where its end can be made, each with its finish; empty for a plain end.
         opening: a plain end as wide as its bore.
+        within: only exits this near to a place count: the place (3,) and the distance in mm.
     """
 
     def __init__(
@@ -40,7 +41,9 @@ class EndFits:
         port: str,
         finishes: Sequence[tuple[str, Finish]],
         opening: Finish = PLAIN,
+        within: tuple[Floats, float] | None = None,
     ) -> None:
+        self._within = within
         self._opening = opening
         self._around, self._limits, self._lands, self._port = around, limits, tuple(lands), port
         self._finishes: Mapping[str, Finish] = dict(finishes)
@@ -65,6 +68,8 @@ class EndFits:
 
     def only(self, sites: Sites) -> Sites:
         """Returns the sites on which the end fits, channels aside."""
+        near = self._near(sites.xyz_mm)
+        sites = Sites(sites.face, sites.xyz_mm[near], sites.leave[near])
         if self._is_free(sites.face) or not len(sites.xyz_mm):
             return sites
         if self._finishes and sites.face.name not in self._finishes:
@@ -74,6 +79,8 @@ class EndFits:
 
     def only_fitting(self, bundle: Bundle, carrier: Carrier) -> Bundle:
         """Returns the paths of a bundle whose exits the end fits, with a wall to every channel that counts."""
+        if self._within is not None:
+            bundle = bundle.only(self._near(bundle.exits(carrier)))
         if self._is_free(bundle.face) or not len(bundle.leave):
             return bundle
         if self._finishes and bundle.face.name not in self._finishes:
@@ -114,6 +121,11 @@ class EndFits:
         reach = self._reach_at(face, exit_mm)
         if reach.longest_mm < least_run_mm:
             raise _unfit(finish, reach.lack_mm, f"branch {reach.by}", where)
+
+    def _near(self, places_mm: Floats) -> Bools:
+        if self._within is None:
+            return np.ones(len(places_mm), dtype=np.bool_)
+        return np.asarray(np.linalg.norm(places_mm - self._within[0], axis=1) <= self._within[1], dtype=np.bool_)
 
     def _is_free(self, face: Face) -> bool:
         return not self._finishes and face.name not in {land.face for land in self._lands}

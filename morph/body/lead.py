@@ -1,29 +1,37 @@
 """Leads: one per port, laid one after the other in port order against everything laid before.
 
 Each is the shortest way that keeps every wall (lead_search.py). A port left without a way goes first
-in the next attempt; when it has none even then, the error names what blocks the best way tried.
-Nothing is random.
+in the next attempt, and other orders are tried when that moves the trouble to another port; when a port
+has no way even then, the error names what blocks it and where it would have one (lead_block.py). Nothing
+is random.
 """
 
 from __future__ import annotations
 
+import itertools
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
 
 from morph.body.end_room import Land
-from morph.body.exit import given_exit
+from morph.body.exit import given_exit, port_faces
 from morph.body.hole import Hole
+from morph.body.lead_block import find_narrow, other_exit
 from morph.body.lead_check import Judged, Surroundings
-from morph.body.lead_ground import Blocked, Ground, Lead, PortStart
+from morph.body.lead_ground import LEAST_BEND_BORES, Blocked, Ground, Lead, PortStart
 from morph.body.lead_search import find_lead
 from morph.body.neighbour import Strand, make_network, polyline_arc_mm
-from morph.body.room import Limits
 from morph.core.errors import GeometryError
 from morph.core.progress import Progress
 
 __all__ = ["Ground", "Lead", "PortStart", "lay_leads", "lead_strand"]
+
+
+MOST_PERMUTATIONS = 5040
+
+MOST_ORDERS = 8
+"""Orders of the ports in which their leads are laid before a port counts as blocked."""
 
 
 def lay_leads(ground: Ground, ports: Sequence[PortStart], progress: Progress) -> tuple[Lead, ...]:
@@ -40,10 +48,11 @@ def lay_leads(ground: Ground, ports: Sequence[PortStart], progress: Progress) ->
     """
     _require_exits_apart(ground, ports)
     given = {k: taken for k, port in enumerate(ports) if (taken := _take_given(ground, port)) is not None}
-    order = list(range(len(ports)))
+    order = tuple(range(len(ports)))
+    behind: list[tuple[int, int]] = []  # (port that was blocked, one of those that were laid before it)
     tried: set[tuple[int, ...]] = set()
     while True:
-        tried.add(tuple(order))
+        tried.add(order)
         laid: dict[int, Lead] = {}
         for k in order:
             try:
@@ -51,13 +60,30 @@ def lay_leads(ground: Ground, ports: Sequence[PortStart], progress: Progress) ->
                 around = _surround(own, ports[k], laid, ports)
                 laid[k] = find_lead(around, own, ports[k], progress)
             except Blocked as blocked:
-                again = [k, *(other for other in order if other != k)]
-                if order[0] == k or tuple(again) in tried:
+                behind += [(k, j) for j in laid]
+                again = _next_order(order, k, behind, tried) if laid and len(tried) < MOST_ORDERS else None
+                if again is None:
                     raise _stuck(around, own, ports[k], blocked, progress) from None
                 order = again
                 break
         else:
             return tuple(laid[k] for k in range(len(ports)))
+
+
+def _next_order(
+    order: tuple[int, ...], blocked: int, behind: Sequence[tuple[int, int]], tried: set[tuple[int, ...]]
+) -> tuple[int, ...] | None:
+    """Returns an order not yet tried: the blocked port first, or the one that repeats the fewest failures."""
+    first = (blocked, *(other for other in order if other != blocked))
+    if first not in tried:
+        return first
+    best: tuple[int, tuple[int, ...]] | None = None
+    for one in itertools.islice(itertools.permutations(range(len(order))), MOST_PERMUTATIONS):
+        place = {port: k for k, port in enumerate(one)}
+        repeats = sum(place[k] > place[j] for k, j in behind)
+        if one not in tried and (best is None or (repeats, one) < best):
+            best = repeats, one
+    return None if best is None else best[1]
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -140,7 +166,7 @@ def _stuck(
 ) -> GeometryError:
     """Returns the error for a port without a way: of its end when that is what does not fit, else of its way."""
     if not port.finishes:
-        return _blocked_error(port, blocked.best, ground.limits)
+        return _blocked_error(around, ground, port, blocked.best)
     finish = port.finishes[0][1]
     x, y, z = port.xyz_mm
     where = f"[[port]] '{port.settings.name}' at ({x:.2f}, {y:.2f}, {z:.2f}) mm"
@@ -156,7 +182,7 @@ def _stuck(
     try:
         find_lead(around, ground, replace(port, finishes=()), progress)
     except Blocked:
-        return _blocked_error(port, blocked.best, ground.limits)
+        return _blocked_error(around, ground, port, blocked.best)
     return GeometryError(
         "end-no-straight",
         expected=f"a straight run of {port.straight_mm(port.bore_mm):.2f} mm behind the exit for the {finish.words} "
@@ -167,27 +193,35 @@ def _stuck(
     )
 
 
-def _blocked_error(port: PortStart, best: tuple[Judged, str] | None, limits: Limits) -> GeometryError:
+def _blocked_error(
+    around: Surroundings, ground: Ground, port: PortStart, best: tuple[Judged, str] | None
+) -> GeometryError:
+    """Returns the error for a port without a way: what blocks it, and where it would have one."""
     x, y, z = port.xyz_mm
-    where = f"[[port]] '{port.settings.name}' at ({x:.2f}, {y:.2f}, {z:.2f}) mm"
-    do = "Add a port face, move the port or what blocks it, give exit_mm, or allow a smaller bore or wall."
-    if best is None:
-        return GeometryError(
-            "lead-blocked",
-            expected="a way from the port to a port face, with its bends and a straight end square to the face",
-            found="no path of that shape that ends on a port face with its walls",
-            where=where,
-            do=do,
-        )
-    path, face = best
-    i, j, k = path.xyz_mm[path.worst]
-    lack = 0.5 * (path.wanted_mm[path.worst] - path.room.room_mm[path.worst])
-    name = path.room.by_names()[path.worst]
+    exit_mm = None if port.settings.exit_mm is None else np.array(port.settings.exit_mm)
+    narrow = find_narrow(around, ground, port, exit_mm)
+    faces = ", ".join(f"'{face.name}'" for face in port_faces(ground.blank))
+    goal = f"to a port face ({faces})" if exit_mm is None else "to its exit_mm"
+    bore = ground.limits.least_bore_mm
+    if narrow is not None:
+        i, j, k = narrow.xyz_mm
+        expected = f"the full wall to {narrow.by} on the way {goal} for the least bore of {bore:.3f} mm with its bands"
+        place = f"({i:.2f}, {j:.2f}, {k:.2f}) mm, the tightest place of the widest way"
+        found = f"{narrow.lack_mm:.3f} mm too little at {place}"
+    else:
+        radius = max(LEAST_BEND_BORES, ground.bend_bores) * bore
+        expected = f"a way {goal} with bends of at least {radius:.2f} mm radius and a straight end square to the face"
+        found = "walls that leave a way, but none that bends so wide"
+        if best is not None:
+            path = best[0]
+            i, j, k = path.xyz_mm[path.worst]
+            lack = max(0.5 * float(path.wanted_mm[path.worst] - path.room.room_mm[path.worst]), 0.0)
+            name = path.room.by_names()[path.worst]
+            found += f"; the best comes {lack:.3f} mm too little clear of {name} at ({i:.2f}, {j:.2f}, {k:.2f}) mm"
     return GeometryError(
         "lead-blocked",
-        expected=f"the full wall to {name} along the way to face '{face}' for a bore of "
-        f"{path.wanted_mm[path.worst]:.3f} mm (bands of {limits.band_mm:.3f} mm included)",
-        found=f"{lack:.3f} mm too little at ({i:.2f}, {j:.2f}, {k:.2f}) mm on the best way tried",
-        where=where,
-        do=do,
+        expected=expected,
+        found=found,
+        where=f"[[port]] '{port.settings.name}' at ({x:.2f}, {y:.2f}, {z:.2f}) mm",
+        do=f"{other_exit(around, ground, port)} Or move the port or what blocks it, or allow a smaller bore or wall.",
     )

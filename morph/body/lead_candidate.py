@@ -97,13 +97,15 @@ class Bundle:
 class Bend:
     """What shapes a candidate: bend radius, straight end before the face, bore, and the straight run of an end, in mm.
 
-    `straight_mm` is kept where the last turn is a right angle; `whole_mm` always, 0 for a plain end.
+    `straight_mm` is kept where the last turn is a right angle; `whole_mm` always, 0 for a plain end. No bend starts
+    within `start_mm` of the port: there the lead narrows, and is still too wide for the radius.
     """
 
     radius_mm: float
     straight_mm: float
     bore_mm: float
     whole_mm: float = 0.0
+    start_mm: float = 0.0
 
 
 def make_start(carrier: Carrier, xyz_mm: Floats, heading: Floats) -> Start:
@@ -139,7 +141,7 @@ def two_bends(start: Start, sites: Sites, bend: Bend, carrier: Carrier | None) -
                 last = exits - height[:, None] * leave
                 n = len(exits)
                 radii = np.full(n, radius)
-                first = start_corner(origin, heading, last, radii, np.full(n, extra * radius))
+                first = start_corner(origin, heading, last, radii, np.full(n, max(extra * radius, bend.start_mm)))
                 vertices = np.stack([np.broadcast_to(origin, exits.shape), first, last, exits], axis=1)
                 bundle = Bundle(make_paths(vertices, radii), carrier is not None, sites.face, sites.leave)
                 # Where there is no height to choose from, all levels are the same path.
@@ -169,7 +171,7 @@ def one_bend(
         for _ in range(3):
             out = _out_at(face, corners, leave, carrier)
             turn = np.minimum(turn_between_rad(np.broadcast_to(heading, out.shape), out), SHARPEST_TURN_RAD)
-            reach = (np.array(REACH_BENDS) + np.tan(0.5 * turn)) * radius + 1e-3
+            reach = np.maximum(np.array(REACH_BENDS) * radius, bend.start_mm) + np.tan(0.5 * turn) * radius + 1e-3
             corners = origin + reach[:, None] * heading
         bundle = _bent_once(start, blank, face, corners, radius, bend, leave, limits, carrier)
         if bundle is not None:

@@ -5,6 +5,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 from morph.body.blank import Blank
+from morph.body.cap import TAPER
 from morph.body.end import straight_run_mm
 from morph.body.end_fit import EndFits
 from morph.body.end_room import Land
@@ -100,4 +101,5 @@ def make_bend(ground: Ground, port: PortStart, bore_mm: float) -> Bend:
     """Returns the bends and straight ends of a lead of `bore_mm` from `port`."""
     radius = max(LEAST_BEND_BORES, ground.bend_bores) * bore_mm
     whole = port.straight_mm(bore_mm)
-    return Bend(radius * BEND_MARGIN, max(STRAIGHT_BORES * bore_mm, whole), bore_mm, whole)
+    start = max(port.bore_mm - BEND_MARGIN * bore_mm, 0.0) / TAPER
+    return Bend(radius * BEND_MARGIN, max(STRAIGHT_BORES * bore_mm, whole), bore_mm, whole, start)

@@ -29,7 +29,6 @@ SIDE_CELLS = 4
 CELL_STEPS = 0.75
 """Edge of the cells in which states are told apart, in steps."""
 
-MOST_STATES = 60_000
 BATCH = 3000
 OPEN_STEPS, FORGIVEN_MM = 2, 0.4
 """Steps from a port that must be possible, and the spare forgiven over them."""
@@ -122,16 +121,27 @@ class Lattice:
     Args:
         grid: room of the lead. least_way_mm: (i, j, k) least way to go.
         xyz_mm: (3,) start. headings: (n, 3) unit headings to start along. radius_mm: of every bend.
+        start_mm: straight start before the first bend.
+        most: states after which the search gives up.
     """
 
-    def __init__(self, grid: RoomGrid, least_way_mm: Floats, xyz_mm: Floats, headings: Floats, radius_mm: float):
-        self._grid, self._to_go, self._radius = grid, least_way_mm, radius_mm
+    def __init__(
+        self,
+        grid: RoomGrid,
+        least_way_mm: Floats,
+        xyz_mm: Floats,
+        headings: Floats,
+        radius_mm: float,
+        start_mm: float,
+        most: int,
+    ) -> None:
+        self._grid, self._to_go, self._radius, self._most = grid, least_way_mm, radius_mm, most
         self._whole = grid.whole()
         self.step_mm = STEP_RAD * radius_mm
         n = len(headings)
         nothing = np.full((n, 3), np.nan)
-        start = np.broadcast_to(xyz_mm, (n, 3)).copy()
-        self.states = States(start, headings, np.zeros(n), np.full(n, -1), nothing)
+        start = xyz_mm + start_mm * headings
+        self.states = States(start, headings, np.full(n, start_mm), np.full(n, -1), nothing)
         self._parts = [self.states]
         self._count = n
         size = np.array(grid.base.shape) * grid.step_mm / (CELL_STEPS * self.step_mm)
@@ -152,7 +162,7 @@ class Lattice:
                     self._parts = [self.states]
                 yield batch
                 self._expand(batch)
-                if self._count >= MOST_STATES:
+                if self._count >= self._most:
                     return
 
     def _put(self, states: States, numbers: Ints) -> None:

@@ -30,6 +30,10 @@ MOST_WAYS = 30
 """Batches of the lattice from which ways are handed out before the search gives up."""
 
 WAYS_AT_ONCE = 6
+
+MOST_STATES, FEWER_STATES = 60_000, 20_000
+"""States of the lattice before it gives up, for the least bore and for wider ones, which may still be thinned."""
+
 VIAS = 10
 """Points of a way between which straight lines are tried."""
 
@@ -72,7 +76,7 @@ class RoomSearch:
         field = make_lead_field(self._around, NECK * bend.bore_mm)
         port = self._port
         begin = np.array([heading for _, heading in headings])
-        return opens(field, np.broadcast_to(port.xyz_mm, begin.shape), begin, bend.radius_mm)
+        return opens(field, port.xyz_mm + bend.start_mm * begin, begin, bend.radius_mm)
 
     def reaches(self, places: Sequence[Sites], bend: Bend) -> bool:
         """Returns whether the port is joined to a way out by free room, bends aside."""
@@ -113,7 +117,8 @@ class RoomSearch:
         grid, port = room[0], self._port
         given = places[0] if port.settings.exit_mm is not None else None
         start = np.array([heading for _, heading in headings])
-        lattice = Lattice(grid, room[1], port.xyz_mm, start, bend.radius_mm)
+        most = MOST_STATES if bend.bore_mm <= self._ground.limits.least_bore_mm else FEWER_STATES
+        lattice = Lattice(grid, room[1], port.xyz_mm, start, bend.radius_mm, bend.start_mm, most)
         handed = 0
         for batch in lattice.batches():
             bundles: list[Bundle] = []
@@ -277,7 +282,7 @@ def _straightened(
         between = vias[chosen]
         n = len(chosen)
         radii = np.full(n, bend.radius_mm)
-        first = start_corner(port.xyz_mm, heading, between[:, 0], radii, np.zeros(n))
+        first = start_corner(port.xyz_mm, heading, between[:, 0], radii, np.full(n, bend.start_mm))
         last = start_corner(exit_mm, -leave, between[:, -1], radii, np.full(n, bend.straight_mm))
         ends = [np.broadcast_to(point, (n, 1, 3)) for point in (port.xyz_mm, exit_mm)]
         vertices = np.concatenate([ends[0], first[:, None], between, last[:, None], ends[1]], axis=1)

@@ -56,7 +56,14 @@ KINKS_RAD = (np.radians(45.0), np.radians(90.0))
 """Starts turned from the channel's direction into the metal, when a smooth start has no way."""
 
 
-def find_lead(around: Surroundings, ground: Ground, port: PortStart, progress: Progress) -> Lead:
+def find_lead(
+    around: Surroundings,
+    ground: Ground,
+    port: PortStart,
+    progress: Progress,
+    searches: Sequence[tuple[bool, bool, float]] = SEARCHES,
+    within: tuple[Floats, float] | None = None,
+) -> Lead:
     """Returns the lead of one port.
 
     Args:
@@ -64,24 +71,26 @@ def find_lead(around: Surroundings, ground: Ground, port: PortStart, progress: P
         ground: body, carrier and limits.
         port: where it starts.
         progress: told before each search.
+        searches: what to try (see SEARCHES).
+        within: only exits this near to a place count: the place (3,) and the distance in mm.
 
     Raises:
         Blocked: no way was found. SettingError, GeometryError: a given exit or direction is impossible.
     """
     best: tuple[Judged, str] | None = None
     opening = Finish(PLAIN.detail, land_mm=port.bore_mm)
-    fits = EndFits(around, ground.limits, ground.lands, port.settings.name, port.finishes, opening)
+    fits = EndFits(around, ground.limits, ground.lands, port.settings.name, port.finishes, opening, within)
     room = RoomSearch(around, ground, port, fits)
     tried: set[tuple[bool, bool, float]] = set()
-    for done, (kinked, through_room, share) in enumerate(SEARCHES):
-        progress.step(f"lead of {port.settings.name}", done, len(SEARCHES))
+    for done, (kinked, through_room, share) in enumerate(searches):
+        progress.step(f"lead of {port.settings.name}", done, len(searches))
         bore = max(share * port.bore_mm, min(ground.limits.least_bore_mm, port.bore_mm))
         headings = _headings(port, kinked)
         if not headings or (kinked, through_room, bore) in tried:
             continue
         tried.add((kinked, through_room, bore))
         bend = make_bend(ground, port, bore)
-        places = _places(ground, port, bend, fits)
+        places = _places(ground, port, bend, fits, port.xyz_mm if within is None else within[0])
         if len(tried) > 1 and not (room.starts_open(headings, bend) and room.reaches(places, bend)):
             continue
         if through_room:
@@ -108,15 +117,18 @@ def _headings(port: PortStart, kinked: bool) -> list[tuple[float, Floats]]:
     return [(float(turn), np.cos(turn) * ahead + np.sin(turn) * across) for turn in KINKS_RAD]
 
 
-def _places(ground: Ground, port: PortStart, bend: Bend, fits: EndFits) -> list[Sites]:
-    """Returns where the lead may come out: the exit that the job gives, else sites on every port face."""
+def _places(ground: Ground, port: PortStart, bend: Bend, fits: EndFits, centre_mm: Floats) -> list[Sites]:
+    """Returns where the lead may come out: the exit that the job gives, else sites on every port face.
+
+    These are densest around `centre_mm (3,)`.
+    """
     if port.settings.exit_mm is not None:
         given = given_exit(ground.blank, port.settings, ground.limits.least_bore_mm, ground.limits)
         fits.require(given.face, given.xyz_mm[0], port.straight_mm(bend.bore_mm))
         return [given]
     leave = given_leave(port.settings)
     every = [
-        list_sites(ground.blank, face, port.xyz_mm, bend.bore_mm, leave, ground.limits)
+        list_sites(ground.blank, face, centre_mm, bend.bore_mm, leave, ground.limits)
         for face in port_faces(ground.blank)
     ]
     return [fits.only(sites) for sites in every]

@@ -161,10 +161,12 @@ def _fence(rng: np.random.Generator, scene: Scene) -> tuple[HoleSettings, ...]:
             way = np.array([[np.cos(turn), -np.sin(turn)], [np.sin(turn), np.cos(turn)]]) @ ahead
             place = (sheet + away * way)[None, :]
             inward = carrier.into_metal(place)[0]
-            at = carrier.point_mm(place, 0.0)[0] - 400.0 * inward * 0.0
-            found.append(HoleSettings(tuple(at - 0.5 * inward), tuple(inward), size, depth_mm=float(rng.uniform(14, 45))))
+            at = carrier.point_mm(place, 0.0)[0]
+            found.append(
+                HoleSettings(tuple(at - 0.5 * inward), tuple(inward), size, depth_mm=float(rng.uniform(14, 45)))
+            )
     clear = np.concatenate([branch.xyz_mm for branch in scene.wrapped.branches])
-    far = [hole for hole in found if _off_line(hole, clear) > 6.0 + 0.5 * hole.diameter_mm]
+    far = [hole for hole in found if _off_line(hole, clear) > 6.6 + 0.5 * hole.diameter_mm]
     return _in_body(scene, far)
 
 
