@@ -105,7 +105,7 @@ class _Samples:
     """The centreline samples of all branches, exits and their overshoot included; arrays by sample.
 
     `first (b + 1,)` first sample of each branch, `reach_mm (k,)` of the section, `slack_mm (k,)` how far along the
-    branch the ball that makes a ring's wall may lie from the ring, `overhang_mm (k,)` how far behind it where the channel
+    branch the ball that makes a wall may lie from its ring, `overhang_mm (k,)` how far behind it where the channel
     climbs, `spacing_mm (k,)` to the farther neighbour.
     """
 
