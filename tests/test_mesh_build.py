@@ -138,9 +138,11 @@ def fronts(folder):
     step_front(folder / "front.step")
     blank = 'kind = "mesh"\nfile = "front.{}"\nport_faces = ["back", "top"]\nstock_mm = {{ back = 0.5 }}\n'
     ports = JOB.replace("at_mm = [10.0, 0.0]", "at_mm = [10.0, 0.0]\nexit_mm = [30.0, 0.0, 45.0]")
+    ports = ports.replace("at_mm = [50.0, 0.0]", 'at_mm = [50.0, 0.0]\nend = "thread"\nthread = "G1/8"')
+    hole = "[[hole]]\nat_mm = [25.0, -25.0, 40.0]\naxis = [0, 0, -1]\ndiameter_mm = 6.0\n"
     found = {}
     for kind in ("stl", "3mf", "step"):
-        (folder / "front.toml").write_text(ports.format(radius_mm=60.0) + blank.format(kind))
+        (folder / "front.toml").write_text(ports.format(radius_mm=60.0) + blank.format(kind) + hole)
         found[kind] = morph.build(folder / "front.toml")
     return found
 
@@ -153,6 +155,9 @@ def test_leads_come_out_of_the_back_and_of_the_boss(fronts, kind):
     np.testing.assert_allclose(top, [30.0, 0.0, 45.0], atol=0.02)
     assert back[0] == pytest.approx(-0.5, abs=1e-3)  # on the stock
     assert result.records.finished is not None
+    assert result.records.blank.holes[0].length_mm == pytest.approx(60.0, abs=1e-3)
+    back_exit = next(one for one in result.records.plan.exits if one.port == "return")
+    assert back_exit.face == "back" and back_exit.finish.cut_depth_mm > 0.0  # a thread square into a flat end
     assert any(notice.code == "mesh-blank" and f"front.{kind}" in notice.text for notice in result.notices)
 
 

@@ -45,9 +45,12 @@ class FlatRegion:
 
 def hull_planes(mesh: Mesh) -> Floats:
     """Returns the planes (k, 5) of the convex hull: unit normal outwards, offset (n x = offset), and area in mm2."""
-    from scipy.spatial import ConvexHull
+    from scipy.spatial import ConvexHull, QhullError
 
-    hull = ConvexHull(mesh.vertices_mm)
+    try:
+        hull = ConvexHull(mesh.vertices_mm)
+    except QhullError:  # a body so thin that it has no hull in double precision has no ends either
+        return np.empty((0, 5))
     corner = mesh.vertices_mm[hull.simplices]
     area = 0.5 * np.linalg.norm(np.cross(corner[:, 1] - corner[:, 0], corner[:, 2] - corner[:, 0]), axis=1)
     plane, inverse = np.unique(np.round(hull.equations, 9), axis=0, return_inverse=True)

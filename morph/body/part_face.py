@@ -21,6 +21,9 @@ from morph.surface.make import RoundCarrier
 ON_CARRIER_MM = 0.1
 """Skin this near to the carrier is the carrier: exported meshes have chords up to this (common practice, no source)."""
 
+MOST_CHORD_MM = 5.0
+"""Facets that leave the carrier by more than this are no coarse export of it but another shape."""
+
 STEP_MM = 1.0
 MOST_STEPS = 256
 ALL_OVER = 0.9
@@ -73,7 +76,10 @@ def require_part_face(
         worst = float(distance.max())
         return PartFace(worst, float(outside.mean()), len(places))
     _require_right_side(mesh, triangle, distance, endless, places, file)
-    raise _mismatch(tree, distance, wrong, endless, sheet, places, file)
+    corners = mesh.vertices_mm[mesh.triangles[triangle]]
+    touching = np.abs(endless.distance_mm(corners.reshape(-1, 3)).reshape(-1, 3)) <= ON_CARRIER_MM
+    coarse = bool((touching.all(axis=1) | ~wrong).all()) and float(distance.max()) < MOST_CHORD_MM
+    raise _mismatch(tree, distance, wrong, coarse, endless, sheet, places, file)
 
 
 def _require_right_side(
@@ -102,6 +108,7 @@ def _mismatch(
     tree: TriangleTree,
     distance: Floats,
     wrong: Bools,
+    coarse: bool,
     endless: Face,
     sheet: Floats,
     places: Floats,
@@ -127,7 +134,9 @@ def _mismatch(
         found=f"{lies}; {int(wrong.sum())} of {len(places)} places are off",
         where=f"{file.source} at ({x:.3f}, {y:.3f}, {z:.3f}) mm, sheet place ({sheet[worst, 0]:.2f}, "
         f"{sheet[worst, 1]:.2f}) mm",
-        do=_remedy(tree, along, endless, places, file),
+        do="Its points lie on the carrier, its facets cut across: export it with a chord of 0.05 mm or finer."
+        if coarse
+        else _remedy(tree, along, endless, places, file),
     )
 
 

@@ -8,10 +8,12 @@ are counted before any is made. Source of the rules: 3MF Core Specification 1.3,
 from __future__ import annotations
 
 import io
+import lzma
+import struct
 import zipfile
 import zlib
 from array import array
-from collections.abc import Callable
+from collections.abc import Callable, Iterator
 from dataclasses import dataclass, field
 from xml.parsers import expat
 
@@ -39,6 +41,12 @@ DEEPEST = 64
 READ_BYTES = 1 << 20
 UNITS = {"micron": "micron", "millimeter": "mm", "centimeter": "cm", "inch": "inch", "foot": "foot", "meter": "m"}
 
+_ZIP_FAULTS = (
+    *(zipfile.BadZipFile, zlib.error, lzma.LZMAError, struct.error),
+    *(EOFError, NotImplementedError, RuntimeError, ValueError, OSError),
+)
+"""What the archive reader raises on damaged, encrypted or oddly packed entries."""
+
 Placed = tuple[str, Floats]
 """An object's id and its transform (4, 3): rows x, y, z, shift, for points as rows."""
 
@@ -65,12 +73,11 @@ def read_3mf(content: bytes, name: str) -> Soup:
             `mesh-unpacks-too-large`, `mesh-3mf-extension`.
     """
     try:
-        with zipfile.ZipFile(io.BytesIO(content)) as archive:
-            return _read(archive, name)
-    except zipfile.BadZipFile as error:
+        archive = zipfile.ZipFile(io.BytesIO(content))
+    except _ZIP_FAULTS as error:
         raise not_its_format(name, "a 3MF package (a ZIP archive)", str(error)[:80].lower()) from None
-    except (zlib.error, EOFError, NotImplementedError, RuntimeError, UnicodeError) as error:
-        raise damaged(name, "a package that unpacks", str(error)[:80] or type(error).__name__) from None
+    with archive:
+        return _read(archive, name)
 
 
 def _read(archive: zipfile.ZipFile, name: str) -> Soup:
@@ -134,15 +141,30 @@ def _parse(
     parser.StartElementHandler = start
     taken = 0
     try:
-        with archive.open(entry) as stream:
-            while block := stream.read(READ_BYTES):
-                taken += len(block)
-                if taken > most_bytes:
-                    raise _too_large(name, f"more than {most_bytes / 1e6:.0f} MB")
-                parser.Parse(block, False)
+        for block in _blocks(archive, entry, name):
+            taken += len(block)
+            if taken > most_bytes:
+                raise _too_large(name, f"more than {most_bytes / 1e6:.0f} MB")
+            parser.Parse(block, False)
         parser.Parse(b"", True)
     except expat.ExpatError as error:
         raise damaged(name, "well-formed XML in its model", str(error)[:80]) from None
+
+
+def _mirrors(transform: Floats) -> bool:
+    """Returns whether a transform (4, 3) turns a body into its mirror image."""
+    with np.errstate(over="ignore", invalid="ignore"):
+        return bool(np.cross(transform[0], transform[1]) @ transform[2] < 0.0)
+
+
+def _blocks(archive: zipfile.ZipFile, entry: str, name: str) -> Iterator[bytes]:
+    """Yields the unpacked bytes of an entry."""
+    try:
+        with archive.open(entry) as stream:
+            while block := stream.read(READ_BYTES):
+                yield block
+    except _ZIP_FAULTS as error:
+        raise damaged(name, "a package that unpacks", str(error)[:80] or type(error).__name__) from None
 
 
 class _Model:
@@ -281,9 +303,11 @@ class _Model:
         triangles = np.array(own.triangles, dtype=np.int64).reshape(-1, 3)
         require_indices(triangles, len(points), self._name)
         if len(triangles):
-            if float(np.linalg.det(transform[:3])) < 0.0:
+            if _mirrors(transform):
                 triangles = triangles[:, ::-1]
-            parts.append((np.einsum("ij,jk->ik", points, transform[:3]) + transform[3], triangles))
+            with np.errstate(over="ignore", invalid="ignore"):  # sizes beyond any body are refused later
+                parts.append((np.einsum("ij,jk->ik", points, transform[:3]) + transform[3], triangles))
         for part, inner in own.components:
-            placed = np.vstack([inner[:3] @ transform[:3], inner[3] @ transform[:3] + transform[3]])
+            with np.errstate(over="ignore", invalid="ignore"):
+                placed = np.vstack([inner[:3] @ transform[:3], inner[3] @ transform[:3] + transform[3]])
             self._collect(part, placed, parts)

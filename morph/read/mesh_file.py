@@ -113,8 +113,10 @@ def read_mesh(path: Path, unit: LengthUnit | None = None) -> MeshFile:
         raise without_triangles(path.name)
     _require_finite(soup, path.name)
     used, source = _settle_unit(soup, unit, path.name)
-    points = soup.points * MM_PER_UNIT[used]
-    _require_size(points[soup.triangles.reshape(-1)], used, source, path.name)
+    with np.errstate(over="ignore"):  # a size of inf is too large as well
+        points = soup.points * MM_PER_UNIT[used]
+        size = np.ptp(points[soup.triangles.reshape(-1)], axis=0)
+    _require_size(size, used, source, path.name)
     mesh, dropped = weld(points, soup.triangles)
     if len(mesh.triangles) == 0:
         raise without_triangles(path.name)
@@ -206,13 +208,12 @@ def _settle_unit(soup: Soup, unit: LengthUnit | None, name: str) -> tuple[Length
     return own, "file"
 
 
-def _require_size(corners_mm: Floats, unit: LengthUnit, source: str, name: str) -> None:
+def _require_size(size_mm: Floats, unit: LengthUnit, source: str, name: str) -> None:
     """Raises `mesh-unit-doubtful` or `mesh-too-large` for a body no insert has the size of."""
-    size = np.ptp(corners_mm, axis=0)
-    largest = float(size.max())
+    largest = float(size_mm.max())
     if SMALLEST_MM <= largest <= LARGEST_MM or (source != "size" and 0.0 < largest <= LARGEST_MM):
         return
-    found = " x ".join(f"{v:.6g}" for v in size) + f" mm, read as {unit}"
+    found = " x ".join(f"{v:.6g}" for v in size_mm) + f" mm, read as {unit}"
     if largest > LARGEST_MM:
         raise InputError(
             "mesh-too-large",

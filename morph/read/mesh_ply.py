@@ -217,7 +217,8 @@ class _Binary:
             raise truncated(self._name, "all rows the header announces", f"the end after {len(self._content)} bytes")
         rows = np.frombuffer(self._content, kind, element.count, self._at)
         self._at += kind.itemsize * element.count
-        return np.column_stack([rows[field].astype(np.float64) for field in kind.names or ()])
+        with np.errstate(invalid="ignore"):  # what is no number is refused later, by name
+            return np.column_stack([rows[field].astype(np.float64) for field in kind.names or ()])
 
 
 def _points(rows: _Text | _Binary, element: _Element, name: str) -> Floats:

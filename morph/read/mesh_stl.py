@@ -61,7 +61,8 @@ def _soup(corners: Floats) -> Soup:
 
 def _binary(content: bytes, count: int) -> Floats:
     rows = np.frombuffer(content, dtype=np.uint8, offset=HEAD_BYTES).reshape(count, FACET_BYTES)
-    return np.ascontiguousarray(rows[:, 12:48]).view("<f4").astype(np.float64)
+    with np.errstate(invalid="ignore"):  # what is no number is refused later, by name
+        return np.ascontiguousarray(rows[:, 12:48]).view("<f4").astype(np.float64)
 
 
 def _ascii(content: bytes, name: str) -> Floats:

@@ -33,7 +33,8 @@ def fan_polygons(points: Floats, polygons: list[list[int]], name: str) -> Ints:
         if len(polygon) == 3:
             out.append((polygon[0], polygon[1], polygon[2]))
             continue
-        start = _fan_start(points[polygon])
+        with np.errstate(over="ignore", invalid="ignore"):  # sizes beyond any body are refused later
+            start = _fan_start(points[polygon])
         if start is None:
             raise InputError(
                 "mesh-polygon",

@@ -56,15 +56,19 @@ def read_step(content: bytes, name: str) -> Soup:
             do="Export the one body alone, without assembly, drawings and product data.",
         )
     if importlib.util.find_spec("OCP") is None:
-        raise InputError(
-            "step-reader-missing",
-            expected="the geometry kernel that reads STEP",
-            found="it is not installed",
-            where=name,
-            do="Install it with: pip install 'morph-channels[step]'; or export the body as 3MF or STL.",
-        )
+        raise _missing(name, "it is not installed")
     with tempfile.TemporaryDirectory(prefix="morph-step-") as folder:
         return _work(content, Path(folder), name)
+
+
+def _missing(name: str, found: str) -> InputError:
+    return InputError(
+        "step-reader-missing",
+        expected="the geometry kernel that reads STEP",
+        found=found,
+        where=name,
+        do="Install it with: pip install 'morph-channels[step]'; or export the body as 3MF or STL.",
+    )
 
 
 def _work(content: bytes, folder: Path, name: str) -> Soup:
@@ -83,6 +87,8 @@ def _work(content: bytes, folder: Path, name: str) -> Soup:
         )
     except subprocess.TimeoutExpired:
         raise damaged(name, f"a file the kernel reads within {LONGEST_SECONDS:.0f} s", "a longer time") from None
+    if done.returncode == MISSING:
+        raise _missing(name, "an installed one that does not load")
     if done.returncode == NO_SOLID:
         raise InputError(
             "mesh-no-triangles",

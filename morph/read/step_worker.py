@@ -11,16 +11,19 @@ from typing import Any
 
 import numpy as np
 
-from morph.read.step_shape import NO_SOLID, TOO_MANY, UNREADABLE
+from morph.read.step_shape import MISSING, NO_SOLID, TOO_MANY, UNREADABLE
 
 
 def main(arguments: list[str]) -> int:
     """Reads, meshes and writes; returns the exit status."""
     source, target, chord, angle, most, memory = arguments
     _limit_memory(int(memory))
-    from OCP.BRepMesh import BRepMesh_IncrementalMesh
-    from OCP.IFSelect import IFSelect_RetDone
-    from OCP.STEPControl import STEPControl_Reader
+    try:
+        from OCP.BRepMesh import BRepMesh_IncrementalMesh
+        from OCP.IFSelect import IFSelect_RetDone
+        from OCP.STEPControl import STEPControl_Reader
+    except ImportError:
+        return MISSING
 
     reader = STEPControl_Reader()
     if reader.ReadFile(source) != IFSelect_RetDone or reader.TransferRoots() == 0:

@@ -164,6 +164,12 @@ def test_another_unit_is_recognised(folder):
     assert blank.z_mm == pytest.approx((-40.0, 40.0), abs=1e-4)
 
 
+def test_a_coarse_export_of_the_right_shape_is_told_as_such(folder):
+    body = mesh_bodies.rod(40.0, -40, 40, chord_mm=0.4)
+    error = refused("part-face-mismatch", folder, body, carrier_of(40.0))
+    assert "chord" in error.do and "inside the carrier" in error.found
+
+
 def test_metal_on_the_other_side(folder):
     refused("part-face-other-side", folder, mesh_bodies.rod(40.0, -40, 40), carrier_of(40.0, Metal.AWAY_FROM_AXIS))
 

@@ -61,6 +61,8 @@ CASES = {
     "curve.obj": (b"cstype bezier\n", "mesh-not-its-format"),
     "text.obj": (b"Dear customer\n", "mesh-not-its-format"),
     "star.obj": (bodies.obj_text([[0, 1, 2, 3, 4]], PENTAGRAM), "mesh-polygon"),
+    "far.obj": (bodies.obj_text(points=bodies.BOX_POINTS * 1e200), "mesh-too-large"),
+    "signal.stl": (BOX[:96] + b"\x01\x00\xa0\x7f" + BOX[100:], "mesh-not-finite"),
     "none.obj": (b"v 0 0 0\n", "mesh-no-triangles"),
     "text.ply": (b"ply of cards", "mesh-not-its-format"),
     "cut.ply": (PLY[:-3], "mesh-truncated"),
@@ -113,6 +115,19 @@ def test_zip_bombs_are_refused_by_what_they_would_unpack_to(tmp_path, monkeypatc
     content = bodies.package(bodies.model_xml(" " * (8 << 20)))
     assert len(content) < 20_000
     refused(tmp_path, "bomb.3mf", content, "mesh-unpacks-too-large")
+
+
+def test_an_archive_that_points_before_its_start(tmp_path):
+    content = bytearray(bodies.package())
+    end = content.rfind(b"PK\x05\x06")
+    struct.pack_into("<I", content, end + 16, struct.unpack_from("<I", content, end + 16)[0] + 5000)
+    refused(tmp_path, "a.3mf", bytes(content), "mesh-damaged")
+    for place in (6, 8):  # flags of the first entry: encrypted, and a method of packing nobody knows
+        content = bytearray(bodies.package())
+        centre = content.find(b"PK\x01\x02")
+        content[centre + place + 2] |= 1
+        content[place] |= 1
+        refused(tmp_path, "a.3mf", bytes(content), "mesh-damaged")
 
 
 def test_components_that_double_are_counted_before_they_are_made(tmp_path):

@@ -1,6 +1,7 @@
 """STEP through the geometry kernel of the extra: exact volumes, units, and what is no solid."""
 
 import math
+import os
 
 import pytest
 
@@ -88,3 +89,13 @@ def test_without_the_extra_the_cure_is_named(tmp_path, monkeypatch):
     with pytest.raises(MorphError) as caught:
         read_mesh(path)
     assert caught.value.code == "step-reader-missing" and "[step]" in caught.value.do
+
+
+def test_a_kernel_that_does_not_load_is_told_as_such(tmp_path, monkeypatch):
+    path = write_step(tmp_path / "a.step", cylinder())
+    (tmp_path / "broken" / "OCP").mkdir(parents=True)
+    (tmp_path / "broken" / "OCP" / "__init__.py").write_text("raise ImportError('libGL.so.1')")
+    monkeypatch.setenv("PYTHONPATH", str(tmp_path / "broken"), prepend=os.pathsep)
+    with pytest.raises(MorphError) as caught:
+        read_mesh(path)
+    assert caught.value.code == "step-reader-missing" and "does not load" in caught.value.found
