@@ -61,7 +61,7 @@ def apply_choices(
     """
     wanted, cut = set(bridges), set(trims)
     _require_known(graph, wanted, cut)
-    web, joint_of, kept = _web_of(graph)
+    web, joint_of, kept = web_of(graph)
     done = []
     for bridge in graph.bridges:
         if bridge.id in wanted:
@@ -117,7 +117,7 @@ def _require_known(graph: ChannelGraph, wanted: set[str], cut: set[str]) -> None
             )
 
 
-def _web_of(graph: ChannelGraph) -> tuple[Web, dict[str, int], dict[int, Branch]]:
+def web_of(graph: ChannelGraph) -> tuple[Web, dict[str, int], dict[int, Branch]]:
     """Returns the graph as a web, the joint of each node, and the branch of each run."""
     web, joint_of, kept = Web(), {}, {}
     branches = graph.branches + graph.loose_branches

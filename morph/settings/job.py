@@ -66,6 +66,14 @@ class MirrorAt(StrEnum):
     TOP = "top"
 
 
+class WideRule(StrEnum):
+    """What becomes of stretches wider than any legal bore."""
+
+    CAP = "cap"
+    SPLIT = "split"
+    ERROR = "error"
+
+
 @dataclass(frozen=True, slots=True)
 class LayoutSettings:
     """The [layout] table; `level` is a LevelRule or a number in (0, 1), `image` an absolute path.
@@ -86,6 +94,7 @@ class LayoutSettings:
     mirror_at: MirrorAt = MirrorAt.NONE
     crop_mm: tuple[float, float, float, float] | None = None
     pixel_mm: float | None = None
+    wide: WideRule = WideRule.CAP
 
     @property
     def sheet_mm(self) -> tuple[float, float]:

@@ -19,6 +19,7 @@ from morph.settings.job import (
     Samples,
     Seam,
     SeenFrom,
+    WideRule,
 )
 from morph.settings.parse_end import END_KEYS, parse_end
 from morph.settings.table import Table, show
@@ -46,6 +47,7 @@ _LAYOUT_KEYS = (
     "mirror_at",
     "crop_mm",
     "pixel_mm",
+    "wide",
 )
 _PORT_KEYS = ("name", "role", "at_mm", "exit_mm", "leave", *END_KEYS)
 
@@ -86,6 +88,7 @@ def parse_layout(values: Any, file: str, folder: Path) -> LayoutSettings:
         mirror_at=table.choice("mirror_at", MirrorAt, MirrorAt.NONE),
         crop_mm=_crop(table, (width_mm, height_mm)) if table.has("crop_mm") else None,
         pixel_mm=_pixel(table, image),
+        wide=table.choice("wide", WideRule, WideRule.CAP),
     )
 
 
