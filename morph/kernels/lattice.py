@@ -56,11 +56,18 @@ def _relaxed(
 def return_links(
     first: int, last: int, state: Singles, n_cells: int, link_place: Indices, link_factor: Singles
 ) -> None:
-    """Fills what comes back over links first..last - 1 into the end of `state`."""
+    """Fills what comes back over links first..last - 1 into the end of `state`; once between two steps.
+
+    Interpolated walls give back a little more or less than went out. The rest population of the cell takes the
+    difference, so that no wall feeds or drains the flow.
+    """
     for k in range(first, last):
         out = state[link_place[k, 0]]
         slope = state[link_place[k, 1]] - state[link_place[k, 2]]
-        state[19 * n_cells + k] = link_factor[k, 0] * out + link_factor[k, 1] * slope + link_factor[k, 2]
+        back = link_factor[k, 0] * out + link_factor[k, 1] * slope + link_factor[k, 2]
+        state[19 * n_cells + k] = back
+        if link_factor[k, 0] > 0.0:
+            state[19 * (link_place[k, 0] // 19)] -= back - out
 
 
 @njit(cache=True, nogil=True, error_model="numpy")

@@ -30,9 +30,9 @@ def test_straight_tube_at_twelve_cells_per_bore(direction):
     mesh, plan = tubes.straight(direction, 40.0, BORE)
     found = solve_channel_flow(mesh, plan, 12.0)
     assert found.total_mm3 == pytest.approx(poiseuille_mm3(40.0), rel=0.015)
-    assert abs(found.imbalance) < 5e-3
-    assert found.share["L-out"] == pytest.approx(1.0, abs=5e-3)
-    assert found.share["L-in"] == pytest.approx(-1.0, abs=5e-3)
+    assert abs(found.imbalance) < 5e-4
+    assert found.share["L-out"] == pytest.approx(1.0, abs=5e-4)
+    assert found.share["L-in"] == pytest.approx(-1.0, abs=5e-4)
     assert found.port_mm3[0] > 0.0 > found.port_mm3[1]
 
 
@@ -68,7 +68,7 @@ def test_flow_is_the_same_whichever_way_and_wherever_the_part_lies():
     one = solve_channel_flow(mesh, plan, 8.0)
     back = solve_channel_flow(mesh, tubes.with_roles(plan, "out", "in"), 8.0)
     assert back.total_mm3 == pytest.approx(one.total_mm3, rel=2e-3)
-    assert back.share["L-out"] == pytest.approx(-one.share["L-out"], abs=5e-3)
+    assert back.share["L-out"] == pytest.approx(-one.share["L-out"], abs=5e-4)
 
 
 def test_a_tube_twice_as_large_lets_eight_times_as_much_through():
@@ -149,7 +149,7 @@ def test_a_lattice_that_would_not_fit_is_refused_before_it_is_made():
 
 def test_a_port_without_an_open_end_is_named():
     mesh, plan = tubes.straight((1, 0, 0), 24.0, BORE)
-    moved = replace(plan.exits[1], leave=np.array([0.0, 1.0, 0.0]))
+    moved = replace(plan.exits[1], xyz_mm=plan.exits[1].xyz_mm + np.array([0.0, 10.0, 0.0]))
     with pytest.raises(FlowError) as caught:
         solve_channel_flow(mesh, replace(plan, exits=(plan.exits[0], moved)), 8.0)
     assert caught.value.code == "lattice-no-opening" and "out" in caught.value.where
