@@ -12,8 +12,9 @@ from dataclasses import dataclass
 import numpy as np
 
 from morph.body.face import FaceRole, PlaneFace
-from morph.body.skin import ON_SKIN_MM, Skin
+from morph.body.skin import ON_SKIN_MM, WHOLE, Skin
 from morph.core.arrays import Floats
+from morph.core.tolerance import COINCIDE_MM
 
 MOST_STEPS = 30
 """Steps of a grid of places to either side of a port."""
@@ -38,14 +39,23 @@ class SkinFace:
     region: int
 
     def distance_mm(self, xyz_mm: Floats) -> Floats:
-        """Returns the distance (k,) of points (k, 3) from the region, positive in the metal of the body."""
+        """Returns the distance (k,) of points (k, 3) from the region, positive in the metal of the body.
+
+        Outside the body it is negative where the region is what the point has come out of, the skin nearest to it; a
+        point that has come out of another face is not far outside this one.
+        """
         distance, _, _ = self.skin.nearest(self.region, xyz_mm)
-        return np.where(self.skin.in_metal(xyz_mm), distance, -distance)
+        return self._sign(xyz_mm, distance) * distance
+
+    def _sign(self, xyz_mm: Floats, distance_mm: Floats) -> Floats:
+        least, _, _ = self.skin.nearest(WHOLE, xyz_mm)
+        behind = self.skin.in_metal(xyz_mm) | (distance_mm > least + COINCIDE_MM)
+        return np.where(behind, 1.0, -1.0)
 
     def outward(self, xyz_mm: Floats) -> Floats:
         """Returns the unit vectors (k, 3) out of the metal toward the nearest places; on the skin its normal."""
         distance, triangle, point = self.skin.nearest(self.region, xyz_mm)
-        sign = np.where(self.skin.in_metal(xyz_mm), 1.0, -1.0)
+        sign = self._sign(xyz_mm, distance)
         on = distance <= ON_SKIN_MM
         toward = sign[:, None] * (point - xyz_mm) / np.where(on, 1.0, distance)[:, None]
         corner = self.skin.mesh.vertices_mm[self.skin.mesh.triangles[triangle[on]]]

@@ -42,7 +42,7 @@ def test_distance_and_normal_of_a_box_are_exact(seed):
     np.testing.assert_allclose(box_distance(reached, half), 0.0, atol=1e-9)
 
 
-def test_distance_to_a_part_of_the_skin_has_the_sign_of_the_whole_body():
+def test_distance_to_a_part_of_the_skin_is_negative_only_where_a_point_came_out_of_it():
     half = np.array([20.0, 15.0, 10.0])
     body = mesh_bodies.block(-half, half)
     top = (body.face_normals[:, 2] > 0.5).astype(int)
@@ -50,12 +50,14 @@ def test_distance_to_a_part_of_the_skin_has_the_sign_of_the_whole_body():
     points = off_skin(np.random.default_rng(5).uniform(-30.0, 30.0, (4000, 3)), half)
     x, y = np.clip(points[:, 0], -20.0, 20.0), np.clip(points[:, 1], -15.0, 15.0)
     clipped = np.column_stack([x, y, np.full(len(points), 10.0)])
-    exact = np.linalg.norm(points - clipped, axis=1) * np.sign(box_distance(points, half))
+    whole = box_distance(points, half)
+    exact = np.linalg.norm(points - clipped, axis=1)
+    exact[(whole < 0.0) & (exact <= -whole + 1e-6)] *= -1.0
+    assert (exact[whole < 0.0] > 0.0).any() and (exact[whole < 0.0] < 0.0).any()
     np.testing.assert_allclose(face_of(skin, 1).distance_mm(points), exact, atol=1e-9)
-    # the least over the parts is the distance to the whole
+    # the least over the parts is the distance to the whole, inside and outside
     both = np.minimum(*(face_of(skin, k).distance_mm(points) for k in (0, 1)))
-    inside = exact > 0.0
-    np.testing.assert_allclose(both[inside], box_distance(points, half)[inside], atol=1e-9)
+    np.testing.assert_allclose(both, whole, atol=1e-9)
 
 
 def crumpled(seed):
