@@ -20,9 +20,12 @@ from morph.flow.solve import GridState, Law, solve_grid
 
 MOST_ROUNDS = 40
 MOST_HALVINGS = 8
-MOST_SETTLING = 400
-FIRST_INERTIA, LAST_INERTIA = 1.0, 1e-3
-"""Share of the stiffness of a pipe that damps its flow: where settling starts, and where Newton's method takes over."""
+MOST_SETTLING = 900
+INERTIA = (0.3, 1.0, 4.0)
+"""Share of the stiffness of a pipe that damps its flow, each for a third of the rounds."""
+
+TRY_AGAIN = 0.2
+"""Newton's method is tried whenever the unbalanced pressure has fallen to this share since the last try."""
 
 TOLERANCE = 1e-10
 BALANCED = 1e-7
@@ -171,17 +174,19 @@ def solve_coupled(
 def _settle(coupled: CoupledSystem, law: Law, fed: Floats, start: GridState) -> GridState | None:
     """Returns the solution the flows settle to when they have inertia, or None.
 
-    Implicit steps in time that grow as the unbalanced pressure falls (pseudo-transient continuation; C. T. Kelley,
-    D. E. Keyes, Convergence analysis of pseudo-transient continuation, SIAM J. Numer. Anal. 35 (1998) 508-523),
-    from the plain solution; Newton's method ends it.
+    Implicit steps in time (pseudo-transient continuation; C. T. Kelley, D. E. Keyes, Convergence analysis of
+    pseudo-transient continuation, SIAM J. Numer. Anal. 35 (1998) 508-523), from the plain solution; Newton's method
+    ends it.
     """
     system, grid = coupled.system, coupled.system.grid
     live, free = system.live, system.free
-    flow, pressure, inertia = start.flow.copy(), start.pressure.copy(), FIRST_INERTIA
+    flow, pressure = start.flow.copy(), start.pressure.copy()
     drop, slope = law.drop(flow)
     left = _unbalanced(grid, live, pressure, drop + coupled.coupling.drop(flow))
     row, _ = coupled.coupling.pattern()
+    tried = float(np.linalg.norm(left))
     for rounds in range(1, MOST_SETTLING + 1):
+        inertia = INERTIA[min(rounds * len(INERTIA) // MOST_SETTLING, len(INERTIA) - 1)]
         stiffness = slope + np.bincount(row, np.abs(coupled.coupling.slopes(flow)), len(flow))
         factor = coupled.factored(slope + inertia * stiffness, 1.0, flow)
         if factor is None:
@@ -190,18 +195,15 @@ def _settle(coupled: CoupledSystem, law: Law, fed: Floats, start: GridState) -> 
         flow = flow + np.where(live, move, 0.0)
         pressure[free] += lift
         drop, slope = law.drop(flow)
-        before = float(np.linalg.norm(left))
         left = _unbalanced(grid, live, pressure, drop + coupled.coupling.drop(flow))
         now = float(np.linalg.norm(left))
         if not np.isfinite(now):
             return None
-        inertia *= min(max(now / max(before, 1e-300), 0.3), 2.0)
-        if inertia < LAST_INERTIA or rounds % 25 == 0:
-            state = GridState(flow, pressure, start.reached, start.rounds + rounds)
-            found = _newton(coupled, law, fed, state, 1.0)
+        if now < TRY_AGAIN * tried:
+            tried = now
+            found = _newton(coupled, law, fed, GridState(flow, pressure, start.reached, start.rounds + rounds), 1.0)
             if found is not None:
                 return found
-            inertia = max(inertia, FIRST_INERTIA * 0.1)
     return None
 
 
