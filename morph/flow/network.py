@@ -11,6 +11,7 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
+from morph.body.flow_path import through_flow
 from morph.body.plan import BranchKind, ChannelPlan
 from morph.core.arrays import Bools, Floats, Ints, frozen_bools, frozen_ints
 from morph.core.errors import FlowError
@@ -39,7 +40,8 @@ class FlowNetwork:
         branch_ids: (m) ids of branches and leads, in the order of the plan. node_ids: (n) ids of nodes.
         start, end: (m,) node indices; flow is positive from start to end.
         is_channel, through: (m,) lies on the carrier; lies on a way from an in to an out port.
-        segments: the pipes. junctions: where they meet; legs without through-flow are left out.
+        segments: the pipes.
+        meetings: every node with the legs of all branches. junctions: those with two or more legs with through-flow.
         ports: in and out ports of supplied circuits, in the plan's order.
         n_supplies: number of supplies.
         hose: a hose in series with each in port, or None.
@@ -52,6 +54,7 @@ class FlowNetwork:
     is_channel: Bools
     through: Bools
     segments: Segments
+    meetings: Junctions
     junctions: Junctions
     ports: tuple[FlowPort, ...]
     n_supplies: int
@@ -72,17 +75,52 @@ class FlowNetwork:
         return len(self.branch_ids)
 
     def scaled(self, factor: Floats) -> FlowNetwork:
-        """Returns the network with the bores of each branch times factor (m,); lengths and bends stay.
+        """Returns the network with the bores of each branch times factor (m,); see `scaled_along`."""
+        return self.scaled_along(np.asarray(factor, dtype=np.float64)[self.segments.pipe])
+
+    def scaled_along(self, ratio: Floats) -> FlowNetwork:
+        """Returns the network with the bores of each segment times ratio (s,); lengths and bends stay.
 
         Exact for sections whose shape does not depend on the bore (all but auto while its roof fades).
         """
         part = self.segments
-        by_segment = np.asarray(factor, dtype=np.float64)[part.pipe]
-        area = part.area_m2 * by_segment**2
-        segments = replace(part, area_m2=area, diameter_m=part.diameter_m * by_segment)
-        legs = self.junctions
-        at_leg = np.where(legs.used, area[legs.segment], legs.area_m2)
-        return replace(self, segments=segments, junctions=replace(legs, area_m2=at_leg))
+        area = part.area_m2 * ratio**2
+        segments = replace(part, area_m2=area, diameter_m=part.diameter_m * ratio)
+        return replace(
+            self,
+            segments=segments,
+            meetings=_with_areas(self.meetings, area),
+            junctions=_with_areas(self.junctions, area),
+        )
+
+    def opened(self, ports: tuple[FlowPort, ...], blocked: int | None = None) -> FlowNetwork:
+        """Returns the network without hoses with other ports open, and one branch closed.
+
+        Args:
+            ports: what is open, by supplies from 0; ports left out are plugged.
+            blocked: index of the branch that lets nothing through, or None.
+        """
+        start, end = self.start.copy(), self.end.copy()
+        n = len(self.node_ids)
+        names = self.node_ids
+        if blocked is not None:
+            start[blocked] = end[blocked] = n  # a node of its own, that nothing reaches
+            names = (*names, "blocked")
+        ends = list(zip(start.tolist(), end.tolist(), strict=True))
+        sources = [port.node for port in ports if port.role is Role.IN]
+        sinks = [port.node for port in ports if port.role is Role.OUT]
+        through = through_flow(len(names), ends, sources, sinks)
+        return replace(
+            self,
+            node_ids=names,
+            start=start,
+            end=end,
+            through=through,
+            junctions=kept_legs(self.meetings, through),
+            ports=ports,
+            n_supplies=max(port.supply for port in ports) + 1,
+            hose=None,
+        )
 
 
 def make_network(
@@ -119,6 +157,7 @@ def make_network(
     segments = join_segments(rows)
     through = np.array([branch.through_flow for branch in plan.branches], dtype=np.bool_)
     ports, n_supplies = _ports(plan, index, coolant.supply)
+    meetings = _meetings(plan, start, end, segments)
     return FlowNetwork(
         branch_ids=tuple(branch.id for branch in plan.branches),
         node_ids=tuple(node.id for node in plan.nodes),
@@ -127,7 +166,8 @@ def make_network(
         is_channel=np.array([branch.kind is BranchKind.CHANNEL for branch in plan.branches], dtype=np.bool_),
         through=through,
         segments=segments,
-        junctions=_junctions(plan, start, end, through, segments),
+        meetings=meetings,
+        junctions=kept_legs(meetings, through),
         ports=ports,
         n_supplies=n_supplies,
         hose=_hose(coolant.hose_mm),
@@ -176,14 +216,26 @@ def _ports(plan: ChannelPlan, index: dict[str, int], supply: Supply) -> tuple[tu
     return ports, max(number.values()) + 1
 
 
-def _junctions(plan: ChannelPlan, start: Ints, end: Ints, through: Bools, segments: Segments) -> Junctions:
-    """Returns the nodes where two or more branches with through-flow meet."""
+def _with_areas(legs: Junctions, area_m2: Floats) -> Junctions:
+    return replace(legs, area_m2=np.where(legs.used, area_m2[legs.segment], legs.area_m2))
+
+
+def _meetings(plan: ChannelPlan, start: Ints, end: Ints, segments: Segments) -> Junctions:
+    """Returns every node with the legs of all branches."""
     legs: dict[int, list[tuple[int, float, Floats, int]]] = {}
-    for e in np.flatnonzero(through):
-        branch, first, last = plan.branches[e], int(segments.first[e]), int(segments.first[e + 1]) - 1
-        legs.setdefault(int(start[e]), []).append((int(e), -1.0, _heading(branch.xyz_mm, branch.bore_mm[0]), first))
-        legs.setdefault(int(end[e]), []).append((int(e), 1.0, _heading(branch.xyz_mm[::-1], branch.bore_mm[-1]), last))
-    return pad_junctions({node: rows for node, rows in sorted(legs.items()) if len(rows) > 1}, segments.area_m2)
+    for e, branch in enumerate(plan.branches):
+        first, last = int(segments.first[e]), int(segments.first[e + 1]) - 1
+        legs.setdefault(int(start[e]), []).append((e, -1.0, _heading(branch.xyz_mm, branch.bore_mm[0]), first))
+        legs.setdefault(int(end[e]), []).append((e, 1.0, _heading(branch.xyz_mm[::-1], branch.bore_mm[-1]), last))
+    return pad_junctions(dict(sorted(legs.items())), segments.area_m2)
+
+
+def kept_legs(meetings: Junctions, through: Bools) -> Junctions:
+    """Returns the nodes where two or more branches with through-flow (m,) meet, other legs left out."""
+    used = meetings.used & through[meetings.pipe]
+    kept = used.sum(axis=1) > 1
+    parts = {name: getattr(meetings, name)[kept] for name in Junctions.__slots__ if name != "used"}
+    return Junctions(used=used[kept], **parts)
 
 
 def pad_junctions(legs: dict[int, list[tuple[int, float, Floats, int]]], area_m2: Floats) -> Junctions:
