@@ -8,19 +8,21 @@ from __future__ import annotations
 
 import sys
 import time
-from collections.abc import Iterator
+from collections.abc import Iterator, Mapping
 from contextlib import contextmanager
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 from morph.core.progress import SILENT, Progress
 from morph.core.verdict import Notice, Outcome, Verdict, sort_verdicts, worst_outcome
-from morph.settings.job import Job
+from morph.settings.job import Balance, Job
 
 if TYPE_CHECKING:
     from morph.body.blank import Blank
     from morph.body.plan import ChannelPlan
+    from morph.core.arrays import Floats
+    from morph.flow.balance import FlowBalance
     from morph.flow.result import FlowResult
     from morph.layout.density import Density
     from morph.layout.graph import ChannelGraph
@@ -100,7 +102,8 @@ class Planned:
     wrapped: WrappedGraph
     blank: Blank
     plan: ChannelPlan
-    flow: FlowResult | None
+    flow: FlowResult | None = None
+    balance: FlowBalance | None = None
 
 
 def plan_channels(job: Job, clock: _Clock) -> Planned:
@@ -111,12 +114,12 @@ def plan_channels(job: Job, clock: _Clock) -> Planned:
     """
     from morph.body.blank import make_blank
     from morph.body.end import require_ends
-    from morph.body.make import make_plan
     from morph.layout.density import make_density
     from morph.layout.extract import make_graph
     from morph.layout.keep_out import require_keep_outs
+    from morph.layout.wide import legal_bore_mm, settled
     from morph.surface.make import make_carrier
-    from morph.surface.wrap import choose_depth_mm, wrap_graph
+    from morph.surface.wrap import bore_range_mm, choose_depth_mm, wrap_graph
 
     progress, profile = clock.progress, job.printing.profile
     require_ends(job.ports)
@@ -125,6 +128,9 @@ def plan_channels(job: Job, clock: _Clock) -> Planned:
         least_mm = max(job.service.smallest_bore_mm, profile.smallest_bore_mm.value) / job.section.bore_scale
         graph = make_graph(density, job.layout, job.ports, progress, job.accepts, least_mm)
         require_keep_outs(job.keep_outs, job.ports, graph.size_mm, graph.turn_mm)
+        scale, range_mm = job.section.bore_scale, bore_range_mm(job.section, job.service, profile)
+        widest_mm = legal_bore_mm(range_mm, job.carrier.depth_mm, job.service) / scale
+        graph = settled(graph, job.layout.wide, widest_mm, job.service.wall_between_mm, least_mm)
     with clock.stage("surface"):
         depth_mm = choose_depth_mm(job.carrier, graph, job.section, job.service, profile)
         carrier = make_carrier(job.carrier, graph.size_mm, job.layout.seen_from, depth_mm, job.layout.seam)
@@ -132,18 +138,47 @@ def plan_channels(job: Job, clock: _Clock) -> Planned:
     with clock.stage("body"):
         up = job.printing.build_direction
         blank = make_blank(job.blank, job.holes, carrier, graph.size_mm, job.service, up, progress)
-        plan = make_plan(wrapped, blank, job.ports, job.section, job.service, profile, progress, up)
-    return Planned(density, graph, wrapped, blank, plan, _flow(job, plan, clock))
+        plan = _plan(job, wrapped, blank, progress)
+    return _flow(job, Planned(density, graph, wrapped, blank, plan), clock)
 
 
-def _flow(job: Job, plan: ChannelPlan, clock: _Clock) -> FlowResult | None:
-    """Returns the flow through the channels; None when the job does not say what flows."""
+def _flow(job: Job, planned: Planned, clock: _Clock) -> Planned:
+    """Returns `planned` with the flow through its channels, their bores balanced when the job wants that."""
+    from morph.flow.balance import balance_plan
+    from morph.flow.heat_share import branch_heat
     from morph.flow.measure import measure_flow
+    from morph.layout.density import make_density
+    from morph.surface.wrap import bore_range_mm
 
-    if job.coolant is None:
-        return None
+    coolant, profile, progress = job.coolant, job.printing.profile, clock.progress
+    if coolant is None:
+        return planned
     with clock.stage("flow"):
-        return measure_flow(plan, job.coolant, job.printing.profile, progress=clock.progress)
+        if coolant.balance is Balance.NONE:
+            return replace(planned, flow=measure_flow(planned.plan, coolant, profile, progress=progress))
+        heat = None
+        if coolant.balance is Balance.BY_HEAT:
+            flux = None if coolant.flux is None else make_density(replace(job.layout, image=coolant.flux))
+            heat = branch_heat(planned.plan, planned.graph.size_mm, planned.graph.turn_mm, flux)
+        plan, flow, balance = balance_plan(
+            planned.plan,
+            coolant,
+            profile,
+            bore_range_mm(job.section, job.service, profile),
+            heat,
+            lambda bores_mm: _plan(job, planned.wrapped, planned.blank, SILENT, bores_mm),
+            progress,
+        )
+        return replace(planned, plan=plan, flow=flow, balance=balance)
+
+
+def _plan(
+    job: Job, wrapped: WrappedGraph, blank: Blank, progress: Progress, bores_mm: Mapping[str, Floats] | None = None
+) -> ChannelPlan:
+    from morph.body.make import make_plan
+
+    up, profile = job.printing.build_direction, job.printing.profile
+    return make_plan(wrapped, blank, job.ports, job.section, job.service, profile, progress, up, bores_mm)
 
 
 def make_records(job: Job, clock: _Clock) -> BuildRecords:
@@ -179,6 +214,7 @@ def make_records(job: Job, clock: _Clock) -> BuildRecords:
             build_direction=job.printing.build_direction,
             graph=planned.graph,
             bore_scale=job.section.bore_scale,
+            balanced=planned.balance is not None,
         )
         measured = measure_insert(subject, progress)
         kept_out = check_keep_outs(
@@ -204,6 +240,7 @@ def make_records(job: Job, clock: _Clock) -> BuildRecords:
         fields=fields,
         finished=finished,
         flow=planned.flow,
+        balance=planned.balance,
     )
 
 

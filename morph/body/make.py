@@ -8,7 +8,7 @@ sheet point still maps to its 3D point.
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -51,6 +51,7 @@ def make_plan(
     profile: Profile,
     progress: Progress = SILENT,
     build_direction: tuple[float, float, float] = (0.0, 0.0, 1.0),
+    bores_mm: Mapping[str, Floats] | None = None,
 ) -> ChannelPlan:
     """Returns every channel and lead with its final bore and the room it has.
 
@@ -63,6 +64,7 @@ def make_plan(
         profile: what the process can do.
         progress: told between channels, leads and room.
         build_direction: from the plate into the part; roofs point that way.
+        bores_mm: bores wanted (k,) at the samples of each channel by id, instead of the layout's own.
 
     Raises:
         SettingError: `bore-range-empty`, `leave-into-metal`, `leave-without-direction`; of an end `thread-unknown`,
@@ -75,7 +77,7 @@ def make_plan(
     allowed = (limits.least_bore_mm, limits.greatest_bore_mm)
     laid = [_refine(branch, wrapped, section.bore_scale, limits) for branch in wrapped.graph.branches]
     index = {node.id: k for k, node in enumerate(wrapped.graph.nodes)}
-    wanted = replace(_channel_network(laid, index, allowed), section=limits.section)
+    wanted = replace(_channel_network(laid, index, allowed, bores_mm or {}), section=limits.section)
     progress.step("bores", 0, 3)
     require_least_bore_fits(blank, wanted, limits)
     fitted = fit_bores(wanted, measure_room(blank, limits, wanted.xyz_mm), limits)
@@ -92,11 +94,15 @@ def make_plan(
     _require_ports_apart(starts)
     leads = lay_leads(ground, starts, progress)
     progress.step("bores", 2, 3)
-    notices = clamp_notices(
-        [one.branch.id for one in laid],
-        [one.scaled_mm for one in laid],
-        [strand.arc_mm for strand in wanted.strands],
-        allowed,
+    notices = (
+        ()
+        if bores_mm
+        else clamp_notices(
+            [one.branch.id for one in laid],
+            [one.scaled_mm for one in laid],
+            [strand.arc_mm for strand in wanted.strands],
+            allowed,
+        )
     )
     notices = (*blank.notices, *notices)
     parts = Parts(wrapped, blank, limits, tuple(one.sheet_mm for one in laid), wanted, fitted, leads)
@@ -119,7 +125,9 @@ def _refine(branch: Branch, wrapped: WrappedGraph, scale: float, limits: Limits)
     return _Laid(branch, sheet, wrapped.carrier.point_mm(sheet, wrapped.depth_mm), bore)
 
 
-def _channel_network(laid: Sequence[_Laid], index: dict[str, int], allowed: tuple[float, float]) -> Network:
+def _channel_network(
+    laid: Sequence[_Laid], index: dict[str, int], allowed: tuple[float, float], bores_mm: Mapping[str, Floats]
+) -> Network:
     strands = [
         Strand(
             one.branch.id,
@@ -127,7 +135,7 @@ def _channel_network(laid: Sequence[_Laid], index: dict[str, int], allowed: tupl
             index[one.branch.end],
             one.xyz_mm,
             polyline_arc_mm(one.xyz_mm),
-            wanted_bore_mm(one.scaled_mm, 1.0, allowed),
+            bores_mm.get(one.branch.id, wanted_bore_mm(one.scaled_mm, 1.0, allowed)),
         )
         for one in laid
     ]

@@ -63,6 +63,7 @@ class Departure:
         left_out_mm2: pieces without a port, and dropped coolant larger than one bore squared.
         large_pieces: those larger than one bore squared, largest first.
         small_mm2: the rest of the dropped coolant, noise of the image.
+        balanced: the bores were changed to share the flow, which counts as lowered and raised too.
     """
 
     drawn_mm2: float
@@ -70,6 +71,7 @@ class Departure:
     left_out_mm2: float
     large_pieces: tuple[Dropped, ...]
     small_mm2: float
+    balanced: bool = False
 
     @property
     def lowered_mm2(self) -> float:
@@ -138,13 +140,16 @@ def _branch_departure(built: PlanBranch, drawn: Branch, bore_scale: float) -> Br
     )
 
 
-def measure_departure(plan: ChannelPlan, graph: ChannelGraph, bore_scale: float = 1.0) -> Departure:
+def measure_departure(
+    plan: ChannelPlan, graph: ChannelGraph, bore_scale: float = 1.0, balanced: bool = False
+) -> Departure:
     """Returns how far the bores of `plan` and the pieces of `graph` depart from the drawing.
 
     Args:
         plan: channels as built.
         graph: the layout as drawn.
         bore_scale: by which the job itself scales the drawing; what it changes is asked for and not counted.
+        balanced: the bores were changed to share the flow.
     """
     drawn = {branch.id: branch for branch in graph.branches}
     channels = [branch for branch in plan.branches if branch.kind is BranchKind.CHANNEL and branch.id in drawn]
@@ -160,6 +165,7 @@ def measure_departure(plan: ChannelPlan, graph: ChannelGraph, bore_scale: float 
         sum(left_out),
         tuple(large),
         sum(item.area_mm2 for item in dropped) - sum(left_out),
+        balanced,
     )
 
 
@@ -167,9 +173,10 @@ def _words(found: Departure) -> str:
     def part(area_mm2: float) -> str:
         return f"{area_mm2:.1f} mm2 ({100.0 * area_mm2 / max(found.drawn_mm2, 1e-12):.1f} %)"
 
+    why = "to balance the flow and to the allowed bore range" if found.balanced else "to the allowed bore range"
     text = (
         f"The channels depart from the drawing by {100.0 * found.share:.1f} % of its {found.drawn_mm2:.1f} mm2 of "
-        f"coolant: {part(found.lowered_mm2)} lowered and {part(found.raised_mm2)} raised to the allowed bore range, "
+        f"coolant: {part(found.lowered_mm2)} lowered and {part(found.raised_mm2)} raised {why}, "
         f"{part(found.capped_mm2)} capped to the room there is, {part(found.left_out_mm2)} in pieces left out."
     )
     if found.large_pieces:

@@ -99,7 +99,7 @@ def _check_likeness(subject: CheckSubject) -> list[Verdict]:
     """Returns the `as-drawn` row, left out without a drawing to compare with, and the `capped` row."""
     if subject.graph is None:
         return check_capped(subject.plan)
-    found = measure_departure(subject.plan, subject.graph, subject.bore_scale)
+    found = measure_departure(subject.plan, subject.graph, subject.bore_scale, subject.balanced)
     return check_as_drawn(found) + check_capped(subject.plan, found.lowered_mm2)
 
 

@@ -24,6 +24,7 @@ class CheckSubject:
         profile: limits of the printing process. service: limits of use.
         build_direction: from the plate into the part, part frame; any length, made unit here.
         graph: the layout as drawn, None when there is none to compare with. bore_scale: by which the job scales it.
+        balanced: bores were changed to share the flow.
     """
 
     insert: Insert
@@ -35,6 +36,7 @@ class CheckSubject:
     build_direction: tuple[float, float, float] = (0.0, 0.0, 1.0)
     graph: ChannelGraph | None = None
     bore_scale: float = 1.0
+    balanced: bool = False
 
     def __post_init__(self) -> None:
         length = float(np.linalg.norm(self.build_direction))

@@ -16,6 +16,7 @@ from morph.body.plan import BranchKind, ChannelPlan
 from morph.core.verdict import Outcome, worst_outcome
 from morph.core.words import counted
 from morph.report.along import sheet_branches
+from morph.report.balance_view import balance_rows, balance_words
 from morph.report.colour import OUTCOME_COLOUR, OUTCOME_SIGN, OUTCOME_WORD
 from morph.report.density_view import draw_density
 from morph.report.figures import (
@@ -186,6 +187,7 @@ def _pictures(records: BuildRecords) -> dict[str, Any]:
 def _tables(records: BuildRecords, summary: dict[str, Any]) -> dict[str, Any]:
     verdicts = sorted_verdicts(records.verdicts)
     layout = records.job.layout
+    balance, flow = records.balance, records.flow
     return {
         "headline": worst_outcome(records.verdicts),
         "figures": [(figure, _figure_place(figure)) for figure in five_figures(records.verdicts, records.plan)],
@@ -195,6 +197,8 @@ def _tables(records: BuildRecords, summary: dict[str, Any]) -> dict[str, Any]:
         "branches": _branch_rows(records.plan),
         "flow_numbers": [] if records.flow is None else flow_numbers(records.flow),
         "flow_rows": [] if records.flow is None else flow_rows(records.flow),
+        "balance_words": "" if balance is None or flow is None else balance_words(balance, flow),
+        "balance_rows": [] if balance is None or flow is None else balance_rows(balance, records.plan, flow),
         "n_channels": sum(branch.kind is BranchKind.CHANNEL for branch in records.plan.branches),
         "notices": records.notices,
         "job_text": job_text(records.job),

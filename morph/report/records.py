@@ -8,6 +8,7 @@ from morph.body.blank import Blank
 from morph.body.plan import ChannelPlan
 from morph.check.fields import ChannelFields
 from morph.core.verdict import Notice, Verdict
+from morph.flow.balance import FlowBalance
 from morph.flow.result import FlowResult
 from morph.geometry.mesh import Mesh
 from morph.layout.density import Density
@@ -28,6 +29,7 @@ class BuildRecords:
         fields: figures along the channels and over their wall, for pictures; None when not measured.
         finished: the insert after its stock is machined off; None when there is no stock.
         flow: flow and pressure in every branch; None when the job does not ask for it.
+        balance: how the bores were changed for the flow; None when they were not.
     """
 
     job: Job
@@ -43,3 +45,4 @@ class BuildRecords:
     fields: ChannelFields | None = None
     finished: Mesh | None = None
     flow: FlowResult | None = None
+    balance: FlowBalance | None = None

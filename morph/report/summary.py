@@ -22,6 +22,7 @@ from morph.core.units import mass_g
 from morph.core.verdict import Notice, Outcome, Verdict, worst_outcome
 from morph.geometry.mesh import Mesh, measure_condition, mesh_area_mm2, mesh_volume_mm3
 from morph.layout.graph import ChannelGraph, NodeKind, count_loops
+from morph.report.balance_view import balance_block
 from morph.report.flow_summary import flow_block
 from morph.report.headline import five_figures, sorted_verdicts
 from morph.report.records import BuildRecords
@@ -254,6 +255,14 @@ def _fingerprints(records: BuildRecords) -> Block:
     }
 
 
+def _flow(records: BuildRecords) -> Block | None:
+    if records.flow is None:
+        return None
+    balance = records.balance
+    changed = None if balance is None else balance_block(balance, records.plan, records.flow)
+    return flow_block(records.flow) | {"balance": changed}
+
+
 def make_summary(records: BuildRecords) -> dict[str, Any]:
     """Returns what summary.json holds, as plain mappings, lists, text and numbers, before rounding.
 
@@ -285,7 +294,7 @@ def _blocks(records: BuildRecords) -> Block:
             "build_direction": printing.build_direction,
             "verdicts": [verdict_row(verdict) for verdict in verdicts],
         },
-        "flow": None if records.flow is None else flow_block(records.flow),
+        "flow": _flow(records),
         "thermal": None,
         "not_checked": not_checked_rows(verdicts),
         "notices": [_notice_row(notice) for notice in records.notices],

@@ -30,6 +30,7 @@ def ladder(n_rungs: int, opposite: bool = True, junctions: bool = False) -> tupl
     )
     segments = straight_pipes(length, 1e-3 * bore, 2e-5)
     legs = _legs(start, end, k, opposite) if junctions else {}
+    joints = pad_junctions(legs, segments.area_m2)
     network = FlowNetwork(
         branch_ids=tuple(f"B{e}" for e in range(m)),
         node_ids=tuple(f"N{i}" for i in range(2 * k + 2)),
@@ -38,7 +39,8 @@ def ladder(n_rungs: int, opposite: bool = True, junctions: bool = False) -> tupl
         is_channel=np.r_[np.zeros(2 * k - 2, bool), np.ones(k, bool), False, False],
         through=np.ones(m, bool),
         segments=segments,
-        junctions=pad_junctions(legs, segments.area_m2),
+        meetings=joints,
+        junctions=joints,
         ports=(FlowPort("in", Role.IN, 2 * k, 0), FlowPort("out", Role.OUT, 2 * k + 1, 0)),
         n_supplies=1,
     )
