@@ -32,6 +32,8 @@ from morph.layout.smooth import fit_web
 from morph.layout.web import Run, Web, arc_mm, moved_along
 
 LONGEST_STEP_MM = 1.0
+CLOSER = (0.85, 0.7, 0.5)
+"""Shares of the deviation bound tried in turn where a curve ends beyond it."""
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -82,11 +84,7 @@ def assemble(
     for key in [key for key in sorted(web.joints) if web.degree(key) == 0]:
         web.remove_joint(key)
     kept = kept or {}
-    curves, at = fit_web(web, frozenset(kept))
-    drawn = {
-        key: _keep(key, kept[key]) if key in kept else _draw(run, key, curves[key], at[key], parts.pixel_mm)
-        for key, run in sorted(web.runs.items())
-    }
+    drawn = _draw_all(web, kept, parts.pixel_mm)
     piece = web.pieces()
     fed = {piece[key] for key, joint in web.joints.items() if joint.port is not None}
     joint_id = _numbered("N", {key: joint.place_mm for key, joint in web.joints.items()}, piece, fed)
@@ -127,6 +125,27 @@ def assemble(
         ),
         parts.accepted,
     )
+
+
+def _draw_all(web: Web, kept: dict[int, Branch], pixel_mm: float) -> dict[int, _Drawn]:
+    """Returns every run as drawn; chains whose curve came out beyond the bound are fitted again within a closer one.
+
+    A fit is judged across its chain before its ends are settled on the joints and measured after, so one that
+    uses its bound up may end a few hundredths beyond it.
+    """
+    share: dict[int, float] = {}
+    drawn: dict[int, _Drawn] = {}
+    for closer in (*CLOSER, 0.0):
+        curves, at = fit_web(web, frozenset(kept), share)
+        drawn = {
+            key: _keep(key, kept[key]) if key in kept else _draw(run, key, curves[key], at[key], pixel_mm)
+            for key, run in sorted(web.runs.items())
+        }
+        beyond = [key for key, item in drawn.items() if item.excess > 1.0 + 1e-9 and key not in kept]
+        if not beyond or not closer:
+            break
+        share |= dict.fromkeys(beyond, DEVIATION_SHARE * closer)
+    return drawn
 
 
 def _within(place_mm: Floats, turn_mm: float | None) -> Floats:
@@ -179,7 +198,7 @@ def _draw(run: Run, key: int, curve: Curve, at: Floats, pixel_mm: float) -> _Dra
     step_mm = min(float(bore.min()) / 4.0, LONGEST_STEP_MM)
     length_mm = curve_length_mm(curve)
     parameter, place = _sampled(curve, length_mm, step_mm)
-    away = _distance_to(place, run.place_mm)
+    away = distance_to(place, run.place_mm)
     share = np.where(run.free, away / (DEVIATION_SHARE * bore), 0.0)
     deviation = float(away[run.free].max(initial=0.0))
     return _Drawn(
@@ -199,7 +218,7 @@ def _sampled(curve: Curve, length_mm: float, step_mm: float) -> tuple[Floats, Fl
     return parameter, place
 
 
-def _distance_to(line_mm: Floats, place_mm: Floats) -> Floats:
+def distance_to(line_mm: Floats, place_mm: Floats) -> Floats:
     """Returns (k,) distances of `place_mm (k, 2)` from the polyline `line_mm (n, 2)`: nearest point first."""
     from scipy.spatial import cKDTree
 

@@ -16,7 +16,7 @@ import numpy as np
 from morph.core.arrays import Bools, Floats, Ints
 from morph.layout.density import Density
 from morph.layout.level import Grid, Picture
-from morph.layout.web import Run, Web, arc_mm, measure_length_mm
+from morph.layout.web import Run, Web, arc_mm, measure_length_mm, moved_along
 
 REACH_WIDTHS = 4.0
 AHEAD_COSINE = 0.5
@@ -71,7 +71,9 @@ class _Field:
         )
 
 
-def suggest_bridges(web: Web, field: Floats, density: Density, picture: Picture) -> list[Suggestion]:
+def suggest_bridges(
+    web: Web, field: Floats, density: Density, picture: Picture, turn_mm: float | None = None
+) -> list[Suggestion]:
     """Returns at most one way on from each dead end of `web` without a port; a pair that meets is told once.
 
     Args:
@@ -79,6 +81,7 @@ def suggest_bridges(web: Web, field: Floats, density: Density, picture: Picture)
         field: smoothed density on the image's own grid.
         density: for the grid's places.
         picture: for the mean channel width.
+        turn_mm: width after which the sheet repeats, None on an open sheet; then `field` is of one turn.
     """
     from scipy.spatial import cKDTree
 
@@ -89,12 +92,12 @@ def suggest_bridges(web: Web, field: Floats, density: Density, picture: Picture)
     ]
     if not tips:
         return []
-    grid = Grid(density.first_mm, density.pitch_mm)
-    ground = _Field(field, grid, float(np.quantile(field, 0.2)), picture.width_mm, picture.level)
-    keys = sorted(web.runs)
-    owner = np.repeat(keys, [len(web.runs[key].place_mm) for key in keys])
-    sample = np.concatenate([np.arange(len(web.runs[key].place_mm)) for key in keys])
-    place = np.concatenate([web.runs[key].place_mm for key in keys])
+    grid, background = Grid(density.first_mm, density.pitch_mm), float(np.quantile(field, 0.2))
+    reach_mm = REACH_WIDTHS * picture.width_mm
+    if turn_mm is not None:
+        field, grid = _laid_around(field, grid, reach_mm)
+    ground = _Field(field, grid, background, picture.width_mm, picture.level)
+    place, owner, sample = _list_samples(web, turn_mm, reach_mm)
     tree = cKDTree(place)
     found: dict[int, Suggestion] = {}
     for tip in tips:
@@ -110,6 +113,29 @@ def suggest_bridges(web: Web, field: Floats, density: Density, picture: Picture)
             del found[back.tip]
             found[tip] = suggestion
     return list(found.values())
+
+
+def _laid_around(field: Floats, grid: Grid, reach_mm: float) -> tuple[Floats, Grid]:
+    """Returns a field of one turn repeated beyond both edges, and its grid."""
+    n = math.ceil(reach_mm / grid.pitch_mm[0]) + 3
+    first_mm = (grid.first_mm[0] - n * grid.pitch_mm[0], grid.first_mm[1])
+    return np.pad(field, ((0, 0), (n, n)), mode="wrap"), Grid(first_mm, grid.pitch_mm)
+
+
+def _list_samples(web: Web, turn_mm: float | None, reach_mm: float) -> tuple[Floats, Ints, Ints]:
+    """Returns place (k, 2), run and number within it of every sample; on a repeating sheet every copy within reach."""
+    places, owners, samples = [], [], []
+    for key in sorted(web.runs):
+        own = web.runs[key].place_mm
+        for turn in (0,) if turn_mm is None else range(-3, 4):
+            place, index = own, np.arange(len(own))
+            if turn_mm is not None:
+                place = moved_along(own, turn * turn_mm)
+                index = np.flatnonzero((place[:, 0] >= -reach_mm) & (place[:, 0] <= turn_mm + reach_mm))
+            places.append(place[index])
+            owners.append(np.full(len(index), key))
+            samples.append(index)
+    return np.concatenate(places), np.concatenate(owners), np.concatenate(samples)
 
 
 def _way_on(web: Web, tip: int, ground: _Field, place: Floats, owner: Ints, sample: Ints) -> Suggestion | None:

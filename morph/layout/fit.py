@@ -98,8 +98,15 @@ def make_basis(knots: Floats, at: Floats) -> Basis:
 class Fit:
     """One chain's least-squares problem, solved for any firmness."""
 
-    def __init__(self, samples: Samples, knot_step_mm: float, seam_weight: float = SEAM_WEIGHT) -> None:
+    def __init__(
+        self,
+        samples: Samples,
+        knot_step_mm: float,
+        seam_weight: float = SEAM_WEIGHT,
+        share: float = DEVIATION_SHARE,
+    ) -> None:
         self.samples = samples
+        self.share = share
         self.origin_mm = samples.place_mm[0]  # solved about it: the result moves with the samples
         length = float(samples.at[-1])
         n_spans = int(min(max(2, math.ceil(length / knot_step_mm)), max(2, len(samples.at) - 2)))
@@ -172,7 +179,7 @@ class Fit:
         width = 2.0 * self.samples.half_mm
         deviation = np.abs(away[:, 0] * first[:, 1] - away[:, 1] * first[:, 0]) / speed
         bend = np.abs(first[:, 0] * second[:, 1] - first[:, 1] * second[:, 0]) / speed**3
-        return np.where(self.samples.free, deviation / (DEVIATION_SHARE * width), 0.0), bend * width
+        return np.where(self.samples.free, deviation / (self.share * width), 0.0), bend * width
 
     def near(self, bad: Bools, reach_mm: float) -> Bools:
         """Returns which spans (n_spans,) lie within `reach_mm` of a sample marked in `bad (k,)`."""
@@ -190,11 +197,17 @@ def curvature_per_mm(curve: Curve, at: Floats) -> Floats:
     return np.asarray(np.abs(cross) / np.maximum(np.hypot(*first.T), 1e-9) ** 3, dtype=np.float64)
 
 
-def fit_chain(samples: Samples, seam_weight: float = SEAM_WEIGHT) -> Curve:
-    """Returns the curve through `samples`: gentle, softer where it would deviate, firmer where it bends tightly."""
+def fit_chain(samples: Samples, seam_weight: float = SEAM_WEIGHT, share: float = DEVIATION_SHARE) -> Curve:
+    """Returns the curve through `samples`: gentle, softer where it would deviate, firmer where it bends tightly.
+
+    Args:
+        samples: of the chain.
+        seam_weight: weight of the samples where runs meet.
+        share: how far it may deviate, in local widths.
+    """
     half = float(np.median(samples.half_mm))
     for knot_step in (half, 0.5 * half, 0.25 * half):
-        fit = Fit(samples, knot_step, seam_weight)
+        fit = Fit(samples, knot_step, seam_weight, share)
         wavelength = np.full(len(fit.span_at), GENTLE_WIDTHS * 2.0 * half)
         control = fit.solve(wavelength)
         for _ in range(ROUNDS):

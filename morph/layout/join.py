@@ -14,7 +14,7 @@ from morph.layout.bridges import Suggestion
 from morph.layout.dead_ends import Known
 from morph.layout.graph import Accepted, Branch, Bridge, ChannelGraph, DeadEnd, Dropped, DropReason
 from morph.layout.ports import split_run
-from morph.layout.web import Joint, Run, Web, arc_mm, join_through
+from morph.layout.web import Joint, Run, Web, arc_mm, join_through, moved_along
 
 STANDING_NOTICES = (
     "topology-differs",
@@ -65,7 +65,7 @@ def apply_choices(
     done = []
     for bridge in graph.bridges:
         if bridge.id in wanted:
-            done.append(_build(web, joint_of, bridge, least_bore_mm))
+            done.append(_build(web, joint_of, bridge, least_bore_mm, graph.turn_mm))
     dropped = [item for item in graph.dropped if item.reason is not DropReason.NO_PORT]
     for blind in graph.dead_ends:
         if blind.id in cut:
@@ -84,7 +84,7 @@ def apply_choices(
         {joint_of[end.node]: Known(end.sheet_mm, end.id) for end in graph.dead_ends},
         graph.accepted + tuple(done),
     )
-    suggestions = [item for bridge in left if (item := _suggestion(web, joint_of, bridge)) is not None]
+    suggestions = [item for bridge in left if (item := _suggestion(web, joint_of, bridge, graph.turn_mm)) is not None]
     return assemble(web, parts, suggestions, {key: branch for key, branch in kept.items() if key in web.runs})
 
 
@@ -142,20 +142,28 @@ def web_of(graph: ChannelGraph) -> tuple[Web, dict[str, int], dict[int, Branch]]
     return web, joint_of, kept
 
 
-def _nearest_run(web: Web, place_mm: Floats, without: int | None) -> tuple[int, int]:
+def _nearest_run(web: Web, place_mm: Floats, without: int | None, turn_mm: float | None) -> tuple[int, int]:
     """Returns the run and the sample on it nearest to a place, `without` one run unless it is the only one."""
     keys = [key for key in sorted(web.runs) if key != without] or sorted(web.runs)
-    away = {key: np.hypot(*(web.runs[key].place_mm - place_mm).T) for key in keys}
+    away = {key: _away_mm(web.runs[key].place_mm, place_mm, turn_mm) for key in keys}
     key = min(keys, key=lambda k: (float(away[k].min()), k))
     return key, int(np.argmin(away[key]))
 
 
-def _landing(web: Web, joint_of: dict[str, int], bridge: Bridge) -> int:
+def _away_mm(line_mm: Floats, place_mm: Floats, turn_mm: float | None) -> Floats:
+    """Returns the distances (k,) of `line_mm (k, 2)` from a place, by the shorter way around a repeating sheet."""
+    x, y = (line_mm - place_mm).T
+    if turn_mm is not None:
+        x = x - turn_mm * np.round(x / turn_mm)
+    return np.asarray(np.hypot(x, y), dtype=np.float64)
+
+
+def _landing(web: Web, joint_of: dict[str, int], bridge: Bridge, turn_mm: float | None) -> int:
     """Returns the joint the bridge meets; a run is split where it lands."""
     joint = joint_of.get(bridge.onto)
     if joint is not None and joint in web.joints:
         return joint
-    key, sample = _nearest_run(web, bridge.path_mm[-1], None)
+    key, sample = _nearest_run(web, bridge.path_mm[-1], None, turn_mm)
     run = web.runs[key]
     arc = arc_mm(run.place_mm)
     for end, away in ((run.start, float(arc[sample])), (run.end, float(arc[-1] - arc[sample]))):
@@ -164,14 +172,14 @@ def _landing(web: Web, joint_of: dict[str, int], bridge: Bridge) -> int:
     return split_run(web, key, sample)
 
 
-def _build(web: Web, joint_of: dict[str, int], bridge: Bridge, least_bore_mm: float) -> Accepted:
+def _build(web: Web, joint_of: dict[str, int], bridge: Bridge, least_bore_mm: float, turn_mm: float | None) -> Accepted:
     tip = joint_of[bridge.node]
     at = (float(bridge.path_mm[0, 0]), float(bridge.path_mm[0, 1]))
     if tip not in web.joints or web.degree(tip) != 1:
         return Accepted(bridge.id, "bridge", at, 0.0, 0.0)  # its end was bridged from the other side
     run = web.runs[web.at[tip][0]]
     half = float(run.half_mm[0] if run.start == tip else run.half_mm[-1])
-    landing = _landing(web, joint_of, bridge)
+    landing = _landing(web, joint_of, bridge, turn_mm)
     if landing == tip:
         return Accepted(bridge.id, "bridge", at, 0.0, 0.0)
     blind = web.degree(landing) == 1 and web.joints[landing].port is None
@@ -181,14 +189,17 @@ def _build(web: Web, joint_of: dict[str, int], bridge: Bridge, least_bore_mm: fl
         far_half = float(other.half_mm[0] if other.start == landing else other.half_mm[-1])
     grey_half = max(0.5 * least_bore_mm, min(0.5 * bridge.width_mm, max(half, far_half)))
     path = bridge.path_mm.copy()
-    path[0], path[-1] = web.joints[tip].place_mm, web.joints[landing].place_mm
+    shift_mm = 0.0
+    if turn_mm is not None:
+        shift_mm = turn_mm * round(float(path[-1, 0] - web.joints[landing].place_mm[0]) / turn_mm)
+    path[0], path[-1] = web.joints[tip].place_mm, moved_along(web.joints[landing].place_mm, shift_mm)
     arc = arc_mm(path)
     n = max(5, round(float(arc[-1]) / (0.25 * min(half, far_half, grey_half))) + 1)
     at_arc = np.linspace(0.0, arc[-1], n)
     place = np.column_stack([np.interp(at_arc, arc, path[:, axis]) for axis in (0, 1)])
     ends = [half, grey_half, grey_half, far_half if blind else grey_half]
     halves = np.interp(at_arc, np.array([0.0, TAPER_SHARE, 1.0 - TAPER_SHARE, 1.0]) * arc[-1], ends)
-    web.add_run(Run(tip, landing, place, halves, np.zeros(n, dtype=bool)))
+    web.add_run(Run(tip, landing, place, halves, np.zeros(n, dtype=bool), shift_mm))
     join_through(web, tip)
     join_through(web, landing)
     return Accepted(bridge.id, "bridge", at, float(arc[-1]), 2.0 * float(halves.mean()))
@@ -219,13 +230,13 @@ def _trim(web: Web, tip: int, end: DeadEnd) -> Accepted:
     return done
 
 
-def _suggestion(web: Web, joint_of: dict[str, int], bridge: Bridge) -> Suggestion | None:
+def _suggestion(web: Web, joint_of: dict[str, int], bridge: Bridge, turn_mm: float | None) -> Suggestion | None:
     """Returns the bridge in terms of the changed web, or None when its dead end is none any more."""
     tip = joint_of[bridge.node]
     if tip not in web.joints or web.degree(tip) != 1:
         return None
     onto = joint_of.get(bridge.onto)
-    key, _ = _nearest_run(web, bridge.path_mm[-1], web.at[tip][0])
+    key, _ = _nearest_run(web, bridge.path_mm[-1], web.at[tip][0], turn_mm)
     return Suggestion(
         tip,
         onto if onto in web.joints else None,

@@ -3,7 +3,7 @@
 The image is turned so that it starts at the column where least coolant crosses (of equals the one whose image
 reads first), repeated half a turn to both sides, traced as any other image, and folded onto one turn
 (fold.py). Everything is done on the turned image, so an image turned by whole columns gives the same
-graph, turned alike. Limits: no ways are suggested on from dead ends.
+graph, turned alike. Ways on from dead ends are sought across the seam as anywhere.
 """
 
 from __future__ import annotations
@@ -19,6 +19,7 @@ from morph.core.progress import Progress
 from morph.core.verdict import Notice
 from morph.layout import notices as say
 from morph.layout.assemble import Parts, assemble
+from morph.layout.bridges import suggest_bridges
 from morph.layout.dead_ends import find_end_walls
 from morph.layout.density import Density
 from morph.layout.fold import fold, normalise
@@ -202,7 +203,8 @@ def find_joined_graph(
             strip.turn_mm,
         ),
     )
-    graph = assemble(web, parts, [])
+    once = smoothed(one_turn(density), joined=True)
+    graph = assemble(web, parts, suggest_bridges(web, once, density, traced.picture, strip.turn_mm))
     progress.step(STAGE, N_STEPS, N_STEPS)
     return graph
 

@@ -85,7 +85,7 @@ def require_keep_outs(
                     "keep-out-over-port",
                     expected=f"every port more than the clearance of {keep_out.clearance_mm:g} mm away",
                     found=f'port "{port.name}" at [{port.at_mm[0]:g}, {port.at_mm[1]:g}] mm, '
-                    + (f"{away_mm:.2f} mm away" if away_mm > 0 else f"{-away_mm:.2f} mm inside"),
+                    + (f"{-away_mm:.2f} mm inside" if away_mm < -5e-3 else f"{abs(away_mm):.2f} mm away"),
                     where=f'[[keep_out]] "{keep_out.name}"',
                     do="Move the keep-out or the port.",
                 )

@@ -2,7 +2,8 @@
 
 Thinning and fitting treat the two halves of a symmetric image a little differently (some hundredths of a pixel).
 Nodes and branches are paired with their mirror images; each pair is averaged on the low half of the sheet and
-reflected to the other; what is its own mirror image is averaged with it. What has no partner (a port declared on one
+reflected to the other; what is its own mirror image is averaged with it. A mean of two curves is no further from
+the mean of their measured centrelines than the two are on average. What has no partner (a port declared on one
 side only) stays as it is and is told.
 """
 
@@ -16,6 +17,7 @@ import numpy as np
 from morph.core.arrays import Floats
 from morph.core.verdict import Notice
 from morph.geometry.curve import DEGREE, Curve, curve_at, curve_length_mm
+from morph.layout.assemble import distance_to
 from morph.layout.graph import Branch, ChannelGraph, Node
 from morph.layout.smooth import moved_ends, reversed_curve, turned_end
 from morph.layout.web import moved_along
@@ -198,17 +200,18 @@ def _image(mirror: Mirror, branch: Branch, twin: Branch, backward: bool) -> Curv
 
 
 def _mean(mirror: Mirror, branch: Branch, twin: Branch, backward: bool) -> Branch:
-    """Returns `branch` halfway to the reflection of `twin` when both have as many control points, else as it is."""
+    """Returns `branch` halfway to the reflection of `twin`."""
     image = _image(mirror, branch, twin, backward)
-    if len(image.control_mm) != len(branch.curve.control_mm):
-        return branch
-    curve = Curve(
-        0.5 * (branch.curve.knots + image.knots), 0.5 * (np.asarray(branch.curve.control_mm) + image.control_mm)
-    )
+    if len(image.control_mm) == len(branch.curve.control_mm):
+        control = 0.5 * (np.asarray(branch.curve.control_mm) + image.control_mm)
+        curve = Curve(0.5 * (branch.curve.knots + image.knots), control)
+    else:
+        curve = _average(branch.curve, image)
     share, bore_mm = twin.parameter / twin.curve.knots[-1], np.asarray(twin.bore_mm)
     share, bore_mm = (1.0 - share[::-1], bore_mm[::-1]) if backward else (share, bore_mm)
     other_mm = np.interp(branch.parameter / branch.curve.knots[-1], share, bore_mm)
-    return _along(branch, curve, np.asarray(branch.parameter), 0.5 * (branch.bore_mm + other_mm))
+    mean = _along(branch, curve, np.asarray(branch.parameter), 0.5 * (branch.bore_mm + other_mm))
+    return replace(mean, deviation_mm=0.5 * (branch.deviation_mm + twin.deviation_mm))
 
 
 def _settled(mirror: Mirror, branch: Branch, curve: Curve, place: dict[str, Floats]) -> Branch:
@@ -222,10 +225,10 @@ def _settled(mirror: Mirror, branch: Branch, curve: Curve, place: dict[str, Floa
 
 
 def _along(branch: Branch, curve: Curve, parameter: Floats, bore_mm: Floats) -> Branch:
-    """Returns `branch` along another curve; its deviation grows by what its samples move."""
+    """Returns `branch` along another curve; its deviation grows by how far that runs from its own."""
     sheet_mm = curve_at(curve, parameter)
     sheet_mm[0], sheet_mm[-1] = curve.control_mm[0], curve.control_mm[-1]
-    moved_mm = float(np.hypot(*(sheet_mm - branch.sheet_mm).T).max())
+    moved_mm = float(distance_to(branch.sheet_mm, sheet_mm)[1:-1].max(initial=0.0))
     return replace(
         branch,
         curve=curve,
@@ -269,24 +272,30 @@ def _reflected(mirror: Mirror, kept: Branch, twin: Branch, backward: bool, place
 
 def _own_image(mirror: Mirror, branch: Branch, backward: bool, place: dict[str, Floats]) -> Branch:
     """Returns a branch that is its own mirror image: the mean of itself and its reflection."""
-    from scipy.interpolate import BSpline
-
     last = float(branch.curve.knots[-1])
     image = _image(mirror, branch, branch, backward)
-    one, two = (BSpline(curve.knots, curve.control_mm, DEGREE) for curve in (branch.curve, image))
-    for knot in _missing(branch.curve.knots, image.knots):
-        one = one.insert_knot(knot)
-    for knot in _missing(image.knots, branch.curve.knots):
-        two = two.insert_knot(knot)
-    n = len(one.t) - DEGREE - 1
-    curve = Curve(one.t, 0.5 * (one.c[:n] + two.c[:n]))
+    curve = _average(branch.curve, image)
     parameter, bore_mm = np.asarray(branch.parameter), np.asarray(branch.bore_mm)
     if backward:
         even = 0.5 * (parameter + (last - parameter[::-1]))
         even[0], even[-1] = parameter[0], parameter[-1]
         bore_mm = np.interp(even, parameter, bore_mm)
         parameter, bore_mm = even, 0.5 * (bore_mm + bore_mm[::-1])
-    return _settled(mirror, _along(branch, curve, parameter, bore_mm), curve, place)
+    mean = replace(_along(branch, curve, parameter, bore_mm), deviation_mm=branch.deviation_mm)
+    return _settled(mirror, mean, curve, place)
+
+
+def _average(curve: Curve, image: Curve) -> Curve:
+    """Returns the curve halfway between two over the same parameters, on the knots of both."""
+    from scipy.interpolate import BSpline
+
+    one, two = (BSpline(item.knots, item.control_mm, DEGREE) for item in (curve, image))
+    for knot in _missing(curve.knots, image.knots):
+        one = one.insert_knot(knot)
+    for knot in _missing(image.knots, curve.knots):
+        two = two.insert_knot(knot)
+    n = len(one.t) - DEGREE - 1
+    return Curve(one.t, 0.5 * (one.c[:n] + two.c[:n]))
 
 
 def _missing(knots: Floats, wanted: Floats) -> list[float]:

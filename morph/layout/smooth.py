@@ -13,7 +13,7 @@ import numpy as np
 from morph.core.arrays import Floats
 from morph.geometry.curve import DEGREE, Curve
 from morph.layout.centre import smoothed_along
-from morph.layout.fit import SEAM_WEIGHT, Samples, fit_chain
+from morph.layout.fit import DEVIATION_SHARE, SEAM_WEIGHT, Samples, fit_chain
 from morph.layout.junctions import move_joint
 from morph.layout.web import Run, Web, arc_mm, moved_along
 
@@ -153,7 +153,9 @@ def reversed_curve(curve: Curve) -> Curve:
     return Curve(curve.knots[-1] - curve.knots[::-1], curve.control_mm[::-1])
 
 
-def fit_web(web: Web, kept: frozenset[int] = frozenset()) -> tuple[dict[int, Curve], dict[int, Floats]]:
+def fit_web(
+    web: Web, kept: frozenset[int] = frozenset(), share: dict[int, float] | None = None
+) -> tuple[dict[int, Curve], dict[int, Floats]]:
     """Returns per run its curve, walked as the run, and the parameter of each of its samples.
 
     Joints that a chain passes are moved onto it, then all chains that meet such a joint are fitted
@@ -162,6 +164,7 @@ def fit_web(web: Web, kept: frozenset[int] = frozenset()) -> tuple[dict[int, Cur
     Args:
         web: joints and runs, centred.
         kept: runs that have their curve already: they are neither fitted nor moved.
+        share: how far the chains of some runs may deviate, in local widths, where it is less than usual.
     """
     following = {
         (joint, key): other
@@ -169,12 +172,12 @@ def fit_web(web: Web, kept: frozenset[int] = frozenset()) -> tuple[dict[int, Cur
         if key not in kept and other not in kept
     }
     chains = [chain for chain in make_chains(web, following) if chain[0].run not in kept]
-    fitted = [_fit_links(web, chain) for chain in chains]
+    fitted = [_fit_links(web, chain, SEAM_WEIGHT, share) for chain in chains]
     fixed = {joint for key in kept for joint in (web.runs[key].start, web.runs[key].end)}
     moved = _move_passed_joints(web, chains, fitted, fixed)
     for index, chain in enumerate(chains):
         if any({web.runs[link.run].start, web.runs[link.run].end} & moved for link in chain):
-            fitted[index] = _fit_links(web, chain, SETTLED_WEIGHT)
+            fitted[index] = _fit_links(web, chain, SETTLED_WEIGHT, share)
     curves: dict[int, Curve] = {}
     parameters: dict[int, Floats] = {}
     for pieces in fitted:
@@ -187,11 +190,14 @@ def fit_web(web: Web, kept: frozenset[int] = frozenset()) -> tuple[dict[int, Cur
     return curves, parameters
 
 
-def _fit_links(web: Web, chain: list[Link], seam_weight: float = SEAM_WEIGHT) -> list[tuple[int, Curve, Floats]]:
+def _fit_links(
+    web: Web, chain: list[Link], seam_weight: float, share: dict[int, float] | None
+) -> list[tuple[int, Curve, Floats]]:
     """Returns for each run of the chain its key, its curve and its samples' parameters, walked as the run."""
     samples = _gather(web, chain)
     inner = tuple(float(samples.at[seam]) for seam in samples.seams[1:-1])
-    pieces = cut_curve(fit_chain(samples, seam_weight), inner)
+    least = min([(share or {}).get(link.run, DEVIATION_SHARE) for link in chain])
+    pieces = cut_curve(fit_chain(samples, seam_weight, least), inner)
     fitted, shift_mm = [], 0.0
     for index, (link, piece) in enumerate(zip(chain, pieces, strict=True)):
         at = samples.at[samples.seams[index] : samples.seams[index + 1] + 1]

@@ -174,8 +174,8 @@ def settled(
     told = tuple(
         Notice(
             "wide-treated",
-            f"Wide region {item.id} at [{item.sheet_mm[0]:.1f}, {item.sheet_mm[1]:.1f}] mm, {item.length_mm:.1f} mm long "
-            f"and up to {item.widest_mm:.1f} mm wide, is {item.said}.",
+            f"Wide region {item.id} at [{item.sheet_mm[0]:.1f}, {item.sheet_mm[1]:.1f}] mm, {item.length_mm:.1f} mm "
+            f"long and up to {item.widest_mm:.1f} mm wide, is {item.said}.",
             (),
             item.sheet_mm,
         )

@@ -13,7 +13,7 @@ from morph.layout.fold import fold, normalise
 from morph.layout.graph import count_loops
 from morph.layout.joined import count_around, find_first_column
 from morph.layout.web import Joint, Run, Web
-from morph.settings.job import LevelRule, Samples, Seam
+from morph.settings.job import AcceptSettings, LevelRule, Samples, Seam
 from tests.layout.drawing import drawn, ports, settings
 
 pytestmark = pytest.mark.quick
@@ -232,3 +232,42 @@ def test_normalising_moves_whole_turns_and_keeps_every_run():
     np.testing.assert_allclose(run.place_mm[:, 0], place[:, 0] - 1.5)
     back = run.reversed()
     assert back.place_mm[0, 0] == 5.5 and back.place_mm[-1, 0] == pytest.approx(1.5 - 40.0)
+
+
+def test_a_gap_across_the_seam_is_suggested_and_built():
+    """A ring around the sheet with a grey gap from x = 95 over the seam to x = 5."""
+    lines = [([(5, 30), (95, 30)], 5.0), ([(50, 0), (50, 30)], 4.0), ([(70, 30), (70, 60)], 4.0)]
+    full = drawn(lines, (W, H), 0.5)
+    neck = around([([(85, 30), (115, 30)], 4.0)])
+    density = replace(full, value=np.maximum(full.value, 0.4 * neck.value), seam=Seam.JOINED)
+    named = ports(("a", "in", 50, 0), ("b", "out", 70, 60))
+    graph = make_graph(density, settings(density, seam=Seam.JOINED), named)
+    (bridge,) = graph.bridges
+    assert bridge.likely and bridge.lowest_density == pytest.approx(0.4, abs=0.02)
+    assert min(bridge.middle_mm[0] % W, W - bridge.middle_mm[0] % W) < 0.5
+    assert bridge.middle_mm[1] == pytest.approx(30, abs=0.5)
+    accepted = (AcceptSettings(bridge=True, at_mm=(0.0, 30.0)),)
+    joined = make_graph(density, settings(density, seam=Seam.JOINED), named, accepts=accepted)
+    index = {node.id: k for k, node in enumerate(joined.nodes)}
+    loops = count_loops(len(joined.nodes), [(index[b.start], index[b.end]) for b in joined.branches])
+    assert loops == (1, 1) and not joined.dead_ends
+    total = sum(branch.length_mm for branch in joined.branches)
+    assert total == pytest.approx(W + 2 * 30, abs=1.0)
+    back = make_graph(
+        turned(density, 37),
+        settings(density, seam=Seam.JOINED),
+        ports(("a", "in", 68.5, 0), ("b", "out", 88.5, 60)),
+        accepts=(AcceptSettings(bridge="G1"),),
+    )
+    assert sum(branch.length_mm for branch in back.branches) == pytest.approx(total, abs=1e-6)
+
+
+def test_a_trim_on_a_joined_seam_keeps_the_rest():
+    density = around([*LADDER, ([(95, 45), (112, 30)], 3.5)])
+    named = ports(("a", "in", 20, 0), ("b", "out", 85, 60))
+    graph = make_graph(density, settings(density, seam=Seam.JOINED), named)
+    (end,) = graph.dead_ends
+    assert end.sheet_mm[0] % W == pytest.approx(13.3, abs=1.0)
+    accepted = (AcceptSettings(trim=True, at_mm=(end.sheet_mm[0] % W, end.sheet_mm[1])),)
+    trimmed = make_graph(density, settings(density, seam=Seam.JOINED), named, accepts=accepted)
+    assert not trimmed.dead_ends and len(trimmed.branches) == len(graph.branches) - 2
