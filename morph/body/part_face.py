@@ -78,8 +78,25 @@ def require_part_face(
     _require_right_side(mesh, triangle, distance, endless, places, file)
     corners = mesh.vertices_mm[mesh.triangles[triangle]]
     touching = np.abs(endless.distance_mm(corners.reshape(-1, 3)).reshape(-1, 3)) <= ON_CARRIER_MM
-    coarse = bool((touching.all(axis=1) | ~wrong).all()) and float(distance.max()) < MOST_CHORD_MM
-    raise _mismatch(tree, distance, wrong, coarse, endless, sheet, places, file)
+    remedy = ""
+    if (touching.all(axis=1) | ~wrong).all() and float(distance.max()) < MOST_CHORD_MM:
+        remedy = "Its points lie on the carrier, its facets cut across: export it with a chord of 0.05 mm or finer."
+    elif isinstance(endless, CylinderFace) and on_carrier.any():
+        remedy = _shift(mesh.vertices_mm[mesh.triangles[on_carrier], 2], places[:, 2])
+    raise _mismatch(tree, distance, wrong, remedy, endless, sheet, places, file)
+
+
+def _shift(skin_z_mm: Floats, sheet_z_mm: Floats) -> str:
+    """Returns how far to move a mesh along z when the carrier's skin is long enough but begins or ends elsewhere."""
+    low, high = float(skin_z_mm.min()), float(skin_z_mm.max())
+    least, most = float(sheet_z_mm.max()) - high, float(sheet_z_mm.min()) - low
+    if least > most or least <= 0.0 <= most:
+        return ""
+    return (
+        f"The carrier's skin of the mesh reaches from z = {low:.3f} to {high:.3f} mm and the sheet from "
+        f"{float(sheet_z_mm.min()):.3f} to {float(sheet_z_mm.max()):.3f} mm: move the mesh along z by {least:.3f} to "
+        f"{most:.3f} mm."
+    )
 
 
 def _require_right_side(
@@ -108,7 +125,7 @@ def _mismatch(
     tree: TriangleTree,
     distance: Floats,
     wrong: Bools,
-    coarse: bool,
+    remedy: str,
     endless: Face,
     sheet: Floats,
     places: Floats,
@@ -134,9 +151,7 @@ def _mismatch(
         found=f"{lies}; {int(wrong.sum())} of {len(places)} places are off",
         where=f"{file.source} at ({x:.3f}, {y:.3f}, {z:.3f}) mm, sheet place ({sheet[worst, 0]:.2f}, "
         f"{sheet[worst, 1]:.2f}) mm",
-        do="Its points lie on the carrier, its facets cut across: export it with a chord of 0.05 mm or finer."
-        if coarse
-        else _remedy(tree, along, endless, places, file),
+        do=remedy or _remedy(tree, along, endless, places, file),
     )
 
 
@@ -146,7 +161,10 @@ def _remedy(tree: TriangleTree, along: Floats, endless: Face, places: Floats, fi
         scale = factor / MM_PER_UNIT[file.unit]
         near = scale * closest_points(tree, places / scale)[0] <= ON_CARRIER_MM
         if scale != 1.0 and float(near.mean()) >= ALL_OVER:
-            return f'It fits when it is drawn in {unit}: add unit = "{unit}" to [blank], or export it again in mm.'
+            do = (
+                "export it again with the unit it is drawn in." if file.unit_from == "file" else f'add unit = "{unit}".'
+            )
+            return f"It fits when its numbers are in {unit}: {do}"
     middle = float(np.median(along))
     agrees = np.isfinite(middle) and float((np.abs(along - middle) <= ON_CARRIER_MM).mean()) >= ALL_OVER
     if agrees and isinstance(endless, CylinderFace | ConeFace):

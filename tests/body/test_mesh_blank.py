@@ -164,6 +164,12 @@ def test_another_unit_is_recognised(folder):
     assert blank.z_mm == pytest.approx((-40.0, 40.0), abs=1e-4)
 
 
+def test_a_mesh_that_stands_on_z_0_is_told_how_far_to_move(folder):
+    # skin from z = 0 to 80 mm, the sheet from -22.5 to 22.5 mm
+    error = refused("part-face-mismatch", folder, mesh_bodies.rod(40.0, 0.0, 80.0), carrier_of(40.0))
+    assert "by -57.500 to -22.500 mm" in error.do
+
+
 def test_a_coarse_export_of_the_right_shape_is_told_as_such(folder):
     body = mesh_bodies.rod(40.0, -40, 40, chord_mm=0.4)
     error = refused("part-face-mismatch", folder, body, carrier_of(40.0))
