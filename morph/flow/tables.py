@@ -63,52 +63,6 @@ def flow_rows(result: FlowResult) -> list[tuple[str | float | None, ...]]:
     return rows
 
 
-def flow_summary(result: FlowResult) -> dict[str, Any]:
-    """Returns the flow block of summary.json: totals, bands, spreads, and one row per branch and lead."""
-    return {
-        "fluid": result.fluid.name,
-        "inlet_c": result.fluid.temperature_c,
-        "density_kg_m3": result.fluid.density_kg_m3,
-        "viscosity_pa_s": result.fluid.viscosity_pa_s,
-        "reversed": result.reverse,
-        "flow_l_min": sum(row.flow_l_min for row in result.supplies),
-        "drop_bar": max(row.drop_bar for row in result.supplies),
-        "supplies": [
-            {
-                "flow_l_min": row.flow_l_min,
-                "drop_bar": row.drop_bar,
-                "hose_bar": row.hose_bar,
-                "bore_band_mm": band.bore_mm,
-                "drop_at_flow_bar": list(band.drop_at_flow_bar),
-                "flow_at_drop_l_min": list(band.flow_at_drop_l_min),
-            }
-            for row, band in zip(result.supplies, result.bands, strict=True)
-        ],
-        "velocity_mean_m_s": result.velocity_mean_m_s,
-        "velocity_max_over_min": _finite(result.velocity_max_over_min),
-        "velocity_p95_over_p5": _finite(result.velocity_p95_over_p5),
-        "dead_water": [{"id": row.id, "velocity_ratio": row.velocity_ratio} for row in result.dead_water],
-        "static_least_bar": result.static_least_bar,
-        "static_least_in": result.static_least_in,
-        "branches": [
-            {
-                "id": row.id,
-                "flow_l_min": row.flow_l_min,
-                "velocity_m_s": row.velocity_m_s,
-                "velocity_max_m_s": row.velocity_max_m_s,
-                "reynolds": row.reynolds,
-                "regime": row.regime.value,
-                "drop_bar": row.drop_bar,
-            }
-            for row in result.branches
-        ],
-    }
-
-
-def _finite(value: float) -> float | None:
-    return value if np.isfinite(value) else None
-
-
 def graph_flow(result: FlowResult) -> dict[str, Any]:
     """Returns what graph.json holds about flow: the coolant, `nodes` and `branches` by id.
 

@@ -9,11 +9,11 @@ import pytest
 from morph.body.finish import Finish, ThreadHole
 from morph.body.thread import make_thread
 from morph.core.errors import FlowError
+from morph.flow.drive import GivenFlow
 from morph.flow.measure import make_drive, measure_flow
 from morph.flow.network import make_network
 from morph.flow.result import Regime
 from morph.flow.solve_network import Liquid, NetworkSolver
-from morph.flow.drive import GivenFlow
 from morph.settings.job import FluidKind, FluidSettings, OwnFluid, Role, Supply
 from morph.settings.profile import read_profile
 from tests.flow.plans import coolant, ladder, make_plan
