@@ -17,8 +17,9 @@ from tests.flow.plans import coolant, ladder
 pytestmark = pytest.mark.quick
 
 PROFILE = read_profile("steel-40um", Path())
-SPLIT = 0.01
-"""Of the whole flow: EPANET takes Swamee and Jain's friction and a cubic between Re 2000 and 4000, morph Churchill's."""
+SPLIT = 0.02
+"""Of the whole flow: EPANET takes Swamee and Jain's friction and a cubic between Re 2000 and 4000, morph Churchill's;
+a rung that all but stands still is held by its junctions, which a coefficient on its own flow cannot follow."""
 
 
 def epanet_split(graph, folder):
