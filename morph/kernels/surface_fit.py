@@ -1,4 +1,4 @@
-"""Least-squares cubics to the points around a place of a surface: height, normal, curvature and scatter.
+"""Least-squares polynomials to the points around a place of a surface: height, normal, curvature and scatter.
 
 Method: a polynomial height over the tangent plane (osculating jet, Cazals and Pouget 2005, from memory), fitted
 twice, the second time over the plane the first fit found. Points are weighted by (1 - (rho / reach)^2)^2.
@@ -12,9 +12,11 @@ from numba import njit
 
 from morph.core.arrays import Floats, Ints
 
-N_TERMS = 10
+N_TERMS = 15
 LEAST_POINTS = 14
 """Fewer points than this around a place: the fit is a quadric instead of a cubic, or none at all below 8."""
+ENOUGH_POINTS = 45
+"""From here on the fit is a quartic: a tight bump is not flattened by the terms that are left out."""
 LEAST_QUADRIC = 8
 FACING = 0.2
 """Points whose normal has less than this cosine with the place's own belong to another side of the body."""
@@ -68,7 +70,7 @@ def _fit_once(
     near: Floats, count: int, q: Floats, reach: float, frame: Floats, a: Floats, b: Floats, term: Floats
 ) -> tuple[int, float]:
     """Fits heights over `frame` about q (3,) into b; returns the terms used (0: no fit) and the scatter in mm."""
-    n = N_TERMS if count >= LEAST_POINTS else 6
+    n = 6 if count < LEAST_POINTS else 10 if count < ENOUGH_POINTS else 15
     if count < LEAST_QUADRIC:
         return 0, 0.0
     a[:n, :n] = 0.0
@@ -82,15 +84,24 @@ def _fit_once(
         weight = max(1.0 - (dx * dx + dy * dy + dz * dz) / (reach * reach), 0.0) ** 2
         term[0], term[1], term[2], term[3], term[4], term[5] = 1.0, x, y, x * x, x * y, y * y
         term[6], term[7], term[8], term[9] = x * x * x, x * x * y, x * y * y, y * y * y
+        if n == 15:
+            term[10], term[11], term[12] = x * x * x * x, x * x * x * y, x * x * y * y
+            term[13], term[14] = x * y * y * y, y * y * y * y
         for i in range(n):
             b[i] += weight * term[i] * w
             for j in range(i + 1):
                 a[i, j] += weight * term[i] * term[j]
         total += weight
         squares += weight * w * w
-    right = b[:n].copy()
+    right, whole = b[:n].copy(), a[:6, :6].copy()
     if not _solve(a, b, n):
-        return 0, 0.0
+        # too few rows of points for the higher terms: the quadric alone
+        n = 6
+        a[:6, :6] = whole
+        b[:6] = right[:6]
+        b[6:] = 0.0
+        if not _solve(a, b, n):
+            return 0, 0.0
     for i in range(n):
         squares -= b[i] * right[i]
     freedom = max(1.0 - n / count, 0.1)

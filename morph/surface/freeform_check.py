@@ -19,7 +19,7 @@ from morph.geometry.surface import Places
 from morph.layout.graph import ChannelGraph
 from morph.surface.freeform import FreeformCarrier
 from morph.surface.freeform_error import fault, others_text, place_text, sheet_text
-from morph.surface.guide import Guide
+from morph.surface.guide import CALM_MM, Guide
 from morph.surface.offset import OffsetSurface
 from morph.surface.sheet_grid import SheetGrid
 
@@ -37,8 +37,6 @@ NOISE_TIMES = 5.0
 """Nearest points of a noisy mesh lie up to about this many times its scatter from its mean surface."""
 SHARP_DEG = 30.0
 """Triangles that turn by more than this (plus what noise does) meet in an edge, not in a rounding."""
-CALM_MM = 0.003
-"""Below this scatter the curvature at single vertices can be trusted."""
 NEAR_CELLS, FAR_CELLS = 0.6, 5.0
 """Nodes nearer than the first in space, farther apart than the second on the sheet, overlap."""
 

@@ -69,7 +69,7 @@ def lay_sheet(
     laid: _Laid | None = None
     for k, share in enumerate(levels):
         part = grid.core(share) if share < 1.0 else grid
-        places = _first_core(surface, part, anchor, heading) if laid is None else _grown(surface, laid, part)
+        places = exponential_map(surface, part, anchor, heading) if laid is None else _grown(surface, laid, part)
         last = share >= 1.0
         places = relax(
             surface,
@@ -85,7 +85,12 @@ def lay_sheet(
     return laid.places
 
 
-def _first_core(surface: Surface, part: SheetGrid, anchor: Places, heading: Heading) -> Places:
+def exponential_map(surface: Surface, part: SheetGrid, anchor: Places, heading: Heading) -> Places:
+    """Returns where straight walks from the anchor end, one for each node of `part`: radii kept, circles not.
+
+    Raises:
+        LeavesSurface: the surface ends before a walk does.
+    """
     flat = part.flat_mm()
     n = len(flat)
     start = Places(np.repeat(anchor.triangle, n), np.repeat(anchor.xyz_mm, n, axis=0))

@@ -32,11 +32,20 @@ from morph.surface.freeform_error import fault, others_text, unit
 LONGEST_EDGE_MM = 6.0
 """Longer edges are split, so that fits find points between the ends of a long thin triangle."""
 REACH_EDGES = 3.0
-"""Reach of the fits in typical edge lengths: about 28 vertices."""
-CURVATURE_SHARE = 0.05
-"""The reach grows until noise may shift curvature times depth by at most this."""
-SCATTER_TO_CURVATURE = 20.0
-"""Standard error of a fitted curvature is about this times noise / (reach^2 sqrt(points)) (own measurement)."""
+"""Reach of the fits in typical edge lengths: about 28 vertices, a cubic."""
+NOISY_REACH_EDGES = 4.3
+"""Least reach on a noisy mesh: about 58 vertices, a quartic."""
+CURVATURE_SHARE = 0.003
+"""The reach grows until noise shifts curvature times depth, which is a strain of the sheet, by about this."""
+SCATTER_TO_CURVATURE = 62.0
+"""Standard error of a fitted quartic's curvature: this times noise / (reach^2 sqrt(points)) (own measurement)."""
+CALM_MM = 0.003
+"""Below this scatter the least reach serves."""
+WIDENING = 1.2
+"""Step by which the reach grows."""
+BLUR = 1.0
+"""The curvature of a tenth of the places may change by this many standard errors before a fit counts as too wide
+(0.80 to 0.84 where noise alone changes it, 1.1 where the shape is blurred: own measurement)."""
 LARGEST_REACH_SHARE = 0.2
 """Most of the sheet's shorter side that the reach may grow to."""
 NOISIEST_MM = 0.25
@@ -304,9 +313,37 @@ def _fits(face: Surface, place: Floats, size_mm: tuple[float, float], depth_mm: 
             do="Smooth or re-mesh the scan, or export the part face from CAD.",
             at_mm=points[sample[worst]],
         )
-    spread = SCATTER_TO_CURVATURE * noise * depth_mm * edge / (CURVATURE_SHARE * float(np.sqrt(np.pi)))
-    reach = max(reach, min(float(np.cbrt(spread)), LARGEST_REACH_SHARE * min(size_mm)))
+    if noise > CALM_MM:
+        reach = _widened(face, sample, edge, noise, depth_mm, LARGEST_REACH_SHARE * min(size_mm))
     return fit_around(face, points, face.vertex_normals, reach), reach, noise
+
+
+def _widened(
+    face: Surface,
+    sample: Ints,
+    edge_mm: float,
+    noise_mm: float,
+    depth_mm: float,
+    most_mm: float,
+) -> float:
+    """Returns the reach at which noise no longer matters, or the largest one at which fits still follow the shape.
+
+    Where widening changes the curvature by more than the noise explains, the shape itself is being blurred.
+    """
+    points = face.mesh.vertices_mm[sample]
+    reach_mm = NOISY_REACH_EDGES * edge_mm
+    trial = fit_around(face, points, face.vertex_normals[sample], reach_mm)
+    while True:
+        error = SCATTER_TO_CURVATURE * noise_mm * edge_mm / (float(np.sqrt(np.pi)) * reach_mm**3)
+        wider = WIDENING * reach_mm
+        if error * depth_mm <= CURVATURE_SHARE or wider > most_mm:
+            return reach_mm
+        fit = fit_around(face, points, face.vertex_normals[sample], wider)
+        usable = (fit.points > 0) & (trial.points > 0)
+        change = np.abs(fit.curvature[usable, 0] - trial.curvature[usable, 0])
+        if not usable.any() or float(np.quantile(change, 0.9)) > BLUR * error:
+            return reach_mm
+        reach_mm, trial = wider, fit
 
 
 def _axes(face: Surface, placed: Places, reach_mm: float, settings: FreeformSettings) -> tuple[Floats, Floats]:

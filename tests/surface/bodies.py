@@ -60,6 +60,18 @@ def bumps(x, y):
     )
 
 
+def ridges(x, y):
+    """A cap with tighter bumps: convex radii down to about 14 mm."""
+    return (
+        -(x**2) / 220.0
+        - y**2 / 300.0
+        + 4.0 * np.exp(-((x - 25) ** 2 + (y - 10) ** 2) / 170.0)
+        + 5.0 * np.exp(-((x + 30) ** 2 + (y + 14) ** 2) / 220.0)
+        + 3.0 * np.exp(-((x + 12) ** 2 / 120.0 + (y - 22) ** 2 / 600.0))
+        - 3.0 * np.exp(-((x - 5) ** 2 + (y + 20) ** 2) / 200.0)
+    )
+
+
 def cylinder(radius, n, seed, half_angle=2.6, half_height=60.0, noise=0.0, joined=False):
     def shape(uv):
         return np.column_stack([radius * np.cos(uv[:, 0]), radius * np.sin(uv[:, 0]), uv[:, 1]])
@@ -100,6 +112,10 @@ def bumpy_cap(n, seed, noise=0.0):
     return parametric(height_field(bumps), (-85.0, 85.0), (-65.0, 65.0), n, seed, noise=noise)
 
 
+def ridged_cap(n, seed, noise=0.0):
+    return parametric(height_field(ridges), (-85.0, 85.0), (-65.0, 65.0), n, seed, noise=noise)
+
+
 def saddle(n, seed):
     return parametric(height_field(lambda x, y: x**2 / 200.0 - y**2 / 160.0), (-85.0, 85.0), (-65.0, 65.0), n, seed)
 
@@ -113,6 +129,18 @@ def torus_piece(n, seed, ring=90.0, tube=40.0):
         return np.column_stack([r * np.cos(a), r * np.sin(a), tube * np.sin(b)])
 
     return parametric(shape, (-90.0, 90.0), (-75.0, 75.0), n, seed)
+
+
+def whole_torus(ring, tube, n, m):
+    """A closed torus about z in a regular grid of n x m, normals outwards."""
+    i, j = (a.ravel() for a in np.meshgrid(np.arange(n), np.arange(m), indexing="ij"))
+    a, b = 2 * np.pi * i / n, 2 * np.pi * j / m
+    r = ring + tube * np.cos(b)
+    corner = [i * m + j, (i + 1) % n * m + j, (i + 1) % n * m + (j + 1) % m, i * m + (j + 1) % m]
+    triangles = np.concatenate(
+        [np.column_stack([corner[0], corner[1], corner[2]]), np.column_stack([corner[0], corner[2], corner[3]])]
+    )
+    return Mesh(np.column_stack([r * np.cos(a), r * np.sin(a), tube * np.sin(b)]), triangles)
 
 
 def bent_tube(n, seed, bend=140.0, radius=38.0):
