@@ -123,6 +123,46 @@ def join_vertices(h: int, start: Ints, twin: Ints, out: Ints, halves: Ints, n_ri
             start[base + k] = -1
 
 
+@njit(cache=True, nogil=True)
+def pair_edges(triangles: Ints, n_vertices: int, twin: Ints) -> bool:
+    """Writes the opposite of each half-edge to `twin (3 m,)`; returns whether each has exactly one.
+
+    Half-edges are gathered by the vertex they start from; the opposite of one starts where it ends.
+    """
+    first = np.zeros(n_vertices + 1, np.int64)
+    m = len(triangles)
+    for t in range(m):
+        for k in range(3):
+            first[triangles[t, k] + 1] += 1
+    for i in range(n_vertices):
+        first[i + 1] += first[i]
+    free = first[:-1].copy()
+    half = np.empty(3 * m, np.int64)
+    goal = np.empty(3 * m, np.int64)
+    for t in range(m):
+        for k in range(3):
+            at = free[triangles[t, k]]
+            half[at] = 3 * t + k
+            goal[at] = triangles[t, (k + 1) % 3]
+            free[triangles[t, k]] = at + 1
+    closed = m > 0
+    for i in range(n_vertices):
+        for q in range(first[i], first[i + 1]):
+            j = goal[q]
+            same = 0
+            for p in range(first[i], first[i + 1]):
+                same += goal[p] == j
+            back = 0
+            twin[half[q]] = -1
+            for p in range(first[j], first[j + 1]):
+                if goal[p] == i:
+                    back += 1
+                    twin[half[q]] = half[p]
+            if same != 1 or back != 1 or i == j:
+                closed = False
+    return closed
+
+
 @njit(cache=True, nogil=True, error_model="numpy")
 def collapse_edges(
     first: int,

@@ -297,23 +297,10 @@ def prune_blocks(
 
 @njit(cache=True, nogil=True, error_model="numpy")
 def sample_blocks(
-    first: int,
-    last: int,
-    corner: Ints,
-    start: Ints,
-    length: Ints,
-    near: Ints,
-    pieces: Floats,
-    owner: Ints,
-    nodes: Floats,
-    blend_mm: float,
-    origin: Floats,
-    h_mm: float,
-    end: Ints,
-    planes: Floats,
-    values: NDArray[np.float32],
-    codes: NDArray[np.uint8],
-) -> None:
+    first: int, last: int, corner: Ints, start: Ints, length: Ints, near: Ints,
+    pieces: Floats, owner: Ints, nodes: Floats, blend_mm: float, origin: Floats, h_mm: float, end: Ints, planes: Floats,
+    values: NDArray[np.float32], codes: NDArray[np.uint8],
+) -> None:  # fmt: skip
     """Samples the blocks first..last - 1 where a surface may pass and writes each cell's case.
 
     Descends from the block to cubes of 4 and 2 cells with ever shorter lists; cubes that hold no surface, or one that

@@ -12,13 +12,16 @@ from numba import njit
 from numpy.typing import NDArray
 
 from morph.core.arrays import Floats, Ints
-from morph.kernels.swept_ball import piece_distance, piece_gradient
+from morph.kernels.swept_ball import piece_distance, piece_wall
 
 LEAST_LEVEL = 0.3
 """Steeper than this (sine to the build direction) a channel has no ridge worth a point of its own."""
 
-NEWTON_STEPS, INNER_STEPS = 4, 3
-CLOSE_MM = 1e-7
+NEWTON_STEPS, INNER_STEPS = 12, 4
+CLOSE_MM = 1e-6
+LONGEST_STEP = 0.3
+"""A step changes the distance by at most this share."""
+
 RIDGE_STEPS = 14
 """Halvings of the angle in which the ridge is looked for."""
 
@@ -90,40 +93,52 @@ def carry_axis(side: Floats, i: int, tangent: Floats, j: int) -> None:
 
 @njit(cache=True, nogil=True, error_model="numpy")
 def ray_to_wall(
-    centre: Floats, way: Floats, start: float, angle: float, steps: int,
+    centre: Floats, way: Floats, start: float, likely: int, angle: float, steps: int,
     pieces: Floats, own: Ints, low: int, high: int, out: Floats,
-) -> float:  # fmt: skip
-    """Returns how far from `centre (3,)` along unit `way (3,)` the wall of the pieces `own[low:high]` is, in mm.
+) -> tuple[float, int]:  # fmt: skip
+    """Returns how far from `centre (3,)` along unit `way (3,)` the wall of the pieces `own[low:high]` is, and which it is.
 
-    On a round wall a little further, by CHORD_SHARE of the squared edge that `angle` makes there. `out (4,)` receives
-    the wall's direction and its curvature. At most so many Newton steps from `start`, each as far as the piece that was
-    nearest takes it; then the nearest is looked for again.
+    In mm; on a round wall a little further, by CHORD_SHARE of the squared edge that `angle` makes there. `out (4,)`
+    receives the wall's direction and its curvature. Newton steps from `start` to the wall of the `likely` piece, then of
+    the one that is nearest there, at most `steps` pieces one after the other.
     """
     t = start
+    best = likely
     for _ in range(steps):
-        px, py, pz = centre[0] + t * way[0], centre[1] + t * way[1], centre[2] + t * way[2]
-        least = 1e30
-        best = 0
-        for q in range(low, high):
-            d = piece_distance(px, py, pz, pieces, own[q])
-            if d < least:
-                least = d
-                best = own[q]
-        moved = 0.0
+        px, py, pz, step = 0.0, 0.0, 0.0, 0.0
         for _ in range(INNER_STEPS):
-            out[0], out[1], out[2], out[3] = piece_gradient(px, py, pz, pieces, best)
+            px, py, pz = centre[0] + t * way[0], centre[1] + t * way[1], centre[2] + t * way[2]
+            f, out[0], out[1], out[2], out[3] = piece_wall(px, py, pz, pieces, best)
             slope = max(out[0] * way[0] + out[1] * way[1] + out[2] * way[2], 0.05)
             edge = t * angle / slope
-            step = (least - CHORD_SHARE * edge * edge * out[3]) / slope
-            t -= step
-            moved += step
+            step = (f - CHORD_SHARE * edge * edge * out[3]) / slope
+            t -= min(max(step, -LONGEST_STEP * t), LONGEST_STEP * t)
             if abs(step) < CLOSE_MM:
                 break
-            px, py, pz = centre[0] + t * way[0], centre[1] + t * way[1], centre[2] + t * way[2]
-            least = piece_distance(px, py, pz, pieces, best)
-        if abs(moved) < CLOSE_MM or low + 1 == high:
+        least = piece_distance(px, py, pz, pieces, best) - CLOSE_MM
+        before = best
+        for q in range(low, high):
+            if own[q] != before:
+                d = piece_distance(px, py, pz, pieces, own[q])
+                if d < least:
+                    least = d
+                    best = own[q]
+        if best == before and abs(step) < CLOSE_MM:
             break
-    return t
+    return t, best
+
+
+@njit(cache=True, nogil=True, error_model="numpy")
+def nearest_own(centre: Floats, way: Floats, t: float, pieces: Floats, own: Ints, low: int, high: int) -> int:
+    """Returns which of the pieces `own[low:high]` is nearest to the point t mm from `centre (3,)` along `way (3,)`."""
+    least = 1e30
+    best = 0
+    for q in range(low, high):
+        d = piece_distance(centre[0] + t * way[0], centre[1] + t * way[1], centre[2] + t * way[2], pieces, own[q])
+        if d < least:
+            least = d
+            best = own[q]
+    return best
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
@@ -136,12 +151,13 @@ def find_ridge(
     Before a ridge the wall leans to one side, behind it to the other.
     """
     t = start
+    best = nearest_own(centre, side, t, pieces, own, low, high)
     curved = 0
     for k in range(-1, 2):
         c, s = np.cos(0.5 * k * angle), np.sin(0.5 * k * angle)
         for a in range(3):
             way[a] = c * side[a] + s * across[a]
-        t = ray_to_wall(centre, way, t, 0.0, 2, pieces, own, low, high, out)
+        t, best = ray_to_wall(centre, way, t, best, 0.0, NEWTON_STEPS, pieces, own, low, high, out)
         curved += out[3] > 0.0
     if curved == 3:
         return 0.0
@@ -151,7 +167,7 @@ def find_ridge(
         c, s = np.cos(at), np.sin(at)
         for a in range(3):
             way[a] = c * side[a] + s * across[a]
-        t = ray_to_wall(centre, way, t, 0.0, 2, pieces, own, low, high, out)
+        t, best = ray_to_wall(centre, way, t, best, 0.0, NEWTON_STEPS, pieces, own, low, high, out)
         if out[0] * across[0] + out[1] * across[1] + out[2] * across[2] < 0.0:
             left = at
         else:
@@ -180,6 +196,7 @@ def place_rings(
         across[1] = tangent[r, 2] * side[r, 0] - tangent[r, 0] * side[r, 2]
         across[2] = tangent[r, 0] * side[r, 1] - tangent[r, 1] * side[r, 0]
         t = radius[r]
+        best = nearest_own(centre[r], side[r], t, pieces, own, low, high)
         lean[r] = 0.0
         if ridge[r]:
             lean[r] = find_ridge(centre[r], side[r], across, t, angle, pieces, own, low, high, way, out)
@@ -188,7 +205,7 @@ def place_rings(
             c, s = np.cos(turn), np.sin(turn)
             for a in range(3):
                 way[a] = c * side[r, a] + s * across[a]
-            t = ray_to_wall(centre[r], way, t, angle, NEWTON_STEPS, pieces, own, low, high, out)
+            t, best = ray_to_wall(centre[r], way, t, best, angle, NEWTON_STEPS, pieces, own, low, high, out)
             for a in range(3):
                 points[offset[r] + k, a] = centre[r, a] + t * way[a]
 
@@ -236,8 +253,14 @@ def mark_clear(
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
-def ring_follows(a: int, b: int, n: int, offset: Ints, points: Floats, centre: Floats, tolerance_mm: float) -> bool:
-    """Returns whether the strip from ring a to ring b stays within a tolerance of the rings between, and goes on."""
+def ring_follows(
+    a: int, b: int, n: int, offset: Ints, points: Floats, centre: Floats, inside_mm: float, outside_mm: float
+) -> bool:
+    """Returns whether the strip from ring a to ring b goes on, and stays within two tolerances of the rings between.
+
+    `inside_mm` counts where the strip is nearer to the centreline than the points of those rings, `outside_mm` where
+    it is farther.
+    """
     gap = np.empty(3)
     reach = 0.0
     for x in range(3):
@@ -260,9 +283,13 @@ def ring_follows(a: int, b: int, n: int, offset: Ints, points: Floats, centre: F
                 share += (points[m, x] - points[p, x]) * (points[q, x] - points[p, x])
             share /= length
             away = 0.0
+            outwards = 0.0
             for x in range(3):
-                away += (points[m, x] - points[p, x] - share * (points[q, x] - points[p, x])) ** 2
-            if away > tolerance_mm * tolerance_mm:
+                lack = points[m, x] - points[p, x] - share * (points[q, x] - points[p, x])
+                away += lack * lack
+                outwards += lack * (points[m, x] - centre[r, x])
+            limit = inside_mm if outwards > 0.0 else outside_mm
+            if away > limit * limit:
                 return False
     return True
 
@@ -270,11 +297,11 @@ def ring_follows(a: int, b: int, n: int, offset: Ints, points: Floats, centre: F
 @njit(cache=True, nogil=True)
 def choose_rings(
     first: int, last: int, low: Ints, high: Ints, sides: Ints, offset: Ints, points: Floats, centre: Floats,
-    at_mm: Floats, longest_mm: Floats, tolerance_mm: float, chosen: NDArray[np.uint8],
+    at_mm: Floats, longest_mm: Floats, inside_mm: float, outside_mm: float, chosen: NDArray[np.uint8],
 ) -> None:  # fmt: skip
     """Sets `chosen (k,)` to 1 for the rings that stretches first..last - 1 need, from ring `low` to ring `high`.
 
-    As few as the tolerance and `longest_mm (s,)` between two rings allow; to 2 for the first ring of a stretch whose
+    As few as the tolerances of `ring_follows` and `longest_mm (s,)` between two rings allow; to 2 for the first ring of a stretch whose
     strips would fold.
     """
     for s in range(first, last):
@@ -283,13 +310,13 @@ def choose_rings(
         while a < high[s]:
             b = a + 1
             n = sides[a]
-            if not ring_follows(a, b, n, offset, points, centre, tolerance_mm):
+            if not ring_follows(a, b, n, offset, points, centre, inside_mm, outside_mm):
                 chosen[low[s]] = 2
                 break
             while (
                 b < high[s]
                 and at_mm[b + 1] - at_mm[a] <= longest_mm[s]
-                and ring_follows(a, b + 1, n, offset, points, centre, tolerance_mm)
+                and ring_follows(a, b + 1, n, offset, points, centre, inside_mm, outside_mm)
             ):
                 b += 1
             chosen[b] = 1

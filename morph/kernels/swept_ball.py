@@ -145,7 +145,14 @@ def piece_direction(px: float, py: float, pz: float, pieces: Floats, i: int) -> 
 @njit(cache=True, nogil=True, error_model="numpy")
 def piece_gradient(px: float, py: float, pz: float, pieces: Floats, i: int) -> tuple[float, float, float, float]:
     """Returns the gradient of piece i's distance, and the curvature (1/mm) its wall has across: 0 on a roof."""
-    _, u = piece_nearest(px, py, pz, pieces, i)
+    _, x, y, z, curvature = piece_wall(px, py, pz, pieces, i)
+    return x, y, z, curvature
+
+
+@njit(cache=True, nogil=True, error_model="numpy")
+def piece_wall(px: float, py: float, pz: float, pieces: Floats, i: int) -> tuple[float, float, float, float, float]:
+    """Returns what `piece_distance` and `piece_gradient` return, for the price of one."""
+    distance, u = piece_nearest(px, py, pz, pieces, i)
     vx = px - pieces[i, 0] - u * pieces[i, 3]
     vy = py - pieces[i, 1] - u * pieces[i, 4]
     vz = pz - pieces[i, 2] - u * pieces[i, 5]
@@ -153,11 +160,11 @@ def piece_gradient(px: float, py: float, pz: float, pieces: Floats, i: int) -> t
     radius = pieces[i, 7] + pieces[i, 8] * u
     cosine = pieces[i, 13]
     if cosine == 1.0:
-        return vx / size, vy / size, vz / size, 1.0 / radius
+        return distance, vx / size, vy / size, vz / size, 1.0 / radius
     k = pieces[i, 15]
     above = vx * pieces[i, 10] + vy * pieces[i, 11] + vz * pieces[i, 12]
     if above <= (0.0 if k > 0.0 else size * cosine):
-        return vx / size, vy / size, vz / size, 1.0 / radius
+        return distance, vx / size, vy / size, vz / size, 1.0 / radius
     vx -= above * pieces[i, 10]
     vy -= above * pieces[i, 11]
     vz -= above * pieces[i, 12]
@@ -174,6 +181,7 @@ def piece_gradient(px: float, py: float, pz: float, pieces: Floats, i: int) -> t
         curvature = 1.0 / (k * radius)
     outward /= rho
     return (
+        distance,
         vx * outward + pieces[i, 10] * upward,
         vy * outward + pieces[i, 11] * upward,
         vz * outward + pieces[i, 12] * upward,

@@ -23,7 +23,7 @@ from morph.geometry.mesh import Mesh
 from morph.solid.blank import blank_body
 from morph.solid.body import arrays_of, body_of, require_valid
 from morph.solid.crease import sharpen
-from morph.solid.extract import extract_surface
+from morph.solid.extract import any_corner, extract_surface
 from morph.solid.field import SampledField, list_pieces, sample_field
 from morph.solid.result import ChannelSolid
 from morph.solid.simplify import simplify
@@ -192,7 +192,7 @@ def _untangled(field: SampledField, vertices: Floats, triangles: Ints, progress:
             middle = round_to_file(extract_surface(field, progress, steps=0).vertices)
         bad = np.zeros(len(vertices), np.bool_)
         bad[triangles[crossed]] = True
-        bad[triangles[bad[triangles].any(axis=1)]] = True
+        bad[triangles[any_corner(bad, triangles)]] = True
         vertices = np.where(bad[:, None], middle, vertices)
     return vertices
 

@@ -16,7 +16,7 @@ from morph.core.progress import SILENT, Progress
 from morph.geometry.crossings import measure_crossings
 from morph.geometry.mesh import Mesh
 from morph.geometry.slabs import run_slabs
-from morph.solid.extract import Surface
+from morph.solid.extract import Surface, any_corner
 from morph.solid.field import BLOCKS_PER_SLAB, SampledField
 from morph.solid.tidy import round_to_file
 
@@ -128,7 +128,7 @@ def _crease_vertices(
         progress,
     )
     near = marked > 0
-    near[surface.triangles[near[surface.triangles].any(axis=1)]] = True
+    near[surface.triangles[any_corner(near, surface.triangles)]] = True
     return chosen[found > 0], placed[found > 0], _Turns(least_cosine, near)
 
 
@@ -159,7 +159,7 @@ def _turn_quads(field: SampledField, surface: Surface, vertices: Floats, sharp: 
     A diagonal whose triangles fold over is taken only if both do.
     """
     triangles = surface.triangles.copy()
-    rows = np.flatnonzero(sharp[triangles[0::2]].any(axis=1) | sharp[triangles[1::2, 2]])
+    rows = np.flatnonzero(any_corner(sharp, triangles[0::2]) | sharp[triangles[1::2, 2]])
     if not len(rows):
         return triangles
     ring = np.column_stack([triangles[2 * rows], triangles[2 * rows + 1, 2]])
@@ -184,7 +184,7 @@ def _turn_quads(field: SampledField, surface: Surface, vertices: Floats, sharp: 
 
 def _cutting_edges(surface: Surface, triangles: Ints, sharp: Bools, turns: _Turns) -> tuple[Ints, Ints, Ints]:
     """Returns edges (k, 2) whose ends lie off the crease with differing normals, each once; its triangle and corner."""
-    rows = np.flatnonzero(turns.near[triangles].any(axis=1))
+    rows = np.flatnonzero(any_corner(turns.near, triangles))
     few = triangles[rows]
     edges = np.concatenate([few[:, [0, 1]], few[:, [1, 2]], few[:, [2, 0]]])
     kept = np.flatnonzero(
@@ -205,7 +205,7 @@ def _flip_edges(
     keep = sharp[c]
     edges, row, c = edges[keep], row[keep], c[keep]
     n = len(vertices)
-    near = np.flatnonzero(~sharp[triangles].all(axis=1) & sharp[triangles].any(axis=1))
+    near = np.flatnonzero(any_corner(~sharp, triangles) & any_corner(sharp, triangles))
     directed = np.concatenate([triangles[near, k] * n + triangles[near, (k + 1) % 3] for k in range(3)])
     order = np.argsort(directed)
     wanted = edges[:, 1] * n + edges[:, 0]
@@ -301,11 +301,11 @@ def _with_splits(vertices: Floats, triangles: Ints, split: _Split) -> tuple[Floa
 def _crossing_vertices(vertices: Floats, triangles: Ints, touched: Bools, wider: bool, progress: Progress) -> Bools:
     """Returns the vertices (n,) of triangles that cross another, looking at touched vertices and two rings around."""
     near = np.zeros(len(vertices), np.bool_)
-    near[triangles[touched[triangles].any(axis=1)]] = True
-    rows = np.flatnonzero(near[triangles].any(axis=1))
+    near[triangles[any_corner(touched, triangles)]] = True
+    rows = np.flatnonzero(any_corner(near, triangles))
     crossed = measure_crossings(Mesh(vertices, triangles[rows]), progress).crossed
     bad = np.zeros(len(vertices), np.bool_)
     bad[triangles[rows[crossed]]] = True
     if wider:
-        bad[triangles[bad[triangles].any(axis=1)]] = True
+        bad[triangles[any_corner(bad, triangles)]] = True
     return bad

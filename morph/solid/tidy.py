@@ -20,6 +20,9 @@ FLAT_HEIGHT_MM = 1e-6
 
 MOST_ROUNDS = 12
 
+FEW_TRIANGLES = 20_000
+"""Smaller meshes are tested for being closed by sorting, without compiling anything."""
+
 
 def round_to_file(xyz_mm: Floats) -> Floats:
     """Returns positions (n, 3) rounded to the nearest float32, as float64."""
@@ -79,8 +82,12 @@ def require_closed(mesh: Mesh, what: str) -> None:
 
 def is_closed(mesh: Mesh) -> bool:
     """Returns whether every edge of `mesh` is shared by exactly two triangles, in opposite directions."""
-    start, end = mesh.triangles.ravel(), np.roll(mesh.triangles, -1, axis=1).ravel()
     n = len(mesh.vertices_mm)
+    if len(mesh.triangles) > FEW_TRIANGLES:
+        from morph.kernels.collapse import pair_edges
+
+        return bool(pair_edges(mesh.triangles, n, np.empty(mesh.triangles.size, np.int64)))
+    start, end = mesh.triangles.ravel(), np.roll(mesh.triangles, -1, axis=1).ravel()
     there, back = np.sort(start * n + end), np.sort(end * n + start)
     return len(there) > 0 and bool((there == back).all()) and bool((there[1:] != there[:-1]).all())
 

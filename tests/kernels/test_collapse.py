@@ -6,7 +6,7 @@ import trimesh
 
 from morph.core.progress import SILENT
 from morph.geometry.mesh import Mesh, measure_condition
-from morph.kernels.collapse import gather_ring, sharpest, try_collapse
+from morph.kernels.collapse import gather_ring, pair_edges, sharpest, try_collapse
 from morph.solid.simplify import _twins, simplify
 
 TOLERANCE_MM = 0.008
@@ -100,3 +100,16 @@ def test_an_open_mesh_is_left_as_it_is():
     triangles = np.array([[0, 1, 2], [0, 2, 3]])
     assert _twins(triangles, 4) is None
     assert simplify(np.eye(4, 3), triangles, np.zeros(4, bool), 1.0, SILENT) is triangles
+
+
+def test_half_edges_are_paired_as_sorting_pairs_them():
+    body = trimesh.creation.icosphere(subdivisions=2)
+    triangles = np.asarray(body.faces, np.int64)
+    twin = np.empty(triangles.size, np.int64)
+    assert pair_edges(triangles, len(body.vertices), twin)
+    start, end = triangles.ravel(), np.roll(triangles, -1, axis=1).ravel()
+    assert (start[twin] == end).all() and (end[twin] == start).all()
+    assert not pair_edges(triangles[1:], len(body.vertices), twin[3:])
+    assert not pair_edges(np.vstack([triangles, triangles[:1]]), len(body.vertices), np.empty(triangles.size + 3, int))
+    assert not pair_edges(triangles[:, ::-1][:1], len(body.vertices), twin[:3])
+    assert not pair_edges(triangles[:0], len(body.vertices), twin[:0])

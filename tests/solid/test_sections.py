@@ -133,6 +133,16 @@ def test_auto_is_round_below_the_free_span_and_roofed_above_without_a_step():
     assert np.abs(np.diff(rise)).max() < 0.08
 
 
+def near_crease(mesh, angle_deg=30.0):
+    """Which triangles have a corner on an edge at which the mesh turns by more than an angle, read off by trimesh."""
+    import trimesh
+
+    body = trimesh.Trimesh(mesh.vertices_mm, mesh.triangles, process=False)
+    marked = np.zeros(len(mesh.vertices_mm), bool)
+    marked[body.face_adjacency_edges[body.face_adjacency_angles > np.radians(angle_deg)]] = True
+    return marked[mesh.triangles].any(axis=1)
+
+
 @pytest.mark.parametrize("shape", ["round", "roofed", "arched"])
 def test_the_mesh_lies_on_the_exact_field_also_at_its_creases(shape):
     plan = shaped(plans.ladder(), shape, 47.0)
@@ -142,12 +152,16 @@ def test_the_mesh_lies_on_the_exact_field_also_at_its_creases(shape):
     mesh = Mesh(*sharpen(field, surface, SILENT))
     written = make_channel_solid(plan, plans.cylinder_blank(), 0.3).swept
     for name, body in (("extracted", mesh), ("written", written)):
-        points, _ = spread_points(body, 20000)
+        points, of = spread_points(body, 20000)
         off = np.abs(exact_field(sweep, points))
         sharp = 100 * sharp_corner_share(body)
-        print(
-            f"{shape} {name}: max {off.max():.3f}, 99.9 % within {np.quantile(off, 0.999):.4f} mm, corners {sharp:.2f} %"
-        )
+        at_crease = near_crease(body)[of]
+        for part, some in (("smooth walls", off[~at_crease]), ("at creases", off[at_crease])):
+            if len(some):
+                most, last = some.max(), np.quantile(some, 0.999)
+                print(f"{shape} {name}, {part}: {len(some)} points, max {most:.4f}, 99.9 % within {last:.4f} mm")
+        print(f"{shape} {name}: 99.9 % within {np.quantile(off, 0.999):.4f} mm, corners below 10 degrees {sharp:.2f} %")
+        assert np.quantile(off[~at_crease], 0.999) <= 0.015
         assert np.quantile(off, 0.999) < 0.018
         assert np.quantile(off, 0.99) < 0.010
     assert sharp_corner_share(mesh) < 0.005
