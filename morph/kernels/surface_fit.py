@@ -18,6 +18,8 @@ LEAST_POINTS = 14
 ENOUGH_POINTS = 45
 """From here on the fit is a quartic: a tight bump is not flattened by the terms that are left out."""
 LEAST_QUADRIC = 8
+SINGULAR = 1e-7
+"""Least pivot over diagonal: below it the points do not tell the term (rows of points in a line)."""
 FACING = 0.2
 """Points whose normal has less than this cosine with the place's own belong to another side of the body."""
 FITS = 4
@@ -33,7 +35,7 @@ def _solve(a: Floats, b: Floats, n: int) -> bool:
             for k in range(j):
                 s -= a[i, k] * a[j, k]
             if i == j:
-                if not s > 1e-13 * a[i, i]:
+                if not s > SINGULAR * a[i, i]:
                     return False
                 a[i, i] = np.sqrt(s)
             else:

@@ -29,10 +29,13 @@ from morph.geometry.surface import (
 from morph.settings.job import FreeformSettings
 from morph.surface.freeform_error import fault, others_text, unit
 
-LONGEST_EDGE_MM = 6.0
-"""Longer edges are split, so that fits find points between the ends of a long thin triangle."""
+LONGEST_EDGE_MM = (4.0, 8.0)
+"""Edges longer than three typical shortest ones, but at least the first and at most the second, are split, so that
+fits find points between the ends of a long thin triangle."""
 REACH_EDGES = 3.0
 """Reach of the fits in typical edge lengths: about 28 vertices, a cubic."""
+REACH_LONG_EDGES = 2.2
+"""And at least this many long edges, so that thin triangles give enough rows of points across them."""
 NOISY_REACH_EDGES = 4.3
 """Least reach on a noisy mesh: about 58 vertices, a quartic."""
 CURVATURE_SHARE = 0.003
@@ -136,7 +139,7 @@ def make_guide(
         whole = SignedSurface(turned_over(full), whole.tree)
     piece, vertices = part_of(whole.surface.mesh, kept)
     filled, whole = _without_holes(piece, vertices, whole, size_mm)
-    face_mesh, source = split_long_edges(filled, LONGEST_EDGE_MM)
+    face_mesh, source = split_long_edges(filled, _longest_edge_mm(filled))
     face = make_surface(face_mesh)
     fit, reach, noise = _fits(face, at.xyz_mm[0], size_mm, depth_mm)
     _, placed = make_signed(face).nearest(at.xyz_mm)
@@ -289,6 +292,17 @@ def _without_holes(
     return filled, make_signed(make_surface(weld(joined, WELD_MM)))
 
 
+def _edge_lengths(mesh: Mesh) -> Floats:
+    """Returns the lengths (m, 3) of the edges of every triangle in mm."""
+    corner = mesh.vertices_mm[mesh.triangles]
+    return np.asarray(np.linalg.norm(corner - np.roll(corner, 1, axis=1), axis=2), dtype=np.float64)
+
+
+def _longest_edge_mm(mesh: Mesh) -> float:
+    shortest = float(np.median(_edge_lengths(mesh).min(axis=1)))
+    return float(np.clip(3.0 * shortest, *LONGEST_EDGE_MM))
+
+
 def _fits(face: Surface, place: Floats, size_mm: tuple[float, float], depth_mm: float) -> tuple[LocalFit, float, float]:
     """Returns the fits at all vertices, their reach and the noise."""
     points = face.mesh.vertices_mm
@@ -300,7 +314,8 @@ def _fits(face: Surface, place: Floats, size_mm: tuple[float, float], depth_mm: 
     around[near] = True
     areas = face.areas_mm2[around[face.mesh.triangles].all(axis=1)]
     edge = float(np.sqrt(2.0 * (areas if len(areas) else face.areas_mm2).mean()))
-    reach = REACH_EDGES * edge
+    long_edge = float(np.quantile(_edge_lengths(face.mesh), 0.9))
+    reach = max(REACH_EDGES * edge, REACH_LONG_EDGES * long_edge)
     trial = fit_around(face, points[sample], face.vertex_normals[sample], reach)
     usable = trial.points > 0
     noise = float(np.median(trial.scatter_mm[usable])) if usable.any() else 0.0
