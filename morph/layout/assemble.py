@@ -28,7 +28,7 @@ from morph.layout.graph import (
     Node,
     NodeKind,
 )
-from morph.layout.smooth import fit_web
+from morph.layout.smooth import fit_web, list_chained
 from morph.layout.web import Run, Web, arc_mm, moved_along
 
 LONGEST_STEP_MM = 1.0
@@ -134,18 +134,17 @@ def _draw_all(web: Web, kept: dict[int, Branch], pixel_mm: float) -> dict[int, _
     uses its bound up may end a few hundredths beyond it.
     """
     share: dict[int, float] = {}
-    drawn: dict[int, _Drawn] = {}
+    drawn = {key: _keep(key, kept[key]) for key in kept}
+    fixed = frozenset(kept)
     for closer in (*CLOSER, 0.0):
-        curves, at = fit_web(web, frozenset(kept), share)
-        drawn = {
-            key: _keep(key, kept[key]) if key in kept else _draw(run, key, curves[key], at[key], pixel_mm)
-            for key, run in sorted(web.runs.items())
-        }
-        beyond = [key for key, item in drawn.items() if item.excess > 1.0 + 1e-9 and key not in kept]
+        curves, at = fit_web(web, fixed, share)
+        drawn |= {key: _draw(web.runs[key], key, curves[key], at[key], pixel_mm) for key in curves}
+        beyond = {key for key, item in drawn.items() if item.excess > 1.0 + 1e-9 and key not in kept}
         if not beyond or not closer:
             break
         share |= dict.fromkeys(beyond, DEVIATION_SHARE * closer)
-    return drawn
+        fixed = frozenset(web.runs) - list_chained(web, beyond, frozenset(kept))
+    return {key: drawn[key] for key in sorted(drawn)}
 
 
 def _within(place_mm: Floats, turn_mm: float | None) -> Floats:

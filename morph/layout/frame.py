@@ -16,7 +16,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from morph.core.arrays import Bools, Floats, Ints
+from morph.core.arrays import Bools, Floats
 from morph.layout.level import Grid, Picture
 
 CUT_RATIO = 3.2
@@ -70,8 +70,8 @@ class Extended:
 
     field: Floats
     mask: Bools
-    outside_px: Ints
-    mouth: Ints
+    outside_px: NDArray[np.int32]
+    mouth: NDArray[np.int32]
     reach_px: Floats
     grid: Grid
 
@@ -219,7 +219,7 @@ def extend(picture: Picture, mouths: tuple[FrameRun, ...]) -> Extended:
     n_out = [math.ceil(1.2 * (mouth.last - mouth.first)) + 4 for mouth in mouths]
     pad = max([*n_out, 2]) + 3
     field = np.pad(picture.field, pad, constant_values=0.0)
-    number = np.full(field.shape, -1, dtype=np.int64)
+    number = np.full(field.shape, -1, dtype=np.int32)
     for index, (mouth, n_rows) in enumerate(zip(mouths, n_out, strict=True)):
         inner = seen_from_side(picture.field, mouth.side)
         outer, outer_number = seen_from_side(field, mouth.side), seen_from_side(number, mouth.side)
@@ -241,8 +241,8 @@ def extend(picture: Picture, mouths: tuple[FrameRun, ...]) -> Extended:
     return Extended(field, field > picture.level, outside, number, reach, grid)
 
 
-def _outside_px(shape: tuple[int, ...], pad: int) -> Ints:
-    row, column = np.arange(shape[0]), np.arange(shape[1])
+def _outside_px(shape: tuple[int, ...], pad: int) -> NDArray[np.int32]:
+    row, column = np.arange(shape[0], dtype=np.int32), np.arange(shape[1], dtype=np.int32)
     out_y = np.maximum(np.maximum(pad - row, row - (shape[0] - 1 - pad)), 0)
     out_x = np.maximum(np.maximum(pad - column, column - (shape[1] - 1 - pad)), 0)
-    return np.maximum(out_y[:, None], out_x[None, :]).astype(np.int64)
+    return np.asarray(np.maximum(out_y[:, None], out_x[None, :]), dtype=np.int32)

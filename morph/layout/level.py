@@ -75,10 +75,20 @@ def smoothed(value: Floats, *, joined: bool = False) -> Floats:
 
     Edges are repeated; `joined`: the first and the last column are neighbours.
     """
-    padded = np.pad(value, ((1, 1), (0, 0)), mode="edge")
-    padded = np.pad(padded, ((0, 0), (1, 1)), mode="wrap" if joined else "edge")
-    rows = 0.25 * (padded[:-2] + padded[2:]) + 0.5 * padded[1:-1]
-    return np.asarray(0.25 * (rows[:, :-2] + rows[:, 2:]) + 0.5 * rows[:, 1:-1], dtype=np.float64)
+    rows = _binomial(np.asarray(value, dtype=np.float64), value[0], value[-1])
+    ends = (rows[:, -1], rows[:, 0]) if joined else (rows[:, 0], rows[:, -1])
+    return np.ascontiguousarray(_binomial(rows.T, *ends).T)
+
+
+def _binomial(value: Floats, before: Floats, after: Floats) -> Floats:
+    """Returns (a + c) / 4 + b / 2 of neighbours along axis 0; `before` and `after` the first and the last."""
+    smooth = np.empty_like(value)
+    np.add(value[:-2], value[2:], out=smooth[1:-1])
+    np.add(before, value[1], out=smooth[0])
+    np.add(value[-2], after, out=smooth[-1])
+    smooth *= 0.25
+    smooth += 0.5 * value
+    return smooth
 
 
 def cell_weight(shape: tuple[int, ...], samples: Samples) -> Floats:
@@ -188,9 +198,14 @@ class Cleaned:
 
 def measure_area_ratio(picture: Picture, samples: Samples) -> float:
     """Returns coolant area over sheet area; a sample cut by the contour counts with the share the contour leaves it."""
-    slope = np.hypot(*np.gradient(picture.field))
-    share = np.clip(0.5 + (picture.field - picture.level) / np.maximum(slope, 1e-9), 0.0, 1.0)
-    return float((share * cell_weight(share.shape, samples)).sum())
+    over = picture.field - picture.level
+    steep_y, steep_x = (np.gradient(picture.field, axis=axis) for axis in (0, 1))
+    near = np.abs(over) < 0.5 * np.maximum(np.abs(steep_y) + np.abs(steep_x), 1e-9)  # elsewhere all or nothing
+    share = (over > 0.0).astype(np.float64)
+    slope = np.hypot(steep_y[near], steep_x[near])
+    share[near] = np.clip(0.5 + over[near] / np.maximum(slope, 1e-9), 0.0, 1.0)
+    share *= 1.0 / share.size if samples is Samples.CELLS else cell_weight(share.shape, samples)
+    return float(share.sum())
 
 
 def clean(mask: Bools, width_px: float, keep_px: Floats) -> Cleaned:
@@ -262,12 +277,13 @@ def make_picture(density: Density, level: float, ports_mm: Floats, more: int = 1
     width_px = measure_width_px(mask)
     found = clean(mask, width_px, grid.row_column(ports_mm))
     nudge = 1e-4
-    field = np.where(found.mask, np.maximum(field, level + nudge), np.minimum(field, level - nudge))
+    pushed = np.minimum(field, level - nudge)
+    np.maximum(field, level + nudge, out=pushed, where=found.mask)
     dropped = list_dropped(found.islands, DropReason.ISLAND, grid) + list_dropped(
         found.pinholes, DropReason.PINHOLE, grid
     )
     width_mm = measure_width_px(found.mask) * grid.pixel_mm
-    return Picture(field, found.mask, grid, level, width_mm, (found.pieces, found.holes), dropped)
+    return Picture(pushed, found.mask, grid, level, width_mm, (found.pieces, found.holes), dropped)
 
 
 def _require_both_phases(field: Floats, level: float) -> None:

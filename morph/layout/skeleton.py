@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 
-from morph.core.arrays import Bools, Floats, Ints
+from morph.core.arrays import Floats, Ints
 from morph.layout.frame import Extended
 from morph.layout.walls import Walls
 from morph.layout.web import Joint, Run, Web
@@ -20,13 +20,11 @@ def make_web(picture: Extended, walls: Walls) -> Web:
     from skimage.morphology import skeletonize
 
     thin = skeletonize(picture.mask)
-    outside = picture.outside_px
-    if len(picture.reach_px):
-        reach = np.where(picture.mouth >= 0, picture.reach_px[picture.mouth], 0.0)
-        thin = thin & (outside <= reach)
-    else:
-        thin = thin & (outside == 0)
-    pixel, links = _link_pixels(thin)
+    pixel = np.argwhere(thin)
+    row, column = pixel.T
+    mouth, reach = picture.mouth[row, column], np.append(picture.reach_px, 0.0)  # the last: no mouth, number -1
+    pixel = pixel[picture.outside_px[row, column] <= reach[mouth]]
+    pixel, links = _link_pixels(pixel, thin.shape[1] + 2)
     place = picture.grid.sheet_mm(pixel.astype(np.float64))
     half = walls.distance_mm(place)
     cluster, paths = _trace(len(pixel), links)
@@ -35,13 +33,12 @@ def make_web(picture: Extended, walls: Walls) -> Web:
     return web
 
 
-def _link_pixels(thin: Bools) -> tuple[Ints, Ints]:
-    """Returns skeleton pixels (n, 2) as (row, column) and links (m, 2) between neighbours.
+def _link_pixels(pixel: Ints, stride: int) -> tuple[Ints, Ints]:
+    """Returns skeleton pixels (n, 2) as (row, column), in reading order, and links (m, 2) between neighbours.
 
-    A diagonal link is left out where two straight links make the same way.
+    A diagonal link is left out where two straight links make the same way. `stride`: columns plus two.
     """
-    pixel = np.argwhere(thin)
-    n, stride = len(pixel), thin.shape[1] + 2
+    n = len(pixel)
     key = pixel[:, 0] * stride + pixel[:, 1]
 
     def neighbour(rows: int, columns: int) -> Ints:

@@ -153,6 +153,22 @@ def reversed_curve(curve: Curve) -> Curve:
     return Curve(curve.knots[-1] - curve.knots[::-1], curve.control_mm[::-1])
 
 
+def _list_chains(web: Web, kept: frozenset[int]) -> tuple[dict[tuple[int, int], int], list[list[Link]]]:
+    """Returns which run continues which, and the chains they make, `kept` runs left out."""
+    following = {
+        (joint, key): other
+        for (joint, key), other in pair_straightest(web).items()
+        if key not in kept and other not in kept
+    }
+    return following, [chain for chain in make_chains(web, following) if chain[0].run not in kept]
+
+
+def list_chained(web: Web, keys: set[int], kept: frozenset[int]) -> set[int]:
+    """Returns the runs that are fitted in one curve with any of the runs `keys`, these included."""
+    _, chains = _list_chains(web, kept)
+    return {link.run for chain in chains if any(item.run in keys for item in chain) for link in chain}
+
+
 def fit_web(
     web: Web, kept: frozenset[int] = frozenset(), share: dict[int, float] | None = None
 ) -> tuple[dict[int, Curve], dict[int, Floats]]:
@@ -166,12 +182,7 @@ def fit_web(
         kept: runs that have their curve already: they are neither fitted nor moved.
         share: how far the chains of some runs may deviate, in local widths, where it is less than usual.
     """
-    following = {
-        (joint, key): other
-        for (joint, key), other in pair_straightest(web).items()
-        if key not in kept and other not in kept
-    }
-    chains = [chain for chain in make_chains(web, following) if chain[0].run not in kept]
+    following, chains = _list_chains(web, kept)
     fitted = [_fit_links(web, chain, SEAM_WEIGHT, share) for chain in chains]
     fixed = {joint for key in kept for joint in (web.runs[key].start, web.runs[key].end)}
     moved = _move_passed_joints(web, chains, fitted, fixed)

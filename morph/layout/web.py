@@ -253,20 +253,29 @@ def merge_near(web: Web, ratio: float = 1.0) -> int:
     Returns:
         How many runs were taken up.
     """
+    heap: list[tuple[float, int]] = []
+
+    def consider(key: int) -> None:
+        run = web.runs[key]
+        if run.start == run.end or web.degree(run.start) < 3 or web.degree(run.end) < 3:
+            return
+        score = run.length_mm / (ratio * max(web.joints[run.start].radius_mm, web.joints[run.end].radius_mm))
+        if score < 1.0 and not is_parallel(web, run):
+            heapq.heappush(heap, (score, key))
+
+    for key in sorted(web.runs):
+        consider(key)
     n_merged = 0
-    while True:
-        best: tuple[float, int] | None = None
-        for key in sorted(web.runs):
-            run = web.runs[key]
-            if run.start == run.end or web.degree(run.start) < 3 or web.degree(run.end) < 3:
-                continue
-            score = run.length_mm / (ratio * max(web.joints[run.start].radius_mm, web.joints[run.end].radius_mm))
-            if score < 1.0 and (best is None or score < best[0]) and not is_parallel(web, run):
-                best = (score, key)
-        if best is None:
-            return n_merged
-        merge_along(web, best[1])
+    while heap:
+        _, key = heapq.heappop(heap)
+        if key not in web.runs:
+            continue
+        joint = web.runs[key].start
+        merge_along(web, key)  # the runs at the merged joint get new keys, so what is said of old ones is void
         n_merged += 1
+        for other in sorted(set(web.at[joint])):
+            consider(other)
+    return n_merged
 
 
 def is_parallel(web: Web, run: Run) -> bool:
