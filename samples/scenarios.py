@@ -5,6 +5,8 @@ Heat loads are shares of a mean load; hot spots stand for thick ribs and for pla
 
 from __future__ import annotations
 
+from typing import Any
+
 import numpy as np
 from optimiser.grid import Floats, Grid, Opening
 from optimiser.problem import Scenario
@@ -36,6 +38,35 @@ def _sleeve_heat(_x: Floats, y: Floats) -> Floats:
 def _funnel_heat(x: Floats, y: Floats) -> Floats:
     """The funnel's thick upper rim and the root of its hanging lug, at the right, take more heat than the wall."""
     return 0.5 + 0.5 * np.exp(-(((y - 0.85) / 0.2) ** 2)) + 0.6 * _spot(x, y, (1.15, 0.5), 0.22)
+
+
+MUG_TURN = 176 / 56
+"""Width of the mug's sheet in heights: one turn, so that whatever is drawn on it must repeat after it."""
+
+
+def _mug_start(x: Floats, y: Floats) -> Floats:
+    """The waffle, with a whole number of squares round the mug."""
+    return 0.3 + 0.2 * np.cos(2.0 * np.pi * 20 * x / MUG_TURN) * np.cos(2.0 * np.pi * y / 0.16)
+
+
+def _mug_heat(x: Floats, y: Floats) -> Floats:
+    """Both roots of the mug's handle, a fifth of a turn left of the middle, are hot; so is the thick rim at the top."""
+    upper, lower = _spot(x, y, (0.3 * MUG_TURN, 0.72), 0.2), _spot(x, y, (0.3 * MUG_TURN, 0.28), 0.2)
+    return 0.6 + 0.8 * (upper + lower) + 0.3 * np.exp(-(((y - 0.9) / 0.2) ** 2))
+
+
+TRAY_WIDTH = 120 / 72
+"""Width of the tray's sheet in heights."""
+
+
+def _tray_heat(x: Floats, y: Floats) -> Floats:
+    """The tray's gate lies on its left half, a thick carrying rib on its right one."""
+    return 0.5 + _spot(x, y, (0.35, 0.5), 0.25) + 0.5 * np.exp(-(((x - 1.35) / 0.12) ** 2))
+
+
+def _tray_divide(x: Floats, _y: Floats) -> Any:
+    """A strip of metal down the middle, 8 mm of 120, keeps the two circuits apart."""
+    return np.abs(x - 0.5 * TRAY_WIDTH) < 4.0 / 72
 
 
 SCENARIOS = {
@@ -87,5 +118,44 @@ SCENARIOS = {
         local_share=0.46,
         steps=100,
         top_down=True,
+    ),
+    "mug-jacket": Scenario(
+        name="mug-jacket",
+        grid=Grid(56, 176, joined=True),
+        openings=(Opening("bottom", 34 / 176, 39 / 176, 1.0), Opening("bottom", 122 / 176, 127 / 176, 0.0)),
+        heat=_mug_heat,
+        start=_mug_start,
+        solid=None,
+        rim=4,
+        capacity=2e6,
+        filter_radius=3.2,
+        disc_radius=8.0,
+        coolant_share=0.29,
+        local_share=0.42,
+        steps=150,
+        top_down=True,
+        power=6.0,
+    ),
+    "tray-insert": Scenario(
+        name="tray-insert",
+        grid=Grid(72, 120),
+        openings=(
+            Opening("left", 12 / 72, 18 / 72, 1.0),
+            Opening("left", 54 / 72, 60 / 72, 0.0),
+            Opening("right", 54 / 72, 60 / 72, 1.0),
+            Opening("right", 12 / 72, 18 / 72, 0.0),
+        ),
+        heat=_tray_heat,
+        start=_sleeve_start,
+        solid=_tray_divide,
+        rim=4,
+        capacity=2e6,
+        filter_radius=3.8,
+        disc_radius=9.5,
+        coolant_share=0.32,
+        local_share=0.44,
+        steps=200,
+        top_down=False,
+        power=6.0,
     ),
 }
