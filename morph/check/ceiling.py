@@ -13,8 +13,8 @@ import numpy as np
 
 from morph.check.centreline import Centrelines, Place
 from morph.check.channel_wall import nearest_samples
-from morph.check.flat_circle import largest_circle
-from morph.check.flat_patch import find_flat, flat_area_mm2
+from morph.check.flat_circle import largest_circle, patch_numbers
+from morph.check.flat_patch import FlatTriangles, find_flat, flat_area_mm2
 from morph.check.machine import upright_frame
 from morph.check.rows import judge_length, place
 from morph.core.arrays import Floats
@@ -53,6 +53,35 @@ def measure_ceiling(wall: Mesh, direction: Floats, roof_angle_deg: float) -> Cei
         return CeilingFinding(0.0, 0.0, 0.0, None)
     area = flat_area_mm2(wall, flat)
     return CeilingFinding(area, area / mesh_area_mm2(wall), circle[0], place(circle[1]))
+
+
+@dataclass(frozen=True, slots=True)
+class FlatPatch:
+    """One connected piece of flat ceiling: area, the middle of its area on the wall, and the triangles it lies in."""
+
+    area_mm2: float
+    xyz_mm: Place
+    triangles: tuple[int, ...]
+
+
+def list_flat_patches(wall: Mesh, direction: Floats, roof_angle_deg: float) -> tuple[FlatPatch, ...]:
+    """Returns where the flat ceiling of a channel wall lies, largest patch first: what a picture of it shows.
+
+    Args:
+        wall: triangles facing into the channel.
+        direction: (3,) unit, from the plate into the part.
+        roof_angle_deg: flattest ceiling that prints without support, from the build plate.
+    """
+    flat = find_flat(wall, direction, roof_angle_deg)
+    patches = []
+    number = patch_numbers(wall, flat)
+    for rows in (np.flatnonzero(number == patch) for patch in range(int(number.max(initial=-1)) + 1)):
+        own = FlatTriangles(flat.triangle[rows], flat.over_deg[rows])
+        centre = wall.vertices_mm[wall.triangles[own.triangle]].mean(axis=1)
+        middle = centre.mean(axis=0)
+        nearest = centre[int(np.argmin(((centre - middle) ** 2).sum(axis=1)))]
+        patches.append(FlatPatch(flat_area_mm2(wall, own), place(nearest), tuple(own.triangle.tolist())))
+    return tuple(sorted(patches, key=lambda patch: (-round(patch.area_mm2, 6), patch.xyz_mm)))
 
 
 def check_ceiling(wall: Mesh, profile: Profile, direction: Floats, lines: Centrelines | None = None) -> list[Verdict]:

@@ -95,7 +95,7 @@ def _sampled(start: Floats, end: Floats, owner: Ints) -> tuple[Floats, Ints]:
     return np.asarray(start[index] * (1.0 - share) + end[index] * share, dtype=np.float64), owner[index]
 
 
-def _patch_numbers(mesh: Mesh, flat: FlatTriangles) -> Ints:
+def patch_numbers(mesh: Mesh, flat: FlatTriangles) -> Ints:
     """Returns the patch number (k,) of each flat triangle: triangles that share a flat corner are one patch."""
     from scipy.sparse import coo_array
     from scipy.sparse.csgraph import connected_components
@@ -142,7 +142,7 @@ def largest_circle(mesh: Mesh, flat: FlatTriangles, frame: Floats) -> tuple[floa
     if len(flat.triangle) == 0:
         return None
     corner = mesh.vertices_mm[mesh.triangles[flat.triangle]]
-    patch = _patch_numbers(mesh, flat)
+    patch = patch_numbers(mesh, flat)
     pieces = [_sampled(*_level_lines(corner, flat.over_deg)), _sampled(*_rim_edges(mesh, flat))]
     border = np.concatenate([points for points, _ in pieces]) @ frame.T
     border_patch = patch[np.concatenate([owner for _, owner in pieces])]

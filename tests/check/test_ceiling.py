@@ -4,7 +4,7 @@ import numpy as np
 import pytest
 import trimesh
 
-from morph.check.ceiling import check_ceiling, measure_ceiling
+from morph.check.ceiling import check_ceiling, list_flat_patches, measure_ceiling
 from morph.check.flat_patch import ceiling_angles_deg, find_flat
 from morph.core.verdict import Outcome
 from morph.geometry.mesh import Mesh
@@ -53,6 +53,22 @@ def test_cap_of_a_level_bore(radius_mm, roof_deg):
     assert found.area_mm2 == pytest.approx(2.0 * np.radians(roof_deg) * radius_mm * 40.0, rel=0.02)
     assert found.share == pytest.approx(2.0 * roof_deg / 360.0, rel=0.02)
     assert found.xyz_mm[1:] == pytest.approx((0.0, radius_mm), abs=0.05)
+
+
+def test_patches_are_listed_with_their_area_and_place():
+    """Two level bores side by side: two caps of area 2 a r L; upright there is none."""
+    wide, narrow = bore(5.0, 40.0), bore(2.0, 30.0)
+    narrow.apply_translation([0.0, 20.0, 0.0])
+    walls = channel(trimesh.util.concatenate([narrow, wide]))
+    first, second = list_flat_patches(walls, UP, 45.0)
+    assert first.area_mm2 == pytest.approx(0.5 * np.pi * 5.0 * 40.0, rel=0.02)
+    assert second.area_mm2 == pytest.approx(0.5 * np.pi * 2.0 * 30.0, rel=0.02)
+    assert first.xyz_mm == pytest.approx((0.0, 0.0, 5.0), abs=1.0)
+    assert second.xyz_mm == pytest.approx((0.0, 20.0, 2.0), abs=1.0)
+    whole = measure_ceiling(walls, UP, 45.0)
+    assert first.area_mm2 + second.area_mm2 == pytest.approx(whole.area_mm2, rel=1e-9)
+    assert not set(first.triangles) & set(second.triangles)
+    assert list_flat_patches(channel(bore(2.0, 30.0)), np.array([1.0, 0.0, 0.0]), 45.0) == ()
 
 
 @pytest.mark.parametrize("tilt_deg", [15.0, 30.0, 50.0])
