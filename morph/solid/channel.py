@@ -36,6 +36,9 @@ WHAT = "the channel solid"
 
 MOST_TAKE_BACKS = 4
 
+MOST_FITS = 3
+"""Times the field's part is joined to the rings, each time without the stretches that did not fit."""
+
 MOST_ROUNDS = 4
 """Times the surface is simplified anew, each time leaving more of it alone."""
 
@@ -77,19 +80,23 @@ class _Wall:
 def _stitched_wall(plan: ChannelPlan, sweep: Sweep, h_mm: float, progress: Progress) -> _Wall | None:
     """Returns the wall made of rings where a channel runs alone, and from the field elsewhere.
 
-    None where there are no such stretches, where a rim of the field's part fits no ring, or where it is not sound.
+    Stretches whose rings do not fit the rim of the field's part are left to the field; None where none is left, or
+    where the result is not sound.
     """
     lists = list_pieces(sweep, h_mm, progress)
     stretches = find_stretches(plan, sweep, lists, h_mm, progress)
-    if not len(stretches.sides):
-        return None
-    field = sample_field(sweep, h_mm, progress, lists, stretches.end, stretches.field_planes(h_mm))
-    surface = extract_surface(field, progress)
-    closed = stitch(*sharpen(field, surface, progress), surface.end, stretches)
-    if closed is None:
-        return None
-    mesh, found = _sound_mesh(*closed, progress)
-    return None if mesh is None else _Wall(mesh, found, len(closed[1]))
+    for _ in range(MOST_FITS):
+        if not len(stretches.sides):
+            return None
+        field = sample_field(sweep, h_mm, progress, lists, stretches.end, stretches.field_planes(h_mm))
+        surface = extract_surface(field, progress)
+        closed = stitch(*sharpen(field, surface, progress), surface.end, stretches)
+        if not isinstance(closed, set):
+            mesh, found = _sound_mesh(*closed, progress)
+            return None if mesh is None else _Wall(mesh, found, len(closed[1]))
+        stretches = stretches.without(closed)
+        lists = list_pieces(sweep, h_mm, progress)
+    return None
 
 
 def _field_wall(sweep: Sweep, h_mm: float, progress: Progress) -> _Wall:

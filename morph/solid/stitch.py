@@ -9,8 +9,8 @@ from morph.solid.extract import any_corner, beyond_planes
 from morph.solid.stretch import Stretches
 
 
-def stitch(vertices: Floats, triangles: Ints, end: Ints, stretches: Stretches) -> tuple[Floats, Ints, Bools] | None:
-    """Returns the closed mesh and which of its vertices are points of rings; None where a rim does not fit its ring.
+def stitch(vertices: Floats, triangles: Ints, end: Ints, stretches: Stretches) -> tuple[Floats, Ints, Bools] | set[int]:
+    """Returns the closed mesh and which of its vertices are points of rings; else the stretches whose rims do not fit.
 
     Args:
         vertices: (n, 3) of the field's part, in mm.
@@ -25,9 +25,9 @@ def stitch(vertices: Floats, triangles: Ints, end: Ints, stretches: Stretches) -
     rim = np.zeros(n, np.bool_)
     rim[triangles[lost]] = True
     triangles = triangles[~lost]
-    bands = _bands(points, n, _loops(triangles, rim), stretches)
-    if bands is None:
-        return None
+    bands, misfits = _bands(points, n, _loops(triangles, rim), stretches)
+    if misfits:
+        return misfits
     closed = np.concatenate([triangles, *(n + strip for strip in _strips(stretches)), *bands])
     used = np.zeros(len(points), np.bool_)
     used[closed] = True
@@ -83,25 +83,28 @@ def _loops(triangles: Ints, rim: Bools) -> list[Ints] | None:
     return loops
 
 
-def _bands(points: Floats, n: int, loops: list[Ints] | None, stretches: Stretches) -> list[Ints] | None:
-    """Returns the triangles between each end's ring and its rim, None where one is missing or folds."""
+def _bands(points: Floats, n: int, loops: list[Ints] | None, stretches: Stretches) -> tuple[list[Ints], set[int]]:
+    """Returns the triangles between each end's ring and its rim, and the stretches where one is missing or folds."""
+    from scipy.spatial import cKDTree
+
     n_ends = 2 * len(stretches.sides)
+    bands: list[Ints] = []
     if loops is None or len(loops) != n_ends:
-        return None
-    middle = np.array([points[loop].mean(axis=0) for loop in loops]).reshape(-1, 3)
-    away = ((middle[:, None] - stretches.planes[None, :, :3]) ** 2).sum(axis=2)
-    loop_of = away.argmin(axis=0)
-    if len(set(loop_of.tolist())) != n_ends:
-        return None
-    bands = []
+        return bands, set(range(len(stretches.sides)))
+    middle = np.array([points[loop].mean(axis=0) for loop in loops])
+    loop_of: Ints = np.asarray(cKDTree(middle).query(stretches.planes[:, :3])[1], np.int64)
+    if len(np.unique(loop_of)) != n_ends:
+        return bands, set(range(len(stretches.sides)))
+    misfits: set[int] = set()
     for end in range(n_ends):
         ring, loop = n + stretches.ring(end), loops[loop_of[end]]
         # both rows run counter-clockwise about the axis; the rim's open edges run so only at the far end of a stretch
         band = _band(points, ring, loop if end % 2 else loop[::-1], end, stretches)
         if band is None:
-            return None
-        bands.append(band)
-    return bands
+            misfits.add(end // 2)
+        else:
+            bands.append(band)
+    return bands, misfits
 
 
 def _band(points: Floats, ring: Ints, rim: Ints, end: int, stretches: Stretches) -> Ints | None:

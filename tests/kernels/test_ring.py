@@ -12,7 +12,8 @@ from morph.kernels.ring import find_ridge, frame_branch, ring_follows
 from morph.kernels.stretch import INSIDE, NO_STRETCH, is_beyond, is_swept
 from morph.kernels.swept_ball import piece_distance, piece_gradient, piece_wall
 from morph.settings.job import SectionShape
-from morph.solid.stretch import AROUND_MM, _centrelines, _count_sides, _framed, _place
+from morph.solid.centreline import AROUND_MM, count_sides, frame_samples, list_samples
+from morph.solid.stretch import _place
 from morph.solid.sweep import make_sweep
 from tests.solid import plans
 from tests.solid.exact import exact_field
@@ -22,8 +23,8 @@ ROOF = SectionRule(SectionShape.ROOFED, 47.0)
 
 def placed(plan):
     sweep = make_sweep(plan)
-    samples = _framed(_centrelines(plan), plan)
-    sides = _count_sides(samples)
+    samples = frame_samples(list_samples(plan), plan)
+    sides = count_sides(samples)
     offset = np.cumsum(sides) - sides
     points, lean = _place(samples, sweep, sides, offset, SILENT)
     return sweep, samples, sides, offset, points, lean

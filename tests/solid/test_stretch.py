@@ -65,7 +65,7 @@ def test_stitched_and_field_only_walls_are_the_same_body(shape, monkeypatch):
     plan = plans.ladder() if shape == "round" else roofed(plans.ladder())
     sweep = make_sweep(plan)
     stitched = make_channel_solid(plan, plans.cylinder_blank(), H)
-    monkeypatch.setattr(channel, "stitch", lambda *given: None)
+    monkeypatch.setattr(channel, "stitch", lambda *given: set(range(len(given[-1].sides))))
     alone = make_channel_solid(plan, plans.cylinder_blank(), H)
     assert stitched.triangles_before < 0.6 * alone.triangles_before
     one, two = measure_condition(stitched.swept), measure_condition(alone.swept)
@@ -99,3 +99,24 @@ def test_a_channel_too_short_for_a_stretch_is_left_to_the_field():
 def test_arched_channels_are_left_to_the_field():
     plan = dataclasses.replace(plans.tee(), section=SectionRule(SectionShape.ARCHED, 45.0))
     assert len(stretches_of(plan)[1].sides) == 0
+
+
+def test_stretches_that_do_not_fit_are_left_to_the_field(monkeypatch):
+    """The first two are refused once: the wall is made anew without them, and stays closed."""
+    plan, seen, original = roofed(plans.ladder()), [], channel.stitch
+
+    def refuse(*given):
+        seen.append(given[-1])
+        return {0, 1} if len(seen) == 1 else original(*given)
+
+    monkeypatch.setattr(channel, "stitch", refuse)
+    solid = make_channel_solid(plan, plans.cylinder_blank(), H)
+    condition = measure_condition(solid.swept)
+    assert (condition.closed, condition.bodies, condition.genus) == (True, 1, 3)
+    first, second = seen
+    assert len(second.sides) == len(first.sides) - 2 and second.offset[0] == first.offset[2]
+    assert (second.planes == first.planes[4:]).all() and (second.ring(0) == first.ring(4)).all()
+    assert (second.end[first.of < 2] == -1).all()
+    rest = first.end >= 4
+    assert (second.end[rest] == first.end[rest] - 4).all()
+    assert (second.end[(first.end == -2) & (first.of >= 2)] == -2).all()
