@@ -25,6 +25,7 @@ ISLAND_DISCS = 1.76
 PINHOLE_DISCS = 0.20
 """A hole smaller than this many discs of the channel width is a flaw, not metal left on purpose."""
 AREA_SLACK = 0.02
+SLAB_ROWS = 512
 EIGHT = np.ones((3, 3), dtype=np.int64)
 
 
@@ -198,12 +199,19 @@ class Cleaned:
 
 def measure_area_ratio(picture: Picture, samples: Samples) -> float:
     """Returns coolant area over sheet area; a sample cut by the contour counts with the share the contour leaves it."""
-    over = picture.field - picture.level
-    steep_y, steep_x = (np.gradient(picture.field, axis=axis) for axis in (0, 1))
-    near = np.abs(over) < 0.5 * np.maximum(np.abs(steep_y) + np.abs(steep_x), 1e-9)  # elsewhere all or nothing
-    share = (over > 0.0).astype(np.float64)
-    slope = np.hypot(steep_y[near], steep_x[near])
-    share[near] = np.clip(0.5 + over[near] / np.maximum(slope, 1e-9), 0.0, 1.0)
+    field = picture.field
+    share = np.empty(field.shape)
+    for first in range(0, len(field), SLAB_ROWS):
+        last = min(first + SLAB_ROWS, len(field))
+        low, high = max(0, first - 1), min(len(field), last + 1)  # a row more on either side for the slope
+        own = slice(first - low, last - low)
+        steep_y, steep_x = (np.gradient(field[low:high], axis=axis)[own] for axis in (0, 1))
+        over = field[first:last] - picture.level
+        near = np.abs(over) < 0.5 * np.maximum(np.abs(steep_y) + np.abs(steep_x), 1e-9)  # elsewhere all or nothing
+        part = (over > 0.0).astype(np.float64)
+        slope = np.hypot(steep_y[near], steep_x[near])
+        part[near] = np.clip(0.5 + over[near] / np.maximum(slope, 1e-9), 0.0, 1.0)
+        share[first:last] = part
     share *= 1.0 / share.size if samples is Samples.CELLS else cell_weight(share.shape, samples)
     return float(share.sum())
 
