@@ -161,7 +161,13 @@ class NetworkSolver:
         return self.solve_flows(liquid, flow, at_last)
 
     def slopes_by_log_bore(
-        self, liquid: Liquid, state: NetworkState, by_flow: Floats, by_drop: Floats, drop_given: bool = False
+        self,
+        liquid: Liquid,
+        state: NetworkState,
+        by_flow: Floats,
+        by_drop: Floats,
+        drop_given: bool = False,
+        share: Floats | None = None,
     ) -> Floats:
         """Returns how a figure changes (m,) with ln of the bores of each branch, lengths and bends held (adjoint).
 
@@ -171,6 +177,7 @@ class NetworkSolver:
             by_flow: (m,) slopes of the figure in the flows of branches.
             by_drop: (k,) slopes in the drops of the supplies; they do not count when those are given.
             drop_given: the drops of the supplies are given, else their flows.
+            share: (s,) how much of the change each segment takes part in, 1 everywhere when None.
 
         Raises:
             ValueError: the network cannot be told from one that stands still at this state.
@@ -186,10 +193,13 @@ class NetworkSolver:
         own = np.concatenate([by_flow, np.zeros(len(flow) - m)])
         weight = np.where(system.live, factor.adjoint(np.where(system.live, own, 0.0), pressure[system.free]), 0.0)
         size, cost = law.cost(flow)
-        by_bore = law.segments.summed(2.0 * cost.by_log_area + cost.by_log_diameter) * flow / size
+        part = np.ones(len(law.segments.length_m))
+        if share is not None:
+            part[: len(share)] = share
+        by_bore = law.segments.summed(part * (2.0 * cost.by_log_area + cost.by_log_diameter)) * flow / size
         row, segment, slope = junctions.by_log_area(flow)
         branch = law.segments.pipe[segment]
-        total = -weight * by_bore - np.bincount(branch, 2.0 * weight[row] * slope, len(flow))
+        total = -weight * by_bore - np.bincount(branch, 2.0 * part[segment] * weight[row] * slope, len(flow))
         return np.asarray(total[:m], dtype=np.float64)
 
     def _system(self, drop_given: bool) -> PressureSystem:
