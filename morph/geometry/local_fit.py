@@ -60,8 +60,13 @@ def fit_around(surface: Surface, place_mm: Floats, normals: Floats, reach_mm: Fl
     result = np.zeros((len(place), 12))
     result[:, 1:4] = guess
     if len(place):
-        used = np.unique(surface.mesh.triangles)
+        # only vertices of triangles, and only those that any fit can reach
+        used = np.bincount(surface.mesh.triangles.ravel(), minlength=len(surface.mesh.vertices_mm)) > 0
+        low_mm, high_mm = place.min(axis=0) - reach.max(), place.max(axis=0) + reach.max()
+        used &= ((surface.mesh.vertices_mm >= low_mm) & (surface.mesh.vertices_mm <= high_mm)).all(axis=1)
         points = surface.mesh.vertices_mm[used]
+        if len(points) == 0:
+            return _named(place, result)
         low, cell, cells, first, order = _search_grid(points, float(reach.max()))
         fit_many(
             points,
