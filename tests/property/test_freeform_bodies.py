@@ -33,7 +33,7 @@ def random_body(rng):
     """A height field of a paraboloid and up to six bumps."""
     bend = rng.uniform(-1 / 160.0, 1 / 160.0, 2)
     bumps = [
-        (rng.uniform(-4, 4), *rng.uniform((-50, -35), (50, 35)), rng.uniform(80, 700))
+        (rng.uniform(-5, 5), *rng.uniform((-50, -35), (50, 35)), rng.uniform(50, 600))
         for _ in range(rng.integers(0, 7))
     ]
 
@@ -57,7 +57,7 @@ def independent_faults(sheet, mesh, normals_up, depth):
     body = trimesh.Trimesh(mesh.vertices_mm, mesh.triangles, process=False)
     sample = rng.uniform((0, 0), (width, height), (400, 2))
     _, distance, triangle = trimesh.proximity.closest_point(body, carrier.point_mm(sample, depth))
-    if np.abs(distance - depth).max() > 0.25:
+    if np.abs(distance - depth).max() > 0.2:
         found.append("off")
     normal = np.cross(points[1:, :-1] - points[:-1, :-1], points[:-1, 1:] - points[:-1, :-1])
     _, _, below = trimesh.proximity.closest_point(body, points[:-1, :-1].reshape(-1, 3)[::7])
@@ -82,7 +82,7 @@ def run(seeds):
         rng = np.random.default_rng(seed)
         height = random_body(rng)
         mesh = bodies.parametric(bodies.height_field(height), (-75.0, 75.0), (-55.0, 55.0), N, seed)
-        place, angle, depth = rng.uniform((-25, -15), (25, 15)), rng.uniform(0, 2 * np.pi), rng.uniform(4.0, 10.0)
+        place, angle, depth = rng.uniform((-25, -15), (25, 15)), rng.uniform(0, 2 * np.pi), rng.uniform(4.0, 16.0)
         z = float(height(*place))
         size = tuple(rng.uniform((40, 30), (80, 55)))
         how = FreeformSettings(
