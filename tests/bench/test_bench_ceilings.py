@@ -35,17 +35,19 @@ SHAPES = (SectionShape.ROUND, SectionShape.AUTO, SectionShape.ROOFED)
 def tell(name, swept, direction, profile):
     """Prints a row of the table and the largest patches; asserts the share and the widest flat circles."""
     up = np.asarray(direction, dtype=np.float64) / np.linalg.norm(direction)
-    share, span, inward = {}, {}, {}
+    share, span, cut, inward = {}, {}, {}, {}
     for shape, mesh in swept.items():
         inward[shape] = Mesh(mesh.vertices_mm, mesh.triangles[:, ::-1])
         share[shape] = ceiling_share(mesh, up, LIMIT_DEG)
-        span[shape] = measure_ceiling(inward[shape], up, LIMIT_DEG).span_mm
+        found = measure_ceiling(inward[shape], up, LIMIT_DEG)
+        span[shape], cut[shape] = found.span_mm, found.share
     cells = "   ".join(f"{s} {100.0 * share[s]:6.3f} % (circle {span[s]:.2f} mm)" for s in SHAPES)
     print(f"{name:30s} {cells}")
     for patch in list_flat_patches(inward[SectionShape.ROOFED], up, LIMIT_DEG)[:3]:
         print(f"    roofed rest: {patch.area_mm2:.2f} mm2 at {np.round(patch.xyz_mm, 1).tolist()} mm")
     assert share[SectionShape.ROOFED] <= MOST < share[SectionShape.ROUND]
-    assert share[SectionShape.AUTO] <= share[SectionShape.ROUND] + 1e-4
+    # compared as cut along the angle, because whole facets of a round wall count or not by how they happen to lie
+    assert cut[SectionShape.AUTO] <= 1.005 * cut[SectionShape.ROUND]
     assert max(span[SectionShape.ROOFED], span[SectionShape.AUTO]) <= profile.free_span_mm.value
 
 

@@ -54,7 +54,7 @@ def test_an_upright_face_finds_the_openings_of_channels_that_lie(shape):
     (row,) = rows(subject_of(plan, box_blank()), "openings")
     assert row.outcome is Outcome.PASS, row.text
     # a port declared a quarter of a millimetre above it is another place
-    exits = tuple(dataclasses.replace(e, xyz_mm=e.xyz_mm + (0.0, 0.0, 0.25)) for e in plan.exits)
+    exits = tuple(dataclasses.replace(e, xyz_mm=e.xyz_mm + np.array([0.0, 0.0, 0.25])) for e in plan.exits)
     (row,) = rows(subject_of(dataclasses.replace(plan, exits=exits), box_blank()), "openings")
     assert row.outcome is Outcome.FAIL
 
