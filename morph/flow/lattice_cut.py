@@ -1,8 +1,9 @@
 """Cuts across the channels on which the lattice's flow is counted.
 
-A cut is the set of links from cells before a plane to cells behind it, the plane square to a branch at the middle of
-its length and limited to the cells that stand on that branch near by. The lattice keeps mass link by link,
-so that the sum over a cut is the flow itself, without interpolation.
+Every cell goes to the node at its end of the branch it stands on. The links between the cells of two nodes are the cut
+of the branch that joins them: also where that branch is shorter than it is wide, so that its middle lies within
+junctions and cells of its neighbours stand there. The lattice keeps mass link by link, so that the sum over a cut is
+the flow itself, without interpolation. A branch that closes on its own node is cut by the plane square to its middle.
 """
 
 from __future__ import annotations
@@ -31,10 +32,53 @@ def middle_of(branch: PlanBranch) -> tuple[Floats, Floats, float]:
 
 def make_cuts(plan: ChannelPlan, domain: LatticeDomain, guide: Guide) -> tuple[Ints, ...]:
     """Returns the links (k, 3) of the cut of each branch: cell before, cell behind, direction between them."""
+    number = {node.id: i for i, node in enumerate(plan.nodes)}
+    ends = np.array([[number[branch.start], number[branch.end]] for branch in plan.branches])
+    rows, owner = _between_nodes(domain, guide, ends)
+    order = np.argsort(owner, kind="stable")
+    bounds = np.searchsorted(owner[order], np.arange(len(plan.branches) + 1))
     of_branch = guide.branch[guide.cell_stretch]
-    order = np.argsort(of_branch, kind="stable")
-    bounds = np.searchsorted(of_branch[order], np.arange(len(plan.branches) + 1))
-    return tuple(_cut(branch, domain, order[bounds[row] : bounds[row + 1]]) for row, branch in enumerate(plan.branches))
+    cuts = []
+    for row, branch in enumerate(plan.branches):
+        if branch.start == branch.end:
+            cuts.append(_cut(branch, domain, np.flatnonzero(of_branch == row)))
+        else:
+            cuts.append(np.ascontiguousarray(rows[order[bounds[row] : bounds[row + 1]]]))
+    return tuple(cuts)
+
+
+def _between_nodes(domain: LatticeDomain, guide: Guide, ends: Ints) -> tuple[Ints, Ints]:
+    """Returns the links (k, 3) between cells of different nodes, along their branch, and that branch (k,).
+
+    Of several branches between two nodes a link takes the one a cell of it stands on; links between nodes that no
+    branch joins are left out.
+    """
+    first = np.searchsorted(guide.branch, np.arange(len(ends)))
+    count = np.bincount(guide.branch, minlength=len(ends))
+    branch = guide.branch[guide.cell_stretch]
+    along = (guide.cell_stretch - first[branch] + guide.cell_share) / count[branch]
+    node = ends[branch, (along >= 0.5).astype(np.int64)]
+    low, high = ends.min(axis=1), ends.max(axis=1)
+    pair = low * (ends.max() + 1) + high
+    by_pair = np.argsort(pair, kind="stable")
+    rows, owners = [], []
+    for q in range(1, 19, 2):
+        at = domain.source[:, q - 1]
+        behind = np.flatnonzero(at < 19 * domain.n_cells)
+        before = at[behind].astype(np.int64) // 19
+        apart = node[before] != node[behind]
+        before, behind = before[apart], behind[apart]
+        key = np.minimum(node[before], node[behind]) * (ends.max() + 1) + np.maximum(node[before], node[behind])
+        place = np.minimum(np.searchsorted(pair[by_pair], key), len(pair) - 1)
+        owner = by_pair[place]
+        known = pair[owner] == key
+        owner = np.where(pair[branch[before]] == key, branch[before], owner)
+        owner = np.where(pair[branch[behind]] == key, branch[behind], owner)
+        forward = node[before] == ends[owner, 0]
+        one, two = np.where(forward, before, behind), np.where(forward, behind, before)
+        rows.append(np.stack([one, two, np.where(forward, q, q + 1)], axis=1)[known])
+        owners.append(owner[known])
+    return np.concatenate(rows), np.concatenate(owners)
 
 
 def _cut(branch: PlanBranch, domain: LatticeDomain, own: Ints) -> Ints:

@@ -148,3 +148,31 @@ def test_cells_are_fewer_where_there_would_be_too_many(monkeypatch):
     with pytest.raises(FlowError) as caught:
         choose_cells_per_bore(mesh, plan)
     assert caught.value.code == "lattice-too-large"
+
+
+def test_a_branch_shorter_than_its_bore_is_still_counted():
+    """Two side channels leave a run 3 mm apart, bores 4 mm: what passes between them is what the rest leaves over."""
+    z = 15.0
+    a, b = (28.5, 20.0, z), (31.5, 20.0, z)
+    items = [plans.branch("B1", "A", "B", plans.sampled([a, b], 4.0), 4.0)]
+    for name, node, start, end in (
+        ("in", "A", a, (10.0, 20.0, z)),
+        ("out", "B", b, (50.0, 20.0, z)),
+        ("up", "A", a, (28.5, 36.0, z)),
+        ("down", "B", b, (31.5, 4.0, z)),
+    ):
+        items.append(plans.branch(f"L-{name}", node, f"X{name}", plans.sampled([start, end], 4.0), 4.0, lead=True))
+    exits = [
+        ("in", "in", "L-in", "-x", (-1.0, 0.0, 0.0), 0.0),
+        ("out", "out", "L-out", "+x", (1.0, 0.0, 0.0), 0.0),
+        ("up", "out", "L-up", "+y", (0.0, 1.0, 0.0), 0.0),
+        ("down", "out", "L-down", "-y", (0.0, -1.0, 0.0), 0.0),
+    ]
+    blank = plans.box_blank((10.0, 4.0, 0.0), (50.0, 36.0, 30.0), port=("-x", "+x", "-y", "+y"))
+    plan = plans.plan_of(items, exits)
+    found = solve_channel_flow(make_channel_solid(plan, blank, 0.25).trimmed, plan, 10.0)
+    share = found.share
+    assert -share["L-in"] == pytest.approx(1.0, abs=2e-3)
+    assert share["B1"] == pytest.approx(share["L-out"] + share["L-down"], abs=5e-3)
+    assert share["B1"] == pytest.approx(1.0 - share["L-up"], abs=5e-3)
+    assert 0.3 < share["B1"] < 0.9
