@@ -26,6 +26,7 @@ PINHOLE_DISCS = 0.20
 """A hole smaller than this many discs of the channel width is a flaw, not metal left on purpose."""
 AREA_SLACK = 0.02
 SLAB_ROWS = 512
+SMOOTH_ROWS = 16
 EIGHT = np.ones((3, 3), dtype=np.int64)
 
 
@@ -76,19 +77,20 @@ def smoothed(value: Floats, *, joined: bool = False) -> Floats:
 
     Edges are repeated; `joined`: the first and the last column are neighbours.
     """
-    rows = _binomial(np.asarray(value, dtype=np.float64), value[0], value[-1])
-    ends = (rows[:, -1], rows[:, 0]) if joined else (rows[:, 0], rows[:, -1])
-    return np.ascontiguousarray(_binomial(rows.T, *ends).T)
-
-
-def _binomial(value: Floats, before: Floats, after: Floats) -> Floats:
-    """Returns (a + c) / 4 + b / 2 of neighbours along axis 0; `before` and `after` the first and the last."""
-    smooth = np.empty_like(value)
-    np.add(value[:-2], value[2:], out=smooth[1:-1])
-    np.add(before, value[1], out=smooth[0])
-    np.add(value[-2], after, out=smooth[-1])
-    smooth *= 0.25
-    smooth += 0.5 * value
+    value = np.asarray(value, dtype=np.float64)
+    smooth, n = np.empty(value.shape), len(value)
+    for first in range(0, n, SMOOTH_ROWS):  # few rows at a time stay near the processor
+        row = np.arange(first, min(first + SMOOTH_ROWS, n))
+        rows = value[np.maximum(row - 1, 0)] + value[np.minimum(row + 1, n - 1)]
+        rows *= 0.25
+        rows += 0.5 * value[row]
+        part = smooth[first : first + len(row)]
+        np.add(rows[:, :-2], rows[:, 2:], out=part[:, 1:-1])
+        part[:, 0] = rows[:, -1 if joined else 0] + rows[:, 1]
+        part[:, -1] = rows[:, -2] + rows[:, 0 if joined else -1]
+        part *= 0.25
+        rows *= 0.5
+        part += rows
     return smooth
 
 
