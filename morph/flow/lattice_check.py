@@ -136,17 +136,19 @@ def flow_check_verdicts(check: FlowCheck3D) -> tuple[Verdict, Verdict]:
     over = tuple(check.branch_ids[i] for i in order if abs(check.split_error[i]) + check.spread[i] > SPLIT_LIMIT)
     split = abs(float(check.split_error[worst]))
     band = float(check.spread[worst])
-    fine = check.fine
+    theirs = abs(float(check.network_mm3[worst])) / check.total_network_mm3
+    ours = abs(float(check.fine.branch_mm3[worst])) / check.fine.total_mm3
+    fine, way = check.fine, "more" if check.total_error > 0.0 else "less"
     how = f"{fine.cells_per_bore:.3g} cells of {fine.h_mm:.3g} mm across the smallest bore, {fine.n_cells} cells"
     scope = "It checks geometry and split at creeping flow, not turbulence."
     rows = (
         ("flow-3d-split", split, band, SPLIT_LIMIT, over or (check.branch_ids[worst],),
-         f"In three dimensions {check.branch_ids[worst]} carries {100.0 * check.split_error[worst]:+.2f} % of the "
-         f"total flow more than in the network, the largest difference ({how}). {scope}",
+         f"In three dimensions {check.branch_ids[worst]} carries {100.0 * ours:.1f} % of the total flow, in "
+         f"the network {100.0 * theirs:.1f} %: the largest difference ({how}). {scope}",
          "Take the flows of the branches named with this much doubt, or change the junction they share."),
         ("flow-3d-total", abs(check.total_error), check.total_spread, TOTAL_LIMIT, (),
-         f"In three dimensions the insert lets {100.0 * check.total_error:+.1f} % more through than in the network at "
-         f"the same creeping pressure drop ({how}). {scope}",
+         f"In three dimensions the insert lets {100.0 * abs(check.total_error):.1f} % {way} "
+         f"through than in the network at the same creeping pressure drop ({how}). {scope}",
          "Take the pressure drop with this much doubt; short branches between wide junctions are the usual reason."),
     )  # fmt: skip
     made = [

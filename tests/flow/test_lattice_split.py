@@ -125,6 +125,10 @@ def test_rows_say_figure_resolution_and_scope():
     assert split.outcome is Outcome.PASS and split.unit == "%" and split.limit == 2.0
     assert split.value == pytest.approx(100.0 * np.abs(found.split_error).max())
     assert "not turbulence" in split.text and "12 cells" in split.text and "not turbulence" in total.text
+    worst = int(np.abs(found.split_error).argmax())
+    ours = abs(found.fine.branch_mm3[worst]) / found.fine.total_mm3
+    assert f"{found.branch_ids[worst]} carries {100.0 * ours:.1f} %" in split.text
+    assert f"{100.0 * abs(found.total_error):.1f} % {'more' if found.total_error > 0.0 else 'less'}" in total.text
     off = replace(found, split_error=found.split_error + 0.05, total_error=0.2)
     assert [row.outcome for row in flow_check_verdicts(off)] == [Outcome.WATCH, Outcome.WATCH]
     assert set(flow_check_verdicts(off)[0].branch_ids) == set(found.branch_ids)
