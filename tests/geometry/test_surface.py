@@ -85,7 +85,9 @@ def test_a_hole_in_a_ball_is_filled_on_the_ball(radius):
     condition = measure_condition(filled)
     assert condition.closed and condition.genus == 0
     # a quadric misses the ball's fourth-order term r^4 / (8 R^3) of its height, up to three times where slopes are met too
-    assert np.abs(np.linalg.norm(filled.vertices_mm, axis=1) - 10.0).max() < 3.0 * radius**4 / 8000.0 + 0.04  # and the rim is jagged
+    assert (
+        np.abs(np.linalg.norm(filled.vertices_mm, axis=1) - 10.0).max() < 3.0 * radius**4 / 8000.0 + 0.04
+    )  # and the rim is jagged
     assert mesh_area_mm2(filled) == pytest.approx(mesh_area_mm2(mesh), rel=0.01)
 
 
