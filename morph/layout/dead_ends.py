@@ -3,11 +3,12 @@
 from __future__ import annotations
 
 import itertools
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
 from morph.core.arrays import Floats
+from morph.layout.bridges import ABOVE_BACKGROUND
 from morph.layout.graph import Ahead, Branch, Bridge, DeadEnd, Node
 from morph.layout.level import Grid
 from morph.layout.web import Web, arc_mm
@@ -22,10 +23,23 @@ STEP_PIXELS = 0.125
 
 @dataclass(frozen=True, slots=True)
 class Known:
-    """What is known of a dead end before the record is made: where its coolant ends, and its id if it has one."""
+    """What is known of a dead end before the record is made.
+
+    Args:
+        end_mm: where its coolant ends.
+        id: its id if it has one.
+        lowest_density: on the first bore of its line beyond that; grey: it stands clear of the background.
+    """
 
     end_mm: Place
     id: str = ""
+    lowest_density: float | None = None
+    grey: bool = False
+
+
+def known_of(end: DeadEnd) -> Known:
+    """Returns what a record's dead end says, for a record made anew."""
+    return Known(end.sheet_mm, end.id, end.lowest_density, end.ahead is Ahead.GREY)
 
 
 def find_end_walls(web: Web, field: Floats, grid: Grid, level: float, turn_mm: float | None = None) -> dict[int, Known]:
@@ -62,8 +76,17 @@ def find_end_walls(web: Web, field: Floats, grid: Grid, level: float, turn_mm: f
         last = int(below[0]) if len(below) and joint.mouth < 0 else 0
         share = 0.0 if last == 0 else (value[last - 1] - level) / (value[last - 1] - value[last])
         end = run.place_mm[0] + (max(0, last - 1) + share) * float(ahead[1]) * outward
-        found[key] = Known((float(end[0]), float(end[1])))
+        beyond = value[last : last + max(1, round(2.0 * half_mm / float(ahead[1])))]
+        lowest = float(beyond.min()) if joint.mouth < 0 else None
+        grey = lowest is not None and lowest - _background(field) > ABOVE_BACKGROUND
+        found[key] = Known((float(end[0]), float(end[1])), "", lowest, grey)
     return found
+
+
+def _background(field: Floats) -> float:
+    """Returns the density that a fifth of the field lies below, from at most a million of its samples."""
+    step = max(1, round((field.size / 1e6) ** 0.5))
+    return float(np.quantile(field[::step, ::step], 0.2))
 
 
 def name_dead_ends(
@@ -99,16 +122,17 @@ def name_dead_ends(
     for key in sorted(tips, key=rank):
         node, branch = nodes[joint_id[key]], branches[run_id[web.at[key][0]]]
         here = known.get(key) or Known((float(node.sheet_mm[0]), float(node.sheet_mm[1])))
-        here = Known(here.end_mm, here.id or next(free))
+        here = replace(here, id=here.id or next(free))
         found.append(_dead_end(here, node, branch, way.get(node.id), web.joints[key].mouth))
     return tuple(sorted(found, key=lambda end: int(end.id[1:])))
 
 
 def _dead_end(known: Known, node: Node, branch: Branch, bridge: Bridge | None, mouth: int) -> DeadEnd:
     at = 0 if branch.start == node.id else -1
-    ahead = Ahead.FRAME if mouth >= 0 else Ahead.GREY if bridge is not None and bridge.grey else Ahead.SOLID
+    grey = known.grey if bridge is None else bridge.grey
+    ahead = Ahead.FRAME if mouth >= 0 else Ahead.GREY if grey else Ahead.SOLID
     figures = (known.id, node.id, branch.id, known.end_mm, branch.length_mm, float(branch.bore_mm[at]), ahead)
     if bridge is None:
-        return DeadEnd(*figures)
+        return DeadEnd(*figures, lowest_density=known.lowest_density)
     onto = bridge.onto if bridge.node == node.id else bridge.node
     return DeadEnd(*figures, bridge.id, onto, bridge.grey_mm, bridge.lowest_density)

@@ -142,9 +142,10 @@ class DeadEnd:
     Args:
         id: "D1" ..., numbered by (y, x). node: its node. branch: the branch that ends there.
         sheet_mm: where its coolant ends, on its line. length_mm: of the branch. bore_mm: its bore at the end.
-        ahead: a grey way to another channel, solid metal, or the frame of the image.
+        ahead: grey (a way to another channel, or a cloud without one within reach), solid metal, or the frame.
         bridge: id of the suggestion that leads on, or None when no channel lies within reach ahead.
-        onto: node or branch that way meets. gap_mm: length of its grey stretch. lowest_density: on it.
+        onto: node or branch that way meets. gap_mm: length of its grey stretch.
+        lowest_density: on that stretch; without a way, on the first bore beyond the end.
     """
 
     id: str

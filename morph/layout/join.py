@@ -11,7 +11,7 @@ from morph.core.errors import SettingError
 from morph.layout import notices as say
 from morph.layout.assemble import Parts, assemble
 from morph.layout.bridges import Suggestion
-from morph.layout.dead_ends import Known
+from morph.layout.dead_ends import known_of
 from morph.layout.graph import Accepted, Branch, Bridge, ChannelGraph, DeadEnd, Dropped, DropReason
 from morph.layout.ports import split_run
 from morph.layout.web import Joint, Run, Web, arc_mm, join_through, moved_along
@@ -81,7 +81,7 @@ def apply_choices(
         tuple(notice for notice in graph.notices if notice.code in STANDING_NOTICES) + tuple(map(say.accepted, done)),
         0.0,
         graph.turn_mm,
-        {joint_of[end.node]: Known(end.sheet_mm, end.id) for end in graph.dead_ends},
+        {joint_of[end.node]: known_of(end) for end in graph.dead_ends},
         graph.accepted + tuple(done),
     )
     suggestions = [item for bridge in left if (item := _suggestion(web, joint_of, bridge, graph.turn_mm)) is not None]

@@ -8,7 +8,7 @@ import numpy as np
 
 from morph.core.arrays import Floats
 from morph.layout.assemble import Parts, assemble
-from morph.layout.dead_ends import Known
+from morph.layout.dead_ends import known_of
 from morph.layout.graph import ChannelGraph
 from morph.layout.join import web_of
 from morph.layout.web import Joint, Run, Web, arc_mm
@@ -65,7 +65,7 @@ def split_stretches(
         tuple(notice for notice in graph.notices if not notice.branch_ids),
         0.0,
         graph.turn_mm,
-        {joint_of[end.node]: Known(end.sheet_mm, end.id) for end in graph.dead_ends},
+        {joint_of[end.node]: known_of(end) for end in graph.dead_ends},
         graph.accepted,
     )
     left = {key: branch for key, branch in kept.items() if key in web.runs}
