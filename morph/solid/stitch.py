@@ -8,6 +8,9 @@ from morph.core.arrays import Bools, Floats, Ints
 from morph.solid.extract import any_corner, beyond_planes
 from morph.solid.stretch import Stretches
 
+MOST_CUTS, CUT_BACK = 4, 0.3
+"""Where a band folds, the field's part is cut again, so much of the band's width farther back."""
+
 
 def stitch(vertices: Floats, triangles: Ints, end: Ints, stretches: Stretches) -> tuple[Floats, Ints, Bools] | set[int]:
     """Returns the closed mesh and which of its vertices are points of rings; else the stretches whose rims do not fit.
@@ -20,19 +23,23 @@ def stitch(vertices: Floats, triangles: Ints, end: Ints, stretches: Stretches) -
     """
     n = len(vertices)
     points = np.concatenate([vertices, stretches.points])
-    gone = beyond_planes(vertices, _end_of_all(n, triangles, end), stretches.planes)
-    lost = any_corner(gone, triangles)
-    rim = np.zeros(n, np.bool_)
-    rim[triangles[lost]] = True
-    triangles = triangles[~lost]
-    bands, misfits = _bands(points, n, _loops(triangles, rim), stretches)
-    if misfits:
-        return misfits
-    closed = np.concatenate([triangles, *(n + strip for strip in _strips(stretches)), *bands])
-    used = np.zeros(len(points), np.bool_)
-    used[closed] = True
-    of_ring = np.arange(len(points)) >= n
-    return points[used], (np.cumsum(used) - 1)[closed], of_ring[used]
+    all_ends, planes = _end_of_all(n, triangles, end), stretches.planes.copy()
+    misfits: set[int] = set()
+    for _ in range(MOST_CUTS):
+        lost = any_corner(beyond_planes(vertices, all_ends, planes), triangles)
+        rim = np.zeros(n, np.bool_)
+        rim[triangles[lost]] = True
+        kept = triangles[~lost]
+        bands, misfits = _bands(points, n, _loops(kept, rim), stretches)
+        if not misfits:
+            closed = np.concatenate([kept, *(n + strip for strip in _strips(stretches)), *bands])
+            used = np.zeros(len(points), np.bool_)
+            used[closed] = True
+            of_ring = np.arange(len(points)) >= n
+            return points[used], (np.cumsum(used) - 1)[closed], of_ring[used]
+        again = sorted(misfits)
+        planes[again, :3] += CUT_BACK * (planes[again, :3] - stretches.centre[again])
+    return {end // 2 for end in misfits}
 
 
 def _end_of_all(n: int, triangles: Ints, end: Ints) -> Ints:
@@ -84,24 +91,24 @@ def _loops(triangles: Ints, rim: Bools) -> list[Ints] | None:
 
 
 def _bands(points: Floats, n: int, loops: list[Ints] | None, stretches: Stretches) -> tuple[list[Ints], set[int]]:
-    """Returns the triangles between each end's ring and its rim, and the stretches where one is missing or folds."""
+    """Returns the triangles between each end's ring and its rim, and the ends where one is missing or folds."""
     from scipy.spatial import cKDTree
 
     n_ends = 2 * len(stretches.sides)
     bands: list[Ints] = []
     if loops is None or len(loops) != n_ends:
-        return bands, set(range(len(stretches.sides)))
+        return bands, set(range(n_ends))
     middle = np.array([points[loop].mean(axis=0) for loop in loops])
     loop_of: Ints = np.asarray(cKDTree(middle).query(stretches.planes[:, :3])[1], np.int64)
     if len(np.unique(loop_of)) != n_ends:
-        return bands, set(range(len(stretches.sides)))
+        return bands, set(range(n_ends))
     misfits: set[int] = set()
     for end in range(n_ends):
         ring, loop = n + stretches.ring(end), loops[loop_of[end]]
         # both rows run counter-clockwise about the axis; the rim's open edges run so only at the far end of a stretch
         band = _band(points, ring, loop if end % 2 else loop[::-1], end, stretches)
         if band is None:
-            misfits.add(end // 2)
+            misfits.add(end)
         else:
             bands.append(band)
     return bands, misfits

@@ -264,7 +264,7 @@ def _assemble(
 
 
 def _ends_of_pieces(samples: Samples, sweep: Sweep, low: Ints, high: Ints) -> tuple[Ints, Ints]:
-    """Returns for each piece (n,) which stretch's end it is near to, or that it is inside or in none; and the stretch."""
+    """Returns which stretch end each piece (n,) is near to, or that it is inside or in none; and its stretch."""
     from morph.kernels.stretch import INSIDE, NO_STRETCH
 
     end, of = np.full(len(sweep.pieces), NO_STRETCH), np.full(len(sweep.pieces), -1)

@@ -145,13 +145,13 @@ def swept_and_fused(plan):
     from OCP.BRepAlgoAPI import BRepAlgoAPI_Fuse
     from OCP.BRepBuilderAPI import BRepBuilderAPI_MakeEdge, BRepBuilderAPI_MakeFace, BRepBuilderAPI_MakeWire
     from OCP.BRepOffsetAPI import BRepOffsetAPI_MakePipe
+    from OCP.collections import Array1_gp_Pnt
     from OCP.GeomAPI import GeomAPI_PointsToBSpline
     from OCP.gp import gp_Ax2, gp_Circ, gp_Dir, gp_Pnt
-    from OCP.TColgp import TColgp_Array1OfPnt
 
     whole = None
     for branch in plan.branches:
-        points = TColgp_Array1OfPnt(1, len(branch.xyz_mm))
+        points = Array1_gp_Pnt(1, len(branch.xyz_mm))
         for k, xyz in enumerate(branch.xyz_mm, 1):
             points.SetValue(k, gp_Pnt(*xyz.tolist()))
         spine = BRepBuilderAPI_MakeWire(BRepBuilderAPI_MakeEdge(GeomAPI_PointsToBSpline(points).Curve()).Edge()).Wire()
