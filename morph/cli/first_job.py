@@ -68,16 +68,28 @@ def make_first_job(image: Path, relative: str, name: str, size_mm: tuple[float, 
         InputError: the image is not a density, or shows no channel at half level.
         SettingError: `size_mm` does not fit the image's aspect.
     """
-    raw = read_image(image)
+    raw = read_image(image, size_mm)
     rows, columns = raw.value.shape
     channel = CoolantEnd.LOW if float(np.mean(raw.value > 0.5)) > 0.5 else CoolantEnd.HIGH
     layout = LayoutSettings(image, size_mm or (float(columns), float(rows)), channel=channel)
+    if raw.states:
+        layout = replace(layout, rows=None, samples=None)
     if size_mm is None:
         layout = replace(layout, size_mm=_guess_size_mm(make_density(layout), layout))
     guess = _look(make_density(layout), layout, size_is_guess=size_mm is None)
     text = _job_text(guess, relative, name)
     edits = [(i, line.split(EDIT + ": ", 1)[1]) for i, line in enumerate(text.splitlines(), 1) if EDIT + ": " in line]
     return FirstJob(text, guess.ports, tuple(edits))
+
+
+def _reading_lines(layout: LayoutSettings) -> list[str]:
+    """Returns the lines that say how the array lies; a format that says so itself needs none."""
+    if layout.rows is None:
+        return ["# rows and samples: as the file says itself"]
+    return [
+        'rows = "top-down"  # "bottom-up" when the first row of the array is the bottom of the drawing',
+        'samples = "cells"  # "nodes" when the values stand for grid nodes',
+    ]
 
 
 def _guess_size_mm(density: Density, layout: LayoutSettings) -> tuple[float, float]:
@@ -163,8 +175,7 @@ def _job_text(guess: _Guess, relative: str, name: str) -> str:
         "[layout]",
         f"image = {_quoted(relative)}  # relative to this file",
         f"size_mm = [{width_mm:g}, {height_mm:g}]  # width, height of the whole image; {size_note}",
-        'rows = "top-down"  # "bottom-up" when the first row of the array is the bottom of the drawing',
-        'samples = "cells"  # "nodes" when the values stand for grid nodes',
+        *_reading_lines(guess.layout),
         'seen_from = "part"  # the drawing reads right from the part side; "metal" from the other',
         f'channel = "{guess.layout.channel.value}"  # {channel_note}',
         'level = "half"  # coolant ends at density 0.5; "keep-area" or a number instead',

@@ -89,6 +89,8 @@ def _tables(job: Job) -> list[tuple[str, Rows]]:
         ("[blank]", _blank(job)),
         *(("[[hole]]", _rows(hole)) for hole in job.holes),
         ("[quality]", _rows(job.quality)),
+        *(("[[accept]]", _rows(accepted)) for accepted in job.accepts),
+        *(("[[keep_out]]", _rows(keep_out)) for keep_out in job.keep_outs),
         *_coolant(job),
     ]
 

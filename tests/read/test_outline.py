@@ -314,3 +314,18 @@ def test_a_missing_library_is_told_with_its_cure(tmp_path, monkeypatch, kind, li
     (tmp_path / f"a.{kind}").write_text("0\nSECTION\n")
     error = refused(tmp_path / f"a.{kind}", "reader-missing")
     assert library in error.expected and "drawings" in error.do
+
+
+def test_a_first_job_leaves_rows_and_samples_to_a_format_that_states_them(tmp_path):
+    import uvw
+
+    from morph.cli.first_job import make_first_job
+    from morph.settings.read_job import parse_job
+
+    value = np.asarray(drawn(LINES, SIZE_MM, 0.5).value)
+    with uvw.ImageData(str(tmp_path / "a.vti"), [(0.0, 60.0), (0.0, 40.0)], [121, 81]) as file:
+        file.addCellData(uvw.DataArray(value.T, [0, 1], "density"), "binary")
+    first = make_first_job(tmp_path / "a.vti", "a.vti", "bars", SIZE_MM)
+    job = parse_job(first.text.encode(), tmp_path / "job.toml")
+    assert job.layout.rows is None and job.layout.samples is None
+    assert sorted(port.at_mm[0] for port in job.ports) == [0.0, 60.0]
