@@ -23,13 +23,15 @@ if TYPE_CHECKING:
     from morph.body.plan import ChannelPlan
     from morph.core.arrays import Floats
     from morph.flow.balance import FlowBalance
+    from morph.flow.gauge import Gauge
     from morph.flow.result import FlowResult
+    from morph.geometry.mesh import Mesh
     from morph.layout.density import Density
     from morph.layout.graph import ChannelGraph
     from morph.report.records import BuildRecords
     from morph.surface.wrap import WrappedGraph
 
-STAGES = ("layout", "surface", "body", "flow", "solid", "insert", "check", "export", "report")
+STAGES = ("layout", "surface", "body", "flow", "solid", "insert", "flow-3d", "check", "export", "report")
 
 
 @dataclass(frozen=True, slots=True)
@@ -104,6 +106,7 @@ class Planned:
     plan: ChannelPlan
     flow: FlowResult | None = None
     balance: FlowBalance | None = None
+    gauge: Gauge | None = None
 
 
 def plan_channels(job: Job, clock: _Clock) -> Planned:
@@ -145,6 +148,7 @@ def plan_channels(job: Job, clock: _Clock) -> Planned:
 def _flow(job: Job, planned: Planned, clock: _Clock) -> Planned:
     """Returns `planned` with the flow through its channels, their bores balanced when the job wants that."""
     from morph.flow.balance import balance_plan
+    from morph.flow.gauge import measure_gauge
     from morph.flow.heat_share import branch_heat
     from morph.flow.measure import measure_flow
     from morph.layout.density import make_density
@@ -155,7 +159,9 @@ def _flow(job: Job, planned: Planned, clock: _Clock) -> Planned:
         return planned
     with clock.stage("flow"):
         if coolant.balance is Balance.NONE:
-            return replace(planned, flow=measure_flow(planned.plan, coolant, profile, progress=progress))
+            flow = measure_flow(planned.plan, coolant, profile, progress=progress)
+            gauge = measure_gauge(planned.plan, coolant, profile, flow, progress=progress)
+            return replace(planned, flow=flow, gauge=gauge)
         heat = None
         if coolant.balance is Balance.BY_HEAT:
             flux = None if coolant.flux is None else make_density(replace(job.layout, image=coolant.flux))
@@ -169,7 +175,8 @@ def _flow(job: Job, planned: Planned, clock: _Clock) -> Planned:
             lambda bores_mm: _plan(job, planned.wrapped, planned.blank, SILENT, bores_mm),
             progress,
         )
-        return replace(planned, plan=plan, flow=flow, balance=balance)
+        gauge = measure_gauge(plan, coolant, profile, flow, progress=progress)
+        return replace(planned, plan=plan, flow=flow, balance=balance, gauge=gauge)
 
 
 def _plan(
@@ -203,6 +210,7 @@ def make_records(job: Job, clock: _Clock) -> BuildRecords:
     with clock.stage("insert"):
         insert = make_insert(solid, blank, plan, progress)
         finished = make_finished(solid, blank)
+    check_3d = _check_3d(job, planned, solid.trimmed, clock)
     with clock.stage("check"):
         subject = CheckSubject(
             insert=insert,
@@ -223,7 +231,8 @@ def make_records(job: Job, clock: _Clock) -> BuildRecords:
             planned.graph.turn_mm,
         )
         rows = check_insert(subject, progress, measured) + kept_out
-        rows += (FLOW_NOT_RUN,) if planned.flow is None else check_flow(planned.flow)
+        rows += (FLOW_NOT_RUN,) if planned.flow is None else check_flow(planned.flow, planned.gauge)
+        rows += check_3d
         verdicts = sort_verdicts((*rows, TEMPERATURE_NOT_RUN))
         fields = measure_fields(subject, measured)
     return BuildRecords(
@@ -241,14 +250,25 @@ def make_records(job: Job, clock: _Clock) -> BuildRecords:
         finished=finished,
         flow=planned.flow,
         balance=planned.balance,
+        gauge=planned.gauge,
     )
+
+
+def _check_3d(job: Job, planned: Planned, channels: Mesh, clock: _Clock) -> tuple[Verdict, ...]:
+    """Returns the rows of the three-dimensional check of the flow; none unless the job asks for it."""
+    from morph.flow.lattice_check import check_flow_3d, flow_check_verdicts
+
+    if job.coolant is None or not job.coolant.check_3d or planned.flow is None:
+        return ()
+    with clock.stage("flow-3d"):
+        return flow_check_verdicts(check_flow_3d(channels, planned.plan, planned.flow.network, clock.progress))
 
 
 def make_files(records: BuildRecords, clock: _Clock) -> tuple[dict[str, Any], dict[str, bytes]]:
     """Returns the summary and the content of every file but timings.json, by file name."""
     from morph.export.step import step_bytes
     from morph.export.stl import stl_bytes
-    from morph.export.tables import graph_json, json_bytes, ports_csv, verdicts_csv
+    from morph.export.tables import flow_csv, graph_json, json_bytes, ports_csv, verdicts_csv
     from morph.export.threemf import threemf_bytes
     from morph.report.page import make_report
     from morph.report.summary import make_summary
@@ -263,7 +283,9 @@ def make_files(records: BuildRecords, clock: _Clock) -> tuple[dict[str, Any], di
             objects.insert(1, ("finished", records.finished))
         files["insert.3mf"] = threemf_bytes(tuple(objects), direction)
         files["centrelines.step"] = step_bytes(records.plan, records.job.name)
-        files["graph.json"] = graph_json(records.plan)
+        files["graph.json"] = graph_json(records.plan, records.flow)
+        if records.flow is not None:
+            files["flow.csv"] = flow_csv(records.flow)
         files["ports.csv"] = ports_csv(records.plan, records.blank)
         files["verdicts.csv"] = verdicts_csv(records.verdicts, records.notices)
     with clock.stage("report"):

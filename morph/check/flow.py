@@ -10,6 +10,7 @@ from morph.check.rows import name_list
 from morph.core.verdict import COMMON_PRACTICE, Outcome, Verdict
 from morph.core.words import counted
 from morph.flow.drive import GivenFlow
+from morph.flow.gauge import Gauge
 from morph.flow.result import DEAD_SHARE, BranchFlow, FlowResult, Regime
 
 MOST_DROP_BAR = 2.0
@@ -22,11 +23,44 @@ MOST_SPREAD = 4.0
 """95th over 5th percentile of the velocities: beyond, the slow end runs at a quarter of the fast one."""
 
 
-def check_flow(flow: FlowResult) -> tuple[Verdict, ...]:
-    """Returns one `flow-drop` row per supply, and `flow-velocity`, `flow-regime`, `flow-slow` and `flow-spread`."""
+def check_flow(flow: FlowResult, gauge: Gauge | None = None) -> tuple[Verdict, ...]:
+    """Returns one `flow-drop` row per supply, and `flow-velocity`, `flow-regime`, `flow-slow` and `flow-spread`.
+
+    Args:
+        flow: the result.
+        gauge: the bench test; adds `flow-blocked-hidden`.
+    """
     rows = [_drop(flow, number) for number in range(len(flow.supplies))]
     rows += [_velocity(flow), _regime(flow), _slow(flow), _spread(flow)]
-    return tuple(rows)
+    return (*rows, *([] if gauge is None else [_hidden(gauge)]))
+
+
+def _hidden(gauge: Gauge) -> Verdict:
+    """Returns how many branches may be blocked without the bench test of the whole insert showing it."""
+    hidden = [row for row in gauge.blocked if not row.detectable]
+    threshold = 100.0 * max((row.threshold_ratio for row in gauge.blocked), default=0.0)
+    text = f"A bench test shows any single blocked branch: the flow falls by more than {threshold:.1f} %."
+    if hidden:
+        words = [f"{row.id} ({100.0 * row.flow_loss_ratio:.1f} %)" for row in hidden]
+        text = (
+            f"{counted(len(hidden), 'branch', 'branches')} of {len(gauge.blocked)} may be blocked without the bench "
+            f"test of the whole insert showing it, as the flow falls by less than {threshold:.1f} % (meter 3 % and "
+            f"bore band): {name_list(words)}."
+        )
+    return Verdict(
+        "flow-blocked-hidden",
+        _watch(bool(hidden)),
+        text,
+        value=float(len(hidden)),
+        unit="count",
+        limit=0.0,
+        limit_is="most",
+        source=f"meter error of 3 %: {COMMON_PRACTICE}; bore band of the process profile",
+        branch_ids=tuple(row.id for row in hidden),
+        hint="The report's bench test says how to find each: other port pairs, a borescope or an X-ray."
+        if hidden
+        else "",
+    )
 
 
 def _watch(bad: bool) -> Outcome:

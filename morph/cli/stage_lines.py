@@ -15,6 +15,7 @@ _DOING = {
     "flow": "flow and pressure in every branch",
     "solid": "channels as one closed body",
     "insert": "channels cut from the blank",
+    "flow-3d": "laminar flow in the solid, against the network",
     "check": "walls, openings, ceilings, powder",
     "export": "meshes, curves, tables",
     "report": "figures and page",

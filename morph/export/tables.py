@@ -19,9 +19,11 @@ from morph.body.plan import ChannelPlan, Exit, PlanBranch
 from morph.core.arrays import Floats
 from morph.core.verdict import Notice, Verdict, sort_verdicts
 from morph.export.numbers import json_bytes, rounded
+from morph.flow.result import FlowResult
+from morph.flow.tables import FLOW_COLUMNS, flow_rows, graph_flow
 from morph.settings.job import FaceSealEnd
 
-__all__ = ["graph_json", "json_bytes", "ports_csv", "verdicts_csv"]
+__all__ = ["flow_csv", "graph_json", "json_bytes", "ports_csv", "verdicts_csv"]
 
 Cell = str | float | int | None
 
@@ -102,10 +104,11 @@ def _bore_summary(branch: PlanBranch) -> dict[str, float]:
     return {"min": float(branch.bore_mm.min()), "mean": mean, "max": float(branch.bore_mm.max())}
 
 
-def graph_json(plan: ChannelPlan) -> bytes:
+def graph_json(plan: ChannelPlan, flow: FlowResult | None = None) -> bytes:
     """Returns graph.json: every node and branch of `plan`, leads included, with its bore along it.
 
-    Lengths in mm with 6 decimals. `sheet_mm` is null for what does not lie on the sheet.
+    Lengths in mm with 6 decimals. `sheet_mm` is null for what does not lie on the sheet. With a flow there is a
+    block `flow`: the coolant, total pressure of the nodes, and flow, drop and equivalent pipe of the branches.
     """
     nodes = [
         {"id": n.id, "kind": n.kind, "port": n.port, "sheet_mm": n.sheet_mm, "xyz_mm": n.xyz_mm} for n in plan.nodes
@@ -124,7 +127,13 @@ def graph_json(plan: ChannelPlan) -> bytes:
         }
         for b in plan.branches
     ]
-    return json_bytes({"nodes": nodes, "branches": branches})
+    added = {} if flow is None else {"flow": graph_flow(flow)}
+    return json_bytes({"nodes": nodes, "branches": branches, **added})
+
+
+def flow_csv(flow: FlowResult) -> bytes:
+    """Returns flow.csv: one row per branch and lead, flow positive from its start to its end."""
+    return _csv_bytes(FLOW_COLUMNS, flow_rows(flow))
 
 
 def ports_csv(plan: ChannelPlan, blank: Blank) -> bytes:

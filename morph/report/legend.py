@@ -9,7 +9,7 @@ from morph.report.drawing import INK, PAPER, Drawing, Point, number
 from morph.settings.job import Role
 
 PORT_COLOUR = "#7a1fa2"
-TICKS = 6
+TICKS, WIDE_LETTERS = 6, 4
 
 
 def port_mark(x: float, y: float, role: Role) -> str:
@@ -40,7 +40,10 @@ def _colour_bar(drawing: Drawing, words: str, ends: tuple[float, float], top: fl
     for index, colour in enumerate(map_hex(np.arange(COLOUR_STEPS) / (COLOUR_STEPS - 1))):
         x = number(left + index * step)
         drawing.raw(f'<rect x="{x}" y="{top + 12:g}" width="{number(step + 0.5)}" height="{high:g}" fill="{colour}"/>')
-    for value in round_ticks(*ends, TICKS):
+    ticks = round_ticks(*ends, TICKS)
+    if max(len(f"{value:g}") for value in ticks) > WIDE_LETTERS:
+        ticks = round_ticks(*ends, TICKS // 2 + 1)
+    for value in ticks:
         at = round(left + (value - ends[0]) / (ends[1] - ends[0]) * wide, 2)
         drawing.raw(f'<path d="M{number(at)} {top + 24:g}v5" stroke="{INK}"/>')
         drawing.raw(_words(at, top + 37.0, f"{value:g}", "middle"))

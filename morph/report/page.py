@@ -28,6 +28,7 @@ from morph.report.figures import (
     plotly_script,
 )
 from morph.report.flow_view import WORDS, flow_numbers, flow_rows, flow_scene
+from morph.report.gauge_view import draw_gauge, gauge_rows, point_rows
 from morph.report.headline import Figure, five_figures, sorted_verdicts
 from morph.report.job_text import job_text
 from morph.report.projection_view import VIEWS, draw_view
@@ -163,6 +164,14 @@ def _flow_pictures(records: BuildRecords) -> list[tuple[str, Any]]:
     return [(words, Markup(draw_sheet(flow_scene(records, records.flow, key)))) for key, words in WORDS.items()]
 
 
+def _gauge_pictures(records: BuildRecords) -> list[tuple[Any, list[tuple[str, str, str]]]]:
+    """Returns the curve of each supply as (drawing, rows)."""
+    from markupsafe import Markup
+
+    curves = () if records.gauge is None else records.gauge.curves
+    return [(Markup(draw_gauge(curve, f"gauge-{k}")), point_rows(curve)) for k, curve in enumerate(curves, start=1)]
+
+
 def _pictures(records: BuildRecords) -> dict[str, Any]:
     from markupsafe import Markup
 
@@ -173,6 +182,7 @@ def _pictures(records: BuildRecords) -> dict[str, Any]:
         "section": section,
         "sheet_svg": Markup(draw_sheet(sheet_scene(records))),
         "flow_svg": _flow_pictures(records),
+        "gauge_svg": _gauge_pictures(records),
         "density_svg": Markup(draw_density(records.density, records.graph)),
         "views": [(view.words, Markup(draw_view(view, records.plan, records.insert.mesh))) for view in VIEWS],
         "figure_json": Markup(figure_json(make_figure(scene))),
@@ -197,6 +207,7 @@ def _tables(records: BuildRecords, summary: dict[str, Any]) -> dict[str, Any]:
         "branches": _branch_rows(records.plan),
         "flow_numbers": [] if records.flow is None else flow_numbers(records.flow),
         "flow_rows": [] if records.flow is None else flow_rows(records.flow),
+        "gauge_rows": [] if records.gauge is None else gauge_rows(records.gauge),
         "balance_words": "" if balance is None or flow is None else balance_words(balance, flow),
         "balance_rows": [] if balance is None or flow is None else balance_rows(balance, records.plan, flow),
         "n_channels": sum(branch.kind is BranchKind.CHANNEL for branch in records.plan.branches),

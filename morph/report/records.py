@@ -9,6 +9,7 @@ from morph.body.plan import ChannelPlan
 from morph.check.fields import ChannelFields
 from morph.core.verdict import Notice, Verdict
 from morph.flow.balance import FlowBalance
+from morph.flow.gauge import Gauge
 from morph.flow.result import FlowResult
 from morph.geometry.mesh import Mesh
 from morph.layout.density import Density
@@ -29,6 +30,7 @@ class BuildRecords:
         fields: figures along the channels and over their wall, for pictures; None when not measured.
         finished: the insert after its stock is machined off; None when there is no stock.
         flow: flow and pressure in every branch; None when the job does not ask for it.
+        gauge: the bench test of the printed insert; None without a flow.
         balance: how the bores were changed for the flow; None when they were not.
     """
 
@@ -46,3 +48,4 @@ class BuildRecords:
     finished: Mesh | None = None
     flow: FlowResult | None = None
     balance: FlowBalance | None = None
+    gauge: Gauge | None = None

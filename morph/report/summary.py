@@ -24,6 +24,7 @@ from morph.geometry.mesh import Mesh, measure_condition, mesh_area_mm2, mesh_vol
 from morph.layout.graph import ChannelGraph, NodeKind, count_loops
 from morph.report.balance_view import balance_block
 from morph.report.flow_summary import flow_block
+from morph.report.gauge_view import gauge_block
 from morph.report.headline import five_figures, sorted_verdicts
 from morph.report.records import BuildRecords
 from morph.settings.job import ConeSettings, FaceSealEnd
@@ -260,7 +261,8 @@ def _flow(records: BuildRecords) -> Block | None:
         return None
     balance = records.balance
     changed = None if balance is None else balance_block(balance, records.plan, records.flow)
-    return flow_block(records.flow) | {"balance": changed}
+    gauge = None if records.gauge is None else gauge_block(records.gauge)
+    return flow_block(records.flow) | {"balance": changed, "gauge": gauge}
 
 
 def make_summary(records: BuildRecords) -> dict[str, Any]:

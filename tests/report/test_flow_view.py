@@ -1,13 +1,16 @@
 """The flow in the report: velocity is flow over area, arrows follow the flow, figures carry their units."""
 
+import re
 from pathlib import Path
 
 import numpy as np
 import pytest
 
 from morph.check.flow import check_flow
+from morph.flow.gauge import measure_gauge
 from morph.flow.measure import measure_flow
 from morph.report.flow_view import PRESSURE, REYNOLDS, VELOCITY, along_branch, flow_numbers, flow_scene
+from morph.report.gauge_view import draw_gauge
 from morph.report.page import make_report
 from morph.report.sheet_view import draw_sheet
 from morph.report.summary import make_summary
@@ -63,6 +66,30 @@ def test_page_and_summary_hold_every_branch(records, make_records, flow):
     for _, figure in flow_numbers(flow):
         assert figure in page
     assert '"name": "velocity"' in page  # the 3D picture can show it
+
+
+def test_bench_test_stands_in_the_page_with_its_curve(records, make_records, flow):
+    coolant, profile = CoolantSettings(flow_l_min=2.0), read_profile("steel-40um", Path())
+    gauge = measure_gauge(records.plan, coolant, profile, flow)
+    full = make_records(flow=flow, gauge=gauge, verdicts=records.verdicts + check_flow(flow, gauge))
+    summary = make_summary(full)
+    page = make_report(full, summary)
+    point = gauge.curves[0][3]
+    assert f"{point.drop_bar:.3f} bar" in page and f"{point.flow_l_min[1]:.2f} L/min" in page
+    assert point.flow_l_min[1] == pytest.approx(2.0, rel=1e-6)  # the step at the working drop
+    hidden = [row for row in gauge.blocked if not row.detectable]
+    verdict = next(v for v in full.verdicts if v.code == "flow-blocked-hidden")
+    assert verdict.value == len(hidden) and verdict.branch_ids == tuple(row.id for row in hidden)
+    assert len(summary["flow"]["gauge"]["blocked"]) == sum(row.through for row in flow.branches)
+
+
+def test_curve_ends_where_its_axes_say(records, flow):
+    gauge = measure_gauge(records.plan, CoolantSettings(flow_l_min=2.0), read_profile("steel-40um", Path()), flow)
+    svg = draw_gauge(gauge.curves[0], "gauge-1")
+    assert svg.count("<circle") == len(gauge.curves[0])
+    assert "pressure between the ports, bar" in svg and "flow, L/min" in svg
+    heights = [float(y) for y in re.findall(r'<circle cx="[^"]+" cy="([^"]+)"', svg)]
+    assert heights == sorted(heights, reverse=True)  # more pressure, more flow
 
 
 def test_a_job_without_coolant_has_no_flow_section(page, summary):

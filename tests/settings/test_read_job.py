@@ -301,7 +301,6 @@ def test_a_thousand_ports_are_too_many(read_text, valid_text):
 LATER = [
     ('kind = "cylinder"', 'kind = "revolved"\nprofile_mm = [[1, 2], [3, 4]]'),
     ('kind = "cylinder"', 'kind = "freeform"\nfile = "core.stl"'),
-    ("[carrier]", '[coolant]\nfluid = "water"\n[carrier]'),
     ("[carrier]", '[moulding]\npolymer = "PP"\n[carrier]'),
 ]
 
