@@ -14,10 +14,11 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from morph.body.face import BlankFace, ConeFace, CylinderFace, FaceRole, PlaneFace
+from morph.body.carrier_face import LaidCarrier, round_face
+from morph.body.face import BlankFace, FaceRole, PlaneFace
 from morph.body.flange import FlangedFace, with_flange
 from morph.body.hole import Hole, make_hole
-from morph.body.shape import Round, Shape, face_of, make_shape, widest_mm
+from morph.body.shape import Shape, make_shape, widest_mm
 from morph.body.skin import Skin
 from morph.body.skin_face import SkinFace
 from morph.core.arrays import Floats, frozen_floats
@@ -25,7 +26,6 @@ from morph.core.errors import GeometryError, SettingError
 from morph.core.progress import SILENT, Progress
 from morph.core.tolerance import COINCIDE_MM
 from morph.core.verdict import Notice
-from morph.geometry.cone import Cone
 from morph.settings.job import BlankSettings, CylinderBlankSettings, HoleSettings, MeshBlankSettings, ServiceSettings
 from morph.surface.make import RoundCarrier
 
@@ -80,7 +80,7 @@ class Blank:
 def make_blank(
     settings: BlankSettings,
     holes: Sequence[HoleSettings],
-    carrier: RoundCarrier,
+    carrier: LaidCarrier,
     size_mm: tuple[float, float],
     service: ServiceSettings,
     build_direction: tuple[float, float, float] = (0.0, 0.0, 1.0),
@@ -99,7 +99,7 @@ def make_blank(
 
     Raises:
         InputError: of a mesh (read/mesh_file.py, read/mesh_body.py).
-        SettingError: `blank-not-a-body`, `blank-too-large`, `blank-thickness-missing`,
+        SettingError: `blank-not-a-body`, `blank-too-large`, `blank-thickness-missing`, `blank-needs-mesh`,
             `blank-face-unknown`, `blank-face-twice`, `blank-no-port-face`, `blank-stock-refused`,
             `flange-misfit`, `hole-not-a-hole`, `mesh-side-face`, `mesh-unit-conflict`.
         GeometryError: `blank-inside-carrier`, `blank-past-apex`, `blank-misses-carrier`, `hole-misses-body`,
@@ -108,9 +108,16 @@ def make_blank(
     if isinstance(settings.shape, MeshBlankSettings):
         from morph.body.mesh_blank import make_mesh_body
 
-        endless = _round_face(face_of(carrier))
-        body = make_mesh_body(settings.shape, carrier, endless, size_mm, build_direction, progress)
+        body = make_mesh_body(settings.shape, carrier, size_mm, build_direction, progress)
         return _mesh_blank(body, settings, holes, carrier, size_mm, service)
+    if not isinstance(carrier, RoundCarrier):
+        raise SettingError(
+            "blank-needs-mesh",
+            expected='kind = "mesh" with a carrier that is no cylinder or cone',
+            found="a blank drawn about the z axis",
+            where="[blank] kind",
+            do="Give the body as a mesh or STEP file.",
+        )
     shape = make_shape(settings.shape, carrier)
     named: list[AnyFace] = [*_name_faces(shape)]
     if settings.flange is not None:
@@ -126,7 +133,7 @@ def _mesh_blank(
     body: MeshBody,
     settings: BlankSettings,
     holes: Sequence[HoleSettings],
-    carrier: RoundCarrier,
+    carrier: LaidCarrier,
     size_mm: tuple[float, float],
     service: ServiceSettings,
 ) -> Blank:
@@ -157,7 +164,7 @@ def _cut_notices(settings: BlankSettings, shape: Shape) -> tuple[Notice, ...]:
 
 def _name_faces(shape: Shape) -> list[BlankFace]:
     """Returns the faces the body really has, the carrier first, then foot, top, sides and other round faces."""
-    rounds = [_round_face(item) for item in shape.rounds]
+    rounds = [round_face(item) for item in shape.rounds]
     faces: list[BlankFace] = [rounds[0]]
     planes = [("foot", 2, -1.0, shape.z_mm[0]), ("top", 2, 1.0, shape.z_mm[1])]
     if shape.box_mm is not None:
@@ -171,12 +178,6 @@ def _name_faces(shape: Shape) -> list[BlankFace]:
     for name, axis, sign, place in planes:
         faces.append(PlaneFace(name, FaceRole.OUTER, 0.0, place * np.eye(3)[axis], sign * np.eye(3)[axis]))
     return faces + rounds[1:]
-
-
-def _round_face(item: Round) -> CylinderFace | ConeFace:
-    if isinstance(item.surface, Cone):
-        return ConeFace(item.name, FaceRole.OUTER, 0.0, item.surface, item.metal_inside)
-    return CylinderFace(item.name, FaceRole.OUTER, 0.0, item.surface, item.metal_inside)
 
 
 def _face_name(name: str, known: Sequence[str], where: str, synonyms: Mapping[str, str]) -> str:
@@ -241,7 +242,7 @@ def _require_stock(stock: dict[str, float], part: Sequence[str]) -> None:
 
 
 def _require_sheet_inside(
-    faces: Sequence[AnyFace], carrier: RoundCarrier, size_mm: tuple[float, float], *, on_face: bool = True
+    faces: Sequence[AnyFace], carrier: LaidCarrier, size_mm: tuple[float, float], *, on_face: bool = True
 ) -> None:
     """Raises `blank-misses-carrier` unless the whole sheet, at depth and `on_face`, lies in the body."""
     x, y = np.meshgrid(np.linspace(0.0, size_mm[0], 97), np.linspace(0.0, size_mm[1], 5))

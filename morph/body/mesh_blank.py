@@ -11,6 +11,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from morph.body.carrier_face import carrier_face
 from morph.body.face import Face, FaceRole, PlaneFace
 from morph.body.flat_region import LEAST_WIDTH_MM, FlatRegion, find_flat_region, least_heights_mm, make_flat_search
 from morph.body.part_face import ON_CARRIER_MM, PartFace, require_part_face
@@ -24,7 +25,7 @@ from morph.geometry.mesh import Mesh, triangle_normals
 from morph.read.mesh_body import require_body
 from morph.read.mesh_file import MeshFile, read_mesh
 from morph.settings.job import BlankSettings, MeshBlankSettings
-from morph.surface.make import RoundCarrier
+from morph.surface.carrier import Carrier
 
 FACING_COSINE = float(np.cos(np.radians(30.0)))
 """Skin on the carrier faces within this of the carrier's own normal."""
@@ -53,8 +54,7 @@ class MeshBody:
 
 def make_mesh_body(
     settings: MeshBlankSettings,
-    carrier: RoundCarrier,
-    endless: Face,
+    carrier: Carrier,
     size_mm: tuple[float, float],
     build_direction: tuple[float, float, float],
     progress: Progress = SILENT,
@@ -64,7 +64,6 @@ def make_mesh_body(
     Args:
         settings: file and unit.
         carrier: the finished face with the sheet on it.
-        endless: the same surface as a face.
         size_mm: width and height of the sheet.
         build_direction: from the plate into the part.
         progress: told by the crossing test.
@@ -76,6 +75,7 @@ def make_mesh_body(
     """
     file = read_mesh(settings.file, settings.unit)
     mesh, notices = require_body(file.mesh, file.source, progress)
+    endless = carrier_face(carrier)
     on_carrier = _on_carrier(mesh, endless)
     found = require_part_face(mesh, on_carrier, carrier, endless, size_mm, file)
     up = unit_rows(np.array(build_direction, dtype=np.float64)[None, :])[0]
@@ -107,7 +107,7 @@ def _on_carrier(mesh: Mesh, endless: Face) -> Bools:
     return np.asarray(on | (needle & near & held[mesh.triangles].all(axis=1)), dtype=np.bool_)
 
 
-def _directions(up: Floats, carrier: RoundCarrier, size_mm: tuple[float, float]) -> dict[str, Floats]:
+def _directions(up: Floats, carrier: Carrier, size_mm: tuple[float, float]) -> dict[str, Floats]:
     """Returns the unit directions in which flat ends are looked for, by name, the names a job prefers first."""
     inward = carrier.into_metal(np.array([[0.5 * size_mm[0], 0.5 * size_mm[1]]]))[0]
     across = inward - (inward @ up) * up

@@ -16,7 +16,7 @@ from morph.core.errors import GeometryError
 from morph.geometry.mesh import Mesh, triangle_normals
 from morph.geometry.tree import TriangleTree, cast_rays, closest_points, make_tree
 from morph.read.mesh_file import MM_PER_UNIT, MeshFile
-from morph.surface.make import RoundCarrier
+from morph.surface.carrier import Carrier
 
 ON_CARRIER_MM = 0.1
 """Skin this near to the carrier is the carrier: exported meshes have chords up to this (common practice, no source)."""
@@ -42,7 +42,7 @@ class PartFace:
 def require_part_face(
     mesh: Mesh,
     on_carrier: Bools,
-    carrier: RoundCarrier,
+    carrier: Carrier,
     endless: Face,
     size_mm: tuple[float, float],
     file: MeshFile,
@@ -169,6 +169,8 @@ def _remedy(tree: TriangleTree, along: Floats, endless: Face, places: Floats, fi
     agrees = np.isfinite(middle) and float((np.abs(along - middle) <= ON_CARRIER_MM).mean()) >= ALL_OVER
     if agrees and isinstance(endless, CylinderFace | ConeFace):
         return f"Nearly all of it fits a carrier with radius_mm = {_radius_mm(endless, middle):.3f}."
+    if not isinstance(endless, CylinderFace | ConeFace):
+        return "Place the mesh where the carrier's own file lies, and give both in the same unit."
     return (
         "Place the mesh so that the carrier's axis is z and the sheet's centre lies at the +x side, z = 0; "
         "or correct the carrier's sizes, or make the sheet smaller."

@@ -4,11 +4,13 @@ import numpy as np
 import pytest
 
 from morph.body.blank import make_blank
+from morph.body.carrier_face import carrier_face
 from morph.body.exit import list_sites
 from morph.body.face import FaceRole
 from morph.body.mesh_blank import make_mesh_body
 from morph.body.room import make_limits, measure_room
 from morph.core.errors import MorphError
+from morph.core.fingerprint import fingerprint
 from morph.read.mesh_file import LengthUnit
 from morph.settings.job import (
     BlankSettings,
@@ -206,12 +208,39 @@ def test_the_same_file_gives_the_same_faces_twice(folder):
     body = mesh_bodies.round_front()
     body.export(folder / "twice.stl")
     settings = MeshBlankSettings(folder / "twice.stl")
-    from morph.body.blank import _round_face
-    from morph.body.shape import face_of
-    from morph.core.fingerprint import fingerprint
-
-    carrier = carrier_of()
-    made = [
-        make_mesh_body(settings, carrier, _round_face(face_of(carrier)), SIZE_MM, (0.0, 0.0, 1.0)) for _ in range(2)
-    ]
+    made = [make_mesh_body(settings, carrier_of(), SIZE_MM, (0.0, 0.0, 1.0)) for _ in range(2)]
     assert fingerprint(made[0].skin) == fingerprint(made[1].skin)
+
+
+class Hidden:
+    """A carrier that is a cylinder but does not say so: what any other surface offers."""
+
+    def __init__(self, carrier):
+        self._carrier = carrier
+
+    def __getattr__(self, name):
+        return getattr(self._carrier, name)
+
+
+def test_a_carrier_of_any_kind_serves_by_its_own_distance(folder):
+    body, carrier = mesh_bodies.round_front(), carrier_of()
+    seen = blank_of(folder, body, carrier, port_faces=("back",))
+    hidden = blank_of(folder, body, Hidden(carrier), port_faces=("back",))
+    np.testing.assert_array_equal(seen.skin.region, hidden.skin.region)
+    assert [face.name for face in seen.faces] == [face.name for face in hidden.faces]
+    points = np.random.default_rng(3).uniform(-50.0, 50.0, (500, 3))
+    points = points[np.hypot(points[:, 0], points[:, 1]) > 5.0]
+    one, two = carrier_face(carrier), carrier_face(Hidden(carrier))
+    np.testing.assert_allclose(one.distance_mm(points), two.distance_mm(points), atol=1e-12)
+    np.testing.assert_allclose(one.outward(points), two.outward(points), atol=1e-6)
+
+
+def test_a_drawn_blank_needs_a_round_carrier():
+    with pytest.raises(MorphError) as caught:
+        make_blank(BlankSettings(), (), Hidden(carrier_of()), SIZE_MM, ServiceSettings())
+    assert caught.value.code == "blank-needs-mesh"
+
+
+def test_another_surface_off_the_mesh_is_told_where_to_lie(folder):
+    error = refused("part-face-mismatch", folder, mesh_bodies.rod(40.0, -40, 40), Hidden(carrier_of(38.0)))
+    assert "own file" in error.do
