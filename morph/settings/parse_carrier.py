@@ -5,6 +5,7 @@ from __future__ import annotations
 from typing import Any
 
 from morph.settings.job import CarrierSettings, ConeMap, ConeSettings, Metal, TrueAt
+from morph.settings.parse_surface import parse_depths
 from morph.settings.table import Table
 
 LARGEST_RADIUS_MM = 5000.0
@@ -35,19 +36,9 @@ def parse_carrier(values: Any, file: str) -> CarrierSettings | ConeSettings:
         Table({"kind": kind}, file, "[carrier]", ["kind"]).not_available("kind", _KINDS_LATER[kind])
     table = Table(values, file, "[carrier]", _KEYS, _LATER)
     kind = table.word("kind", ["cylinder", "cone"])
-    if table.has("depth_mm") == table.has("wall_to_face_mm"):
-        both = table.has("depth_mm")
-        table.refuse(
-            "depth-choice",
-            "depth_mm",
-            expected="exactly one of depth_mm and wall_to_face_mm",
-            found="both" if both else "neither",
-            do="Remove one of the two." if both else "Give the depth of the centreline or the wall to the face.",
-        )
+    depth_mm, wall_mm = parse_depths(table)
     radius_mm = table.number("radius_mm", above=0.0, most=LARGEST_RADIUS_MM)
     metal = table.choice("metal", Metal)
-    depth_mm = table.optional_number("depth_mm", above=0.0, most=LARGEST_RADIUS_MM)
-    wall_mm = table.optional_number("wall_to_face_mm", above=0.0, most=LARGEST_RADIUS_MM)
     true_at = table.choice("true_at", TrueAt, TrueAt.DEPTH)
     if kind == "cylinder":
         table.not_used(["half_angle_deg", "map"], 'when kind is "cylinder"')
