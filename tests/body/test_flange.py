@@ -20,6 +20,8 @@ from morph.settings.job import (
     CylinderBlankSettings,
     FlangeSettings,
     Metal,
+    SectionSettings,
+    SectionShape,
     SeenFrom,
     ServiceSettings,
 )
@@ -33,6 +35,10 @@ SIZE = (40.0, 30.0)
 CYLINDER = CarrierSettings(30.0, Metal.TOWARD_AXIS, depth_mm=8.0)
 CONE = ConeSettings(30.0, 15.0, Metal.TOWARD_AXIS, depth_mm=8.0)
 JACKET = CarrierSettings(22.0, Metal.AWAY_FROM_AXIS, depth_mm=8.0)
+
+
+ROUND = SectionSettings(SectionShape.ROUND, bore_range_mm=(3.0, 12.0))
+"""Without a roof, so that room is worked by hand."""
 
 
 def blank(settings=CYLINDER, flange=(45.0, 12.0), shape=None, **more):
@@ -94,7 +100,7 @@ def test_on_its_faces_the_normals_are_those_of_the_faces():
 
 def test_a_channel_in_the_flange_has_the_room_of_the_flange():
     """At r = 38 in the middle of a flange 12 mm high a bore keeps 3 mm to foot and upper side: 6 mm less bands."""
-    scene = Scene(straight_line())
+    scene = Scene(straight_line(), section=ROUND)
     it = blank()
     room = measure_room(it, scene.limits, np.array([[38.0, 0.0, it.z_mm[0] + 6.0], [38.0, 0.0, 0.0]]))
     band = scene.limits.band_mm
@@ -123,7 +129,7 @@ def test_volume_and_stock_by_closed_form(settings, genus):
 @pytest.mark.parametrize("name", ["rim", "flange"])
 def test_ports_may_come_out_of_the_flange(name):
     it = blank(port_faces=(name,))
-    scene = Scene(straight_line())
+    scene = Scene(straight_line(), section=ROUND)
     sites = list_sites(it, it.face(name), np.array([22.0, 0.0, it.z_mm[0] + 8.0]), 4.0, None, scene.limits)
     assert len(sites.xyz_mm) > 10
     np.testing.assert_allclose(it.face(name).distance_mm(sites.xyz_mm), 0.0, atol=1e-9)
