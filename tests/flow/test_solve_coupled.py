@@ -55,7 +55,7 @@ def check(seeds):
 
 
 def test_random_channels_with_junctions_settle_from_rest():
-    check(range(120))
+    check(range(60))
 
 
 @pytest.mark.slow
