@@ -18,7 +18,7 @@ from tests.layout.synthetic_more import MORE_MODES, lay
 
 COLUMNS = (
     "mode           right cut-right loops-lost | centre px: median  p90 | half px: median  p90 | missing surplus px |"
-    " branches over-bound bend median share<=1/1.5 | plain: right  centre  half  missing surplus bend | CPU ratio"
+    " branches over-bound bend median share<=1/1.5 | plain: right  centre  half  missing surplus | CPU ratio"
 )
 WIDE_BEND = 1.0 / 1.5
 """Curvature times bore of a bend whose radius is 1.5 bores."""
@@ -43,32 +43,18 @@ def main() -> None:
             ours_s = time.process_time() - start
             right = same_graph(plain, laid.cut, 2 * laid.width)
             errors = measure(plain, laid.cut, laid.width)
-            rows.append((prove(laid), right, errors, _plain_bends(plain), ours_s / plain_s))
+            rows.append((prove(laid), right, errors, ours_s / plain_s))
         print(line(mode, rows), flush=True)
         everything += rows
     print(line("all", everything))
-
-
-def _plain_bends(plain):
-    """Curvature times width of the plain script's pixel paths, over chords of one width; the largest per branch."""
-    found = []
-    for _, _, path, half in plain.branches:
-        step = max(2, round(2 * float(np.median(half))))
-        if len(path) > 2 * step:
-            one, two = path[step:-step] - path[: -2 * step], path[2 * step :] - path[step:-step]
-            turn = np.abs(one[:, 0] * two[:, 1] - one[:, 1] * two[:, 0])
-            sizes = np.hypot(*one.T) * np.hypot(*two.T) * np.hypot(*(one + two).T)
-            found.append(float((2 * turn / np.maximum(sizes, 1e-9) * 2 * half[step:-step]).max()))
-    return found
 
 
 def line(name, rows) -> str:
     ours = [o for o, *_ in rows]
     centre = np.array([o.errors.centre_px for o in ours])
     half = np.array([o.errors.half_px for o in ours])
-    plain = [e for _, _, e, _, _ in rows]
+    plain = [e for _, _, e, _ in rows]
     bends = np.array([bend for o in ours for bend in o.bends])
-    plain_bends = np.array([bend for _, _, _, b, _ in rows for bend in b])
     return (
         f"{name:14s} {sum(o.right for o in ours):3d}/{len(ours)} {sum(o.right_cut for o in ours):6d}"
         f" {sum(o.loops_lost for o in ours):9d}  | {np.median(centre):17.3f} {np.quantile(centre, 0.9):6.3f}"
@@ -76,9 +62,9 @@ def line(name, rows) -> str:
         f" | {sum(o.errors.missing_px for o in ours):6.0f} {sum(o.errors.surplus_px for o in ours):8.0f}  "
         f" | {len(bends):8d} {sum(o.over_bound for o in ours):10d} {np.median(bends):11.3f}"
         f" {np.mean(bends <= WIDE_BEND):12.3f}"
-        f" | {sum(right for _, right, _, _, _ in rows):12d} {np.nanmedian([e.centre_px for e in plain]):7.3f}"
+        f" | {sum(right for _, right, _, _ in rows):12d} {np.nanmedian([e.centre_px for e in plain]):7.3f}"
         f" {np.nanmedian([e.half_px for e in plain]):6.3f} {sum(e.missing_px for e in plain):6.0f}"
-        f" {sum(e.surplus_px for e in plain):7.0f} {np.median(plain_bends):5.2f}"
+        f" {sum(e.surplus_px for e in plain):7.0f}"
         f" | {np.median([r for *_, r in rows]):6.2f}"
     )
 
