@@ -1,7 +1,7 @@
 """The channels as one closed solid: swept, extracted, simplified, tested for crossings, trimmed.
 
-Where a channel runs alone its wall is swept ring by ring (stretch.py), elsewhere it is extracted from the field, and both
-are joined (stitch.py); the field makes all of it where that does not work out.
+Where a channel runs alone its wall is swept ring by ring (stretch.py), elsewhere it is extracted from the field, and
+both are joined (stitch.py); the field makes all of it where that does not work out.
 The extracted surface gets its creases (crease.py) and is simplified once by edge collapses that move it by at
 most SIMPLIFY_MM. Where that makes triangles pass through each other it is left alone; if it still does, or pinches
 a neck, the tolerance is lowered; as a last resort the creases are given up and vertices of crossing triangles
