@@ -9,13 +9,14 @@ import pytest
 from morph.body.cap import TAPER, lower_to_taper
 from morph.core.errors import MorphError
 from morph.core.tolerance import BUILD_MM
-from morph.settings.job import HoleSettings, SectionSettings, ServiceSettings
+from morph.settings.job import HoleSettings, SectionSettings, SectionShape, ServiceSettings
 from tests.body.scenes import Scene
 from tests.surface.graphs import ladder, make_graph, straight_line
 
 pytestmark = pytest.mark.quick
 
 BAND = 0.2 + BUILD_MM
+ROUND = SectionSettings(SectionShape.ROUND, bore_range_mm=(3.0, 12.0))  # walls worked out with half a bore
 SIZE = (60.0, 40.0)
 
 
@@ -126,7 +127,7 @@ def test_branches_that_cannot_be_kept_apart_are_named():
         plan.plan()
     assert caught.value.code == "lead-blocked"
     rows = ladder(rungs=3, size=(70.0, 30.0), gap=5.2)
-    found = Scene(rows, service=ServiceSettings()).plan().merges
+    found = Scene(rows, service=ServiceSettings(), section=ROUND).plan().merges
     assert found and found[0].branch_ids[0] < found[0].branch_ids[1]
     # The rungs are 5.2 mm apart along the axis: 5.2 - 3 of metal is left at the least bore.
     assert found[0].wall_mm == pytest.approx(5.2 - 3.0, abs=1e-6)
@@ -139,7 +140,7 @@ def test_no_bore_is_lowered_below_the_least():
 
 def test_thinning_leaves_the_wall_or_names_the_pair():
     for gap in (6.0, 6.6, 7.2, 8.0, 9.0):
-        plan = Scene(ladder(rungs=3, size=(70.0, 40.0), gap=gap)).plan()
+        plan = Scene(ladder(rungs=3, size=(70.0, 40.0), gap=gap), section=ROUND).plan()
         rungs = [b for b in channels(plan) if np.ptp(b.sheet_mm[:, 1]) < 1e-6 and np.ptp(b.sheet_mm[:, 0]) > 30]
         for one, two in itertools.pairwise(rungs):
             middle = lambda b: b.bore_mm[int(np.abs(b.sheet_mm[:, 0] - 35).argmin())]  # noqa: E731
