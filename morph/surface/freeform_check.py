@@ -98,6 +98,7 @@ def require_sound(guide: Guide, deep: OffsetSurface, laid: Laid) -> LayReport:
     if off.any():
         _raise_off(guide, laid, sampled, points, error, limit)
     _require_unfolded(laid, sampled)
+    _require_spline_before_focus(guide, laid, sampled)
     _require_single(laid)
     curvature, places = _curved_places(guide, laid)
     worst = int(curvature.argmax())
@@ -165,11 +166,7 @@ def _focal_error(curvature: float, depth_mm: float, at_mm: Floats, count: int, e
             at_mm=at_mm,
         )
     radius = 1.0 / max(curvature, 1e-9)
-    found = (
-        f"a convex radius of {radius:.3f} mm"
-        if curvature * depth_mm >= 1.0
-        else f"an offset that turns inside out (fitted radius {radius:.3f} mm)"
-    )
+    found = f"a convex radius of {radius:.3f} mm" if curvature * depth_mm >= 1.0 else "an offset that turns inside out"
     return fault(
         "depth-past-focus",
         expected=f"a face that is nowhere rounder than the depth of {depth_mm:.3f} mm under the sheet",
@@ -212,6 +209,18 @@ def _require_before_focus(guide: Guide, deep: OffsetSurface, laid: Laid) -> None
         at = middle[worst]
         largest = float(guide.fit.curvature[guide.face.mesh.triangles[turned[worst]], 0].max())
         raise _focal_error(largest, depth_mm, at, int(under.sum()), _near_edge(guide, at))
+
+
+def _require_spline_before_focus(guide: Guide, laid: Laid, sampled: Floats) -> None:
+    """Raises where the laid spline itself, between the nodes, lies past a focus: I - d S must keep the plane's side."""
+    carrier = laid.carrier
+    shrink = np.eye(2) - carrier.depth_mm * carrier.shape_operator(sampled)
+    upright = np.minimum(np.linalg.det(shrink), np.trace(shrink, axis1=1, axis2=2))
+    bad = ~(upright > 0.0)
+    if bad.any():
+        worst = int(np.where(bad, upright, np.inf).argmin())
+        at = carrier.point_mm(sampled[worst : worst + 1], 0.0)[0]
+        raise _focal_error(0.0, carrier.depth_mm, at, int(bad.sum()), _near_edge(guide, at))
 
 
 def _under_sheet(laid: Laid, xyz_mm: Floats) -> Bools:

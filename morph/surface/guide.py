@@ -180,9 +180,10 @@ def _crop(full: Surface, at: Places, radius_mm: float) -> tuple[Ints, bool]:
     from scipy.sparse.csgraph import connected_components
 
     triangles, neighbour = full.mesh.triangles, full.adjacency.neighbour
-    near = np.linalg.norm(full.mesh.vertices_mm - at.xyz_mm[0], axis=1) <= radius_mm
-    inside = near[triangles].any(axis=1)
-    inside[at.triangle[0]] = True  # its corners may all lie outside the ball
+    # a long triangle may pass through the ball with all its corners outside: its box tells
+    corner = full.mesh.vertices_mm[triangles] - at.xyz_mm[0]
+    gap = np.maximum(np.maximum(corner.min(axis=1), -corner.max(axis=1)), 0.0)
+    inside = np.linalg.norm(gap, axis=1) <= radius_mm
     one, corner = np.nonzero((neighbour >= 0) & inside[:, None])
     two = neighbour[one, corner]
     both = inside[two]
