@@ -19,8 +19,11 @@ from morph.body.lead_search import find_lead
 from morph.core.arrays import Bools, Floats
 from morph.core.progress import SILENT
 
-QUICK = ((False, False, 1.0), (False, False, 0.0), (True, False, 0.0), (False, True, 0.0))
-"""Searches for another exit to propose (see SEARCHES)."""
+QUICK = ((False, False, 1.0), (False, False, 0.0), (True, False, 0.0))
+"""Searches for a nearer exit to propose (see SEARCHES)."""
+
+THOROUGH = (*QUICK, (False, True, 0.0), (True, True, 0.0))
+"""Searches for any exit to propose."""
 
 RINGS_BORES = (2.0, 5.0, 12.0)
 """Nearer exits are looked for within these distances of the one asked for, in bores."""
@@ -183,8 +186,9 @@ def _try(
     around: Surroundings, ground: Ground, port: PortStart, near_mm: Floats | None, within_mm: float
 ) -> Lead | None:
     centre = None if near_mm is None else (near_mm, within_mm)
+    searches = QUICK if np.isfinite(within_mm) else THOROUGH
     try:
-        return find_lead(around, ground, port, SILENT, QUICK, centre)
+        return find_lead(around, ground, port, SILENT, searches, centre)
     except Blocked:
         return None
 

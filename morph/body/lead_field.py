@@ -28,6 +28,9 @@ MOST_NODES = 120_000
 STEP_BORES, LEAST_STEP_MM = 0.45, 1.2
 """Step of the grid in bores, and the finest step."""
 
+OUTSIDE_MM = -1e3
+"""Spare read outside the grid."""
+
 NEAREST_SAMPLES = 6
 """Samples of channels looked at around a place."""
 
@@ -100,8 +103,13 @@ class LeadField:
         """Returns the spare (k,) to the channels near the port, as far as they count after `way_mm (k,)`."""
         least = np.full(len(xyz_mm), np.inf)
         network, reach = self.around.network, self.reach_mm()
+        if not len(self.near_at):
+            return least
+        samples = network.xyz_mm[self.near_at]
+        within = ((xyz_mm > samples.min(axis=0) - reach) & (xyz_mm < samples.max(axis=0) + reach)).all(axis=1)
+        beside = np.flatnonzero(within & (way_mm > self.near_way_mm.min()))
         for at, counts_from in zip(self.near_at, self.near_way_mm, strict=True):
-            here = np.flatnonzero(way_mm > counts_from)
+            here = beside[way_mm[beside] > counts_from]
             close = ((xyz_mm[here] - network.xyz_mm[at]) ** 2).sum(axis=1) < reach * reach
             here = here[close]
             if len(here):
@@ -183,17 +191,11 @@ class RoomGrid:
 
     def look_up(self, table: Floats, xyz_mm: Floats) -> Floats:
         """Returns `table (i, j, k)` at points (..., 3) by trilinear interpolation; far below 0 outside the box."""
-        place = (xyz_mm - self.origin_mm) / self.step_mm
-        top = np.array(table.shape) - 1
-        low = np.clip(np.floor(place), 0, top - 1).astype(np.int64)
-        part = np.clip(place - low, 0.0, 1.0)
-        value = np.zeros(place.shape[:-1])
-        for corner in range(8):
-            bits = np.array([corner >> 2 & 1, corner >> 1 & 1, corner & 1])
-            weight = np.where(bits == 1, part, 1.0 - part).prod(axis=-1)
-            at = low + bits
-            value += weight * table[at[..., 0], at[..., 1], at[..., 2]]
-        return np.where(((place < 0.0) | (place > top)).any(axis=-1), -1e3, value)
+        from scipy.ndimage import map_coordinates
+
+        place = np.moveaxis((xyz_mm - self.origin_mm) / self.step_mm, -1, 0)
+        read = map_coordinates(table, place, order=1, mode="constant", cval=OUTSIDE_MM, prefilter=False)
+        return np.asarray(read, dtype=np.float64)
 
 
 def make_room_grid(field: LeadField, box_mm: Floats) -> RoomGrid:

@@ -24,6 +24,9 @@ LEAST_BEND_BORES = 1.5
 STRAIGHT_BORES = 0.5
 """Least straight end square to the face, in bores, so that an end can be machined (common practice, no source)."""
 
+NARROWING_BEND_BORES = 1.4
+"""Where a lead still narrows from its port's bore it may bend this tightly: else it would have to start with a kink."""
+
 BEND_MARGIN = 1.105
 """Bends are built this much wider than asked: a bend that clears its limit by less than a tenth is watched, and
 it is judged on samples up to 1 mm apart."""
@@ -101,5 +104,5 @@ def make_bend(ground: Ground, port: PortStart, bore_mm: float) -> Bend:
     """Returns the bends and straight ends of a lead of `bore_mm` from `port`."""
     radius = max(LEAST_BEND_BORES, ground.bend_bores) * bore_mm
     whole = port.straight_mm(bore_mm)
-    start = max(port.bore_mm - BEND_MARGIN * bore_mm, 0.0) / TAPER
+    start = max(port.bore_mm - BEND_MARGIN * LEAST_BEND_BORES / NARROWING_BEND_BORES * bore_mm, 0.0) / TAPER
     return Bend(radius * BEND_MARGIN, max(STRAIGHT_BORES * bore_mm, whole), bore_mm, whole, start)

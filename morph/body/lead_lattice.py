@@ -170,7 +170,7 @@ class Lattice:
         cell = self._grid.cell(states.xyz_mm)
         to_go = self._to_go[cell[:, 0], cell[:, 1], cell[:, 2]]
         keep = np.flatnonzero(np.isfinite(to_go))
-        level = np.floor((states.way_mm[keep] + STRAIGHTER * to_go[keep]) / (0.5 * self.step_mm)).astype(np.int64)
+        level = np.floor((states.way_mm[keep] + STRAIGHTER * to_go[keep]) / self.step_mm).astype(np.int64)
         for value in np.unique(level):
             self._buckets.setdefault(int(value), []).append(numbers[keep[level == value]])
 

@@ -47,8 +47,9 @@ class Paths:
 
 def turn_between_rad(a: Floats, b: Floats) -> Floats:
     """Returns the angle between vectors (..., 3) by atan2, exact also for small and straight angles."""
-    cross = np.linalg.norm(np.cross(a, b), axis=-1)
-    return np.asarray(np.arctan2(cross, (a * b).sum(axis=-1)), dtype=np.float64)
+    (x, y, z), (u, v, w) = np.moveaxis(a, -1, 0), np.moveaxis(b, -1, 0)
+    across = np.sqrt((y * w - z * v) ** 2 + (z * u - x * w) ** 2 + (x * v - y * u) ** 2)
+    return np.asarray(np.arctan2(across, x * u + y * v + z * w), dtype=np.float64)
 
 
 def make_paths(vertices: Floats, radius: Floats) -> Paths:

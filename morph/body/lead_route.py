@@ -26,12 +26,12 @@ from morph.body.lead_path import SHARPEST_TURN_RAD, Paths, make_paths, sample_pa
 from morph.body.room import way_out
 from morph.core.arrays import Bools, Floats, Ints
 
-MOST_WAYS = 30
+MOST_WAYS = 15
 """Batches of the lattice from which ways are handed out before the search gives up."""
 
-WAYS_AT_ONCE = 6
+WAYS_AT_ONCE = 3
 
-MOST_STATES, FEWER_STATES = 60_000, 20_000
+MOST_STATES, FEWER_STATES = 40_000, 20_000
 """States of the lattice before it gives up, for the least bore and for wider ones, which may still be thinned."""
 
 VIAS = 10

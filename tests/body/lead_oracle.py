@@ -98,7 +98,8 @@ def lead_faults(scene, plan):
             wall = hole_distance(hole, points) - reach_to(lambda p, h=hole: hole_distance(h, p), points, bore, shape)
             if (lack := float((hole.wall_mm + BAND_MM - wall).max())) > SLACK_MM:
                 faults.append(f"{lead.id} lacks {lack:.3f} mm to {hole.id}")
-        if measure.sharpest_bend_bores(lead) < 1.5:
+        narrows = lead.bore_mm[0] > lead.bore_mm.min() + 1e-6
+        if measure.sharpest_bend_bores(lead) < (1.4 if narrows else 1.5):
             faults.append(f"{lead.id} bends at {measure.sharpest_bend_bores(lead):.3f} bores")
         faults += _end_faults(scene, plan, exit_, lead, arc, points)
     return faults + _pair_faults(scene, plan)

@@ -19,6 +19,7 @@ from morph.settings.job import (
     Role,
     Rows,
     SectionSettings,
+    SectionShape,
     ServiceSettings,
 )
 from tests.body import measure
@@ -73,7 +74,9 @@ def test_every_port_of_a_real_layout_is_led_out(name, body):
     graph, ports = read(name)
     scene = Scene(graph, **BODIES[body])
     profile = make_profile(smallest_bore_mm=3.0)
-    plan = make_plan(scene.wrapped, scene.blank, ports, SectionSettings(), ServiceSettings(), profile)
+    plan = make_plan(
+        scene.wrapped, scene.blank, ports, SectionSettings(shape=SectionShape.ROUND), ServiceSettings(), profile
+    )
     assert [exit_.port for exit_ in plan.exits] == [port.name for port in ports]
     assert not any(notice.code == "lead-kinked" for notice in plan.notices)
     for branch in plan.branches:
