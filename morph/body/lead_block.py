@@ -167,7 +167,7 @@ def other_exit(around: Surroundings, ground: Ground, port: PortStart) -> str:
                 return (
                     f"No place on {names} works; one on another face would: add it to port_faces, {_place_words(lead)}."
                 )
-    return f"No place on {names} or on another face that is not a part face works."
+    return f"No place on {names} works, and none was found on another face that is not a part face."
 
 
 def _with_port_face(ground: Ground, name: str) -> Ground:
