@@ -28,6 +28,8 @@ if TYPE_CHECKING:
     from morph.geometry.mesh import Mesh
     from morph.layout.density import Density
     from morph.layout.graph import ChannelGraph
+    from morph.layout.level_report import LevelReport
+    from morph.layout.wide import WideRegion
     from morph.report.records import BuildRecords
     from morph.surface.wrap import WrappedGraph
 
@@ -107,6 +109,8 @@ class Planned:
     flow: FlowResult | None = None
     balance: FlowBalance | None = None
     gauge: Gauge | None = None
+    levels: LevelReport | None = None
+    wide: tuple[WideRegion, ...] = ()
 
 
 def plan_channels(job: Job, clock: _Clock) -> Planned:
@@ -120,7 +124,8 @@ def plan_channels(job: Job, clock: _Clock) -> Planned:
     from morph.layout.density import make_density
     from morph.layout.extract import make_graph
     from morph.layout.keep_out import require_keep_outs
-    from morph.layout.wide import legal_bore_mm, settled
+    from morph.layout.level_report import make_level_report, without_repeats
+    from morph.layout.wide import legal_bore_mm, settle_wide
     from morph.surface.make import make_carrier
     from morph.surface.wrap import bore_range_mm, choose_depth_mm, wrap_graph
 
@@ -133,7 +138,9 @@ def plan_channels(job: Job, clock: _Clock) -> Planned:
         require_keep_outs(job.keep_outs, job.ports, graph.size_mm, graph.turn_mm)
         scale, range_mm = job.section.bore_scale, bore_range_mm(job.section, job.service, profile)
         widest_mm = legal_bore_mm(range_mm, job.carrier.depth_mm, job.service) / scale
-        graph = settled(graph, job.layout.wide, widest_mm, job.service.wall_between_mm, least_mm)
+        graph, wide = settle_wide(graph, job.layout.wide, widest_mm, job.service.wall_between_mm, least_mm)
+        levels = make_level_report(density, job.layout, job.ports, progress)
+        graph = replace(graph, notices=without_repeats(graph.notices, levels))
     with clock.stage("surface"):
         depth_mm = choose_depth_mm(job.carrier, graph, job.section, job.service, profile)
         carrier = make_carrier(job.carrier, graph.size_mm, job.layout.seen_from, depth_mm, job.layout.seam)
@@ -142,7 +149,7 @@ def plan_channels(job: Job, clock: _Clock) -> Planned:
         up = job.printing.build_direction
         blank = make_blank(job.blank, job.holes, carrier, graph.size_mm, job.service, up, progress)
         plan = _plan(job, wrapped, blank, progress)
-    return _flow(job, Planned(density, graph, wrapped, blank, plan), clock)
+    return _flow(job, Planned(density, graph, wrapped, blank, plan, levels=levels, wide=wide), clock)
 
 
 def _flow(job: Job, planned: Planned, clock: _Clock) -> Planned:
@@ -251,6 +258,8 @@ def make_records(job: Job, clock: _Clock) -> BuildRecords:
         flow=planned.flow,
         balance=planned.balance,
         gauge=planned.gauge,
+        levels=planned.levels,
+        wide=planned.wide,
     )
 
 

@@ -200,15 +200,23 @@ class Cleaned:
 
 
 def measure_area_ratio(picture: Picture, samples: Samples) -> float:
-    """Returns coolant area over sheet area; a sample cut by the contour counts with the share the contour leaves it."""
-    field = picture.field
+    """Returns coolant area over sheet area of a picture, as `measure_covered_ratio` does."""
+    return measure_covered_ratio(picture.field, picture.level, samples)
+
+
+def measure_covered_ratio(field: Floats, level: float, samples: Samples) -> float:
+    """Returns the share of the sheet above `level`; a sample cut by the contour counts with the share it leaves it.
+
+    Args:
+        field: (rows, columns) density. level: where coolant ends. samples: what a value stands for.
+    """
     share = np.empty(field.shape)
     for first in range(0, len(field), SLAB_ROWS):
         last = min(first + SLAB_ROWS, len(field))
         low, high = max(0, first - 1), min(len(field), last + 1)  # a row more on either side for the slope
         own = slice(first - low, last - low)
         steep_y, steep_x = (np.gradient(field[low:high], axis=axis)[own] for axis in (0, 1))
-        over = field[first:last] - picture.level
+        over = field[first:last] - level
         near = np.abs(over) < 0.5 * np.maximum(np.abs(steep_y) + np.abs(steep_x), 1e-9)  # elsewhere all or nothing
         part = (over > 0.0).astype(np.float64)
         slope = np.hypot(steep_y[near], steep_x[near])

@@ -28,6 +28,7 @@ from morph.layout.level import (
     clean,
     find_level,
     find_refinement,
+    measure_covered_ratio,
     measure_width_px,
     refined,
     smoothed,
@@ -101,6 +102,7 @@ class _Field:
     width_px: float
     ports: tuple[PortSettings, ...]
     around: bool
+    samples: Samples
 
     @property
     def port_px(self) -> Floats:
@@ -137,6 +139,13 @@ def make_level_report(
     return LevelReport(tuple(rows), level, low, high, below, above, _notices(rows[here], low, high, below, above))
 
 
+def without_repeats(found: tuple[Notice, ...], report: LevelReport) -> tuple[Notice, ...]:
+    """Returns the notices `found` and those of `report`; without `level-decides` where it says that closer."""
+    if not report.notices:
+        return found
+    return tuple(notice for notice in found if notice.code != "level-decides") + report.notices
+
+
 def _make_field(density: Density, level: float, ports: tuple[PortSettings, ...]) -> _Field:
     around = density.seam is Seam.JOINED
     base = smoothed(one_turn(density) if around else density.value, joined=around)
@@ -147,7 +156,7 @@ def _make_field(density: Density, level: float, ports: tuple[PortSettings, ...])
     inset = 0.5 if density.samples is Samples.CELLS else 0.0
     grid = Grid((inset * pitch_mm[0], inset * pitch_mm[1]), pitch_mm)
     width_px = max(1.0, measure_width_px(value > level))
-    return _Field(value, grid, cell_weight(value.shape, samples), width_px, ports, around)
+    return _Field(value, grid, cell_weight(value.shape, samples), width_px, ports, around, samples)
 
 
 def _refined_around(base: Floats, factor: int) -> Floats:
@@ -171,7 +180,8 @@ def _list_levels(level: float, field: _Field) -> list[float]:
 def _row(field: _Field, level: float) -> LevelRow:
     found = clean(field.value > level, field.width_px, field.port_px)
     pieces, loops = count_around(found.mask) if field.around else (found.pieces, found.holes)
-    area_ratio = float((field.weight * found.mask).sum())
+    cleaned = found.mask.astype(np.int8) - (field.value > level)  # what crumbs take off and pinholes add
+    area_ratio = measure_covered_ratio(field.value, level, field.samples) + float((field.weight * cleaned).sum())
     return LevelRow(level, pieces, loops, None, _joined_ports(field, found.mask), area_ratio)
 
 

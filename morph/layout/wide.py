@@ -157,10 +157,10 @@ def treat_wide(
     return graph, _regions(stretches, widest_mm, done)
 
 
-def settled(
+def settle_wide(
     graph: ChannelGraph, rule: WideRule, widest_mm: float, wall_mm: float, least_bore_mm: float = 0.0
-) -> ChannelGraph:
-    """Returns the graph with its wide regions treated by `rule`, each one that was to be split told as a notice.
+) -> tuple[ChannelGraph, tuple[WideRegion, ...]]:
+    """Returns what `treat_wide` returns, each region that was to be split told as a notice of the graph.
 
     Arguments as for `treat_wide`; with the rule cap nothing is changed and nothing told: the bores are capped, and
     named, where room is known.
@@ -168,9 +168,9 @@ def settled(
     Raises:
         GeometryError: `wide-region-refused`.
     """
-    if rule is WideRule.CAP:
-        return graph
     graph, regions = treat_wide(graph, rule, widest_mm, wall_mm, least_bore_mm)
+    if rule is WideRule.CAP:
+        return graph, regions
     told = tuple(
         Notice(
             "wide-treated",
@@ -181,7 +181,14 @@ def settled(
         )
         for item in regions
     )
-    return replace(graph, notices=graph.notices + told)
+    return replace(graph, notices=graph.notices + told), regions
+
+
+def settled(
+    graph: ChannelGraph, rule: WideRule, widest_mm: float, wall_mm: float, least_bore_mm: float = 0.0
+) -> ChannelGraph:
+    """Returns the graph of `settle_wide` alone."""
+    return settle_wide(graph, rule, widest_mm, wall_mm, least_bore_mm)[0]
 
 
 @dataclass(frozen=True, slots=True)

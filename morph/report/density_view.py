@@ -10,13 +10,15 @@ from numpy.typing import NDArray
 from morph.core.arrays import Floats
 from morph.layout.density import Density
 from morph.layout.graph import ChannelGraph, NodeKind
+from morph.layout.wide import WideRegion
 from morph.report.along import middle_index
+from morph.report.areas_view import KEEP_OUT, WIDE, draw_keep_outs, draw_wide
 from morph.report.drawing import FAINT, INK, PAPER, Drawing, number
 from morph.report.label_places import LabelPlaces
 from morph.report.legend import PORT_COLOUR
 from morph.report.png import png_address
 from morph.report.seam import clipped, copies_mm, on_sheet_mm
-from morph.settings.job import Samples
+from morph.settings.job import KeepOutSettings, Samples
 
 WIDTH_PX, HEIGHT_PX = 820.0, 720.0
 LARGEST_PX = 1024
@@ -68,40 +70,102 @@ def _node(drawing: Drawing, at: Floats, kind: NodeKind) -> str:
     return colour
 
 
-def draw_density(density: Density, graph: ChannelGraph) -> str:
-    """Returns the density with nodes, branches and dropped pieces as SVG, the way the drawing reads."""
-    width, height = graph.size_mm
-    margin = 0.05 * max(width, height)
-    low, high = (-margin, -margin), (width + margin, height + margin)
-    wide = min(WIDTH_PX, HEIGHT_PX * (high[0] - low[0]) / (high[1] - low[1]))
-    drawing = Drawing(low, high, wide, "density", "The density as read, with the channel graph over it")
-    _picture(drawing, density)
+def _branches(drawing: Drawing, graph: ChannelGraph) -> None:
+    """Draws the centrelines: those built as lines, those of pieces without a port thin and dashed."""
     with clipped(drawing, graph.size_mm, graph.turn_mm):
+        for branch in graph.loose_branches:
+            for points in copies_mm(branch.sheet_mm, graph.turn_mm):
+                data = drawing.path_data(points)
+                drawing.shape(data, fill="none", stroke=PAPER, stroke_width="3.5")
+                drawing.shape(data, fill="none", stroke=DROPPED, stroke_width="1.6", stroke_dasharray="6 3")
         for branch in graph.branches:
             for points in copies_mm(branch.sheet_mm, graph.turn_mm):
                 data = drawing.path_data(points)
                 drawing.shape(data, fill="none", stroke=PAPER, stroke_width="4.5", stroke_linecap="round")
                 drawing.shape(data, fill="none", stroke=LINE, stroke_width="2.2", stroke_linecap="round")
+
+
+def _offers(drawing: Drawing, graph: ChannelGraph) -> None:
+    """Draws what was dropped and the suggestions that were not built."""
     for item in graph.dropped:
         x, y = drawing.xy(item.sheet_mm)
         drawing.raw(
             f'<circle cx="{x}" cy="{y}" r="7" fill="none" stroke="{DROPPED}" stroke-width="2" stroke-dasharray="3 2"/>'
         )
-    for bridge in graph.bridges:
-        data = drawing.path_data(bridge.path_mm)
-        drawing.shape(data, fill="none", stroke=DROPPED, stroke_width="2.4", stroke_dasharray="2 4")
-        x, y = bridge.path_mm[middle_index(bridge.path_mm)].tolist()
-        drawing.label((x, y + drawing.mm(9.0)), bridge.id, size_px=11.0, colour=DROPPED, bold=True)
-    labels = LabelPlaces(drawing)
-    nodes = [(node, on_sheet_mm(node.sheet_mm, graph.turn_mm)) for node in graph.nodes]
+    with clipped(drawing, graph.size_mm, graph.turn_mm):
+        for bridge in graph.bridges:
+            for points in copies_mm(bridge.path_mm, graph.turn_mm):
+                data = drawing.path_data(points)
+                drawing.shape(data, fill="none", stroke=PAPER, stroke_width="4.5")
+                drawing.shape(data, fill="none", stroke=DROPPED, stroke_width="2.6", stroke_dasharray="2 3")
+
+
+Named = list[tuple[str, Floats]]
+
+
+def _names(drawing: Drawing, graph: ChannelGraph, keep_outs: Named, wide: tuple[WideRegion, ...]) -> None:
+    """Draws the nodes and writes every name where it covers nothing."""
+    labels, (width, height) = LabelPlaces(drawing), graph.size_mm
+    dead = {end.node: end.id for end in graph.dead_ends}
+    loose = tuple(node for node in graph.loose_nodes if node.id in dead)
+    nodes = [(node, on_sheet_mm(node.sheet_mm, graph.turn_mm)) for node in graph.nodes + loose]
     for _, at in nodes:
         labels.keep_clear(at, 5.0)
+    low = drawing.low_mm[1] + 0.3 * abs(drawing.low_mm[1]) + drawing.mm(6.0)
     for share in np.linspace(0.0, 0.25, 12).tolist():  # the scale bar
-        labels.keep_clear(np.array([share * width, -0.7 * margin + drawing.mm(6.0)]), 13.0)
+        labels.keep_clear(np.array([share * width, low]), 13.0)
+    for name, at in keep_outs:
+        labels.write(on_sheet_mm(at, graph.turn_mm), name, KEEP_OUT, beside=False)
+    for region in wide:
+        at = np.array([float(np.median(region.outline_mm[:, 0])), float(region.outline_mm[:, 1].max())])
+        labels.write(on_sheet_mm(np.minimum(at, [width, height]), graph.turn_mm), region.id, WIDE, beside=True)
+    for bridge in graph.bridges:
+        middle = bridge.path_mm[middle_index(bridge.path_mm)]
+        labels.write(on_sheet_mm(middle, graph.turn_mm), bridge.id, DROPPED, beside=True)
     for node, at in nodes:
-        labels.write(at, node.id, _node(drawing, at, node.kind), beside=True)
+        name = f"{node.id} = {dead[node.id]}" if node.id in dead else node.id
+        labels.write(at, name, _node(drawing, at, node.kind), beside=True)
     for branch in graph.branches:
         middle = on_sheet_mm(branch.sheet_mm[middle_index(branch.sheet_mm)], graph.turn_mm)
         labels.write(middle, branch.id, LINE, beside=False)
+
+
+def draw_density(
+    density: Density,
+    graph: ChannelGraph,
+    keep_outs: tuple[KeepOutSettings, ...] = (),
+    wide: tuple[WideRegion, ...] = (),
+) -> str:
+    """Returns the density with nodes, branches and dropped pieces as SVG, the way the drawing reads.
+
+    Args:
+        density: as read.
+        graph: found in it.
+        keep_outs: of the job, drawn with their clearance.
+        wide: regions wider than the largest legal bore, outlined.
+    """
+    width, height = graph.size_mm
+    margin = 0.05 * max(width, height)
+    low, high = (-margin, -margin), (width + margin, height + margin)
+    across = min(WIDTH_PX, HEIGHT_PX * (high[0] - low[0]) / (high[1] - low[1]))
+    drawing = Drawing(low, high, across, "density", "The density as read, with the channel graph over it")
+    _picture(drawing, density)
+    named = draw_keep_outs(drawing, keep_outs, graph.size_mm, graph.turn_mm)
+    draw_wide(drawing, wide, graph.size_mm, graph.turn_mm)
+    _branches(drawing, graph)
+    _offers(drawing, graph)
+    _names(drawing, graph, named, wide)
     drawing.scale_bar((0.0, -0.7 * margin), 0.2)
     return drawing.svg()
+
+
+def density_caption(graph: ChannelGraph, keep_outs: bool, wide: bool) -> str:
+    """Returns what the signs of the picture mean, those that it shows."""
+    signs = ["Dark is coolant", "N: nodes", "B: branches"]
+    signs += ["cross: dead end (D)"] if graph.dead_ends or any(n.kind is NodeKind.DEAD_END for n in graph.nodes) else []
+    signs += ["dashed ring: dropped piece"] if graph.dropped else []
+    signs += ["thin dashed line: piece without a port, not built"] if graph.loose_branches else []
+    signs += ["dotted line (G): suggestion that was not built"] if graph.bridges else []
+    signs += ["hatched: keep-out, dashed around it: its clearance"] if keep_outs else []
+    signs += ["blue outline (W): wider than the largest legal bore"] if wide else []
+    return "; ".join(signs) + "."

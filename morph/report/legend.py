@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 
+from morph.report.areas_view import keep_out_sign
 from morph.report.colour import COLOUR_STEPS, map_hex, round_ticks
 from morph.report.drawing import INK, PAPER, Drawing, Point, number
 from morph.settings.job import Role
@@ -79,6 +80,12 @@ def draw_sheet_legend(
         return
     drawing.raw(f'<circle cx="{x + 13:g}" cy="{top + 64:g}" r="9" fill="none" stroke="{INK}" stroke-width="2.4"/>')
     drawing.raw(_words(x + 32.0, top + 64.0, mark))
+
+
+def draw_keep_out_legend(drawing: Drawing, high_px: float, paint: str) -> None:
+    """Adds the sign of keep-outs to the legend in the lowest `high_px` of the drawing; `paint` fills them."""
+    x, y = 128.0, drawing.height_px - high_px + 70.0
+    drawing.raw(keep_out_sign(x, y, paint) + _words(x + 32.0, y, "keep-out"))
 
 
 def draw_port(drawing: Drawing, at: Point, role: Role) -> None:

@@ -18,7 +18,7 @@ from morph.core.words import counted
 from morph.report.along import sheet_branches
 from morph.report.balance_view import balance_rows, balance_words
 from morph.report.colour import OUTCOME_COLOUR, OUTCOME_SIGN, OUTCOME_WORD
-from morph.report.density_view import draw_density
+from morph.report.density_view import density_caption, draw_density
 from morph.report.figures import (
     DIV_ID,
     ChannelScene,
@@ -31,6 +31,8 @@ from morph.report.flow_view import WORDS, flow_numbers, flow_rows, flow_scene
 from morph.report.gauge_view import draw_gauge, gauge_rows, point_rows
 from morph.report.headline import Figure, five_figures, sorted_verdicts
 from morph.report.job_text import job_text
+from morph.report.layout_rows import layout_rows, offers
+from morph.report.level_view import draw_levels, level_rows, level_words
 from morph.report.projection_view import VIEWS, draw_view
 from morph.report.records import BuildRecords
 from morph.report.section import WallSection, make_section, wall_verdicts
@@ -89,6 +91,7 @@ def sheet_scene(records: BuildRecords) -> SheetScene:
         worst,
         "worst wall",
         records.graph.turn_mm,
+        keep_outs=records.job.keep_outs,
     )
 
 
@@ -183,7 +186,8 @@ def _pictures(records: BuildRecords) -> dict[str, Any]:
         "sheet_svg": Markup(draw_sheet(sheet_scene(records))),
         "flow_svg": _flow_pictures(records),
         "gauge_svg": _gauge_pictures(records),
-        "density_svg": Markup(draw_density(records.density, records.graph)),
+        "density_svg": Markup(draw_density(records.density, records.graph, records.job.keep_outs, records.wide)),
+        "level_svg": None if records.levels is None else Markup(draw_levels(records.levels, "levels")),
         "views": [(view.words, Markup(draw_view(view, records.plan, records.insert.mesh))) for view in VIEWS],
         "figure_json": Markup(figure_json(make_figure(scene))),
         "view_json": Markup(_view_data(scene)),
@@ -211,6 +215,11 @@ def _tables(records: BuildRecords, summary: dict[str, Any]) -> dict[str, Any]:
         "balance_words": "" if balance is None or flow is None else balance_words(balance, flow),
         "balance_rows": [] if balance is None or flow is None else balance_rows(balance, records.plan, flow),
         "n_channels": sum(branch.kind is BranchKind.CHANNEL for branch in records.plan.branches),
+        "density_caption": density_caption(records.graph, bool(records.job.keep_outs), bool(records.wide)),
+        "layout_rows": layout_rows(summary["layout"]),
+        "layout_offers": offers(summary["layout"]),
+        "level_words": "" if records.levels is None else level_words(records.levels),
+        "level_rows": [] if records.levels is None else level_rows(records.levels),
         "notices": records.notices,
         "job_text": job_text(records.job),
         "profile": profile_rows(summary["settings"]["printing"]["profile"]),

@@ -14,6 +14,8 @@ from morph.flow.result import FlowResult
 from morph.geometry.mesh import Mesh
 from morph.layout.density import Density
 from morph.layout.graph import ChannelGraph
+from morph.layout.level_report import LevelReport
+from morph.layout.wide import WideRegion
 from morph.settings.job import Job
 from morph.solid.result import ChannelSolid, Insert
 from morph.surface.wrap import WrappedGraph
@@ -32,6 +34,8 @@ class BuildRecords:
         flow: flow and pressure in every branch; None when the job does not ask for it.
         gauge: the bench test of the printed insert; None without a flow.
         balance: how the bores were changed for the flow; None when they were not.
+        levels: what the layout would be at other levels; None when it was not asked.
+        wide: regions of the layout wider than the largest legal bore, and what became of them.
     """
 
     job: Job
@@ -49,3 +53,5 @@ class BuildRecords:
     flow: FlowResult | None = None
     balance: FlowBalance | None = None
     gauge: Gauge | None = None
+    levels: LevelReport | None = None
+    wide: tuple[WideRegion, ...] = ()

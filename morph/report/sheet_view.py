@@ -16,12 +16,13 @@ from morph.body.plan import ChannelPlan, PlanBranch
 from morph.core.arrays import Floats, Ints
 from morph.layout.graph import NodeKind
 from morph.report.along import band_edges_mm, middle_index, sheet_branches, sheet_of
+from morph.report.areas_view import HATCH, KEEP_OUT, draw_keep_outs
 from morph.report.colour import COLOUR_STEPS, map_hex, round_scale
 from morph.report.drawing import FAINT, INK, PAPER, Drawing, Point, number
 from morph.report.label_places import LabelPlaces
-from morph.report.legend import PORT_COLOUR, draw_port, draw_sheet_legend
+from morph.report.legend import PORT_COLOUR, draw_keep_out_legend, draw_port, draw_sheet_legend
 from morph.report.seam import clipped, copies_mm, on_sheet_mm
-from morph.settings.job import Role, SeenFrom
+from morph.settings.job import KeepOutSettings, Role, SeenFrom
 
 WIDTH_PX, LEGEND_PX, ARROW_EVERY_PX = 400.0, 92.0, 42.0
 SHEET = "#f7f8fa"
@@ -58,6 +59,7 @@ class SheetScene:
         marked: branch id and place (x, y) that is ringed, or None. mark_words: what the ring means.
         turn_mm: width after which the sheet repeats, None on an open sheet.
         flow: by branch id, above 0 where coolant runs from its start to its end; empty: no arrows.
+        keep_outs: of the job, drawn with their clearance.
     """
 
     plan: ChannelPlan
@@ -69,6 +71,7 @@ class SheetScene:
     mark_words: str
     turn_mm: float | None = None
     flow: dict[str, float] = field(default_factory=dict)
+    keep_outs: tuple[KeepOutSettings, ...] = ()
 
     @property
     def mirrored(self) -> bool:
@@ -163,8 +166,8 @@ def draw_ports(drawing: Drawing, scene: SheetScene) -> None:
         drawing.label((x, y + shift), words, size_px=12.0, colour=PORT_COLOUR, anchor=anchor, bold=True)
 
 
-def _names(drawing: Drawing, scene: SheetScene, branches: list[PlanBranch]) -> None:
-    """Names the branches without through-flow and the marked one; all of them where the flow is shown."""
+def _names(drawing: Drawing, scene: SheetScene, branches: list[PlanBranch], kept_out: list[tuple[str, Floats]]) -> None:
+    """Names keep-outs, branches without through-flow and the marked one; all branches where the flow is shown."""
     named = {b.id for b in branches if not b.through_flow or scene.flow}
     if scene.marked is not None:
         named.add(scene.marked[0])
@@ -173,6 +176,8 @@ def _names(drawing: Drawing, scene: SheetScene, branches: list[PlanBranch]) -> N
     for node in scene.plan.nodes:
         if node.kind is NodeKind.PORT and node.sheet_mm is not None:
             labels.keep_clear(on_sheet_mm(scene.seen(node.sheet_mm)[0], scene.turn_mm), 10.0)
+    for name, at in kept_out:
+        labels.write(on_sheet_mm(at, scene.turn_mm), name, KEEP_OUT, beside=False)
     for branch in branches:
         if branch.id in named:
             points = scene.seen(sheet_of(branch))
@@ -212,6 +217,7 @@ def draw_sheet(scene: SheetScene) -> str:
     width, height = scene.size_mm
     frame = np.array([[0, 0], [width, 0], [width, height], [0, height]], dtype=float)
     drawing.shape(drawing.path_data(frame, closed=True), fill=SHEET, stroke=FAINT, stroke_width="1")
+    kept_out = draw_keep_outs(drawing, scene.keep_outs, scene.size_mm, scene.turn_mm, scene.seen)
     hatch = drawing.hatch("no-flow", INK, 6.0, 45.0, 0.6)
     branches = sheet_branches(scene.plan)
     copies = [
@@ -229,7 +235,9 @@ def draw_sheet(scene: SheetScene) -> str:
             _arrows(drawing, points, branch.bore_mm, scene.flow.get(branch.id, 0.0))
     _mark(drawing, scene)
     draw_ports(drawing, scene)
-    _names(drawing, scene, branches)
+    _names(drawing, scene, branches, kept_out)
     mark = scene.mark_words if scene.marked is not None and scene.marked[1] is not None else ""
     draw_sheet_legend(drawing, scene.colours.words, scene.colours.ends, hatch, LEGEND_PX, mark)
+    if kept_out:
+        draw_keep_out_legend(drawing, LEGEND_PX, f"url(#{drawing.ident}-{HATCH})")
     return drawing.svg()

@@ -21,11 +21,11 @@ from morph.core.fingerprint import fingerprint
 from morph.core.units import mass_g
 from morph.core.verdict import Notice, Outcome, Verdict, worst_outcome
 from morph.geometry.mesh import Mesh, measure_condition, mesh_area_mm2, mesh_volume_mm3
-from morph.layout.graph import ChannelGraph, NodeKind, count_loops
 from morph.report.balance_view import balance_block
 from morph.report.flow_summary import flow_block
 from morph.report.gauge_view import gauge_block
 from morph.report.headline import five_figures, sorted_verdicts
+from morph.report.layout_summary import layout_block
 from morph.report.records import BuildRecords
 from morph.settings.job import ConeSettings, FaceSealEnd
 from morph.surface.cone import ConeCarrier
@@ -34,47 +34,6 @@ SCHEMA = 1
 LIBRARIES = ("numpy", "scipy", "scikit-image", "shapely", "manifold3d", "numba", "plotly", "jinja2")
 
 Block = dict[str, Any]
-
-
-def _layout(graph: ChannelGraph) -> Block:
-    number = {node.id: index for index, node in enumerate(graph.nodes)}
-    ends = [(number[branch.start], number[branch.end]) for branch in graph.branches]
-    pieces, loops = count_loops(len(graph.nodes), ends)
-    dead = [node for node in graph.nodes if node.kind is NodeKind.DEAD_END]
-    blind = {node.id: [b for b in graph.branches if node.id in (b.start, b.end)] for node in dead}
-    return {
-        "components": pieces,
-        "loops": loops,
-        "area_ratio": graph.area_ratio,
-        "level_ratio": graph.level,
-        "size_mm": graph.size_mm,
-        "nodes": len(graph.nodes),
-        "branches": len(graph.branches),
-        "length_mm": sum(branch.length_mm for branch in graph.branches),
-        "fit_deviation_max_mm": max((branch.deviation_mm for branch in graph.branches), default=0.0),
-        "dead_ends": len(dead),
-        "dead_end_places": [
-            {"node": node.id, "branch": branch.id, "length_mm": branch.length_mm, "sheet_mm": node.sheet_mm}
-            for node in dead
-            for branch in blind[node.id]
-        ],
-        "dropped": [
-            {"reason": item.reason, "sheet_mm": item.sheet_mm, "area_mm2": item.area_mm2} for item in graph.dropped
-        ],
-        "suggestions": [
-            {
-                "id": item.id,
-                "node": item.node,
-                "onto": item.onto,
-                "gap_mm": item.gap_mm,
-                "lowest_density_ratio": item.lowest_density,
-                "likely": item.likely,
-                "sheet_mm": item.path_mm[0],
-            }
-            for item in graph.bridges
-        ],
-        "levels": [{"level_ratio": i.level, "pieces": i.pieces, "holes": i.holes} for i in graph.levels],
-    }
 
 
 def _carrier(records: BuildRecords) -> Block:
@@ -285,7 +244,7 @@ def _blocks(records: BuildRecords) -> Block:
             "counts": {outcome.value: sum(v.outcome is outcome for v in verdicts) for outcome in Outcome},
             "figures": [dataclasses.asdict(figure) for figure in figures],
         },
-        "layout": _layout(records.graph),
+        "layout": layout_block(records.density, records.graph, records.levels, records.wide),
         "carrier": _carrier(records),
         "body": _body(records),
         "solid": _solid(records),
