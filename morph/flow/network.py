@@ -16,8 +16,9 @@ from morph.body.plan import BranchKind, ChannelPlan
 from morph.core.arrays import Bools, Floats, Ints, frozen_bools, frozen_ints
 from morph.core.errors import FlowError
 from morph.flow.junction import Junctions
+from morph.flow.junction_length import without_junctions
 from morph.flow.pipe_law import Segments, straight_pipes
-from morph.flow.pipe_shape import BranchEnds, branch_segments, make_roughness
+from morph.flow.pipe_shape import branch_segments, make_roughness
 from morph.settings.job import CoolantSettings, Role, Supply
 from morph.settings.profile import Profile
 
@@ -141,18 +142,11 @@ def make_network(
     index = {node.id: k for k, node in enumerate(plan.nodes)}
     start = np.array([index[b.start] for b in plan.branches], dtype=np.int64)
     end = np.array([index[b.end] for b in plan.branches], dtype=np.int64)
-    degree = np.bincount(np.concatenate([start, end]), minlength=len(index))
     finish = {exit_.lead: exit_.finish for exit_ in plan.exits}
     roughness = make_roughness(profile, coolant.roughness_um)
     rows = [
-        branch_segments(
-            branch,
-            plan.section,
-            roughness,
-            BranchEnds(bool(degree[a] > 2), bool(degree[b] > 2), finish.get(branch.id)),
-            bore_change_mm,
-        )
-        for branch, a, b in zip(plan.branches, start, end, strict=True)
+        branch_segments(branch, plan.section, roughness, finish.get(branch.id), bore_change_mm)
+        for branch in plan.branches
     ]
     segments = join_segments(rows)
     through = np.array([branch.through_flow for branch in plan.branches], dtype=np.bool_)
@@ -165,7 +159,7 @@ def make_network(
         end=end,
         is_channel=np.array([branch.kind is BranchKind.CHANNEL for branch in plan.branches], dtype=np.bool_),
         through=through,
-        segments=segments,
+        segments=without_junctions(segments, meetings),
         meetings=meetings,
         junctions=kept_legs(meetings, through),
         ports=ports,

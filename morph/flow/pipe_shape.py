@@ -1,8 +1,7 @@
 """A branch of the channel plan as a row of segments: section, roughness, bend and what its ends cost.
 
-Every sample interval of the centreline is a segment with the section of its mean bore. A branch loses
-0.4 hydraulic diameters at each end that is a junction: there its flow already runs in the neighbours
-(found by comparison with 3D laminar solutions; without it splits of short branches are 3 % off).
+Every sample interval of the centreline is a segment with the section of its mean bore. Segments reach from node to
+node; what junctions take of them is found where all legs are known (junction_length.py).
 """
 
 from __future__ import annotations
@@ -20,12 +19,6 @@ from morph.flow.duct_table import friction_factor_re
 from morph.flow.friction import ROUND_FRICTION_RE
 from morph.flow.pipe_law import Segments
 from morph.settings.profile import Profile
-
-JUNCTION_DIAMETERS = 0.4
-"""What a branch is shorter than its centreline per junction end, in hydraulic diameters."""
-
-LEAST_LENGTH_LEFT = 0.2
-"""No branch loses more than the rest of this share of its length to its junctions."""
 
 SAND_PER_RA = 5.86
 """Sand-grain roughness over Ra (Adams, Grant, Watson 2012, Int. J. Mech. Eng. Mechatronics 1(2) 66-71)."""
@@ -59,17 +52,8 @@ def make_roughness(profile: Profile, roughness_um: float | None) -> Roughness:
     return Roughness(1e-3 * SAND_PER_RA * ra.low, 1e-3 * SAND_PER_RA * ra.middle)
 
 
-@dataclass(frozen=True, slots=True, eq=False)
-class BranchEnds:
-    """What the ends of a branch are: whether start and end are junctions, and the finish when the end is an exit."""
-
-    start_joins: bool
-    end_joins: bool
-    finish: Finish | None
-
-
 def branch_segments(
-    branch: PlanBranch, rule: SectionRule, roughness: Roughness, ends: BranchEnds, bore_change_mm: float = 0.0
+    branch: PlanBranch, rule: SectionRule, roughness: Roughness, finish: Finish | None, bore_change_mm: float = 0.0
 ) -> Segments:
     """Returns a branch as segments (first = [0, k - 1]).
 
@@ -77,7 +61,7 @@ def branch_segments(
         branch: centreline and bores.
         rule: how channels are shaped.
         roughness: of the walls.
-        ends: what the ends are.
+        finish: of its end when that is an exit, else None.
         bore_change_mm: added to every printed bore, for the band of the process.
 
     Raises:
@@ -100,13 +84,13 @@ def branch_segments(
     area, diameter = section_area_mm2(middle, tangent, rule), hydraulic_diameter_mm(middle, tangent, rule)
     laminar = friction_factor_re(middle, tangent, rule)
     forward, backward = np.zeros(len(middle)), np.zeros(len(middle))
-    if ends.finish is not None:
-        _cut_end(ends.finish, chord, area, diameter, laminar)
+    if finish is not None:
+        _cut_end(finish, chord, area, diameter, laminar)
         _steps(area, forward, backward)
         forward[-1] += EXIT
         backward[-1] += ENTRY
     flat = climb_sine(tangent, rule)
-    length = _shortened(chord * branch.length_mm / max(chord.sum(), 1e-12), diameter, ends)
+    length = chord * branch.length_mm / max(chord.sum(), 1e-12)
     return Segments(
         first=np.array([0, len(middle)]),
         length_m=1e-3 * length,
@@ -142,18 +126,6 @@ def _steps(area: Floats, forward: Floats, backward: Floats) -> None:
         else:
             forward[k + 1] += narrowing
             backward[k + 1] += widening
-
-
-def _shortened(length: Floats, diameter: Floats, ends: BranchEnds) -> Floats:
-    """Returns the lengths (k,) after the junctions have taken theirs from the ends."""
-    total = float(length.sum())
-    take = [
-        JUNCTION_DIAMETERS * d * joins for d, joins in ((diameter[0], ends.start_joins), (diameter[-1], ends.end_joins))
-    ]
-    most = (1.0 - LEAST_LENGTH_LEFT) * total
-    scale = min(1.0, most / max(sum(take), 1e-300))
-    edge = np.concatenate([[0.0], length.cumsum()])
-    return np.asarray(np.diff(np.clip(edge, scale * take[0], total - scale * take[1])), dtype=np.float64)
 
 
 def _curvature(points: Floats, bore: Floats) -> Floats:
