@@ -12,6 +12,7 @@ from morph.geometry.mesh import Mesh
 from morph.geometry.slabs import run_slabs
 
 LEAVES_PER_SLAB = 4096
+TRIANGLES_PER_SLAB = 100_000
 GRID_BITS = 20
 
 
@@ -48,6 +49,35 @@ def measure_crossings(mesh: Mesh, progress: Progress = SILENT) -> Crossings:
     back = np.zeros(len(triangles), np.bool_)
     back[order] = crossed > 0
     return Crossings(int(pairs.sum()), back)
+
+
+def measure_crossings_of(mesh: Mesh, asked: Bools, progress: Progress = SILENT) -> Crossings:
+    """Returns the strict crossings of `mesh` that have one of the `asked (m,)` triangles in them.
+
+    Much less work than `measure_crossings` where few are asked for. Crossings of other triangles may be
+    among those returned, where they lie beside.
+    """
+    from morph.kernels.crossing import mark_near
+
+    rows = np.flatnonzero(asked)
+    if len(rows) == 0:
+        return Crossings(0, np.zeros(len(mesh.triangles), np.bool_))
+    vertices, every = mesh.vertices_mm, np.ascontiguousarray(mesh.triangles)
+    few = every[rows]
+    _, boxes, n_leaves = _box_tree(vertices, few[_space_filling_order(vertices, few)])
+    near = np.zeros(len(every), np.uint8)
+    run_slabs(
+        "solid: crossings",
+        len(every),
+        TRIANGLES_PER_SLAB,
+        lambda a, b: mark_near(a, b, vertices, every, boxes, n_leaves, near),
+        progress,
+    )
+    beside = np.flatnonzero(near)
+    found = measure_crossings(Mesh(vertices, every[beside]), progress)
+    crossed = np.zeros(len(every), np.bool_)
+    crossed[beside[found.crossed]] = True
+    return Crossings(found.pairs, crossed)
 
 
 def _space_filling_order(vertices_mm: Floats, triangles: Ints) -> Ints:

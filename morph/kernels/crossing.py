@@ -127,3 +127,35 @@ def find_crossings(
                         pairs[leaf] += 1
                         crossed[i] = 1
                         crossed[j] = 1
+
+
+@njit(cache=True, nogil=True)
+def mark_near(
+    first: int, last: int, vertices: Floats, triangles: Ints, boxes: Floats, n_leaves: int, near: NDArray[np.uint8]
+) -> None:
+    """Sets `near (m,)` to 1 for the triangles first..last - 1 whose box meets that of a leaf of a tree.
+
+    `boxes (2 n_leaves, 6)` is the heap of another list of triangles, as in `find_crossings`.
+    """
+    stack = np.empty(128, np.int64)
+    box = np.empty((1, 6))
+    for i in range(first, last):
+        for axis in range(3):
+            a = vertices[triangles[i, 0], axis]
+            b = vertices[triangles[i, 1], axis]
+            c = vertices[triangles[i, 2], axis]
+            box[0, axis] = min(a, b, c)
+            box[0, 3 + axis] = max(a, b, c)
+        depth = 1
+        stack[0] = 1
+        while depth > 0:
+            depth -= 1
+            node = stack[depth]
+            if not boxes_meet(box, 0, boxes, node):
+                continue
+            if node >= n_leaves:
+                near[i] = 1
+                break
+            stack[depth] = 2 * node + 1
+            stack[depth + 1] = 2 * node
+            depth += 2

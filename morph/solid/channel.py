@@ -20,7 +20,7 @@ from morph.core.arrays import Bools, Floats, Ints
 from morph.core.errors import GeometryError
 from morph.core.progress import SILENT, Progress
 from morph.core.tolerance import SIMPLIFY_MM
-from morph.geometry.crossings import Crossings, measure_crossings
+from morph.geometry.crossings import Crossings, measure_crossings, measure_crossings_of
 from morph.geometry.mesh import Mesh
 from morph.solid.blank import blank_body
 from morph.solid.body import arrays_of, body_of, require_valid
@@ -159,15 +159,24 @@ def _simplified(
 ) -> tuple[Mesh, Crossings]:
     """Returns the surface moved by at most `tolerance_mm` with fewer triangles, and its crossings.
 
-    Where triangles cross afterwards the surface is left as it was there, and the rest simplified anew.
+    Where triangles cross afterwards the surface is left as it was there, and the rest simplified anew. Triangles that
+    come out as they were, and crossed none, are not tested again.
     """
     keep = keep.copy()
-    left = triangles
-    for _ in range(MOST_ROUNDS):
-        left = simplify(vertices, triangles, keep, tolerance_mm, progress)
-        found = measure_crossings(Mesh(vertices, left), progress)
+    before, crossed = np.full(triangles.shape, -1), np.zeros(len(triangles), np.bool_)
+    for turn in range(MOST_ROUNDS):
+        now = simplify(vertices, triangles, keep, tolerance_mm, progress)
+        rows = np.flatnonzero(now[:, 0] >= 0)
+        left = now[rows]
+        if turn == 0:
+            found = measure_crossings(Mesh(vertices, left), progress)
+        else:
+            anew = crossed[rows] | (left != before[rows]).any(axis=1)
+            found = measure_crossings_of(Mesh(vertices, left), anew, progress)
         if not found.pairs or tolerance_mm <= 0.0:
             break
+        before, crossed = now, np.zeros(len(triangles), np.bool_)
+        crossed[rows[found.crossed]] = True
         keep |= _inside_boxes(vertices, vertices[left[found.crossed]])
     mesh, _ = tidy_mesh(vertices, left, np.zeros(len(left), np.int64))
     if len(mesh.triangles) == len(left) and not found.pairs:

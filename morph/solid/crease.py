@@ -13,7 +13,7 @@ import numpy as np
 
 from morph.core.arrays import Bools, Floats, Ints
 from morph.core.progress import SILENT, Progress
-from morph.geometry.crossings import measure_crossings
+from morph.geometry.crossings import measure_crossings, measure_crossings_of
 from morph.geometry.mesh import Mesh
 from morph.geometry.slabs import run_slabs
 from morph.solid.extract import Surface, any_corner
@@ -72,24 +72,29 @@ def sharpen(field: SampledField, surface: Surface, progress: Progress = SILENT) 
     sharp[chosen] = True
     target = plain.copy()
     target[chosen] = round_to_file(placed)
-    given_up = np.zeros(0, np.int64)
-    vertices, triangles = plain, surface.triangles
+    given_up, n = np.zeros(0, np.int64), len(plain)
+    asked: Bools | None = None
     for turn in range(MOST_ROUNDS):
-        vertices = np.where(sharp[:, None], target, plain)
-        triangles = _turn_quads(field, surface, vertices, sharp, progress)
-        triangles = _flip_edges(field, surface, vertices, triangles, sharp, turns, progress)
-        split = _find_splits(field, surface, vertices, triangles, sharp, turns, given_up, progress)
-        n_plain = len(vertices)
-        vertices, triangles = _with_splits(vertices, triangles, split)
-        touched = np.ones(len(vertices), np.bool_)
-        touched[:n_plain] = sharp
-        bad = _crossing_vertices(vertices, triangles, touched, turn >= WIDER_AFTER, progress)
+        if asked is None:
+            vertices = np.where(sharp[:, None], target, plain)
+            triangles = _turn_quads(field, surface, vertices, sharp, progress)
+            triangles = _flip_edges(field, surface, vertices, triangles, sharp, turns, progress)
+            split = _find_splits(field, surface, vertices, triangles, sharp, turns, given_up, progress)
+        made, joined = _with_splits(vertices, triangles, split)
+        touched = np.ones(len(made), np.bool_)
+        touched[:n] = sharp
+        bad = _crossing_vertices(made, joined, touched, asked, turn >= WIDER_AFTER, progress)
         if not bad.any():
-            return vertices, triangles
-        lost = split.edges[bad[n_plain:]]
-        given_up = np.concatenate([given_up, lost[:, 0] * n_plain + lost[:, 1]])
-        if turn >= SPLITS_FIRST or not len(lost):
-            sharp &= ~bad[:n_plain]
+            return made, joined
+        lost = split.edges[bad[n:]]
+        given_up = np.concatenate([given_up, lost[:, 0] * n + lost[:, 1]])
+        if turn < SPLITS_FIRST and len(lost):
+            split = _Split(split.edges[~bad[n:]], split.placed[~bad[n:]])
+            asked = bad[:n].copy()
+            asked[lost] = True
+        else:
+            asked = None
+            sharp &= ~bad[:n]
     return plain, surface.triangles
 
 
@@ -298,12 +303,23 @@ def _with_splits(vertices: Floats, triangles: Ints, split: _Split) -> tuple[Floa
     return vertices, np.concatenate(parts)
 
 
-def _crossing_vertices(vertices: Floats, triangles: Ints, touched: Bools, wider: bool, progress: Progress) -> Bools:
-    """Returns the vertices (n,) of triangles that cross another, looking at touched vertices and two rings around."""
+def _crossing_vertices(
+    vertices: Floats, triangles: Ints, touched: Bools, asked: Bools | None, wider: bool, progress: Progress
+) -> Bools:
+    """Returns the vertices (n,) of triangles that cross another, looking at touched vertices and two rings around.
+
+    With `asked (k,)`, of the first k vertices, only triangles at those are looked at; what they cross may be others.
+    """
     near = np.zeros(len(vertices), np.bool_)
     near[triangles[any_corner(touched, triangles)]] = True
     rows = np.flatnonzero(any_corner(near, triangles))
-    crossed = measure_crossings(Mesh(vertices, triangles[rows]), progress).crossed
+    if asked is None:
+        crossed = measure_crossings(Mesh(vertices, triangles[rows]), progress).crossed
+    else:
+        at = np.zeros(len(vertices), np.bool_)
+        at[: len(asked)] = asked
+        mesh = Mesh(vertices, triangles[rows])
+        crossed = measure_crossings_of(mesh, any_corner(at, mesh.triangles), progress).crossed
     bad = np.zeros(len(vertices), np.bool_)
     bad[triangles[rows[crossed]]] = True
     if wider:

@@ -15,7 +15,7 @@ VERTICES_PER_SLAB = 50_000
 
 
 def simplify(vertices: Floats, triangles: Ints, keep: Bools, tolerance_mm: float, progress: Progress) -> Ints:
-    """Returns the triangles (k, 3) that are left; vertices keep their numbers.
+    """Returns the triangles (m, 3), each in its row, rows of those that are gone -1; vertices keep their numbers.
 
     Args:
         vertices: (n, 3) in mm.
@@ -43,8 +43,7 @@ def simplify(vertices: Floats, triangles: Ints, keep: Bools, tolerance_mm: float
             progress.step("solid: simplify", last, n)
         if given_up < LEAST_GAIN * n:
             break
-    left = start.reshape(-1, 3)
-    return left[left[:, 0] >= 0]
+    return start.reshape(-1, 3)
 
 
 def _twins(triangles: Ints, n_vertices: int) -> Ints | None:

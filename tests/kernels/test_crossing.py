@@ -3,7 +3,7 @@
 import numpy as np
 import pytest
 
-from morph.geometry.crossings import measure_crossings
+from morph.geometry.crossings import measure_crossings, measure_crossings_of
 from morph.geometry.mesh import Mesh
 from morph.kernels.crossing import triangles_cross
 
@@ -71,3 +71,24 @@ def test_flat_meshes_do_not_cross():
     mesh = Mesh(v, np.vstack([np.column_stack([k, k + 1, k + 7]), np.column_stack([k, k + 7, k + 6])]))
     assert measure_crossings(mesh).pairs == 0
     assert measure_crossings(Mesh(v, np.zeros((0, 3), int))).pairs == 0
+
+
+@pytest.mark.parametrize("seed", range(4))
+def test_crossings_of_some_are_those_of_all_that_have_one_of_them(seed):
+    """Every crossing with an asked triangle is found; none is made up; none asked, none found."""
+    rng = np.random.default_rng(seed)
+    corner = rng.uniform(0, 6, (60, 1, 3)) + rng.uniform(-1, 1, (60, 3, 3))
+    mesh = Mesh(corner.reshape(-1, 3), np.arange(180).reshape(-1, 3))
+    every = set(np.flatnonzero(measure_crossings(mesh).crossed))
+    for share in (0.05, 0.3, 1.0):
+        asked = rng.uniform(size=60) < share
+        found = measure_crossings_of(mesh, asked)
+        marked = set(np.flatnonzero(found.crossed))
+        wanted = set()
+        for i in np.flatnonzero(asked):
+            partners = {j for j in range(60) if j != i and triangles_cross(mesh.vertices_mm, *mesh.triangles[[i, j]])}
+            wanted |= partners | ({int(i)} if partners else set())
+        assert wanted <= marked <= every
+        if share == 1.0:
+            assert marked == every and found.pairs == measure_crossings(mesh).pairs > 0
+    assert measure_crossings_of(mesh, np.zeros(60, bool)).pairs == 0
