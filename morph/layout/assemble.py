@@ -32,8 +32,10 @@ from morph.layout.smooth import fit_web, list_chained
 from morph.layout.web import Run, Web, arc_mm, moved_along
 
 LONGEST_STEP_MM = 1.0
-CLOSER = (0.85, 0.7, 0.5)
-"""Shares of the deviation bound tried in turn where a curve ends beyond it."""
+CLOSER = (0.98, 0.96, 0.85, 0.7, 0.5)
+"""Largest shares of the deviation bound tried in turn where a curve ends beyond it; the last is the least too."""
+AIM = 0.99
+"""Of the bound that would just do if a curve moved with it."""
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -131,7 +133,8 @@ def _draw_all(web: Web, kept: dict[int, Branch], pixel_mm: float) -> dict[int, _
     """Returns every run as drawn; chains whose curve came out beyond the bound are fitted again within a closer one.
 
     A fit is judged across its chain before its ends are settled on the joints and measured after, so one that
-    uses its bound up may end a few hundredths beyond it.
+    uses its bound up may end a few hundredths beyond it. The closer bound is as much less as it was exceeded,
+    and no more at first: a sharp corner fitted closer than it must be folds the channel's inner wall.
     """
     share: dict[int, float] = {}
     drawn = {key: _keep(key, kept[key]) for key in kept}
@@ -142,7 +145,9 @@ def _draw_all(web: Web, kept: dict[int, Branch], pixel_mm: float) -> dict[int, _
         beyond = {key for key, item in drawn.items() if item.excess > 1.0 + 1e-9 and key not in kept}
         if not beyond or not closer:
             break
-        share |= dict.fromkeys(beyond, DEVIATION_SHARE * closer)
+        for key in beyond:
+            aimed = AIM * share.get(key, DEVIATION_SHARE) / drawn[key].excess
+            share[key] = max(min(aimed, DEVIATION_SHARE * closer), DEVIATION_SHARE * CLOSER[-1])
         fixed = frozenset(web.runs) - list_chained(web, beyond, frozenset(kept))
     return {key: drawn[key] for key in sorted(drawn)}
 

@@ -220,14 +220,21 @@ def fit_chain(samples: Samples, seam_weight: float = SEAM_WEIGHT, share: float =
 
 
 def _straightened(fit: Fit, wavelength: Floats, control: Floats, bend: Floats, width_mm: float) -> Floats:
-    """Returns `control` made firmer around bends tighter than one width, as long as the deviation bound holds."""
+    """Returns `control` made firmer around bends tighter than one width, as long as the deviation bound holds.
+
+    A fit within a closer bound than usual uses it up in finer steps, so that its bends fold no sooner than they must.
+    """
+    step = STEP
     for _ in range(ROUNDS):
         if bend.max() <= TIGHTEST_BEND:
             break
-        wavelength = np.where(fit.near(bend > TIGHTEST_BEND, width_mm), wavelength * STEP, wavelength)
-        firmer = fit.solve(wavelength)
-        excess, bend = fit.judge(firmer)
-        if excess.max() > 1.0:
+        raised = np.where(fit.near(bend > TIGHTEST_BEND, width_mm), wavelength * step, wavelength)
+        firmer = fit.solve(raised)
+        excess, firmer_bend = fit.judge(firmer)
+        if excess.max() <= 1.0:
+            wavelength, control, bend = raised, firmer, firmer_bend
+        elif fit.share < DEVIATION_SHARE:
+            step = math.sqrt(step)
+        else:
             break
-        control = firmer
     return control
