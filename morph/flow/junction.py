@@ -87,26 +87,26 @@ class Junctions:
 
 
 def leg_pressure(legs: Junctions, inflow: Any, area_m2: Any, density_kg_m3: float) -> Any:
-    """Returns the total pressure of each leg above its node (j, k) in Pa: > 0 where a joining flow pays.
+    """Returns the total pressure of each leg above its node (..., j, k) in Pa: > 0 where a joining flow pays.
 
     Args:
         legs: angles and which legs exist.
-        inflow: (j, k) in m3/s, positive into the node, 0 where unused; may be complex.
-        area_m2: (j, k) of the legs; may be complex.
+        inflow: (..., j, k) in m3/s, positive into the node, 0 where unused; may be complex.
+        area_m2: (..., j, k) of the legs; may be complex.
         density_kg_m3: of the coolant.
     """
-    scale = np.sqrt((inflow * inflow).sum(axis=1, keepdims=True) + 1e-40)
+    scale = np.sqrt((inflow * inflow).sum(axis=-1, keepdims=True) + 1e-40)
     size = np.sqrt(inflow * inflow + (SOFT_SHARE * scale) ** 2)
     into = np.where(legs.used, 0.5 * (size + inflow), 0.0)
     out = np.where(legs.used, 0.5 * (size - inflow), 0.0)
-    whole = into.sum(axis=1, keepdims=True)
+    whole = into.sum(axis=-1, keepdims=True)
     u, v = into / whole, out / whole
-    join, part = 1.0 - (u * u).sum(axis=1, keepdims=True), 1.0 - (v * v).sum(axis=1, keepdims=True)
+    join, part = 1.0 - (u * u).sum(axis=-1, keepdims=True), 1.0 - (v * v).sum(axis=-1, keepdims=True)
     side = (part * part + SOFT_SIDE) / (join * join + part * part + 2.0 * SOFT_SIDE)
     entering = into / np.where(legs.used, size, 1.0)
-    paid = side * _paid(legs, u, v, entering, (u * area_m2).sum(axis=1, keepdims=True), area_m2, -u, whole)
+    paid = side * _paid(legs, u, v, entering, (u * area_m2).sum(axis=-1, keepdims=True), area_m2, -u, whole)
     paid = paid + (1.0 - side) * _paid(
-        legs, u, v, entering, (v * area_m2).sum(axis=1, keepdims=True), area_m2, v, whole
+        legs, u, v, entering, (v * area_m2).sum(axis=-1, keepdims=True), area_m2, v, whole
     )
     return np.where(legs.used, 0.5 * density_kg_m3 * paid, 0.0)
 
@@ -126,9 +126,9 @@ def _paid(
         heading_share: (j, k) how much each leg's direction counts in the heading of the common flow.
         whole: (j, 1) flow through the node.
     """
-    heading = (heading_share[:, :, None] * legs.direction).sum(axis=1)
-    length = np.sqrt((heading * heading).sum(axis=1, keepdims=True) + LEAST_HEADING)
-    cosine = np.einsum("jkd,jd->jk", legs.direction, heading / length)
+    heading = (heading_share[..., None] * legs.direction).sum(axis=-2)
+    length = np.sqrt((heading * heading).sum(axis=-1, keepdims=True) + LEAST_HEADING)
+    cosine = np.einsum("jkd,...jd->...jk", legs.direction, heading / length)
     ratio = common_m2 / area_m2
     coefficient = entering * _joining(u, ratio, -cosine, legs.used) - (1.0 - entering) * _parting(v, ratio, cosine)
     return coefficient * (whole / common_m2) ** 2
@@ -144,20 +144,22 @@ def _parting(share: Any, ratio: Any, cosine: Any) -> Any:
 
 def _joining(share: Any, ratio: Any, cosine: Any, used: Bools) -> Any:
     """Returns the coefficients (j, k) of inflows with shares, area ratios and cosines to the common flow (j, k)."""
-    momentum = np.where(used, share * share * ratio * cosine, 0.0).sum(axis=1, keepdims=True)
+    momentum = np.where(used, share * share * ratio * cosine, 0.0).sum(axis=-1, keepdims=True)
     turned = _step((1.0 - cosine) / (1.0 - STRAIGHT_FROM))
     large = _step((1.0 / ratio - SMALL_LEG) / (LARGE_LEG - SMALL_LEG))
     short = _clip(1.0 - share / FACTOR_ENDS, 0.0, 2.0)
     factor = 1.0 - (1.0 - LEAST_FACTOR) * (1.0 - short * short) * turned * large
     square = _step((SQUARE_FROM - cosine) / SQUARE_FROM)
-    past = np.where(used, share * square, 0.0).sum(axis=1, keepdims=True)
+    past = np.where(used, share * square, 0.0).sum(axis=-1, keepdims=True)
     gain = 2.0 * (1.0 - LEAST_FACTOR) * 0.5 * past * (1.0 - turned)
     return factor * (1.0 + (share * ratio) ** 2 - 2.0 * momentum) - gain
 
 
 def _clip(value: Any, low: float, high: float) -> Any:
     """Returns values held between limits, by their real part."""
-    real = np.real(value)
+    if not np.iscomplexobj(value):
+        return np.minimum(np.maximum(value, low), high)
+    real = value.real
     return np.where(real < low, low, np.where(real > high, high, value))
 
 
@@ -205,24 +207,18 @@ class JunctionLaw:
     def slopes(self, flow: Floats) -> Floats:
         """Returns the slopes (z,) of each pipe's junction drop in the flows that meet it, as in `pattern`."""
         legs, inflow = self.legs, self.legs.inflow(flow)
-        n, k = legs.used.shape
-        slope = np.zeros((n, k, k))
-        for j in range(k):
-            step = inflow.astype(np.complex128)
-            step[:, j] += 1j * COMPLEX_STEP
-            paid = leg_pressure(legs, step, legs.area_m2, self.density_kg_m3)
-            slope[:, :, j] = paid.imag / COMPLEX_STEP * legs.sign * legs.sign[:, j : j + 1]
-        return slope[legs.used[:, :, None] & legs.used[:, None, :]]
+        one_by_one = 1j * COMPLEX_STEP * np.eye(legs.used.shape[1])[:, None, :]
+        paid = leg_pressure(legs, inflow + one_by_one, legs.area_m2, self.density_kg_m3)
+        slope = np.moveaxis(paid.imag, 0, -1) / COMPLEX_STEP * legs.sign[:, :, None] * legs.sign[:, None, :]
+        return np.asarray(slope[legs.used[:, :, None] & legs.used[:, None, :]], dtype=np.float64)
 
     def by_log_area(self, flow: Floats) -> tuple[Ints, Ints, Floats]:
         """Returns pipe rows, segment columns and slopes (z,) of the junction drop in ln of the areas of the legs."""
         legs, inflow = self.legs, self.legs.inflow(flow)
-        n, k = legs.used.shape
-        slope = np.zeros((n, k, k))
-        for j in range(k):
-            area = legs.area_m2.astype(np.complex128)
-            area[:, j] *= 1.0 + 1j * COMPLEX_STEP
-            slope[:, :, j] = leg_pressure(legs, inflow, area, self.density_kg_m3).imag / COMPLEX_STEP * legs.sign
+        k = legs.used.shape[1]
+        area = legs.area_m2 * (1.0 + 1j * COMPLEX_STEP * np.eye(k)[:, None, :])
+        paid = leg_pressure(legs, inflow, area, self.density_kg_m3)
+        slope = np.moveaxis(paid.imag, 0, -1) / COMPLEX_STEP * legs.sign[:, :, None]
         both = legs.used[:, :, None] & legs.used[:, None, :]
         row = np.repeat(legs.pipe[:, :, None], k, axis=2)
         column = np.repeat(legs.segment[:, None, :], k, axis=1)
