@@ -208,7 +208,9 @@ def measure_covered_ratio(field: Floats, level: float, samples: Samples) -> floa
     """Returns the share of the sheet above `level`; a sample cut by the contour counts with the share it leaves it.
 
     Args:
-        field: (rows, columns) density. level: where coolant ends. samples: what a value stands for.
+        field: (rows, columns) density.
+        level: where coolant ends.
+        samples: what a value stands for.
     """
     share = np.empty(field.shape)
     for first in range(0, len(field), SLAB_ROWS):

@@ -30,15 +30,7 @@ def layout_rows(layout: dict[str, Any]) -> list[Row]:
         )
         for item in layout["accepted"]
     ]
-    rows += [
-        (
-            f"wide region {item['id']}: {item['said']}",
-            _at(item["sheet_mm"]),
-            f"{amount(item['length_mm'], 'mm')} long, up to {amount(item['widest_mm'], 'mm')} wide, "
-            f"{amount(item['area_mm2'], 'mm2')}",
-        )
-        for item in layout["wide"]
-    ]
+    rows += [_wide(item) for item in layout["wide"]]
     rows += [_dead_end(item, "") for item in layout["dead_end_places"]]
     rows += [_dead_end(item, ", on a piece without a port") for item in layout["loose_dead_end_places"]]
     rows += [_suggestion(item) for item in layout["suggestions"]]
@@ -58,6 +50,18 @@ def offers(layout: dict[str, Any]) -> tuple[str, str]:
 
 def _at(place: Any) -> str:
     return "{:.1f}, {:.1f} mm".format(*(round(value, 1) + 0.0 for value in place))
+
+
+def _wide(item: dict[str, Any]) -> Row:
+    said = f"wide region {item['id']}: {item['said']}"
+    if item["ways"] > 1 and item["lost_mm2"] > 0.0:
+        said += f"; the part of it that is too short for that is capped, {item['lost_mm2']:.1f} mm2 are lost"
+    return (
+        said.replace(" %", "\u00a0%").replace("mm2", "mm²"),
+        _at(item["sheet_mm"]),
+        f"{amount(item['length_mm'], 'mm')} long, up to {amount(item['widest_mm'], 'mm')} wide, "
+        f"{amount(item['area_mm2'], 'mm2')}",
+    )
 
 
 def _dead_end(item: dict[str, Any], more: str) -> Row:

@@ -153,7 +153,7 @@ def draw_levels(report: LevelReport, key: str) -> str:
         drawing.shape(drawing.path_data(box, closed=True), fill=BAND, stroke="none")
     panels[0].axes("coolant area, % of the sheet", round_ticks(0.0, max(tops[0], 1.0), MOST_TICKS))
     panels[1].axes("groups of ports (1: all on one piece)", _whole_ticks(tops[1]))
-    panels[2].axes("pieces", _whole_ticks(tops[2]))
+    panels[2].axes("", _whole_ticks(tops[2]))
     for panel in panels:
         drawing.line(panel.at(report.level, 0.0), panel.at(report.level, panel.top), INK, 1.6)
     panels[0].curve(area, FIRST)
@@ -172,10 +172,13 @@ def _signs(drawing: Drawing, panels: list[_Panel], report: LevelReport) -> None:
         drawing.line((x, y), (x, y - 4.0), INK, 1.0)
         drawing.label((x, y - 13.0), f"{value:g}", size_px=11.0)
     drawing.label((LEFT + 0.5 * (WIDE - LEFT - RIGHT), 10.0), "level: density at which coolant ends")
-    line = top.foot + PANEL + 10.0
-    drawing.line((LEFT, line - 8.0), (LEFT + 42.0, line - 8.0), FIRST, 2.2)
-    x = LEFT + 62.0
-    drawing.line((x, line - 8.0), (x + 34.0, line - 8.0), SECOND, 2.2, "7 3")
-    drawing.label((x, line), "loops", anchor="start", bold=True)
-    in_use = f"in use {report.level:.3f}"
-    drawing.label((WIDE - RIGHT, line), in_use, anchor="end", bold=True)
+    line, (at, _) = top.foot + PANEL + 10.0, top.at(report.level, 0.0)
+    early = report.level < 0.4  # the names of the lines stand where the level in use does not
+    x = LEFT + 242.0 if early else LEFT
+    for words, colour, dash, wide in (("pieces", FIRST, "", 78.0), ("loops", SECOND, "7 3", 0.0)):
+        drawing.line((x, line), (x + 22.0, line), colour, 2.2, dash)
+        drawing.label((x + 27.0, line), words, anchor="start", bold=True)
+        x += wide
+    late = report.level > 0.75
+    words = f"in use {report.level:.3f}"
+    drawing.label((at + (5.0 if late else -5.0), line), words, anchor="end" if late else "start", bold=True)

@@ -124,6 +124,15 @@ def test_a_wide_region_is_told_in_every_mode(density):
     assert "lost" in first["said"] and first["lost_mm2"] > 0.0
 
 
+def test_what_a_split_leaves_capped_is_said(density):
+    _, _, block = made(density, rule=WideRule.SPLIT)
+    (region,) = [item for item in block["wide"] if item["ways"] > 1]
+    for lost_mm2, said in ((0.0, False), (12.34, True)):
+        rows = layout_rows(block | {"wide": [region | {"lost_mm2": lost_mm2}]})
+        (words,) = [what for what, _, _ in rows if what.startswith("wide region")]
+        assert ("is capped, 12.3 mm² are lost" in words) is said and " split into 3 ways" in words
+
+
 def test_wide_regions_are_outlined_where_they_lie(density):
     graph, wide, _ = made(density)
     svg = draw_density(density, graph, (), wide)
@@ -257,3 +266,46 @@ def test_origin_is_on_the_page_and_escaped(make_records, records):
     changed = make_records(density=hostile)
     page = make_report(changed, make_summary(changed))
     assert "&lt;b&gt;.npy&lt;/b&gt; array" in page and make_summary(changed)["layout"]["origin"] == hostile.origin
+
+
+JOB = """
+name = "loop"
+[layout]
+image = "loop.npy"
+size_mm = [120.0, 70.0]
+rows = "bottom-up"
+[[port]]
+name = "feed"
+role = "in"
+at_mm = [0.0, 12.0]
+[[port]]
+name = "return"
+role = "out"
+at_mm = [120.0, 12.0]
+[carrier]
+kind = "cylinder"
+radius_mm = 40.0
+metal = "toward-axis"
+depth_mm = 8.0
+[[accept]]
+bridge = true
+at_mm = [60.0, 47.0]
+"""
+
+
+def test_the_recipe_hands_levels_and_wide_regions_on(tmp_path, density):
+    from morph.core.progress import SILENT
+    from morph.pipeline import _Clock, plan_channels
+    from morph.settings.read_job import read_job
+
+    np.save(tmp_path / "loop.npy", density.value)
+    (tmp_path / "job.toml").write_text(JOB, encoding="utf-8")
+    planned = plan_channels(read_job(tmp_path / "job.toml"), _Clock(SILENT))
+    assert planned.levels is not None and planned.levels.low == pytest.approx(GREY, abs=0.02)
+    # largest legal bore at 8 mm of depth: 8 / (1/2 + 1) = 5.33 mm, one bore of metal to the part face
+    (region,) = planned.wide
+    assert region.widest_mm == pytest.approx(7.5, abs=0.3) and region.bore_mm == pytest.approx(8 / 1.5, abs=0.35)
+    codes = [notice.code for notice in planned.graph.notices]
+    assert codes.count("level-near-change") == 1 and "level-decides" not in codes
+    assert [item.id for item in planned.graph.accepted] == ["G1"]
+    assert "first row at the bottom" in planned.density.origin
