@@ -3,7 +3,7 @@
 The picture is relabelled on a bounded list of levels, crumbs removed as for the layout itself (by the channel
 width at the level in use, so that a crumb does not come and go with the level). The interval in which the design
 does not change is narrowed by bisection on both sides of the level in use. Limits: a change that begins and ends
-between two neighbouring levels of the list is not seen; dead ends are counted on the coarse levels, and only on
+between two neighbouring levels of the list is not seen; dead ends are counted on every other coarse level, and only on
 images of moderate size.
 """
 
@@ -38,6 +38,8 @@ from morph.settings.job import LayoutSettings, PortSettings, Samples, Seam
 
 STAGE = "level report"
 COARSE_STEP = 0.05
+TRACED_STEP = 0.1
+"""Dead ends are counted on these levels: a trace costs as much as twenty rows without it."""
 FINE_STEP = 0.02
 NEAR = 0.1
 """Around the level in use the list is finer, and a change this near is told."""
@@ -130,7 +132,7 @@ def make_level_report(
     with_ends = len(levels) * field.value.size <= MOST_TRACED_PIXELS
     for number, value in enumerate(levels):
         row = _row(field, value)
-        traced = with_ends and (value == level or abs(value / COARSE_STEP - round(value / COARSE_STEP)) < 1e-6)
+        traced = with_ends and (value == level or abs(value / TRACED_STEP - round(value / TRACED_STEP)) < 1e-6)
         rows.append(replace(row, dead_ends=_count_dead_ends(density, value, ports)) if traced else row)
         progress.step(STAGE, number + 1, len(levels))
     here = levels.index(level)
