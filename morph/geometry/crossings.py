@@ -82,45 +82,20 @@ def measure_crossings_of(mesh: Mesh, asked: Bools, progress: Progress = SILENT) 
 
 def _space_filling_order(vertices_mm: Floats, triangles: Ints) -> Ints:
     """Returns the order of the triangles' centres along a Z-order curve (bits of x, y, z interleaved)."""
-    centre = vertices_mm[triangles].sum(axis=1)
-    low, high = centre.min(axis=0), centre.max(axis=0)
-    scale = (2**GRID_BITS - 1) / max(float((high - low).max()), 1e-300)
-    code = np.zeros(len(triangles), np.uint64)
-    for axis in range(3):
-        bits = ((centre[:, axis] - low[axis]) * scale).astype(np.uint64)
-        # spread the bits two apart, halves first
-        for shift, mask in (
-            (32, 0x1F00000000FFFF),
-            (16, 0x1F0000FF0000FF),
-            (8, 0x100F00F00F00F00F),
-            (4, 0x10C30C30C30C30C3),
-            (2, 0x1249249249249249),
-        ):
-            bits = (bits | (bits << np.uint64(shift))) & np.uint64(mask)
-        code |= bits << np.uint64(axis)
-    return np.argsort(code, kind="stable")
+    from morph.kernels.crossing import place_codes
+
+    codes = np.empty(len(triangles), np.uint64)
+    place_codes(vertices_mm, triangles, GRID_BITS, codes)
+    return np.argsort(codes, kind="stable")
 
 
 def _box_tree(vertices_mm: Floats, triangles: Ints) -> tuple[Floats, Floats, int]:
-    """Returns the box of each triangle in tree order, the heap of boxes (2 n_leaves, 6) over them, and n_leaves."""
-    from morph.kernels.crossing import LEAF
+    """Returns the box of each triangle (m, 6), the heap of boxes (2 n_leaves, 6) over them in order, and n_leaves."""
+    from morph.kernels.crossing import LEAF, fill_boxes
 
-    a, b, c = (vertices_mm[triangles[:, corner]] for corner in range(3))
     n_leaves = 1
     while n_leaves * LEAF < len(triangles):
         n_leaves *= 2
-    filled = np.full((n_leaves * LEAF, 6), np.inf)
-    filled[:, 3:] = -np.inf
-    filled[: len(triangles), :3] = np.minimum(np.minimum(a, b), c)
-    filled[: len(triangles), 3:] = np.maximum(np.maximum(a, b), c)
-    boxes = np.empty((2 * n_leaves, 6))
-    boxes[0] = np.inf
-    level = filled.reshape(n_leaves, LEAF, 6)
-    n = n_leaves
-    while True:
-        boxes[n : 2 * n, :3] = level[:, :, :3].min(axis=1)
-        boxes[n : 2 * n, 3:] = level[:, :, 3:].max(axis=1)
-        if n == 1:
-            return filled, boxes, n_leaves
-        level = boxes[n : 2 * n].reshape(n // 2, 2, 6)
-        n //= 2
+    triangle_boxes, boxes = np.empty((len(triangles), 6)), np.empty((2 * n_leaves, 6))
+    fill_boxes(vertices_mm, triangles, triangle_boxes, boxes, n_leaves)
+    return triangle_boxes, boxes, n_leaves

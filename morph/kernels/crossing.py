@@ -46,28 +46,35 @@ def edge_crosses(v: Floats, p: int, q: int, a: int, b: int, c: int) -> bool:
 
 
 @njit(cache=True, nogil=True)
-def triangles_cross(v: Floats, one: Ints, two: Ints) -> bool:
-    """Returns whether two triangles (vertex indices (3,) each) cross strictly."""
-    shared = 0
-    for i in range(3):
-        for j in range(3):
-            shared += one[i] == two[j]
+def cuts_through(v: Floats, a: int, b: int, c: int, p: int, q: int, r: int) -> int:
+    """Returns 1 if an edge of triangle a b c passes through the inside of p q r, -1 if a b c lies on one side of it.
+
+    0 when it reaches through the plane elsewhere.
+    """
+    s0 = signed_volume(v, p, q, r, a)
+    s1 = signed_volume(v, p, q, r, b)
+    s2 = signed_volume(v, p, q, r, c)
+    if min(s0, s1, s2) >= 0.0 or max(s0, s1, s2) <= 0.0:
+        return -1
+    if s0 * s1 < 0.0 and edge_crosses(v, a, b, p, q, r):
+        return 1
+    if s1 * s2 < 0.0 and edge_crosses(v, b, c, p, q, r):
+        return 1
+    if s2 * s0 < 0.0 and edge_crosses(v, c, a, p, q, r):
+        return 1
+    return 0
+
+
+@njit(cache=True, nogil=True)
+def triangles_cross(v: Floats, a: int, b: int, c: int, p: int, q: int, r: int) -> bool:
+    """Returns whether the triangles of vertices a b c and p q r cross strictly."""
+    shared = (a == p or a == q or a == r) + (b == p or b == q or b == r) + (c == p or c == q or c == r)
     if shared >= 2:
         return False
-    for turn in range(2):
-        cutter, cut = (one, two) if turn == 0 else (two, one)
-        s0 = signed_volume(v, cut[0], cut[1], cut[2], cutter[0])
-        s1 = signed_volume(v, cut[0], cut[1], cut[2], cutter[1])
-        s2 = signed_volume(v, cut[0], cut[1], cut[2], cutter[2])
-        if min(s0, s1, s2) >= 0.0 or max(s0, s1, s2) <= 0.0:
-            return False
-        if s0 * s1 < 0.0 and edge_crosses(v, cutter[0], cutter[1], cut[0], cut[1], cut[2]):
-            return True
-        if s1 * s2 < 0.0 and edge_crosses(v, cutter[1], cutter[2], cut[0], cut[1], cut[2]):
-            return True
-        if s2 * s0 < 0.0 and edge_crosses(v, cutter[2], cutter[0], cut[0], cut[1], cut[2]):
-            return True
-    return False
+    found = cuts_through(v, a, b, c, p, q, r)
+    if found != 0:
+        return found > 0
+    return cuts_through(v, p, q, r, a, b, c) > 0
 
 
 @njit(cache=True, nogil=True)
@@ -77,6 +84,52 @@ def boxes_meet(one: Floats, a: int, two: Floats, b: int) -> bool:
         if one[a, axis] > two[b, 3 + axis] or two[b, axis] > one[a, 3 + axis]:
             return False
     return True
+
+
+@njit(cache=True, nogil=True)
+def place_codes(vertices: Floats, triangles: Ints, bits: int, codes: NDArray[np.uint64]) -> None:
+    """Writes where the centres of the triangles (m, 3) stand on a Z-order curve to `codes (m,)`.
+
+    The curve fills the box of all `vertices`, `bits` to an axis, those of x, y and z interleaved, x lowest.
+    """
+    low = np.empty(3)
+    extent = 1e-300
+    for axis in range(3):
+        low[axis] = vertices[:, axis].min()
+        extent = max(extent, vertices[:, axis].max() - low[axis])
+    scale = (2.0**bits - 1.0) / (3.0 * extent)
+    for i in range(len(triangles)):
+        code = np.uint64(0)
+        for axis in range(3):
+            total = vertices[triangles[i, 0], axis] + vertices[triangles[i, 1], axis] + vertices[triangles[i, 2], axis]
+            at = np.uint64(max(total - 3.0 * low[axis], 0.0) * scale)
+            for bit in range(bits):
+                code |= ((at >> np.uint64(bit)) & np.uint64(1)) << np.uint64(3 * bit + axis)
+        codes[i] = code
+
+
+@njit(cache=True, nogil=True)
+def fill_boxes(vertices: Floats, triangles: Ints, triangle_boxes: Floats, boxes: Floats, n_leaves: int) -> None:
+    """Writes the boxes (m, 6) of the triangles and the heap `boxes (2 n_leaves, 6)` over them, empty ones inside out."""
+    for node in range(2 * n_leaves):
+        for axis in range(3):
+            boxes[node, axis] = np.inf
+            boxes[node, 3 + axis] = -np.inf
+    for i in range(len(triangles)):
+        node = n_leaves + i // LEAF
+        for axis in range(3):
+            a = vertices[triangles[i, 0], axis]
+            b = vertices[triangles[i, 1], axis]
+            c = vertices[triangles[i, 2], axis]
+            low, high = min(a, b, c), max(a, b, c)
+            triangle_boxes[i, axis] = low
+            triangle_boxes[i, 3 + axis] = high
+            boxes[node, axis] = min(boxes[node, axis], low)
+            boxes[node, 3 + axis] = max(boxes[node, 3 + axis], high)
+    for node in range(n_leaves - 1, 0, -1):
+        for axis in range(3):
+            boxes[node, axis] = min(boxes[2 * node, axis], boxes[2 * node + 1, axis])
+            boxes[node, 3 + axis] = max(boxes[2 * node, 3 + axis], boxes[2 * node + 1, 3 + axis])
 
 
 @njit(cache=True, nogil=True)
@@ -102,8 +155,14 @@ def find_crossings(
     for leaf in range(first, last):
         pairs[leaf] = 0
         own = n_leaves + leaf
+        stack[0] = own
         depth = 1
-        stack[0] = 1
+        above = own
+        while above > 1:  # what stands right of the way up to the root: the leaves after this one
+            if above % 2 == 0:
+                stack[depth] = above + 1
+                depth += 1
+            above //= 2
         while depth > 0:
             depth -= 1
             node = stack[depth]
@@ -115,15 +174,21 @@ def find_crossings(
                 depth += 2
                 continue
             other = node - n_leaves
-            if other < leaf:
-                continue
             for i in range(LEAF * leaf, min(LEAF * leaf + LEAF, n_triangles)):
                 if not boxes_meet(triangle_boxes, i, boxes, node):
                     continue
                 for j in range(max(LEAF * other, i + 1), min(LEAF * other + LEAF, n_triangles)):
                     if not boxes_meet(triangle_boxes, i, triangle_boxes, j):
                         continue
-                    if triangles_cross(vertices, triangles[i], triangles[j]):
+                    if triangles_cross(
+                        vertices,
+                        triangles[i, 0],
+                        triangles[i, 1],
+                        triangles[i, 2],
+                        triangles[j, 0],
+                        triangles[j, 1],
+                        triangles[j, 2],
+                    ):
                         pairs[leaf] += 1
                         crossed[i] = 1
                         crossed[j] = 1

@@ -74,11 +74,12 @@ def sharpen(field: SampledField, surface: Surface, progress: Progress = SILENT) 
     target[chosen] = round_to_file(placed)
     given_up, n = np.zeros(0, np.int64), len(plain)
     asked: Bools | None = None
+    quads, moved = surface.triangles, np.ones(n, np.bool_)
     for turn in range(MOST_ROUNDS):
         if asked is None:
             vertices = np.where(sharp[:, None], target, plain)
-            triangles = _turn_quads(field, surface, vertices, sharp, progress)
-            triangles = _flip_edges(field, surface, vertices, triangles, sharp, turns, progress)
+            quads = _turn_quads(field, surface, vertices, sharp, quads, moved, progress)
+            triangles = _flip_edges(field, surface, vertices, quads, sharp, turns, progress)
             split = _find_splits(field, surface, vertices, triangles, sharp, turns, given_up, progress)
         made, joined = _with_splits(vertices, triangles, split)
         touched = np.ones(len(made), np.bool_)
@@ -94,7 +95,8 @@ def sharpen(field: SampledField, surface: Surface, progress: Progress = SILENT) 
             asked[lost] = True
         else:
             asked = None
-            sharp &= ~bad[:n]
+            moved = sharp & bad[:n]
+            sharp &= ~moved
     return plain, surface.triangles
 
 
@@ -158,13 +160,20 @@ def _block_of(surface: Surface, vertex: Ints) -> Ints:
     return np.searchsorted(surface.vertex_offset, vertex, side="right") - 1
 
 
-def _turn_quads(field: SampledField, surface: Surface, vertices: Floats, sharp: Bools, progress: Progress) -> Ints:
+def _turn_quads(
+    field: SampledField, surface: Surface, vertices: Floats, sharp: Bools, before: Ints, moved: Bools,
+    progress: Progress,
+) -> Ints:  # fmt: skip
     """Returns the triangles with each quad at a crease vertex split along the diagonal that lies on the surface.
 
-    A diagonal whose triangles fold over is taken only if both do.
+    A diagonal whose triangles fold over is taken only if both do. Quads without a vertex that `moved (n,)` stay as
+    they were `before`.
     """
-    triangles = surface.triangles.copy()
-    rows = np.flatnonzero(any_corner(sharp, triangles[0::2]) | sharp[triangles[1::2, 2]])
+    lower, upper = surface.triangles[0::2], surface.triangles[1::2]
+    again = np.flatnonzero(any_corner(moved, lower) | moved[upper[:, 2]])
+    triangles = before.copy()
+    triangles[2 * again], triangles[2 * again + 1] = lower[again], upper[again]
+    rows = again[any_corner(sharp, lower[again]) | sharp[upper[again, 2]]]
     if not len(rows):
         return triangles
     ring = np.column_stack([triangles[2 * rows], triangles[2 * rows + 1, 2]])

@@ -49,7 +49,7 @@ def test_by_hand():
     v = np.array([[0.0, 0, 0], [4, 0, 0], [0, 4, 0], [1, 1, -1], [1, 1, 1], [9, 9, 1], [1, 1, 0], [2, 2, 5], [3, 1, 5]])
 
     def cross(one, two):
-        return bool(triangles_cross(v, np.array(one), np.array(two)))
+        return bool(triangles_cross(v, *one, *two))
 
     assert cross((0, 1, 2), (3, 4, 5))  # an edge through the inside
     assert cross((3, 4, 5), (0, 1, 2))
@@ -60,8 +60,8 @@ def test_by_hand():
 
 def test_two_triangles_with_a_shared_corner_can_cross():
     v = np.array([[0.0, 0, 0], [4, 0, 0], [0, 4, 0], [3, 1, -1], [1, 1, 2.0], [3, 3, 1]])
-    assert triangles_cross(v, np.array([0, 1, 2]), np.array([0, 3, 4]))
-    assert not triangles_cross(v, np.array([0, 1, 2]), np.array([0, 4, 5]))
+    assert triangles_cross(v, 0, 1, 2, 0, 3, 4)
+    assert not triangles_cross(v, 0, 1, 2, 0, 4, 5)
 
 
 def test_flat_meshes_do_not_cross():
@@ -86,7 +86,9 @@ def test_crossings_of_some_are_those_of_all_that_have_one_of_them(seed):
         marked = set(np.flatnonzero(found.crossed))
         wanted = set()
         for i in np.flatnonzero(asked):
-            partners = {j for j in range(60) if j != i and triangles_cross(mesh.vertices_mm, *mesh.triangles[[i, j]])}
+            partners = {
+                j for j in range(60) if j != i and triangles_cross(mesh.vertices_mm, *mesh.triangles[[i, j]].ravel())
+            }
             wanted |= partners | ({int(i)} if partners else set())
         assert wanted <= marked <= every
         if share == 1.0:
