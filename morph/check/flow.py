@@ -135,7 +135,7 @@ def _regime(flow: FlowResult) -> Verdict:
     if laminar:
         text += f" Below Reynolds 2300: {name_list([row.id for row in laminar])}."
     if unsure:
-        spreads = [f"{row.id} {low:.3f} to {high:.3f} bar" for row in unsure for low, high in [_ends(row)]]
+        spreads = [f"{row.id} {1e3 * a:.1f} to {1e3 * b:.1f} mbar" for row in unsure for a, b in [_ends(row)]]
         text += f" Between 2300 and 4000 either law may hold; friction by both: {name_list(spreads)}."
     bad = bool(unsure or laminar)
     return Verdict(
