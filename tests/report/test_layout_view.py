@@ -174,6 +174,8 @@ def test_keep_outs_on_the_sheet_picture_are_seen_from_the_part(make_records, sce
     frame = np.array([float(p.split(",")[0]) for p in re.search(r'<path d="M([^"]*)Z" fill="#f7f8fa"', svg)[1].split()])
     share = (0.5 * (x.min() + x.max()) - frame.min()) / np.ptp(frame)
     assert share == pytest.approx(30 / 90 if side is SeenFrom.PART else 60 / 90, abs=2e-3)
+    page = make_report(records, make_summary(records))
+    assert ("Dashed around a keep-out: its clearance." in page) and svg in page
     assert "keep-out</text>" in svg and "keep-out</text>" not in draw_sheet(dataclasses.replace(shown, keep_outs=()))
 
 
