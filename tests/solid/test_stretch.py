@@ -10,11 +10,12 @@ from morph.core.progress import SILENT
 from morph.geometry.mesh import measure_condition, mesh_volume_mm3
 from morph.kernels.swept_ball import piece_distance
 from morph.settings.job import SectionShape
-from morph.solid import channel
+from morph.solid import centreline, channel, stretch
 from morph.solid.channel import make_channel_solid
 from morph.solid.field import list_pieces, sample_field
 from morph.solid.stretch import LEAST_CELLS, find_stretches
 from morph.solid.sweep import make_sweep
+from tests.flow import tubes
 from tests.solid import plans
 from tests.solid.exact import exact_field, spread_points
 from tests.solid.nets import random_net
@@ -120,3 +121,27 @@ def test_stretches_that_do_not_fit_are_left_to_the_field(monkeypatch):
     rest = first.end >= 4
     assert (second.end[rest] == first.end[rest] - 4).all()
     assert (second.end[(first.end == -2) & (first.of >= 2)] == -2).all()
+
+
+class _Unfilled:
+    """numpy whose fresh arrays hold NaN instead of whatever was in memory."""
+
+    def __getattr__(self, name):
+        return getattr(np, name)
+
+    @staticmethod
+    def empty(shape, dtype=float):
+        return np.full(shape, np.nan if np.dtype(dtype).kind == "f" else -(10**9), dtype)
+
+
+@pytest.mark.parametrize("shape", ["round", "roofed"])
+def test_no_point_of_a_ring_is_left_unwritten(shape, monkeypatch):
+    """Bowed tapered branches that fork: every array made for frames and points is filled, and every point is finite."""
+    plan = tubes.unequal_wye()[0] if shape == "round" else roofed(tubes.unequal_wye()[0])
+    monkeypatch.setattr(stretch, "np", _Unfilled())
+    monkeypatch.setattr(centreline, "np", _Unfilled())
+    _, found = stretches_of(plan)
+    assert len(found.sides) == 5 and len(found.points) == (found.sides * found.rings).sum()
+    assert np.isfinite(found.points).all()
+    samples = centreline.frame_samples(centreline.list_samples(plan), plan)
+    assert np.isfinite(samples.side).all() and np.isfinite(samples.turn).all()
