@@ -170,7 +170,11 @@ def _search(aim: Aim, band: Floats, progress: Progress) -> Balanced:
     """Returns the best bores, sought anew with printed scatter `band` (m,) in ln bore where that upsets them."""
     found = find_balance(aim, progress)
     wary = replace(aim, scatter=_scatter(band))
-    return find_balance(wary, progress) if wary.value(found.log_factor)[0] > found.aim_after + FRAGILE else found
+    try:
+        fragile = wary.value(found.log_factor)[0] > found.aim_after + FRAGILE
+        return find_balance(wary, progress) if fragile else found
+    except FlowError:  # some of the scattered bores let the flows not settle: they tell nothing of the others
+        return found
 
 
 def _scatter(part: Floats) -> tuple[Floats, ...]:

@@ -33,7 +33,7 @@ ROOT = Path(__file__).parents[2]
 FLOW_L_MIN, DRAWS, PRINTS, SCATTER_MM = 5.0, 300, 200, 0.15
 COLUMNS = (
     "layout           branches | p95/p5 before  after | max/min before   after | slow (not bound) bound | draws better"
-    " best aim/ours | printed: p95/p5 median  p95 | branch flow +-% median worst | total flow +-% | CPU s"
+    "  best aim    ours | printed: p95/p5 median  p95 | branch flow +-% median worst | total flow +-% | CPU s"
 )
 
 
@@ -150,11 +150,10 @@ def _printed(done: Planned) -> tuple[tuple[float, float], tuple[float, float], f
 
 def line(name: str, row: Row) -> str:
     """Returns a line of the table."""
-    ratio = row.best_draw / max(row.aim_after, 1e-9)
     return (
         f"{name:16s} {row.n_channels:8d} | {row.before[0]:13.2f} {row.after[0]:6.2f}"
         f" | {row.before[1]:14.2f} {row.after[1]:7.2f} | {len(row.slow):4d} {len(row.free_slow):11d} {row.n_bound:5d}"
-        f" | {row.better_draws:12d} {ratio:13.1f} | {row.printed_spread[0]:22.2f} {row.printed_spread[1]:4.2f}"
+        f" | {row.better_draws:12d} {row.best_draw:9.4f} {row.aim_after:7.4f} | {row.printed_spread[0]:22.2f} {row.printed_spread[1]:4.2f}"
         f" | {row.branch_flow_percent[0]:21.1f} {row.branch_flow_percent[1]:5.1f} | {row.total_flow_percent:14.1f}"
         f" | {row.cpu_s:5.1f}"
     )
