@@ -1,6 +1,7 @@
 """Faults planted in inserts that are otherwise sound: each is found, within 0.1 mm, with the right neighbour named."""
 
 import dataclasses
+import re
 
 import numpy as np
 import pytest
@@ -9,6 +10,7 @@ from morph.body.hole import Hole
 from morph.body.plan import Merge
 from morph.check import check_insert, measure_fields, measure_insert
 from morph.core.codes import explanations
+from morph.check.rows import MEASURE_MM
 from morph.core.verdict import Outcome
 from tests.check.subjects import ALL_SIDES, rows, run_through, subject_of, with_machine
 from tests.solid.plans import arc, box_blank, branch, cylinder_blank, ladder, plan_of, ring, sampled, straight_pipe, tee
@@ -212,7 +214,9 @@ def test_wall_that_is_thin_after_stock_is_removed():
     subject = subject_of(straight_pipe(y=5.0), box_blank(stock={"-y": 4.0}))
     stock = rows(subject, "wall-stock")
     assert [v.outcome for v in stock] == [Outcome.FAIL] and stock[0].value == pytest.approx(2.0, abs=FOUND_MM)
-    assert "6.00 mm as printed" in stock[0].text and "2.00 mm after" in stock[0].text and "-y" in stock[0].text
+    printed, after = (float(word) for word in re.findall(r"(\d+\.\d\d) mm (?:as printed|after)", stock[0].text))
+    assert (printed, after) == (pytest.approx(6.0, abs=MEASURE_MM), pytest.approx(2.0, abs=MEASURE_MM))
+    assert printed - after == pytest.approx(4.0, abs=0.011) and "-y" in stock[0].text
     assert off_line(stock[0].xyz_mm, (0, 1, 15), (1, 0, 0)) < FOUND_MM
     outer = {v.text.split("face '")[1].split("'")[0]: v for v in rows(subject, "wall-outer")}
     assert outer["-y"].outcome is Outcome.FAIL and outer["-y"].value == pytest.approx(2.0, abs=FOUND_MM)

@@ -8,7 +8,7 @@ from morph.check.between import find_walls
 from morph.check.centreline import make_centrelines, network_of
 from morph.check.island import find_islands
 from morph.core.errors import MorphError
-from morph.settings.job import SectionSettings, ServiceSettings
+from morph.settings.job import SectionSettings, SectionShape, ServiceSettings
 from tests.body.scenes import Scene
 from tests.surface.graphs import make_graph, make_profile
 
@@ -19,7 +19,8 @@ BAND_LEFT = LIMIT + BAND - 1e-6
 
 
 def plan_of(places, links, least=3.0):
-    section = SectionSettings(bore_range_mm=(least, 12.0))
+    # round: the walls worked out here are centre distances less half the bores
+    section = SectionSettings(SectionShape.ROUND, bore_range_mm=(least, 12.0))
     service = ServiceSettings(wall_face_bores=0.0, wall_between_mm=LIMIT)
     graph = make_graph(SIZE, places, links)
     return Scene(

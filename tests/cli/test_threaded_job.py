@@ -16,13 +16,12 @@ END = 'end = "thread"\nthread = "G1/8"\n'
 
 
 def job_text(end=END, margin="[46.0, 10.0]"):
-    """The small sample with more metal below the sheet, roofed channels, stock on its foot, and ends at its ports."""
+    """The small sample with more metal below the sheet, stock on its foot, and ends at its ports."""
     text = (SAMPLE / "job.toml").read_text()
     for old, new in (
         ('role = "in"\n', f'role = "in"\n{end}'),
         ('role = "out"\n', f'role = "out"\n{end}'),
         ("margin_mm = [12.0, 10.0]", f"margin_mm = {margin}\nstock_mm = {{ foot = 1.0 }}"),
-        ("[section]\n", '[section]\nshape = "roofed"\n'),
     ):
         assert old in text
         text = text.replace(old, new, 1)
