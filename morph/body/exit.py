@@ -27,6 +27,9 @@ ON_FACE_MM = 0.05
 WINDOW = 30
 """Steps of the grid of sites to either side of the port; a step is 2.5 to 5 mm."""
 
+WIDEST_OF = 201
+"""Radii compared to find the ring of a face that lies farthest from all other faces."""
+
 NEAREST_SITES, FAR_SITES = 250, 100
 """Sites tried on each face: the nearest to the port, and some of the others."""
 
@@ -76,7 +79,7 @@ def list_sites(
     elif isinstance(face, FlangedFace):
         places = _edged_grid(face, port_mm, step)
     elif abs(face.normal[2]) > 0.5:
-        places = _polar_grid(face, port_mm, step)
+        places = _polar_grid(blank, face, port_mm, step)
     else:
         places = _square_grid(blank, face, port_mm, step)
     sites = keep_legal(blank, face, places, bore_mm, leave, limits)
@@ -118,13 +121,30 @@ def _around(port_mm: Floats, radius: float, step: float) -> Floats:
     return np.asarray(start + turn, dtype=np.float64)
 
 
-def _polar_grid(face: PlaneFace, port_mm: Floats, step: float) -> Floats:
+def _polar_grid(blank: Blank, face: PlaneFace, port_mm: Floats, step: float) -> Floats:
+    """Returns places in rings from the port's own angle, and in the ring that lies farthest from all other faces.
+
+    Where the face is a narrow ring itself, that one may be the only one on which an end fits.
+    """
     rings = []
-    for radius in _spread(float(np.hypot(*port_mm[:2])), 0.0, np.inf, step):
+    regular = _spread(float(np.hypot(*port_mm[:2])), 0.0, np.inf, step)
+    for radius in (*regular, *_widest_radius_mm(blank, face, port_mm)):
         angle = _around(port_mm, float(radius), step)
         rings.append(np.column_stack([radius * np.cos(angle), radius * np.sin(angle)]))
     flat = np.concatenate([*rings, np.zeros((1, 2))])
     return np.column_stack([flat, np.full(len(flat), face.origin_mm[2])])
+
+
+def _widest_radius_mm(blank: Blank, face: PlaneFace, port_mm: Floats) -> list[float]:
+    """Returns the radius about z, at the port's angle on `face`, that lies farthest from all other faces, if round."""
+    if blank.outer_radius_mm is None:
+        return []
+    radius = np.linspace(0.0, blank.outer_radius_mm, WIDEST_OF)
+    angle = float(np.arctan2(port_mm[1], port_mm[0]))
+    height = np.full(WIDEST_OF, face.origin_mm[2])
+    line = np.column_stack([radius * np.cos(angle), radius * np.sin(angle), height])
+    others = [other.distance_mm(line) for other in blank.faces if other.name != face.name]
+    return [float(radius[np.min(others, axis=0).argmax()])] if others else []
 
 
 def _square_grid(blank: Blank, face: PlaneFace, port_mm: Floats, step: float) -> Floats:

@@ -1,7 +1,9 @@
 """Random port sets on cores, shells, cones and boxes: every lead legal by own measures, every refusal confirmed.
 
 Refusals are confirmed by a flood over voxels (a proof), or by random trees of ways that find none
-(evidence); a refusal for which a tree finds a way is a false one.
+(evidence); a refusal for which a tree finds a way is a false one. An end without a place is confirmed by
+places sampled all over the flat port faces; where one is free of faces and holes, channels or other ends took
+it, which is not measured. Nor are refusals by other rules: both are counted apart, and confirm nothing.
 """
 
 import time
@@ -35,10 +37,12 @@ def solve(seed):
 
 
 def confirm(scene, error, seed):
-    """How a refusal is confirmed: flood, tree, rule (no search needed), or false."""
+    """How a refusal is confirmed: flood, tree, sampled faces, not measured (with its code), or false."""
     assert error.expected and error.do and "[[port]]" in error.where
+    if error.code == "end-no-place":
+        return "sampled" if lead_oracle.samples_find_no_place(scene, error) else f"not measured: {error.code}"
     if error.code != "lead-blocked":
-        return "rule"
+        return f"not measured: {error.code}"
     refusal = lead_oracle.Refusal(scene, error)
     if lead_oracle.flood_finds_none(refusal):
         return "flood"
@@ -71,10 +75,11 @@ def test_two_hundred_sets():
         if how == "false":
             false.append((seed, error.sentence()))
     print(dict(tally), "p50 and p95 of", np.percentile(times, [50, 95]).round(2), "s", faults, false)
-    refused = 200 - tally["solved"]
+    measured = sum(n for how, n in tally.items() if how.startswith("refused") and "not measured" not in how)
+    print(f"refusals measured: {measured} of {200 - tally['solved']}; the others are named by their rule alone")
     assert not faults, faults
-    assert refused >= 15 and tally["solved"] >= 120, tally
-    assert refused - len(false) >= CONFIRMED_LEAST * refused, false
+    assert measured >= 15 and tally["solved"] >= 120, tally
+    assert measured - len(false) >= CONFIRMED_LEAST * measured, false
     assert max(times) < SLOWEST_S
 
 
