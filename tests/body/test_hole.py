@@ -6,7 +6,7 @@ from scipy.spatial import cKDTree
 
 from morph.body.hole import Hole, distance_to_hole_mm
 from morph.core.errors import MorphError
-from morph.settings.job import CarrierBlankSettings, HoleSettings, Metal, ServiceSettings
+from morph.settings.job import CarrierBlankSettings, FlangeSettings, HoleSettings, Metal, ServiceSettings
 from tests.body.scenes import Scene
 from tests.surface.graphs import straight_line
 
@@ -32,6 +32,21 @@ def test_a_through_hole_that_starts_in_the_metal_reaches_back_to_the_face():
     hole = clipped(HoleSettings((0.0, 0.0, 3.0), (1, 0, 0), 6.0, wall_mm=1.0))
     np.testing.assert_allclose(ends(hole), [[-34, 0, 3], [34, 0, 3]], atol=1e-9)
     assert hole.wall_mm == 1.0
+
+
+@pytest.mark.parametrize(
+    ("at", "axis", "start", "end"),
+    [
+        ((40.0, 0.0, -35.0), (0, 0, 1), (40, 0, -35), (40, 0, -25)),  # through the flange alone
+        ((5.0, 0.0, -35.0), (0, 0, 1), (5, 0, -35), (5, 0, 35)),  # through the core
+        ((0.0, -48.0, -30.0), (0, 1, 0), (0, -48, -30), (0, 48, -30)),  # across the flange
+        ((0.0, -34.0, 10.0), (0, 1, 0), (0, -34, 10), (0, 34, 10)),  # across the core above it
+    ],
+)
+def test_a_hole_in_a_flanged_body_ends_where_the_metal_does(at, axis, start, end):
+    # Body: radius 34, z from -35 to 35; flange: radius 48, z from -35 to -25.
+    hole = clipped(HoleSettings(at, axis, 4.0), flange=FlangeSettings(48.0, 10.0))
+    np.testing.assert_allclose(ends(hole), [start, end], atol=1e-9)
 
 
 def test_a_blind_hole_stops_at_its_depth_and_at_the_body():

@@ -15,7 +15,7 @@ from scipy.spatial import cKDTree
 
 from morph.core.errors import MorphError
 from morph.solid.channel import make_channel_solid
-from tests.body import lead_oracle
+from tests.body import end_oracle, lead_oracle
 from tests.body.lead_scenes import lead_scene
 
 FEW = (0, 2, 3, 5, 7, 8, 11, 17, 27, 30)
@@ -40,7 +40,7 @@ def confirm(scene, error, seed):
     """How a refusal is confirmed: flood, tree, sampled faces, not measured (with its code), or false."""
     assert error.expected and error.do and "[[port]]" in error.where
     if error.code == "end-no-place":
-        return "sampled" if lead_oracle.samples_find_no_place(scene, error) else f"not measured: {error.code}"
+        return "sampled" if end_oracle.samples_find_no_place(scene, error) else f"not measured: {error.code}"
     if error.code != "lead-blocked":
         return f"not measured: {error.code}"
     refusal = lead_oracle.Refusal(scene, error)
