@@ -202,8 +202,7 @@ def make_records(job: Job, clock: _Clock) -> BuildRecords:
         MorphError: an input or a request that cannot be met, with its code.
     """
     from morph.check import CheckSubject, check_insert, measure_fields, measure_insert
-    from morph.check.flow import check_flow
-    from morph.check.not_run import FLOW_NOT_RUN, TEMPERATURE_NOT_RUN
+    from morph.check.not_run import TEMPERATURE_NOT_RUN
     from morph.layout.keep_out import check_keep_outs
     from morph.report.records import BuildRecords
     from morph.solid.channel import make_channel_solid
@@ -238,7 +237,7 @@ def make_records(job: Job, clock: _Clock) -> BuildRecords:
             planned.graph.turn_mm,
         )
         rows = check_insert(subject, progress, measured) + kept_out
-        rows += (FLOW_NOT_RUN,) if planned.flow is None else check_flow(planned.flow, planned.gauge)
+        rows += _flow_rows(job, planned)
         rows += check_3d
         verdicts = sort_verdicts((*rows, TEMPERATURE_NOT_RUN))
         fields = measure_fields(subject, measured)
@@ -261,6 +260,16 @@ def make_records(job: Job, clock: _Clock) -> BuildRecords:
         levels=planned.levels,
         wide=planned.wide,
     )
+
+
+def _flow_rows(job: Job, planned: Planned) -> tuple[Verdict, ...]:
+    """Returns the rows about flow, or the one that says that it was not calculated."""
+    from morph.check.flow import check_flow
+    from morph.check.not_run import FLOW_NOT_RUN
+
+    if job.coolant is None or planned.flow is None:
+        return (FLOW_NOT_RUN,)
+    return check_flow(planned.flow, planned.gauge, job.coolant.pressure_bar)
 
 
 def _check_3d(job: Job, planned: Planned, channels: Mesh, clock: _Clock) -> tuple[Verdict, ...]:

@@ -23,16 +23,37 @@ MOST_SPREAD = 4.0
 """95th over 5th percentile of the velocities: beyond, the slow end runs at a quarter of the fast one."""
 
 
-def check_flow(flow: FlowResult, gauge: Gauge | None = None) -> tuple[Verdict, ...]:
+def check_flow(flow: FlowResult, gauge: Gauge | None = None, pressure_bar: float | None = None) -> tuple[Verdict, ...]:
     """Returns one `flow-drop` row per supply, and `flow-velocity`, `flow-regime`, `flow-slow` and `flow-spread`.
 
     Args:
         flow: the result.
         gauge: the bench test; adds `flow-blocked-hidden`.
+        pressure_bar: gauge, where coolant enters; adds `flow-return-pressure`.
     """
     rows = [_drop(flow, number) for number in range(len(flow.supplies))]
     rows += [_velocity(flow), _regime(flow), _slow(flow), _spread(flow)]
-    return (*rows, *([] if gauge is None else [_hidden(gauge)]))
+    rows += [] if gauge is None else [_hidden(gauge)]
+    return (*rows, *([] if pressure_bar is None else [_return_pressure(flow, pressure_bar)]))
+
+
+def _return_pressure(flow: FlowResult, pressure_bar: float) -> Verdict:
+    """Returns whether coolant still leaves above atmospheric pressure."""
+    drop = max(supply.drop_bar for supply in flow.supplies)
+    left = pressure_bar - drop
+    text = f"Coolant enters at {pressure_bar:.2f} bar gauge and leaves at {left:.2f} bar gauge after {drop:.3f} bar."
+    if left < 0.0:
+        text += " Below atmosphere only a unit that sucks can drive it."
+    return Verdict(
+        "flow-return-pressure",
+        _watch(left < 0.0),
+        text,
+        value=left,
+        unit="bar",
+        limit=0.0,
+        source="pressure_bar of the job less the drop; 0 bar gauge is the atmosphere",
+        hint=f"Raise pressure_bar to at least {drop:.2f} bar, or lower the flow." if left < 0.0 else "",
+    )
 
 
 def _hidden(gauge: Gauge) -> Verdict:

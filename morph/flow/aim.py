@@ -87,7 +87,9 @@ class Aim:
     def equal_of(self, network: FlowNetwork, state: NetworkState) -> tuple[Floats, Floats]:
         """Returns what shall be equal (m,), without sign, and its slope (m,) in each branch's own flow."""
         part = network.segments
-        per_flow = 1.0 / self.heat if self.kind is Balance.BY_HEAT else np.ones(len(self.heat))
+        per_flow = np.ones(len(self.heat))
+        if self.kind is Balance.BY_HEAT:  # a branch that collects nothing is not chosen
+            per_flow = np.where(self.heat > 0.0, 1.0 / np.where(self.heat > 0.0, self.heat, 1.0), 0.0)
         if self.kind is Balance.EQUAL_VELOCITY:
             per_flow = part.summed(part.length_m / part.area_m2) / part.summed(part.length_m)
         return np.abs(state.flow_m3_s) * per_flow, per_flow

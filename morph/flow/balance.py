@@ -94,6 +94,7 @@ class FlowBalance:
         found: what the search found.
         bore_before_mm: (m,) mean bore of each branch before.
         heat: (m,) share of the heat each branch collects; 0 everywhere unless the balance is by heat.
+        reversible: both flow directions counted alike.
     """
 
     kind: Balance
@@ -101,6 +102,7 @@ class FlowBalance:
     found: Balanced
     bore_before_mm: Floats
     heat: Floats
+    reversible: bool = False
 
     def __post_init__(self) -> None:
         for name in ("bore_before_mm", "heat"):
@@ -156,7 +158,14 @@ def balance_plan(
     return (
         kept,
         flow,
-        FlowBalance(coolant.balance, before, replace(found, aim_after=best, aim_before=start), mean, share),
+        FlowBalance(
+            coolant.balance,
+            before,
+            replace(found, aim_after=best, aim_before=start),
+            mean,
+            share,
+            coolant.reversible,
+        ),
     )
 
 

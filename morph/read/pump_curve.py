@@ -37,7 +37,9 @@ def read_pump_curve(path: Path) -> tuple[Floats, Floats]:
         if not points and not values:
             continue  # the heading
         if len(values) != 2 or len(row) != 2:
-            _refuse(path, number, "two numbers: flow in L/min and head in bar", ", ".join(row)[:60])
+            _refuse(
+                path, number, "two numbers, decimals with a point: flow in L/min and head in bar", " | ".join(row)[:60]
+            )
         flow, head = values
         if not (0.0 <= flow <= LARGEST_FLOW_L_MIN and 0.0 <= head <= LARGEST_HEAD_BAR):
             _refuse(
@@ -50,13 +52,15 @@ def read_pump_curve(path: Path) -> tuple[Floats, Floats]:
             _refuse(path, number, "flow that grows and head that does not", f"{flow:g} L/min, {head:g} bar")
         points.append((flow, head))
     if not 2 <= len(points) <= MOST_POINTS or points[0][1] == 0.0:
-        _refuse(path, len(rows), f"2 to {MOST_POINTS} points, the first with head", f"{len(points)} points")
+        last = rows[-1][0] if rows else 1
+        found = f"{len(points)} points" + (", no column marks (comma or semicolon)" if not points and rows else "")
+        _refuse(path, last, f"2 to {MOST_POINTS} points, the first with head", found)
     table = np.array(points)
     return table[:, 0].copy(), table[:, 1].copy()
 
 
 def _text(path: Path) -> str:
-    where = path.name[:80]
+    where = path.name[:80] or "[coolant] pump"
     try:
         with path.open("rb") as stream:
             content = stream.read(LARGEST_BYTES + 1)
@@ -65,6 +69,8 @@ def _text(path: Path) -> str:
         return content.decode("utf-8-sig")
     except (OSError, ValueError) as error:
         found = (error.strerror or type(error).__name__) if isinstance(error, OSError) else str(error)[:100]
+        if isinstance(error, UnicodeDecodeError):
+            found = "a file that is not text"
         raise InputError(
             "pump-unreadable",
             expected=f"a pump curve: CSV text of at most {LARGEST_BYTES} bytes",

@@ -4,10 +4,14 @@ from __future__ import annotations
 
 from typing import Any
 
+import numpy as np
+
 from morph.body.plan import ChannelPlan
 from morph.flow.balance import BoundBranch, FlowBalance
 from morph.flow.bore_range import ALLOWED_RANGE
+from morph.flow.branch_rows import weighted_percentile
 from morph.flow.result import FlowResult
+from morph.settings.job import Balance
 
 MOST_HELD = 12
 
@@ -78,11 +82,30 @@ def balance_rows(balance: FlowBalance, plan: ChannelPlan, after: FlowResult) -> 
     return rows
 
 
+def _spreads(balance: FlowBalance, after: FlowResult) -> tuple[str, float, float]:
+    """Returns what was to be equal in words, and its spread before and after over channels with through-flow."""
+    if balance.kind is Balance.EQUAL_VELOCITY:
+        return "the velocities", balance.before.velocity_p95_over_p5, after.velocity_p95_over_p5
+    heat = balance.heat if balance.kind is Balance.BY_HEAT else np.ones(len(balance.heat))
+    network = after.network
+    chosen = np.flatnonzero(network.is_channel & network.through & (heat > 0.0))
+    length = network.segments.summed(network.segments.length_m)[chosen]
+    found = []
+    for flow in (balance.before, after):
+        y = np.abs([flow.branches[k].flow_l_min for k in chosen]) / heat[chosen]
+        low, high = (weighted_percentile(y, length, share) for share in (0.05, 0.95))
+        found.append(high / low if low > 0.0 else float("inf"))
+    return ("the flows" if balance.kind is Balance.EQUAL_FLOW else "flow over heat"), found[0], found[1]
+
+
 def balance_words(balance: FlowBalance, after: FlowResult) -> str:
     """Returns what the balance was after and what came of it, as sentences."""
     before, held = balance.before, balance.found.bound
+    what, old, new = _spreads(balance, after)
+    ways = " in both directions alike" if balance.reversible else ""
     text = (
-        f"Bores were changed for {balance.kind.value}: the 95th over the 5th percentile of the velocities went from "
+        f"Bores were changed for {balance.kind.value}{ways}: the 95th "
+        f"over the 5th percentile of {what} went from {old:.2f} to {new:.2f} by length, that of the velocities from "
         f"{before.velocity_p95_over_p5:.2f} to {after.velocity_p95_over_p5:.2f}, the drop from "
         f"{before.supplies[0].drop_bar:.3f} to {after.supplies[0].drop_bar:.3f} bar."
     )

@@ -20,7 +20,15 @@ def flow_block(flow: FlowResult) -> Block:
         "drop_bar": max((supply.drop_bar for supply in flow.supplies), default=0.0),
         "flow_l_min": sum(supply.flow_l_min for supply in flow.supplies),
         "supplies": [
-            dataclasses.asdict(supply) | dataclasses.asdict(band)
+            {
+                "flow_l_min": supply.flow_l_min,
+                "drop_bar": supply.drop_bar,
+                "insert_bar": supply.drop_bar - supply.hose_bar,
+                "hose_bar": supply.hose_bar,
+                "bore_band_mm": band.bore_mm,
+                "drop_at_flow_bar": band.drop_at_flow_bar,
+                "flow_at_drop_l_min": band.flow_at_drop_l_min,
+            }
             for supply, band in zip(flow.supplies, flow.bands, strict=True)
         ],
         "velocity_mean_m_s": flow.velocity_mean_m_s,

@@ -19,7 +19,7 @@ VELOCITY, REYNOLDS, PRESSURE = "velocity", "reynolds", "pressure"
 WORDS = {
     VELOCITY: "velocity, m/s",
     REYNOLDS: "Reynolds number",
-    PRESSURE: "total pressure above the return, bar",
+    PRESSURE: "pressure above the return, bar",
 }
 DRIVES = {"flow_l_min": "a given flow", "drop_bar": "a given pressure drop", "pump": "the pump's curve"}
 
@@ -78,6 +78,7 @@ def flow_scene(records: BuildRecords, flow: FlowResult, shown: str = VELOCITY) -
         "slowest channel",
         records.graph.turn_mm,
         {row.id: row.flow_l_min for row in flow.branches},
+        records.job.keep_outs,
     )
 
 
@@ -109,7 +110,7 @@ def flow_rows(flow: FlowResult) -> list[dict[str, str]]:
             "fastest": f"{row.velocity_max_m_s:.2f} m/s",
             "reynolds": f"{row.reynolds:.0f}",
             "regime": row.regime.value,
-            "drop": f"{1000.0 * row.drop_bar:+.1f} mbar",
+            "drop": f"{round(1000.0 * row.drop_bar, 1) + 0.0:+.1f} mbar",
             "parts": _parts(row),
         }
         for row in flow.branches
@@ -118,7 +119,7 @@ def flow_rows(flow: FlowResult) -> list[dict[str, str]]:
 
 def _parts(row: BranchFlow) -> str:
     parts = (row.friction_bar, row.bends_bar, row.ends_bar, row.junctions_bar)
-    return " / ".join(f"{1000.0 * value + 0.0:.1f}" for value in parts)
+    return " / ".join(f"{round(1000.0 * value, 1) + 0.0:.1f}" for value in parts)
 
 
 def flow_numbers(flow: FlowResult) -> list[tuple[str, str]]:
@@ -128,11 +129,16 @@ def flow_numbers(flow: FlowResult) -> list[tuple[str, str]]:
         name = f"Supply {number}: " if len(flow.supplies) > 1 else ""
         low, _, high = band.drop_at_flow_bar
         least, _, most = band.flow_at_drop_l_min
+        rows.append((f"{name}flow", f"{supply.flow_l_min:.2f} L/min"))
         if supply.hose_bar > 0.0:
-            rows.append((f"{name}drop in the hoses alone", f"{supply.hose_bar:.3f} bar"))
+            rows += [
+                (f"{name}drop of the insert alone", f"{supply.drop_bar - supply.hose_bar:.3f} bar"),
+                (f"{name}drop of the hoses", f"{supply.hose_bar:.3f} bar"),
+                (f"{name}drop of both", f"{supply.drop_bar:.3f} bar"),
+            ]
+        else:
+            rows.append((f"{name}drop, feed to return", f"{supply.drop_bar:.3f} bar"))
         rows += [
-            (f"{name}flow", f"{supply.flow_l_min:.2f} L/min"),
-            (f"{name}drop, feed to return", f"{supply.drop_bar:.3f} bar"),
             (f"{name}drop at that flow, bores ±{band.bore_mm:g} mm", f"{low:.3f} to {high:.3f} bar"),
             (f"{name}flow at that drop, bores ±{band.bore_mm:g} mm", f"{least:.2f} to {most:.2f} L/min"),
         ]

@@ -35,7 +35,7 @@ def _words(x: float, y: float, words: str, anchor: str = "start") -> str:
 
 def _colour_bar(drawing: Drawing, words: str, ends: tuple[float, float], top: float) -> None:
     """Draws the colour scale with its ticks; `words` say figure and unit."""
-    left, wide, high = 12.0, 196.0, 12.0
+    left, wide, high = 20.0, 188.0, 12.0
     drawing.raw(_words(left, top, words))
     step = wide / COLOUR_STEPS
     for index, colour in enumerate(map_hex(np.arange(COLOUR_STEPS) / (COLOUR_STEPS - 1))):

@@ -13,7 +13,7 @@ LARGEST_FLOW_L_MIN = 10_000.0
 LARGEST_DROP_BAR = 200.0
 LOWEST_C, HIGHEST_C = -100.0, 400.0
 LEAST_GLYCOL_PERCENT, MOST_GLYCOL_PERCENT = 10.0, 60.0
-LARGEST_HOSE_BORE_MM, LARGEST_HOSE_MM = 200.0, 100_000.0
+LEAST_HOSE_BORE_MM, LARGEST_HOSE_BORE_MM, LARGEST_HOSE_MM = 1.0, 200.0, 100_000.0
 LARGEST_ROUGHNESS_UM = 2000.0
 
 _DRIVES = ("flow_l_min", "drop_bar", "pump")
@@ -137,11 +137,11 @@ def _hose_mm(table: Table) -> tuple[float, float] | None:
     if not table.has("hose_mm"):
         return None
     bore, length = table.numbers("hose_mm", 2, above=0.0, most=LARGEST_HOSE_MM)
-    if bore > LARGEST_HOSE_BORE_MM or bore > length:
+    if not LEAST_HOSE_BORE_MM <= bore <= LARGEST_HOSE_BORE_MM or bore > length:
         table.refuse(
             "setting-order",
             "hose_mm",
-            expected=f"bore first, at most {LARGEST_HOSE_BORE_MM:g} mm and less than the length",
+            expected=f"the bore in mm first, {LEAST_HOSE_BORE_MM:g} to {LARGEST_HOSE_BORE_MM:g} and less than the length",
             do="Write hose_mm = [bore, length], such as [10, 3000].",
         )
     return bore, length

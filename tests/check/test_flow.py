@@ -63,6 +63,16 @@ def test_a_starved_side_is_named_slow_and_uneven():
     assert found["flow-spread"].outcome is Outcome.WATCH
 
 
+def test_a_return_below_atmosphere_is_a_watch_that_says_what_pressure_it_takes():
+    plan, profile = straight_pipe(4.0), read_profile("steel-40um", Path())
+    flow = measure_flow(plan, CoolantSettings(flow_l_min=3.0, pressure_bar=0.05), profile)
+    drop = flow.supplies[0].drop_bar
+    low = next(row for row in check_flow(flow, None, 0.05) if row.code == "flow-return-pressure")
+    assert low.outcome is Outcome.WATCH and low.value == pytest.approx(0.05 - drop) and f"{drop:.2f} bar" in low.hint
+    enough = next(row for row in check_flow(flow, None, drop + 0.5) if row.code == "flow-return-pressure")
+    assert enough.outcome is Outcome.PASS and enough.value == pytest.approx(0.5)
+
+
 def test_laminar_and_uncertain_branches_are_named_apart():
     # 6 mm water at 20 C: Re 2300 at 0.65 L/min, 4000 at 1.13 L/min
     _, slow = rows(straight_pipe(6.0), flow_l_min=0.4)

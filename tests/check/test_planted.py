@@ -9,8 +9,8 @@ import pytest
 from morph.body.hole import Hole
 from morph.body.plan import Merge
 from morph.check import check_insert, measure_fields, measure_insert
-from morph.core.codes import explanations
 from morph.check.rows import MEASURE_MM
+from morph.core.codes import explanations
 from morph.core.verdict import Outcome
 from tests.check.subjects import ALL_SIDES, rows, run_through, subject_of, with_machine
 from tests.solid.plans import arc, box_blank, branch, cylinder_blank, ladder, plan_of, ring, sampled, straight_pipe, tee

@@ -145,6 +145,23 @@ def test_a_plan_with_a_starved_side_is_balanced():
     assert after.branches[2].bore_mm == pytest.approx(6.0)  # a lead
 
 
+def test_by_heat_gives_each_side_its_share():
+    # the upper half of the ring collects twice as much as the lower: it shall carry two thirds of the flow
+    plan = ring(bore_mm=5.0)
+    heat = np.array([1.0, 2.0, 0.0, 0.0])
+
+    def replan(bores):
+        changed = [dataclasses.replace(b, bore_mm=bores[b.id]) for b in plan.branches]
+        return dataclasses.replace(plan, branches=tuple(changed))
+
+    coolant = CoolantSettings(flow_l_min=4.0, balance=Balance.BY_HEAT)
+    profile = read_profile("steel-40um", Path())
+    _, flow, balance = balance_plan(plan, coolant, profile, (3.0, 8.0), heat, replan)
+    flows = [abs(row.flow_l_min) for row in flow.branches[:2]]
+    assert flows[1] / flows[0] == pytest.approx(2.0, rel=0.05)
+    assert balance.heat.tolist() == heat.tolist()
+
+
 def test_heat_goes_to_the_nearest_channel():
     # the ring about (30, 20), radius 12, on a sheet 60 x 40: by symmetry each half collects half of a uniform flux
     plan = ring(bore_mm=5.0)
