@@ -141,7 +141,7 @@ def _hose_mm(table: Table) -> tuple[float, float] | None:
         table.refuse(
             "setting-order",
             "hose_mm",
-            expected=f"the bore in mm first, {LEAST_HOSE_BORE_MM:g} to {LARGEST_HOSE_BORE_MM:g} and less than the length",
+            expected=f"first the bore, {LEAST_HOSE_BORE_MM:g} to {LARGEST_HOSE_BORE_MM:g} mm and less than the length",
             do="Write hose_mm = [bore, length], such as [10, 3000].",
         )
     return bore, length
