@@ -56,8 +56,6 @@ def line_crossings(face: Face, start_mm: Floats, axis: Floats) -> list[float]:
         return face.cone.line_crossings_mm(start_mm, axis)
     if isinstance(face, SkinFace):
         return face.line_crossings_mm(start_mm, axis)
-    if isinstance(face, SkinFace):
-        return face.line_crossings_mm(start_mm, axis)
     if isinstance(face, CylinderFace):
         # (p + t a)^2 = r^2 in the xy plane: A t^2 + 2 B t + C = 0.
         a = float(axis[:2] @ axis[:2])
