@@ -31,7 +31,7 @@ MOST_WAYS = 15
 
 WAYS_AT_ONCE = 3
 
-MOST_STATES, FEWER_STATES = 40_000, 20_000
+MOST_STATES, FEWER_STATES, PATIENT_STATES = 40_000, 20_000, 300_000
 """States of the lattice before it gives up, for the least bore and for wider ones, which may still be thinned."""
 
 VIAS = 10
@@ -102,7 +102,7 @@ class RoomSearch:
         return np.array([points.min(axis=0) - pad_mm, points.max(axis=0) + pad_mm])
 
     def ways(
-        self, headings: Sequence[tuple[float, Floats]], places: Sequence[Sites], bend: Bend
+        self, headings: Sequence[tuple[float, Floats]], places: Sequence[Sites], bend: Bend, patient: bool = False
     ) -> Iterator[tuple[list[Bundle], list[float]]]:
         """Yields paths found by search with the kink of each bundle at the port, likely shortest first.
 
@@ -110,6 +110,7 @@ class RoomSearch:
             headings: kinks and unit headings (3,) to start along.
             places: sites on the port faces, or the one given.
             bend: bend radius, straight end and bore.
+            patient: takes many more steps before it gives up.
         """
         room = self._room(places, bend)
         if room is None:
@@ -118,6 +119,7 @@ class RoomSearch:
         given = places[0] if port.settings.exit_mm is not None else None
         start = np.array([heading for _, heading in headings])
         most = MOST_STATES if bend.bore_mm <= self._ground.limits.least_bore_mm else FEWER_STATES
+        most = PATIENT_STATES if patient else most
         lattice = Lattice(grid, room[1], port.xyz_mm, start, bend.radius_mm, bend.start_mm, most)
         handed = 0
         for batch in lattice.batches():

@@ -51,6 +51,9 @@ SEARCHES = (
 )
 """Searches in order: start with a kink, through the room grid, share of the port's bore (at least the least bore)."""
 
+PATIENT = (False, True, 1.0)
+"""Tried last where all else failed, with many more steps: some ways turn twice before they leave."""
+
 KINKS_RAD = (np.radians(45.0), np.radians(90.0))
 """Starts turned from the channel's direction into the metal, when a smooth start has no way."""
 
@@ -81,11 +84,13 @@ def find_lead(
     fits = EndFits(around, ground.limits, ground.lands, port.settings.name, port.finishes, opening, within)
     room = RoomSearch(around, ground, port, fits)
     tried: set[tuple[bool, bool, float]] = set()
-    for done, (kinked, through_room, share) in enumerate(searches):
-        progress.step(f"lead of {port.settings.name}", done, len(searches))
+    rows = (*searches, PATIENT) if searches is SEARCHES else tuple(searches)
+    for done, (kinked, through_room, share) in enumerate(rows):
+        patient = done == len(searches)
+        progress.step(f"lead of {port.settings.name}", done, len(rows))
         bore = max(share * port.bore_mm, min(ground.limits.least_bore_mm, port.bore_mm))
         headings = _headings(port, kinked)
-        if not headings or (kinked, through_room, bore) in tried:
+        if not headings or (not patient and (kinked, through_room, bore) in tried):
             continue
         tried.add((kinked, through_room, bore))
         bend = make_bend(ground, port, bore)
@@ -93,7 +98,7 @@ def find_lead(
         if len(tried) > 1 and not (room.starts_open(headings, bend) and room.reaches(places, bend)):
             continue
         if through_room:
-            found = room.ways(headings, places, bend)
+            found = room.ways(headings, places, bend, patient)
         else:
             found = iter([_candidates(ground, port, headings, places, bend, fits)])
         for bundles, kinks in found:
